@@ -1,0 +1,77 @@
+package beam
+
+import (
+	"fmt"
+	"math"
+)
+
+// Filters are the impulse responses that make a beam, one a microphone:
+//
+//	y[i] = Σ_m Σ_t H[m][t] · x_m[i - Start[m] - t]
+//
+// with x_m the (corrected) signal of microphone m and silence outside the
+// take. Start may be negative: then the filter looks ahead. Output frame i is
+// the sound at the reference point at frame i, so a filter holds no latency.
+//
+// The frequency response of filter m is G_m(f) = Σ_t H[m][t]·e^{-jω(Start[m]+t)},
+// the conjugate of the weight w_m of y = wᴴx.
+type Filters struct {
+	Rate  int         // frames per second
+	Start []int       // Start[m], frames; the delay of the first tap
+	H     [][]float64 // H[m][t]
+}
+
+// Mics is the number of microphones.
+func (f *Filters) Mics() int { return len(f.H) }
+
+// Span returns the smallest delay of any tap and one more than the largest,
+// frames: taps of all filters lie in from..to.
+func (f *Filters) Span() (from, to int) {
+	for m, h := range f.H {
+		if m == 0 || f.Start[m] < from {
+			from = f.Start[m]
+		}
+		if m == 0 || f.Start[m]+len(h) > to {
+			to = f.Start[m] + len(h)
+		}
+	}
+	return from, to
+}
+
+// Response appends to dst[:0] the frequency response G_m at frequency hz of
+// every filter and returns it. dst may be nil.
+func (f *Filters) Response(dst []complex128, hz float64) []complex128 {
+	dst = dst[:0]
+	omega := 2 * math.Pi * hz / float64(f.Rate)
+	for m, h := range f.H {
+		// Horner's rule in e^{-jω} from the last tap down.
+		s, c := math.Sincos(-omega)
+		step := complex(c, s)
+		var sum complex128
+		for t := len(h) - 1; t >= 0; t-- {
+			sum = sum*step + complex(h[t], 0)
+		}
+		s, c = math.Sincos(-omega * float64(f.Start[m]))
+		dst = append(dst, sum*complex(c, s))
+	}
+	return dst
+}
+
+// Validate reports filters that cannot be run: no microphones, no taps, or a
+// tap that is not a finite number.
+func (f *Filters) Validate() error {
+	if len(f.H) == 0 || len(f.Start) != len(f.H) {
+		return fmt.Errorf("beam: filters of %d microphones with %d starts", len(f.H), len(f.Start))
+	}
+	for m, h := range f.H {
+		if len(h) == 0 {
+			return fmt.Errorf("beam: filter of microphone %d has no taps", m+1)
+		}
+		for t, v := range h {
+			if math.IsNaN(v) || math.IsInf(v, 0) {
+				return fmt.Errorf("beam: filter of microphone %d: tap %d is %g", m+1, t, v)
+			}
+		}
+	}
+	return nil
+}

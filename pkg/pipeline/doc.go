@@ -1,0 +1,2 @@
+// Package pipeline takes one recording from file to result.
+package pipeline
