@@ -42,8 +42,8 @@ var layers = map[string]struct {
 var owner = map[string]string{
 	"github.com/go-audio/audio":                "pkg/wav",
 	"github.com/go-audio/wav":                  "pkg/wav",
-	"github.com/goccy/go-yaml":                 "pkg/rig",
-	"github.com/invopop/jsonschema":            "pkg/report",
+	"github.com/goccy/go-yaml":                 "pkg/sheet",
+	"github.com/invopop/jsonschema":            "pkg/sheet",
 	"github.com/jedib0t/go-pretty/v6":          "pkg/report",
 	"github.com/santhosh-tekuri/jsonschema/v6": "pkg/sheet",
 	"github.com/urfave/cli/v2":                 "cmd/alidade",
