@@ -1,6 +1,9 @@
 package audio
 
-import "io"
+import (
+	"fmt"
+	"io"
+)
 
 // Memory is a source over a block that is held in memory, and can be rewound.
 type Memory struct {
@@ -30,6 +33,8 @@ func (m *Memory) Read(dst Block) (int, error) {
 func (m *Memory) Rewind() { m.at = 0 }
 
 // Collect is a sink that keeps every frame. Use Block for what was collected.
+// It panics if the channel count changes from one Write to the next. The zero
+// value is ready for use.
 type Collect struct {
 	chunks []Block
 	frames int
@@ -37,6 +42,9 @@ type Collect struct {
 
 // Write implements Sink.
 func (c *Collect) Write(src Block) error {
+	if len(c.chunks) > 0 && c.chunks[0].Channels() != src.Channels() {
+		panic(fmt.Sprintf("audio: collect: %d channels after %d", src.Channels(), c.chunks[0].Channels()))
+	}
 	kept := NewBlock(src.Channels(), src.Frames())
 	kept.CopyFrom(src)
 	c.chunks = append(c.chunks, kept)
@@ -59,7 +67,8 @@ func (c *Collect) Block() Block {
 	return all
 }
 
-// ReadAll reads src to its end, in blocks of 4096 frames.
+// ReadAll reads src to its end, in blocks of 4096 frames. If src fails, it
+// returns the frames that were good before with the error.
 func ReadAll(src Source) (Block, error) {
 	var c Collect
 	if _, err := Copy(src, 4096, &c); err != nil {

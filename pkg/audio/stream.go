@@ -1,7 +1,6 @@
 package audio
 
 import (
-	"errors"
 	"fmt"
 	"io"
 	"math"
@@ -25,9 +24,12 @@ type Sink interface {
 }
 
 // Copy reads src to its end in blocks of blockFrames and writes each block to
-// every sink in the order given. It returns the number of frames read and the
-// first error of either side, nil at the end of the stream. It panics if
-// blockFrames is not positive.
+// every sink in the order given. It returns the number of frames that every
+// sink took and the first error of either side, nil at the end of the stream;
+// frames that come together with a failure are written before it is returned.
+// Only io.EOF itself is the end: an error that wraps it is a failure. A source
+// that yields neither a frame nor an error is stopped with io.ErrNoProgress.
+// It panics if blockFrames is not positive.
 func Copy(src Source, blockFrames int, sinks ...Sink) (frames int64, err error) {
 	if blockFrames <= 0 {
 		panic(fmt.Sprintf("audio: copy in blocks of %d frames", blockFrames))
@@ -44,17 +46,21 @@ func Copy(src Source, blockFrames int, sinks ...Sink) (frames int64, err error) 
 			}
 			frames += int64(n)
 		}
-		if errors.Is(rerr, io.EOF) {
+		switch {
+		case rerr == io.EOF:
 			return frames, nil
-		}
-		if rerr != nil {
+		case rerr != nil:
 			return frames, rerr
+		case n == 0:
+			return frames, fmt.Errorf("audio: copy: frame %d: %w", frames, io.ErrNoProgress)
 		}
 	}
 }
 
 // Tee returns a source that yields what src yields and writes it to sink on
-// the way. An error of sink becomes the error of Read, with n = 0.
+// the way. An error of sink becomes the error of the Read that gave it the
+// frames, together with those frames, and stays. A failure of src comes before
+// one of sink.
 func Tee(src Source, sink Sink) Source { return &tee{src: src, sink: sink} }
 
 type tee struct {
@@ -71,11 +77,11 @@ func (t *tee) Read(dst Block) (int, error) {
 	}
 	n, err := t.src.Read(dst)
 	if n > 0 {
-		if werr := t.sink.Write(dst.Slice(0, n)); werr != nil {
-			t.err = werr
-			return 0, werr
+		if werr := t.sink.Write(dst.Slice(0, n)); err == nil {
+			err = werr
 		}
 	}
+	t.err = err
 	return n, err
 }
 
@@ -119,7 +125,7 @@ func (m *mapped) Read(dst Block) (int, error) {
 	if dst.Channels() != len(m.order) {
 		panic(fmt.Sprintf("audio: read of %d channels into a block of %d", len(m.order), dst.Channels()))
 	}
-	if m.in.Frames() < dst.Frames() {
+	if m.in.Channels() == 0 || m.in.Frames() < dst.Frames() {
 		m.in = NewBlock(m.src.Format().Channels, dst.Frames())
 	}
 	n, err := m.src.Read(m.in.Slice(0, dst.Frames()))
@@ -158,9 +164,9 @@ func (s *scaled) Read(dst Block) (int, error) {
 }
 
 // Section returns a source of the frames from..to (half-open) of src, which
-// must stand at its first frame. Frames before from are read and dropped. If
-// src ends before to, the section ends there. It panics unless
-// 0 <= from <= to.
+// must stand at its first frame. Frames before from are read and dropped at
+// the first Read. If src ends before to, the section ends there; what src holds
+// from to on is not read. It panics unless 0 <= from <= to.
 func Section(src Source, from, to int64) Source {
 	if from < 0 || to < from {
 		panic(fmt.Sprintf("audio: section %d..%d", from, to))
@@ -185,6 +191,9 @@ func (s *section) Read(dst Block) (int, error) {
 		for s.skip > 0 {
 			n, err := s.src.Read(scratch.Slice(0, int(min(s.skip, int64(scratch.Frames())))))
 			s.skip -= int64(n)
+			if err == nil && n == 0 {
+				err = fmt.Errorf("audio: section: %d frames before its start: %w", s.skip, io.ErrNoProgress)
+			}
 			if err != nil {
 				s.err = err
 				return 0, err
