@@ -273,6 +273,7 @@ var (
 	leadingZero  = regexp.MustCompile(`^[-+]?0[0-9]+(\.[0-9]*)?$`)
 	basedNumber  = regexp.MustCompile(`^(0o[0-7]+|0x[0-9a-fA-F]+)$`)
 	floatNumber  = regexp.MustCompile(`^[-+]?(\.[0-9]+|[0-9]+(\.[0-9]*)?)([eE][-+]?[0-9]+)?$`)
+	jsonFraction = regexp.MustCompile(`^-?[0-9]+\.[0-9]+$`)
 	noNumber     = regexp.MustCompile(`^([-+]?\.(inf|Inf|INF)|\.(nan|NaN|NAN))$`)
 	nothingWords = map[string]bool{"": true, "~": true, "null": true, "Null": true, "NULL": true}
 	truthWords   = map[string]bool{"true": true, "True": true, "TRUE": true, "false": false, "False": false, "FALSE": false}
@@ -313,7 +314,9 @@ func (b *builder) scalar(n *node, syntax ast.Node, path []step) {
 }
 
 // number returns plain in the form of JSON, empty if it is beyond a float64.
-// Whole numbers keep their digits where 64 bits hold them.
+// Whole numbers keep their digits where 64 bits hold them, decimal fractions
+// keep theirs; an exponent is written out or brought to the range of float64,
+// since the validator counts with exact fractions.
 func number(plain string) json.Number {
 	if i, err := strconv.ParseInt(strings.TrimPrefix(plain, "+"), 10, 64); err == nil {
 		return json.Number(strconv.FormatInt(i, 10))
@@ -328,6 +331,9 @@ func number(plain string) json.Number {
 	v, err := strconv.ParseFloat(plain, 64)
 	if err != nil || math.IsInf(v, 0) || math.IsNaN(v) {
 		return ""
+	}
+	if len(plain) <= 40 && jsonFraction.MatchString(strings.TrimPrefix(plain, "+")) && v != math.Trunc(v) {
+		return json.Number(strings.TrimPrefix(plain, "+"))
 	}
 	if v == math.Trunc(v) && math.Abs(v) < 1<<53 {
 		return json.Number(fmt.Sprintf("%d", int64(v)))

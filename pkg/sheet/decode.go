@@ -53,6 +53,15 @@ func (d *Document) Has(path string) bool {
 	return ok && !n.bad
 }
 
+// Given reports whether the value at path is in the file, sound or not.
+func (d *Document) Given(path string) bool {
+	if d.root == nil {
+		return false
+	}
+	_, _, ok := d.root.find(path)
+	return ok
+}
+
 // Len returns the number of entries of the list at path, 0 if there is none.
 func (d *Document) Len(path string) int {
 	if d.root == nil {

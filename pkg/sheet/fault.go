@@ -1,6 +1,7 @@
 package sheet
 
 import (
+	"errors"
 	"fmt"
 	"slices"
 	"strings"
@@ -145,4 +146,25 @@ func place(text string, offset int) (line, column int) {
 		head = head[i+1:]
 	}
 	return line, utf8.RuneCountInString(head) + 1
+}
+
+// Annotated returns the text of err, each *FaultsError in it with the source
+// lines it speaks of.
+func Annotated(err error) string {
+	if err == nil {
+		return ""
+	}
+	if joined, ok := err.(interface{ Unwrap() []error }); ok {
+		var parts []string
+		for _, e := range joined.Unwrap() {
+			parts = append(parts, Annotated(e))
+		}
+		return strings.Join(parts, "\n")
+	}
+	var faults *FaultsError
+	if errors.As(err, &faults) {
+		// What was added around the faults stays.
+		return strings.Replace(err.Error(), faults.Error(), faults.Annotated(), 1)
+	}
+	return err.Error()
 }

@@ -14,58 +14,56 @@ const (
 	MaxDepth = 64      // lists and mappings inside one another
 )
 
-// read takes the text of a file over: size, encoding, line ends. It reports
+// read takes the text of a YAML file over and counts its marks. It reports
 // whether the text can be read at all.
 func (d *Document) read(data []byte) bool {
-	if len(data) > MaxBytes {
-		d.add(1, 1, "", "%d bytes, at most %d are read", len(data), MaxBytes)
+	if !d.take(data) {
 		return false
 	}
-	for _, mark := range []struct{ bytes, name string }{
-		{"\xff\xfe", "utf-16"}, {"\xfe\xff", "utf-16"},
-	} {
-		if bytes.HasPrefix(data, []byte(mark.bytes)) {
-			d.add(1, 1, "", "text in %s, want utf-8", mark.name)
-			return false
-		}
-	}
-	data = bytes.TrimPrefix(data, []byte("\xef\xbb\xbf"))
-	text := strings.ReplaceAll(string(data), "\r\n", "\n")
-	d.text = strings.ReplaceAll(text, "\r", "\n")
-	marks, comment := 0, false
-	for i := 0; i < len(d.text); {
+	marks := 0
+	for i := range len(d.text) {
+		// Marks in comments and quotes count too: telling them apart is the
+		// parser's work, which this bounds.
 		c := d.text[i]
-		if c < utf8.RuneSelf {
-			switch {
-			case c == '\n':
-				comment = false
-				marks++
-			case c < ' ' && c != '\t' || c == 0x7f:
-				line, column := place(d.text, i)
-				d.add(line, column, "", "control character %#04x in the text", c)
-				return false
-			case c == '#' && (i == 0 || d.text[i-1] == ' ' || d.text[i-1] == '\n'):
-				// Taken for a comment even inside quotes, where it only makes
-				// the count smaller: quotes hold no marks that cost anything.
-				comment = true
-			case !comment && strings.IndexByte(",:[{?!&*|>%", c) >= 0,
-				!comment && c == '-' && i+1 < len(d.text) && d.text[i+1] == ' ':
-				marks++
-			}
-			i++
-			continue
+		if strings.IndexByte("\n,:[{?!&*|>%", c) >= 0 || c == '-' && i+1 < len(d.text) && d.text[i+1] == ' ' {
+			marks++
 		}
-		r, size := utf8.DecodeRuneInString(d.text[i:])
-		if r == utf8.RuneError && size == 1 {
-			line, column := place(d.text, i)
-			d.add(line, column, "", "byte %#02x is not utf-8", d.text[i])
-			return false
-		}
-		i += size
 	}
 	if marks > MaxMarks {
 		d.add(1, 1, "", "%d lines, keys and list entries, at most %d are read", marks, MaxMarks)
 		return false
+	}
+	return true
+}
+
+// take takes the text of a file over: size, encoding, line ends.
+func (d *Document) take(data []byte) bool {
+	if len(data) > MaxBytes {
+		d.add(1, 1, "", "%d bytes, at most %d are read", len(data), MaxBytes)
+		return false
+	}
+	if bytes.HasPrefix(data, []byte("\xff\xfe")) || bytes.HasPrefix(data, []byte("\xfe\xff")) {
+		d.add(1, 1, "", "text in utf-16, want utf-8")
+		return false
+	}
+	data = bytes.TrimPrefix(data, []byte("\xef\xbb\xbf"))
+	text := strings.ReplaceAll(string(data), "\r\n", "\n")
+	d.text = strings.ReplaceAll(text, "\r", "\n")
+	for i, r := range d.text {
+		broken := false
+		if r == utf8.RuneError {
+			_, size := utf8.DecodeRuneInString(d.text[i:])
+			broken = size == 1
+		}
+		if broken || r < ' ' && r != '\t' && r != '\n' || r == 0x7f {
+			line, column := place(d.text, i)
+			if broken {
+				d.add(line, column, "", "byte %#02x is not utf-8", d.text[i])
+			} else {
+				d.add(line, column, "", "control character %#02x in the text", r)
+			}
+			return false
+		}
 	}
 	return true
 }
