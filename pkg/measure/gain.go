@@ -1,0 +1,170 @@
+package measure
+
+import (
+	"math"
+
+	"alidade/pkg/audio"
+)
+
+// Reason says why a figure is missing. It is stable and empty where nothing is
+// missing.
+type Reason string
+
+// The reasons.
+const (
+	NoNoise       Reason = "no-noise-stretch"  // no noise-only part is known
+	NoTarget      Reason = "no-target-stretch" // no part with the target is known
+	TooShort      Reason = "too-short"         // fewer than LeastEntries entries or LeastSeconds
+	Silent        Reason = "silent"            // no power at the reference or in the output
+	NotAboveNoise Reason = "not-above-noise"   // power with the target does not exceed the noise significantly
+)
+
+// Flags of a band.
+const (
+	Sparse             = "sparse"              // fewer than 30 independent samples, 8 block lengths or 1.5 s
+	TargetUnmeasurable = "target-unmeasurable" // the target part is null
+)
+
+// What stands behind a figure at least.
+const (
+	LeastEntries  = 4   // fewer give null
+	LeastSeconds  = 0.3 // shorter gives null
+	SparseSamples = 30  // fewer independent band samples are flagged
+	SparseBlocks  = 8   // fewer block lengths are flagged
+	SparseSeconds = 1.5 // shorter is flagged
+)
+
+// Pair is what goes into a gain: the reference and the output, band by band
+// and over the same time, and where known every microphone of the reference.
+type Pair struct {
+	Reference, Output *Series
+	Microphones       []*Series
+}
+
+// Scene is a mix with known stretches of noise and of target with noise.
+type Scene struct {
+	Pair
+	Noise, Target []Stretch
+	// Named is the microphone (0-based in Microphones) to compare with, -1 for
+	// none.
+	Named int
+}
+
+// BandGain is what happened in one band. Levels are dBFS (AES17), ratios dB,
+// intervals 95 % for the expected figure. Nil is not measurable; NoiseReason
+// and TargetReason say why.
+type BandGain struct {
+	Band Band
+
+	NoiseIn, NoiseOut *float64
+	NoiseReduction    *float64
+	NoiseReductionCI  *[2]float64
+
+	TargetIn, TargetOut *float64
+	TargetChange        *float64
+	TargetChangeCI      *[2]float64
+
+	SNRIn, SNROut *float64
+	SNRGain       *float64
+	SNRGainCI     *[2]float64
+
+	OverBest, OverNamed *float64
+
+	NoiseReason, TargetReason Reason
+	Flags                     []string
+
+	// NoiseSamples and TargetSamples are the independent samples (time times
+	// bandwidth) behind the figures, NoiseBlockS and TargetBlockS the block
+	// lengths of the intervals, seconds.
+	NoiseSamples, TargetSamples float64
+	NoiseBlockS, TargetBlockS   float64
+}
+
+// Sparse reports whether the flag Sparse stands on the band.
+func (b *BandGain) Sparse() bool {
+	for _, f := range b.Flags {
+		if f == Sparse {
+			return true
+		}
+	}
+	return false
+}
+
+// Gains are the figures of all bands, lowest first.
+type Gains struct {
+	Bands []BandGain
+	// Best is the microphone with the highest SNR over all measured bands,
+	// 0-based in Scene.Microphones, -1 where it is not known.
+	Best int
+
+	named    int
+	isolated bool
+	data     []bandData
+}
+
+// bandData is what the figures of one band are made of.
+type bandData struct {
+	noise, target part
+	isolated      bool
+	mics          []micPower
+}
+
+// micPower is the noise power and the target power of one microphone.
+type micPower struct{ noise, target float64 }
+
+// powers returns the target power at the reference and in the output.
+func (d *bandData) powers() (ref, out float64) {
+	if d.isolated {
+		return d.target.refMean, d.target.outMean
+	}
+	return d.target.refMean - d.noise.refMean, d.target.outMean - d.noise.outMean
+}
+
+// part is one band over the entries of one kind of stretch.
+type part struct {
+	at       []int
+	ref, out []float64
+	refMean  float64
+	outMean  float64
+	seconds  float64 // of time covered
+	hopS     float64
+	startS   float64 // centre of entry 0
+}
+
+func newPart(ref, out Track, at []int) part {
+	p := part{at: at, hopS: ref.HopS, startS: ref.StartS + ref.LengthS/2}
+	p.ref = make([]float64, len(at))
+	p.out = make([]float64, len(at))
+	for i, j := range at {
+		p.ref[i] = float64(ref.Power[j])
+		p.out[i] = float64(out.Power[j])
+		p.refMean += p.ref[i]
+		p.outMean += p.out[i]
+		if i == 0 || at[i-1] != j-1 {
+			p.seconds += ref.LengthS - ref.HopS
+		}
+		p.seconds += ref.HopS
+	}
+	n := float64(len(at))
+	p.refMean /= n
+	p.outMean /= n
+	return p
+}
+
+func (p *part) short() bool { return len(p.at) < LeastEntries || p.seconds < LeastSeconds }
+
+// spread is the spread of the mean of a·ref + b·out.
+func (p *part) spread(a, b float64) spread {
+	z := make([]float64, len(p.at))
+	for i := range z {
+		z[i] = a*(p.ref[i]-p.refMean) + b*(p.out[i]-p.outMean)
+	}
+	return meanSpread(z, p.at)
+}
+
+func number(v float64) *float64 { return &v }
+
+func level(power float64) *float64 { return number(audio.PowerDB(power)) }
+
+// dbPerNeper turns a natural logarithm of power into decibels.
+const dbPerNeper = 10 / math.Ln10

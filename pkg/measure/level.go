@@ -1,0 +1,103 @@
+package measure
+
+import (
+	"math"
+
+	"alidade/pkg/audio"
+)
+
+// FullScaleSamples is how many samples in a row have to stand at full scale to
+// count as clipped: single ones are peaks that just reach it.
+const FullScaleSamples = 3
+
+// fullScale is the least magnitude that counts as full scale: the largest
+// positive value of 16 bit.
+const fullScale = 32767.0 / 32768
+
+// total adds up one channel.
+type total struct {
+	frames      int64
+	sum, square float64
+	peak        float32
+	run         int64 // samples at full scale just before
+	clipped     int64
+}
+
+// add takes samples and returns -1, or the place of the first one that is not
+// a finite number.
+func (t *total) add(x []float32) int {
+	var sum, square float64
+	peak := t.peak
+	for i, v := range x {
+		a := v
+		if a < 0 {
+			a = -a
+		}
+		if !(a <= math.MaxFloat32) {
+			return i
+		}
+		sum += float64(v)
+		square += float64(v) * float64(v)
+		if a > peak {
+			peak = a
+		}
+		if a < fullScale {
+			t.run = 0
+			continue
+		}
+		t.run++
+		switch {
+		case t.run == FullScaleSamples:
+			t.clipped += FullScaleSamples
+		case t.run > FullScaleSamples:
+			t.clipped++
+		}
+	}
+	t.frames += int64(len(x))
+	t.sum += sum
+	t.square += square
+	t.peak = peak
+	return -1
+}
+
+// Level is what one channel holds as a whole.
+type Level struct {
+	Frames        int64
+	RMSDBFS       float64 // a full-scale sine reads 0 (AES17); -Inf for silence
+	PeakDBFS      float64 // largest magnitude re 1.0; -Inf for silence
+	DC            float64 // mean, re 1.0
+	ClippedFrames int64   // in runs of at least FullScaleSamples at full scale
+	// AWeightedDBFS is the level of the one-third octaves, each with the
+	// A-weighting at its mid-band frequency; NaN where the signal is too short
+	// for bands or the channel is not used.
+	AWeightedDBFS float64
+}
+
+// Levels returns the totals of every channel, used or not. Call it after
+// Close.
+func (m *Meter) Levels() []Level {
+	list := make([]Level, len(m.totals))
+	for ch := range list {
+		t := &m.totals[ch]
+		l := Level{Frames: t.frames, ClippedFrames: t.clipped, AWeightedDBFS: math.NaN(), RMSDBFS: math.Inf(-1)}
+		l.PeakDBFS = audio.AmplitudeDB(float64(t.peak))
+		if t.frames > 0 {
+			l.DC = t.sum / float64(t.frames)
+			l.RMSDBFS = audio.PowerDB(2 * t.square / float64(t.frames))
+		}
+		if i := m.slot[ch]; i >= 0 {
+			l.AWeightedDBFS = audio.PowerDB(weighted(m.layout.bands[:m.layout.thirds], m.BandPower(i)))
+		}
+		list[ch] = l
+	}
+	return list
+}
+
+// weighted is the sum of band powers under A-weighting.
+func weighted(bands []Band, power []float64) float64 {
+	sum := 0.0
+	for b, p := range power {
+		sum += p * audio.FromPowerDB(AWeightingDB(bands[b].CentreHz))
+	}
+	return sum
+}

@@ -1,0 +1,117 @@
+package measure
+
+import (
+	"math"
+
+	"gonum.org/v1/gonum/stat/distuv"
+)
+
+// spread is how sure a mean is.
+type spread struct {
+	variance float64 // of the mean
+	dof      float64 // degrees of freedom behind variance
+	block    int     // entries over which the values were taken as dependent
+}
+
+// meanSpread returns the variance of the mean of z, whose values stand at the
+// places at of an evenly spaced series (ascending, gaps allowed). The mean of z
+// must be 0: values are residuals about their own mean.
+//
+// The variance is the long-run variance under Bartlett's kernel,
+//
+//	v = 1/n² · Q / (1 - s/n²),   Q = Σ_ij κ_ij z_i z_j,   κ_ij = 1 - |at_i - at_j|/L
+//
+// for distances below L and 0 beyond, with s = Σ_ij κ_ij: the second factor
+// undoes what taking out the mean removes [Newey West 1987]. The block length L
+// follows from the autocorrelation of z [Andrews 1991, eq. 6.2 and 6.4, AR(1)].
+// The degrees of freedom are those of the quadratic form Q,
+// 2·E[Q]²/var[Q] [Satterthwaite 1946], lowered where the values have heavier
+// tails than a normal distribution has, by 2/(kurtosis-1) [Box 1953].
+func meanSpread(z []float64, at []int) spread {
+	n := float64(len(z))
+	if len(z) < 2 {
+		return spread{math.Inf(1), 0, 1}
+	}
+	block := blockLength(z, at)
+	q, sum, square, rows2 := 0.0, 0.0, 0.0, 0.0
+	row := make([]float64, len(z))
+	fourth, second := 0.0, 0.0
+	for i := range z {
+		row[i]++
+		sum++
+		square++
+		q += z[i] * z[i]
+		second += z[i] * z[i]
+		fourth += z[i] * z[i] * z[i] * z[i]
+		for j := i + 1; j < len(z) && at[j]-at[i] < block; j++ {
+			k := 1 - float64(at[j]-at[i])/float64(block)
+			q += 2 * k * z[i] * z[j]
+			sum += 2 * k
+			square += 2 * k * k
+			row[i] += k
+			row[j] += k
+		}
+	}
+	for _, r := range row {
+		rows2 += r * r
+	}
+	trace := n - sum/n
+	if trace < 0.5 || !(second > 0) {
+		return spread{0, math.Max(1, n-1), block}
+	}
+	dof := trace * trace / (square - 2*rows2/n + sum*sum/(n*n))
+	if kurtosis := n * fourth / (second * second); kurtosis > 3 {
+		dof *= 2 / (kurtosis - 1)
+	}
+	return spread{q / (n * trace), math.Max(dof, 1), block}
+}
+
+// blockLength is the length of Bartlett's kernel for z.
+func blockLength(z []float64, at []int) int {
+	cross, square := 0.0, 0.0
+	pairs := 0
+	for i := range z {
+		square += z[i] * z[i]
+		if i > 0 && at[i] == at[i-1]+1 {
+			cross += z[i] * z[i-1]
+			pairs++
+		}
+	}
+	if pairs < 3 || !(square > 0) {
+		return 1
+	}
+	n := float64(len(z))
+	rho := cross / float64(pairs) / (square / n)
+	rho = math.Min(rho, 0.97)
+	if rho <= 0 {
+		return 1
+	}
+	alpha := 4 * rho * rho / ((1 - rho*rho) * (1 - rho*rho))
+	length := int(math.Ceil(1.1447 * math.Cbrt(alpha*n)))
+	return max(1, min(length, len(z)/4))
+}
+
+// plus is the spread of the sum of two independent means, with the degrees of
+// freedom of Welch and Satterthwaite.
+func (s spread) plus(t spread) spread {
+	v := s.variance + t.variance
+	if !(v > 0) {
+		return spread{0, s.dof + t.dof, max(s.block, t.block)}
+	}
+	dof := v * v / (s.variance*s.variance/s.dof + t.variance*t.variance/t.dof)
+	return spread{v, dof, max(s.block, t.block)}
+}
+
+// half is half the width of the two-sided 95 % interval, equally the one-sided
+// 97.5 % limit.
+func (s spread) half() float64 {
+	return studentT(s.dof) * math.Sqrt(s.variance)
+}
+
+// studentT is the 97.5 % point of Student's distribution.
+func studentT(dof float64) float64 {
+	if !(dof >= 1) {
+		dof = 1
+	}
+	return distuv.StudentsT{Mu: 0, Sigma: 1, Nu: dof}.Quantile(0.975)
+}

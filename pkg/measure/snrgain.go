@@ -1,0 +1,158 @@
+package measure
+
+import (
+	"fmt"
+	"math"
+)
+
+// SNRGain returns the figures of every band of a scene.
+func SNRGain(s Scene) (*Gains, error) {
+	if err := s.Pair.validate("mix"); err != nil {
+		return nil, err
+	}
+	if s.Named >= len(s.Microphones) && s.Named >= 0 {
+		return nil, fmt.Errorf("measure: named microphone %d: there are %d", s.Named+1, len(s.Microphones))
+	}
+	g := &Gains{Best: -1, named: s.Named}
+	for b := range s.Reference.Tracks {
+		ref, out, err := align(s.Reference.Tracks[b], s.Output.Tracks[b])
+		if err != nil {
+			return nil, fmt.Errorf("measure: %w", err)
+		}
+		d := bandData{
+			noise:  newPart(ref, out, ref.inside(orNone(s.Noise))),
+			target: newPart(ref, out, ref.inside(orNone(s.Target))),
+		}
+		noise, err := micLevels(s.Microphones, b, ref, orNone(s.Noise))
+		if err != nil {
+			return nil, fmt.Errorf("measure: %w", err)
+		}
+		target, err := micLevels(s.Microphones, b, ref, orNone(s.Target))
+		if err != nil {
+			return nil, fmt.Errorf("measure: %w", err)
+		}
+		for m := range noise {
+			n := noise[m] * d.noise.refMean
+			d.mics = append(d.mics, micPower{n, target[m]*d.target.refMean - n})
+		}
+		g.data = append(g.data, d)
+		g.Bands = append(g.Bands, d.gain(ref.Band))
+	}
+	g.compare()
+	return g, nil
+}
+
+// orNone makes a nil list of stretches an empty one.
+func orNone(s []Stretch) []Stretch {
+	if s == nil {
+		return []Stretch{}
+	}
+	return s
+}
+
+func (p Pair) validate(name string) error {
+	if p.Reference == nil || p.Output == nil {
+		return fmt.Errorf("measure: %s: reference or output is missing", name)
+	}
+	if len(p.Reference.Tracks) != len(p.Output.Tracks) {
+		return fmt.Errorf("measure: %s: %d bands at the reference, %d in the output", name, len(p.Reference.Tracks), len(p.Output.Tracks))
+	}
+	for _, s := range append([]*Series{p.Reference, p.Output}, p.Microphones...) {
+		if s == nil || len(s.Tracks) != len(p.Reference.Tracks) {
+			return fmt.Errorf("measure: %s: a microphone has other bands than the reference", name)
+		}
+		for b := range s.Tracks {
+			if err := s.Tracks[b].validate(); err != nil {
+				return fmt.Errorf("measure: %s: %w", name, err)
+			}
+		}
+	}
+	return nil
+}
+
+// gain makes the figures of one band.
+func (d *bandData) gain(band Band) BandGain {
+	g := BandGain{Band: band}
+	n, a := &d.noise, &d.target
+	switch {
+	case len(n.at) == 0:
+		g.NoiseReason = NoNoise
+	case n.short():
+		g.NoiseReason = TooShort
+	case !(n.refMean > 0) || !(n.outMean > 0):
+		g.NoiseReason = Silent
+	}
+	if g.NoiseReason != "" {
+		g.TargetReason = g.NoiseReason
+		g.Flags = append(g.Flags, TargetUnmeasurable)
+		return g
+	}
+	g.NoiseSamples = n.seconds * band.Width()
+	g.NoiseIn, g.NoiseOut = level(n.refMean), level(n.outMean)
+	g.NoiseReduction = number(*g.NoiseIn - *g.NoiseOut)
+	s := n.spread(1/n.refMean, -1/n.outMean)
+	g.NoiseBlockS = float64(s.block) * n.hopS
+	bias := 0.5 * (n.spread(0, 1/n.outMean).variance - n.spread(1/n.refMean, 0).variance)
+	g.NoiseReductionCI = interval(math.Log(n.refMean/n.outMean)-bias, s)
+	sparse := g.NoiseSamples < SparseSamples || n.seconds < SparseSeconds || n.seconds < SparseBlocks*g.NoiseBlockS
+	if sparse {
+		g.Flags = append(g.Flags, Sparse)
+	}
+	switch {
+	case len(a.at) == 0:
+		g.TargetReason = NoTarget
+	case a.short():
+		g.TargetReason = TooShort
+	default:
+		g.TargetSamples = a.seconds * band.Width()
+		refS, outS := d.powers()
+		if d.isolated {
+			if !(refS > 0) || !(outS > 0) {
+				g.TargetReason = Silent
+				break
+			}
+			g.target(d, refS, outS)
+			break
+		}
+		if refS <= a.spread(1, 0).plus(n.spread(1, 0)).half() || outS <= a.spread(0, 1).plus(n.spread(0, 1)).half() {
+			g.TargetReason = NotAboveNoise
+			break
+		}
+		g.target(d, refS, outS)
+	}
+	if g.TargetReason != "" {
+		g.Flags = append(g.Flags, TargetUnmeasurable)
+	}
+	return g
+}
+
+// target fills in the figures of the target from its powers at the reference
+// and in the output.
+func (g *BandGain) target(d *bandData, refS, outS float64) {
+	n, a := &d.noise, &d.target
+	g.TargetIn, g.TargetOut = level(refS), level(outS)
+	g.TargetChange = number(*g.TargetOut - *g.TargetIn)
+	g.SNRIn, g.SNROut = number(*g.TargetIn-*g.NoiseIn), number(*g.TargetOut-*g.NoiseOut)
+	g.SNRGain = number(*g.NoiseReduction + *g.TargetChange)
+	if d.isolated {
+		ci := [2]float64{g.NoiseReductionCI[0] + *g.TargetChange, g.NoiseReductionCI[1] + *g.TargetChange}
+		g.SNRGainCI = &ci
+		return
+	}
+	sa := a.spread(-1/refS, 1/outS)
+	g.TargetBlockS = float64(sa.block) * a.hopS
+	tc := sa.plus(n.spread(1/refS, -1/outS))
+	g.TargetChangeCI = interval(math.Log(outS/refS), tc)
+	sg := sa.plus(n.spread(1/refS+1/n.refMean, -1/outS-1/n.outMean))
+	g.SNRGainCI = interval(math.Log(outS/refS*n.refMean/n.outMean), sg)
+	if !g.Sparse() && (g.TargetSamples < SparseSamples || a.seconds < SparseSeconds || a.seconds < SparseBlocks*g.TargetBlockS) {
+		g.Flags = append(g.Flags, Sparse)
+	}
+}
+
+// interval is the 95 % interval in decibels about centre, a natural logarithm
+// of a power ratio.
+func interval(centre float64, s spread) *[2]float64 {
+	h := s.half()
+	return &[2]float64{dbPerNeper * (centre - h), dbPerNeper * (centre + h)}
+}
