@@ -48,6 +48,7 @@ var owner = map[string]string{
 	"github.com/santhosh-tekuri/jsonschema/v6": "pkg/sheet",
 	"github.com/urfave/cli/v2":                 "cmd/alidade",
 	"github.com/vbauerster/mpb/v8":             "cmd/alidade",
+	"golang.org/x/sys":                         "pkg/pipeline",
 	"golang.org/x/term":                        "cmd/alidade",
 	"gonum.org/v1/gonum":                       "pkg/measure",
 }
