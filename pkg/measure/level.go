@@ -73,18 +73,23 @@ type Level struct {
 	AWeightedDBFS float64
 }
 
+// level returns what was added up so far, without the A-weighted level.
+func (t *total) level() Level {
+	l := Level{Frames: t.frames, ClippedFrames: t.clipped, AWeightedDBFS: math.NaN(), RMSDBFS: math.Inf(-1)}
+	l.PeakDBFS = audio.AmplitudeDB(float64(t.peak))
+	if t.frames > 0 {
+		l.DC = t.sum / float64(t.frames)
+		l.RMSDBFS = audio.PowerDB(2 * t.square / float64(t.frames))
+	}
+	return l
+}
+
 // Levels returns the totals of every channel, used or not. Call it after
 // Close.
 func (m *Meter) Levels() []Level {
 	list := make([]Level, len(m.totals))
 	for ch := range list {
-		t := &m.totals[ch]
-		l := Level{Frames: t.frames, ClippedFrames: t.clipped, AWeightedDBFS: math.NaN(), RMSDBFS: math.Inf(-1)}
-		l.PeakDBFS = audio.AmplitudeDB(float64(t.peak))
-		if t.frames > 0 {
-			l.DC = t.sum / float64(t.frames)
-			l.RMSDBFS = audio.PowerDB(2 * t.square / float64(t.frames))
-		}
+		l := m.totals[ch].level()
 		if i := m.slot[ch]; i >= 0 {
 			l.AWeightedDBFS = audio.PowerDB(weighted(m.layout.bands[:m.layout.thirds], m.BandPower(i)))
 		}
