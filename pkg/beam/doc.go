@@ -20,7 +20,11 @@
 // # Use
 //
 //	taper, err := beam.ParseTaper("taylor:30:4")
-//	a, err := taper.Amplitudes(mics) // adds up to 1
+//	w, err := beam.Tapered{Taper: taper}.Weights(beam.Task{
+//		Mics: mics, Reference: ref, Look: acoustics.Plane{From: direction},
+//		Speed: air.Speed(), Rate: 48000, FFTSize: 1024,
+//	})
+//	filters, fit, err := w.Filters(0)
 //
 // # Sources
 //
@@ -39,4 +43,24 @@
 // the discrete Fourier transform, Proc. IEEE 66 (1978), p. 51: Hann and
 // Hamming. Hann is taken without its two zeros, sin²(π(n+1)/(N+1)), since a
 // microphone with weight zero would be thrown away.
+//
+// [Capon 1969] J. Capon, High-resolution frequency-wavenumber spectrum
+// analysis, Proc. IEEE 57 (1969), p. 1408: minimum variance.
+//
+// [Frost 1972] O. L. Frost, An algorithm for linearly constrained adaptive
+// array processing, Proc. IEEE 60 (1972), p. 926.
+//
+// [Cox 1986] H. Cox, R. M. Zeskind, T. Kooij, Practical supergain, IEEE Trans.
+// ASSP-34 (1986), p. 393: diagonal loading for a floor on white noise gain.
+//
+// [Cox 1987] H. Cox, R. M. Zeskind, M. M. Owen, Robust adaptive beamforming,
+// IEEE Trans. ASSP-35 (1987), p. 1365.
+//
+// [Parra 2006] L. C. Parra, Steerable frequency-invariant beamforming for
+// arbitrary arrays, J. Acoust. Soc. Am. 119 (2006), p. 3839: least squares over
+// the sphere; page from memory.
+//
+// [Welch 1967] P. D. Welch, The use of fast Fourier transform for the
+// estimation of power spectra, IEEE Trans. Audio Electroacoust. AU-15 (1967),
+// p. 70.
 package beam

@@ -9,6 +9,7 @@ import (
 	"strings"
 
 	"alidade/pkg/rig"
+	"alidade/pkg/spectral"
 )
 
 // Taper is a set of amplitude weights over the microphones. The zero value is
@@ -223,7 +224,7 @@ func (t Taper) continuous(x, length, spacing float64) float64 {
 		if length == 0 {
 			return 1
 		}
-		return kaiser(2*x/length, t.parameter)
+		return spectral.Kaiser(t.parameter)(2 * x / length)
 	case taperTaylor:
 		return taylorShape(x/(length+spacing), t.parameter, t.nbar)
 	}

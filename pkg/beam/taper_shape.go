@@ -77,21 +77,3 @@ func taylorCoefficient(m int, sll float64, nbar int) float64 {
 	}
 	return num / den
 }
-
-// kaiser returns the window of [Kaiser 1974] at x, -1..1 from end to end:
-// I0(beta sqrt(1-x²))/I0(beta).
-func kaiser(x, beta float64) float64 {
-	return besselI0(beta*math.Sqrt(math.Max(0, 1-x*x))) / besselI0(beta)
-}
-
-// besselI0 returns the modified Bessel function of the first kind and order 0
-// by its power series, whose terms are all positive.
-func besselI0(x float64) float64 {
-	sum, term := 1.0, 1.0
-	for k := 1; term > 1e-17*sum; k++ {
-		h := x / (2 * float64(k))
-		term *= h * h
-		sum += term
-	}
-	return sum
-}
