@@ -8,6 +8,7 @@ import (
 	"path"
 	"strconv"
 	"strings"
+	"sync"
 
 	"alidade/pkg/sheet"
 )
@@ -119,6 +120,15 @@ func Schema() ([]byte, error) {
 	return sheet.SchemaOf(file{}, SchemaID, "Alidade rig file")
 }
 
+// compiled is the schema made ready, once.
+var compiled = sync.OnceValues(func() (*sheet.Schema, error) {
+	text, err := Schema()
+	if err != nil {
+		return nil, err
+	}
+	return sheet.NewSchema(text)
+})
+
 // Load reads a rig file in YAML or JSON. The name stands in faults, and without
 // its folder and ending it is the name of a rig that gives none. A rig whose
 // positions stand in a CSV file is completed through open, which is given the
@@ -126,11 +136,7 @@ func Schema() ([]byte, error) {
 // error holds every fault at once as *sheet.FaultsError values, each with its
 // place; sheet.Annotated shows the lines.
 func Load(name string, data []byte, open func(path string) (io.ReadCloser, error)) (*Rig, error) {
-	text, err := Schema()
-	if err != nil {
-		return nil, err
-	}
-	schema, err := sheet.NewSchema(text)
+	schema, err := compiled()
 	if err != nil {
 		return nil, err
 	}
