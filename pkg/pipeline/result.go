@@ -34,22 +34,22 @@ type Finding struct {
 // Result is everything that is known about one steered take, as plain data.
 // Its JSON form is the report.
 type Result struct {
-	Schema     string      `json:"schema"`
-	Version    string      `json:"version"`               // program version
-	CreatedUTC string      `json:"created_utc,omitempty"` // RFC 3339, absent when reproducible
-	Take       Take        `json:"take"`
-	Rig        RigSummary  `json:"rig"`
-	Steer      Steer       `json:"steer"`
-	Direction  *Direction  `json:"direction,omitempty"` // when estimated
-	Segments   Segments    `json:"segments"`
-	Bands      []Band      `json:"bands"`        // one-third octaves
-	OctaveBand []Band      `json:"octave_bands"` // octaves
-	Overall    Overall     `json:"overall"`
-	Channels   []Channel   `json:"channels"`
-	Findings   []Finding   `json:"findings"`
-	Output     Output      `json:"output"`
-	Outputs    []Output    `json:"other_outputs,omitempty"` // the reference track
-	Provenance *Provenance `json:"provenance,omitempty"`
+	Schema       string      `json:"schema"`
+	Version      string      `json:"version"`               // program version
+	CreatedUTC   string      `json:"created_utc,omitempty"` // RFC 3339, absent when reproducible
+	Take         Take        `json:"take"`
+	Rig          RigSummary  `json:"rig"`
+	Steer        Steer       `json:"steer"`
+	Direction    *Direction  `json:"direction,omitempty"` // when estimated
+	Segments     Segments    `json:"segments"`
+	Bands        []Band      `json:"bands"`        // one-third octaves
+	OctaveBands  []Band      `json:"octave_bands"` // octaves
+	Overall      Overall     `json:"overall"`
+	Channels     []Channel   `json:"channels"`
+	Findings     []Finding   `json:"findings"`
+	Output       Output      `json:"output"`
+	OtherOutputs []Output    `json:"other_outputs,omitempty"` // the reference track
+	Provenance   *Provenance `json:"provenance,omitempty"`
 }
 
 // Provenance is what is needed to make the result again.
@@ -102,22 +102,21 @@ type RigMic struct {
 
 // Steer is where and how the beam was pointed.
 type Steer struct {
-	Kind         string      `json:"kind"` // given, focus, estimated, focus-estimated or followed
-	AzimuthDeg   float64     `json:"azimuth_deg"`
-	ElevationDeg float64     `json:"elevation_deg"`
-	CompassDeg   Number      `json:"compass_deg,omitempty"`
-	PointM       *[3]float64 `json:"point_m,omitempty"`
-	DistanceM    Number      `json:"distance_m,omitempty"` // of the point from the reference point
-	Ambiguity    string      `json:"ambiguity"`            // what the rig cannot tell apart, in words
-	Method       string      `json:"method"`               // sinc, farrow or spectral
-	MethodErrorD float64     `json:"method_error_db"`      // stated largest error of the method, dB re the signal
-	Weights      string      `json:"weights"`
-	Taper        string      `json:"taper"`
-	UndoSpread   bool        `json:"undo_spreading"`
-	HighpassHz   Number      `json:"highpass_hz,omitempty"`
-	GainDB       float64     `json:"gain_db"` // applied to the track, taken out of every level here
-	FilterTaps   int         `json:"filter_taps"`
-	TargetLossDB Number      `json:"predicted_target_change_db,omitempty"` // of the filters as built, worst band
+	Kind          string      `json:"kind"` // given, focus, estimated, focus-estimated or followed
+	AzimuthDeg    float64     `json:"azimuth_deg"`
+	ElevationDeg  float64     `json:"elevation_deg"`
+	CompassDeg    Number      `json:"compass_deg,omitempty"`
+	PointM        *[3]float64 `json:"point_m,omitempty"`
+	DistanceM     Number      `json:"distance_m,omitempty"` // of the point from the reference point
+	Ambiguity     string      `json:"ambiguity"`            // what the rig cannot tell apart, in words
+	Method        string      `json:"method"`               // sinc, farrow or spectral
+	MethodErrorDB float64     `json:"method_error_db"`      // stated largest error of the method, dB re the signal
+	Weights       string      `json:"weights"`
+	Taper         string      `json:"taper"`
+	UndoSpreading bool        `json:"undo_spreading"`
+	HighpassHz    Number      `json:"highpass_hz,omitempty"`
+	GainDB        float64     `json:"gain_db"` // applied to the track, taken out of every level here
+	FilterTaps    int         `json:"filter_taps"`
 }
 
 // Direction is an estimated direction.

@@ -1,0 +1,216 @@
+package pipeline
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+
+	"alidade/pkg/acoustics"
+	"alidade/pkg/audio"
+	"alidade/pkg/beam"
+	"alidade/pkg/delay"
+	"alidade/pkg/rig"
+	"alidade/pkg/spectral"
+)
+
+// isEnd reports the end of a stream.
+func isEnd(err error) bool { return errors.Is(err, io.EOF) }
+
+// The kernels of the methods, and the error that each is stated and tested to
+// stay under: the largest over 100 Hz to 0.8 of Nyquist and all fractional
+// delays, complex, re the signal, through the float32 chain for sinc and
+// spectral (DESIGN: accuracy that tests pin).
+const (
+	sincTaps      = 64
+	spectralTaps  = 128
+	farrowTaps    = 32
+	farrowOrder   = 6
+	sincErrorDB   = -100
+	spectralErrDB = -100
+	farrowErrorDB = -85
+)
+
+// beamline is a beam ready to be run over takes of one rate.
+type beamline struct {
+	rig     *loadedRig
+	used    []int       // indices into rig.Mics
+	at      []rig.Point // of the used microphones
+	ref     rig.Point
+	look    acoustics.Wave
+	filters *beam.Filters
+	set     *settings
+	errorDB float64
+}
+
+// nearestFocus is how close to a microphone a focus may lie, metres.
+const nearestFocus = 0.01
+
+// newBeamline designs the beam of the settings for takes of the given rate.
+func newBeamline(l *loadedRig, s *settings, rate int) (*beamline, error) {
+	b := &beamline{rig: l, used: l.Used(), at: l.Positions(), ref: l.ReferencePoint(), set: s}
+	if s.point != nil {
+		for i, p := range b.at {
+			if d := p.Distance(*s.point); d < nearestFocus {
+				return nil, &UsageError{Err: fmt.Errorf("--focus %s: %.1f mm from microphone %s: want at least %g mm", s.Focus, 1000*d, l.Mics[b.used[i]].Name, 1000*nearestFocus)}
+			}
+		}
+		if s.point.Distance(b.ref) < nearestFocus {
+			return nil, &UsageError{Err: fmt.Errorf("--focus %s: at the reference point, from where it has no direction", s.Focus)}
+		}
+		b.look = acoustics.Spherical{At: *s.point}
+	} else {
+		b.look = acoustics.Plane{From: *s.direction}
+	}
+	amplitudes, err := s.taper.Amplitudes(b.at)
+	if err != nil {
+		return nil, &UsageError{Err: fmt.Errorf("--taper %s: %w", s.taper, err)}
+	}
+	arrivals := acoustics.Delays(nil, b.look, b.at, b.ref, l.speed)
+	for i, m := range b.used {
+		// The correction is added to the channel's time: a channel that is late
+		// by d has the correction -d and arrives d later than its place says.
+		arrivals[i] -= l.Mics[m].Delay
+		if s.UndoSpreading {
+			amplitudes[i] /= b.look.Spreading(b.at[i], b.ref)
+		}
+	}
+	kernel, err := b.kernel()
+	if err != nil {
+		return nil, err
+	}
+	if b.filters, err = beam.DelayAndSum(kernel, rate, arrivals, amplitudes); err != nil {
+		return nil, &UsageError{Err: err}
+	}
+	return b, nil
+}
+
+func (b *beamline) kernel() (delay.Kernel, error) {
+	switch b.set.Method {
+	case MethodSinc:
+		b.errorDB = sincErrorDB
+		return delay.NewSinc(sincTaps)
+	case MethodFarrow:
+		b.errorDB = farrowErrorDB
+		return delay.NewFarrow(farrowTaps, farrowOrder)
+	}
+	b.errorDB = spectralErrDB
+	return delay.NewSinc(spectralTaps)
+}
+
+// corrected returns the used microphones of a take in rig order, with gain and
+// polarity corrections and the high-pass.
+func (b *beamline) corrected(src audio.Source) (audio.Source, error) {
+	order, gain := make([]int, len(b.used)), make([]float64, len(b.used))
+	for i, m := range b.used {
+		order[i], gain[i] = b.rig.Mics[m].Channel-1, b.rig.Mics[m].Factor()
+	}
+	out, err := audio.Map(src, order, gain)
+	if err != nil {
+		return nil, err
+	}
+	if b.set.HighpassHz > 0 {
+		if out, err = spectral.HighPass(out, b.set.HighpassHz); err != nil {
+			return nil, &UsageError{Err: fmt.Errorf("--highpass %g: %w", b.set.HighpassHz, err)}
+		}
+	}
+	return out, nil
+}
+
+// steered returns the beam over the corrected microphones.
+func (b *beamline) steered(src audio.Source) (audio.Source, error) {
+	if b.set.Method == MethodSpectral {
+		return beam.NewOverlapSave(src, b.filters)
+	}
+	return beam.NewConvolver(src, b.filters)
+}
+
+// blockFrames is how many frames are read at once: what a core's cache holds.
+func blockFrames(asked, channels int) int {
+	if asked > 0 {
+		return asked
+	}
+	const samples = 1 << 17
+	return min(max(samples/channels, 512), 8192)
+}
+
+// watched is a source that stops when ctx is done and tells how far it is.
+type watched struct {
+	audio.Source
+	ctx   context.Context
+	tell  func(frames int64)
+	count int64
+}
+
+// Read implements audio.Source.
+func (w *watched) Read(dst audio.Block) (int, error) {
+	if err := context.Cause(w.ctx); err != nil {
+		return 0, err
+	}
+	n, err := w.Source.Read(dst)
+	w.count += int64(n)
+	if w.tell != nil {
+		w.tell(w.count)
+	}
+	return n, err
+}
+
+// part is a sink that passes the frames from..to (half-open) on.
+type part struct {
+	sink     audio.Sink
+	at       int64
+	from, to int64
+}
+
+// Write implements audio.Sink.
+func (p *part) Write(src audio.Block) error {
+	n := int64(src.Frames())
+	first, last := max(p.from, p.at)-p.at, min(p.to, p.at+n)-p.at
+	p.at += n
+	if first >= last {
+		return nil
+	}
+	return p.sink.Write(src.Slice(int(first), int(last)))
+}
+
+// pick is a sink that passes one channel on.
+type pick struct {
+	sink    audio.Sink
+	channel int
+	out     audio.Block
+}
+
+// Write implements audio.Sink.
+func (p *pick) Write(src audio.Block) error {
+	if p.out.Frames() < src.Frames() {
+		p.out = audio.NewBlock(1, src.Frames())
+	}
+	out := p.out.Slice(0, src.Frames())
+	copy(out.Channel(0), src.Channel(p.channel))
+	return p.sink.Write(out)
+}
+
+// louder is a sink that passes every sample on times a factor.
+type louder struct {
+	sink   audio.Sink
+	factor float32
+	out    audio.Block
+}
+
+// Write implements audio.Sink.
+func (l *louder) Write(src audio.Block) error {
+	if l.factor == 1 {
+		return l.sink.Write(src)
+	}
+	if l.out.Frames() < src.Frames() {
+		l.out = audio.NewBlock(src.Channels(), src.Frames())
+	}
+	out := l.out.Slice(0, src.Frames())
+	for ch := range src.Channels() {
+		to := out.Channel(ch)
+		for i, x := range src.Channel(ch) {
+			to[i] = l.factor * x
+		}
+	}
+	return l.sink.Write(out)
+}

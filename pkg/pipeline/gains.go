@@ -1,0 +1,286 @@
+package pipeline
+
+import (
+	"cmp"
+	"fmt"
+	"math"
+	"slices"
+	"strings"
+
+	"alidade/pkg/audio"
+	"alidade/pkg/measure"
+	"alidade/pkg/response"
+)
+
+// The sources of the segments.
+const (
+	SegmentsIsolated  = "isolated"
+	SegmentsGiven     = "given"
+	SegmentsAutomatic = "automatic"
+	SegmentsNone      = "none"
+)
+
+// gains fills in the bands, the overall figures, the segments and what there
+// is to say about them.
+func (r *run) gains(res *Result) error {
+	res.Segments = Segments{Source: SegmentsNone, Noise: [][2]float64{}, Target: [][2]float64{}}
+	rate := r.take.header.Rate
+	thirds, octaves := measure.ThirdOctaves(rate), measure.Octaves(rate)
+	res.Bands = r.line.predict(thirds)
+	res.OctaveBands = r.line.predict(octaves)
+	if r.set.NoMeasure {
+		return nil
+	}
+	named := -1
+	if name := r.set.CompareTo; name != "" {
+		m, found := r.rig.Find(name)
+		if named = slices.Index(r.line.used, m); !found || named < 0 {
+			return &UsageError{Err: fmt.Errorf("--compare-to %q: no used microphone of rig %s has that name", name, r.rig.Name)}
+		}
+	}
+	var third, octave *measure.Gains
+	var err error
+	if r.set.IsolatedNoise != "" || r.set.IsolatedTarget != "" {
+		third, octave, err = r.isolated(res, named)
+	} else {
+		third, octave, err = r.blind(res, named)
+	}
+	if err != nil || third == nil {
+		return err
+	}
+	fill(res.Bands, third)
+	fill(res.OctaveBands, octave)
+	o := third.Overall(nil)
+	res.Overall = Overall{
+		SNRGainDB: o.SNRGain, SNRGainCI95: o.SNRGainCI,
+		SpeechWeightedSNRGainDB: o.SpeechWeighted,
+		NoiseReductionDB:        o.NoiseReduction, NoiseReductionCI95: o.NoiseReductionCI,
+		NoiseReductionADB: o.NoiseReductionA,
+		TargetChangeDB:    o.TargetChange, TargetChangeCI95: o.TargetChangeCI,
+		OverBestMicrophoneDB: o.OverBest,
+	}
+	if third.Best >= 0 {
+		res.Overall.BestMicrophone = r.rig.Mics[r.line.used[third.Best]].Name
+	}
+	r.explain(res, third)
+	return nil
+}
+
+// predict returns the bands with what the filters, as built, should do in them.
+func (b *beamline) predict(bands []measure.Band) []Band {
+	nyquist := float64(b.filters.Rate) / 2
+	grating, found := response.GratingLimit(b.at, b.look.Direction(b.ref), b.rig.speed, nyquist)
+	list := make([]Band, len(bands))
+	for i, band := range bands {
+		white, diffuse, target := response.BandGains(b.filters, b.at, b.look, b.ref, b.rig.speed, band.LowHz, band.HighHz)
+		list[i] = Band{
+			NominalHz: band.NominalHz, CentreHz: band.CentreHz, LowHz: band.LowHz, HighHz: band.HighHz,
+			PredictedWhiteDB: number(white + target), PredictedDiffuseDB: number(diffuse + target), Flags: []string{},
+		}
+		if found && grating <= band.HighHz {
+			list[i].Flags = append(list[i].Flags, "grating")
+		}
+		if diffuse < response.NoApertureDB {
+			list[i].Flags = append(list[i].Flags, "no-aperture")
+		}
+	}
+	return list
+}
+
+// fill copies the measured figures into the bands.
+func fill(bands []Band, g *measure.Gains) {
+	for i := range bands {
+		b, m := &bands[i], g.Bands[i]
+		b.NoiseInDBFS, b.NoiseOutDBFS = m.NoiseIn, m.NoiseOut
+		b.NoiseReductionDB, b.NoiseReductionCI95 = m.NoiseReduction, m.NoiseReductionCI
+		b.TargetInDBFS, b.TargetOutDBFS = m.TargetIn, m.TargetOut
+		b.TargetChangeDB, b.TargetChangeCI95 = m.TargetChange, m.TargetChangeCI
+		b.SNRInDB, b.SNROutDB = m.SNRIn, m.SNROut
+		b.SNRGainDB, b.SNRGainCI95 = m.SNRGain, m.SNRGainCI
+		b.OverBestMicrophoneDB, b.OverNamedMicrophone = m.OverBest, m.OverNamed
+		b.Flags = append(b.Flags, m.Flags...)
+	}
+}
+
+// blind measures the mix itself: stretches given or found.
+func (r *run) blind(res *Result, named int) (third, octave *measure.Gains, err error) {
+	noise, target, err := r.stretches(res)
+	if err != nil {
+		return nil, nil, err
+	}
+	pair := measure.Pair{Reference: r.in.Thirds(), Output: r.out.Thirds(), Microphones: r.in.ChannelThirds()}
+	if third, err = measure.SNRGain(measure.Scene{Pair: pair, Noise: noise, Target: target, Named: named}); err != nil {
+		return nil, nil, err
+	}
+	pair = measure.Pair{Reference: r.in.Octaves(), Output: r.out.Octaves(), Microphones: r.in.ChannelOctaves()}
+	octave, err = measure.SNRGain(measure.Scene{Pair: pair, Noise: noise, Target: target, Named: named})
+	return third, octave, err
+}
+
+// targetGuardS is kept between a noise stretch and what is taken as target
+// where only the noise was given, seconds.
+const targetGuardS = 0.25
+
+// stretches returns where the noise and where the target sounds.
+func (r *run) stretches(res *Result) (noise, target []measure.Stretch, err error) {
+	duration := float64(r.take.header.Frames) / float64(r.take.header.Rate)
+	if len(r.set.noise) > 0 {
+		if noise, err = r.given("noise", r.set.noise, duration); err != nil {
+			return nil, nil, err
+		}
+		if target, err = r.given("target", r.set.target, duration); err != nil {
+			return nil, nil, err
+		}
+		for _, n := range noise {
+			for _, t := range target {
+				if n.From < t.To && t.From < n.To {
+					return nil, nil, &UsageError{Err: fmt.Errorf("--noise %g..%g and --target %g..%g overlap: where the target sounds is no noise-only stretch", n.From, n.To, t.From, t.To)}
+				}
+			}
+		}
+		if len(target) == 0 {
+			target = complement(noise, duration)
+			if len(target) > 0 {
+				r.report(Finding{Code: "target-taken", Severity: Info, Message: "no target stretches given: all of the take outside the noise stretches is taken to hold the target; give --target A..B where that is not so"})
+			}
+		}
+		res.Segments.Source = SegmentsGiven
+	} else {
+		found, err := measure.FindSegments(r.in.Thirds(), r.out.Thirds(), measure.SegmentOptions{ExpectedReductionDB: speechDiffuse(res.Bands)})
+		if err != nil {
+			return nil, nil, err
+		}
+		noise, target = found.Noise, found.Target
+		if len(noise) > 0 || len(target) > 0 {
+			res.Segments.Source = SegmentsAutomatic
+		}
+		if len(noise) == 0 || len(target) == 0 {
+			r.report(Finding{Code: "no-segments", Severity: Warning, Message: fmt.Sprintf(
+				"no gain could be measured: %s; give --noise A..B and --target A..B, or takes of the noise and the target alone", found.Explanation)})
+		}
+	}
+	res.Segments.Noise, res.Segments.Target = spans(noise), spans(target)
+	return noise, target, nil
+}
+
+// given turns stretches of the command line into seconds of this take.
+func (r *run) given(option string, list []Stretch, duration float64) ([]measure.Stretch, error) {
+	var out []measure.Stretch
+	for _, s := range list {
+		v, err := r.seconds(s)
+		if err != nil {
+			return nil, &UsageError{Err: fmt.Errorf("--%s: %w", option, err)}
+		}
+		if v[0] >= duration {
+			return nil, &UsageError{Err: fmt.Errorf("--%s %s..%s: starts after the end of %s, which is %.3f s long", option, s.From, s.To, r.take.path(), duration)}
+		}
+		out = append(out, measure.Stretch{From: v[0], To: math.Min(v[1], duration)})
+	}
+	slices.SortFunc(out, func(a, b measure.Stretch) int { return cmp.Compare(a.From, b.From) })
+	for i := 1; i < len(out); i++ {
+		if out[i].From < out[i-1].To {
+			return nil, &UsageError{Err: fmt.Errorf("--%s: %g..%g and %g..%g overlap", option, out[i-1].From, out[i-1].To, out[i].From, out[i].To)}
+		}
+	}
+	return out, nil
+}
+
+// complement is what lies outside sorted stretches, with a guard around them.
+func complement(list []measure.Stretch, duration float64) []measure.Stretch {
+	var out []measure.Stretch
+	at := 0.0
+	for _, s := range append(slices.Clone(list), measure.Stretch{From: duration + targetGuardS, To: duration}) {
+		if s.From-targetGuardS > at {
+			out = append(out, measure.Stretch{From: at, To: s.From - targetGuardS})
+		}
+		at = s.To + targetGuardS
+	}
+	return out
+}
+
+func spans(list []measure.Stretch) [][2]float64 {
+	out := make([][2]float64, len(list))
+	for i, s := range list {
+		out[i] = [2]float64{s.From, s.To}
+	}
+	return out
+}
+
+// speechDiffuse is the mean predicted gain in diffuse noise from 250 Hz to
+// 4 kHz, dB, 0 where no band lies there.
+func speechDiffuse(bands []Band) float64 {
+	sum, n := 0.0, 0
+	for _, b := range bands {
+		if b.PredictedDiffuseDB != nil && b.CentreHz > 245 && b.CentreHz < 4100 {
+			sum += *b.PredictedDiffuseDB
+			n++
+		}
+	}
+	if n == 0 {
+		return 0
+	}
+	return sum / float64(n)
+}
+
+// isolated measures with takes of the noise and of the target alone, through
+// the weights of the mix.
+func (r *run) isolated(res *Result, named int) (third, octave *measure.Gains, err error) {
+	if r.set.IsolatedNoise == "" || r.set.IsolatedTarget == "" {
+		missing := "isolated-noise"
+		if r.set.IsolatedTarget == "" {
+			missing = "isolated-target"
+		}
+		return nil, nil, &UsageError{Err: fmt.Errorf("--%s is missing: the gain from isolated takes needs both the noise and the target alone", missing)}
+	}
+	nIn, nOut, nSpan, err := r.through(r.set.IsolatedNoise)
+	if err != nil {
+		return nil, nil, err
+	}
+	tIn, tOut, tSpan, err := r.through(r.set.IsolatedTarget)
+	if err != nil {
+		return nil, nil, err
+	}
+	res.Segments.Source = SegmentsIsolated
+	res.Segments.Noise, res.Segments.Target = [][2]float64{{0, nSpan}}, [][2]float64{{0, tSpan}}
+	third, err = measure.IsolatedGain(measure.Isolated{
+		Noise:  measure.Pair{Reference: nIn.Thirds(), Output: nOut.Thirds(), Microphones: nIn.ChannelThirds()},
+		Target: measure.Pair{Reference: tIn.Thirds(), Output: tOut.Thirds(), Microphones: tIn.ChannelThirds()},
+		Named:  named,
+	})
+	if err != nil {
+		return nil, nil, err
+	}
+	octave, err = measure.IsolatedGain(measure.Isolated{
+		Noise:  measure.Pair{Reference: nIn.Octaves(), Output: nOut.Octaves(), Microphones: nIn.ChannelOctaves()},
+		Target: measure.Pair{Reference: tIn.Octaves(), Output: tOut.Octaves(), Microphones: tIn.ChannelOctaves()},
+		Named:  named,
+	})
+	return third, octave, err
+}
+
+// through runs the beam over another take and returns its meters and its
+// length in seconds.
+func (r *run) through(path string) (in, out *measure.Meter, seconds float64, err error) {
+	t, err := openTake([]string{path}, false)
+	if err != nil {
+		return nil, nil, 0, err
+	}
+	defer func() { err = joinErrors(err, t.close()) }()
+	mix := r.take.header
+	if t.header.Rate != mix.Rate || t.header.Channels != mix.Channels {
+		return nil, nil, 0, &UsageError{Err: fmt.Errorf("%s: %d channels at %d Hz, but %s has %d at %d Hz: isolated takes are recorded with the same rig and settings",
+			path, t.header.Channels, t.header.Rate, r.take.path(), mix.Channels, mix.Rate)}
+	}
+	src := audio.Source(&watched{Source: t.source(), ctx: r.ctx, tell: r.tell("measuring "+path, t.header.Frames)})
+	if in, out, err = r.drive(src); err != nil {
+		return nil, nil, 0, err
+	}
+	if err := t.in.unchanged(); err != nil {
+		return nil, nil, 0, err
+	}
+	for _, f := range t.findings() {
+		f.Message = strings.TrimSpace(path + ": " + f.Message)
+		r.report(f)
+	}
+	return in, out, float64(t.header.Frames) / float64(t.header.Rate), nil
+}

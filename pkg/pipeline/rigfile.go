@@ -1,0 +1,118 @@
+package pipeline
+
+import (
+	"fmt"
+	"io"
+	"os"
+	"path/filepath"
+
+	"alidade/pkg/acoustics"
+	"alidade/pkg/rig"
+)
+
+// maxRigBytes bounds a rig file; real ones are a few kilobytes.
+const maxRigBytes = 4 << 20
+
+// loadedRig is a rig with the files it came from and the air in force.
+type loadedRig struct {
+	*rig.Rig
+	digest string
+	files  []string
+	air    acoustics.Air
+	speed  float64 // m/s
+	rule   string  // where the speed comes from
+}
+
+// loadRig reads the rig file at path, with the reference point and the air of
+// the options in place of its own.
+func loadRig(path string, o Options) (*loadedRig, error) {
+	data, err := readSmall(path, maxRigBytes)
+	if err != nil {
+		return nil, &UsageError{Err: fmt.Errorf("rig: %w", err)}
+	}
+	l := &loadedRig{digest: digestOf(data), files: []string{path}}
+	open := func(name string) (io.ReadCloser, error) {
+		if !filepath.IsAbs(name) {
+			name = filepath.Join(filepath.Dir(path), name)
+		}
+		in, err := openInput(name, false)
+		if err != nil {
+			return nil, err
+		}
+		l.files = append(l.files, name)
+		return in, nil
+	}
+	if l.Rig, err = rig.Load(path, data, open); err != nil {
+		return nil, &UsageError{Err: err}
+	}
+	if o.ReferencePoint != "" {
+		m, found := l.Find(o.ReferencePoint)
+		switch {
+		case o.ReferencePoint == rig.CentreReference:
+		case !found:
+			return nil, &UsageError{Err: fmt.Errorf("--reference-point %q: rig %s has no microphone of that name", o.ReferencePoint, l.Name)}
+		case !l.Mics[m].Use:
+			return nil, &UsageError{Err: fmt.Errorf("--reference-point %q: the rig file leaves that microphone out", o.ReferencePoint)}
+		}
+		l.Reference = o.ReferencePoint
+	}
+	l.air = acoustics.DryAir(20)
+	for _, from := range []rig.Air{l.Air, {TemperatureC: o.TemperatureC, HumidityPct: o.HumidityPct, PressureKPa: o.PressureKPa}} {
+		for _, v := range []struct {
+			given *float64
+			into  *float64
+		}{{from.TemperatureC, &l.air.TemperatureC}, {from.HumidityPct, &l.air.HumidityPct}, {from.PressureKPa, &l.air.PressureKPa}} {
+			if v.given != nil {
+				*v.into = *v.given
+			}
+		}
+	}
+	if err := l.air.Validate(); err != nil {
+		return nil, &UsageError{Err: fmt.Errorf("air: %w", err)}
+	}
+	l.speed, l.rule = l.air.Speed(), l.air.SpeedRule()
+	if o.SpeedOfSound != nil {
+		l.speed, l.rule = *o.SpeedOfSound, "given"
+	}
+	return l, nil
+}
+
+// readSmall reads a whole regular file of at most limit bytes.
+func readSmall(path string, limit int64) ([]byte, error) {
+	info, err := os.Stat(path)
+	if err != nil {
+		return nil, err
+	}
+	if !info.Mode().IsRegular() {
+		return nil, fmt.Errorf("%s: is %s, not a file", path, kindOf(info.Mode()))
+	}
+	if info.Size() > limit {
+		return nil, fmt.Errorf("%s: %d bytes, want at most %d", path, info.Size(), limit)
+	}
+	return os.ReadFile(path)
+}
+
+// summary is the rig as the report gives it.
+func (l *loadedRig) summary() RigSummary {
+	ref := l.ReferencePoint()
+	s := RigSummary{
+		Name: l.Name, SHA256: l.digest, MicrophonesUsed: len(l.Used()), Reference: l.Reference,
+		ReferencePointM: [3]float64{ref.X, ref.Y, ref.Z},
+		SpeedOfSoundMS:  l.speed, SpeedRule: l.rule, Air: l.air.String(),
+		Shape: rig.Spread(l.Positions()).Shape.String(),
+	}
+	if s.Reference == "" {
+		s.Reference = rig.CentreReference
+	}
+	for _, m := range l.Mics {
+		polarity := "normal"
+		if m.Inverted {
+			polarity = "inverted"
+		}
+		s.Mics = append(s.Mics, RigMic{
+			Name: m.Name, Channel: m.Channel, AtM: [3]float64{m.At.X, m.At.Y, m.At.Z},
+			GainDB: m.GainDB, DelayUS: m.Delay * 1e6, Polarity: polarity, Used: m.Use,
+		})
+	}
+	return s
+}

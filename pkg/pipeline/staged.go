@@ -1,0 +1,166 @@
+package pipeline
+
+import (
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"strings"
+)
+
+// staged is a file on its way: written under a temporary name in the folder of
+// its final name, which it takes only when complete. It is an *os.File to
+// write and read back through.
+type staged struct {
+	*os.File
+	final     string
+	overwrite bool
+	done      bool
+}
+
+// maxStagedTries bounds the search for a free temporary name.
+const maxStagedTries = 1000
+
+// stage creates the temporary file for final. An existing final is refused
+// unless overwrite is set, and then must be a regular file, whose mode is kept.
+func stage(final string, overwrite bool) (*staged, error) {
+	mode := fs.FileMode(0o666)
+	info, err := os.Stat(final)
+	switch {
+	case err == nil && !info.Mode().IsRegular():
+		return nil, fmt.Errorf("%s: is %s, not a file that could be replaced", final, kindOf(info.Mode()))
+	case err == nil && !overwrite:
+		return nil, &HintedError{
+			Err:  fmt.Errorf("%s: exists already", final),
+			Hint: "give another --out, or --overwrite to replace it",
+		}
+	case err == nil:
+		mode = info.Mode().Perm()
+	case !errors.Is(err, fs.ErrNotExist):
+		return nil, err
+	}
+	dir, base := filepath.Split(final)
+	const maxBase = 200 // leaves room for the rest within the usual 255 bytes
+	if len(base) > maxBase {
+		base = strings.ToValidUTF8(base[:maxBase], "")
+	}
+	for try := range maxStagedTries {
+		name := filepath.Join(dir, fmt.Sprintf(".%s.partial-%d", base, try))
+		f, err := os.OpenFile(name, os.O_RDWR|os.O_CREATE|os.O_EXCL, mode)
+		if errors.Is(err, fs.ErrExist) {
+			continue
+		}
+		if err != nil {
+			return nil, err
+		}
+		if info != nil {
+			// The mode above went through the umask; an existing file keeps its own.
+			if err := f.Chmod(mode); err != nil {
+				return nil, errors.Join(err, f.Close(), os.Remove(name))
+			}
+		}
+		return &staged{File: f, final: final, overwrite: overwrite}, nil
+	}
+	return nil, fmt.Errorf("%s: %d temporary files of earlier runs stand in its folder: remove those named .%s.partial-*", final, maxStagedTries, base)
+}
+
+// commit syncs and closes the file and gives it its final name, exclusively
+// unless it may overwrite. On an error the file is removed.
+func (s *staged) commit() error {
+	if s.done {
+		return nil
+	}
+	s.done = true
+	tmp := s.Name()
+	if err := errors.Join(s.Sync(), s.Close()); err != nil {
+		return errors.Join(err, os.Remove(tmp))
+	}
+	if !s.overwrite {
+		// A link is exclusive where a rename would replace what came in between.
+		err := os.Link(tmp, s.final)
+		switch {
+		case err == nil:
+			if err := os.Remove(tmp); err != nil {
+				return err
+			}
+			return syncFolder(filepath.Dir(s.final))
+		case errors.Is(err, fs.ErrExist):
+			return errors.Join(fmt.Errorf("%s: came into being while its track was written", s.final), os.Remove(tmp))
+		}
+		// File systems without hard links: look again, then rename.
+		if _, err := os.Lstat(s.final); err == nil {
+			return errors.Join(fmt.Errorf("%s: came into being while its track was written", s.final), os.Remove(tmp))
+		}
+	}
+	if err := os.Rename(tmp, s.final); err != nil {
+		return errors.Join(err, os.Remove(tmp))
+	}
+	return syncFolder(filepath.Dir(s.final))
+}
+
+// abandon closes and removes the file unless it was committed. Its errors are
+// of no use to anyone: the run has failed already.
+func (s *staged) abandon() {
+	if s == nil || s.done {
+		return
+	}
+	s.done = true
+	_ = s.Close()
+	_ = os.Remove(s.Name())
+}
+
+// syncFolder makes a rename in dir last through a loss of power. A file system
+// that cannot sync folders is left to itself.
+func syncFolder(dir string) error {
+	d, err := os.Open(dir)
+	if err != nil {
+		return err
+	}
+	_ = d.Sync()
+	return d.Close()
+}
+
+// kindOf names what a path is when it is not a regular file.
+func kindOf(mode fs.FileMode) string {
+	switch {
+	case mode.IsDir():
+		return "a folder"
+	case mode&fs.ModeNamedPipe != 0:
+		return "a named pipe"
+	case mode&fs.ModeSocket != 0:
+		return "a socket"
+	case mode&fs.ModeDevice != 0:
+		return "a device"
+	case mode&fs.ModeSymlink != 0:
+		return "a link"
+	case mode.IsRegular():
+		return "a file"
+	}
+	return "not a regular file"
+}
+
+// refuseInputs reports outputs that are the same file as an input, by name, by
+// link or by a name that differs only in case.
+func refuseInputs(outputs, inputs []string) error {
+	for _, out := range outputs {
+		outInfo, outErr := os.Stat(out)
+		outAbs, err := filepath.Abs(out)
+		if err != nil {
+			return err
+		}
+		for _, in := range inputs {
+			if inInfo, err := os.Stat(in); err == nil && outErr == nil && os.SameFile(inInfo, outInfo) {
+				return &UsageError{Err: fmt.Errorf("%s: is the input %s: an input is never written to", out, in), Hint: "give another --out"}
+			}
+			inAbs, err := filepath.Abs(in)
+			if err != nil {
+				return err
+			}
+			if strings.EqualFold(outAbs, inAbs) {
+				return &UsageError{Err: fmt.Errorf("%s: differs from the input %s only in case: on many disks that is the same file", out, in), Hint: "give another --out"}
+			}
+		}
+	}
+	return nil
+}
