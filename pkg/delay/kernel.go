@@ -51,10 +51,14 @@ func WorstError(k Kernel, low, high float64) float64 {
 	return worst
 }
 
-// split returns the whole samples of a delay and the rest in [0, 1).
+// split returns the whole samples of a delay and the rest in [0, 1). A delay
+// just below a whole number, whose rest rounds to 1, is that number.
 func split(delaySamples float64) (whole int, frac float64) {
 	w := math.Floor(delaySamples)
-	return int(w), delaySamples - w
+	if frac = delaySamples - w; frac == 1 {
+		return int(w) + 1, 0
+	}
+	return int(w), frac
 }
 
 // grow returns dst[:0] with room for n numbers, as n zeros.

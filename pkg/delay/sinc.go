@@ -62,7 +62,7 @@ func (s *Sinc) Taps(dst []float64, delaySamples float64) (start int, taps []floa
 		return start, taps
 	}
 	// sin(π(n-D)) is ±sin(π·frac): one sine, and no loss near whole numbers.
-	sine := math.Sin(math.Pi*frac) / math.Pi
+	sine := math.Sin(math.Pi*min(frac, 1-frac)) / math.Pi
 	for n := range taps {
 		u := float64(n-half+1) - frac
 		v := s.window(u/float64(half)) * sine / u
