@@ -97,7 +97,7 @@ func (d *Document) parse() (file *ast.File, ok bool) {
 func tooDeep(tokens token.Tokens) *token.Token {
 	const most = 4 * MaxDepth // the tree is held to MaxDepth itself
 	flow, run := 0, 0
-	for _, t := range tokens {
+	for i, t := range tokens {
 		switch t.Type {
 		case token.SequenceStartType, token.MappingStartType:
 			flow++
@@ -110,7 +110,9 @@ func tooDeep(tokens token.Tokens) *token.Token {
 			run++
 		case token.CommentType:
 		default:
-			run = 0
+			if i == 0 || tokens[i-1].Type != token.AnchorType { // the name of an anchor
+				run = 0
+			}
 		}
 		if flow > most || run > most {
 			return t

@@ -280,6 +280,9 @@ func nearest(text string, words []string) (string, bool) {
 		if p := strings.ToLower(text); len(p) >= 3 && (strings.HasPrefix(w, p+"_") || strings.HasPrefix(p, w+"_")) {
 			d = min(d, 1) // a unit left off, or the wrong one
 		}
+		if d >= max(len(text), len(w)) {
+			continue // nothing in common
+		}
 		if d <= bestDistance && (best == "" || d < bestDistance) {
 			best, bestDistance = w, d
 		}
