@@ -54,6 +54,8 @@ const (
 	// leastLoading and mostLoading bound ε, as a part of the mean power of R.
 	leastLoading = 1e-15
 	mostLoading  = 1e15
+	// rounding is that of the sums behind the solution, re their largest term.
+	rounding = 1e-15
 	// nullPenalty is the power of a source in the direction of each null, re
 	// the mean power of R, that stands for the null where it cannot be exact.
 	nullPenalty = 1e6
@@ -122,7 +124,7 @@ func (o *optimum) weights(floorDB float64) (*Weights, error) {
 		}
 		w.Loading[k] = loading
 		if w.Held != nil {
-			w.Held[k] = held
+			w.Held[k] = held && k >= fadeBins
 		}
 	}
 	return w, o.checkHeld(w, floorDB)
@@ -270,11 +272,13 @@ func (b *binJob) descend(l int, floor, power float64, w []complex128) float64 {
 	}
 	hermitian.NullSpace(basis, columns, m, l)
 	// residual = R w0 - p, rho = Uᴴ Bᴴ residual, S = Bᴴ R B = U diag(values) Uᴴ.
-	norm := 0.0
+	var norm, size float64
 	for i := range m {
 		b.residual[i] = -b.p[i]
 		for j := range m {
-			b.residual[i] += b.r[i*m+j] * b.w0[j]
+			x := b.r[i*m+j] * b.w0[j]
+			b.residual[i] += x
+			size += math.Abs(real(x)) + math.Abs(imag(x))
 		}
 		norm += abs2(b.w0[i])
 	}
@@ -306,6 +310,11 @@ func (b *binJob) descend(l int, floor, power float64, w []complex128) float64 {
 		rho[q] = 0
 		for p := range free {
 			rho[q] += conj(vectors[p*free+q]) * projected[p]
+		}
+		// What is left of a sum that cancels is rounding, and divided by a
+		// vanishing eigenvalue it would be weights.
+		if abs2(rho[q]) < rounding*rounding*size*size {
+			rho[q] = 0
 		}
 	}
 	loading := leastLoad(values, rho, norm, floor, power)

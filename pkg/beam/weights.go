@@ -118,6 +118,18 @@ func (w *Weights) WhiteNoiseGain(k int) float64 {
 	return (real(y)*real(y) + imag(y)*imag(y)) / power
 }
 
+// HeldFrom returns the lowest frequency, Hz, at which the nulls are exact; ok is
+// false if there is none or no null was asked for. Above it they may have to
+// give way again, where a grating lobe lies in the direction of one.
+func (w *Weights) HeldFrom() (hz float64, ok bool) {
+	for k, held := range w.Held {
+		if held {
+			return w.Task.Hz(k), true
+		}
+	}
+	return 0, false
+}
+
 // Fit says how well filters match the weights they were made from.
 type Fit struct {
 	Taps int // of the frequency-dependent part, without the fractional delay
@@ -135,9 +147,11 @@ const (
 	// truncationGoalDB is the truncation that the automatic length aims at.
 	truncationGoalDB = -90.0
 	// fadeFrom is the part of Nyquist from which on weights fade to those of
-	// delay-and-sum: at Nyquist the response of a real filter is real, so that a
-	// design cannot be followed there.
+	// delay-and-sum, and fadeBins the bin down from which they do so: at Nyquist
+	// and at 0 the response of a real filter is real, so that a design cannot be
+	// followed there, and its imaginary part must not jump.
 	fadeFrom = 0.85
+	fadeBins = 4
 	// delayTaps is the length of the fractional delays.
 	delayTaps = 128
 	// constraintPoints is how many frequencies the constraint is checked at.
@@ -212,6 +226,8 @@ func (w *Weights) aligned(delays []float64) ([][]float64, error) {
 			fade := 1.0
 			if x := (float64(k)/float64(n/2) - fadeFrom) / (1 - fadeFrom); x > 0 {
 				fade = 0.5 + 0.5*math.Cos(math.Pi*x)
+			} else if k < fadeBins {
+				fade = 0.5 - 0.5*math.Cos(math.Pi*float64(k)/fadeBins)
 			}
 			// Conjugate of w_m e^{+jωτ}.
 			s, c := math.Sincos(2 * math.Pi * w.Task.Hz(k) * delays[m])
