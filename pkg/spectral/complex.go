@@ -15,11 +15,11 @@ type Complex[T Float] struct {
 	br, bi []T  // scratch
 }
 
-// stage is one step of radix 4: twiddles e^{-j2πp/m}, their squares and cubes,
-// as six numbers for each p = 0..m/4-1, for m the size of the transforms that
-// are left and s the number of them.
+// stage is one step of radix 4: real and imaginary part of e^{-j2πp/m}, of its
+// square and its cube for each p = 0..m/4-1, with m the size of the transforms
+// that are left and s the number of them.
 type stage[T Float] struct {
-	tw []T
+	tw [][6]T
 	m  int
 	s  int
 }
@@ -33,11 +33,11 @@ func NewComplex[T Float](n int) (*Complex[T], error) {
 	c := &Complex[T]{n: n}
 	m, s := n, 1
 	for ; m >= 4; m, s = m/4, s*4 {
-		tw := make([]T, 6*(m/4))
+		tw := make([][6]T, m/4)
 		for p := range m / 4 {
 			for q := 1; q <= 3; q++ {
 				sin, cos := math.Sincos(-2 * math.Pi * float64(q*p) / float64(m))
-				tw[6*p+2*q-2], tw[6*p+2*q-1] = T(cos), T(sin)
+				tw[p][2*q-2], tw[p][2*q-1] = T(cos), T(sin)
 			}
 		}
 		c.stages = append(c.stages, stage[T]{tw: tw, m: m, s: s})
@@ -143,6 +143,8 @@ func (c *Complex[T]) run(re, im, xr, xi []T, from int) {
 			first4(yr, yi, xr, xi, c.stages[0].tw)
 		case c.stages[k].m == 4:
 			last4(yr, yi, xr, xi)
+		case k == 1:
+			second4(yr, yi, xr, xi, c.stages[1].tw)
 		default:
 			step4(yr, yi, xr, xi, c.stages[k].tw, c.stages[k].s)
 		}

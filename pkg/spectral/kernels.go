@@ -9,54 +9,92 @@ package spectral
 //	y[4p+2] = (a - b + c - d)·w²
 //	y[4p+3] = (a + jb - c - jd)·w³
 //
-// Every slice is cut to its length before the inner loop, so that the loop runs
-// without bounds checks.
+// The inner loops run over slices of the same known length or over arrays, so
+// that they need no bounds checks.
 
-// step4 is a step with s >= 4.
-func step4[T Float](yr, yi, xr, xi, tw []T, s int) {
-	m := len(tw) / 6 * s
-	for p := 0; p < len(tw)/6; p++ {
-		w := (*[6]T)(tw[6*p:])
+// step4 is a step with s a multiple of 16. It runs in runs of 16, whose arrays
+// of known length need no bounds checks.
+func step4[T Float](yr, yi, xr, xi []T, tw [][6]T, s int) {
+	m := len(tw) * s
+	ar, br, cr, dr := xr[:m], xr[m:][:m], xr[2*m:][:m], xr[3*m:][:m]
+	ai, bi, ci, di := xi[:m], xi[m:][:m], xi[2*m:][:m], xi[3*m:][:m]
+	for p := range tw {
+		w := &tw[p]
 		w1r, w1i, w2r, w2i, w3r, w3i := w[0], w[1], w[2], w[3], w[4], w[5]
-		o := p * s
-		ar, ai := xr[o:][:s], xi[o:][:s]
-		br, bi := xr[o+m:][:s], xi[o+m:][:s]
-		cr, ci := xr[o+2*m:][:s], xi[o+2*m:][:s]
-		dr, di := xr[o+3*m:][:s], xi[o+3*m:][:s]
-		o *= 4
-		y0r, y0i := yr[o:][:s], yi[o:][:s]
-		y1r, y1i := yr[o+s:][:s], yi[o+s:][:s]
-		y2r, y2i := yr[o+2*s:][:s], yi[o+2*s:][:s]
-		y3r, y3i := yr[o+3*s:][:s], yi[o+3*s:][:s]
-		for q := 0; q < s; q++ {
-			t0r, t1r := ar[q]+cr[q], ar[q]-cr[q]
-			t2r, t3r := br[q]+dr[q], br[q]-dr[q]
-			t0i, t1i := ai[q]+ci[q], ai[q]-ci[q]
-			t2i, t3i := bi[q]+di[q], bi[q]-di[q]
-			y0r[q] = t0r + t2r
-			y0i[q] = t0i + t2i
+		for k := 0; k < s; k += 16 {
+			o := s*p + k
+			a, e := (*[16]T)(ar[o:]), (*[16]T)(ai[o:])
+			b, f := (*[16]T)(br[o:]), (*[16]T)(bi[o:])
+			c, g := (*[16]T)(cr[o:]), (*[16]T)(ci[o:])
+			d, h := (*[16]T)(dr[o:]), (*[16]T)(di[o:])
+			o = 4*s*p + k
+			y0r, y0i := (*[16]T)(yr[o:]), (*[16]T)(yi[o:])
+			y1r, y1i := (*[16]T)(yr[o+s:]), (*[16]T)(yi[o+s:])
+			y2r, y2i := (*[16]T)(yr[o+2*s:]), (*[16]T)(yi[o+2*s:])
+			y3r, y3i := (*[16]T)(yr[o+3*s:]), (*[16]T)(yi[o+3*s:])
+			for q := range 16 {
+				t0r, t1r := a[q]+c[q], a[q]-c[q]
+				t2r, t3r := b[q]+d[q], b[q]-d[q]
+				t0i, t1i := e[q]+g[q], e[q]-g[q]
+				t2i, t3i := f[q]+h[q], f[q]-h[q]
+				y0r[q] = t0r + t2r
+				y0i[q] = t0i + t2i
+				r, i := t1r+t3i, t1i-t3r
+				y1r[q] = r*w1r - i*w1i
+				y1i[q] = r*w1i + i*w1r
+				r, i = t0r-t2r, t0i-t2i
+				y2r[q] = r*w2r - i*w2i
+				y2i[q] = r*w2i + i*w2r
+				r, i = t1r-t3i, t1i+t3r
+				y3r[q] = r*w3r - i*w3i
+				y3i[q] = r*w3i + i*w3r
+			}
+		}
+	}
+}
+
+// second4 is the step with s = 4.
+func second4[T Float](yr, yi, xr, xi []T, tw [][6]T) {
+	m := len(tw) * 4
+	ar, br, cr, dr := xr[:m], xr[m:][:m], xr[2*m:][:m], xr[3*m:][:m]
+	ai, bi, ci, di := xi[:m], xi[m:][:m], xi[2*m:][:m], xi[3*m:][:m]
+	for p := range tw {
+		w := &tw[p]
+		w1r, w1i, w2r, w2i, w3r, w3i := w[0], w[1], w[2], w[3], w[4], w[5]
+		a, e := (*[4]T)(ar[4*p:]), (*[4]T)(ai[4*p:])
+		b, f := (*[4]T)(br[4*p:]), (*[4]T)(bi[4*p:])
+		c, g := (*[4]T)(cr[4*p:]), (*[4]T)(ci[4*p:])
+		d, h := (*[4]T)(dr[4*p:]), (*[4]T)(di[4*p:])
+		re, im := (*[16]T)(yr[16*p:]), (*[16]T)(yi[16*p:])
+		for q := range 4 {
+			t0r, t1r := a[q]+c[q], a[q]-c[q]
+			t2r, t3r := b[q]+d[q], b[q]-d[q]
+			t0i, t1i := e[q]+g[q], e[q]-g[q]
+			t2i, t3i := f[q]+h[q], f[q]-h[q]
+			re[q] = t0r + t2r
+			im[q] = t0i + t2i
 			r, i := t1r+t3i, t1i-t3r
-			y1r[q] = r*w1r - i*w1i
-			y1i[q] = r*w1i + i*w1r
+			re[q+4] = r*w1r - i*w1i
+			im[q+4] = r*w1i + i*w1r
 			r, i = t0r-t2r, t0i-t2i
-			y2r[q] = r*w2r - i*w2i
-			y2i[q] = r*w2i + i*w2r
+			re[q+8] = r*w2r - i*w2i
+			im[q+8] = r*w2i + i*w2r
 			r, i = t1r-t3i, t1i+t3r
-			y3r[q] = r*w3r - i*w3i
-			y3i[q] = r*w3i + i*w3r
+			re[q+12] = r*w3r - i*w3i
+			im[q+12] = r*w3i + i*w3r
 		}
 	}
 }
 
 // first4 is the first step, s = 1.
-func first4[T Float](yr, yi, xr, xi, tw []T) {
-	n := len(tw) / 6
+func first4[T Float](yr, yi, xr, xi []T, tw [][6]T) {
+	n := len(tw)
 	ar, ai := xr[:n], xi[:n]
 	br, bi := xr[n:][:n], xi[n:][:n]
 	cr, ci := xr[2*n:][:n], xi[2*n:][:n]
 	dr, di := xr[3*n:][:n], xi[3*n:][:n]
-	for p := 0; p < n; p++ {
-		w := (*[6]T)(tw[6*p:])
+	for p := range tw {
+		w := &tw[p]
 		re, im := (*[4]T)(yr[4*p:]), (*[4]T)(yi[4*p:])
 		t0r, t1r := ar[p]+cr[p], ar[p]-cr[p]
 		t2r, t3r := br[p]+dr[p], br[p]-dr[p]
@@ -77,11 +115,11 @@ func first4[T Float](yr, yi, xr, xi, tw []T) {
 }
 
 // firstReal4 is first4 for values whose real and imaginary parts alternate.
-func firstReal4[T Float](yr, yi, x, tw []T) {
-	n := len(tw) / 6
+func firstReal4[T Float](yr, yi, x []T, tw [][6]T) {
+	n := len(tw)
 	xa, xb, xc, xd := x[:2*n], x[2*n:][:2*n], x[4*n:][:2*n], x[6*n:][:2*n]
-	for p := 0; p < n; p++ {
-		w := (*[6]T)(tw[6*p:])
+	for p := range tw {
+		w := &tw[p]
 		re, im := (*[4]T)(yr[4*p:]), (*[4]T)(yi[4*p:])
 		a, b, c, d := (*[2]T)(xa[2*p:]), (*[2]T)(xb[2*p:]), (*[2]T)(xc[2*p:]), (*[2]T)(xd[2*p:])
 		t0r, t1r := a[0]+c[0], a[0]-c[0]
@@ -127,6 +165,8 @@ func last4[T Float](yr, yi, xr, xi []T) {
 }
 
 // last2 is the step of radix 2 at the end of sizes that are not a power of 4.
+// One step of radix 8 for it and the step before gains nothing: its sixteen
+// values do not fit into the registers.
 func last2[T Float](yr, yi, xr, xi []T) {
 	s := len(yr) / 2
 	ar, ai := xr[:s], xi[:s]
