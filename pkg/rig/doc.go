@@ -20,6 +20,28 @@
 //
 // # Files
 //
-// Load reads the YAML of a rig file, strictly, and reports every fault at once
-// with line and column.
+// Load reads a rig file in YAML or JSON, strictly, and reports every fault at
+// once with line and column. The microphones stand in a list, in a CSV file
+// that the rig names, or in one of the shorthands line, ring, grid and spiral;
+// Schema gives the JSON Schema with the meaning of every key. YAML writes a rig
+// as a file that Load reads back into an equal one.
+//
+// # Use
+//
+//	r, err := rig.Load("roof.yaml", data, open)
+//	if err != nil {
+//		return err // sheet.Annotated(err) shows the lines
+//	}
+//	if err := r.CheckTake(channels); err != nil {
+//		return err
+//	}
+//	toward := rig.Degrees(60, 0)
+//	heading, known := r.Compass(toward)
+//	shape := rig.Spread(r.Positions())
+//	fmt.Println(r.ReferencePoint(), heading, known, shape.Ambiguity())
+//
+// # Sources
+//
+// Golub, G. H., and Van Loan, C. F., "Matrix Computations", 4th edition, 2013,
+// section 8.5, for the Jacobi rotations of Spread.
 package rig

@@ -242,7 +242,9 @@ func (l *loader) shape(r *Rig, key string, at []Point, first int) {
 	for i, p := range at {
 		r.Mics = append(r.Mics, Mic{Name: "M" + strconv.Itoa(i+1), Channel: first + i, At: p, Use: true})
 	}
-	l.together(r, func(int) place { return place{doc: l.doc, path: key, channelSound: true, atSound: true} })
+	l.together(r, func(int) place {
+		return place{doc: l.doc, path: key, nameSound: true, channelSound: true, atSound: true}
+	})
 }
 
 // list takes the microphones of the list over.
@@ -261,6 +263,7 @@ func (l *loader) list(r *Rig) {
 			mic.Name = "M" + strconv.Itoa(m.Channel)
 		}
 		at := place{doc: l.doc, path: p, channelSound: l.doc.Has(p + ".channel")}
+		at.nameSound = l.doc.Has(p) && l.doc.Given(p+".name") == l.doc.Has(p+".name")
 		at.atSound = l.doc.Has(p + ".at_mm")
 		for k, v := range m.AtMM {
 			entry := fmt.Sprintf("%s.at_mm[%d]", p, k)

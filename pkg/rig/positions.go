@@ -68,7 +68,7 @@ func (l *loader) readPositions(name string) (data []byte, err error) {
 // tableMic returns the microphone of a row, and what of it is sound.
 func tableMic(t *sheet.Table, row int) (Mic, place) {
 	mic := Mic{Use: true}
-	at := place{table: t, row: row, channelSound: true, atSound: true}
+	at := place{table: t, row: row, nameSound: true, channelSound: true, atSound: true}
 	missing := func(column string) {
 		t.Fault(row, column, "an empty cell, want a value")
 	}

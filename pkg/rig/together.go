@@ -15,7 +15,8 @@ type place struct {
 	table *sheet.Table // nil unless it stands in a table
 	row   int          // of table
 
-	channelSound bool // no fault lies on the channel
+	nameSound    bool // no fault lies on the name
+	channelSound bool // nor on the channel
 	atSound      bool // nor on the place
 }
 
@@ -62,15 +63,16 @@ func (l *loader) together(r *Rig, at func(m int) place) {
 		}
 	}
 	l.distances(r, at)
-	used, sound := r.Used(), true
+	used, sound, named := r.Used(), true, true
 	for m := range r.Mics {
 		p := at(m)
+		named = named && p.nameSound
 		sound = sound && p.channelSound && p.atSound // what has faults may have meant anything
 	}
 	if len(used) < 2 && sound {
 		l.doc.Fault("", "%s in use, a beam needs two or more", count(len(used)))
 	}
-	if r.Reference != CentreReference && l.doc.Has("reference") {
+	if r.Reference != CentreReference && l.doc.Has("reference") && named {
 		if _, ok := r.Find(r.Reference); !ok {
 			l.doc.Fault("reference", "no microphone is named %q, want %s or one of %s", r.Reference, CentreReference, someNames(r))
 		}
@@ -90,12 +92,14 @@ func count(n int) string {
 // someNames lists the microphones, a few of them where there are many.
 func someNames(r *Rig) string {
 	var names []string
-	for i, m := range r.Mics {
-		if i == 12 {
+	for _, m := range r.Mics {
+		if len(names) == 12 {
 			names = append(names, "…")
 			break
 		}
-		names = append(names, m.Name)
+		if m.Name != "" {
+			names = append(names, m.Name)
+		}
 	}
 	return strings.Join(names, ", ")
 }
