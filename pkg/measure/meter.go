@@ -32,7 +32,6 @@ type Meter struct {
 
 	pending audio.Block // the window of the undecimated signal
 	fill    int         // frames in pending
-	windows int         // windows of the undecimated signal so far
 	totals  []total
 	low     []decimator
 	lowAt   int // samples of the decimated signal so far

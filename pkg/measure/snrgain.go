@@ -114,7 +114,7 @@ func (d *bandData) gain(band Band) BandGain {
 			g.target(d, refS, outS)
 			break
 		}
-		if refS <= a.spread(1, 0).plus(n.spread(1, 0)).half() || outS <= a.spread(0, 1).plus(n.spread(0, 1)).half() {
+		if refS <= d.spread(1, 0, -1, 0).half() || outS <= d.spread(0, 1, 0, -1).half() {
 			g.TargetReason = NotAboveNoise
 			break
 		}
@@ -139,12 +139,10 @@ func (g *BandGain) target(d *bandData, refS, outS float64) {
 		g.SNRGainCI = &ci
 		return
 	}
-	sa := a.spread(-1/refS, 1/outS)
-	g.TargetBlockS = float64(sa.block) * a.hopS
-	tc := sa.plus(n.spread(1/refS, -1/outS))
-	g.TargetChangeCI = interval(math.Log(outS/refS), tc)
-	sg := sa.plus(n.spread(1/refS+1/n.refMean, -1/outS-1/n.outMean))
-	g.SNRGainCI = interval(math.Log(outS/refS*n.refMean/n.outMean), sg)
+	g.TargetBlockS = float64(a.spread(-1/refS, 1/outS).block) * a.hopS
+	g.TargetChangeCI = d.selected(math.Log(outS/refS), -1/refS, 1/outS, 1/refS, -1/outS)
+	g.SNRGainCI = d.selected(math.Log(outS/refS*n.refMean/n.outMean),
+		-1/refS, 1/outS, 1/refS+1/n.refMean, -1/outS-1/n.outMean)
 	if !g.Sparse() && (g.TargetSamples < SparseSamples || a.seconds < SparseSeconds || a.seconds < SparseBlocks*g.TargetBlockS) {
 		g.Flags = append(g.Flags, Sparse)
 	}
@@ -155,4 +153,37 @@ func (g *BandGain) target(d *bandData, refS, outS float64) {
 func interval(centre float64, s spread) *[2]float64 {
 	h := s.half()
 	return &[2]float64{dbPerNeper * (centre - h), dbPerNeper * (centre + h)}
+}
+
+// spread is the spread of a·ref + b·out over the target entries plus c·ref +
+// e·out over the noise entries, the means of both.
+func (d *bandData) spread(a, b, c, e float64) spread {
+	return d.target.spread(a, b).plus(d.noise.spread(c, e))
+}
+
+// selected is the interval about centre of an estimate with the influences a
+// and b of reference and output in the target entries, c and e in the noise
+// entries. It reaches further on the side to which the choice of bands with
+// significant power has drawn the estimate: by the overshoot of that power,
+// times its correlation with the estimate.
+func (d *bandData) selected(centre, a, b, c, e float64) *[2]float64 {
+	s := d.spread(a, b, c, e)
+	ci := interval(centre, s)
+	ref, out := d.powers()
+	for _, gate := range []struct{ ref, out float64 }{{1 / ref, 0}, {0, 1 / out}} {
+		t := d.spread(gate.ref, gate.out, -gate.ref, -gate.out)
+		if !(t.variance > 0) || !(s.variance > 0) {
+			continue
+		}
+		both := d.spread(a+gate.ref, b+gate.out, c-gate.ref, e-gate.out)
+		rho := (both.variance - s.variance - t.variance) / (2 * math.Sqrt(s.variance*t.variance))
+		rho = math.Max(-1, math.Min(1, rho))
+		far := dbPerNeper * math.Abs(rho) * overshoot(1/math.Sqrt(t.variance), studentT(t.dof)) * math.Sqrt(s.variance)
+		if rho > 0 {
+			ci[0] -= far
+		} else {
+			ci[1] += far
+		}
+	}
+	return ci
 }
