@@ -2,6 +2,7 @@ package response
 
 import (
 	"math"
+	"sort"
 
 	"alidade/pkg/beam"
 	"alidade/pkg/rig"
@@ -36,6 +37,53 @@ func GratingLimit(mics []rig.Point, toward rig.Direction, speed, maxHz float64) 
 		return 0, false
 	}
 	return searchGrating(mics, toward.Unit(), speed, maxHz)
+}
+
+// gratingAngles returns the grating lobes of a line of equal spacings steered
+// to the angle at from its axis, ascending: cos θ = cos θ0 - mλ/d for whole
+// m ≠ 0 [Van Trees 2002, section 2.4].
+func gratingAngles(spacing, at, hz, speed float64) []float64 {
+	var angles []float64
+	period, c := speed/(hz*spacing), math.Cos(at)
+	for m := math.Ceil((c - 1) / period); m <= math.Floor((c+1)/period); m++ {
+		if m != 0 {
+			angles = append(angles, math.Acos(math.Max(-1, math.Min(1, c-m*period))))
+		}
+	}
+	sort.Float64s(angles)
+	return angles
+}
+
+// GratingEntry is a grating lobe of a line of equal spacings coming in.
+type GratingEntry struct {
+	Order int     // m of cos θ = cos θ0 - mλ/d
+	Hz    float64 // from which on the lobe's peak is in the visible region
+	Angle float64 // from the axis, radians, where it comes in: 0 or π
+}
+
+// GratingEntries returns the grating lobes of a line of equal spacings that
+// come in up to maxHz, by frequency; ok is false for other rigs, which have no
+// exact ones.
+func GratingEntries(mics []rig.Point, toward rig.Direction, speed, maxHz float64) (entries []GratingEntry, ok bool) {
+	axis, spacing, ok := beam.UniformLine(mics)
+	if !ok {
+		return nil, false
+	}
+	c := axis.Dot(toward.Unit())
+	for m := 1; ; m++ {
+		up, down := float64(m)*speed/(spacing*(1+c)), float64(m)*speed/(spacing*(1-c))
+		if !(up <= maxHz) && !(down <= maxHz) {
+			break
+		}
+		if up <= maxHz {
+			entries = append(entries, GratingEntry{m, up, math.Pi})
+		}
+		if down <= maxHz {
+			entries = append(entries, GratingEntry{-m, down, 0})
+		}
+	}
+	sort.SliceStable(entries, func(i, j int) bool { return entries[i].Hz < entries[j].Hz })
+	return entries, true
 }
 
 // searchGrating follows, for every direction u, the response of delay-and-sum
