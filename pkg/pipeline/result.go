@@ -50,6 +50,8 @@ type Result struct {
 	Output       Output      `json:"output"`
 	OtherOutputs []Output    `json:"other_outputs,omitempty"` // the reference track
 	Provenance   *Provenance `json:"provenance,omitempty"`
+	Pictures     *Pictures   `json:"pictures,omitempty"`
+	Preview      *Preview    `json:"preview,omitempty"` // only when asked for
 }
 
 // Provenance is what is needed to make the result again.
