@@ -177,12 +177,14 @@ func parseFmt(h *Header, c Chunk, b []byte, warn func(code string, at int64, for
 	case readable(byBits):
 		warn(WarnBlockAlign, c.Offset, "fmt chunk: block align %d does not fit %d channels of %d bits: %d bytes a sample are taken", align, channels, bits, byBits)
 		width = byBits
+	default:
+		width = byBits // and is refused below
 	}
 	if tag == tagFloat && (bits != 32 && bits != 64) {
 		return unsupported("float of %d bits: 32 and 64 are read", bits)
 	}
 	if !readable(width) {
-		return unsupported("PCM of %d bits in %d bytes a sample: up to 32 bits are read", bits, max(width, byBits))
+		return unsupported("PCM of %d bits in %d bytes a sample: up to 32 bits are read", bits, width)
 	}
 	if valid > width*8 {
 		warn(WarnValidBits, c.Offset, "fmt chunk: %d valid bits in a container of %d: %d are taken", valid, width*8, width*8)
