@@ -15,4 +15,7 @@
 // speed of sound in air with temperature, pressure, humidity, and CO2
 // concentration, J. Acoust. Soc. Am. 93 (1993), p. 2510; the same coefficients
 // stand in IEC 61094-2:2009, annex F.
+//
+// [Eyring 1930] C. F. Eyring, Reverberation time in "dead" rooms, J. Acoust.
+// Soc. Am. 1 (1930), p. 217.
 package acoustics

@@ -8,6 +8,7 @@ import (
 	"math"
 
 	"alidade/pkg/rig"
+	"alidade/pkg/scenario/internal/render"
 	"alidade/pkg/sheet"
 )
 
@@ -370,8 +371,8 @@ func (f *Fault) check(path string, channels, rate int, fault func(string, string
 // check checks a room; whether everything stands inside it is seen later.
 func (r *Room) check(fault func(string, string, ...any)) {
 	list := func(path string, v []float64, low, high float64) {
-		if len(v) != 1 && len(v) != len(octavesHz) {
-			fault(path, "%d values, want 1 or %d", len(v), len(octavesHz))
+		if len(v) != 1 && len(v) != len(render.OctavesHz) {
+			fault(path, "%d values, want 1 or %d", len(v), len(render.OctavesHz))
 			return
 		}
 		for i, x := range v {

@@ -6,11 +6,12 @@ import (
 
 	"alidade/pkg/acoustics"
 	"alidade/pkg/rig"
+	"alidade/pkg/scenario/internal/render"
 )
 
 // leadFrames is how many frames before the take the sound field begins, so
 // that late and drifting channels hear it too.
-const leadFrames = 2 * hopFrames
+const leadFrames = 2 * render.HopFrames
 
 // plan is a scenario made ready to render.
 type plan struct {
@@ -20,17 +21,17 @@ type plan struct {
 	ref    rig.Point
 	air    acoustics.Air
 	speed  float64
-	room   *chamber // nil outdoors
+	room   *render.Chamber // nil outdoors
 
-	tracks     []*track
-	banks      []*filterBank // of sources that stand still, else nil
-	direct     []*filterBank // their direct sound alone
-	gains      []float64     // amplitude of each source
-	levels     []float64     // level of each source, dBFS
-	recordings [][]float64   // of sources of kind file
-	diffuse    []*diffuseField
-	kernel     *table // for whatever moves or drifts
-	channels   []channel
+	tracks     []*render.Track
+	banks      []*render.Bank // of sources that stand still, else nil
+	direct     []*render.Bank // their direct sound alone
+	gains      []float64      // amplitude of each source
+	levels     []float64      // level of each source, dBFS
+	recordings [][]float64    // of sources of kind file
+	diffuse    []*render.Diffuse
+	kernel     *render.Table // for whatever moves or drifts
+	channels   []render.Strip
 	lead       int64
 }
 
@@ -46,7 +47,7 @@ func newPlan(sc *Scenario, opt Options) (*plan, error) {
 		}
 		p.room = room
 		for m, at := range p.mics {
-			if !room.holds(at) {
+			if !room.Holds(at) {
 				return nil, fmt.Errorf("scenario: room: microphone %q at %s lies outside the room", sc.Rig.Mics[m].Name, placeText(at))
 			}
 		}
@@ -65,14 +66,14 @@ func newPlan(sc *Scenario, opt Options) (*plan, error) {
 		return nil, err
 	}
 	p.wire()
-	p.kernel = newTable(kernelTaps, 2048, kernelBeta)
+	p.kernel = render.DirectTable()
 	return p, p.findClipping()
 }
 
 // place puts the microphones where they really are.
 func (p *plan) place() {
 	scale := or(p.sc.PositionScale, 1)
-	rng := stream(p.sc.Seed, "places", 0)
+	rng := render.Stream(p.sc.Seed, "places", 0)
 	for _, m := range p.sc.Rig.Mics {
 		at := m.At.Scale(scale)
 		if s := p.sc.MisplacedMM / 1000; s > 0 {
@@ -104,34 +105,34 @@ func (f *Fault) names(ch int) bool {
 func (p *plan) addSource(s *Source, opt Options) error {
 	tr := newTrack(s, p.ref, p.speed)
 	extent := rig.Spread(append([]rig.Point{p.ref}, p.mics...)).Extent
-	if v := tr.fastest(extent); v > 0.3*p.speed {
+	if v := tr.Fastest(extent); v > 0.3*p.speed {
 		return fmt.Errorf("moves at %.4g m/s, more than 0.3 of the speed of sound", v)
 	}
 	const nearest = 0.01 // metres
-	if !tr.far {
-		for i, t := range tr.times {
+	if !tr.Far {
+		for i, t := range tr.Times {
 			for m, at := range p.mics {
-				if d := tr.point(t).Distance(at); d < nearest {
+				if d := tr.Point(t).Distance(at); d < nearest {
 					return fmt.Errorf("place %d is %.3g mm from microphone %q, nearer than 10 mm", i+1, d*1000, p.sc.Rig.Mics[m].Name)
 				}
 			}
-			if p.room != nil && !p.room.holds(tr.point(t)) {
-				return fmt.Errorf("place %d at %s lies outside the room", i+1, placeText(tr.point(t)))
+			if p.room != nil && !p.room.Holds(tr.Point(t)) {
+				return fmt.Errorf("place %d at %s lies outside the room", i+1, placeText(tr.Point(t)))
 			}
 		}
-		if tr.origin < nearest {
-			return fmt.Errorf("at time 0 it is %.3g mm from the reference point, nearer than 10 mm", tr.origin*1000)
+		if tr.Origin < nearest {
+			return fmt.Errorf("at time 0 it is %.3g mm from the reference point, nearer than 10 mm", tr.Origin*1000)
 		}
 	} else if p.room != nil {
 		return fmt.Errorf("a far source cannot be in a room: give it distance_m or point_m")
 	}
 	p.tracks = append(p.tracks, tr)
-	var bank, direct *filterBank
-	if !tr.moves() {
-		direct = directBank(tr, p.mics, p.sc.RateHz)
+	var bank, direct *render.Bank
+	if !tr.Moves() {
+		direct = render.DirectBank(tr, p.mics, p.sc.RateHz)
 		bank = direct
 		if p.room != nil {
-			bank = sum(direct, p.room.responses(tr.point(0), p.mics, tr.origin))
+			bank = render.Sum(direct, p.room.Responses(tr.Point(0), p.mics, tr.Origin))
 		}
 	}
 	p.banks, p.direct = append(p.banks, bank), append(p.direct, direct)
@@ -152,8 +153,8 @@ func (p *plan) addSource(s *Source, opt Options) error {
 				return fmt.Errorf("file %q: frame %d is %g", s.File, i, v)
 			}
 		}
-		most := int(math.Ceil(p.sc.DurationS*float64(rate))) + kernelTaps
-		recording = resample(x[:min(len(x), most)], rate, p.sc.RateHz)
+		most := int(math.Ceil(p.sc.DurationS*float64(rate))) + render.KernelTaps
+		recording = render.Resample(x[:min(len(x), most)], rate, p.sc.RateHz)
 	}
 	p.recordings = append(p.recordings, recording)
 	return nil
@@ -174,14 +175,14 @@ func (p *plan) addDiffuse(i int, d Diffuse) error {
 	if values := count * inputs * length; values > maxFilterValues {
 		return fmt.Errorf("%d microphones and %d noises need %d filter values, more than %d", count, inputs, values, maxFilterValues)
 	}
-	f := &diffuseField{shape: shape(d.Spectrum, p.sc.RateHz)}
+	f := &render.Diffuse{Shape: render.Shape(d.Spectrum, p.sc.RateHz)}
 	if d.Method == MethodWaves {
-		f.bank = waveBank(d.Field, p.mics, p.ref, inputs, p.sc.RateHz, p.speed, stream(p.sc.Seed, "waves", i))
+		f.Bank = render.WaveBank(d.Field, p.mics, p.ref, inputs, p.sc.RateHz, p.speed, render.Stream(p.sc.Seed, "waves", i))
 	} else {
-		f.bank = mixingBank(d.Field, p.mics, p.sc.RateHz, p.speed)
+		f.Bank = render.MixingBank(d.Field, p.mics, p.sc.RateHz, p.speed)
 	}
-	g := math.Sqrt(powerOfDBFS(d.LevelDBFS))
-	for _, row := range f.bank.taps {
+	g := math.Sqrt(render.PowerOfDBFS(d.LevelDBFS))
+	for _, row := range f.Bank.Taps {
 		for _, h := range row {
 			for t := range h {
 				h[t] *= g
@@ -196,14 +197,14 @@ func (p *plan) addDiffuse(i int, d Diffuse) error {
 func (p *plan) setLevels() error {
 	var noise float64
 	for _, d := range p.sc.Diffuse {
-		noise += powerOfDBFS(d.LevelDBFS)
+		noise += render.PowerOfDBFS(d.LevelDBFS)
 	}
 	if p.sc.SensorDBFS != nil {
-		noise += powerOfDBFS(*p.sc.SensorDBFS)
+		noise += render.PowerOfDBFS(*p.sc.SensorDBFS)
 	}
 	for i := range p.sc.Sources {
 		if s := &p.sc.Sources[i]; s.role() == RoleInterferer {
-			noise += powerOfDBFS(*s.LevelDBFS)
+			noise += render.PowerOfDBFS(*s.LevelDBFS)
 		}
 	}
 	for i := range p.sc.Sources {
@@ -215,7 +216,7 @@ func (p *plan) setLevels() error {
 			if noise == 0 {
 				return fmt.Errorf("scenario: source %q: snr_db without any noise: state level_dbfs", s.Name)
 			}
-			level = dbfsOfPower(noise) + *s.SNRDB
+			level = render.DBFSOfPower(noise) + *s.SNRDB
 		}
 		p.levels = append(p.levels, level)
 	}
@@ -228,7 +229,7 @@ func (p *plan) setLevels() error {
 // over the time it is on.
 func (p *plan) calibrate(seed uint64, frames int64) ([]float64, error) {
 	var gains []float64
-	buffer := make([]float64, hopFrames)
+	buffer := make([]float64, render.HopFrames)
 	for i := range p.sc.Sources {
 		s := &p.sc.Sources[i]
 		sig, calibrated, err := p.signal(i, seed, 0)
@@ -238,9 +239,9 @@ func (p *plan) calibrate(seed uint64, frames int64) ([]float64, error) {
 		power := 1.0
 		if !calibrated {
 			var energy float64
-			for at := int64(0); at < frames; at += hopFrames {
-				part := buffer[:min(hopFrames, frames-at)]
-				sig.next(part)
+			for at := int64(0); at < frames; at += render.HopFrames {
+				part := buffer[:min(render.HopFrames, frames-at)]
+				sig.Next(part)
 				for _, v := range part {
 					energy += v * v
 				}
@@ -250,7 +251,7 @@ func (p *plan) calibrate(seed uint64, frames int64) ([]float64, error) {
 				return nil, fmt.Errorf("scenario: source %q: it is silent while it is on", s.Name)
 			}
 		}
-		gains = append(gains, math.Sqrt(powerOfDBFS(p.levels[i])/power))
+		gains = append(gains, math.Sqrt(render.PowerOfDBFS(p.levels[i])/power))
 	}
 	return gains, nil
 }
@@ -278,36 +279,49 @@ const (
 )
 
 // emitters returns what makes up a part of the sound field from frame first on.
-func (p *plan) emitters(what part, seed uint64, gains []float64, first int64) []emitter {
-	var all []emitter
+func (p *plan) emitters(what part, seed uint64, gains []float64, first int64) []render.Emitter {
+	var all []render.Emitter
 	for i := range p.sc.Sources {
 		s := &p.sc.Sources[i]
 		if (s.role() == RoleInterferer) != (what == partNoise) {
 			continue
 		}
-		dry := func(from int64) mono {
-			sig, _, err := p.signal(i, seed, from)
+		tr, bank := p.tracks[i], p.banks[i]
+		moverLead, walkLead := int64(0), int64(0)
+		var longest int64
+		if bank != nil {
+			longest = bank.Lead()
+		} else {
+			moverLead = render.MoverLead(tr, p.mics, first, p.sc.RateHz)
+			if p.room != nil {
+				walkLead = render.WalkLead(p.room, tr)
+			}
+			longest = max(moverLead, walkLead)
+		}
+		// All that sounds from a source begins at one frame, whatever part of it is
+		// wanted, so that its random signal is the same.
+		dry := func(lead int64) render.Mono {
+			sig, _, err := p.signal(i, seed, first-longest)
 			if err != nil {
 				panic("scenario: " + err.Error()) // newPlan has been through every kind
 			}
-			return &scaled{sig, gains[i]}
+			return render.Skip(&render.Scaled{In: sig, Gain: gains[i]}, longest-lead)
 		}
-		if tr := p.tracks[i]; tr.moves() {
-			all = append(all, newMover(tr, p.mics, p.sc.RateHz, first, dry(first-moverLead(tr, p.mics, first, p.sc.RateHz)), p.kernel))
+		if bank == nil {
+			all = append(all, render.NewMover(tr, p.mics, p.sc.RateHz, first, dry(moverLead), p.kernel))
 			if p.room != nil && what != partDirect {
-				all = append(all, newWalker(p.room, tr, p.mics, first, dry(first-walkLead(p.room, tr))))
+				all = append(all, render.NewWalker(p.room, tr, p.mics, first, dry(walkLead)))
 			}
 			continue
 		}
-		bank := p.banks[i]
 		if what == partDirect {
 			bank = p.direct[i]
 		}
-		all = append(all, newMixer(bank, []mono{dry(first - bank.lead())}))
+		all = append(all, render.NewMixer(bank, []render.Mono{dry(bank.Lead())}))
 	}
 	if what == partNoise {
 		for i, d := range p.diffuse {
-			all = append(all, d.emitter(seed, i))
+			all = append(all, d.Emitter(seed, i))
 		}
 	}
 	return all

@@ -8,6 +8,7 @@ import (
 
 	"alidade/pkg/audio"
 	"alidade/pkg/rig"
+	"alidade/pkg/scenario/internal/render"
 )
 
 // Options is what rendering needs from outside the scenario.
@@ -100,10 +101,10 @@ func (r *Rendering) Each(fn func(mix, target, noise audio.Block) error) error {
 	fields := [][]*field{{desk.fields[0], desk.fields[1]}, {desk.fields[0]}, {desk.fields[1]}}
 	blocks := make([]audio.Block, 3)
 	for b := range blocks {
-		blocks[b] = audio.NewBlock(len(p.channels), hopFrames)
+		blocks[b] = audio.NewBlock(len(p.channels), render.HopFrames)
 	}
-	for at := int64(0); at < p.frames; at += hopFrames {
-		n := int(min(hopFrames, p.frames-at))
+	for at := int64(0); at < p.frames; at += render.HopFrames {
+		n := int(min(render.HopFrames, p.frames-at))
 		desk.advance(at, n)
 		for b, board := range boards {
 			board.run(blocks[b].Slice(0, n), at, fields[b])
@@ -117,7 +118,7 @@ func (r *Rendering) Each(fn func(mix, target, noise audio.Block) error) error {
 
 // field is a stretch of sound at the microphones.
 type field struct {
-	emitters []emitter
+	emitters []render.Emitter
 	base     int64       // frame of rows[m][0]
 	rows     [][]float64 // rows[m]
 	hop      [][]float64
@@ -137,7 +138,7 @@ func (f *field) hold(from, to int64) {
 			clear(f.hop[m])
 		}
 		for _, e := range f.emitters {
-			e.add(f.hop)
+			e.Add(f.hop)
 		}
 		for m := range f.rows {
 			f.rows[m] = append(f.rows[m], f.hop[m]...)
@@ -156,8 +157,8 @@ func (p *plan) newDesk(seed uint64, gains []float64, parts ...part) *desk {
 	for _, what := range parts {
 		f := &field{emitters: p.emitters(what, seed, gains, -p.lead), base: -p.lead}
 		for range p.mics {
-			f.rows = append(f.rows, make([]float64, 0, 4*hopFrames))
-			f.hop = append(f.hop, make([]float64, hopFrames))
+			f.rows = append(f.rows, make([]float64, 0, 4*render.HopFrames))
+			f.hop = append(f.hop, make([]float64, render.HopFrames))
 		}
 		d.fields = append(d.fields, f)
 	}
@@ -169,12 +170,12 @@ func (d *desk) advance(at int64, n int) {
 	from, to := at, at+int64(n)
 	for ch := range d.plan.channels {
 		c := &d.plan.channels[ch]
-		if !c.shifts() {
+		if !c.Shifts() {
 			continue
 		}
 		rate := float64(d.plan.sc.RateHz)
-		from = min(from, int64(math.Floor(c.position(at, rate)))-kernelTaps/2+1)
-		to = max(to, int64(math.Floor(c.position(at+int64(n)-1, rate)))+kernelTaps/2+1)
+		from = min(from, int64(math.Floor(c.Position(at, rate)))-render.KernelTaps/2+1)
+		to = max(to, int64(math.Floor(c.Position(at+int64(n)-1, rate)))+render.KernelTaps/2+1)
 	}
 	for _, f := range d.fields {
 		f.hold(from, to)
@@ -184,14 +185,14 @@ func (d *desk) advance(at int64, n int) {
 // board is all channels at work.
 type board struct {
 	plan  *plan
-	lines []*line
+	lines []*render.Line
 	x     []float64
 }
 
 func (p *plan) newBoard(seed uint64, additions bool) *board {
-	b := &board{plan: p, x: make([]float64, hopFrames)}
+	b := &board{plan: p, x: make([]float64, render.HopFrames)}
 	for ch := range p.channels {
-		b.lines = append(b.lines, p.newLine(ch, seed, additions))
+		b.lines = append(b.lines, render.NewLine(&p.channels[ch], p.sc.RateHz, seed, ch, additions))
 	}
 	return b
 }
@@ -204,23 +205,23 @@ func (b *board) run(dst audio.Block, at int64, fields []*field) {
 		x := b.x[:n]
 		clear(x)
 		for _, f := range fields {
-			if l.mic < 0 {
+			if l.Mic < 0 {
 				continue
 			}
-			row := f.rows[l.mic]
-			if !l.shifts() {
+			row := f.rows[l.Mic]
+			if !l.Shifts() {
 				for i, v := range row[at-f.base:][:n] {
 					x[i] += v
 				}
 				continue
 			}
 			for i := range x {
-				pos := l.position(at+int64(i), rate)
+				pos := l.Position(at+int64(i), rate)
 				whole := math.Floor(pos)
-				x[i] += b.plan.kernel.at(row[int64(whole)-kernelTaps/2+1-f.base:], pos-whole)
+				x[i] += b.plan.kernel.At(row[int64(whole)-render.KernelTaps/2+1-f.base:], pos-whole)
 			}
 		}
-		l.run(dst.Channel(ch), x)
+		l.Run(dst.Channel(ch), x)
 	}
 }
 
@@ -238,7 +239,7 @@ type take struct {
 func (p *plan) open(seed uint64, gains []float64, frames int64, parts ...part) *take {
 	additions := slices.Contains(parts, partNoise)
 	return &take{desk: p.newDesk(seed, gains, parts...), board: p.newBoard(seed, additions), frames: frames,
-		out: audio.NewBlock(len(p.channels), hopFrames)}
+		out: audio.NewBlock(len(p.channels), render.HopFrames)}
 }
 
 // Format implements audio.Source.
@@ -258,7 +259,7 @@ func (t *take) Read(dst audio.Block) (int, error) {
 				}
 				return n, nil
 			}
-			t.from, t.to = 0, int(min(hopFrames, t.frames-t.at))
+			t.from, t.to = 0, int(min(render.HopFrames, t.frames-t.at))
 			t.desk.advance(t.at, t.to)
 			t.board.run(t.out.Slice(0, t.to), t.at, t.desk.fields)
 			t.at += int64(t.to)
@@ -278,7 +279,7 @@ const maxSortedFrames = 1 << 26
 func (p *plan) findClipping() error {
 	var which []int
 	for ch := range p.channels {
-		if p.channels[ch].share > 0 {
+		if p.channels[ch].Share > 0 {
 			which = append(which, ch)
 		}
 	}
@@ -299,9 +300,9 @@ func (p *plan) findClipping() error {
 		}
 		slices.Sort(x)
 		c := &p.channels[ch]
-		cut := int(math.Round(c.share * float64(len(x))))
+		cut := int(math.Round(c.Share * float64(len(x))))
 		if cut > 0 && cut < len(x) {
-			c.clipAt = math.Min(c.clipAt, float64(x[len(x)-1-cut]))
+			c.ClipAt = math.Min(c.ClipAt, float64(x[len(x)-1-cut]))
 		}
 	}
 	return nil

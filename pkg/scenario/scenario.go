@@ -3,6 +3,7 @@ package scenario
 import (
 	"alidade/pkg/acoustics"
 	"alidade/pkg/rig"
+	"alidade/pkg/scenario/internal/render"
 )
 
 // Limits of a scenario. They keep a mistyped file from filling the machine.
@@ -105,16 +106,16 @@ type Waypoint struct {
 
 // Spectra of noise.
 const (
-	SpectrumWhite    = "white"
-	SpectrumPink     = "pink"     // power density falls by 3 dB an octave above 20 Hz
-	SpectrumOutdoors = "outdoors" // wind and distant traffic: 5 dB an octave above 40 Hz, over a faint white floor
-	SpectrumSpeech   = "speech"   // long-term spectrum of speech
+	SpectrumWhite    = render.SpectrumWhite
+	SpectrumPink     = render.SpectrumPink     // power density falls by 3 dB an octave above 20 Hz
+	SpectrumOutdoors = render.SpectrumOutdoors // wind and distant traffic: 5 dB an octave above 40 Hz, over a faint white floor
+	SpectrumSpeech   = render.SpectrumSpeech   // long-term spectrum of speech
 )
 
 // Fields of diffuse noise.
 const (
-	FieldSpherical   = "spherical"   // from all sides alike: coherence sin(kd)/(kd)
-	FieldCylindrical = "cylindrical" // from all sides of the horizontal plane: coherence J0(kd)
+	FieldSpherical   = render.FieldSpherical   // from all sides alike: coherence sin(kd)/(kd)
+	FieldCylindrical = render.FieldCylindrical // from all sides of the horizontal plane: coherence J0(kd)
 )
 
 // Methods of rendering diffuse noise.

@@ -6,6 +6,7 @@ import (
 
 	"alidade/pkg/audio"
 	"alidade/pkg/rig"
+	"alidade/pkg/scenario/internal/render"
 )
 
 // Truth is what is known about a rendered take. Angles are degrees, times
@@ -93,10 +94,10 @@ func (p *plan) truth() *Truth {
 	}
 	for ch := range p.channels {
 		c := &p.channels[ch]
-		tc := TruthChannel{Channel: ch + 1, GainDB: audio.AmplitudeDB(c.factor), DelayUS: c.delay * 1e6, Inverted: c.factor < 0,
-			ClockPPM: c.clockPPM, Dead: c.dead, DC: c.dc}
-		if c.mic >= 0 {
-			tc.Microphone = p.sc.Rig.Mics[c.mic].Name
+		tc := TruthChannel{Channel: ch + 1, GainDB: audio.AmplitudeDB(c.Factor), DelayUS: c.Delay * 1e6, Inverted: c.Factor < 0,
+			ClockPPM: c.ClockPPM, Dead: c.Dead, DC: c.DC}
+		if c.Mic >= 0 {
+			tc.Microphone = p.sc.Rig.Mics[c.Mic].Name
 		}
 		t.ChannelTruth = append(t.ChannelTruth, tc)
 	}
@@ -108,7 +109,7 @@ func (p *plan) truthSource(i int) TruthSource {
 	out := TruthSource{Name: s.Name, Role: s.role(), Kind: s.Kind, LevelDBFS: p.levels[i]}
 	end := float64(p.frames) / float64(p.sc.RateHz)
 	heard := func(t0 float64) float64 { // when sound of the source's time t0 passes the reference point
-		delay, _ := tr.reach(t0, p.ref)
+		delay, _ := tr.Reach(t0, p.ref)
 		return t0 + delay
 	}
 	on := s.OnS
@@ -119,21 +120,21 @@ func (p *plan) truthSource(i int) TruthSource {
 		out.OnS = append(out.OnS, [2]float64{math.Max(0, heard(span[0])), math.Min(end, heard(span[1]))})
 	}
 	point := func(t, t0 float64) TruthPoint {
-		w := tr.wave(t0)
+		w := tr.Wave(t0)
 		d := w.Direction(p.ref)
 		tp := TruthPoint{TimeS: t, AzimuthDeg: d.AzimuthDeg(), ElevationDeg: d.ElevationDeg()}
-		if !tr.far {
-			r := tr.point(t0).Distance(p.ref)
+		if !tr.Far {
+			r := tr.Point(t0).Distance(p.ref)
 			tp.DistanceM = &r
 		}
 		return tp
 	}
-	if !tr.moves() {
+	if !tr.Moves() {
 		out.Track = []TruthPoint{point(0, 0)}
 	} else {
 		for k := 0; ; k++ {
 			t := math.Min(float64(k)*trackStep, end)
-			t0, _ := tr.emission(t, t, p.ref)
+			t0, _ := tr.Emission(t, t, p.ref)
 			out.Track = append(out.Track, point(t, t0))
 			if t >= end {
 				break
@@ -144,11 +145,11 @@ func (p *plan) truthSource(i int) TruthSource {
 		var direct, rest float64
 		for m := range p.mics {
 			d, all := p.direct[i], p.banks[i]
-			at := d.start - all.start
-			for t, v := range all.taps[m][0] {
+			at := d.Start - all.Start
+			for t, v := range all.Taps[m][0] {
 				k := t - at
-				if k >= 0 && k < d.length() {
-					x := d.taps[m][0][k]
+				if k >= 0 && k < d.Length() {
+					x := d.Taps[m][0][k]
 					direct += x * x
 					v -= x
 				}
@@ -210,7 +211,7 @@ func (m *Meter) Add(mix, target, noise audio.Block) {
 				m.noise[ch] += n * n
 			}
 			m.noiseAlone[ch] += n * n
-			if at := m.r.plan.channels[ch].clipAt; !math.IsInf(at, 1) && math.Abs(float64(mix.Channel(ch)[i])) >= float64(float32(at)) {
+			if at := m.r.plan.channels[ch].ClipAt; !math.IsInf(at, 1) && math.Abs(float64(mix.Channel(ch)[i])) >= float64(float32(at)) {
 				m.clippedAtLeast[ch]++
 			}
 		}
@@ -227,7 +228,7 @@ func (m *Meter) Truth() *Truth {
 			if frames == 0 || energy == 0 {
 				return nil
 			}
-			v := dbfsOfPower(energy / float64(frames))
+			v := render.DBFSOfPower(energy / float64(frames))
 			return &v
 		}
 		c.TargetDBFS = level(m.target[ch], m.frames)
@@ -256,7 +257,7 @@ func (p *plan) covarianceWhy() string {
 		case s.role() != RoleInterferer:
 		case s.Kind != KindNoise:
 			return fmt.Sprintf("interferer %q is a %s, not stationary noise", s.Name, s.Kind)
-		case p.tracks[i].moves():
+		case p.tracks[i].Moves():
 			return fmt.Sprintf("interferer %q moves", s.Name)
 		case s.OnS != nil:
 			return fmt.Sprintf("interferer %q is not on all the time", s.Name)
@@ -265,15 +266,15 @@ func (p *plan) covarianceWhy() string {
 	for ch := range p.channels {
 		c := &p.channels[ch]
 		switch {
-		case c.clockPPM != 0:
+		case c.ClockPPM != 0:
 			return fmt.Sprintf("the clock of channel %d drifts", ch+1)
-		case c.dead:
+		case c.Dead:
 			return fmt.Sprintf("channel %d is dead", ch+1)
-		case !math.IsInf(c.clipAt, 1):
+		case !math.IsInf(c.ClipAt, 1):
 			return fmt.Sprintf("channel %d clips", ch+1)
-		case c.dc != 0 || c.hum != nil || c.wind != 0 || c.thumps != nil:
+		case c.DC != 0 || c.Hum != nil || c.Wind != 0 || c.Thumps != nil:
 			return fmt.Sprintf("channel %d adds sound of its own", ch+1)
-		case c.silent != nil || c.repeated != nil:
+		case c.Silent != nil || c.Repeated != nil:
 			return fmt.Sprintf("channel %d drops out or repeats itself", ch+1)
 		}
 	}
@@ -297,7 +298,7 @@ func (r *Rendering) NoiseCovariance(dst []complex128, hz float64) ([]complex128,
 	count := len(p.mics)
 	at := make([]complex128, count*count)
 	for _, d := range p.diffuse {
-		d.covariance(at, omega)
+		d.Covariance(at, omega)
 	}
 	h := make([]complex128, count)
 	for i := range p.sc.Sources {
@@ -306,26 +307,26 @@ func (r *Rendering) NoiseCovariance(dst []complex128, hz float64) ([]complex128,
 			continue
 		}
 		power := p.gains[i] * p.gains[i]
-		if taps := shape(s.Spectrum, p.sc.RateHz); taps != nil {
-			v := tapResponse(taps, 0, omega)
+		if taps := render.Shape(s.Spectrum, p.sc.RateHz); taps != nil {
+			v := render.TapResponse(taps, 0, omega)
 			power *= real(v)*real(v) + imag(v)*imag(v)
 		}
 		for m := range count {
-			h[m] = p.banks[i].response(m, 0, omega)
+			h[m] = p.banks[i].Response(m, 0, omega)
 		}
-		addOuter(at, h, power)
+		render.AddOuter(at, h, power)
 	}
 	channels := len(p.channels)
 	dst = append(dst[:0], make([]complex128, channels*channels)...)
 	for a := range p.channels {
 		for b := range p.channels {
 			ca, cb := &p.channels[a], &p.channels[b]
-			if ca.mic >= 0 && cb.mic >= 0 {
-				s, c := math.Sincos(-2 * math.Pi * hz * (ca.delay - cb.delay))
-				dst[a*channels+b] = at[ca.mic*count+cb.mic] * complex(ca.factor*cb.factor*c, ca.factor*cb.factor*s)
+			if ca.Mic >= 0 && cb.Mic >= 0 {
+				s, c := math.Sincos(-2 * math.Pi * hz * (ca.Delay - cb.Delay))
+				dst[a*channels+b] = at[ca.Mic*count+cb.Mic] * complex(ca.Factor*cb.Factor*c, ca.Factor*cb.Factor*s)
 			}
 		}
-		dst[a*channels+a] += complex(p.channels[a].sensor*p.channels[a].sensor, 0)
+		dst[a*channels+a] += complex(p.channels[a].Sensor*p.channels[a].Sensor, 0)
 	}
 	return dst, nil
 }
@@ -347,15 +348,15 @@ func (r *Rendering) Transfer(dst []complex128, source string, hz float64) ([]com
 		dst = dst[:0]
 		for ch := range p.channels {
 			c := &p.channels[ch]
-			if c.clockPPM != 0 {
+			if c.ClockPPM != 0 {
 				return nil, fmt.Errorf("scenario: transfer of source %q: the clock of channel %d drifts", source, ch+1)
 			}
-			if c.mic < 0 || c.dead {
+			if c.Mic < 0 || c.Dead {
 				dst = append(dst, 0)
 				continue
 			}
-			s, k := math.Sincos(-2 * math.Pi * hz * c.delay)
-			dst = append(dst, p.banks[i].response(c.mic, 0, omega)*complex(c.factor*k, c.factor*s))
+			s, k := math.Sincos(-2 * math.Pi * hz * c.Delay)
+			dst = append(dst, p.banks[i].Response(c.Mic, 0, omega)*complex(c.Factor*k, c.Factor*s))
 		}
 		return dst, nil
 	}
@@ -368,8 +369,8 @@ func (r *Rendering) Heard(source string, seconds float64) (rig.Direction, error)
 	p := r.plan
 	for i := range p.sc.Sources {
 		if p.sc.Sources[i].Name == source {
-			t0, _ := p.tracks[i].emission(seconds, seconds, p.ref)
-			return p.tracks[i].wave(t0).Direction(p.ref), nil
+			t0, _ := p.tracks[i].Emission(seconds, seconds, p.ref)
+			return p.tracks[i].Wave(t0).Direction(p.ref), nil
 		}
 	}
 	return rig.Direction{}, fmt.Errorf("scenario: source %q: there is none of that name", source)

@@ -1,4 +1,4 @@
-package scenario
+package render
 
 import (
 	"math"
@@ -9,11 +9,11 @@ import (
 // Fractional delays here are windowed sincs of our own design, so that takes
 // are a witness that the delay filters under test had no hand in.
 
-// kernelTaps and kernelBeta make the kernel of direct sound: a Kaiser window
+// KernelTaps and kernelBeta make the kernel of direct sound: a Kaiser window
 // [Kaiser 1974] with side lobes near -130 dB, so that the largest complex
 // error is below -120 dB up to 0.9 of Nyquist.
 const (
-	kernelTaps = 128
+	KernelTaps = 128
 	kernelBeta = 13.5
 )
 
@@ -53,20 +53,22 @@ func sincTaps(h []float64, frac, beta float64) {
 // the first one.
 func delayTaps(delay float64) (start int, h []float64) {
 	whole := math.Floor(delay)
-	h = make([]float64, kernelTaps)
+	h = make([]float64, KernelTaps)
 	sincTaps(h, delay-whole, kernelBeta)
-	return int(whole) - (kernelTaps/2 - 1), h
+	return int(whole) - (KernelTaps/2 - 1), h
 }
 
-// table holds a kernel at many fractions. Between them taps are interpolated
+// Table holds a kernel at many fractions. Between them taps are interpolated
 // linearly: an error of (pi/phases)²/8 at Nyquist.
-type table struct {
-	taps, phases int
+type Table struct {
+	Taps, phases int
 	rows         []float64 // rows[p·taps+t], p = 0..phases
 }
 
-func newTable(taps, phases int, beta float64) *table {
-	k := &table{taps: taps, phases: phases, rows: make([]float64, (phases+1)*taps)}
+// NewTable returns a table of the kernel of taps (an even number) and a Kaiser
+// parameter at a number of fractions.
+func NewTable(taps, phases int, beta float64) *Table {
+	k := &Table{Taps: taps, phases: phases, rows: make([]float64, (phases+1)*taps)}
 	for p := range phases {
 		sincTaps(k.rows[p*taps:(p+1)*taps], float64(p)/float64(phases), beta)
 	}
@@ -75,16 +77,19 @@ func newTable(taps, phases int, beta float64) *table {
 	return k
 }
 
+// DirectTable returns the table of the kernel of direct sound.
+func DirectTable() *Table { return NewTable(KernelTaps, 2048, kernelBeta) }
+
 // pair returns the rows around a fraction and the weight of the second.
-func (k *table) pair(frac float64) (a, b []float64, w float64) {
+func (k *Table) pair(frac float64) (a, b []float64, w float64) {
 	at := frac * float64(k.phases)
 	p := min(int(at), k.phases-1)
-	return k.rows[p*k.taps : (p+1)*k.taps], k.rows[(p+1)*k.taps : (p+2)*k.taps], at - float64(p)
+	return k.rows[p*k.Taps : (p+1)*k.Taps], k.rows[(p+1)*k.Taps : (p+2)*k.Taps], at - float64(p)
 }
 
-// at returns the value of x at the position whole + frac, where x[0] is the
+// At returns the value of x at the position whole + frac, where x[0] is the
 // sample whole - taps/2 + 1 and x holds taps samples.
-func (k *table) at(x []float64, frac float64) float64 {
+func (k *Table) At(x []float64, frac float64) float64 {
 	a, b, w := k.pair(frac)
 	// The weight of x[i] is the kernel at i - (taps/2 - 1) - frac from its
 	// centre, which is even: the row of a delay by frac, read forwards.
@@ -99,11 +104,11 @@ func (k *table) at(x []float64, frac float64) float64 {
 
 // add adds amplitude times the kernel of a delay to h, h[0] being delay 0.
 // Taps that fall outside h are dropped.
-func (k *table) add(h []float64, delay, amplitude float64) {
+func (k *Table) add(h []float64, delay, amplitude float64) {
 	whole := math.Floor(delay)
 	a, b, w := k.pair(delay - whole)
-	first := int(whole) - (k.taps/2 - 1)
-	from, to := max(0, -first), min(k.taps, len(h)-first)
+	first := int(whole) - (k.Taps/2 - 1)
+	from, to := max(0, -first), min(k.Taps, len(h)-first)
 	if from >= to {
 		return
 	}

@@ -1,4 +1,4 @@
-package scenario
+package render
 
 import (
 	"math"
@@ -6,6 +6,12 @@ import (
 
 	"alidade/pkg/acoustics"
 	"alidade/pkg/rig"
+)
+
+// Fields of diffuse noise.
+const (
+	FieldSpherical   = "spherical"   // from all sides alike: coherence sin(kd)/(kd)
+	FieldCylindrical = "cylindrical" // from all sides of the horizontal plane: coherence J0(kd)
 )
 
 // coherenceLoading is added to the diagonal of coherence matrices, so that
@@ -24,14 +30,14 @@ func coherence(field string, p, q rig.Point, hz, speed float64) float64 {
 	return acoustics.DiffuseCoherence(p.Distance(q), hz, speed)
 }
 
-// mixingBank returns the filters that turn as many independent unit noises as
+// MixingBank returns the filters that turn as many independent unit noises as
 // there are microphones into noises of unit power and the coherence of the
 // field: at each frequency the Cholesky factor of the coherence matrix
 // [Habets, Cohen & Gannot 2008], which is real and even in frequency here, made
 // into filters of finite length. Unlike there, the filters run by linear, not
 // circular, convolution, so that the covariance of the noise is exactly what
 // the filters say.
-func mixingBank(field string, mics []rig.Point, rate int, speed float64) *filterBank {
+func MixingBank(field string, mics []rig.Point, rate int, speed float64) *Bank {
 	extent := rig.Spread(mics).Extent
 	n := 512
 	for n < rate/48 || float64(n) < 8*extent/speed*float64(rate) {
@@ -51,7 +57,7 @@ func mixingBank(field string, mics []rig.Point, rate int, speed float64) *filter
 		}
 		factors[k] = cholesky(g, count)
 	})
-	bank := &filterBank{start: -n / 2, taps: make([][][]float64, count)}
+	bank := &Bank{Start: -n / 2, Taps: make([][][]float64, count)}
 	re, im := make([]float64, bins), make([]float64, bins)
 	fft := plan64(n)
 	for m := range mics {
@@ -66,7 +72,7 @@ func mixingBank(field string, mics []rig.Point, rate int, speed float64) *filter
 				}
 				fft.Inverse(h, re, im)
 			}
-			bank.taps[m] = append(bank.taps[m], h)
+			bank.Taps[m] = append(bank.Taps[m], h)
 		}
 	}
 	return bank
@@ -93,10 +99,10 @@ func cholesky(a []float64, n int) []float64 {
 	return l
 }
 
-// waveBank returns the filters of count plane waves of equal power from evenly
+// WaveBank returns the filters of count plane waves of equal power from evenly
 // spread directions: a spiral lattice on the sphere, or a circle, turned at
 // random. Together they have unit power.
-func waveBank(field string, mics []rig.Point, ref rig.Point, count, rate int, speed float64, rng *rand.Rand) *filterBank {
+func WaveBank(field string, mics []rig.Point, ref rig.Point, count, rate int, speed float64, rng *rand.Rand) *Bank {
 	// A random turn about each axis.
 	var turn [3]float64
 	for i := range turn {
@@ -108,10 +114,10 @@ func waveBank(field string, mics []rig.Point, ref rig.Point, count, rate int, sp
 		extent = math.Max(extent, p.Distance(ref))
 	}
 	reach := int(math.Ceil(extent / speed * float64(rate)))
-	bank := &filterBank{start: -reach - kernelTaps/2, taps: make([][][]float64, len(mics))}
+	bank := &Bank{Start: -reach - KernelTaps/2, Taps: make([][][]float64, len(mics))}
 	gain := 1 / math.Sqrt(float64(count))
 	for m := range mics {
-		bank.taps[m] = make([][]float64, count)
+		bank.Taps[m] = make([][]float64, count)
 	}
 	parallel(count, func(j int) {
 		u := rig.Point{X: math.Cos(turn[0] + 2*math.Pi*float64(j)/float64(count)), Y: math.Sin(turn[0] + 2*math.Pi*float64(j)/float64(count))}
@@ -123,11 +129,11 @@ func waveBank(field string, mics []rig.Point, ref rig.Point, count, rate int, sp
 		}
 		for m, p := range mics {
 			start, h := delayTaps(-p.Sub(ref).Dot(u) / speed * float64(rate))
-			taps := make([]float64, 2*reach+2+kernelTaps)
+			taps := make([]float64, 2*reach+2+KernelTaps)
 			for t, v := range h {
-				taps[start-bank.start+t] = v * gain
+				taps[start-bank.Start+t] = v * gain
 			}
-			bank.taps[m][j] = taps
+			bank.Taps[m][j] = taps
 		}
 	})
 	return bank
@@ -142,43 +148,43 @@ func turned(p rig.Point, a, b float64) rig.Point {
 	return p
 }
 
-// diffuseField is diffuse noise made ready.
-type diffuseField struct {
-	bank  *filterBank // scaled to its level
-	shape []float64   // nil for white
+// Diffuse is diffuse noise made ready.
+type Diffuse struct {
+	Bank  *Bank     // scaled to its level
+	Shape []float64 // nil for white
 }
 
-// emitter returns the noise from frame first on.
-func (d *diffuseField) emitter(seed uint64, index int) emitter {
-	in := make([]mono, d.bank.inputs())
+// Emitter returns the noise from frame first on.
+func (d *Diffuse) Emitter(seed uint64, index int) Emitter {
+	in := make([]Mono, d.Bank.Inputs())
 	for j := range in {
-		in[j] = &gaussian{stream(seed, "diffuse", index<<16|j)}
-		if d.shape != nil {
-			in[j] = newFiltered(d.shape, in[j])
+		in[j] = &Gaussian{Stream(seed, "diffuse", index<<16|j)}
+		if d.Shape != nil {
+			in[j] = NewFiltered(d.Shape, in[j])
 		}
 	}
-	return newMixer(d.bank, in)
+	return NewMixer(d.Bank, in)
 }
 
-// covariance adds the covariance at omega, radians a sample, to r[m*M+n].
-func (d *diffuseField) covariance(r []complex128, omega float64) {
-	count, inputs := d.bank.outputs(), d.bank.inputs()
+// Covariance adds the covariance at omega, radians a sample, to r[m*M+n].
+func (d *Diffuse) Covariance(r []complex128, omega float64) {
+	count, inputs := d.Bank.Outputs(), d.Bank.Inputs()
 	shape := 1.0
-	if d.shape != nil {
-		v := tapResponse(d.shape, 0, omega)
+	if d.Shape != nil {
+		v := TapResponse(d.Shape, 0, omega)
 		shape = real(v)*real(v) + imag(v)*imag(v)
 	}
 	h := make([]complex128, count)
 	for j := range inputs {
 		for m := range count {
-			h[m] = d.bank.response(m, j, omega)
+			h[m] = d.Bank.Response(m, j, omega)
 		}
-		addOuter(r, h, shape)
+		AddOuter(r, h, shape)
 	}
 }
 
-// addOuter adds power·h·hᴴ to r[m*M+n].
-func addOuter(r, h []complex128, power float64) {
+// AddOuter adds power·h·hᴴ to r[m*M+n].
+func AddOuter(r, h []complex128, power float64) {
 	n := len(h)
 	for a, x := range h {
 		for b, y := range h {

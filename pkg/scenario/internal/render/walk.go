@@ -1,4 +1,4 @@
-package scenario
+package render
 
 import (
 	"math"
@@ -15,10 +15,10 @@ const walkStep = 0.05
 
 // walker is the reflections of a source that moves in a room.
 type walker struct {
-	room  *chamber
-	track *track
+	room  *Chamber
+	track *Track
 	mics  []rig.Point
-	in    mono
+	in    Mono
 	frame int64 // of the next input chunk, source time
 
 	times []float64 // of the responses, source time
@@ -37,16 +37,16 @@ type walker struct {
 type walkResponse struct{ re, im [][]float64 }
 
 // walkTimes returns when a source has moved by walkStep.
-func walkTimes(tr *track) []float64 {
-	times := []float64{tr.times[0]}
-	for i := 1; i < len(tr.times); i++ {
-		a, b := tr.times[i-1], tr.times[i]
+func walkTimes(tr *Track) []float64 {
+	times := []float64{tr.Times[0]}
+	for i := 1; i < len(tr.Times); i++ {
+		a, b := tr.Times[i-1], tr.Times[i]
 		// A polar stretch is an arc: its length comes from short chords.
 		var length float64
 		const chords = 32
-		last := tr.point(a)
+		last := tr.Point(a)
 		for c := 1; c <= chords; c++ {
-			p := tr.point(a + (b-a)*float64(c)/chords)
+			p := tr.Point(a + (b-a)*float64(c)/chords)
 			length += p.Distance(last)
 			last = p
 		}
@@ -58,37 +58,37 @@ func walkTimes(tr *track) []float64 {
 	return times
 }
 
-// walkLead is how many frames before its first one a walker needs its input
+// WalkLead is how many frames before its first one a walker needs its input
 // from: whole hops that cover the response.
-func walkLead(c *chamber, tr *track) int64 {
-	start, length := c.shape(tr.origin)
-	warm := (length - 1 + hopFrames - 1) / hopFrames
-	return int64(start + warm*hopFrames)
+func WalkLead(c *Chamber, tr *Track) int64 {
+	start, length := c.shape(tr.Origin)
+	warm := (length - 1 + HopFrames - 1) / HopFrames
+	return int64(start + warm*HopFrames)
 }
 
-// newWalker returns a walker whose input starts walkLead frames before first.
-func newWalker(c *chamber, tr *track, mics []rig.Point, first int64, in mono) *walker {
-	_, length := c.shape(tr.origin)
+// NewWalker returns a walker whose input starts walkLead frames before first.
+func NewWalker(c *Chamber, tr *Track, mics []rig.Point, first int64, in Mono) *walker {
+	_, length := c.shape(tr.Origin)
 	n := 1024
-	for n < hopFrames+length-1 {
+	for n < HopFrames+length-1 {
 		n *= 2
 	}
-	w := &walker{room: c, track: tr, mics: mics, in: in, frame: first - walkLead(c, tr), times: walkTimes(tr),
-		fft: plan64(n), chunk: make([]float64, hopFrames), part: make([]float64, n), time: make([]float64, n),
+	w := &walker{room: c, track: tr, mics: mics, in: in, frame: first - WalkLead(c, tr), times: walkTimes(tr),
+		fft: plan64(n), chunk: make([]float64, HopFrames), part: make([]float64, n), time: make([]float64, n),
 		inRe: make([]float64, n/2+1), inIm: make([]float64, n/2+1)}
 	w.ready = make([]*walkResponse, len(w.times))
 	for range mics {
 		w.re, w.im = append(w.re, make([]float64, n/2+1)), append(w.im, make([]float64, n/2+1))
 		w.tail = append(w.tail, make([]float64, n))
 	}
-	for range (length - 1 + hopFrames - 1) / hopFrames {
+	for range (length - 1 + HopFrames - 1) / HopFrames {
 		w.run()
 	}
 	return w
 }
 
-// add implements emitter.
-func (w *walker) add(dst [][]float64) {
+// Add implements Emitter.
+func (w *walker) Add(dst [][]float64) {
 	w.run()
 	for m := range dst {
 		to, from := dst[m], w.tail[m]
@@ -101,12 +101,12 @@ func (w *walker) add(dst [][]float64) {
 // response returns the bins of response k.
 func (w *walker) response(k int) *walkResponse {
 	if w.ready[k] == nil {
-		bank := w.room.responses(w.track.point(w.times[k]), w.mics, w.track.origin)
+		bank := w.room.Responses(w.track.Point(w.times[k]), w.mics, w.track.Origin)
 		r := &walkResponse{}
 		for m := range w.mics {
 			re, im := make([]float64, len(w.inRe)), make([]float64, len(w.inRe))
 			clear(w.time)
-			copy(w.time, bank.taps[m][0])
+			copy(w.time, bank.Taps[m][0])
 			w.fft.Forward(re, im, w.time)
 			r.re, r.im = append(r.re, re), append(r.im, im)
 		}
@@ -120,13 +120,13 @@ func (w *walker) response(k int) *walkResponse {
 func (w *walker) run() {
 	for m := range w.tail {
 		t := w.tail[m]
-		clear(t[copy(t, t[hopFrames:]):])
+		clear(t[copy(t, t[HopFrames:]):])
 		clear(w.re[m])
 		clear(w.im[m])
 	}
-	w.in.next(w.chunk)
-	begin := float64(w.frame) / float64(w.room.rate)
-	end := float64(w.frame+hopFrames) / float64(w.room.rate)
+	w.in.Next(w.chunk)
+	begin := float64(w.frame) / float64(w.room.Rate)
+	end := float64(w.frame+HopFrames) / float64(w.room.Rate)
 	last := len(w.times) - 1
 	for k := range w.times {
 		low, high := math.Inf(-1), math.Inf(1)
@@ -146,7 +146,7 @@ func (w *walker) run() {
 		clear(w.part)
 		heard := false
 		for i, v := range w.chunk {
-			g := w.weight(k, begin+float64(i)/float64(w.room.rate))
+			g := w.weight(k, begin+float64(i)/float64(w.room.Rate))
 			w.part[i] = g * v
 			heard = heard || w.part[i] != 0
 		}
@@ -165,7 +165,7 @@ func (w *walker) run() {
 			w.tail[m][i] += v
 		}
 	}
-	w.frame += hopFrames
+	w.frame += HopFrames
 }
 
 // weight returns the share of response k at time t of the source.

@@ -1,4 +1,4 @@
-package scenario
+package render
 
 import (
 	"math"
@@ -54,7 +54,6 @@ type talker struct {
 	spoken     float64 // seconds into the phrase
 	voice, air float64 // amplitudes now
 	left       int     // frames to the end of the segment
-	total      int
 	aim        segment
 	phrase     []segment // what is still to be said, last first
 	tick       int
@@ -69,7 +68,8 @@ type segment struct {
 	hiss       [3]float64
 }
 
-func newTalker(rate int, pitchHz float64, rng *rand.Rand) *talker {
+// NewTalker returns a talker of a pitch in hertz.
+func NewTalker(rate int, pitchHz float64, rng *rand.Rand) *talker {
 	t := &talker{rate: float64(rate), pitchHz: pitchHz, rng: rng, hz: pitchHz, tuned: [4]float64{500, 1500, 2500, 3500}}
 	t.aim.hiss = hisses[0]
 	return t
@@ -102,8 +102,8 @@ func (t *talker) plan() {
 	t.spoken = 0
 }
 
-// next implements mono.
-func (t *talker) next(dst []float64) {
+// Next implements Mono.
+func (t *talker) Next(dst []float64) {
 	const tickFrames = 32 // between changes of the resonators
 	dt := 1 / t.rate
 	glide := 1 - math.Exp(-float64(tickFrames)*dt/0.025)

@@ -1,42 +1,47 @@
-package scenario
+package render
 
 import "alidade/pkg/spectral"
 
-// mono is a signal that is given out from its first frame on.
-type mono interface {
+// Mono is a signal that is given out from its first frame on.
+type Mono interface {
 	// next writes the next len(dst) frames.
-	next(dst []float64)
+	Next(dst []float64)
 }
 
-// filterBank is the responses from some inputs to some outputs:
+// Bank is the responses from some inputs to some outputs:
 // out_m[i] = Σ_j Σ_t taps[m][j][t]·in_j[i-start-t].
-type filterBank struct {
-	start int
-	taps  [][][]float64 // taps[m][j][t], all of one length
+type Bank struct {
+	Start int           // delay of the first tap, frames
+	Taps  [][][]float64 // Taps[m][j][t], all of one length
 }
 
-func (b *filterBank) outputs() int { return len(b.taps) }
-func (b *filterBank) inputs() int  { return len(b.taps[0]) }
-func (b *filterBank) length() int  { return len(b.taps[0][0]) }
+// Outputs is the number of outputs.
+func (b *Bank) Outputs() int { return len(b.Taps) }
 
-// response returns Σ_t taps[m][j][t]·e^{-jω(start+t)}, ω in radians a sample.
-func (b *filterBank) response(m, j int, omega float64) complex128 {
-	return tapResponse(b.taps[m][j], b.start, omega)
+// Inputs is the number of inputs.
+func (b *Bank) Inputs() int { return len(b.Taps[0]) }
+
+// Length is the number of taps.
+func (b *Bank) Length() int { return len(b.Taps[0][0]) }
+
+// Response returns Σ_t taps[m][j][t]·e^{-jω(start+t)}, ω in radians a sample.
+func (b *Bank) Response(m, j int, omega float64) complex128 {
+	return TapResponse(b.Taps[m][j], b.Start, omega)
 }
 
-// emitter adds what it sounds like at the microphones, frame after frame.
-type emitter interface {
+// Emitter adds what it sounds like at the microphones, frame after frame.
+type Emitter interface {
 	// add adds the next frames to dst, dst[m][i]; all rows are hopFrames long.
-	add(dst [][]float64)
+	Add(dst [][]float64)
 }
 
-// hopFrames is how many frames of the sound field are computed at a time.
-const hopFrames = 2048
+// HopFrames is how many frames of the sound field are computed at a time.
+const HopFrames = 2048
 
-// mixer runs inputs through a filter bank by overlap-save.
-type mixer struct {
-	bank  *filterBank
-	in    []mono
+// Mixer runs inputs through a filter bank by overlap-save.
+type Mixer struct {
+	bank  *Bank
+	in    []Mono
 	fft   *spectral.FFT[float64]
 	fresh int // frames of each block that are new
 
@@ -49,22 +54,22 @@ type mixer struct {
 	at         int
 }
 
-// newMixer returns a mixer whose first frame out needs the frame
+// NewMixer returns a mixer whose first frame out needs the frame
 // first - start - length + 1 of the inputs as their first: see lead.
-func newMixer(bank *filterBank, in []mono) *mixer {
-	length := bank.length()
+func NewMixer(bank *Bank, in []Mono) *Mixer {
+	length := bank.Length()
 	n := 1024
 	for n < 4*length && n < 4096 || n < 2*length {
 		n *= 2
 	}
-	x := &mixer{bank: bank, in: in, fft: plan64(n), fresh: n - length + 1}
-	outputs, inputs, bins := bank.outputs(), bank.inputs(), n/2+1
+	x := &Mixer{bank: bank, in: in, fft: plan64(n), fresh: n - length + 1}
+	outputs, inputs, bins := bank.Outputs(), bank.Inputs(), n/2+1
 	padded := make([]float64, n)
 	for m := range outputs {
 		for j := range inputs {
 			re, im := make([]float64, bins), make([]float64, bins)
 			clear(padded)
-			copy(padded, bank.taps[m][j])
+			copy(padded, bank.Taps[m][j])
 			x.fft.Forward(re, im, padded)
 			x.spectra[0], x.spectra[1] = append(x.spectra[0], re), append(x.spectra[1], im)
 		}
@@ -80,16 +85,16 @@ func newMixer(bank *filterBank, in []mono) *mixer {
 	x.re, x.im, x.time = make([]float64, bins), make([]float64, bins), make([]float64, n)
 	x.out, x.at = rows(outputs, x.fresh), x.fresh
 	for j, s := range in {
-		s.next(x.window[j][n-length+1:]) // the past of the first frame
+		s.Next(x.window[j][n-length+1:]) // the past of the first frame
 	}
 	return x
 }
 
-// lead is how many frames before its first frame a bank needs its inputs from.
-func (b *filterBank) lead() int64 { return int64(b.start + b.length() - 1) }
+// Lead is how many frames before its first frame a bank needs its inputs from.
+func (b *Bank) Lead() int64 { return int64(b.Start + b.Length() - 1) }
 
-// add implements emitter.
-func (x *mixer) add(dst [][]float64) {
+// Add implements Emitter.
+func (x *Mixer) Add(dst [][]float64) {
 	for done := 0; done < len(dst[0]); {
 		if x.at == x.fresh {
 			x.run()
@@ -107,12 +112,12 @@ func (x *mixer) add(dst [][]float64) {
 }
 
 // run computes the next fresh frames of every output.
-func (x *mixer) run() {
+func (x *Mixer) run() {
 	n := x.fft.Len()
 	for j, s := range x.in {
 		w := x.window[j]
 		copy(w, w[x.fresh:])
-		s.next(w[n-x.fresh:])
+		s.Next(w[n-x.fresh:])
 		x.fft.Forward(x.inRe[j], x.inIm[j], w)
 	}
 	inputs := len(x.in)
@@ -149,19 +154,19 @@ func plan64(n int) *spectral.FFT[float64] {
 
 // filtered is a mono signal through one filter.
 type filtered struct {
-	mixer *mixer
+	Mixer *Mixer
 	row   [1][]float64
 }
 
-// newFiltered returns taps convolved with in, whose first frame must be
+// NewFiltered returns taps convolved with in, whose first frame must be
 // len(taps)-1 frames before the first of the result.
-func newFiltered(taps []float64, in mono) *filtered {
-	return &filtered{mixer: newMixer(&filterBank{taps: [][][]float64{{taps}}}, []mono{in})}
+func NewFiltered(taps []float64, in Mono) *filtered {
+	return &filtered{Mixer: NewMixer(&Bank{Taps: [][][]float64{{taps}}}, []Mono{in})}
 }
 
-// next implements mono.
-func (f *filtered) next(dst []float64) {
+// Next implements Mono.
+func (f *filtered) Next(dst []float64) {
 	clear(dst)
 	f.row[0] = dst
-	f.mixer.add(f.row[:])
+	f.Mixer.Add(f.row[:])
 }

@@ -1,11 +1,11 @@
-package scenario
+package render
 
 import (
 	"math"
 )
 
-// tapResponse returns Σ_t h[t]·e^{-jω(start+t)}, ω in radians a sample.
-func tapResponse(h []float64, start int, omega float64) complex128 {
+// TapResponse returns Σ_t h[t]·e^{-jω(start+t)}, ω in radians a sample.
+func TapResponse(h []float64, start int, omega float64) complex128 {
 	s, c := math.Sincos(-omega)
 	step := complex(c, s)
 	var sum complex128
@@ -15,6 +15,14 @@ func tapResponse(h []float64, start int, omega float64) complex128 {
 	s, c = math.Sincos(-omega * float64(start))
 	return sum * complex(c, s)
 }
+
+// Spectra of noise.
+const (
+	SpectrumWhite    = "white"
+	SpectrumPink     = "pink"     // power density falls by 3 dB an octave above 20 Hz
+	SpectrumOutdoors = "outdoors" // wind and distant traffic: 5 dB an octave above 40 Hz, over a faint white floor
+	SpectrumSpeech   = "speech"   // long-term spectrum of speech
+)
 
 // spectrumWind is the spectrum of wind on a microphone; see gusts.
 const spectrumWind = "wind"
@@ -55,10 +63,10 @@ func density(spectrum string, hz float64) float64 {
 	return 1
 }
 
-// shape returns the filter that gives white noise a spectrum, its power kept,
+// Shape returns the filter that gives white noise a spectrum, its power kept,
 // nil for white. It is even around its middle, so that it holds a whole number
 // of frames of delay, len/2; its resolution is about 25 Hz.
-func shape(spectrum string, rate int) []float64 {
+func Shape(spectrum string, rate int) []float64 {
 	if spectrum == "" || spectrum == SpectrumWhite {
 		return nil
 	}
@@ -90,9 +98,9 @@ func shape(spectrum string, rate int) []float64 {
 	return h[1:] // the first tap is 0
 }
 
-// powerOfDBFS returns the mean square of a signal of a level in dBFS: a
+// PowerOfDBFS returns the mean square of a signal of a level in dBFS: a
 // full-scale sine, mean square 1/2, reads 0 dBFS [AES17].
-func powerOfDBFS(level float64) float64 { return 0.5 * math.Pow(10, level/10) }
+func PowerOfDBFS(level float64) float64 { return 0.5 * math.Pow(10, level/10) }
 
-// dbfsOfPower is the inverse of powerOfDBFS.
-func dbfsOfPower(power float64) float64 { return 10 * math.Log10(2*power) }
+// DBFSOfPower is the inverse of powerOfDBFS.
+func DBFSOfPower(power float64) float64 { return 10 * math.Log10(2*power) }

@@ -1,11 +1,11 @@
-package scenario
+package render
 
 import "math"
 
 // bandSplit joins responses that hold for single octaves into one. Between two
 // mid-band frequencies the weights are cos² and sin² of the logarithm of
 // frequency, which add up to 1; below the first and above the last octave its
-// response holds. Filters have no phase: they ring before a reflection as
+// Response holds. Filters have no phase: they ring before a reflection as
 // after it.
 type bandSplit struct {
 	rate int
@@ -16,7 +16,7 @@ type bandSplit struct {
 func (s *bandSplit) weight(b, bands int, hz float64) float64 {
 	at := math.Inf(-1) // octaves above the first
 	if hz > 0 {
-		at = math.Log10(hz/octaveHz(0)) / 0.3
+		at = math.Log10(hz/OctaveHz(0)) / 0.3
 	}
 	at = math.Min(math.Max(at, 0), float64(bands-1))
 	d := math.Abs(at - float64(b))
