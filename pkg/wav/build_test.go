@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"encoding/binary"
 	"encoding/hex"
+	"io"
 	"math"
 	"math/rand/v2"
 	"strings"
@@ -321,12 +322,14 @@ func (m *memory) Read(p []byte) (int, error) {
 }
 
 func (m *memory) Seek(off int64, whence int) (int64, error) {
-	at, err := bytes.NewReader(m.b).Seek(off, whence)
-	m.at = at
-	if whence == 1 {
-		m.at += off
+	switch whence {
+	case io.SeekCurrent:
+		off += m.at
+	case io.SeekEnd:
+		off += int64(len(m.b))
 	}
-	return m.at, err
+	m.at = off
+	return off, nil
 }
 
 // write makes a file of b with a Writer, in blocks of the given size.

@@ -1,6 +1,7 @@
 package wav
 
 import (
+	"bytes"
 	"errors"
 	"fmt"
 	"io"
@@ -60,6 +61,14 @@ func verifyOwn(f io.ReaderAt, size int64, want Written) error {
 		if w.Code != WarnNoFrames {
 			return fmt.Errorf("the file is odd: %s", w)
 		}
+	}
+	head := sizes(want.Container, size, want.Frames*int64(want.Format.FrameBytes()), want.Frames)
+	got := make([]byte, len(head))
+	if _, err := f.ReadAt(got, 0); err != nil {
+		return err
+	}
+	if !bytes.Equal(got, head) {
+		return fmt.Errorf("the file starts with % x, want % x", got, head)
 	}
 	sums := make([]uint64, h.Channels)
 	scale := float64(int64(1) << (h.Bits - 1)) // exact for the 16 and 24 bits that a Writer makes

@@ -129,9 +129,7 @@ func NewWriter(f io.WriterAt, format Format, opt Option) (*Writer, error) {
 
 // header is everything before the first sample, with sizes of an empty file.
 func (w *Writer) header() []byte {
-	le := binary.LittleEndian
-	h := append([]byte("RIFF\x00\x00\x00\x00WAVEJUNK"), le.AppendUint32(nil, ds64Bytes)...)
-	h = append(h, make([]byte, ds64Bytes)...)
+	h := sizes(RIFF, 8, 0, 0)
 	for _, c := range w.meta.before() {
 		h = appendChunk(h, c)
 	}
@@ -142,7 +140,7 @@ func (w *Writer) header() []byte {
 		h = appendChunk(h, rawChunk{"fact", make([]byte, 4)})
 	}
 	h = append(h, "data\x00\x00\x00\x00"...)
-	le.PutUint32(h[4:], uint32(len(h)-8))
+	binary.LittleEndian.PutUint32(h[4:], uint32(len(h)-8))
 	return h
 }
 
@@ -307,30 +305,36 @@ func (w *Writer) flush() error {
 	return nil
 }
 
+// sizes is the start of a file that ends at byte end, up to the end of the
+// JUNK or ds64 chunk.
+func sizes(c Container, end, data, frames int64) []byte {
+	le := binary.LittleEndian
+	head := append([]byte("RIFF\x00\x00\x00\x00WAVEJUNK"), ds64Bytes, 0, 0, 0)
+	head = append(head, make([]byte, ds64Bytes)...)
+	le.PutUint32(head[4:], uint32(end-8))
+	if c == RF64 {
+		copy(head, "RF64\xff\xff\xff\xffWAVEds64")
+		le.PutUint64(head[20:], uint64(end-8))
+		le.PutUint64(head[28:], uint64(data))
+		le.PutUint64(head[36:], uint64(frames))
+	}
+	return head
+}
+
 // patch makes the header tell of a file that ends at byte end and of the
 // frames in it.
 func (w *Writer) patch(end int64) error {
-	le := binary.LittleEndian
 	data := w.out.Frames * int64(w.format.FrameBytes())
-	riff := end - 8
-	var head [20 + ds64Bytes]byte
-	copy(head[:], "RIFF\x00\x00\x00\x00WAVEJUNK")
-	le.PutUint32(head[4:], uint32(riff))
-	le.PutUint32(head[16:], ds64Bytes)
 	data32, fact32 := uint32(data), uint32(w.out.Frames)
-	if riff > w.limit {
+	if end-8 > w.limit {
 		w.out.Container = RF64
-		copy(head[:], "RF64\xff\xff\xff\xffWAVEds64")
-		le.PutUint64(head[20:], uint64(riff))
-		le.PutUint64(head[28:], uint64(data))
-		le.PutUint64(head[36:], uint64(w.out.Frames))
 		data32, fact32 = unset32, unset32
 	}
 	put := func(v uint32, at int64) error {
-		_, err := w.f.WriteAt(le.AppendUint32(nil, v), at)
+		_, err := w.f.WriteAt(binary.LittleEndian.AppendUint32(nil, v), at)
 		return err
 	}
-	_, err := w.f.WriteAt(head[:], 0)
+	_, err := w.f.WriteAt(sizes(w.out.Container, end, data, w.out.Frames), 0)
 	if err == nil && w.factAt > 0 {
 		err = put(fact32, w.factAt)
 	}
