@@ -99,12 +99,14 @@ type Gains struct {
 
 	named    int
 	isolated bool
+	slowS    float64 // block length of the noise level, see slowBlock
 	data     []bandData
 }
 
 // bandData is what the figures of one band are made of.
 type bandData struct {
 	noise, target part
+	slowS         float64 // block length of the noise level, see slowBlock
 	isolated      bool
 	mics          []micPower
 }
@@ -153,13 +155,14 @@ func newPart(ref, out Track, at []int) part {
 
 func (p *part) short() bool { return len(p.at) < LeastEntries || p.seconds < LeastSeconds }
 
-// spread is the spread of the mean of a·ref + b·out.
-func (p *part) spread(a, b float64) spread {
+// spread is the spread of the mean of a·ref + b·out, with blocks of at least
+// slowS seconds.
+func (p *part) spread(a, b, slowS float64) spread {
 	z := make([]float64, len(p.at))
 	for i := range z {
 		z[i] = a*(p.ref[i]-p.refMean) + b*(p.out[i]-p.outMean)
 	}
-	return meanSpread(z, p.at)
+	return meanSpread(z, p.at, int(math.Round(slowS/p.hopS)))
 }
 
 func number(v float64) *float64 { return &v }

@@ -57,8 +57,7 @@ func IsolatedGain(s Isolated) (*Gains, error) {
 			d.mics = append(d.mics, micPower{noise[m] * d.noise.refMean, target[m] * d.target.refMean})
 		}
 		g.data = append(g.data, d)
-		g.Bands = append(g.Bands, d.gain(nr.Band))
 	}
-	g.compare()
+	g.fill(s.Noise.Reference.Bands())
 	return g, nil
 }

@@ -24,24 +24,48 @@ type total struct {
 }
 
 // add takes samples and returns -1, or the place of the first one that is not
-// a finite number.
+// a finite number. The order of the sums depends on len(x) alone.
 func (t *total) add(x []float32) int {
-	var sum, square float64
-	peak := t.peak
-	for i, v := range x {
-		a := v
-		if a < 0 {
-			a = -a
+	var s0, s1, q0, q1 float64
+	var top uint32 // magnitudes compare like their bits; no number is above infinity
+	y := x
+	for ; len(y) >= 2; y = y[2:] {
+		top = max(top, math.Float32bits(y[0])&^(1<<31), math.Float32bits(y[1])&^(1<<31))
+		a, b := float64(y[0]), float64(y[1])
+		s0 += a
+		s1 += b
+		q0 += a * a
+		q1 += b * b
+	}
+	for _, v := range y {
+		top = max(top, math.Float32bits(v)&^(1<<31))
+		s0 += float64(v)
+		q0 += float64(v) * float64(v)
+	}
+	peak := math.Float32frombits(top)
+	if !(peak <= math.MaxFloat32) {
+		for i, v := range x {
+			if v-v != 0 {
+				return i
+			}
 		}
-		if !(a <= math.MaxFloat32) {
-			return i
-		}
-		sum += float64(v)
-		square += float64(v) * float64(v)
-		if a > peak {
-			peak = a
-		}
-		if a < fullScale {
+	}
+	if peak >= fullScale {
+		t.clip(x)
+	} else {
+		t.run = 0
+	}
+	t.frames += int64(len(x))
+	t.sum += s0 + s1
+	t.square += q0 + q1
+	t.peak = max(t.peak, peak)
+	return -1
+}
+
+// clip counts the samples of x in runs at full scale.
+func (t *total) clip(x []float32) {
+	for _, v := range x {
+		if v < fullScale && v > -fullScale {
 			t.run = 0
 			continue
 		}
@@ -53,11 +77,6 @@ func (t *total) add(x []float32) int {
 			t.clipped++
 		}
 	}
-	t.frames += int64(len(x))
-	t.sum += sum
-	t.square += square
-	t.peak = peak
-	return -1
 }
 
 // Level is what one channel holds as a whole.

@@ -28,13 +28,14 @@ type spread struct {
 // 2·E[Q]²/var[Q] [Satterthwaite 1946], lowered where the values have heavier
 // tails than a normal distribution has, by 2/(kurtosis-1) [Box 1953].
 //
-// More than mostUnits values are added up in runs of neighbours first.
-func meanSpread(z []float64, at []int) spread {
+// Least is a block length that is known to be needed, 0 for none. More than
+// mostUnits values are added up in runs of neighbours first.
+func meanSpread(z []float64, at []int, least int) spread {
 	if len(z) < 2 {
 		return spread{math.Inf(1), 0, 1}
 	}
 	if len(z) <= mostUnits {
-		return unitSpread(z, at)
+		return unitSpread(z, at, least)
 	}
 	run := (len(z) + mostUnits - 1) / mostUnits
 	var sums []float64
@@ -46,7 +47,7 @@ func meanSpread(z []float64, at []int) spread {
 			sums, places = append(sums, v), append(places, at[i]/run)
 		}
 	}
-	s := unitSpread(sums, places)
+	s := unitSpread(sums, places, (least+run-1)/run)
 	part := float64(len(sums)) / float64(len(z))
 	s.variance *= part * part
 	s.block *= run
@@ -57,9 +58,9 @@ func meanSpread(z []float64, at []int) spread {
 const mostUnits = 3000
 
 // unitSpread is meanSpread without the bound.
-func unitSpread(z []float64, at []int) spread {
+func unitSpread(z []float64, at []int, least int) spread {
 	n := float64(len(z))
-	block := blockLength(z, at)
+	block := blockLength(z, at, least)
 	q, sum, square, rows2 := 0.0, 0.0, 0.0, 0.0
 	row := make([]float64, len(z))
 	fourth, second := 0.0, 0.0
@@ -96,9 +97,16 @@ func unitSpread(z []float64, at []int) spread {
 // blockLength is the length of Bartlett's kernel for z: that of Andrews for the
 // autocorrelation at distance 1, and at least 0.75·n^(1/3), which takes in the
 // correlation of half overlapped windows, as far as it leaves 8 blocks.
-func blockLength(z []float64, at []int) int {
-	cross, square := 0.0, 0.0
-	pairs := 0
+func blockLength(z []float64, at []int, least int) int {
+	length := max(1, min(int(math.Round(0.75*math.Cbrt(float64(len(z))))), len(z)/8))
+	rho, n := neighbours(z, at)
+	return max(length, min(max(andrews(rho, n), least), len(z)/4))
+}
+
+// neighbours is the autocorrelation of z at distance 1, 0 where fewer than
+// three pairs are neighbours, and the number of values.
+func neighbours(z []float64, at []int) (rho, n float64) {
+	cross, square, pairs := 0.0, 0.0, 0.0
 	for i := range z {
 		square += z[i] * z[i]
 		if i > 0 && at[i] == at[i-1]+1 {
@@ -106,18 +114,22 @@ func blockLength(z []float64, at []int) int {
 			pairs++
 		}
 	}
-	n := float64(len(z))
-	least := max(1, min(int(math.Round(0.75*math.Cbrt(n))), len(z)/8))
+	n = float64(len(z))
 	if pairs < 3 || !(square > 0) {
-		return least
+		return 0, n
 	}
-	rho := math.Min(cross/float64(pairs)/(square/n), 0.97)
+	return cross / pairs / (square / n), n
+}
+
+// andrews is the length of Bartlett's kernel for an autocorrelation rho at
+// distance 1 of n values: 1.1447·(α·n)^(1/3), α = 4ρ²/(1-ρ²)².
+func andrews(rho, n float64) int {
 	if rho <= 0 {
-		return least
+		return 1
 	}
+	rho = math.Min(rho, 0.97)
 	alpha := 4 * rho * rho / ((1 - rho*rho) * (1 - rho*rho))
-	length := int(math.Ceil(1.1447 * math.Cbrt(alpha*n)))
-	return max(least, min(length, len(z)/4))
+	return int(math.Ceil(1.1447 * math.Cbrt(alpha*n)))
 }
 
 // plus is the spread of the sum of two independent means, with the degrees of

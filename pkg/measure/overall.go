@@ -76,7 +76,7 @@ func (g *Gains) overallNoise(o *Overall, bands []int) {
 	}
 	o.NoiseReduction = level(r / y)
 	o.NoiseReductionA = level(ra / ya)
-	if s, ok := g.cells(bands, false, 1/r, -1/y); ok {
+	if s, ok := g.cells(bands, false, 1/r, -1/y, 0); ok {
 		o.NoiseReductionCI = interval(math.Log(r/y), s)
 	}
 }
@@ -94,17 +94,17 @@ func (g *Gains) overallTarget(o *Overall, bands []int) {
 	o.OverBest = g.overall(bands, g.Best, *o.SNRGain, sr/r)
 	o.OverNamed = g.overall(bands, g.named, *o.SNRGain, sr/r)
 	if g.isolated {
-		if s, ok := g.cells(bands, false, 1/r, -1/y); ok {
+		if s, ok := g.cells(bands, false, 1/r, -1/y, 0); ok {
 			o.SNRGainCI = interval(math.Log(sy/sr*r/y), s)
 		}
 		return
 	}
-	a, okA := g.cells(bands, true, -1/sr, 1/sy)
-	n, okN := g.cells(bands, false, 1/sr, -1/sy)
+	a, okA := g.cells(bands, true, -1/sr, 1/sy, g.slowS)
+	n, okN := g.cells(bands, false, 1/sr, -1/sy, g.slowS)
 	if okA && okN {
 		o.TargetChangeCI = interval(math.Log(sy/sr), a.plus(n))
 	}
-	n, okN = g.cells(bands, false, 1/sr+1/r, -1/sy-1/y)
+	n, okN = g.cells(bands, false, 1/sr+1/r, -1/sy-1/y, g.slowS)
 	if okA && okN {
 		o.SNRGainCI = interval(math.Log(sy/sr*r/y), a.plus(n))
 	}
@@ -150,10 +150,10 @@ func (g *Gains) speech(o *Overall, bands []int) {
 // cells returns the spread of the mean of Σ_b (a·ref_b + c·out_b) over the
 // noise or target entries. Bands come in windows of several lengths; their
 // entries are averaged into cells as long as the longest hop, by their
-// centres, and cells that some band has no entry in are left out. So what the
+// centres, blocks are at least slowS seconds, and cells that some band has no entry in are left out. So what the
 // bands have in common (a gust raises them all) counts in full. ok is false
 // where fewer than LeastEntries cells are left.
-func (g *Gains) cells(bands []int, target bool, a, c float64) (spread, bool) {
+func (g *Gains) cells(bands []int, target bool, a, c, slowS float64) (spread, bool) {
 	pick := func(b int) *part {
 		if target {
 			return &g.data[b].target
@@ -207,5 +207,5 @@ func (g *Gains) cells(bands []int, target bool, a, c float64) (spread, bool) {
 	for i := range z {
 		z[i] -= mean
 	}
-	return meanSpread(z, at), true
+	return meanSpread(z, at, int(math.Round(slowS/width))), true
 }

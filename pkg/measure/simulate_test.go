@@ -76,7 +76,7 @@ func newRoom(s roomShape) *room {
 		r.wave = append(r.wave, wave)
 		r.noise = append(r.noise, real(cov[0]))
 		r.out = append(r.out, real(out))
-		r.target = append(r.target, 1/(1+math.Pow(hz/700, 3))*math.Min(1, math.Pow(hz/150, 4)))
+		r.target = append(r.target, 1/(1+math.Pow(hz/700, 2))*math.Min(1, math.Pow(hz/100, 2)))
 		r.pass = append(r.pass, real(pass)*real(pass)+imag(pass)*imag(pass))
 	}
 	return r
@@ -282,6 +282,25 @@ func speechlike(n, rate int, amplitude float64, at []Stretch, seed uint64) []flo
 	f := float32(amplitude / math.Sqrt(sum/float64(count)))
 	for i := range e {
 		e[i] *= f
+	}
+	return e
+}
+
+// gusty is an amplitude that wanders by 3 dB standard deviation over about half
+// a second.
+func gusty(n, rate int, seed uint64) []float32 {
+	rnd := rand.New(rand.NewPCG(seed, 9))
+	e := make([]float32, n)
+	step := rate / 100
+	a := math.Exp(-0.01 / 0.5)
+	v, next := rnd.NormFloat64(), 0.0
+	for i := 0; i < n; i += step {
+		next = a*v + math.Sqrt(1-a*a)*rnd.NormFloat64()
+		for j := 0; j < step && i+j < n; j++ {
+			x := v + (next-v)*float64(j)/float64(step)
+			e[i+j] = float32(math.Pow(10, 3*x/20))
+		}
+		v = next
 	}
 	return e
 }

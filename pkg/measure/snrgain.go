@@ -36,10 +36,23 @@ func SNRGain(s Scene) (*Gains, error) {
 			d.mics = append(d.mics, micPower{n, target[m]*d.target.refMean - n})
 		}
 		g.data = append(g.data, d)
-		g.Bands = append(g.Bands, d.gain(ref.Band))
+	}
+	g.fill(s.Reference.Bands())
+	return g, nil
+}
+
+// fill makes the figures of all bands from the data.
+func (g *Gains) fill(bands []Band) {
+	var parts []*part
+	for b := range g.data {
+		parts = append(parts, &g.data[b].noise)
+	}
+	g.slowS = slowBlock(parts)
+	for b := range g.data {
+		g.data[b].slowS = g.slowS
+		g.Bands = append(g.Bands, g.data[b].gain(bands[b]))
 	}
 	g.compare()
-	return g, nil
 }
 
 // orNone makes a nil list of stretches an empty one.
@@ -90,9 +103,9 @@ func (d *bandData) gain(band Band) BandGain {
 	g.NoiseSamples = n.seconds * band.Width()
 	g.NoiseIn, g.NoiseOut = level(n.refMean), level(n.outMean)
 	g.NoiseReduction = number(*g.NoiseIn - *g.NoiseOut)
-	s := n.spread(1/n.refMean, -1/n.outMean)
+	s := n.spread(1/n.refMean, -1/n.outMean, 0)
 	g.NoiseBlockS = float64(s.block) * n.hopS
-	bias := 0.5 * (n.spread(0, 1/n.outMean).variance - n.spread(1/n.refMean, 0).variance)
+	bias := 0.5 * (n.spread(0, 1/n.outMean, 0).variance - n.spread(1/n.refMean, 0, 0).variance)
 	g.NoiseReductionCI = interval(math.Log(n.refMean/n.outMean)-bias, s)
 	sparse := g.NoiseSamples < SparseSamples || n.seconds < SparseSeconds || n.seconds < SparseBlocks*g.NoiseBlockS
 	if sparse {
@@ -114,7 +127,7 @@ func (d *bandData) gain(band Band) BandGain {
 			g.target(d, refS, outS)
 			break
 		}
-		if refS <= d.spread(1, 0, -1, 0).half() || outS <= d.spread(0, 1, 0, -1).half() {
+		if refS <= d.above(1, 0).half() || outS <= d.above(0, 1).half() {
 			g.TargetReason = NotAboveNoise
 			break
 		}
@@ -139,11 +152,11 @@ func (g *BandGain) target(d *bandData, refS, outS float64) {
 		g.SNRGainCI = &ci
 		return
 	}
-	g.TargetBlockS = float64(a.spread(-1/refS, 1/outS).block) * a.hopS
-	g.TargetChangeCI = d.selected(math.Log(outS/refS), -1/refS, 1/outS, 1/refS, -1/outS)
-	g.SNRGainCI = d.selected(math.Log(outS/refS*n.refMean/n.outMean),
-		-1/refS, 1/outS, 1/refS+1/n.refMean, -1/outS-1/n.outMean)
-	if !g.Sparse() && (g.TargetSamples < SparseSamples || a.seconds < SparseSeconds || a.seconds < SparseBlocks*g.TargetBlockS) {
+	g.TargetBlockS = math.Max(float64(a.spread(-1/refS, 1/outS, 0).block)*a.hopS, d.slowS)
+	g.TargetChangeCI = d.selected(math.Log(outS/refS), -1/refS, 1/outS, 0, 0)
+	g.SNRGainCI = d.selected(math.Log(outS/refS*n.refMean/n.outMean), -1/refS, 1/outS, 1/n.refMean, -1/n.outMean)
+	if !g.Sparse() && (g.TargetSamples < SparseSamples || math.Min(a.seconds, n.seconds) < SparseBlocks*d.slowS ||
+		a.seconds < SparseSeconds || a.seconds < SparseBlocks*g.TargetBlockS) {
 		g.Flags = append(g.Flags, Sparse)
 	}
 }
@@ -155,15 +168,72 @@ func interval(centre float64, s spread) *[2]float64 {
 	return &[2]float64{dbPerNeper * (centre - h), dbPerNeper * (centre + h)}
 }
 
-// spread is the spread of a·ref + b·out over the target entries plus c·ref +
-// e·out over the noise entries, the means of both.
+// spread is the spread of an estimate with the influences a and b of the target
+// power at reference and output, and c and e of the noise power. The target
+// power is that of the target entries less that of the noise entries. The
+// target entries hold noise too: they count at least with the spread that noise
+// of their length has, so that a gust that the target hides is not taken for
+// certainty.
 func (d *bandData) spread(a, b, c, e float64) spread {
-	return d.target.spread(a, b).plus(d.noise.spread(c, e))
+	t := d.target.spread(a, b, d.slowS)
+	if n := d.noiseIn(a, b); n.variance > t.variance {
+		t = n
+	}
+	return t.plus(d.noise.spread(c-a, e-b, d.slowS))
 }
 
+// noiseIn is the spread that a·ref + b·out of the noise alone has over as much
+// time as the target entries cover.
+func (d *bandData) noiseIn(a, b float64) spread {
+	s := d.noise.spread(a, b, d.slowS)
+	s.variance *= d.noise.seconds / d.target.seconds
+	return s
+}
+
+// above is the spread of the target power a·ref + b·out if there is no target.
+func (d *bandData) above(a, b float64) spread {
+	return d.noiseIn(a, b).plus(d.noise.spread(a, b, d.slowS))
+}
+
+// slowBlock is the block length of the noise level, seconds: of the mean of
+// the bands with the shortest entries, each over its own mean. It is 0 for
+// noise whose level is steady. Gusts raise all bands together and show here
+// when single bands hide them; they cancel in the noise reduction, but not in
+// what is left when the noise is taken from the target.
+func slowBlock(parts []*part) float64 {
+	hop := math.Inf(1)
+	for _, p := range parts {
+		if len(p.at) > 0 && p.refMean > 0 {
+			hop = math.Min(hop, p.hopS)
+		}
+	}
+	var z []float64
+	var at []int
+	for _, p := range parts {
+		if p.hopS > hop*(1+1e-9) || !(p.refMean > 0) {
+			continue
+		}
+		if z == nil {
+			z, at = make([]float64, len(p.at)), p.at
+		}
+		for i := range min(len(z), len(p.ref)) {
+			z[i] += p.ref[i]/p.refMean - 1
+		}
+	}
+	rho, n := neighbours(z, at)
+	if rho < steadyNoise {
+		return 0
+	}
+	return hop * float64(andrews(rho, n))
+}
+
+// steadyNoise is the autocorrelation of neighbouring entries up to which the
+// noise level counts as steady. Half overlapped Hann windows have 0.03.
+const steadyNoise = 0.3
+
 // selected is the interval about centre of an estimate with the influences a
-// and b of reference and output in the target entries, c and e in the noise
-// entries. It reaches further on the side to which the choice of bands with
+// and b of the target powers at reference and output, c and e of the noise
+// powers. It reaches further on the side to which the choice of bands with
 // significant power has drawn the estimate: by the overshoot of that power,
 // times its correlation with the estimate.
 func (d *bandData) selected(centre, a, b, c, e float64) *[2]float64 {
@@ -171,14 +241,15 @@ func (d *bandData) selected(centre, a, b, c, e float64) *[2]float64 {
 	ci := interval(centre, s)
 	ref, out := d.powers()
 	for _, gate := range []struct{ ref, out float64 }{{1 / ref, 0}, {0, 1 / out}} {
-		t := d.spread(gate.ref, gate.out, -gate.ref, -gate.out)
-		if !(t.variance > 0) || !(s.variance > 0) {
+		t := d.spread(gate.ref, gate.out, 0, 0)
+		u := d.above(gate.ref, gate.out)
+		if !(t.variance > 0) || !(s.variance > 0) || !(u.variance > 0) {
 			continue
 		}
-		both := d.spread(a+gate.ref, b+gate.out, c-gate.ref, e-gate.out)
+		both := d.spread(a+gate.ref, b+gate.out, c, e)
 		rho := (both.variance - s.variance - t.variance) / (2 * math.Sqrt(s.variance*t.variance))
 		rho = math.Max(-1, math.Min(1, rho))
-		far := dbPerNeper * math.Abs(rho) * overshoot(1/math.Sqrt(t.variance), studentT(t.dof)) * math.Sqrt(s.variance)
+		far := dbPerNeper * math.Abs(rho) * overshoot(1/math.Sqrt(u.variance), studentT(u.dof)) * math.Sqrt(s.variance)
 		if rho > 0 {
 			ci[0] -= far
 		} else {
