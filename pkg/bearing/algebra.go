@@ -82,7 +82,7 @@ func (m *mat4) invert(n int, lift []float64) (inv mat4, ok bool) {
 	for i := range n {
 		for j := range n {
 			a[i][j] = m[i][j]
-			if lift != nil && i < len(lift) && j < len(lift) {
+			if i < len(lift) && j < len(lift) {
 				a[i][j] += trace * lift[i] * lift[j]
 			}
 		}
@@ -142,13 +142,11 @@ func (m *mat4) invert(n int, lift []float64) (inv mat4, ok bool) {
 			inv[i][j] *= d[i] * d[j]
 		}
 	}
-	if lift != nil {
-		// Take the lifted part out again: inv -= lift·liftᵀ/trace, exact where m
-		// has no part along lift.
-		for i := range lift {
-			for j := range lift {
-				inv[i][j] -= lift[i] * lift[j] / trace
-			}
+	// Take the lifted part out again: inv -= lift·liftᵀ/trace, exact where m has
+	// no part along lift.
+	for i := range lift {
+		for j := range lift {
+			inv[i][j] -= lift[i] * lift[j] / trace
 		}
 	}
 	return inv, true

@@ -178,6 +178,12 @@ func (l *looker) isDiffuse(cos, sin []float64) bool {
 	return both < 0.5*alone
 }
 
+// lead says how far one sighting comes before another in the same window.
+type lead struct {
+	a, b   int
+	amount float64
+}
+
 // look finds the sources of the window that is loaded. The reason is empty if
 // there are any.
 func (l *looker) look(window int, active bool) (found []sighting, reason string) {
@@ -217,8 +223,8 @@ func (l *looker) look(window int, active bool) (found []sighting, reason string)
 		places = append(places, p)
 		l.apportion(len(places))
 		searched = false
-		if len(places) > 1 {
-			// The earlier ones again, without the new one.
+		// All of them again, without the others and without what is diffuse.
+		for range 2 {
 			for i := range places {
 				l.putBack(i, 1)
 				places[i] = l.refine(places[i], l.cos[i], l.sin[i], z)
@@ -234,6 +240,9 @@ func (l *looker) look(window int, active bool) (found []sighting, reason string)
 	}
 	_, rest := l.grid.best(l.space, places, l.radius)
 	rest = math.Max(rest, 2*l.noise)
+	l.places = places
+	l.leads = l.leads[:0]
+	var index []int
 	for j, p := range places {
 		l.putBack(j, 1)
 		l.aligned(z, l.rr, l.ri, l.cos[j], l.sin[j])
@@ -242,10 +251,17 @@ func (l *looker) look(window int, active bool) (found []sighting, reason string)
 		g.groups = make([]groupSum, l.groups)
 		_, g.score, g.info = l.climb(p, g.groups)
 		g.value = l.response(l.cos[j], l.sin[j])
+		g.blur = l.blur(j)
 		g.fit = l.agreement(j)
 		l.putBack(j, -1)
 		if _, ok := g.info.invert(l.space.dim, l.space.lift(p)); ok && g.value > rest/2 {
 			found = append(found, g)
+			index = append(index, j)
+		}
+	}
+	for a := range found {
+		for b := a + 1; b < len(found); b++ {
+			l.leads = append(l.leads, lead{a, b, l.lead(index[a], index[b])})
 		}
 	}
 	if len(found) == 0 {
@@ -253,6 +269,104 @@ func (l *looker) look(window int, active bool) (found []sighting, reason string)
 	}
 	return found, ""
 }
+
+// blur measures the reflections that lie in with source j, which is loaded and
+// put back: epsilon² · sum over lines and pairs of w c, with epsilon² the power
+// of the coherence left without the source, less what chance leaves, re that of
+// the source. A perturbation of relative size epsilon that were alike at all
+// lines would shift the maximum by the square root of blur/information.
+func (l *looker) blur(j int) float64 {
+	K := l.bins
+	var rest, own, weight float64
+	left := make([]float64, K)
+	for c, q := range l.pairs {
+		if !l.alive[q.i] || !l.alive[q.j] {
+			continue
+		}
+		for k := range K {
+			re := l.rr[c*K+k] - l.amp[j][k]*l.cos[j][c*K+k]
+			im := l.ri[c*K+k] + l.amp[j][k]*l.sin[j][c*K+k]
+			left[k] += (re*re + im*im) / float64(l.alivePairs)
+		}
+	}
+	for k, w := range l.w {
+		if w == 0 {
+			continue
+		}
+		c := l.amp[j][k]
+		chance := math.Max(0, l.level[k]*l.level[k]-c*c) / math.Max(l.snap[k], 1)
+		rest += w * (left[k] - chance)
+		own += w * c * c
+		weight += w * c * float64(l.alivePairs)
+	}
+	if !(own > 0) {
+		return 0
+	}
+	return math.Max(0, rest/own) * weight
+}
+
+// lead is -1..1: how far source i comes before source j, from the correlation
+// of the beams towards them. A reflection is a late copy of its source, so that
+// the correlation stands on one side of lag 0 only; two sources that each have
+// reflections give both sides.
+func (l *looker) lead(i, j int) float64 {
+	K := l.bins
+	g := l.grid
+	clear(g.re)
+	clear(g.im)
+	M := len(l.space.at)
+	l.space.delays(l.tau, l.places[i])
+	ti := append([]float64(nil), l.tau...)
+	l.space.delays(l.tau, l.places[j])
+	tj := l.tau
+	// Sum over microphones of conj(a_i,m) gamma_mn a_j,n with
+	// a = e^{-j omega tau}.
+	add := func(re, im []float64, sign, d float64) {
+		s, c := math.Sincos(l.omega[0] * d)
+		ss, sc := math.Sincos((l.omega[1] - l.omega[0]) * d)
+		for k := range K {
+			x, y := re[k], sign*im[k]
+			g.re[g.from+k] += float32(x*c - y*s)
+			g.im[g.from+k] += float32(x*s + y*c)
+			c, s = c*sc-s*ss, c*ss+s*sc
+		}
+	}
+	for c, q := range l.pairs {
+		if !l.alive[q.i] || !l.alive[q.j] {
+			continue
+		}
+		re, im := l.gr[c*K:c*K+K], l.gi[c*K:c*K+K]
+		add(re, im, 1, ti[q.i]-tj[q.j])
+		add(re, im, -1, ti[q.j]-tj[q.i])
+	}
+	none := make([]float64, K)
+	for m := range M {
+		if l.alive[m] {
+			add(l.level, none, 1, ti[m]-tj[m])
+		}
+	}
+	g.fft.Inverse(g.x, g.re, g.im)
+	n := len(g.x)
+	fine := float64(l.set.rate) * float64(n) / float64(l.set.size)
+	from := int(math.Max(leadFrom, 1/l.set.ToHz) * fine)
+	to := min(int(leadTo*fine), n/4)
+	var before, after float64
+	for s := from; s < to; s++ {
+		// The first beam ahead puts the peak at a negative lag.
+		before = math.Max(before, math.Abs(float64(g.x[n-s])))
+		after = math.Max(after, math.Abs(float64(g.x[s])))
+	}
+	if before+after == 0 {
+		return 0
+	}
+	return (before - after) / (before + after)
+}
+
+// Lags between which a reflection is looked for, seconds.
+const (
+	leadFrom = 0.0008
+	leadTo   = 0.015
+)
 
 // agreement returns, for each microphone, how well its pairs agree with source
 // j: the part of their coherence that is in phase, 1 at best; -1 for a dead

@@ -29,7 +29,6 @@ type Finder struct {
 	sectionPower [][]float64
 	section      int // sections complete
 	inSection    int // frames in the section under way
-	skip         int // frames of hop still to come before the next transform
 
 	late, prev, smooth, weight []float64
 	micLevel                   []float64 // sum of frame powers
@@ -40,6 +39,7 @@ type Finder struct {
 
 	windows   []Window
 	sightings []sighting
+	leads     []lead // between sightings
 	detailed  int
 	reasons   map[string]int
 	closed    bool
@@ -259,6 +259,10 @@ func (f *Finder) endWindow(first, count int) {
 	if len(found) > 0 {
 		addTo(f.picture, f.look.firstMap)
 		f.pictureWindows++
+		for _, d := range f.look.leads {
+			d.a, d.b = d.a+len(f.sightings), d.b+len(f.sightings)
+			f.leads = append(f.leads, d)
+		}
 		for _, s := range found {
 			s.level = mean
 			inv, _ := s.info.invert(f.look.unknowns(), f.space.lift(s.at))

@@ -13,6 +13,10 @@ import (
 // Constants of bringing windows together.
 const (
 	priorFreedom   = 4.0  // weight of the theoretical error against the observed spread, in windows
+	leadLimit      = 0.06 // mean lead from which the later of two is a reflection
+	blurLine       = 0.15 // the same for a line rig, to which floor and ceiling are near the source
+	blurFactor     = 0.08 // of the shift that reflections alike at all lines would make
+	blurFreedom    = 4.0  // degrees of freedom where they are the larger part
 	reverbFactor   = 1.0  // of the spread over frequency beyond that of noise, for early reflections
 	distanceSigma  = 4.0  // standard errors of the curvature from which a distance is given
 	leastShare     = 0.12 // a source holds at least this part of what the first one holds
@@ -100,6 +104,7 @@ func (f *Finder) sources(taken []bool, moving [][]int) []Source {
 	type group struct {
 		members []int
 		moves   bool
+		late    bool
 		weight  float64
 	}
 	var groups []group
@@ -111,7 +116,7 @@ func (f *Finder) sources(taken []bool, moving [][]int) []Source {
 		return sum
 	}
 	for _, m := range moving {
-		groups = append(groups, group{m, true, weigh(m)})
+		groups = append(groups, group{members: m, moves: true, weight: weigh(m)})
 	}
 	radius := math.Min(math.Max(f.look.radius/2, 0.12), 0.2)
 	cells := f.cells(radius/4, anyActive, taken)
@@ -152,18 +157,74 @@ func (f *Finder) sources(taken []bool, moving [][]int) []Source {
 		for _, s := range members {
 			taken[s] = true
 		}
-		groups = append(groups, group{slices.Clone(members), false, weigh(members)})
+		groups = append(groups, group{members: slices.Clone(members), weight: weigh(members)})
 	}
 	sort.SliceStable(groups, func(a, b int) bool { return groups[a].weight > groups[b].weight })
 	total := 0.0
 	for _, g := range groups {
 		total += g.weight
 	}
+	// A reflection ranks behind its source, however loud.
+	owner := make([]int, len(f.sightings))
+	for i := range owner {
+		owner[i] = -1
+	}
+	for n, g := range groups {
+		for _, m := range g.members {
+			owner[m] = n
+		}
+	}
+	late := make([]bool, len(groups))
+	type pair struct{ a, b int }
+	sum, square, count := map[pair]float64{}, map[pair]float64{}, map[pair]float64{}
+	for _, d := range f.leads {
+		a, b, v := owner[d.a], owner[d.b], d.amount
+		if a < 0 || b < 0 || a == b {
+			continue
+		}
+		if a > b {
+			a, b, v = b, a, -v
+		}
+		sum[pair{a, b}] += v
+		square[pair{a, b}] += v * v
+		count[pair{a, b}]++
+	}
+	for a := range groups {
+		for b := a + 1; b < len(groups); b++ {
+			n := count[pair{a, b}]
+			if n < 3 {
+				continue
+			}
+			mean := sum[pair{a, b}] / n
+			sd := math.Sqrt(math.Max(0, square[pair{a, b}]/n-mean*mean) / (n - 1))
+			if math.Abs(mean) < leadLimit || math.Abs(mean) < 2.5*sd {
+				continue
+			}
+			if mean > 0 {
+				late[b] = true
+			} else if groups[b].weight > 0.35*groups[a].weight {
+				late[a] = true
+			}
+		}
+	}
+	ordered := make([]group, 0, len(groups))
+	for _, behind := range []bool{false, true} {
+		for n, g := range groups {
+			if late[n] == behind {
+				g.late = behind
+				ordered = append(ordered, g)
+			}
+		}
+	}
+	groups = ordered
 	need := min(3, max(1, len(f.windows)/3))
 	var out []Source
 	for i, g := range groups {
-		if len(out) == f.set.Sources || (i > 0 && g.weight < leastShare*groups[0].weight) {
+		if len(out) == f.set.Sources {
 			break
+		}
+		if i > 0 && g.weight < leastShare*groups[0].weight {
+			continue
 		}
 		if windowsOf(f.sightings, g.members) < need || g.weight <= 0 {
 			continue
@@ -173,6 +234,7 @@ func (f *Finder) sources(taken []bool, moving [][]int) []Source {
 			continue
 		}
 		src.Moves = g.moves
+		src.Reflection = g.late
 		src.Share = g.weight / total
 		if g.moves {
 			src.StandardError = math.Max(src.StandardError, f.scatter(g.members))
@@ -500,8 +562,27 @@ func (f *Finder) spread(out *settled, members []int, weights []float64, total, i
 			cov.addScaled(1, &extra)
 		}
 	}
-	out.cov = cov
 	out.freedom = priorFreedom + nu
+	// Reflections that lie in with the source: their mean over the windows,
+	// which more windows do not lessen.
+	var blurred mat4
+	factor := blurFactor
+	if dim == 1 {
+		factor = blurLine
+	}
+	for i, m := range members {
+		s := &f.sightings[m]
+		one, ok := s.info.invert(n, f.space.lift(s.at))
+		if ok {
+			blurred.addScaled(share*weights[i]*factor*factor*s.blur/math.Max(windows, 1e-9), &one)
+		}
+	}
+	before := cov[0][0]
+	cov.addScaled(1, &blurred)
+	if blurred[0][0] > before {
+		out.freedom = math.Min(out.freedom, blurFreedom)
+	}
+	out.cov = cov
 	if lines := G - 1; ratio > 2 && lines > 1 {
 		out.freedom = math.Min(out.freedom, lines)
 	}

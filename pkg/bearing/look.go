@@ -36,6 +36,7 @@ type sighting struct {
 	groups []groupSum
 	active bool
 	level  float64 // mean power of the window
+	blur   float64 // coherent sound that no source explains: see (*looker).blur
 }
 
 // looker analyses windows one at a time. It holds scratch memory.
@@ -59,8 +60,10 @@ type looker struct {
 	coh        []float64
 	snap       []float64 // effective number of averaged frames
 	smooth     []float64
-	power      []float64 // [m*K+k], smoothed
-	total      float64   // weight of the steered response over the grid's pairs, per bin sum
+	power      []float64 // [m*K+k], 1/sqrt of the smoothed power
+	level      []float64 // power of the line itself re the smoothed one, mean over the living
+	levelMean  []float64
+	total      float64 // weight of the steered response over the grid's pairs, per bin sum
 	pairTotal  float64
 	noise      float64     // standard deviation of the steered response without a source
 	cos, sin   [][]float64 // phases of each source found, [j][p*K+k]
@@ -70,7 +73,13 @@ type looker struct {
 	jac        [][maxDims]float64
 	val, slope []float64
 	bend       []float64
-	diffuse    []float64 // Gamma, [p*K+k]
+	diffuse    []float64 // Gamma, coherence of diffuse sound, [p*K+k]
+	field      []float64 // coherent part of diffuse sound, [k]
+	fieldNorm  []float64 // mean over the living pairs of Gamma²
+	fieldPart  []float64 // mean over the living pairs of Gamma·Re gamma
+	scratch    []float64
+	places     []place   // of the last look
+	leads      []lead    // between its sightings
 	firstMap   []float64 // steered response before any source was taken out
 }
 
@@ -96,7 +105,7 @@ func newLooker(s *space, set *settings, pairs []pairIndex) (*looker, error) {
 	for _, p := range []*[]float64{&l.gr, &l.gi, &l.rr, &l.ri, &l.mag, &l.phat, &l.diffuse} {
 		*p = make([]float64, n)
 	}
-	for _, p := range []*[]float64{&l.coh, &l.snap, &l.smooth, &l.w} {
+	for _, p := range []*[]float64{&l.coh, &l.snap, &l.smooth, &l.w, &l.level, &l.levelMean, &l.field, &l.fieldNorm, &l.fieldPart, &l.scratch} {
 		*p = make([]float64, K)
 	}
 	l.power = make([]float64, len(s.at)*K)
@@ -179,6 +188,16 @@ func (l *looker) load(sum, noise *crossSum) string {
 			l.snap[k] = math.Max(1, sum.weight[k]*sum.weight[k]/sum.weightSq[k]/1.056)
 		}
 	}
+	clear(l.level)
+	for m := range M {
+		if !l.alive[m] {
+			continue
+		}
+		for k, f := range l.power[m*K : m*K+K] {
+			l.level[k] += sum.auto[m*K+k] * f * f / float64(living)
+		}
+	}
+	boxSmooth(l.levelMean, l.level, l.weightSmoothing())
 	clear(l.coh)
 	l.alivePairs = 0
 	for p, q := range l.pairs {
@@ -203,11 +222,40 @@ func (l *looker) load(sum, noise *crossSum) string {
 			e := re*re + im*im
 			gr[k], gi[k] = re, im
 			mag[k] = math.Sqrt(e)
-			l.coh[k] += e
 		}
 	}
 	if l.alivePairs == 0 {
 		return "silence"
+	}
+	// What diffuse sound could explain is left out of the first search: the
+	// reverberation of a room is coherent at low frequencies, and looks there
+	// like a wave from abeam.
+	clear(l.fieldNorm)
+	clear(l.fieldPart)
+	for p, q := range l.pairs {
+		if !l.alive[q.i] || !l.alive[q.j] {
+			continue
+		}
+		gamma, gr := l.diffuse[p*K:p*K+K], l.gr[p*K:p*K+K]
+		for k, v := range gamma {
+			l.fieldNorm[k] += v * v / float64(l.alivePairs)
+			l.fieldPart[k] += v * gr[k] / float64(l.alivePairs)
+		}
+	}
+	for p, q := range l.pairs {
+		rr, ri := l.rr[p*K:p*K+K], l.ri[p*K:p*K+K]
+		copy(rr, l.gr[p*K:p*K+K])
+		copy(ri, l.gi[p*K:p*K+K])
+		if !l.alive[q.i] || !l.alive[q.j] {
+			continue
+		}
+		gamma := l.diffuse[p*K : p*K+K]
+		for k := range rr {
+			if l.alivePairs > 2 {
+				rr[k] -= l.fieldPart[k] / math.Max(l.fieldNorm[k], 1e-9) * gamma[k]
+			}
+			l.coh[k] += rr[k]*rr[k] + ri[k]*ri[k]
+		}
 	}
 	for k := range K {
 		l.coh[k] = l.coh[k]/float64(l.alivePairs) - 1/math.Max(l.snap[k], 1)
@@ -248,8 +296,6 @@ func (l *looker) load(sum, noise *crossSum) string {
 			}
 		}
 	}
-	copy(l.rr, l.gr)
-	copy(l.ri, l.gi)
 	return ""
 }
 
@@ -298,22 +344,33 @@ func (l *looker) aligned(dst, xr, xi, cos, sin []float64) {
 // over: more for few pairs, whose single lines say little.
 func (l *looker) ampSmoothing() int { return min(8, 1+12/l.alivePairs) }
 
-// apportion fits the coherent part of each of the first n sources to every
-// line, not negative, by least squares over the pairs (coordinate descent),
-// and leaves the rest in rr, ri.
+// weightSmoothing is how many lines to each side the coherence behind the
+// weights is averaged over.
+func (l *looker) weightSmoothing() int { return 6 }
+
+// apportion fits the coherent part of each of the first n sources, and of
+// diffuse sound, to every line, none negative, by least squares over the pairs
+// (coordinate descent), and leaves the rest in rr, ri. The part of diffuse
+// sound is fitted to smoothed lines: its spectrum is smooth, and over single
+// lines it would take too much from the waves.
 func (l *looker) apportion(n int) {
 	K := l.bins
-	copy(l.rr, l.gr)
-	copy(l.ri, l.gi)
-	if n == 0 {
-		return
-	}
 	z := make([][]float64, n)
+	across := make([][]float64, n) // mean over the pairs of Gamma·cos
 	gram := make([][][]float64, n)
 	for j := range n {
-		z[j] = make([]float64, K)
+		z[j], across[j] = make([]float64, K), make([]float64, K)
 		l.aligned(z[j], l.gr, l.gi, l.cos[j], l.sin[j])
 		gram[j] = make([][]float64, n)
+		for c, q := range l.pairs {
+			if !l.alive[q.i] || !l.alive[q.j] {
+				continue
+			}
+			cos, gamma := l.cos[j][c*K:c*K+K], l.diffuse[c*K:c*K+K]
+			for k, v := range gamma {
+				across[j][k] += v * cos[k] / float64(l.alivePairs)
+			}
+		}
 		for i := range j {
 			g := make([]float64, K)
 			for c, q := range l.pairs {
@@ -330,38 +387,79 @@ func (l *looker) apportion(n int) {
 			gram[j][i], gram[i][j] = g, g
 		}
 	}
-	for k := range K {
+	// First all of it on smoothed lines, for the diffuse part.
+	amp := make([]float64, n)
+	clear(l.field)
+	if l.alivePairs > 2 {
+		zs := make([][]float64, n)
 		for j := range n {
-			l.amp[j][k] = 0
+			zs[j] = make([]float64, K)
+			boxSmooth(zs[j], z[j], fieldSmoothing)
 		}
+		boxSmooth(l.scratch, l.fieldPart, fieldSmoothing)
+		for k := range K {
+			clear(amp)
+			field := 0.0
+			for range 24 {
+				for j := range n {
+					v := zs[j][k] - across[j][k]*field
+					for i := range n {
+						if i != j {
+							v -= gram[j][i][k] * amp[i]
+						}
+					}
+					amp[j] = math.Min(math.Max(v, 0), 1)
+				}
+				v := l.scratch[k]
+				for j := range n {
+					v -= across[j][k] * amp[j]
+				}
+				field = math.Min(math.Max(v/math.Max(l.fieldNorm[k], 1e-9), 0), 1)
+			}
+			l.field[k] = field
+		}
+	}
+	for k := range K {
+		clear(amp)
 		for range 12 {
 			for j := range n {
-				v := z[j][k]
+				v := z[j][k] - across[j][k]*l.field[k]
 				for i := range n {
 					if i != j {
-						v -= gram[j][i][k] * l.amp[i][k]
+						v -= gram[j][i][k] * amp[i]
 					}
 				}
-				l.amp[j][k] = math.Min(math.Max(v, 0), 1)
+				amp[j] = math.Min(math.Max(v, 0), 1)
 			}
-			if n == 1 {
+			if n <= 1 {
 				break
 			}
 		}
+		for j := range n {
+			l.amp[j][k] = amp[j]
+		}
 	}
-	for j := range n {
-		for c := range l.pairs {
-			q := l.pairs[c]
-			if !l.alive[q.i] || !l.alive[q.j] {
-				continue
-			}
-			for k := range K {
-				l.rr[c*K+k] -= l.amp[j][k] * l.cos[j][c*K+k]
-				l.ri[c*K+k] += l.amp[j][k] * l.sin[j][c*K+k]
+	for c, q := range l.pairs {
+		rr, ri := l.rr[c*K:c*K+K], l.ri[c*K:c*K+K]
+		copy(rr, l.gr[c*K:c*K+K])
+		copy(ri, l.gi[c*K:c*K+K])
+		if !l.alive[q.i] || !l.alive[q.j] {
+			continue
+		}
+		gamma := l.diffuse[c*K : c*K+K]
+		for k := range rr {
+			rr[k] -= l.field[k] * gamma[k]
+			for j := range n {
+				rr[k] -= l.amp[j][k] * l.cos[j][c*K+k]
+				ri[k] += l.amp[j][k] * l.sin[j][c*K+k]
 			}
 		}
 	}
 }
+
+// fieldSmoothing is how many lines to each side the part of diffuse sound is
+// averaged over.
+const fieldSmoothing = 8
 
 // putBack adds (sign 1) or takes out (sign -1) source j to what is left.
 func (l *looker) putBack(j int, sign float64) {
@@ -386,7 +484,7 @@ func (l *looker) putBack(j int, sign float64) {
 // with n the number of independent frames, so that its bend is the information
 // of the stochastic Cramér–Rao bound [Stoica & Nehorai 1990].
 func (l *looker) likelihood(z []float64) {
-	boxSmooth(l.smooth, z, l.ampSmoothing())
+	boxSmooth(l.smooth, z, l.weightSmoothing())
 	living := 0
 	for _, a := range l.alive {
 		if a {
@@ -397,8 +495,11 @@ func (l *looker) likelihood(z []float64) {
 	share := M * (M - 1) / 2 / float64(l.alivePairs)
 	frames := float64(l.set.hop) / float64(l.set.size) * 1.056 * hannEfficiency * share
 	for k, c := range l.smooth {
+		// Both smoothed alike, so that chance in the source's own spectrum falls
+		// out of the ratio.
+		c /= math.Max(l.levelMean[k], 1e-300)
 		// Coherence that noise alone would show counts for nothing.
-		least := 1 / math.Sqrt(2*float64(l.alivePairs)*math.Max(l.snap[k], 1)*float64(2*l.ampSmoothing()+1))
+		least := 1 / math.Sqrt(2*float64(l.alivePairs)*math.Max(l.snap[k], 1)*float64(2*l.weightSmoothing()+1))
 		l.w[k] = 0
 		if c > least && l.snap[k] > 0 {
 			c = math.Min(c, maxCoherent)

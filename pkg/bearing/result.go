@@ -48,6 +48,8 @@ type Source struct {
 	// Moves says that the direction drifts by more than its window errors
 	// explain: then the track is the better answer.
 	Moves bool
+	// Reflection says that the sound is a late copy of another source's.
+	Reflection bool
 	// Stationary says that the source never rose above its own noise floor: a
 	// steady sound, like a fan or a noise generator.
 	Stationary bool

@@ -90,14 +90,6 @@ func (s *space) unit(y [3]float64) rig.Point {
 	return u.Add(s.side.Scale(math.Sqrt(1 - sum)))
 }
 
-// cosines returns what the rig can measure of a unit vector.
-func (s *space) cosines(u rig.Point) (y [3]float64) {
-	for a := range s.dim {
-		y[a] = u.Dot(s.basis[a])
-	}
-	return y
-}
-
 // clamp brings p back to possible cosines and curvatures.
 func (s *space) clamp(p place, maxKappa float64) place {
 	sum := 0.0
@@ -114,7 +106,7 @@ func (s *space) clamp(p place, maxKappa float64) place {
 	return p
 }
 
-// distance between two sets of cosines.
+// apart returns the distance between two sets of cosines.
 func (s *space) apart(a, b [3]float64) float64 {
 	sum := 0.0
 	for i := range s.dim {
