@@ -292,6 +292,14 @@ func (v *coverage) check(t *testing.T) {
 	if 2*v.flagged > v.all {
 		t.Errorf("%d of %d bands flagged, want at most half", v.flagged, v.all)
 	}
+	for b, band := range v.bands {
+		if d := v.difference[b] / float64(v.count[b]); math.Abs(d) > 0.05 {
+			t.Errorf("band %g Hz: noise reduction is %.3f dB off in the mean", band.NominalHz, d)
+		}
+		if d := v.targetOffset[b] / float64(v.targetCount[b]); math.Abs(d) > 0.05 {
+			t.Errorf("band %g Hz: target change is %.3f dB off in the mean", band.NominalHz, d)
+		}
+	}
 	if unflagged := float64(v.all-v.flagged) / 200; unflagged < 15 {
 		t.Errorf("%.1f unflagged bands a take, want at least 15", unflagged)
 	}

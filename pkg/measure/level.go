@@ -17,30 +17,19 @@ const fullScale = 32767.0 / 32768
 // total adds up one channel.
 type total struct {
 	frames      int64
-	sum, square float64
+	sum, square [2]float64 // of even and of odd frames
 	peak        float32
 	run         int64 // samples at full scale just before
 	clipped     int64
 }
 
 // add takes samples and returns -1, or the place of the first one that is not
-// a finite number. The order of the sums depends on len(x) alone.
+// a finite number. Even and odd frames are added up apart, which is faster, and
+// in the order of frames, so the sums do not depend on how a signal is cut.
 func (t *total) add(x []float32) int {
-	var s0, s1, q0, q1 float64
 	var top uint32 // magnitudes compare like their bits; no number is above infinity
-	y := x
-	for ; len(y) >= 2; y = y[2:] {
-		top = max(top, math.Float32bits(y[0])&^(1<<31), math.Float32bits(y[1])&^(1<<31))
-		a, b := float64(y[0]), float64(y[1])
-		s0 += a
-		s1 += b
-		q0 += a * a
-		q1 += b * b
-	}
-	for _, v := range y {
+	for _, v := range x {
 		top = max(top, math.Float32bits(v)&^(1<<31))
-		s0 += float64(v)
-		q0 += float64(v) * float64(v)
 	}
 	peak := math.Float32frombits(top)
 	if !(peak <= math.MaxFloat32) {
@@ -52,13 +41,32 @@ func (t *total) add(x []float32) int {
 	}
 	if peak >= fullScale {
 		t.clip(x)
-	} else {
+	} else if len(x) > 0 {
 		t.run = 0
 	}
-	t.frames += int64(len(x))
-	t.sum += s0 + s1
-	t.square += q0 + q1
 	t.peak = max(t.peak, peak)
+	y := x
+	if t.frames%2 == 1 && len(y) > 0 {
+		v := float64(y[0])
+		t.sum[1] += v
+		t.square[1] += v * v
+		y = y[1:]
+	}
+	s0, s1, q0, q1 := t.sum[0], t.sum[1], t.square[0], t.square[1]
+	for ; len(y) >= 2; y = y[2:] {
+		a, b := float64(y[0]), float64(y[1])
+		s0 += a
+		s1 += b
+		q0 += a * a
+		q1 += b * b
+	}
+	if len(y) == 1 {
+		v := float64(y[0])
+		s0 += v
+		q0 += v * v
+	}
+	t.sum, t.square = [2]float64{s0, s1}, [2]float64{q0, q1}
+	t.frames += int64(len(x))
 	return -1
 }
 
@@ -97,8 +105,8 @@ func (t *total) level() Level {
 	l := Level{Frames: t.frames, ClippedFrames: t.clipped, AWeightedDBFS: math.NaN(), RMSDBFS: math.Inf(-1)}
 	l.PeakDBFS = audio.AmplitudeDB(float64(t.peak))
 	if t.frames > 0 {
-		l.DC = t.sum / float64(t.frames)
-		l.RMSDBFS = audio.PowerDB(2 * t.square / float64(t.frames))
+		l.DC = (t.sum[0] + t.sum[1]) / float64(t.frames)
+		l.RMSDBFS = audio.PowerDB(2 * (t.square[0] + t.square[1]) / float64(t.frames))
 	}
 	return l
 }

@@ -7,7 +7,8 @@ import (
 )
 
 // Totals is a sink that measures every channel as a whole, without bands: the
-// channels of a take as they were recorded. Create one with NewTotals.
+// channels of a take as they were recorded, to the same bits for blocks of any
+// size. Create one with NewTotals.
 type Totals struct{ each []total }
 
 // NewTotals returns totals of that many channels.
