@@ -28,6 +28,9 @@ func IsolatedGain(s Isolated) (*Gains, error) {
 		return nil, fmt.Errorf("measure: %d bands of isolated noise, %d of isolated target",
 			len(s.Noise.Reference.Tracks), len(s.Target.Reference.Tracks))
 	}
+	if count := min(len(s.Noise.Microphones), len(s.Target.Microphones)); s.Named >= count && s.Named >= 0 {
+		return nil, fmt.Errorf("measure: named microphone %d: there are %d", s.Named+1, count)
+	}
 	g := &Gains{Best: -1, named: s.Named, isolated: true}
 	for b := range s.Noise.Reference.Tracks {
 		nr, no, err := align(s.Noise.Reference.Tracks[b], s.Noise.Output.Tracks[b])

@@ -171,7 +171,7 @@ func (g *Gains) cells(bands []int, target bool, a, c, slowS float64) (spread, bo
 	if !(width > 0) {
 		return spread{}, false
 	}
-	count := int(last/width) + 1
+	count := int(last/width+1e-6) + 1
 	sum := make([]float64, count)
 	seen := make([]int, count)
 	own, n := make([]float64, count), make([]int, count)
@@ -180,7 +180,7 @@ func (g *Gains) cells(bands []int, target bool, a, c, slowS float64) (spread, bo
 		clear(own)
 		clear(n)
 		for i, j := range p.at {
-			cell := int((p.startS + float64(j)*p.hopS) / width)
+			cell := int((p.startS+float64(j)*p.hopS)/width + 1e-6)
 			own[cell] += a*(p.ref[i]-p.refMean) + c*(p.out[i]-p.outMean)
 			n[cell]++
 		}

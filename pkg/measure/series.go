@@ -14,7 +14,7 @@ type Stretch struct{ From, To float64 }
 // AES17. Tracks need not come from a Meter: whoever fills one sets all fields.
 type Track struct {
 	Band    Band
-	StartS  float64 // start of entry 0, seconds from the first frame
+	StartS  float64 // start of entry 0, seconds from the first frame, not negative
 	HopS    float64 // from entry to entry, above 0
 	LengthS float64 // time that one entry covers, at least HopS/2
 	Power   []float32
@@ -70,9 +70,12 @@ func (t *Track) inside(stretches []Stretch) []int {
 	}
 	in := make([]bool, len(t.Power))
 	for _, s := range stretches {
-		first := int(math.Ceil((s.From - edgeS - t.StartS) / t.HopS))
-		last := int(math.Floor((s.To + edgeS - t.LengthS - t.StartS) / t.HopS))
-		for j := max(first, 0); j <= min(last, len(in)-1); j++ {
+		first := math.Max(math.Ceil((s.From-edgeS-t.StartS)/t.HopS), 0)
+		last := math.Min(math.Floor((s.To+edgeS-t.LengthS-t.StartS)/t.HopS), float64(len(in)-1))
+		if !(first <= last) {
+			continue // nothing inside, or not a stretch
+		}
+		for j := int(first); j <= int(last); j++ {
 			in[j] = true
 		}
 	}
@@ -85,9 +88,12 @@ func (t *Track) inside(stretches []Stretch) []int {
 	return at
 }
 
+// mostHops bounds how many hops after the first frame a track may start.
+const mostHops = 1e7
+
 // validate reports a track that cannot be worked with.
 func (t *Track) validate() error {
-	if !(t.HopS > 0) || !(t.LengthS >= t.HopS/2) || math.IsInf(t.HopS+t.LengthS, 0) || math.IsNaN(t.StartS) || math.IsInf(t.StartS, 0) {
+	if !(t.HopS > 0) || !(t.LengthS >= t.HopS/2) || !(t.StartS >= 0) || math.IsInf(t.HopS+t.LengthS, 0) || !(t.StartS <= mostHops*t.HopS) {
 		return fmt.Errorf("band %g Hz: entries start at %g s, every %g s, %g s long", t.Band.NominalHz, t.StartS, t.HopS, t.LengthS)
 	}
 	for j, p := range t.Power {
