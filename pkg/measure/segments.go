@@ -28,6 +28,7 @@ const (
 	leastTotalS   = 1.5  // of all noise stretches together
 	leastSoundS   = 0.5  // of all target stretches together
 	tellTale      = 0.3  // part of the expected reduction that noise must show
+	likeNoise     = 0.7  // part of the noise's reduction from which on loud parts are noise too
 )
 
 // SegmentOptions guide FindSegments. The zero value is useful.
@@ -56,7 +57,8 @@ type Segments struct {
 // Above 5 dB the target sounds, until the level falls below 3 dB. Noise is what
 // stays below 3 dB for at least 0.5 s, 0.4 s before and 0.5 s after anything
 // louder. A take whose level never rises is noise only if the beam reduces it,
-// else neither. It returns an error for series that do not belong together.
+// else neither; louder parts that the beam lowers like the noise (gusts, knocks)
+// are no target. It returns an error for series that do not belong together.
 func FindSegments(reference, output *Series, o SegmentOptions) (*Segments, error) {
 	if err := (Pair{Reference: reference, Output: output}).validate("segments"); err != nil {
 		return nil, err
@@ -387,5 +389,31 @@ func (e *envelope) judge(noise, target []Stretch, o SegmentOptions) *Segments {
 	if known && quiet < tellTale*o.ExpectedReductionDB && quiet-loud < tellTale*o.ExpectedReductionDB {
 		return none(fmt.Sprintf("the quiet parts are lowered by %.1f dB and the loud ones by %.1f dB, where noise would be lowered by about %.1f dB: the target may never stop, or the noise comes from its direction", quiet, loud, o.ExpectedReductionDB))
 	}
+	if excess, same := e.excess(noise, target); same >= 1 && excess > likeNoise*same {
+		return &Segments{Noise: noise, NoTarget: NoTarget,
+			Explanation: fmt.Sprintf("no target: the beam lowers the louder parts by %.1f dB, like the noise (%.1f dB): gusts or knocks from elsewhere, or the beam points beside the target", excess, same)}
+	}
 	return &Segments{Noise: noise, Target: target}
+}
+
+// excess is how much lower what the target stretches hold above the noise is in
+// the output than at the reference, dB, and the same of the noise, both as
+// means over the bands that stand 3 dB and more above the noise; 0, 0 where
+// none does.
+func (e *envelope) excess(noise, target []Stretch) (loud, quiet float64) {
+	n, count := len(e.level), 0.0
+	for b := range e.out {
+		nr, no := e.meanIn(e.ref[b], noise, 0, n), e.meanIn(e.out[b], noise, 0, n)
+		ar, ao := e.meanIn(e.ref[b], target, 0, n), e.meanIn(e.out[b], target, 0, n)
+		if !(no > 0) || !(nr > 0) || ao < 2*no || !(ar > nr) {
+			continue
+		}
+		loud += audio.PowerDB((ar - nr) / (ao - no))
+		quiet += audio.PowerDB(nr / no)
+		count++
+	}
+	if count == 0 {
+		return 0, 0
+	}
+	return loud / count, quiet / count
 }

@@ -187,3 +187,27 @@ func TestSegmentsDoNotBiasTheNoise(t *testing.T) {
 		t.Errorf("noise in the stretches chosen is %.3f dB off", d)
 	}
 }
+
+func TestGustsAreNoTarget(t *testing.T) {
+	// Noise that swells by 10 dB for two seconds, twice, and no target.
+	r := testRoom
+	n := 1 << 18
+	fade := make([]float32, n)
+	for i := range fade {
+		at := float64(i) / float64(r.rate)
+		fade[i] = 1
+		for _, from := range []float64{4, 11} {
+			if x := (at - from) / 2; x > 0 && x < 1 {
+				fade[i] += float32(2.5 * math.Sin(math.Pi*x))
+			}
+		}
+	}
+	p, _ := r.pair(t, r.maker(n).take(12, nil, fade))
+	s, err := FindSegments(p.Reference, p.Output, SegmentOptions{ExpectedReductionDB: expected(t, r)})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if s.NoTarget != NoTarget || len(s.Target) != 0 || length(s.Noise) < 5 {
+		t.Errorf("noise %v, target %v: %s", s.Noise, s.Target, s.Explanation)
+	}
+}
