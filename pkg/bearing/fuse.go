@@ -12,17 +12,18 @@ import (
 
 // Constants of bringing windows together.
 const (
-	priorFreedom   = 4.0  // weight of the theoretical error against the observed spread, in windows
-	leadLimit      = 0.06 // mean lead from which the later of two is a reflection
-	blurLine       = 0.15 // the same for a line rig, to which floor and ceiling are near the source
-	blurFactor     = 0.08 // of the shift that reflections alike at all lines would make
-	blurFreedom    = 4.0  // degrees of freedom where they are the larger part
-	reverbFactor   = 1.0  // of the spread over frequency beyond that of noise, for early reflections
-	distanceSigma  = 4.0  // standard errors of the curvature from which a distance is given
-	leastShare     = 0.12 // a source holds at least this part of what the first one holds
-	movingSpan     = 0.20 // radians from which a track moves, if its errors are small against it
-	misfitRatio    = 0.45 // agreement of a microphone, re the middle one, from which it is a misfit
-	inactiveWeight = 0.3  // of windows that do not rise above the floor, where others do
+	priorFreedom     = 4.0  // weight of the theoretical error against the observed spread, in windows
+	leadLimit        = 0.06 // mean lead from which the later of two is a reflection
+	blurLine         = 0.15 // the same for a line rig, to which floor and ceiling are near the source
+	blurFactor       = 0.07 // of the shift that reflections alike at all lines would make
+	blurFreedom      = 4.0  // degrees of freedom where they are the larger part
+	reverbFactor     = 1.0  // of the spread over frequency beyond that of noise, for early reflections
+	distanceSigma    = 3.0  // standard errors of the curvature from which a distance is given
+	leastShare       = 0.12 // a source holds at least this part of what the first one holds
+	movingSpan       = 0.20 // radians from which a track moves, if its errors are small against it
+	misfitConfidence = 0.4  // most that is trusted while a microphone fits no direction
+	misfitRatio      = 0.55 // agreement of a microphone, re the middle one, from which it is a misfit
+	inactiveWeight   = 0.3  // of windows that do not rise above the floor, where others do
 )
 
 // peakConfidence is 0..1 from the height of a peak and that of the best
@@ -34,8 +35,10 @@ func peakConfidence(value, rest float64) float64 {
 	return math.Min(1, math.Max(0, (value-rest)/value))
 }
 
-// agreementFactor is 1 if the microphones agree with the direction and falls
-// with the share of coherence that does not fit it.
+// agreementFactor is 1 if the microphones agree with the direction. It falls
+// with the share of coherence that does not fit it, and if one microphone fits
+// far worse than the middle one: then that one is swapped or late, and has
+// pulled the direction its way.
 func agreementFactor(fit []float32) float64 {
 	var all []float64
 	for _, v := range fit {
@@ -50,7 +53,13 @@ func agreementFactor(fit []float32) float64 {
 	for _, v := range all {
 		sum += math.Max(v, 0)
 	}
-	return math.Min(1, sum/float64(len(all))/0.7)
+	slices.Sort(all)
+	middle := all[len(all)/2]
+	if middle <= 0 {
+		return 0
+	}
+	even := math.Min(1, math.Max(0, all[0])/(0.8*middle))
+	return math.Min(1, sum/float64(len(all))/0.7) * even * math.Sqrt(even)
 }
 
 // weightOf is how much a sighting counts in finding the sources.
@@ -90,7 +99,13 @@ func (f *Finder) summarise() *Result {
 		}
 	}
 	r.Sources = f.sources(taken, moving)
-	r.Findings = f.findings(r)
+	bad := f.misfits()
+	for i := range r.Sources {
+		if len(bad) > 0 {
+			r.Sources[i].Confidence = math.Min(r.Sources[i].Confidence, misfitConfidence)
+		}
+	}
+	r.Findings = f.findings(r, bad)
 	return r
 }
 
@@ -663,7 +678,7 @@ func (f *Finder) drawPicture() Picture {
 }
 
 // findings says what a person should know.
-func (f *Finder) findings(r *Result) []Finding {
+func (f *Finder) findings(r *Result, bad []int) []Finding {
 	var out []Finding
 	if len(r.Sources) == 0 {
 		out = append(out, Finding{Code: CodeNoDirection, Message: f.whyNone()})
@@ -672,9 +687,9 @@ func (f *Finder) findings(r *Result) []Finding {
 		out = append(out, Finding{Code: CodeDeadMic, Mics: dead,
 			Message: fmt.Sprintf("%s more than 30 dB below the middle one: left out of the search", names(dead))})
 	}
-	if bad := f.misfits(); len(bad) > 0 {
+	if len(bad) > 0 {
 		out = append(out, Finding{Code: CodeMisfit, Mics: bad,
-			Message: fmt.Sprintf("%s not agree with the direction that the others share: swapped, late, turned round or misplaced", strings.Replace(names(bad), " lies", " does", 1))})
+			Message: fmt.Sprintf("%s out of the direction that the others share: swapped, late, turned round or misplaced", names(bad))})
 	}
 	for i, s := range r.Sources {
 		if s.Moves {
@@ -752,8 +767,15 @@ func (f *Finder) misfits() []int {
 		return nil
 	}
 	sum, weight := make([]float64, M), make([]float64, M)
+	last := -1
 	for i := range f.sightings {
 		s := &f.sightings[i]
+		// Only the strongest of a window: what a misplaced microphone adds looks
+		// like further sources, and those fit it.
+		if s.window == last {
+			continue
+		}
+		last = s.window
 		for m, v := range s.fit {
 			if v >= -0.99 {
 				sum[m] += float64(v) * s.value
