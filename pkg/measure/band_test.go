@@ -37,6 +37,17 @@ func TestThirdOctaveFrequenciesAreBaseTen(t *testing.T) {
 	}
 }
 
+func TestBandRatiosAreBaseTen(t *testing.T) {
+	// G1: IEC 61260-1:2014, 5.2: G, G^(1/3), G^(1/2), G^(1/6), within 1e-6.
+	a, b := third(0, 1000), third(1, 1250)
+	c, d := octave(0, 1000), octave(1, 2000)
+	for i, got := range []float64{d.CentreHz / c.CentreHz, b.CentreHz / a.CentreHz, c.HighHz / c.CentreHz, a.HighHz / a.CentreHz} {
+		if want := []float64{1.995262, 1.258925, 1.412538, 1.122018}[i]; math.Abs(got-want) > 1e-6 {
+			t.Errorf("ratio %d is %.7f, want %.6f", i, got, want)
+		}
+	}
+}
+
 func TestOctaveFrequenciesAreBaseTen(t *testing.T) {
 	// G3: IEC 61260-1:2014, 5.2 to 5.5.
 	want := map[float64][3]float64{

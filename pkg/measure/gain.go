@@ -122,10 +122,12 @@ func (d *bandData) powers() (ref, out float64) {
 	return d.target.refMean - d.noise.refMean, d.target.outMean - d.noise.outMean
 }
 
-// part is one band over the entries of one kind of stretch.
+// part is one band over the entries of one kind of stretch. It shares the
+// powers of its tracks: a long take has them once.
 type part struct {
-	at       []int
-	ref, out []float64
+	runs     []run     // entries that follow each other
+	count    int       // entries in all
+	ref, out []float32 // of the whole tracks
 	refMean  float64
 	outMean  float64
 	seconds  float64 // of time covered
@@ -133,36 +135,47 @@ type part struct {
 	startS   float64 // centre of entry 0
 }
 
+// run is the entries from..to, half-open.
+type run struct{ from, to int }
+
 func newPart(ref, out Track, at []int) part {
-	p := part{at: at, hopS: ref.HopS, startS: ref.StartS + ref.LengthS/2}
-	p.ref = make([]float64, len(at))
-	p.out = make([]float64, len(at))
-	for i, j := range at {
-		p.ref[i] = float64(ref.Power[j])
-		p.out[i] = float64(out.Power[j])
-		p.refMean += p.ref[i]
-		p.outMean += p.out[i]
-		if i == 0 || at[i-1] != j-1 {
+	p := part{count: len(at), ref: ref.Power, out: out.Power, hopS: ref.HopS, startS: ref.StartS + ref.LengthS/2}
+	for _, j := range at {
+		p.refMean += float64(ref.Power[j])
+		p.outMean += float64(out.Power[j])
+		if k := len(p.runs) - 1; k >= 0 && p.runs[k].to == j {
+			p.runs[k].to++
+		} else {
+			p.runs = append(p.runs, run{j, j + 1})
 			p.seconds += ref.LengthS - ref.HopS
 		}
 		p.seconds += ref.HopS
 	}
-	n := float64(len(at))
-	p.refMean /= n
-	p.outMean /= n
+	p.refMean /= float64(len(at))
+	p.outMean /= float64(len(at))
 	return p
 }
 
-func (p *part) short() bool { return len(p.at) < LeastEntries || p.seconds < LeastSeconds }
+func (p *part) short() bool { return p.count < LeastEntries || p.seconds < LeastSeconds }
+
+// residuals is a·ref + b·out of every entry, less the mean, and where the
+// entries stand.
+func (p *part) residuals(a, b float64) (z []float64, at []int) {
+	z, at = make([]float64, 0, p.count), make([]int, 0, p.count)
+	for _, r := range p.runs {
+		for j := r.from; j < r.to; j++ {
+			z = append(z, a*(float64(p.ref[j])-p.refMean)+b*(float64(p.out[j])-p.outMean))
+			at = append(at, j)
+		}
+	}
+	return z, at
+}
 
 // spread is the spread of the mean of a·ref + b·out, with blocks of at least
 // slowS seconds.
 func (p *part) spread(a, b, slowS float64) spread {
-	z := make([]float64, len(p.at))
-	for i := range z {
-		z[i] = a*(p.ref[i]-p.refMean) + b*(p.out[i]-p.outMean)
-	}
-	return meanSpread(z, p.at, int(math.Round(slowS/p.hopS)))
+	z, at := p.residuals(a, b)
+	return meanSpread(z, at, int(math.Round(slowS/p.hopS)))
 }
 
 func number(v float64) *float64 { return &v }

@@ -17,7 +17,7 @@ type MeterOptions struct {
 	// PerChannel keeps a series of every used channel too.
 	PerChannel bool
 	// SeriesBytes bounds the memory of the mean series, ChannelBytes that of
-	// all channel series together; 0 is 16 MiB and 48 MiB. When one is used up,
+	// all channel series together; 0 is 6 MiB and 48 MiB. When one is used up,
 	// neighbouring entries are merged in pairs and entries last twice as long.
 	SeriesBytes, ChannelBytes int
 }
@@ -89,7 +89,7 @@ func NewMeter(format audio.Format, o MeterOptions) (*Meter, error) {
 		m.slot[ch] = i
 	}
 	if o.SeriesBytes <= 0 {
-		o.SeriesBytes = 16 << 20
+		o.SeriesBytes = 6 << 20
 	}
 	if o.ChannelBytes <= 0 {
 		o.ChannelBytes = 48 << 20

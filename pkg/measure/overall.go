@@ -164,8 +164,8 @@ func (g *Gains) cells(bands []int, target bool, a, c, slowS float64) (spread, bo
 	for _, b := range bands {
 		p := pick(b)
 		width = math.Max(width, p.hopS)
-		if len(p.at) > 0 {
-			last = math.Max(last, p.startS+float64(p.at[len(p.at)-1])*p.hopS)
+		if k := len(p.runs) - 1; k >= 0 {
+			last = math.Max(last, p.startS+float64(p.runs[k].to-1)*p.hopS)
 		}
 	}
 	if !(width > 0) {
@@ -179,9 +179,10 @@ func (g *Gains) cells(bands []int, target bool, a, c, slowS float64) (spread, bo
 		p := pick(b)
 		clear(own)
 		clear(n)
-		for i, j := range p.at {
+		z, at := p.residuals(a, c)
+		for i, j := range at {
 			cell := int((p.startS+float64(j)*p.hopS)/width + 1e-6)
-			own[cell] += a*(p.ref[i]-p.refMean) + c*(p.out[i]-p.outMean)
+			own[cell] += z[i]
 			n[cell]++
 		}
 		for i := range sum {

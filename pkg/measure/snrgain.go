@@ -88,7 +88,7 @@ func (d *bandData) gain(band Band) BandGain {
 	g := BandGain{Band: band}
 	n, a := &d.noise, &d.target
 	switch {
-	case len(n.at) == 0:
+	case n.count == 0:
 		g.NoiseReason = NoNoise
 	case n.short():
 		g.NoiseReason = TooShort
@@ -112,7 +112,7 @@ func (d *bandData) gain(band Band) BandGain {
 		g.Flags = append(g.Flags, Sparse)
 	}
 	switch {
-	case len(a.at) == 0:
+	case a.count == 0:
 		g.TargetReason = NoTarget
 	case a.short():
 		g.TargetReason = TooShort
@@ -203,7 +203,7 @@ func (d *bandData) above(a, b float64) spread {
 func slowBlock(parts []*part) float64 {
 	hop := math.Inf(1)
 	for _, p := range parts {
-		if len(p.at) > 0 && p.refMean > 0 {
+		if p.count > 0 && p.refMean > 0 {
 			hop = math.Min(hop, p.hopS)
 		}
 	}
@@ -213,11 +213,13 @@ func slowBlock(parts []*part) float64 {
 		if p.hopS > hop*(1+1e-9) || !(p.refMean > 0) {
 			continue
 		}
+		own, places := p.residuals(1/p.refMean, 0)
 		if z == nil {
-			z, at = make([]float64, len(p.at)), p.at
+			z, at = own, places
+			continue
 		}
-		for i := range min(len(z), len(p.ref)) {
-			z[i] += p.ref[i]/p.refMean - 1
+		for i := range min(len(z), len(own)) {
+			z[i] += own[i]
 		}
 	}
 	rho, n := neighbours(z, at)
