@@ -72,6 +72,9 @@
 // [Huber 1964] P. J. Huber, Robust estimation of a location parameter, Ann.
 // Math. Statist. 35, p. 73.
 //
+// [Satterthwaite 1946] F. E. Satterthwaite, An approximate distribution of
+// estimates of variance components, Biometrics Bulletin 2, p. 110.
+//
 // [Welch 1967] P. D. Welch, The use of fast Fourier transform for the
 // estimation of power spectra, IEEE Trans. Audio Electroacoust. 15, p. 70.
 //

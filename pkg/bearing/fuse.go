@@ -14,7 +14,7 @@ import (
 const (
 	priorFreedom     = 4.0  // weight of the theoretical error against the observed spread, in windows
 	leadLimit        = 0.06 // mean lead from which the later of two is a reflection
-	blurLine         = 0.15 // the same for a line rig, to which floor and ceiling are near the source
+	blurLine         = 0.20 // the same for a line rig, to which floor and ceiling are near the source
 	blurFactor       = 0.07 // of the shift that reflections alike at all lines would make
 	blurFreedom      = 4.0  // degrees of freedom where they are the larger part
 	reverbFactor     = 1.0  // of the spread over frequency beyond that of noise, for early reflections
@@ -577,7 +577,9 @@ func (f *Finder) spread(out *settled, members []int, weights []float64, total, i
 			cov.addScaled(1, &extra)
 		}
 	}
-	out.freedom = priorFreedom + nu
+	// Of a mean of a known variance and an observed one, weights priorFreedom
+	// and nu [Satterthwaite 1946].
+	out.freedom = (priorFreedom + nu) * (priorFreedom + nu) / math.Max(nu, 0.5)
 	// Reflections that lie in with the source: their mean over the windows,
 	// which more windows do not lessen.
 	var blurred mat4
