@@ -14,15 +14,15 @@ import (
 const (
 	segmentLowHz  = 250  // nominal mid-band frequencies that are looked at
 	segmentHighHz = 5000 //
-	smoothS       = 0.3  // of the level
+	smoothS       = 0.15 // of the level
 	floorS        = 1.0  // smoothing under the search for the floor
 	floorWindowS  = 300  // the floor is found anew at least this often
 	floorRiseDB   = 10   // and does not rise further above the lowest of the take
 	onDB          = 5    // above the floor: the target sounds
 	quietDB       = 3    // below this it may not
-	guardBeforeS  = 0.4  // between noise and what rises above quietDB
-	guardAfterS   = 0.5  // the same after it: reverberation
-	leastNoiseS   = 0.5  // of one noise stretch
+	guardBeforeS  = 0.2  // between noise and what rises above quietDB
+	guardAfterS   = 0.25 // the same after it: reverberation
+	leastNoiseS   = 0.25 // of one noise stretch
 	leastTargetS  = 0.15 // of one target stretch
 	bridgeS       = 0.5  // shorter pauses stay in the target
 	leastTotalS   = 1.5  // of all noise stretches together
@@ -53,9 +53,9 @@ type Segments struct {
 // from the one-third octaves of reference and output.
 //
 // The power of each band of the output from 250 Hz to 5 kHz is divided by its
-// own floor, the quotients are averaged over the bands and smoothed over 0.3 s.
+// own floor, the quotients are averaged over the bands and smoothed over 0.15 s.
 // Above 5 dB the target sounds, until the level falls below 3 dB. Noise is what
-// stays below 3 dB for at least 0.5 s, 0.4 s before and 0.5 s after anything
+// stays below 3 dB for at least 0.25 s, 0.2 s before and 0.25 s after anything
 // louder. A take whose level never rises is noise only if the beam reduces it,
 // else neither; louder parts that the beam lowers like the noise (gusts, knocks)
 // are no target. It returns an error for series that do not belong together.
@@ -371,7 +371,7 @@ func length(list []Stretch) float64 {
 // judge decides what the stretches found may be used for.
 func (e *envelope) judge(noise, target []Stretch, o SegmentOptions) *Segments {
 	if s := length(noise); s < leastTotalS {
-		return none(fmt.Sprintf("no noise-only part: %.1f s lie near the floor for at least %.1f s at a time, %.1f s are needed", s, leastNoiseS, leastTotalS))
+		return none(fmt.Sprintf("no noise-only part: %.1f s lie near the floor for at least %.2f s at a time, %.1f s are needed", s, leastNoiseS, leastTotalS))
 	}
 	quiet := e.reduction(noise)
 	known := o.ExpectedReductionDB >= 1
