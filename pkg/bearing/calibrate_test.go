@@ -130,7 +130,7 @@ func TestDryDirectionReachesTheBoundAndKnowsItsError(t *testing.T) {
 	}{{"line", lineMics(8, 0.04)}, {"ring", ringMics(8, 0.06)}, {"solid", solidMics(0.08)}}
 	snrs := []float64{1}
 	if long() {
-		snrs = []float64{0.316, 1, 10, 100}
+		snrs = []float64{0.316, 1, 10, 100, 1000}
 	}
 	const n = 200
 	for _, g := range rigs {

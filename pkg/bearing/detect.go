@@ -25,7 +25,8 @@ func (l *looker) unknowns() int {
 func (l *looker) refine(p place, cos, sin, z []float64) place {
 	n := l.unknowns()
 	longest := l.radius / 3
-	for round := range 3 {
+	for range 3 {
+		begin := p
 		l.phases(cos, sin, p)
 		l.aligned(z, l.rr, l.ri, cos, sin)
 		l.likelihood(z)
@@ -49,18 +50,22 @@ func (l *looker) refine(p place, cos, sin, z []float64) place {
 				break
 			}
 			p, value, slope, bend = next, v, s, b
-			if moved < 1e-7 {
+			if moved < settledStep {
 				break
 			}
 		}
-		if round == 2 {
-			break
+		if l.space.apart(begin.y, p.y) < 10*settledStep {
+			break // the weights would not change
 		}
 	}
 	l.phases(cos, sin, p)
 	l.aligned(z, l.rr, l.ri, cos, sin)
 	return p
 }
+
+// settledStep is a step in cosines that is not worth another: 0.001°, and
+// what is left of the slope is kept with the sighting.
+const settledStep = 2e-5
 
 // clampPlace brings p back to what is possible; the curvature may fall a
 // little below zero, so that that of a far source is not biased.
@@ -225,10 +230,16 @@ func (l *looker) look(window int, active bool) (found []sighting, reason string)
 		searched = false
 		// All of them again, without the others and without what is diffuse.
 		for range 2 {
+			moved := 0.0
 			for i := range places {
+				before := places[i].y
 				l.putBack(i, 1)
 				places[i] = l.refine(places[i], l.cos[i], l.sin[i], z)
 				l.apportion(len(places))
+				moved = math.Max(moved, l.space.apart(before, places[i].y))
+			}
+			if moved < 50*settledStep {
+				break
 			}
 		}
 	}
@@ -295,7 +306,8 @@ func (l *looker) blur(j int) float64 {
 		}
 		c := l.amp[j][k]
 		chance := math.Max(0, l.level[k]*l.level[k]-c*c) / math.Max(l.snap[k], 1)
-		rest += w * (left[k] - chance)
+		// Below -27 dB lie the ends of the frames and the tables, not the room.
+		rest += w * (left[k] - 1.2*chance - 2e-3*c*c)
 		own += w * c * c
 		weight += w * c * float64(l.alivePairs)
 	}

@@ -15,7 +15,7 @@ const (
 	priorFreedom     = 4.0  // weight of the theoretical error against the observed spread, in windows
 	leadLimit        = 0.06 // mean lead from which the later of two is a reflection
 	blurLine         = 0.20 // the same for a line rig, to which floor and ceiling are near the source
-	blurFactor       = 0.07 // of the shift that reflections alike at all lines would make
+	blurFactor       = 0.055 // of the shift that reflections alike at all lines would make
 	blurFreedom      = 4.0  // degrees of freedom where they are the larger part
 	reverbFactor     = 1.0  // of the spread over frequency beyond that of noise, for early reflections
 	distanceSigma    = 3.0  // standard errors of the curvature from which a distance is given
@@ -590,9 +590,23 @@ func (f *Finder) spread(out *settled, members []int, weights []float64, total, i
 	for i, m := range members {
 		s := &f.sightings[m]
 		one, ok := s.info.invert(n, f.space.lift(s.at))
-		if ok {
-			blurred.addScaled(share*weights[i]*factor*factor*s.blur/math.Max(windows, 1e-9), &one)
+		if !ok {
+			continue
 		}
+		// Floor and ceiling move the cone angle, not the curvature.
+		for a := range maxDims {
+			for b := range maxDims {
+				fa, fb := factor, factor
+				if a == dim {
+					fa = blurFactor
+				}
+				if b == dim {
+					fb = blurFactor
+				}
+				one[a][b] *= fa * fb
+			}
+		}
+		blurred.addScaled(share*weights[i]*s.blur/math.Max(windows, 1e-9), &one)
 	}
 	before := cov[0][0]
 	cov.addScaled(1, &blurred)

@@ -77,7 +77,6 @@ type looker struct {
 	field      []float64 // coherent part of diffuse sound, [k]
 	fieldNorm  []float64 // mean over the living pairs of Gamma²
 	fieldPart  []float64 // mean over the living pairs of Gamma·Re gamma
-	scratch    []float64
 	places     []place   // of the last look
 	leads      []lead    // between its sightings
 	firstMap   []float64 // steered response before any source was taken out
@@ -105,7 +104,7 @@ func newLooker(s *space, set *settings, pairs []pairIndex) (*looker, error) {
 	for _, p := range []*[]float64{&l.gr, &l.gi, &l.rr, &l.ri, &l.mag, &l.phat, &l.diffuse} {
 		*p = make([]float64, n)
 	}
-	for _, p := range []*[]float64{&l.coh, &l.snap, &l.smooth, &l.w, &l.level, &l.levelMean, &l.field, &l.fieldNorm, &l.fieldPart, &l.scratch} {
+	for _, p := range []*[]float64{&l.coh, &l.snap, &l.smooth, &l.w, &l.level, &l.levelMean, &l.field, &l.fieldNorm, &l.fieldPart} {
 		*p = make([]float64, K)
 	}
 	l.power = make([]float64, len(s.at)*K)
@@ -391,30 +390,45 @@ func (l *looker) apportion(n int) {
 	amp := make([]float64, n)
 	clear(l.field)
 	if l.alivePairs > 2 {
-		zs := make([][]float64, n)
-		for j := range n {
-			zs[j] = make([]float64, K)
-			boxSmooth(zs[j], z[j], fieldSmoothing)
+		// Left and right sides of the equations are summed over the same lines.
+		sum := func(x []float64) []float64 {
+			y := make([]float64, K)
+			boxSmooth(y, x, fieldSmoothing)
+			return y
 		}
-		boxSmooth(l.scratch, l.fieldPart, fieldSmoothing)
+		zs, as := make([][]float64, n), make([][]float64, n)
+		gs := make([][][]float64, n)
+		for j := range n {
+			zs[j], as[j] = sum(z[j]), sum(across[j])
+			gs[j] = make([][]float64, n)
+			for i := range j {
+				gs[j][i] = sum(gram[j][i])
+				gs[i][j] = gs[j][i]
+			}
+		}
+		part, norm := sum(l.fieldPart), sum(l.fieldNorm)
 		for k := range K {
 			clear(amp)
 			field := 0.0
 			for range 24 {
+				last := field
 				for j := range n {
-					v := zs[j][k] - across[j][k]*field
+					v := zs[j][k] - as[j][k]*field
 					for i := range n {
 						if i != j {
-							v -= gram[j][i][k] * amp[i]
+							v -= gs[j][i][k] * amp[i]
 						}
 					}
-					amp[j] = math.Min(math.Max(v, 0), 1)
+					amp[j] = math.Min(math.Max(v, 0), 2)
 				}
-				v := l.scratch[k]
+				v := part[k]
 				for j := range n {
-					v -= across[j][k] * amp[j]
+					v -= as[j][k] * amp[j]
 				}
-				field = math.Min(math.Max(v/math.Max(l.fieldNorm[k], 1e-9), 0), 1)
+				field = math.Min(math.Max(v/math.Max(norm[k], 1e-9), 0), 1)
+				if math.Abs(field-last) < 1e-5 {
+					break
+				}
 			}
 			l.field[k] = field
 		}
@@ -429,7 +443,8 @@ func (l *looker) apportion(n int) {
 						v -= gram[j][i][k] * amp[i]
 					}
 				}
-				amp[j] = math.Min(math.Max(v, 0), 1)
+				// The power of the line itself is the most there can be.
+				amp[j] = math.Min(math.Max(v, 0), l.level[k])
 			}
 			if n <= 1 {
 				break
