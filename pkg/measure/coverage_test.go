@@ -253,7 +253,7 @@ func TestIntervalsHoldTheExpectedGain(t *testing.T) {
 
 func TestIntervalCoverage(t *testing.T) {
 	if os.Getenv("ALIDADE_LONG") != "1" {
-		t.Skip("counts the coverage of intervals over 600 takes, two minutes: set ALIDADE_LONG=1")
+		t.Skip("counts the coverage of intervals over 600 takes, a minute and a half: set ALIDADE_LONG=1")
 	}
 	for _, c := range conditions {
 		t.Run(c.name, func(t *testing.T) {

@@ -41,7 +41,9 @@
 //
 // Noise whose level wanders (gusts) is seen across all bands at once; then
 // target figures take blocks that long, and stretches of fewer than eight
-// blocks are flagged. With gusts of 3 dB over half a second the unflagged
+// blocks are flagged. Where means over four or eight batches in the order of
+// time show that a band drifts, the batches give its spread, and four are
+// flagged. With gusts of 3 dB over half a second the unflagged
 // intervals hold the expected target change in 88 % only: longer stretches help.
 //
 // A moving-block bootstrap was not taken: the coverage of the delta method,

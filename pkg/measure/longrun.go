@@ -29,8 +29,44 @@ type spread struct {
 // tails than a normal distribution has, by 2/(kurtosis-1) [Box 1953].
 //
 // Least is a block length that is known to be needed, 0 for none. More than
-// mostUnits values are added up in runs of neighbours first.
+// mostUnits values are added up in runs of neighbours first. Where the values
+// drift, so that the means of four or eight batches in the order of time differ
+// significantly more than the kernel tells, the batches count instead.
 func meanSpread(z []float64, at []int, least int) spread {
+	s := kernelSpread(z, at, least)
+	if !(s.variance > 0) {
+		return s
+	}
+	kernel := s
+	n := len(z)
+	for _, batches := range []int{4, 8} {
+		if n < 8*batches {
+			break
+		}
+		square, from := 0.0, 0
+		for b := range batches {
+			to, sum := (b+1)*n/batches, 0.0
+			for _, v := range z[from:to] {
+				sum += v
+			}
+			square += sum * sum
+			from = to
+		}
+		c := float64(batches)
+		v := square * c / (c - 1) / (float64(n) * float64(n))
+		limit := distuv.F{D1: c - 1, D2: kernel.dof}.Quantile(driftLevel)
+		if v > limit*kernel.variance && v > s.variance {
+			s = spread{v, c - 1, n / batches}
+		}
+	}
+	return s
+}
+
+// driftLevel is the level of the test for drift.
+const driftLevel = 0.95
+
+// kernelSpread is meanSpread by Bartlett's kernel alone.
+func kernelSpread(z []float64, at []int, least int) spread {
 	if len(z) < 2 {
 		return spread{math.Inf(1), 0, 1}
 	}
