@@ -40,7 +40,7 @@ type verb struct {
 
 // verbs are the commands in the order in which --help lists them.
 func verbs() []verb {
-	return []verb{schemaVerb()}
+	return []verb{demoVerb(), steerVerb(), simulateVerb(), schemaVerb()}
 }
 
 // The exit codes.

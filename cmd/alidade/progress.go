@@ -41,7 +41,7 @@ func (silent) finish()                   {}
 // nothing and a long one is not silent for minutes.
 const (
 	lineEvery = 5 * time.Second
-	lineGap   = time.Second
+	lineGap   = 2 * time.Second
 	lineShare = 10 // per cent
 )
 

@@ -8,14 +8,16 @@ import (
 
 	"alidade/pkg/report"
 	"alidade/pkg/rig"
+	"alidade/pkg/scenario"
 )
 
 const schemaHelp = `alidade schema: the JSON Schema of a file the program reads or writes
 
 Usage
-  alidade schema rig|report
+  alidade schema rig|scenario|report
 
   rig       the rig file: where the microphones stand, how they are calibrated
+  scenario  the scenario file of alidade simulate
   report    the report of alidade steer, <track>.report.json
 
 An editor that knows JSON Schema completes and checks YAML with it too.
@@ -43,7 +45,7 @@ type schema struct {
 }
 
 func schemas() []schema {
-	return []schema{{"rig", rig.Schema}, {"report", report.Schema}}
+	return []schema{{"rig", rig.Schema}, {"scenario", scenario.Schema}, {"report", report.Schema}}
 }
 
 func runSchema(u *ui, c *cli.Context) error {

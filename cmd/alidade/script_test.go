@@ -1,17 +1,25 @@
 package main
 
 import (
+	"encoding/binary"
 	"errors"
 	"fmt"
 	"io/fs"
+	"math"
+	"math/rand/v2"
 	"os"
 	"os/exec"
 	"path/filepath"
 	"strconv"
 	"strings"
+	"syscall"
 	"testing"
+	"time"
 
 	"github.com/rogpeppe/go-internal/testscript"
+
+	"alidade/pkg/audio"
+	"alidade/pkg/wav"
 )
 
 // The program under test is this test binary under another name, run as a
@@ -30,12 +38,20 @@ func TestMain(m *testing.M) {
 //	only NAME...        the folder . holds these entries and no other, hidden
 //	                    ones included
 //	size FILE N         the file has N bytes
+//	take FILE C N       makes a take of C channels and N frames, 48 kHz, 24 bit:
+//	                    seeded noise, and a sound from 60° on a line of 40 mm
+//	                    spacing in its last two thirds
+//	silence FILE C N    makes such a take of silence, without filling the disk
+//	signal SIG N GLOB COMMAND...
+//	                    runs the command, sends it the signal once a file that
+//	                    matches is there, and expects exit code N
 func TestScripts(t *testing.T) {
 	testscript.Run(t, testscript.Params{
 		Dir:                 "testdata",
 		RequireExplicitExec: true,
 		Cmds: map[string]func(*testscript.TestScript, bool, []string){
 			"exits": exits, "within": withinColumns, "only": only, "size": size,
+			"take": makeTake, "silence": makeSilence, "signal": signalled,
 		},
 		Condition: func(cond string) (bool, error) {
 			switch cond {
@@ -117,5 +133,107 @@ func size(ts *testscript.TestScript, neg bool, args []string) {
 	ts.Check(err)
 	if info.Size() != want {
 		ts.Fatalf("%s has %d bytes, want %d", args[0], info.Size(), want)
+	}
+}
+
+// numbersOf parses the arguments FILE C N.
+func numbersOf(ts *testscript.TestScript, neg bool, args []string) (path string, channels, frames int) {
+	if neg || len(args) != 3 {
+		ts.Fatalf("usage: FILE CHANNELS FRAMES")
+	}
+	channels, err := strconv.Atoi(args[1])
+	ts.Check(err)
+	frames, err = strconv.Atoi(args[2])
+	ts.Check(err)
+	return ts.MkAbs(args[0]), channels, frames
+}
+
+func makeTake(ts *testscript.TestScript, neg bool, args []string) {
+	path, channels, frames := numbersOf(ts, neg, args)
+	ts.Check(os.MkdirAll(filepath.Dir(path), 0o777))
+	file, err := os.Create(path)
+	ts.Check(err)
+	defer file.Close()
+	w, err := wav.NewWriter(file, wav.Format{Rate: 48000, Channels: channels, Encoding: wav.PCM24}, wav.Option{})
+	ts.Check(err)
+	rng := rand.New(rand.NewPCG(uint64(channels), uint64(frames)))
+	b := audio.NewBlock(channels, frames)
+	var phase [24]float64
+	for k := range phase {
+		phase[k] = 2 * math.Pi * rng.Float64()
+	}
+	for ch := range channels {
+		x := b.Channel(ch)
+		// Arrival at a microphone (ch - (channels-1)/2)·40 mm along x.
+		late := -(float64(ch) - float64(channels-1)/2) * 0.04 * math.Cos(math.Pi/3) / 343.2
+		for i := range x {
+			v := 0.02 * rng.NormFloat64()
+			if i > frames/3 {
+				for k, p := range phase {
+					v += 0.01 * math.Sin(2*math.Pi*150*math.Pow(1.2, float64(k))*(float64(i)/48000-late)+p)
+				}
+			}
+			x[i] = float32(v)
+		}
+	}
+	ts.Check(w.Write(b))
+	ts.Check(w.Close())
+}
+
+func makeSilence(ts *testscript.TestScript, neg bool, args []string) {
+	path, channels, frames := numbersOf(ts, neg, args)
+	file, err := os.Create(path)
+	ts.Check(err)
+	defer file.Close()
+	// The header says what the hole after it is.
+	bytes := 3 * channels * frames
+	head := binary.LittleEndian.AppendUint32([]byte("RIFF"), uint32(36+bytes))
+	head = binary.LittleEndian.AppendUint32(append(head, "WAVEfmt "...), 16)
+	head = binary.LittleEndian.AppendUint16(head, 1)
+	head = binary.LittleEndian.AppendUint16(head, uint16(channels))
+	head = binary.LittleEndian.AppendUint32(head, 48000)
+	head = binary.LittleEndian.AppendUint32(head, uint32(48000*3*channels))
+	head = binary.LittleEndian.AppendUint16(head, uint16(3*channels))
+	head = binary.LittleEndian.AppendUint16(head, 24)
+	head = binary.LittleEndian.AppendUint32(append(head, "data"...), uint32(bytes))
+	_, err = file.Write(head)
+	ts.Check(err)
+	ts.Check(file.Truncate(int64(len(head) + bytes)))
+}
+
+func signalled(ts *testscript.TestScript, neg bool, args []string) {
+	signals := map[string]syscall.Signal{"INT": syscall.SIGINT, "TERM": syscall.SIGTERM, "KILL": syscall.SIGKILL}
+	if neg || len(args) < 4 || signals[args[0]] == 0 {
+		ts.Fatalf("usage: signal INT|TERM|KILL N GLOB COMMAND...")
+	}
+	want, err := strconv.Atoi(args[1])
+	ts.Check(err)
+	path, err := exec.LookPath(args[3])
+	ts.Check(err)
+	cmd := exec.Command(path, args[4:]...)
+	cmd.Dir = ts.MkAbs(".")
+	var stderr strings.Builder
+	cmd.Stderr = &stderr
+	ts.Check(cmd.Start())
+	ended := make(chan error, 1)
+	go func() { ended <- cmd.Wait() }()
+	deadline := time.After(time.Minute)
+	for sent := false; ; {
+		select {
+		case err = <-ended:
+			if got := cmd.ProcessState.ExitCode(); !sent || got != want {
+				ts.Fatalf("exit code %d (%v), signal sent: %v, want exit code %d\n%s", got, err, sent, want, stderr.String())
+			}
+			ts.Logf("[stderr]\n%s", stderr.String())
+			return
+		case <-deadline:
+			_ = cmd.Process.Kill()
+			ts.Fatalf("still running after a minute\n%s", stderr.String())
+		case <-time.After(2 * time.Millisecond):
+			if found, _ := filepath.Glob(ts.MkAbs(args[2])); len(found) > 0 && !sent {
+				ts.Check(cmd.Process.Signal(signals[args[0]]))
+				sent = true
+			}
+		}
 	}
 }

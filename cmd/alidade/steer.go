@@ -1,0 +1,243 @@
+package main
+
+import (
+	"errors"
+	"fmt"
+	"os"
+	"path/filepath"
+	"strings"
+	"time"
+
+	"github.com/urfave/cli/v2"
+
+	"alidade/pkg/pipeline"
+)
+
+const steerHelp = `alidade steer: one clean track from each take, aimed at the wanted sound
+
+Usage
+  alidade steer TAKE... --rig RIG --toward AZ[,EL] [OPTIONS]
+  alidade steer TAKE... --rig RIG --focus X,Y,Z [OPTIONS]
+
+Example
+  $ alidade steer roof_07.wav --rig roof.yaml --toward 60 --noise 0..2
+
+Each argument is one take: a WAV file with a channel for each microphone.
+The track has the take's length, and its frame i is the sound at the
+reference point at frame i of the take. Beside it go a report with the gain
+in each band, measured and predicted, and its 95 % intervals.
+
+Where to
+  --rig FILE             the rig file (alidade schema rig describes it)
+  --toward AZ[,EL]       direction in degrees: azimuth from +x towards +y,
+                         elevation up; a negative value needs no quoting
+  --focus X,Y,Z          point in metres from the rig's origin
+  --reference-point NAME a microphone's name, or centre
+
+How
+  --method NAME          spectral (default), sinc or farrow
+  --taper NAME           uniform (default), hann, hamming, kaiser:BETA,
+                         dolph-chebyshev:DB or taylor:DB:N
+  --undo-spreading       with --focus: undo the level differences of a near
+                         source
+  --highpass HZ          cut below HZ, in track and measurement alike
+  --gain-db DB           gain of the track; no reported level contains it
+
+Air, where the rig file's is not right
+  --temperature-c C      air temperature
+  --humidity-pct PCT     relative humidity
+  --pressure-kpa KPA     air pressure
+  --speed-of-sound MS    speed of sound in m/s, in place of the three above
+
+What is measured
+  --noise A..B[,A..B]    where only the noise sounds: seconds from the
+                         take's start, or HH:MM:SS if the take has a time
+  --target A..B[,A..B]   where the wanted sound sounds too
+  --isolated-noise TAKE  the same scene with the noise alone
+  --isolated-target TAKE the same scene with the wanted sound alone
+  --compare-to NAME      gain over this microphone as well
+  --no-measure           write the track only
+
+What is written
+  --out PATH             the track, or a folder for it (by default the track
+                         stands beside the take)
+  --format NAME          auto (default), pcm16, pcm24 or float32
+  --over-range NAME      where the track outgrows its format: fail (default)
+                         or float32
+  --with-reference       the reference as a track of its own too
+  --excerpt A..B         only this part of the take
+  --handles S            this many seconds more at both ends of the excerpt
+  --reports LIST         json,csv (default), json, csv or none
+  --overwrite            replace tracks and reports that exist
+  --no-verify            do not read the written track back
+  --reproducible         leave the time of day out of the report
+
+What is said
+  --json                 the report on standard output instead of a summary
+  --fail-on LEVEL        exit code 3 on a finding of this level or above:
+                         never (default), warning or error
+  --quiet                no progress
+  --help, -h             this text
+`
+
+func steerVerb() verb {
+	return verb{
+		name: "steer", does: "one clean track from each take, and an account of the gain",
+		help:  steerHelp,
+		flags: steerFlags,
+		run:   runSteer,
+	}
+}
+
+func steerFlags() []cli.Flag {
+	return []cli.Flag{
+		&cli.StringFlag{Name: "rig"},
+		&cli.StringFlag{Name: "toward"},
+		&cli.StringFlag{Name: "focus"},
+		&cli.StringFlag{Name: "reference-point"},
+
+		&cli.StringFlag{Name: "method"},
+		&cli.StringFlag{Name: "taper"},
+		&cli.BoolFlag{Name: "undo-spreading"},
+		&cli.Float64Flag{Name: "highpass"},
+		&cli.Float64Flag{Name: "gain-db"},
+
+		&cli.Float64Flag{Name: "temperature-c"},
+		&cli.Float64Flag{Name: "humidity-pct"},
+		&cli.Float64Flag{Name: "pressure-kpa"},
+		&cli.Float64Flag{Name: "speed-of-sound"},
+
+		&cli.StringSliceFlag{Name: "noise"},
+		&cli.StringSliceFlag{Name: "target"},
+		&cli.StringFlag{Name: "isolated-noise"},
+		&cli.StringFlag{Name: "isolated-target"},
+		&cli.StringFlag{Name: "compare-to"},
+		&cli.BoolFlag{Name: "no-measure"},
+
+		&cli.StringFlag{Name: "out"},
+		&cli.StringFlag{Name: "format"},
+		&cli.StringFlag{Name: "over-range"},
+		&cli.BoolFlag{Name: "with-reference"},
+		&cli.StringFlag{Name: "excerpt"},
+		&cli.Float64Flag{Name: "handles"},
+		&cli.StringFlag{Name: "reports"},
+		&cli.BoolFlag{Name: "overwrite"},
+		&cli.BoolFlag{Name: "verify"},
+		&cli.BoolFlag{Name: "no-verify"},
+		&cli.BoolFlag{Name: "reproducible"},
+
+		&cli.BoolFlag{Name: "json"},
+		&cli.StringFlag{Name: "fail-on", Value: failNever},
+		&cli.BoolFlag{Name: "quiet"},
+	}
+}
+
+// steerOptions puts the flags into the options of the pipeline.
+func steerOptions(c *cli.Context) pipeline.Options {
+	number := func(name string) *float64 {
+		if !c.IsSet(name) {
+			return nil
+		}
+		v := c.Float64(name)
+		return &v
+	}
+	list := func(name string) string { return strings.Join(c.StringSlice(name), ",") }
+	return pipeline.Options{
+		Toward:         c.String("toward"),
+		Focus:          c.String("focus"),
+		ReferencePoint: c.String("reference-point"),
+		Method:         c.String("method"),
+		Taper:          c.String("taper"),
+		UndoSpreading:  c.Bool("undo-spreading"),
+		HighpassHz:     c.Float64("highpass"),
+		GainDB:         c.Float64("gain-db"),
+		TemperatureC:   number("temperature-c"),
+		HumidityPct:    number("humidity-pct"),
+		PressureKPa:    number("pressure-kpa"),
+		SpeedOfSound:   number("speed-of-sound"),
+		Noise:          list("noise"),
+		Target:         list("target"),
+		IsolatedNoise:  c.String("isolated-noise"),
+		IsolatedTarget: c.String("isolated-target"),
+		CompareTo:      c.String("compare-to"),
+		NoMeasure:      c.Bool("no-measure"),
+		Out:            c.String("out"),
+		Format:         c.String("format"),
+		OverRange:      c.String("over-range"),
+		WithReference:  c.Bool("with-reference"),
+		Excerpt:        c.String("excerpt"),
+		Handles:        c.Float64("handles"),
+		Reports:        c.String("reports"),
+		Overwrite:      c.Bool("overwrite"),
+		NoVerify:       c.Bool("no-verify") || c.IsSet("verify") && !c.Bool("verify"),
+	}
+}
+
+// checkSteer returns everything that is wrong with a command line of steer
+// before any file is opened.
+func checkSteer(c *cli.Context, o pipeline.Options) error {
+	var faults []error
+	fault := func(format string, args ...any) { faults = append(faults, fmt.Errorf("steer: "+format, args...)) }
+	takes := c.Args().Slice()
+	if len(takes) == 0 {
+		fault("no take: name at least one WAV file")
+	}
+	if !c.IsSet("rig") {
+		fault("no rig: give --rig FILE")
+	}
+	if err := o.Validate(); err != nil {
+		for _, line := range strings.Split(err.Error(), "\n") {
+			fault("%s", line)
+		}
+	}
+	switch c.String("fail-on") {
+	case failNever, failWarning, failError:
+	default:
+		fault("--fail-on %q: want one of %s, %s, %s", c.String("fail-on"), failNever, failWarning, failError)
+	}
+	if c.Bool("verify") && c.Bool("no-verify") {
+		fault("both --verify and --no-verify")
+	}
+	if len(takes) > 1 {
+		faults = append(faults, checkTogether(takes, o.Out)...)
+	}
+	if len(faults) > 0 {
+		return &usageError{errors.Join(faults...), "alidade steer --help shows its options"}
+	}
+	return nil
+}
+
+// checkTogether refuses several takes whose tracks would get one name.
+func checkTogether(takes []string, out string) (faults []error) {
+	seen := map[string]string{}
+	if out != "" && !strings.HasSuffix(out, "/") && !strings.HasSuffix(out, string(filepath.Separator)) {
+		if info, err := os.Stat(out); err != nil || !info.IsDir() {
+			faults = append(faults, fmt.Errorf("steer: --out %q: one track for %d takes: name a folder that exists, or end it in /", out, len(takes)))
+		}
+	}
+	for _, take := range takes {
+		key := strings.TrimSuffix(filepath.Clean(take), filepath.Ext(take))
+		if out != "" {
+			key = filepath.Base(key)
+		}
+		key = strings.ToLower(key)
+		if before, ok := seen[key]; ok {
+			faults = append(faults, fmt.Errorf("steer: takes %s and %s: their tracks would get the same name", before, take))
+			continue
+		}
+		seen[key] = take
+	}
+	return faults
+}
+
+// steerSpec is what the pipeline is to do for one take.
+func (u *ui) steerSpec(c *cli.Context, o pipeline.Options, take string) pipeline.Spec {
+	s := pipeline.Spec{
+		Take: []string{take}, RigPath: c.String("rig"), Options: o,
+		Version: version, Command: append([]string{"alidade"}, u.args...),
+	}
+	if !c.Bool("reproducible") {
+		s.Created = u.now().UTC().Format(time.RFC3339)
+	}
+	return s
+}
