@@ -195,8 +195,9 @@ func roomTrials(t *testing.T, mics []rig.Point, rt60, distance float64, steady b
 
 // The accuracy table in a room of 0.4 s, 20 dB: median error at most 1.5° at 1
 // to 1.5 m and 2.5° at 2 m; the 95 % interval holds the truth in 85 to 99 %,
-// median standard error at most three times the median error; rooms, places
-// and seeds other than those the reverberation term was fitted on.
+// median standard error at most three times the median error. The seeds here were
+// not looked at when the reverberation terms were fitted (500.. and 900000..),
+// nor was the steady source at 2 m in 0.2 s.
 func TestDirectionInRooms(t *testing.T) {
 	if testing.Short() {
 		t.Skip("renders rooms")
@@ -224,7 +225,7 @@ func TestDirectionInRooms(t *testing.T) {
 			if !long() && (c.steady || c.rt60 != 0.4) {
 				continue
 			}
-			all := roomTrials(t, g.mics, c.rt60, c.distance, c.steady, n, 900000)
+			all := roomTrials(t, g.mics, c.rt60, c.distance, c.steady, n, 5000000)
 			pooled = append(pooled, all...)
 			s := tally(all)
 			t.Logf("%-5s %.1f s %.1f m steady %-5v: found %d of %d, median error %.2f°, median SE %.2f°, coverage %.3f",

@@ -262,7 +262,7 @@ func (l *looker) look(window int, active bool) (found []sighting, reason string)
 		g.groups = make([]groupSum, l.groups)
 		_, g.score, g.info = l.climb(p, g.groups)
 		g.value = l.response(l.cos[j], l.sin[j])
-		g.blur = l.blur(j)
+		g.blur, g.rest2 = l.blur(j)
 		g.fit = l.agreement(j)
 		l.putBack(j, -1)
 		if _, ok := g.info.invert(l.space.dim, l.space.lift(p)); ok && g.value > rest/2 {
@@ -286,7 +286,7 @@ func (l *looker) look(window int, active bool) (found []sighting, reason string)
 // of the coherence left without the source, less what chance leaves, re that of
 // the source. A perturbation of relative size epsilon that were alike at all
 // lines would shift the maximum by the square root of blur/information.
-func (l *looker) blur(j int) float64 {
+func (l *looker) blur(j int) (blur, ratio float64) {
 	K := l.bins
 	var rest, own, weight float64
 	left := make([]float64, K)
@@ -312,9 +312,10 @@ func (l *looker) blur(j int) float64 {
 		weight += w * c * float64(l.alivePairs)
 	}
 	if !(own > 0) {
-		return 0
+		return 0, 0
 	}
-	return math.Max(0, rest/own) * weight
+	ratio = math.Max(0, rest/own)
+	return ratio * weight, ratio
 }
 
 // lead is -1..1: how far source i comes before source j, from the correlation

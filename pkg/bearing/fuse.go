@@ -12,18 +12,19 @@ import (
 
 // Constants of bringing windows together.
 const (
-	priorFreedom     = 4.0  // weight of the theoretical error against the observed spread, in windows
-	leadLimit        = 0.06 // mean lead from which the later of two is a reflection
-	blurLine         = 0.20 // the same for a line rig, to which floor and ceiling are near the source
+	priorFreedom     = 4.0   // weight of the theoretical error against the observed spread, in windows
+	leadLimit        = 0.06  // mean lead from which the later of two is a reflection
+	blurSolid        = 0.04  // the same for a solid rig, which tells reflections apart best
+	floorShift       = 0.3   // part of the cosine by which floor and ceiling can pull a line's angle, see spread
 	blurFactor       = 0.055 // of the shift that reflections alike at all lines would make
-	blurFreedom      = 4.0  // degrees of freedom where they are the larger part
-	reverbFactor     = 1.0  // of the spread over frequency beyond that of noise, for early reflections
-	distanceSigma    = 3.0  // standard errors of the curvature from which a distance is given
-	leastShare       = 0.12 // a source holds at least this part of what the first one holds
-	movingSpan       = 0.20 // radians from which a track moves, if its errors are small against it
-	misfitConfidence = 0.4  // most that is trusted while a microphone fits no direction
-	misfitRatio      = 0.55 // agreement of a microphone, re the middle one, from which it is a misfit
-	inactiveWeight   = 0.3  // of windows that do not rise above the floor, where others do
+	blurFreedom      = 4.0   // degrees of freedom where they are the larger part
+	reverbFactor     = 1.0   // of the spread over frequency beyond that of noise, for early reflections
+	distanceSigma    = 3.0   // standard errors of the curvature from which a distance is given
+	leastShare       = 0.12  // a source holds at least this part of what the first one holds
+	movingSpan       = 0.20  // radians from which a track moves, if its errors are small against it
+	misfitConfidence = 0.4   // most that is trusted while a microphone fits no direction
+	misfitRatio      = 0.55  // agreement of a microphone, re the middle one, from which it is a misfit
+	inactiveWeight   = 0.3   // of windows that do not rise above the floor, where others do
 )
 
 // peakConfidence is 0..1 from the height of a peak and that of the best
@@ -584,29 +585,29 @@ func (f *Finder) spread(out *settled, members []int, weights []float64, total, i
 	// which more windows do not lessen.
 	var blurred mat4
 	factor := blurFactor
-	if dim == 1 {
-		factor = blurLine
+	if dim == 3 {
+		factor = blurSolid
 	}
+	ratio2 := 0.0
 	for i, m := range members {
 		s := &f.sightings[m]
+		ratio2 += share * weights[i] * s.rest2 / math.Max(windows, 1e-9)
 		one, ok := s.info.invert(n, f.space.lift(s.at))
 		if !ok {
 			continue
 		}
-		// Floor and ceiling move the cone angle, not the curvature.
-		for a := range maxDims {
-			for b := range maxDims {
-				fa, fb := factor, factor
-				if a == dim {
-					fa = blurFactor
-				}
-				if b == dim {
-					fb = blurFactor
-				}
-				one[a][b] *= fa * fb
-			}
-		}
-		blurred.addScaled(share*weights[i]*s.blur/math.Max(windows, 1e-9), &one)
+		blurred.addScaled(share*weights[i]*factor*factor*s.blur/math.Max(windows, 1e-9), &one)
+	}
+	if dim == 1 {
+		// Floor and ceiling lie at the cosine of the source times that of their
+		// elevation. Where the line does not tell them from the source, they pull
+		// its cosine towards abeam, by a part that grows with the room's share up
+		// to floorShift; where it does, they are sources of their own.
+		lobe := f.set.Speed / (0.5 * (f.set.FromHz + f.set.ToHz)) / f.space.geo.Extent
+		c := math.Abs(out.p.y[0])
+		unresolved := math.Min(1, math.Max(0, (1.5*lobe-c)/(0.5*lobe)))
+		sd := floorShift * c * unresolved * math.Min(1, math.Sqrt(ratio2)/0.4)
+		blurred[0][0] += sd * sd
 	}
 	before := cov[0][0]
 	cov.addScaled(1, &blurred)

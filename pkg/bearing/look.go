@@ -37,6 +37,7 @@ type sighting struct {
 	active bool
 	level  float64 // mean power of the window
 	blur   float64 // coherent sound that no source explains: see (*looker).blur
+	rest2  float64 // its power re the source's
 }
 
 // looker analyses windows one at a time. It holds scratch memory.
