@@ -28,6 +28,21 @@
 // the spread over groups of lines, which shows the reflections that shift all
 // windows alike.
 //
+// The files follow the sound: spectra and floor (frames into cross-spectra),
+// look, grid, detect and fit (one window), fuse and solve (the take), track,
+// findings. They are more than half again as long as a package here should be
+// because the window, the take and the track share one model of a place and its
+// error, which would otherwise have to be exported.
+//
+// # Limits
+//
+// Microphones are omnidirectional and the field is free: bodies and baffles are
+// not modelled. A line in a room cannot tell a source near abeam from its
+// images in floor and ceiling; its standard error allows for that. In a room
+// whose reverberation is 8 dB and more above the direct sound a strong first
+// reflection may be taken for the source; then two sources of like share are
+// found, and the confidence is low.
+//
 // # Use
 //
 //	f, err := bearing.NewFinder(r.Positions(), r.ReferencePoint(), rate, bearing.Options{})
