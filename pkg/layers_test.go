@@ -19,6 +19,7 @@ var layers = map[string]struct {
 	purpose string
 }{
 	"pkg/sheet":                    {0, "YAML files read strictly, every fault with its place"},
+	"pkg/report/internal/draw":     {0, "pictures in SVG and PNG, by hand"},
 	"pkg/beam/internal/hermitian":  {0, "small Hermitian solves"},
 	"pkg/audio":                    {1, "io for multichannel sound"},
 	"pkg/rig":                      {1, "the microphones"},
