@@ -35,7 +35,7 @@ type Image struct {
 
 // Images returns the images of a source as heard at a receiver, both in room
 // axes, of at most maxOrder reflections (-1: any) and at most maxDistance
-// metres away, in the order of the lattice [Allen & Berkley 1979, formula 10].
+// metres away (one of the two must set a bound), in the order of the lattice [Allen & Berkley 1979, formula 10].
 func (b *Box) Images(source, receiver rig.Point, maxOrder int, maxDistance float64) []Image {
 	var all []Image
 	b.each(source, receiver, maxOrder, maxDistance, func(at rig.Point, order int, gain []float64) {
@@ -69,10 +69,11 @@ func (b *Box) each(source, receiver rig.Point, maxOrder int, maxDistance float64
 	var axes [3][]Line
 	for a := range 3 {
 		// The nearest image of row n is at least (2|n|-2)·L away.
-		most := int(maxDistance/(2*size[a])) + 2
+		rows := maxDistance/(2*size[a]) + 2
 		if maxOrder >= 0 {
-			most = min(most, maxOrder/2+1)
+			rows = math.Min(rows, float64(maxOrder/2+1))
 		}
+		most := int(rows)
 		for n := -most; n <= most; n++ {
 			for q := range 2 {
 				l := Line{at: float64(1-2*q)*src[a] + 2*float64(n)*size[a], gain: make([]float64, bands)}

@@ -40,7 +40,7 @@ func coherence(field string, p, q rig.Point, hz, speed float64) float64 {
 func MixingBank(field string, mics []rig.Point, rate int, speed float64) *Bank {
 	extent := rig.Spread(mics).Extent
 	n := 512
-	for n < rate/48 || float64(n) < 8*extent/speed*float64(rate) {
+	for n < rate/24 || float64(n) < 8*extent/speed*float64(rate) {
 		n *= 2
 	}
 	count := len(mics)

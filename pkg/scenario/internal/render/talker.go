@@ -19,7 +19,7 @@ var vowels = [...][3]float64{
 
 // hisses are the middle and width of fricative bands, hertz, and their level
 // against the vowels (common practice).
-var hisses = [...][3]float64{{6500, 3000, 0.09}, {3500, 2000, 0.12}, {5000, 5000, 0.03}, {1800, 1400, 0.05}}
+var hisses = [...][3]float64{{6500, 3000, 0.10}, {3300, 2000, 0.20}, {5000, 5000, 0.03}, {1900, 1400, 0.20}}
 
 // resonator is a digital formant resonator of unit gain at 0 Hz
 // [Klatt 1980, formulas 1 and 2].
@@ -38,15 +38,26 @@ func (r *resonator) step(x float64) float64 {
 	return y
 }
 
+// normal returns the factor that gives y[i] - y[i-2] unit power when white noise
+// of unit power goes in, from the autocorrelation of the resonator, an
+// autoregression of order 2 (Box & Jenkins).
+func (r *resonator) normal() float64 {
+	power := r.a * r.a * (1 - r.c) / ((1 + r.c) * ((1-r.c)*(1-r.c) - r.b*r.b))
+	second := r.b*r.b/(1-r.c) + r.c // correlation at lag 2
+	return 1 / math.Sqrt(2*power*(1-second))
+}
+
 // talker makes its sound control interval after control interval.
 type talker struct {
-	rate    float64
-	pitchHz float64
-	rng     *rand.Rand
-	tract   [4]resonator
-	tuned   [4]float64 // formants now, hertz
-	hiss    resonator
-	lastOut float64
+	rate     float64
+	pitchHz  float64
+	rng      *rand.Rand
+	tract    [4]resonator
+	tuned    [4]float64 // formants now, hertz
+	hiss     resonator
+	hissGain float64
+	dull     float64 // the voice without what the shelf lifts
+	lastOut  float64
 
 	phase      float64 // of the glottal period, 0..1
 	jitter     float64
@@ -107,6 +118,8 @@ func (t *talker) Next(dst []float64) {
 	const tickFrames = 32 // between changes of the resonators
 	dt := 1 / t.rate
 	glide := 1 - math.Exp(-float64(tickFrames)*dt/0.025)
+	shelf := 1 - math.Exp(-2*math.Pi*1800*dt)
+	breath := 0.02 * math.Sqrt(t.rate/48000)
 	swell := 1 - math.Exp(-dt/0.008)
 	for i := range dst {
 		if t.left == 0 {
@@ -127,7 +140,7 @@ func (t *talker) Next(dst []float64) {
 		t.air += swell * 2 * (t.aim.air - t.air)
 
 		// Glottal flow after [Rosenberg 1971], pulse C: it opens for 40 % of the
-		// period, closes in 16 %, and what is heard is its change.
+		// period, closes in 10 %, and what is heard is its change.
 		t.phase += t.hz * (1 + t.jitter) * dt
 		if t.phase >= 1 {
 			t.phase--
@@ -137,18 +150,21 @@ func (t *talker) Next(dst []float64) {
 		switch {
 		case t.phase < 0.40:
 			flow = 0.5 - 0.5*math.Cos(math.Pi*t.phase/0.40)
-		case t.phase < 0.56:
-			flow = math.Cos(math.Pi / 2 * (t.phase - 0.40) / 0.16)
+		case t.phase < 0.50:
+			flow = math.Cos(math.Pi / 2 * (t.phase - 0.40) / 0.10)
 		}
 		x := (flow - t.previous) * t.rate / 4000
 		t.previous = flow
 		white := t.rng.NormFloat64()
-		x = t.voice * (x + 0.02*white*flow)
+		x = t.voice * (x + breath*white*flow)
 		for f := range t.tract {
 			x = t.tract[f].step(x)
 		}
-		h := t.hiss.step(white * t.air)
-		y := x + 6*(h-t.hiss.y2)
+		// Cascaded resonators come out too dark above the first formant: a shelf.
+		t.dull += (x - t.dull) * shelf
+		x += 2 * (x - t.dull)
+		before := t.hiss.y2
+		y := x + t.air*t.hissGain*(t.hiss.step(white)-before)
 		// The mouth radiates the change of its flow; only the bass is taken off.
 		dst[i] = y - t.lastOut
 		t.lastOut += (y - t.lastOut) * 2 * math.Pi * 60 * dt
@@ -157,7 +173,7 @@ func (t *talker) Next(dst []float64) {
 
 // retune moves formants and pitch towards their aims by the share glide.
 func (t *talker) retune(glide float64) {
-	widths := [4]float64{60, 90, 150, 250} // hertz [Klatt 1980, table I, typical]
+	widths := [4]float64{110, 110, 170, 250} // hertz, after [Klatt 1980, table I], the first wider
 	for f := range t.tract {
 		aim := 3500.0
 		if f < 3 {
@@ -167,6 +183,7 @@ func (t *talker) retune(glide float64) {
 		t.tract[f].tune(math.Min(t.tuned[f], 0.45*t.rate), widths[f], t.rate)
 	}
 	t.hiss.tune(math.Min(t.aim.hiss[0], 0.4*t.rate), math.Min(t.aim.hiss[1], 0.3*t.rate), t.rate)
+	t.hissGain = t.hiss.normal()
 	// The pitch falls through the phrase and sways.
 	aim := t.pitchHz * (1.12 - 0.06*t.spoken + 0.06*math.Sin(2*math.Pi*2.3*t.spoken))
 	t.hz += glide * (math.Max(aim, 0.7*t.pitchHz) - t.hz)
