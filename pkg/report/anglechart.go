@@ -13,6 +13,21 @@ func level(l pipeline.Levels, row, column int) float64 {
 	return l.LowDB + (l.HighDB-l.LowDB)*float64(l.Bytes[row*l.Columns+column])/255
 }
 
+// angleTicks returns angles that people know, in degrees.
+func angleTicks(first, last float64) []float64 {
+	step := 5.0
+	for _, s := range []float64{10, 15, 30, 45, 90} {
+		if (last-first)/step > 9 {
+			step = s
+		}
+	}
+	var ticks []float64
+	for a := math.Ceil(first/step) * step; a <= last && len(ticks) < 20; a += step {
+		ticks = append(ticks, a)
+	}
+	return ticks
+}
+
 // responseChart draws what the beam lets through over angle and frequency; nil
 // where the report has no such picture.
 func responseChart(r *pipeline.Result) (*chart, error) {
@@ -37,7 +52,7 @@ func responseChart(r *pipeline.Result) (*chart, error) {
 		"data-y-from", Round(p.Hz[0], "y_hz"), "data-y-to", Round(p.Hz[len(p.Hz)-1], "y_hz"))
 	s.Element("image", "href", url, "width", "100%", "height", "100%", "preserveAspectRatio", "none")
 	frequencyTicks(&s, p.Hz)
-	for _, a := range draw.Ticks(first, last, 7) {
+	for _, a := range angleTicks(first, last) {
 		s.Text(x.At(a), 100, "tick mid", draw.Number(a)+"°", "dy", "18")
 	}
 	steer := x.At(r.Steer.AzimuthDeg)
@@ -61,7 +76,7 @@ func responseChart(r *pipeline.Result) (*chart, error) {
 		}
 	}
 	return &chart{Key: "response", Name: "What the beam lets in", Picture: s.Close(),
-		Caption: fmt.Sprintf("Light is let through: %s to %s dB against the steered direction (the upright line), for a far source at elevation %s°. Dots are side lobes, diamonds grating lobes, heard like the wanted sound. Point at the picture to read levels.",
+		Caption: fmt.Sprintf("Light is let through: %s to %s dB against the steered direction (the upright line), for a far source at elevation %s°. Dots are side lobes, diamonds grating lobes, heard like the wanted sound.",
 			decimals(p.Levels.LowDB, 0), decimals(p.Levels.HighDB, 0), decimals(p.ElevationDeg, 0))}, nil
 }
 
@@ -86,7 +101,7 @@ func polarCharts(r *pipeline.Result) []chart {
 		if distance > 0.12 {
 			continue // not in the picture
 		}
-		name := frequencyWords(math.Round(p.Hz[row]))
+		name := frequencyWords(twoDigits(p.Hz[row]))
 		var s draw.SVG
 		s.Open("polar", fmt.Sprintf("Polar response at %s: 0 dB at the rim, -20 dB at half the radius, %s dB at the centre, 0° to the right, 90° up.", name, draw.Number(floor)))
 		for _, ring := range []float64{0, -20} {
@@ -111,6 +126,12 @@ func polarCharts(r *pipeline.Result) []chart {
 	return list
 }
 
+// twoDigits rounds a frequency to two significant digits.
+func twoDigits(hz float64) float64 {
+	p := math.Pow(10, math.Floor(math.Log10(hz))-1)
+	return math.Round(hz/p) * p
+}
+
 // scanCharts draws the level of the beam steered to many angles; empty where
 // nothing was scanned.
 func scanCharts(r *pipeline.Result) ([]chart, error) {
@@ -121,7 +142,7 @@ func scanCharts(r *pipeline.Result) ([]chart, error) {
 	first, last := p.AnglesDeg[0], p.AnglesDeg[len(p.AnglesDeg)-1]
 	x := draw.Linear(first, last)
 	angles := func(s *draw.SVG) {
-		for _, a := range draw.Ticks(first, last, 7) {
+		for _, a := range angleTicks(first, last) {
 			s.Text(x.At(a), 100, "tick mid", draw.Number(a)+"°", "dy", "18")
 		}
 	}

@@ -36,6 +36,9 @@ type chart struct {
 // bandCharts draws the bands once for each quantity that has figures, always
 // the SNR gain for its predictions.
 func bandCharts(r *pipeline.Result) []chart {
+	if len(r.Bands) == 0 {
+		return nil
+	}
 	var list []chart
 	for _, q := range quantities() {
 		_, measured := meanOf(r.Bands, q.value)
@@ -68,7 +71,7 @@ func bandChart(bands []pipeline.Band, q quantity, measured int) chart {
 		}
 	}
 	high = 3 * math.Ceil(high/3)
-	low = 3 * math.Floor(low/3)
+	low = math.Floor(low) // no more room below 0 dB than it needs
 	y := draw.Linear(high, low)
 
 	label := fmt.Sprintf("%s in decibels for %d one-third octave bands, measured in %d.", q.Name, len(bands), measured)
@@ -96,10 +99,15 @@ func bandChart(bands []pipeline.Band, q quantity, measured int) chart {
 	if q.predicted {
 		caption += " Diamonds are predicted for noise from everywhere, rings for noise that differs from microphone to microphone."
 	}
+	name := q.Name
+	if measured == 0 {
+		name = "Predicted gain"
+		caption = "Nothing could be measured in the bands. Diamonds are predicted for noise from everywhere, rings for noise that differs from microphone to microphone."
+	}
 	if q.Key == "target_change_db" {
 		caption = "How much the wanted sound changed: 0 dB is kept as it was. In a room 2 to 4 dB of loss are the target's own reverberation. Whiskers are 95 % intervals."
 	}
-	return chart{Key: q.Key, Name: q.Name, Picture: s.Close(), Caption: caption}
+	return chart{Key: q.Key, Name: name, Picture: s.Close(), Caption: caption}
 }
 
 // drawBand draws one band of the chart between x and x+step per cent.

@@ -65,17 +65,25 @@ func lead(r *pipeline.Result) string {
 	o := r.Overall
 	switch {
 	case o.SNRGainDB != nil:
-		parts = append(parts, fmt.Sprintf("Against the mean microphone the wanted sound stands out by %s more.", withInterval(o.SNRGainDB, o.SNRGainCI95)))
+		if *o.SNRGainDB > -0.05 {
+			parts = append(parts, fmt.Sprintf("Against the mean microphone the wanted sound stands out by %s more.", withInterval(o.SNRGainDB, o.SNRGainCI95)))
+		} else {
+			parts = append(parts, fmt.Sprintf("Against the mean microphone the wanted sound stands out less: the SNR gain is %s.", withInterval(o.SNRGainDB, o.SNRGainCI95)))
+		}
 		if o.NoiseReductionDB != nil && o.TargetChangeDB != nil {
 			parts = append(parts, fmt.Sprintf("The noise %s, the wanted sound %s.", changeWords(-*o.NoiseReductionDB), changeWords(*o.TargetChangeDB)))
 		}
 	case o.NoiseReductionDB != nil:
 		parts = append(parts, fmt.Sprintf("The noise falls by %s; how much of the wanted sound was kept could not be measured.", withInterval(o.NoiseReductionDB, o.NoiseReductionCI95)))
 	default:
-		parts = append(parts, "The track was steered and written, but what it gains could not be measured; the findings say why.")
+		text := "The track was steered, but what it gains was not measured"
+		if len(r.Findings) > 0 {
+			text += "; the findings say why"
+		}
+		parts = append(parts, text+".")
 	}
 	if low, high, ok := surest(r.Bands); ok {
-		parts = append(parts, fmt.Sprintf("It holds from %s: every band there gains, and its whole interval lies above 0 dB.", rangeWords(low, high)))
+		parts = append(parts, fmt.Sprintf("Every band of %s gains for certain: its whole interval lies above 0 dB.", rangeWords(low, high)))
 	}
 	if d := distrust(r.Bands); d != "" {
 		parts = append(parts, "Distrust "+d+".")
