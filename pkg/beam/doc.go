@@ -63,4 +63,11 @@
 // [Welch 1967] P. D. Welch, The use of fast Fourier transform for the
 // estimation of power spectra, IEEE Trans. Audio Electroacoust. AU-15 (1967),
 // p. 70.
+//
+// [Mou & Duhamel 1991] Z. J. Mou and P. Duhamel, Short-length FIR filters and
+// their use in fast nonrecursive filtering, IEEE Trans. Signal Processing 39
+// (1991), p. 1322.
+//
+// [Oppenheim & Schafer 1989] A. V. Oppenheim and R. W. Schafer, Discrete-Time
+// Signal Processing, Prentice Hall 1989, section 8.9: overlap-save.
 package beam

@@ -62,6 +62,9 @@ func (r *run) gains(res *Result) error {
 	if third.Best >= 0 {
 		res.Overall.BestMicrophone = r.rig.Mics[r.line.used[third.Best]].Name
 	}
+	if r.set.IsolatedNoise != r.set.IsolatedTarget && (r.set.IsolatedNoise == "" || r.set.IsolatedTarget == "") {
+		r.half(res)
+	}
 	r.explain(res, third)
 	return nil
 }
@@ -108,12 +111,11 @@ func (r *run) blind(res *Result, named int) (third, octave *measure.Gains, err e
 	if err != nil {
 		return nil, nil, err
 	}
-	pair := measure.Pair{Reference: r.in.Thirds(), Output: r.out.Thirds(), Microphones: r.in.ChannelThirds()}
-	if third, err = measure.SNRGain(measure.Scene{Pair: pair, Noise: noise, Target: target, Named: named}); err != nil {
+	mix := listened{in: r.in, out: r.out}
+	if third, err = measure.SNRGain(measure.Scene{Pair: mix.thirds(), Noise: noise, Target: target, Named: named}); err != nil {
 		return nil, nil, err
 	}
-	pair = measure.Pair{Reference: r.in.Octaves(), Output: r.out.Octaves(), Microphones: r.in.ChannelOctaves()}
-	octave, err = measure.SNRGain(measure.Scene{Pair: pair, Noise: noise, Target: target, Named: named})
+	octave, err = measure.SNRGain(measure.Scene{Pair: mix.octaves(), Noise: noise, Target: target, Named: named})
 	return third, octave, err
 }
 
@@ -207,11 +209,11 @@ func spans(list []measure.Stretch) [][2]float64 {
 }
 
 // speechDiffuse is the mean predicted gain in diffuse noise from 250 Hz to
-// 4 kHz, dB, 0 where no band lies there.
+// 5 kHz, dB, 0 where no band lies there.
 func speechDiffuse(bands []Band) float64 {
 	sum, n := 0.0, 0
 	for _, b := range bands {
-		if b.PredictedDiffuseDB != nil && b.CentreHz > 245 && b.CentreHz < 4100 {
+		if b.PredictedDiffuseDB != nil && b.CentreHz > 245 && b.CentreHz < 5100 {
 			sum += *b.PredictedDiffuseDB
 			n++
 		}
@@ -223,64 +225,100 @@ func speechDiffuse(bands []Band) float64 {
 }
 
 // isolated measures with takes of the noise and of the target alone, through
-// the weights of the mix.
+// the weights of the mix. With only one of them the figures of the other are
+// left out (see half).
 func (r *run) isolated(res *Result, named int) (third, octave *measure.Gains, err error) {
-	if r.set.IsolatedNoise == "" || r.set.IsolatedTarget == "" {
-		missing := "isolated-noise"
-		if r.set.IsolatedTarget == "" {
-			missing = "isolated-target"
-		}
-		return nil, nil, &UsageError{Err: fmt.Errorf("--%s is missing: the gain from isolated takes needs both the noise and the target alone", missing)}
-	}
-	nIn, nOut, nSpan, err := r.through(r.set.IsolatedNoise)
-	if err != nil {
-		return nil, nil, err
-	}
-	tIn, tOut, tSpan, err := r.through(r.set.IsolatedTarget)
-	if err != nil {
-		return nil, nil, err
-	}
+	var noise, target listened
 	res.Segments.Source = SegmentsIsolated
-	res.Segments.Noise, res.Segments.Target = [][2]float64{{0, nSpan}}, [][2]float64{{0, tSpan}}
-	third, err = measure.IsolatedGain(measure.Isolated{
-		Noise:  measure.Pair{Reference: nIn.Thirds(), Output: nOut.Thirds(), Microphones: nIn.ChannelThirds()},
-		Target: measure.Pair{Reference: tIn.Thirds(), Output: tOut.Thirds(), Microphones: tIn.ChannelThirds()},
-		Named:  named,
-	})
+	if path := r.set.IsolatedNoise; path != "" {
+		if noise, err = r.through(path); err != nil {
+			return nil, nil, err
+		}
+		res.Segments.Noise = [][2]float64{{0, noise.seconds}}
+	}
+	if path := r.set.IsolatedTarget; path != "" {
+		if target, err = r.through(path); err != nil {
+			return nil, nil, err
+		}
+		res.Segments.Target = [][2]float64{{0, target.seconds}}
+	}
+	switch {
+	case noise.in == nil:
+		noise = target
+		r.report(Finding{Code: "isolated-noise-missing", Severity: Info, Message: "only the target alone was given: no noise reduction and no SNR gain; give --isolated-noise TAKE too"})
+	case target.in == nil:
+		target = noise
+		r.report(Finding{Code: "isolated-target-missing", Severity: Info, Message: "only the noise alone was given: no target change and no SNR gain; give --isolated-target TAKE too"})
+	}
+	third, err = measure.IsolatedGain(measure.Isolated{Noise: noise.thirds(), Target: target.thirds(), Named: named})
 	if err != nil {
 		return nil, nil, err
 	}
-	octave, err = measure.IsolatedGain(measure.Isolated{
-		Noise:  measure.Pair{Reference: nIn.Octaves(), Output: nOut.Octaves(), Microphones: nIn.ChannelOctaves()},
-		Target: measure.Pair{Reference: tIn.Octaves(), Output: tOut.Octaves(), Microphones: tIn.ChannelOctaves()},
-		Named:  named,
-	})
+	octave, err = measure.IsolatedGain(measure.Isolated{Noise: noise.octaves(), Target: target.octaves(), Named: named})
 	return third, octave, err
 }
 
-// through runs the beam over another take and returns its meters and its
-// length in seconds.
-func (r *run) through(path string) (in, out *measure.Meter, seconds float64, err error) {
+// half leaves out the figures of the isolated take that was not given.
+func (r *run) half(res *Result) {
+	for _, bands := range [][]Band{res.Bands, res.OctaveBands} {
+		for i := range bands {
+			b := &bands[i]
+			if r.set.IsolatedNoise == "" {
+				b.NoiseInDBFS, b.NoiseOutDBFS, b.NoiseReductionDB, b.NoiseReductionCI95 = nil, nil, nil, nil
+			} else {
+				b.TargetInDBFS, b.TargetOutDBFS, b.TargetChangeDB, b.TargetChangeCI95 = nil, nil, nil, nil
+				if !hasFlag(*b, measure.TargetUnmeasurable) {
+					b.Flags = append(b.Flags, measure.TargetUnmeasurable)
+				}
+			}
+			b.SNRInDB, b.SNROutDB, b.SNRGainDB, b.SNRGainCI95 = nil, nil, nil, nil
+			b.OverBestMicrophoneDB, b.OverNamedMicrophone = nil, nil
+		}
+	}
+	o := Overall{TargetChangeDB: res.Overall.TargetChangeDB, TargetChangeCI95: res.Overall.TargetChangeCI95}
+	if r.set.IsolatedNoise != "" {
+		o = Overall{NoiseReductionDB: res.Overall.NoiseReductionDB, NoiseReductionCI95: res.Overall.NoiseReductionCI95, NoiseReductionADB: res.Overall.NoiseReductionADB}
+	}
+	res.Overall = o
+}
+
+// listened is what the meters heard of one take.
+type listened struct {
+	in, out *measure.Meter
+	seconds float64
+}
+
+func (l listened) thirds() measure.Pair {
+	return measure.Pair{Reference: l.in.Thirds(), Output: l.out.Thirds(), Microphones: l.in.ChannelThirds()}
+}
+
+func (l listened) octaves() measure.Pair {
+	return measure.Pair{Reference: l.in.Octaves(), Output: l.out.Octaves(), Microphones: l.in.ChannelOctaves()}
+}
+
+// through runs the beam over another take.
+func (r *run) through(path string) (l listened, err error) {
 	t, err := openTake([]string{path}, false)
 	if err != nil {
-		return nil, nil, 0, err
+		return l, err
 	}
 	defer func() { err = joinErrors(err, t.close()) }()
 	mix := r.take.header
 	if t.header.Rate != mix.Rate || t.header.Channels != mix.Channels {
-		return nil, nil, 0, &UsageError{Err: fmt.Errorf("%s: %d channels at %d Hz, but %s has %d at %d Hz: isolated takes are recorded with the same rig and settings",
+		return l, &UsageError{Err: fmt.Errorf("%s: %d channels at %d Hz, but %s has %d at %d Hz: isolated takes are recorded with the same rig and settings",
 			path, t.header.Channels, t.header.Rate, r.take.path(), mix.Channels, mix.Rate)}
 	}
 	src := audio.Source(&watched{Source: t.source(), ctx: r.ctx, tell: r.tell("measuring "+path, t.header.Frames)})
-	if in, out, err = r.drive(src); err != nil {
-		return nil, nil, 0, err
+	if l.in, l.out, err = r.drive(src); err != nil {
+		return l, err
 	}
 	if err := t.in.unchanged(); err != nil {
-		return nil, nil, 0, err
+		return l, err
 	}
 	for _, f := range t.findings() {
 		f.Message = strings.TrimSpace(path + ": " + f.Message)
 		r.report(f)
 	}
-	return in, out, float64(t.header.Frames) / float64(t.header.Rate), nil
+	l.seconds = float64(t.header.Frames) / float64(t.header.Rate)
+	return l, nil
 }

@@ -113,7 +113,6 @@ func bandChart(bands []pipeline.Band, q quantity, measured int) chart {
 // drawBand draws one band of the chart between x and x+step per cent.
 func drawBand(s *draw.SVG, b pipeline.Band, q quantity, y draw.Scale, x, step float64) {
 	mid := x + step/2
-	title := frequencyWords(b.NominalHz)
 	s.Group("band", "data-hz", Round(b.NominalHz, "nominal_hz"))
 	if v := q.value(b); v != nil {
 		class := "bar"
@@ -124,7 +123,6 @@ func drawBand(s *draw.SVG, b pipeline.Band, q quantity, y draw.Scale, x, step fl
 		s.Rect(x+0.14*step, top, 0.72*step, bottom-top, class, "data-value", Round(*v, q.Key))
 	} else {
 		s.Rect(x+0.14*step, y.At(0)-2, 0.72*step, 2, "unmeasured")
-		title += " not measured"
 	}
 	if ci := q.interval(b); ci != nil {
 		s.Line(mid, y.At(ci[0]), mid, y.At(ci[1]), "whisker casing")

@@ -14,6 +14,8 @@
 // The rig file is right unless a fault says otherwise: the hardware of each
 // channel has the opposite of the rig's corrections.
 //
+// Reflections reach down to 20 Hz; walls have no phase of their own.
+//
 // A take is targets plus noise; noise is interferers, diffuse noise, sensor
 // noise and whatever faulty channels add. Sound exists before frame 0 and after
 // the end, where sources do not say otherwise. Levels in dBFS are AES17's: a
@@ -48,6 +50,9 @@
 // [Allen & Berkley 1979] J. B. Allen, D. A. Berkley, Image method for
 // efficiently simulating small-room acoustics, J. Acoust. Soc. Am. 65 (1979),
 // p. 943.
+//
+// [Oppenheim & Schafer] A. V. Oppenheim, R. W. Schafer, Discrete-Time Signal
+// Processing, 3rd edition (2010), chapter 7.
 //
 // [Peterson 1986] P. M. Peterson, Simulating the response of multiple
 // microphones to a single acoustic source in a reverberant room, J. Acoust.

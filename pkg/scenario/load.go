@@ -296,7 +296,6 @@ func (p *Place) check(path string, fault func(string, string, ...any)) {
 	if p.PointM != nil {
 		if len(p.PointM) != 3 {
 			fault(path+".point_m", "%d coordinates, want 3", len(p.PointM))
-			p.PointM = append(append([]float64(nil), p.PointM...), 0, 0, 0)[:3]
 		}
 		for i, v := range p.PointM {
 			if !(math.Abs(v) <= 1e4) {

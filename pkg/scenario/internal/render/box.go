@@ -186,7 +186,8 @@ func (c *Chamber) Holds(p rig.Point) bool {
 }
 
 // Responses returns the response from a source to each microphone, both in rig
-// coordinates, without its direct sound, in amplitudes against the direct sound
+// coordinates, without its direct sound and without what lies below hearing, in
+// amplitudes against the direct sound
 // at a distance of unit metres and with that distance's delay taken off. All
 // have the same start and length, whatever the place of the source.
 func (c *Chamber) Responses(source rig.Point, mics []rig.Point, unit float64) *Bank {
@@ -218,6 +219,7 @@ func (c *Chamber) Responses(source rig.Point, mics []rig.Point, unit float64) *B
 		if c.split != nil {
 			taps = c.split.join(bands)
 		}
+		highPass(taps, roomLowHz/float64(c.Rate))
 		bank.Taps[m] = [][]float64{taps}
 	}
 	parallel(len(mics), one)
@@ -234,6 +236,25 @@ func (c *Chamber) shape(unit float64) (start, length int) {
 		pad = c.split.ring
 	}
 	return -before - pad, before + int(c.Seconds*float64(c.Rate)) + reflectionTaps/2 + 2*pad
+}
+
+// roomLowHz is where the reflections of a room begin. Walls that reflect every
+// frequency without turning it over pile up pressure at 0 Hz; as [Allen &
+// Berkley 1979] do, a high-pass takes that away, here at the edge of hearing.
+const roomLowHz = 20
+
+// highPass runs a Butterworth high-pass of order 2 over x, its cutoff in cycles
+// a frame, made by the bilinear transform [Oppenheim & Schafer].
+func highPass(x []float64, cutoff float64) {
+	k := math.Tan(math.Pi * cutoff)
+	g := 1 / (1 + math.Sqrt2*k + k*k)
+	a1, a2 := 2*g*(k*k-1), g*(1-math.Sqrt2*k+k*k)
+	var x1, x2, y1, y2 float64
+	for i, v := range x {
+		y := g*(v-2*x1+x2) - a1*y1 - a2*y2
+		x2, x1, y2, y1 = x1, v, y1, y
+		x[i] = y
+	}
 }
 
 // parallel calls do for 0..n-1 on all processors. Each call works on its own
