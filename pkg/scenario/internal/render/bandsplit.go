@@ -27,13 +27,27 @@ func (s *bandSplit) weight(b, bands int, hz float64) float64 {
 	return c * c
 }
 
-// join returns the joined response, as long as each of bands.
-func (s *bandSplit) join(bands [][]float64) []float64 {
-	length := len(bands[0])
-	n := 1024
+// weights returns the weights of every octave at the bins that responses of a
+// length are joined in, and the number of frames transformed.
+func (s *bandSplit) weights(bands, length int) (w [][]float64, n int) {
+	n = 1024
 	for n < length+s.ring {
 		n *= 2
 	}
+	w = make([][]float64, bands)
+	for b := range w {
+		w[b] = make([]float64, n/2+1)
+		for k := range w[b] {
+			w[b][k] = s.weight(b, bands, float64(k)*float64(s.rate)/float64(n))
+		}
+	}
+	return w, n
+}
+
+// join returns the joined response, as long as each of bands, with the weights
+// of its length.
+func join(bands, weights [][]float64, n int) []float64 {
+	length := len(bands[0])
 	fft := plan64(n)
 	bins := n/2 + 1
 	re, im := make([]float64, bins), make([]float64, bins)
@@ -43,8 +57,7 @@ func (s *bandSplit) join(bands [][]float64) []float64 {
 		clear(x)
 		copy(x, h)
 		fft.Forward(re, im, x)
-		for k := range bins {
-			w := s.weight(b, len(bands), float64(k)*float64(s.rate)/float64(n))
+		for k, w := range weights[b] {
 			sumRe[k] += w * re[k]
 			sumIm[k] += w * im[k]
 		}

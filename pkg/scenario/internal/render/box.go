@@ -130,7 +130,22 @@ type Chamber struct {
 	Turn     float64   // of the rig's x axis against the room's, radians anticlockwise
 
 	kernel *Table
-	split  *bandSplit // nil: one band
+	split  *bandSplit  // nil: one band
+	air    [][]float64 // air[b][i], amplitude left after i·airStep metres; nil: all
+}
+
+// airStep is the distance between the points that the loss by the air is
+// interpolated from, metres: an error below 1e-6 for losses up to 1 dB a metre.
+const airStep = 0.02
+
+// airGain returns the amplitude that the air leaves in band b after d metres.
+func (c *Chamber) airGain(b int, d float64) float64 {
+	if c.air[b] == nil {
+		return 1
+	}
+	i := min(int(d/airStep), len(c.air[b])-2)
+	w := d/airStep - float64(i)
+	return c.air[b][i] + w*(c.air[b][i+1]-c.air[b][i])
 }
 
 // maxImages and maxRoomFrames bound the work of one response.
@@ -169,6 +184,17 @@ func (c *Chamber) Prepare() error {
 	if images > maxImages {
 		return fmt.Errorf("a response of %.3g s needs %.2g images, more than %.2g: state a shorter length_s or a max_order", c.Seconds, images, float64(maxImages))
 	}
+	c.air = make([][]float64, bands)
+	for b, db := range c.AirDB {
+		if db == 0 {
+			continue
+		}
+		// Images lie at most this far: the response's length and the room's size.
+		far := reach + 2*(c.Box.Size.X+c.Box.Size.Y+c.Box.Size.Z)
+		for i := range int(far/airStep) + 2 {
+			c.air[b] = append(c.air[b], math.Pow(10, -db*airStep*float64(i)/20))
+		}
+	}
 	c.kernel = NewTable(reflectionTaps, 512, reflectionBeta)
 	return nil
 }
@@ -195,6 +221,11 @@ func (c *Chamber) Responses(source rig.Point, mics []rig.Point, unit float64) *B
 	bank := &Bank{Start: start, Taps: make([][][]float64, len(mics))}
 	shift := -float64(start) - unit/c.Speed*float64(c.Rate)
 	src := c.inRoom(source)
+	var weights [][]float64
+	var size int
+	if c.split != nil {
+		weights, size = c.split.weights(len(c.Box.Beta), length)
+	}
 	one := func(m int) {
 		rcv := c.inRoom(mics[m])
 		bands := make([][]float64, len(c.Box.Beta))
@@ -207,17 +238,14 @@ func (c *Chamber) Responses(source rig.Point, mics []rig.Point, unit float64) *B
 			}
 			d := at.Distance(rcv)
 			delay := d/c.Speed*float64(c.Rate) + shift
-			for b, g := range gain {
-				a := g * unit / d
-				if c.AirDB[b] != 0 {
-					a *= math.Exp(-c.AirDB[b] * d * (math.Ln10 / 20))
-				}
-				c.kernel.add(bands[b], delay, a)
+			for b := range gain {
+				gain[b] *= unit / d * c.airGain(b, d)
 			}
+			c.kernel.add(bands, delay, gain)
 		})
 		taps := bands[0]
 		if c.split != nil {
-			taps = c.split.join(bands)
+			taps = join(bands, weights, size)
 		}
 		highPass(taps, roomLowHz/float64(c.Rate))
 		bank.Taps[m] = [][]float64{taps}

@@ -102,20 +102,26 @@ func (k *Table) At(x []float64, frac float64) float64 {
 	return sa + w*(sb-sa)
 }
 
-// add adds amplitude times the kernel of a delay to h, h[0] being delay 0.
-// Taps that fall outside h are dropped.
-func (k *Table) add(h []float64, delay, amplitude float64) {
+// add adds the kernel of a delay, times amplitude[b], to each h[b], h[b][0] being
+// delay 0. Taps that fall outside h are dropped.
+func (k *Table) add(h [][]float64, delay float64, amplitude []float64) {
 	whole := math.Floor(delay)
 	a, b, w := k.pair(delay - whole)
 	first := int(whole) - (k.Taps/2 - 1)
-	from, to := max(0, -first), min(k.Taps, len(h)-first)
+	from, to := max(0, -first), min(k.Taps, len(h[0])-first)
 	if from >= to {
 		return
 	}
-	wa, wb := amplitude*(1-w), amplitude*w
-	h = h[first+from : first+to]
-	a, b = a[from:to], b[from:to]
-	for t := range h {
-		h[t] += wa*a[t] + wb*b[t]
+	var scratch [reflectionTaps]float64
+	taps := append(scratch[:0], a[from:to]...)
+	b = b[from:to]
+	for t := range taps {
+		taps[t] += w * (b[t] - taps[t])
+	}
+	for i, g := range amplitude {
+		x := h[i][first+from : first+to][:len(taps)]
+		for t, v := range taps {
+			x[t] += g * v
+		}
 	}
 }

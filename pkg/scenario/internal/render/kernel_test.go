@@ -46,7 +46,7 @@ func TestTablesInterpolateBetweenTheirFractions(t *testing.T) {
 		for range 41 {
 			delay := 40 + v.table.frac(rng)
 			h := make([]float64, 200)
-			v.table.add(h, delay+40, 1)
+			v.table.add([][]float64{h}, delay+40, []float64{1})
 			worst = math.Max(worst, errorDB(h, 0, delay+40, v.top))
 		}
 		if worst > v.bound {
@@ -91,9 +91,9 @@ func TestTapsOutsideTheResponseAreDropped(t *testing.T) {
 	k := NewTable(reflectionTaps, 64, reflectionBeta)
 	for _, delay := range []float64{-500, -33.5, -0.25, 0, 9.75, 41, 500} {
 		long := make([]float64, 200)
-		k.add(long, delay+100, 0.7)
+		k.add([][]float64{long}, delay+100, []float64{0.7})
 		short := make([]float64, 10)
-		k.add(short, delay, 0.7)
+		k.add([][]float64{short}, delay, []float64{0.7})
 		for i, v := range short {
 			want := 0.0
 			if delay+100 > 0 && delay+100 < 400 {
