@@ -4,6 +4,7 @@ import (
 	"encoding/binary"
 	"fmt"
 	"strings"
+	"unicode/utf8"
 )
 
 // Sizes in a bext body [EBU Tech 3285 v2, 2.3].
@@ -142,15 +143,20 @@ func textOf(b []byte) string {
 	if k := strings.IndexByte(string(b), 0); k >= 0 {
 		b = b[:k]
 	}
-	text := string(b)
-	if strings.ToValidUTF8(text, "") != text {
-		runes := make([]rune, len(b))
-		for i, c := range b {
-			runes[i] = rune(c)
-		}
-		text = string(runes)
-	}
+	text := string(utf8Of(b))
 	return strings.TrimRight(text, " \x00")
+}
+
+// utf8Of is b if it is UTF-8, else b taken as Latin-1.
+func utf8Of(b []byte) []byte {
+	if utf8.Valid(b) {
+		return b
+	}
+	out := make([]byte, 0, 2*len(b))
+	for _, c := range b {
+		out = utf8.AppendRune(out, rune(c))
+	}
+	return out
 }
 
 // cutText is text in at most n bytes of whole characters.

@@ -141,7 +141,7 @@ func parseXML(b []byte) (root *node, whole bool) {
 	if k := bytes.IndexByte(b, '<'); k > 0 {
 		b = b[k:] // a byte order mark
 	}
-	d := xml.NewDecoder(bytes.NewReader(b))
+	d := xml.NewDecoder(bytes.NewReader(utf8Of(b)))
 	d.Strict = false
 	d.CharsetReader = func(charset string, r io.Reader) (io.Reader, error) { return r, nil }
 	var stack []*node
@@ -173,7 +173,7 @@ func parseXML(b []byte) (root *node, whole bool) {
 			}
 		case xml.CharData:
 			if len(stack) > 0 {
-				if text := strings.TrimSpace(strings.ToValidUTF8(string(t), "\uFFFD")); text != "" {
+				if text := strings.TrimSpace(string(t)); text != "" {
 					stack[len(stack)-1].text += text
 				}
 			}
