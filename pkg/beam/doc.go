@@ -26,6 +26,9 @@
 //	})
 //	filters, fit, err := w.Filters(0)
 //
+// Longer than 2,000 lines because the engines that run filters (the program's
+// hot path) and the designs that make them share one type and one contract.
+//
 // # Sources
 //
 // [Dolph 1946] C. L. Dolph, A current distribution for broadside arrays which

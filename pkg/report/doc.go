@@ -16,6 +16,13 @@
 // characters that would steer a terminal or turn the line around, which are
 // replaced by U+FFFD.
 //
+// The page of a take (HTML) and the page of a folder (Index) are one file each
+// that needs nothing else: a Content-Security-Policy with the hashes of the one
+// style and the one script forbids the network and everything that a text from
+// a file might try to run. A page is made of the report as it is written, so
+// that its figures are the report's. Preview audio, where a report carries it,
+// travels in the page: whoever sends it along sends people's voices along.
+//
 // # Use
 //
 //	r, err := report.Read("take.report.json", data)
@@ -25,10 +32,17 @@
 //	if err := report.Summary(os.Stdout, r, 80); err != nil {
 //		return err
 //	}
-//	return report.CSV(table, r)
+//	if err := report.CSV(table, r); err != nil {
+//		return err
+//	}
+//	return report.HTML(page, r, report.Assets{Report: "take.report.json"})
+//
+// Longer than 2,000 lines because the page explains every figure to someone who
+// has nothing else, and its charts are drawn here.
 //
 // # Sources
 //
 // RFC 8259 (JSON), RFC 4180 (CSV). IEC 61260-1:2014 for the bands and their
-// nominal names.
+// nominal names. Content Security Policy Level 3 and Web Audio API 1.0, W3C.
+// Web Content Accessibility Guidelines 2.2, W3C, 2023.
 package report
