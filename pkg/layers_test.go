@@ -31,6 +31,7 @@ var layers = map[string]struct {
 	"pkg/beam":                     {3, "weights, and the beam they form"},
 	"pkg/bearing":                  {3, "where sound comes from, over time"},
 	"pkg/measure":                  {3, "signals into numbers"},
+	"pkg/scenario/internal/voice":  {0, "a talker of our own making"},
 	"pkg/scenario/internal/render": {3, "sound on its way from a source to the samples of a channel"},
 	"pkg/scenario":                 {4, "takes of imagined rooms, truth known"},
 	"pkg/response":                 {4, "what a beam should do, predicted"},

@@ -191,7 +191,7 @@ func TestImpossibleScenesAreRefused(t *testing.T) {
 		"microphone \"A\"":     func(s *Scenario) { s.Room.RigAtM = []float64{0.01, 1, 1} },
 		"cannot be in a room":  func(s *Scenario) { s.Sources[1].At = at(0, 0) },
 		"nearer than 10 mm":    func(s *Scenario) { s.Sources[1].At = &Place{PointM: []float64{0.06, 0.005, 0}} },
-		"speed of sound":       func(s *Scenario) { s.Sources[0].Path[1].AtS = 0.001 },
+		"speed of sound":       func(s *Scenario) { s.Sources[0].Path[1].AtS = 0.0005 },
 		"too short for a room": func(s *Scenario) { s.Room.RT60S = []float64{0.02} },
 		"shorter length_s":     func(s *Scenario) { s.Room.RT60S = []float64{8}; s.Room.DryAir = true },
 		"without any noise": func(s *Scenario) {

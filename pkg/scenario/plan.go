@@ -29,6 +29,7 @@ type plan struct {
 	gains      []float64      // amplitude of each source
 	levels     []float64      // level of each source, dBFS
 	recordings [][]float64    // of sources of kind file
+	shapes     [][]float64    // spectra of sources of kind noise, nil for white
 	diffuse    []*render.Diffuse
 	kernel     *render.Table // for whatever moves or drifts
 	channels   []render.Strip
@@ -157,6 +158,7 @@ func (p *plan) addSource(s *Source, opt Options) error {
 		recording = render.Resample(x[:min(len(x), most)], rate, p.sc.RateHz)
 	}
 	p.recordings = append(p.recordings, recording)
+	p.shapes = append(p.shapes, render.Shape(s.Spectrum, p.sc.RateHz))
 	return nil
 }
 
@@ -220,18 +222,23 @@ func (p *plan) setLevels() error {
 		}
 		p.levels = append(p.levels, level)
 	}
-	gains, err := p.calibrate(p.sc.Seed, p.frames)
+	gains, err := p.calibrate(p.sc.Seed, p.frames, false)
 	p.gains = gains
 	return err
 }
 
 // calibrate returns the amplitude that gives each source its level in the mean
-// over the time it is on.
-func (p *plan) calibrate(seed uint64, frames int64) ([]float64, error) {
+// over the time it is on. For fresh noise targets get none, and an interferer
+// that is not on within its length may be silent.
+func (p *plan) calibrate(seed uint64, frames int64, fresh bool) ([]float64, error) {
 	var gains []float64
 	buffer := make([]float64, render.HopFrames)
 	for i := range p.sc.Sources {
 		s := &p.sc.Sources[i]
+		if fresh && s.role() == RoleTarget {
+			gains = append(gains, 0)
+			continue
+		}
 		sig, calibrated, err := p.signal(i, seed, 0)
 		if err != nil {
 			return nil, fmt.Errorf("scenario: %w", err)
@@ -246,7 +253,14 @@ func (p *plan) calibrate(seed uint64, frames int64) ([]float64, error) {
 					energy += v * v
 				}
 			}
-			power = energy / float64(onFrames(s, p.sc.RateHz, frames))
+			sounding := frames
+			if s.Kind == KindFile { // it is over when the recording is
+				sounding = min(frames, int64(len(p.recordings[i])))
+			}
+			power = energy / float64(onFrames(s, p.sc.RateHz, sounding))
+			if power == 0 && fresh {
+				power = 1
+			}
 			if !(power > 0) {
 				return nil, fmt.Errorf("scenario: source %q: it is silent while it is on", s.Name)
 			}

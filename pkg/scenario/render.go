@@ -84,7 +84,7 @@ func (r *Rendering) FreshNoise(seconds float64, seed uint64) (audio.Source, erro
 		return nil, fmt.Errorf("scenario: fresh noise of %g s: want more than 0 and at most %d", seconds, MaxDurationS)
 	}
 	frames := int64(seconds*float64(r.plan.sc.RateHz) + 0.5)
-	gains, err := r.plan.calibrate(seed, frames)
+	gains, err := r.plan.calibrate(seed, frames, true)
 	if err != nil {
 		return nil, err
 	}
@@ -98,7 +98,7 @@ func (r *Rendering) Each(fn func(mix, target, noise audio.Block) error) error {
 	p := r.plan
 	desk := p.newDesk(p.sc.Seed, p.gains, partTarget, partNoise)
 	boards := []*board{p.newBoard(p.sc.Seed, true), p.newBoard(p.sc.Seed, false), p.newBoard(p.sc.Seed, true)}
-	fields := [][]*field{{desk.fields[0], desk.fields[1]}, {desk.fields[0]}, {desk.fields[1]}}
+	fields := [][]*render.Field{{desk.fields[0], desk.fields[1]}, {desk.fields[0]}, {desk.fields[1]}}
 	blocks := make([]audio.Block, 3)
 	for b := range blocks {
 		blocks[b] = audio.NewBlock(len(p.channels), render.HopFrames)
@@ -116,51 +116,16 @@ func (r *Rendering) Each(fn func(mix, target, noise audio.Block) error) error {
 	return nil
 }
 
-// field is a stretch of sound at the microphones.
-type field struct {
-	emitters []render.Emitter
-	base     int64       // frame of rows[m][0]
-	rows     [][]float64 // rows[m]
-	hop      [][]float64
-}
-
-// hold makes the frames from..to (half-open) available.
-func (f *field) hold(from, to int64) {
-	if drop := from - f.base; drop > 0 {
-		drop = min(drop, int64(len(f.rows[0])))
-		for m := range f.rows {
-			f.rows[m] = f.rows[m][:copy(f.rows[m], f.rows[m][drop:])]
-		}
-		f.base += drop
-	}
-	for f.base+int64(len(f.rows[0])) < to {
-		for m := range f.hop {
-			clear(f.hop[m])
-		}
-		for _, e := range f.emitters {
-			e.Add(f.hop)
-		}
-		for m := range f.rows {
-			f.rows[m] = append(f.rows[m], f.hop[m]...)
-		}
-	}
-}
-
 // desk is the parts of a sound field that move on together.
 type desk struct {
 	plan   *plan
-	fields []*field
+	fields []*render.Field
 }
 
 func (p *plan) newDesk(seed uint64, gains []float64, parts ...part) *desk {
 	d := &desk{plan: p}
 	for _, what := range parts {
-		f := &field{emitters: p.emitters(what, seed, gains, -p.lead), base: -p.lead}
-		for range p.mics {
-			f.rows = append(f.rows, make([]float64, 0, 4*render.HopFrames))
-			f.hop = append(f.hop, make([]float64, render.HopFrames))
-		}
-		d.fields = append(d.fields, f)
+		d.fields = append(d.fields, render.NewField(p.emitters(what, seed, gains, -p.lead), len(p.mics), -p.lead))
 	}
 	return d
 }
@@ -178,7 +143,7 @@ func (d *desk) advance(at int64, n int) {
 		to = max(to, int64(math.Floor(c.Position(at+int64(n)-1, rate)))+render.KernelTaps/2+1)
 	}
 	for _, f := range d.fields {
-		f.hold(from, to)
+		f.Hold(from, to)
 	}
 }
 
@@ -198,7 +163,7 @@ func (p *plan) newBoard(seed uint64, additions bool) *board {
 }
 
 // run writes the frames from at on that the channels make of the fields.
-func (b *board) run(dst audio.Block, at int64, fields []*field) {
+func (b *board) run(dst audio.Block, at int64, fields []*render.Field) {
 	rate := float64(b.plan.sc.RateHz)
 	n := dst.Frames()
 	for ch, l := range b.lines {
@@ -208,9 +173,9 @@ func (b *board) run(dst audio.Block, at int64, fields []*field) {
 			if l.Mic < 0 {
 				continue
 			}
-			row := f.rows[l.Mic]
+			row := f.Rows[l.Mic]
 			if !l.Shifts() {
-				for i, v := range row[at-f.base:][:n] {
+				for i, v := range row[at-f.Base:][:n] {
 					x[i] += v
 				}
 				continue
@@ -218,7 +183,7 @@ func (b *board) run(dst audio.Block, at int64, fields []*field) {
 			for i := range x {
 				pos := l.Position(at+int64(i), rate)
 				whole := math.Floor(pos)
-				x[i] += b.plan.kernel.At(row[int64(whole)-render.KernelTaps/2+1-f.base:], pos-whole)
+				x[i] += b.plan.kernel.At(row[int64(whole)-render.KernelTaps/2+1-f.Base:], pos-whole)
 			}
 		}
 		l.Run(dst.Channel(ch), x)

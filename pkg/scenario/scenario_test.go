@@ -56,7 +56,7 @@ func roomy() *Scenario {
 		Room: &Room{SizeM: []float64{4, 5, 3}, RigAtM: []float64{1.8, 1.5, 1.2}, TurnDeg: 20, RT60S: []float64{0.2}},
 		Sources: []Source{
 			{Name: "walker", Kind: KindNoise, LevelDBFS: number(-30), Path: []Waypoint{
-				{AtS: 0, Place: *at(60, 1.2)}, {AtS: 0.5, Place: *at(75, 1.2)}}},
+				{AtS: 0, Place: *at(60, 1.2)}, {AtS: 0.5, Place: *at(64, 1.2)}}},
 			{Name: "fan", Role: RoleInterferer, Kind: KindNoise, Spectrum: SpectrumPink, At: at(120, 1.5), LevelDBFS: number(-40)},
 		},
 	}
@@ -190,9 +190,6 @@ func TestDirectSoundIsPartOfTheTarget(t *testing.T) {
 	sc := roomy()
 	outdoors := roomy()
 	outdoors.Room = nil
-	for i := range sc.Sources { // the rig stands in the room, sources keep their places
-		outdoors.Sources[i] = sc.Sources[i]
-	}
 	direct := whole(t, rendered(t, sc).Direct())
 	open := rendered(t, outdoors)
 	if !same(whole(t, open.Direct()), whole(t, open.Target())) {
@@ -293,21 +290,23 @@ func TestFreshNoiseIsOtherNoiseOfTheSameKind(t *testing.T) {
 			t.Errorf("channel %d: fresh noise is %.2f dB louder", ch+1, d)
 		}
 	}
-	if same(whole(t, must(r.FreshNoise(4, sc.Seed))), old) == false {
+	again, err := r.FreshNoise(4, sc.Seed)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if !same(whole(t, again), old) {
 		t.Error("fresh noise of the same seed and length is other noise")
+	}
+	late := busy() // neither the voice nor the claps are on so early
+	late.Sources[3].OnS = [][]float64{{0.2, 0.6}}
+	if _, err := rendered(t, late).FreshNoise(0.05, 1); err != nil {
+		t.Errorf("fresh noise shorter than the wait for its sources: %v", err)
 	}
 	for _, seconds := range []float64{0, -1, math.NaN(), 1e9} {
 		if _, err := r.FreshNoise(seconds, 1); err == nil {
 			t.Errorf("%g s of noise: no error", seconds)
 		}
 	}
-}
-
-func must(s audio.Source, err error) audio.Source {
-	if err != nil {
-		panic(err)
-	}
-	return s
 }
 
 // A recording comes out where it went in, at another rate too.
@@ -338,6 +337,19 @@ func TestFilesSoundAtTheirPlace(t *testing.T) {
 				t.Fatalf("from %d Hz: frame %d = %.6f, want %.6f", rate, i, got, want)
 			}
 		}
+	}
+	long := *sc // the recording is over after its second: the level holds until then
+	long.DurationS = 3
+	r, err := long.Render(sound(48000, false))
+	if err != nil {
+		t.Fatal(err)
+	}
+	b := whole(t, r.Target())
+	if got := level(b, 0, 0, 48000); math.Abs(got+20) > 0.01 {
+		t.Errorf("recording at %.3f dBFS while it lasts, want -20", got)
+	}
+	if on := r.Truth().Sources[0].OnS; len(on) != 1 || math.Abs(on[0][1]-1) > 1e-9 {
+		t.Errorf("the truth says it is on in %v, want 0 to 1 s", on)
 	}
 	if _, err := sc.Render(sound(48000, true)); err == nil || !strings.Contains(err.Error(), "silent") {
 		t.Errorf("a silent recording: %v, want an error", err)

@@ -6,6 +6,7 @@ import (
 
 	"alidade/pkg/rig"
 	"alidade/pkg/scenario/internal/render"
+	"alidade/pkg/scenario/internal/voice"
 )
 
 // newTrack returns the track of a valid source.
@@ -54,7 +55,7 @@ func (p *plan) signal(i int, seed uint64, first int64) (sig render.Mono, calibra
 	case KindClaps:
 		sig = render.Starting(first, &render.Claps{Rng: rng, Rate: float64(rate), Period: max(1, int64(or(s.EveryS, 1)*float64(rate)))})
 	case KindTalker:
-		sig = render.Starting(first, render.NewTalker(rate, or(s.Hz, 115), rng))
+		sig = render.Starting(first, voice.New(rate, or(s.Hz, 115), rng))
 	case KindFile:
 		sig = &render.Recording{X: p.recordings[i], Frame: first}
 	default:

@@ -3,6 +3,7 @@ package scenario
 import (
 	"fmt"
 	"math"
+	"math/cmplx"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/rig"
@@ -108,16 +109,23 @@ func (p *plan) truthSource(i int) TruthSource {
 	s, tr := &p.sc.Sources[i], p.tracks[i]
 	out := TruthSource{Name: s.Name, Role: s.role(), Kind: s.Kind, LevelDBFS: p.levels[i]}
 	end := float64(p.frames) / float64(p.sc.RateHz)
+	over := math.Inf(1) // when a recording is, source's time
+	if s.Kind == KindFile {
+		over = float64(len(p.recordings[i])) / float64(p.sc.RateHz)
+	}
 	heard := func(t0 float64) float64 { // when sound of the source's time t0 passes the reference point
 		delay, _ := tr.Reach(t0, p.ref)
-		return t0 + delay
+		return t0 + delay // +Inf stays what it is: sources stand still at last
 	}
 	on := s.OnS
 	if on == nil {
-		out.OnS = [][2]float64{{0, end}}
+		out.OnS = [][2]float64{{0, math.Min(end, heard(over))}}
 	}
 	for _, span := range on {
-		out.OnS = append(out.OnS, [2]float64{math.Max(0, heard(span[0])), math.Min(end, heard(span[1]))})
+		from, to := math.Max(0, heard(span[0])), math.Min(end, heard(math.Min(span[1], over)))
+		if from < to {
+			out.OnS = append(out.OnS, [2]float64{from, to})
+		}
 	}
 	point := func(t, t0 float64) TruthPoint {
 		w := tr.Wave(t0)
@@ -307,7 +315,7 @@ func (r *Rendering) NoiseCovariance(dst []complex128, hz float64) ([]complex128,
 			continue
 		}
 		power := p.gains[i] * p.gains[i]
-		if taps := render.Shape(s.Spectrum, p.sc.RateHz); taps != nil {
+		if taps := p.shapes[i]; taps != nil {
 			v := render.TapResponse(taps, 0, omega)
 			power *= real(v)*real(v) + imag(v)*imag(v)
 		}
@@ -322,8 +330,7 @@ func (r *Rendering) NoiseCovariance(dst []complex128, hz float64) ([]complex128,
 		for b := range p.channels {
 			ca, cb := &p.channels[a], &p.channels[b]
 			if ca.Mic >= 0 && cb.Mic >= 0 {
-				s, c := math.Sincos(-2 * math.Pi * hz * (ca.Delay - cb.Delay))
-				dst[a*channels+b] = at[ca.Mic*count+cb.Mic] * complex(ca.Factor*cb.Factor*c, ca.Factor*cb.Factor*s)
+				dst[a*channels+b] = at[ca.Mic*count+cb.Mic] * cmplx.Rect(ca.Factor*cb.Factor, -2*math.Pi*hz*(ca.Delay-cb.Delay))
 			}
 		}
 		dst[a*channels+a] += complex(p.channels[a].Sensor*p.channels[a].Sensor, 0)
@@ -337,43 +344,49 @@ func (r *Rendering) NoiseCovariance(dst []complex128, hz float64) ([]complex128,
 // moves or is not there, and where a clock drifts.
 func (r *Rendering) Transfer(dst []complex128, source string, hz float64) ([]complex128, error) {
 	p := r.plan
-	for i := range p.sc.Sources {
-		if p.sc.Sources[i].Name != source {
+	i, err := p.find(source)
+	if err != nil {
+		return nil, err
+	}
+	if p.banks[i] == nil {
+		return nil, fmt.Errorf("scenario: transfer of source %q: it moves", source)
+	}
+	dst = dst[:0]
+	for ch := range p.channels {
+		c := &p.channels[ch]
+		switch {
+		case c.ClockPPM != 0:
+			return nil, fmt.Errorf("scenario: transfer of source %q: the clock of channel %d drifts", source, ch+1)
+		case c.Mic < 0 || c.Dead:
+			dst = append(dst, 0)
 			continue
 		}
-		if p.banks[i] == nil {
-			return nil, fmt.Errorf("scenario: transfer of source %q: it moves", source)
-		}
-		omega := 2 * math.Pi * hz / float64(p.sc.RateHz)
-		dst = dst[:0]
-		for ch := range p.channels {
-			c := &p.channels[ch]
-			if c.ClockPPM != 0 {
-				return nil, fmt.Errorf("scenario: transfer of source %q: the clock of channel %d drifts", source, ch+1)
-			}
-			if c.Mic < 0 || c.Dead {
-				dst = append(dst, 0)
-				continue
-			}
-			s, k := math.Sincos(-2 * math.Pi * hz * c.Delay)
-			dst = append(dst, p.banks[i].Response(c.Mic, 0, omega)*complex(c.Factor*k, c.Factor*s))
-		}
-		return dst, nil
+		turn := cmplx.Rect(c.Factor, -2*math.Pi*hz*c.Delay)
+		dst = append(dst, turn*p.banks[i].Response(c.Mic, 0, 2*math.Pi*hz/float64(p.sc.RateHz)))
 	}
-	return nil, fmt.Errorf("scenario: transfer of source %q: there is none of that name", source)
+	return dst, nil
+}
+
+// find returns the number of the source of a name.
+func (p *plan) find(source string) (int, error) {
+	for i := range p.sc.Sources {
+		if p.sc.Sources[i].Name == source {
+			return i, nil
+		}
+	}
+	return 0, fmt.Errorf("scenario: source %q: there is none of that name", source)
 }
 
 // Heard returns where sound of a source that passes the reference point at a
 // time, seconds, comes from.
 func (r *Rendering) Heard(source string, seconds float64) (rig.Direction, error) {
-	p := r.plan
-	for i := range p.sc.Sources {
-		if p.sc.Sources[i].Name == source {
-			t0, _ := p.tracks[i].Emission(seconds, seconds, p.ref)
-			return p.tracks[i].Wave(t0).Direction(p.ref), nil
-		}
+	i, err := r.plan.find(source)
+	if err != nil {
+		return rig.Direction{}, err
 	}
-	return rig.Direction{}, fmt.Errorf("scenario: source %q: there is none of that name", source)
+	tr := r.plan.tracks[i]
+	t0, _ := tr.Emission(seconds, seconds, r.plan.ref)
+	return tr.Wave(t0).Direction(r.plan.ref), nil
 }
 
 // Microphones returns where the microphones really are, in the order of the

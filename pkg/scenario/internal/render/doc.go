@@ -16,9 +16,6 @@
 //	e := render.NewMixer(bank, []render.Mono{in})
 //	e.Add(rows) // rows[m][i], HopFrames more frames
 //
-// Longer than 2,000 lines because signals, fields, rooms, paths and faults all
-// write into one stream with one clock.
-//
 // # Sources
 //
 // [Allen & Berkley 1979] J. B. Allen, D. A. Berkley, Image method for

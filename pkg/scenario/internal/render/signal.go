@@ -95,6 +95,8 @@ type Gated struct {
 	Frame int64      // of the next sample of In
 	On    [][2]int64 // frames, ascending, apart
 	Edge  int64      // frames
+
+	over int // of On, those that are over
 }
 
 // Next implements Mono.
@@ -107,17 +109,18 @@ func (g *Gated) Next(dst []float64) {
 }
 
 func (g *Gated) gain(frame int64) float64 {
-	for _, on := range g.On {
-		if frame < on[0] || frame >= on[1] {
-			continue
-		}
-		edge := min(g.Edge, (on[1]-on[0])/2)
-		if d := min(frame-on[0], on[1]-1-frame); d < edge {
-			return 0.5 - 0.5*math.Cos(math.Pi*(float64(d)+0.5)/float64(edge))
-		}
-		return 1
+	for g.over < len(g.On) && frame >= g.On[g.over][1] {
+		g.over++
 	}
-	return 0
+	if g.over == len(g.On) || frame < g.On[g.over][0] {
+		return 0
+	}
+	on := g.On[g.over]
+	edge := min(g.Edge, (on[1]-on[0])/2)
+	if d := min(frame-on[0], on[1]-1-frame); d < edge {
+		return 0.5 - 0.5*math.Cos(math.Pi*(float64(d)+0.5)/float64(edge))
+	}
+	return 1
 }
 
 // Chirp returns exponential sweeps from one frequency to another, hertz,

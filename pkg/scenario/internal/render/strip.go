@@ -127,6 +127,9 @@ func (l *Line) additions(x []float64) {
 		}
 	}
 	for _, k := range l.Thumps {
+		if l.frame+int64(len(x)) <= k.At || float64(l.frame-k.At)*k.Decay >= 12 {
+			continue
+		}
 		for i := range x {
 			t := float64(l.frame + int64(i) - k.At)
 			if t >= 0 && t*k.Decay < 12 {

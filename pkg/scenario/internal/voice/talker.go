@@ -1,14 +1,9 @@
-package render
+package voice
 
 import (
 	"math"
 	"math/rand/v2"
 )
-
-// A talker is speech-like sound without words: glottal pulses through moving
-// formant resonators, hisses and bursts between them, in phrases with pauses.
-// Its long-term spectrum, its pauses and its level over time are like those of
-// a voice; it says nothing.
 
 // vowels are the mean formant frequencies of men's vowels, hertz
 // [Peterson & Barney 1952, table II]; a fourth is set at 3500 Hz.
@@ -40,15 +35,15 @@ func (r *resonator) step(x float64) float64 {
 
 // normal returns the factor that gives y[i] - y[i-2] unit power when white noise
 // of unit power goes in, from the autocorrelation of the resonator, an
-// autoregression of order 2 (Box & Jenkins).
+// autoregression of order 2 [Box & Jenkins].
 func (r *resonator) normal() float64 {
 	power := r.a * r.a * (1 - r.c) / ((1 + r.c) * ((1-r.c)*(1-r.c) - r.b*r.b))
 	second := r.b*r.b/(1-r.c) + r.c // correlation at lag 2
 	return 1 / math.Sqrt(2*power*(1-second))
 }
 
-// talker makes its sound control interval after control interval.
-type talker struct {
+// Talker makes its sound control interval after control interval.
+type Talker struct {
 	rate     float64
 	pitchHz  float64
 	rng      *rand.Rand
@@ -79,15 +74,15 @@ type segment struct {
 	hiss       [3]float64
 }
 
-// NewTalker returns a talker of a pitch in hertz.
-func NewTalker(rate int, pitchHz float64, rng *rand.Rand) *talker {
-	t := &talker{rate: float64(rate), pitchHz: pitchHz, rng: rng, hz: pitchHz, tuned: [4]float64{500, 1500, 2500, 3500}}
+// New returns a talker of a pitch in hertz.
+func New(rate int, pitchHz float64, rng *rand.Rand) *Talker {
+	t := &Talker{rate: float64(rate), pitchHz: pitchHz, rng: rng, hz: pitchHz, tuned: [4]float64{500, 1500, 2500, 3500}}
 	t.aim.hiss = hisses[0]
 	return t
 }
 
 // plan fills in the next phrase: syllables, then a pause.
-func (t *talker) plan() {
+func (t *Talker) plan() {
 	between := func(a, b float64) float64 { return a + (b-a)*t.rng.Float64() }
 	var said []segment
 	for range 4 + t.rng.IntN(8) {
@@ -113,8 +108,8 @@ func (t *talker) plan() {
 	t.spoken = 0
 }
 
-// Next implements Mono.
-func (t *talker) Next(dst []float64) {
+// Next writes the next len(dst) frames.
+func (t *Talker) Next(dst []float64) {
 	const tickFrames = 32 // between changes of the resonators
 	dt := 1 / t.rate
 	glide := 1 - math.Exp(-float64(tickFrames)*dt/0.025)
@@ -172,7 +167,7 @@ func (t *talker) Next(dst []float64) {
 }
 
 // retune moves formants and pitch towards their aims by the share glide.
-func (t *talker) retune(glide float64) {
+func (t *Talker) retune(glide float64) {
 	widths := [4]float64{110, 110, 170, 250} // hertz, after [Klatt 1980, table I], the first wider
 	for f := range t.tract {
 		aim := 3500.0
