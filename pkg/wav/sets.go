@@ -195,43 +195,51 @@ const (
 // Where neither has a time reference it is the one whose name counts on
 // ("x.wav", "x-2.wav"; "x_01.wav", "x_02.wav"), if the last one is as large as
 // a file that recorders split. Files of another rate, channels, iXML family,
-// scene or take never follow. Two that could follow are an error.
+// scene or take never follow. Of several the nearest follows; two as near are
+// an error.
 func FindChain(files []File, first int) ([]int, error) {
 	chain := []int{first}
 	for {
 		last := files[chain[len(chain)-1]]
-		var next []int
+		next, tied, nearest := -1, -1, int64(0)
 		for k, f := range files {
-			if !slices.Contains(chain, k) && follows(last, f) {
-				next = append(next, k)
+			apart, ok := follows(last, f)
+			switch {
+			case !ok || slices.Contains(chain, k):
+			case next < 0 || apart < nearest:
+				next, tied, nearest = k, -1, apart
+			case apart == nearest:
+				tied = k
 			}
 		}
-		switch len(next) {
-		case 0:
+		if next < 0 {
 			return chain, nil
-		case 1:
-			chain = append(chain, next[0])
-		default:
-			return nil, fmt.Errorf("%s: both %s and %s could follow it", last.Name, files[next[0]].Name, files[next[1]].Name)
 		}
+		if tied >= 0 {
+			return nil, fmt.Errorf("%s: both %s and %s could follow it", last.Name, files[next].Name, files[tied].Name)
+		}
+		chain = append(chain, next)
 	}
 }
 
-func follows(a, b File) bool {
+// follows says whether b may be the next file of a chain after a, and how many
+// frames apart they are.
+func follows(a, b File) (apart int64, ok bool) {
 	if a.Header.Rate != b.Header.Rate || a.Header.Channels != b.Header.Channels || a.Header.Encoding != b.Header.Encoding {
-		return false
+		return 0, false
 	}
 	if a.Metadata != nil && a.Metadata.IXML != nil && b.Metadata != nil && b.Metadata.IXML != nil {
 		x, y := a.Metadata.IXML, b.Metadata.IXML
 		if x.FileSet.FamilyUID != y.FileSet.FamilyUID || x.Scene != y.Scene || x.Take != y.Take || x.Tape != y.Tape {
-			return false
+			return 0, false
 		}
 		if len(x.Tracks) > 0 && len(y.Tracks) > 0 && x.Tracks[0].Channel != y.Tracks[0].Channel {
-			return false // the next file of another channel of the set
+			return 0, false // the next file of another channel of the set
 		}
 	}
 	if gap, ok := gapBetween(a, b); ok {
-		return max(gap, -gap) <= int64(a.Header.Rate)/20
+		apart = max(gap, -gap)
+		return apart, apart <= int64(a.Header.Rate)/20
 	}
 	_, aok := a.Metadata.TimeBase(a.Header.Rate)
 	_, bok := b.Metadata.TimeBase(b.Header.Rate)
@@ -240,7 +248,7 @@ func follows(a, b File) bool {
 		end := a.Header.DataOffset + a.Header.DataSize
 		full = full || end <= unit*splitUnit && end >= unit*(splitUnit-splitSlack)
 	}
-	return !aok && !bok && full && countsOn(a.Name, b.Name)
+	return 0, !aok && !bok && full && countsOn(a.Name, b.Name)
 }
 
 // countsOn says whether name b follows name a.
