@@ -55,7 +55,7 @@ type Mixer struct {
 }
 
 // NewMixer returns a mixer whose first frame out needs the frame
-// first - start - length + 1 of the inputs as their first: see lead.
+// first - start - length + 1 of the inputs as their first: see Lead.
 func NewMixer(bank *Bank, in []Mono) *Mixer {
 	length := bank.Length()
 	n := 1024
