@@ -196,7 +196,8 @@ func roomTrials(t *testing.T, mics []rig.Point, rt60, distance float64, steady b
 // The accuracy table in a room of 0.4 s, 20 dB: median error at most 1.5° at 1
 // to 1.5 m and 2.5° at 2 m; the 95 % interval holds the truth in 85 to 99 %,
 // median standard error at most three times the median error. The seeds here were
-// not looked at when the reverberation terms were fitted (500.. and 900000..),
+// not looked at when the reverberation terms were fitted (500.., 900000..
+// and 5000000..),
 // nor was the steady source at 2 m in 0.2 s.
 func TestDirectionInRooms(t *testing.T) {
 	if testing.Short() {
@@ -225,7 +226,7 @@ func TestDirectionInRooms(t *testing.T) {
 			if !long() && (c.steady || c.rt60 != 0.4) {
 				continue
 			}
-			all := roomTrials(t, g.mics, c.rt60, c.distance, c.steady, n, 5000000)
+			all := roomTrials(t, g.mics, c.rt60, c.distance, c.steady, n, 7000000)
 			pooled = append(pooled, all...)
 			s := tally(all)
 			t.Logf("%-5s %.1f s %.1f m steady %-5v: found %d of %d, median error %.2f°, median SE %.2f°, coverage %.3f",
@@ -242,8 +243,13 @@ func TestDirectionInRooms(t *testing.T) {
 		if s.medianSE > 3*s.median {
 			t.Errorf("%s: median standard error %.2f°, median error %.2f°: want at most three times", g.name, s.medianSE, s.median)
 		}
-		if s.coverage < 0.85 {
-			t.Errorf("%s: coverage %.3f, want 0.85 to 0.99", g.name, s.coverage)
+		// A short run counts few takes: three binomial standard deviations of room.
+		least := 0.85
+		if !long() {
+			least -= 3 * math.Sqrt(0.85*0.15/float64(s.n))
+		}
+		if s.coverage < least {
+			t.Errorf("%s: coverage %.3f, want %.3f to 0.99", g.name, s.coverage, least)
 		}
 		if long() && s.coverage > 0.99 {
 			t.Errorf("%s: coverage %.3f, want 0.85 to 0.99", g.name, s.coverage)

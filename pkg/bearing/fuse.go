@@ -10,6 +10,7 @@ import (
 const (
 	priorFreedom     = 4.0   // weight of the theoretical error against the observed spread, in windows
 	leadLimit        = 0.06  // mean lead from which the later of two is a reflection
+	blurLine         = 0.04  // the same for a line rig, whose reflections mostly are sources of their own
 	blurSolid        = 0.04  // the same for a solid rig, which tells reflections apart best
 	floorShift       = 0.3   // part of the cosine by which floor and ceiling can pull a line's angle, see spread
 	blurFactor       = 0.055 // of the shift that reflections alike at all lines would make

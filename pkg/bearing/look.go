@@ -13,7 +13,7 @@ const (
 	detectSigma = 5.0  // peaks below this many standard deviations of pure noise are none
 	detectFloor = 0.06 // nor are peaks lower than this
 	secondPeak  = 0.3  // a further source reaches this part of the first
-	maxCoherent = 0.9995
+	maxCoherent = 0.995
 	maxGroups   = 16
 	groupHz     = 150 // least width of a group of lines
 )

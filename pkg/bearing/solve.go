@@ -232,7 +232,10 @@ func (f *Finder) spread(out *settled, members []int, weights []float64, total, i
 	// which more windows do not lessen.
 	var blurred mat4
 	factor := blurFactor
-	if dim == 3 {
+	switch dim {
+	case 1:
+		factor = blurLine
+	case 3:
 		factor = blurSolid
 	}
 	ratio2 := 0.0
