@@ -58,6 +58,14 @@ func (b Beam) To(w acoustics.Wave, hz float64) complex128 {
 // to is To for the path responses g at hz.
 func (b Beam) to(g []complex128, w acoustics.Wave, hz float64) complex128 {
 	var y complex128
+	if far, ok := w.(acoustics.Plane); ok { // the direction's vector once, not once a microphone
+		k := far.From.Unit().Scale(2 * math.Pi * hz / b.Speed)
+		for m, p := range b.Mics {
+			s, c := math.Sincos(p.Sub(b.Reference).Dot(k))
+			y += g[m] * complex(c, s)
+		}
+		return y
+	}
 	for m, p := range b.Mics {
 		s, c := math.Sincos(-2 * math.Pi * hz * w.Delay(p, b.Reference, b.Speed))
 		a := w.Spreading(p, b.Reference)
