@@ -111,7 +111,16 @@ func (x *Bext) body() []byte {
 		}
 		le.PutUint16(b[bextLoudAt+2*k:], uint16(v))
 	}
-	return append(b, x.CodingHistory...)
+	return even(append(b, x.CodingHistory...), 0)
+}
+
+// even fills b up to an even length. A pad byte outside would do by the
+// format, but readers of RF64 are about that lose their way at it.
+func even(b []byte, fill byte) []byte {
+	if len(b)%2 == 1 {
+		b = append(b, fill)
+	}
+	return b
 }
 
 // hundredths is round(100·v), ties away from zero [EBU Tech 3285 v2, 2.4]. The

@@ -189,6 +189,12 @@ func corpus() (list []entry) {
 		entry{name: "odd data without pad at the end", taken: of(recipe{bits: 24, channels: 1, frames: 41, noPad: true})},
 		entry{name: "odd 8-bit data with pad", taken: of(recipe{bits: 8, channels: 1, frames: 41})},
 		entry{name: "odd 24-bit data with pad", taken: of(recipe{bits: 24, channels: 3, frames: 41})},
+		entry{name: "pad byte counted into the data", taken: edit(recipe{bits: 24, channels: 1, frames: 41}, func(b []byte) []byte { le.PutUint32(b[40:], 124); return b })},
+		entry{name: "a byte of a frame counted into the data", taken: edit(recipe{bits: 24, channels: 1, frames: 41}, func(b []byte) []byte {
+			le.PutUint32(b[40:], 124)
+			b[len(b)-1] = 7
+			return b
+		}), warnings: WarnPartialFrame},
 		entry{name: "two data chunks", taken: of(recipe{after: []rawChunk{{"data", make([]byte, 400)}}}), warnings: WarnTwice},
 		entry{name: "two fmt chunks", taken: of(recipe{between: []rawChunk{{"fmt ", make([]byte, 16)}}}), warnings: WarnTwice},
 		entry{name: "fact that lies", taken: of(recipe{tag: tagFloat, bits: 32, between: []rawChunk{{"fact", []byte{41, 0, 0, 0}}}}), warnings: WarnFact},

@@ -239,7 +239,7 @@ func (x *IXML) body() []byte {
 	if x.root != nil {
 		x.root.write(&b, 0)
 	}
-	return b.Bytes()
+	return even(b.Bytes(), '\n')
 }
 
 func (n *node) write(b *bytes.Buffer, depth int) {

@@ -303,7 +303,7 @@ func (s *scan) dataExtent(c Chunk, claim uint64, left int64) int64 {
 		s.warn(WarnNoDS64, c.Offset, "data chunk has its length in a ds64 chunk that is not there")
 	}
 	switch {
-	case unknown && uint64(left) < unset32:
+	case unknown:
 		s.warn(WarnSizeUnknown, c.Offset, "data chunk says nothing of its length: read to the end of the file, %d bytes", left)
 		return left
 	case claim == 0 && left > 0 && !s.knownAt(c.body):
@@ -378,13 +378,14 @@ func (s *scan) finish() error {
 	h, frame := &s.head, int64(s.head.FrameBytes())
 	h.Frames = s.data.Size / frame
 	h.DataOffset, h.DataSize = s.data.body, h.Frames*frame
-	if rest := s.data.Size - h.DataSize; rest > 0 {
+	if rest := s.data.Size - h.DataSize; rest > 0 && !s.padCounted(h.DataOffset+h.DataSize, rest) {
 		s.warn(WarnPartialFrame, h.DataOffset+h.DataSize, "data chunk ends %d bytes into a frame of %d: they are left out", rest, frame)
 	}
 	if h.Frames == 0 {
 		s.warn(WarnNoFrames, s.data.Offset, "data chunk holds no frames")
 	}
-	if end := s.base + 8 + s.riffSize; s.riffSize != 0 && s.riffSize != unset32 && !s.wave64 && (end > s.size+1 || end < h.DataOffset+s.data.Size) {
+	said := s.riffSize != 0 && s.riffSize != unset32 && s.riffSize != int64(uint32(s.size-8-s.base)) && !s.wave64
+	if end := s.base + 8 + s.riffSize; said && (end > s.size+1 || end < h.DataOffset+s.data.Size) {
 		s.warn(WarnRIFFSize, s.base, "RIFF header gives an end at byte %d, the file has %d", end, s.size)
 	}
 	if s.fact != nil && h.Encoding.Float() {
@@ -395,6 +396,16 @@ func (s *scan) finish() error {
 		}
 	}
 	return nil
+}
+
+// padCounted says whether the rest behind the last whole frame is padding that
+// a writer counted into the size of the data.
+func (s *scan) padCounted(pos, rest int64) bool {
+	if rest != 1 && !(s.wave64 && rest < 8) {
+		return false
+	}
+	b, err := s.bytesAt(pos, int(rest))
+	return err == nil && len(bytes.Trim(b, "\x00")) == 0
 }
 
 // idText makes a chunk id fit for a message.
