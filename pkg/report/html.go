@@ -5,6 +5,7 @@ import (
 	"crypto/sha256"
 	_ "embed" // the page's own files
 	"encoding/base64"
+	"encoding/json"
 	"fmt"
 	"html/template"
 	"io"
@@ -83,6 +84,10 @@ type takeView struct {
 // either. It is made of the result alone, so that the JSON report gives the
 // same page again.
 func HTML(w io.Writer, r *pipeline.Result, assets Assets) error {
+	r, err := asReported(r)
+	if err != nil {
+		return err
+	}
 	v, err := viewTake(r, assets)
 	if err != nil {
 		return fmt.Errorf("report: page: %w", err)
@@ -93,6 +98,20 @@ func HTML(w io.Writer, r *pipeline.Result, assets Assets) error {
 	}
 	_, err = w.Write(b.Bytes())
 	return err
+}
+
+// asReported returns a result as its JSON report has it: every figure rounded
+// once, so that a page made of the report shows the same.
+func asReported(r *pipeline.Result) (*pipeline.Result, error) {
+	var b bytes.Buffer
+	if err := JSON(&b, r); err != nil {
+		return nil, err
+	}
+	var back pipeline.Result
+	if err := json.Unmarshal(b.Bytes(), &back); err != nil {
+		return nil, fmt.Errorf("report: %w", err)
+	}
+	return &back, nil
 }
 
 // policy is the Content-Security-Policy of a page with one style and one
@@ -109,7 +128,7 @@ func viewTake(r *pipeline.Result, assets Assets) (*takeView, error) {
 	v := &takeView{
 		Policy: policy(pageCSS, pageJS), Style: template.CSS(pageCSS), Script: template.JS(pageJS),
 		Version: clean(r.Version), Name: shorten(takeName(r), 120), Rig: shorten(clean(r.Rig.Name), 120), Facts: facts(r),
-		Heading: heading(r), Lead: lead(r), Direction: pointedWords(r), Ambiguity: sentence(clean(r.Steer.Ambiguity)),
+		Heading: heading(r), Lead: lead(r), Direction: pointedWords(r), Ambiguity: sentence(shorten(clean(r.Steer.Ambiguity), 400)),
 		BandHeading: bandHeading(r), TimeHeading: timeHeading(r), ChannelHeading: channelHeading(r),
 		Stamp: stamp(r), State: stateOf(r), Assets: assets,
 		Bands: bandCharts(r), Rows: bandRows(r.Bands), RigPicture: rigPicture(r),
@@ -206,7 +225,7 @@ func findingViews(r *pipeline.Result) []findingView {
 	glyphs := map[pipeline.Severity]string{pipeline.Error: "×", pipeline.Warning: "!", pipeline.Info: "i"}
 	var list []findingView
 	for _, f := range sortedFindings(r) {
-		v := findingView{Severity: string(f.Severity), Glyph: glyphs[f.Severity], Message: sentence(shorten(clean(f.Message), 1000))}
+		v := findingView{Severity: string(f.Severity), Glyph: glyphs[f.Severity], Message: sentence(shorten(clean(f.Message), 600))}
 		if _, known := glyphs[f.Severity]; !known {
 			v.Severity, v.Glyph = "info", "i"
 		}

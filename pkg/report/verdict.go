@@ -73,6 +73,8 @@ func lead(r *pipeline.Result) string {
 		if o.NoiseReductionDB != nil && o.TargetChangeDB != nil {
 			parts = append(parts, fmt.Sprintf("The noise %s, the wanted sound %s.", changeWords(-*o.NoiseReductionDB), changeWords(*o.TargetChangeDB)))
 		}
+	case o.NoiseReductionDB != nil && *o.NoiseReductionDB < -0.05:
+		parts = append(parts, fmt.Sprintf("The noise got louder: its reduction is %s; how much of the wanted sound was kept could not be measured.", withInterval(o.NoiseReductionDB, o.NoiseReductionCI95)))
 	case o.NoiseReductionDB != nil:
 		parts = append(parts, fmt.Sprintf("The noise falls by %s; how much of the wanted sound was kept could not be measured.", withInterval(o.NoiseReductionDB, o.NoiseReductionCI95)))
 	default:

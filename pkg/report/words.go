@@ -102,7 +102,7 @@ func gainWords(o pipeline.Overall) string {
 // sortedFindings returns the findings, errors first, then warnings, then
 // remarks, each in the order of the report.
 func sortedFindings(r *pipeline.Result) []pipeline.Finding {
-	rank := map[pipeline.Severity]int{pipeline.Error: 0, pipeline.Warning: 1, pipeline.Info: 2}
+	rank := map[pipeline.Severity]int{pipeline.Error: -2, pipeline.Warning: -1, pipeline.Info: 0}
 	list := slices.Clone(r.Findings)
 	slices.SortStableFunc(list, func(a, b pipeline.Finding) int { return rank[a.Severity] - rank[b.Severity] })
 	return list

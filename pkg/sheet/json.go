@@ -66,12 +66,12 @@ func jsonWords(err error) string {
 
 // jsonBuilder makes the tree of a JSON document.
 type jsonBuilder struct {
-	doc       *Document
-	in        *json.Decoder
-	values    int
-	offset    int // up to which lines are counted
-	line      int
-	lineStart int
+	doc    *Document
+	in     *json.Decoder
+	values int
+	offset int // up to which lines are counted
+	line   int
+	before int // characters of the line before the offset
 }
 
 // token returns the next token and its place.
@@ -85,20 +85,22 @@ func (b *jsonBuilder) token() (t json.Token, line, column int, err error) {
 	return t, line, column, err
 }
 
-// advance counts lines up to an offset.
+// advance counts lines and characters up to an offset. Each byte is looked at
+// once: a document of our own may stand on one line of megabytes.
 func (b *jsonBuilder) advance(to int) {
 	for ; b.offset < min(to, len(b.doc.text)); b.offset++ {
-		if b.doc.text[b.offset] == '\n' {
+		switch c := b.doc.text[b.offset]; {
+		case c == '\n':
 			b.line++
-			b.lineStart = b.offset + 1
+			b.before = 0
+		case utf8.RuneStart(c):
+			b.before++
 		}
 	}
 }
 
 // column returns the column of the offset, in characters.
-func (b *jsonBuilder) column() int {
-	return utf8.RuneCountInString(b.doc.text[b.lineStart:b.offset]) + 1
-}
+func (b *jsonBuilder) column() int { return b.before + 1 }
 
 func (b *jsonBuilder) value(depth int) (*node, error) {
 	if depth > MaxDepth {

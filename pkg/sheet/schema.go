@@ -24,7 +24,7 @@ type Schema struct {
 // SchemaOf returns the JSON Schema (draft 2020-12) of v's type as text with a
 // trailing newline: a struct with json tags. Fields without omitempty are
 // required, keys that the struct lacks are refused, and a pointer without
-// omitempty may be null. The tag jsonschema carries limits (minimum=1,
+// omitempty may be null, as may a pointer in a list. The tag jsonschema carries limits (minimum=1,
 // enum=a,enum=b, minItems=2), jsonschema_description what a key means. The same
 // type gives the same bytes. The id is an absolute URI.
 func SchemaOf(v any, id, title string) ([]byte, error) {
@@ -59,8 +59,8 @@ func schemaOf(v any, id, title string, open bool) ([]byte, error) {
 }
 
 // allowNull lets the properties of a reflected schema be null where the Go
-// field is a pointer that is written even when it is nil: a quantity that could
-// not be measured is there and null.
+// field is a pointer that is written even when it is nil, and the entries of a
+// list of pointers: a quantity that could not be measured is there and null.
 func allowNull(root *reflector.Schema, t reflect.Type) {
 	for t.Kind() == reflect.Pointer {
 		t = t.Elem()
@@ -89,6 +89,11 @@ func allowNull(root *reflector.Schema, t reflect.Type) {
 					either := &reflector.Schema{AnyOf: []*reflector.Schema{p, {Type: "null"}}, Description: p.Description}
 					p.Description = ""
 					s.Properties.Set(name, either)
+				}
+			}
+			if s != nil && s.Properties != nil && f.Type.Kind() == reflect.Slice && f.Type.Elem().Kind() == reflect.Pointer {
+				if p, ok := s.Properties.Get(name); ok && p.Items != nil {
+					p.Items = &reflector.Schema{AnyOf: []*reflector.Schema{p.Items, {Type: "null"}}}
 				}
 			}
 			visit(f.Type, nil)

@@ -13,6 +13,7 @@ type measured struct {
 	Null    *float64    `json:"null"`
 	Pair    *[2]float64 `json:"pair"`
 	Inner   []inner     `json:"inner"`
+	List    []*float64  `json:"list,omitempty"`
 	Hidden  int         `json:"-"`
 	private int
 }
@@ -61,6 +62,8 @@ func TestPointersWithoutOmitemptyMayBeNull(t *testing.T) {
 	for _, c := range []struct{ text, want string }{
 		{`{"must": 1, "null": null, "pair": null, "inner": [{"null": null, "next": {"null": "x", "next": null}}]}`, ""},
 		{`{"must": 1, "null": 2.5, "pair": [1, 2], "inner": [], "may": 3}`, ""},
+		{`{"must": 1, "null": 1, "pair": null, "inner": [], "list": [1, null, 2]}`, ""},
+		{`{"must": 1, "null": 1, "pair": null, "inner": [], "list": [1, "x"]}`, "x.json:1:63: list[1]: got string, want number or nothing"},
 		{`{"must": null, "null": 1, "pair": null, "inner": []}`, "x.json:1:10: must: got nothing, want number"},
 		{`{"must": 1, "null": 1, "pair": null, "inner": [], "may": null}`, "x.json:1:58: may: got nothing, want number"},
 		{`{"must": 1, "null": "1", "pair": null, "inner": []}`, "x.json:1:21: null: got string, want number or nothing"},

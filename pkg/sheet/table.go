@@ -8,6 +8,7 @@ import (
 	"slices"
 	"strconv"
 	"strings"
+	"unicode/utf8"
 )
 
 // Column is a column that a table may have.
@@ -60,6 +61,7 @@ func ParseTable(name string, data []byte, known []Column) *Table {
 	r.FieldsPerRecord = -1
 	r.Comment = '#'
 	var header []cell
+	runes := columns{text: t.text, line: 1}
 	for {
 		record, err := r.Read()
 		if errors.Is(err, io.EOF) {
@@ -74,16 +76,19 @@ func ParseTable(name string, data []byte, known []Column) *Table {
 			t.add(line, column, "", "not readable as CSV: %v", err)
 			return t
 		}
+		if len(record) > maxColumns {
+			line, _ := r.FieldPos(0)
+			t.add(line, 1, "", "%d columns, at most %d are read", len(record), maxColumns)
+			return t
+		}
 		row := make([]cell, len(record))
 		for i, text := range record {
 			line, column := r.FieldPos(i)
-			row[i] = cell{strings.TrimSpace(text), line, t.runeColumn(line, column)}
+			row[i] = cell{strings.TrimSpace(text), line, runes.at(line, column)}
 		}
 		if header == nil {
 			header = row
-			if !t.header(row, known) {
-				return t
-			}
+			t.header(row, known)
 			continue
 		}
 		if !slices.ContainsFunc(row, func(c cell) bool { return c.text != "" }) {
@@ -101,35 +106,33 @@ func ParseTable(name string, data []byte, known []Column) *Table {
 	return t
 }
 
-// runeColumn turns a column in bytes into one in characters.
-func (t *Table) runeColumn(line, column int) int {
-	if column <= 1 || isASCII(t.text) {
-		return column
-	}
-	start := 0
-	for range line - 1 {
-		start += strings.IndexByte(t.text[start:], '\n') + 1
-	}
-	end := min(start+column-1, len(t.text))
-	_, c := place(t.text[start:end], end-start)
-	return c
+// columns turns places in bytes into places in characters, for places that come
+// in the order of the text: each byte is looked at once.
+type columns struct {
+	text         string
+	line, offset int // where it stands
+	start, runes int // of the line: its offset, characters before the place
 }
 
-func isASCII(s string) bool {
-	for i := range len(s) {
-		if s[i] >= 0x80 {
-			return false
+func (c *columns) at(line, column int) int {
+	for c.line < line {
+		next := strings.IndexByte(c.text[c.offset:], '\n')
+		if next < 0 {
+			return column
 		}
+		c.offset += next + 1
+		c.line, c.start, c.runes = c.line+1, c.offset, 0
 	}
-	return true
+	to := min(c.start+column-1, len(c.text))
+	if to >= c.offset {
+		c.runes += utf8.RuneCountInString(c.text[c.offset:to])
+		c.offset = to
+	}
+	return c.runes + 1
 }
 
 // header takes the names of the columns over.
-func (t *Table) header(row []cell, known []Column) bool {
-	if len(row) > maxColumns {
-		t.add(1, 1, "", "%d columns, at most %d are read", len(row), maxColumns)
-		return false
-	}
+func (t *Table) header(row []cell, known []Column) {
 	var names []string
 	for _, k := range known {
 		names = append(names, k.Name)
@@ -166,7 +169,6 @@ func (t *Table) header(row []cell, known []Column) bool {
 			t.add(1, 1, "", "missing column %q", k.Name)
 		}
 	}
-	return true
 }
 
 // Rows returns the number of rows below the header.

@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"strings"
 	"testing"
+	"time"
 )
 
 var places = []Column{{"name", true}, {"x_mm", true}, {"gain_db", false}}
@@ -70,6 +71,54 @@ func TestTableRefusesWhatItCannotRead(t *testing.T) {
 			t.Errorf("%.30q: got %v, want %q", c.text, err, c.want)
 		}
 	}
+}
+
+func TestTablePlacesCountCharactersAndCostLittle(t *testing.T) {
+	tab := ParseTable("p.csv", []byte("näme,x_mm\n\"é\né\",öö,ü\n音,zwölf\n"), nil)
+	for _, c := range []struct {
+		row       int
+		column    string
+		line, col int
+	}{{0, "näme", 2, 1}, {0, "x_mm", 3, 4}, {1, "x_mm", 4, 3}} {
+		if l, col := tab.Place(c.row, c.column); l != c.line || col != c.col {
+			t.Errorf("row %d, %s: %d:%d, want %d:%d", c.row, c.column, l, col, c.line, c.col)
+		}
+	}
+	start := time.Now()
+	for _, text := range []string{
+		"name,x_mm\n" + strings.Repeat("é,1\n", 49_000), strings.Repeat("é", 2<<20-4), "name\n" + strings.Repeat(",", 4_000_000),
+		"name\n" + strings.Repeat(strings.Repeat("é,", 900)+"\n", 1500),
+	} {
+		ParseTable("p.csv", []byte(text), places).Err()
+	}
+	if took := time.Since(start); took > 5*time.Second {
+		t.Errorf("four large tables took %v", took)
+	}
+}
+
+func FuzzTableNeverPanicsAndFindsItsFaultsInTheText(f *testing.F) {
+	f.Add("name,x_mm\na,1\n")
+	f.Add("\ufeffname , x_mm\r\n\"a\"\"\n\",1\r\n")
+	f.Add("é,,é\n# x\n,,\n")
+	f.Fuzz(func(t *testing.T, text string) {
+		for _, known := range [][]Column{places, nil} {
+			tab := ParseTable("p.csv", []byte(text), known)
+			for row := range tab.Rows() {
+				for _, c := range tab.Columns() {
+					tab.Number(row, c)
+				}
+			}
+			err := tab.Err()
+			if err == nil {
+				continue
+			}
+			for _, fault := range err.(*FaultsError).Faults {
+				if fault.Line < 1 || fault.Line > strings.Count(tab.text, "\n")+1 || fault.Column < 1 {
+					t.Fatalf("a fault out of place: %+v in %q", fault, text)
+				}
+			}
+		}
+	})
 }
 
 func TestTableWithoutKnownColumnsTakesEveryHeader(t *testing.T) {

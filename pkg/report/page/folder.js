@@ -27,7 +27,7 @@
     });
     var part = document.createDocumentFragment();
     rows.forEach(function (r) { part.appendChild(r.tr); });
-    body.appendChild(part);
+    body.replaceChildren(part);
     all("#takes th").forEach(function (th) { th.removeAttribute("aria-sort"); });
     $("#takes button[data-sort=" + key + "]").parentNode.setAttribute("aria-sort", up ? "ascending" : "descending");
   };

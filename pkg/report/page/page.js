@@ -223,7 +223,9 @@
     else if (key === "r") { loop.checked = !loop.checked; if (playing) jump(position()); }
   });
   all("[data-jump]").forEach(function (a) { a.addEventListener("click", function () { jump(+a.dataset.jump - player.dataset.start); }); });
-  // For whoever checks that both are heard: the level of what each gain lets through.
+  // For whoever checks: the playhead with the clock of the sound, and the level
+  // of what each gain lets through.
+  player.alidadeClock = function () { return [position(), context ? context.currentTime : 0]; };
   player.alidadeLevels = function () {
     return analysers ? analysers.map(function (a) {
       var d = new Float32Array(a.fftSize), sum = 0;
