@@ -283,7 +283,7 @@ func channelViews(r *pipeline.Result) []channelView {
 	var list []channelView
 	for _, c := range r.Channels {
 		v := channelView{Channel: c.Channel, Name: shorten(clean(c.Name), 60), State: "✓ in use", Class: "good", Level: levelText(c.RMSDBFS), Against: "–", Peak: levelText(c.PeakDBFS),
-			Clipped: strconv.FormatInt(c.ClippedFrames, 10), DC: Round(c.DC, "dc"), Flags: clean(strings.Join(c.Flags, ", "))}
+			Clipped: strconv.FormatInt(c.ClippedFrames, 10), DC: strconv.FormatFloat(c.DC, 'g', 2, 64), Flags: clean(strings.Join(c.Flags, ", "))}
 		switch {
 		case !c.Used:
 			v.State, v.Class = "× left out", "fault"
