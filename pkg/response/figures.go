@@ -52,7 +52,8 @@ type Figures struct {
 const nullDepth = 0.01
 
 // Predict returns the figures of the beam along the cut at each of the
-// frequencies. Frequencies at which the beam does not respond to its steered
+// frequencies, Hz above 0. The beam must be one that Validate passes.
+// Frequencies at which the beam does not respond to its steered
 // direction at all have nothing but gains.
 func (b Beam) Predict(cut Cut, hz []float64) []Figures {
 	out := make([]Figures, 0, len(hz))
