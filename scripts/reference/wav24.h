@@ -94,7 +94,7 @@ static void wav_write(FILE *f, const float *y, int n) {
 }
 
 // beam_read reads a line a channel: delay in seconds, amplitude.
-static void beam_read(const char *path, int channels, double *tau, double *amp) {
+__attribute__((unused)) static void beam_read(const char *path, int channels, double *tau, double *amp) {
     FILE *f = fopen(path, "r");
     if (!f) die("not readable", path);
     for (int m = 0; m < channels; m++)
