@@ -49,7 +49,7 @@ func readWAV(t *testing.T, path string) (audio.Block, int) {
 }
 
 // writeWAV writes a block as a float32 file.
-func writeWAV(t *testing.T, path string, rate int, encoding wav.Encoding, b audio.Block) {
+func writeWAV(t testing.TB, path string, rate int, encoding wav.Encoding, b audio.Block) {
 	t.Helper()
 	f, err := os.Create(path)
 	if err != nil {
@@ -140,7 +140,7 @@ func meanPower(b audio.Block) float64 {
 	return sum / float64(b.Channels()*b.Frames())
 }
 
-func steer(t *testing.T, take, rigPath string, o Options) *Result {
+func steer(t testing.TB, take, rigPath string, o Options) *Result {
 	t.Helper()
 	if o.Reports == "" {
 		o.Reports = "none"
@@ -152,7 +152,7 @@ func steer(t *testing.T, take, rigPath string, o Options) *Result {
 	return r
 }
 
-func writeText(t *testing.T, path, text string) string {
+func writeText(t testing.TB, path, text string) string {
 	t.Helper()
 	if err := os.WriteFile(path, []byte(text), 0o666); err != nil {
 		t.Fatal(err)
