@@ -1,6 +1,7 @@
 package wav
 
 import (
+	"bytes"
 	"encoding/binary"
 	"fmt"
 	"strings"
@@ -149,7 +150,7 @@ func hundredths(v float64) int16 {
 // textOf is a text field up to its first NUL, without the space around it.
 // Bytes that are not UTF-8 are taken as Latin-1.
 func textOf(b []byte) string {
-	if k := strings.IndexByte(string(b), 0); k >= 0 {
+	if k := bytes.IndexByte(b, 0); k >= 0 {
 		b = b[:k]
 	}
 	text := string(utf8Of(b))

@@ -254,9 +254,15 @@ func corpus() (list []entry) {
 		entry{name: "iXML with another root", taken: of(lie("iXML", "<html/>")), warnings: WarnMetadata},
 		entry{name: "iXML cut off", taken: of(lie("iXML", "<BWFXML><SCENE>1</SC")), warnings: WarnMetadata},
 		entry{name: "iXML 100 deep", taken: of(lie("iXML", "<BWFXML>"+strings.Repeat("<a>", 100))), warnings: WarnMetadata},
-		entry{name: "iXML of 200,000 elements", taken: of(lie("iXML", "<BWFXML>"+strings.Repeat("<a/>", 200000)+"</BWFXML>")), warnings: WarnMetadata},
-		entry{name: "iXML of 150,000 attributes", taken: of(lie("iXML", "<BWFXML"+strings.Repeat(" a=''", 150000)+"/>"))},
-		entry{name: "iXML of 1 MiB and 1 byte", taken: of(lie("iXML", "<BWFXML>"+strings.Repeat(" ", maxIXML-7))), warnings: WarnMetadata},
+		entry{name: "iXML of 120,000 elements", taken: of(lie("iXML", "<BWFXML>"+strings.Repeat("<a/>", 120000)+"</BWFXML>")), warnings: WarnMetadata},
+		entry{name: "iXML of 80,000 attributes", taken: of(lie("iXML", "<BWFXML"+strings.Repeat(" a=''", 80000)+"/>"))},
+		entry{name: "iXML in 40,000 pieces of text", taken: of(lie("iXML", "<BWFXML>"+strings.Repeat("x<!---->", 40000)+"</BWFXML>"))},
+		entry{name: "iXML of 60,000 attributes that are not UTF-8", taken: of(lie("iXML", "<BWFXML"+strings.Repeat(" a='\xff'", 60000)+"/>"))},
+		entry{name: "60,000 cues and 3000 lists about them", taken: of(recipe{before: append(slices.Repeat([]rawChunk{{"LIST", []byte("adtllabl\x06\x00\x00\x00\x01\x00\x00\x00x\x00")}}, 3000),
+			rawChunk{"cue ", append([]byte("\xff\xff\xff\xff"), bytes.Repeat([]byte("\x01\x00\x00\x00\x02\x00\x00\x00data\x00\x00\x00\x00\x00\x00\x00\x00\x02\x00\x00\x00"), 60000)...)})})},
+		entry{name: "8 MiB of cues, lists and texts that are not UTF-8", taken: of(recipe{before: append(slices.Repeat([]rawChunk{{"cue ", append([]byte("\xff\xff\xff\xff"), bytes.Repeat([]byte{1}, 24*60000)...)}}, 2),
+			rawChunk{"LIST", []byte("INFO" + strings.Repeat("IART\x00\xff\x00\x00"+strings.Repeat("\xe4", 65280), 60))}, rawChunk{"iXML", []byte("<BWFXML" + strings.Repeat(" a='\xff'", 60000) + "/>")})})},
+		entry{name: "iXML of 512 KiB and 1 byte", taken: of(lie("iXML", "<BWFXML>"+strings.Repeat(" ", maxIXML-7))), warnings: WarnMetadata},
 		entry{name: "iXML padded with zeros", taken: of(lie("iXML", "<BWFXML/>"+strings.Repeat("\x00", 4000)))},
 		entry{name: "LIST of 5 MiB", taken: of(lie("LIST", "INFO"+strings.Repeat("\x00", 5<<20))), warnings: WarnMetadata},
 		entry{name: "fmt that claims 2 GiB", taken: edit(recipe{}, func(b []byte) []byte { le.PutUint32(b[16:], 1<<31-1); return b }), broken: "no data chunk"},
@@ -327,6 +333,9 @@ func (e entry) check(t *testing.T) {
 	runtime.ReadMemStats(&after)
 	if took := time.Since(start); took > 2*time.Second {
 		t.Errorf("took %v, want at most 2 s", took)
+	}
+	if took := after.TotalAlloc - before.TotalAlloc; took > 1<<22 {
+		t.Logf("%d bytes of memory for a file of %d", took, len(x.file))
 	}
 	if took, most := after.TotalAlloc-before.TotalAlloc, max(uint64(2*len(x.file)), 64<<20); took > most {
 		t.Errorf("%d bytes of memory for a file of %d, want at most %d", took, len(x.file), most)

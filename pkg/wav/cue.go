@@ -25,7 +25,7 @@ const (
 	cueBytes    = 24
 	maxCues     = 1 << 16
 	maxInfo     = 256
-	maxAdtlText = 1 << 16
+	maxListText = 1 << 16 // of one entry of INFO or adtl
 )
 
 // parseCues reads a cue body [IBM/Microsoft 1991]: u32 count, then 24 bytes
@@ -38,6 +38,7 @@ func parseCues(b []byte) (list []Cue) {
 	}
 	le := binary.LittleEndian
 	n := min(int64(le.Uint32(b)), int64(len(b)-4)/cueBytes, maxCues)
+	list = make([]Cue, 0, n)
 	for k := range n {
 		c := b[4+k*cueBytes:]
 		frame := int64(le.Uint32(c[20:]))
@@ -67,14 +68,19 @@ func subChunks(b []byte, visit func(id string, body []byte)) {
 	}
 }
 
-// labelCues adds what an adtl list says to the cues it is about.
-func labelCues(cues []Cue, b []byte) {
+// cuesByID finds cues by their ids; of several with one id, the first.
+func cuesByID(cues []Cue) map[uint32]*Cue {
 	byID := make(map[uint32]*Cue, len(cues))
 	for k := range cues {
 		if byID[cues[k].ID] == nil {
 			byID[cues[k].ID] = &cues[k]
 		}
 	}
+	return byID
+}
+
+// labelCues adds what an adtl list says to the cues it is about.
+func labelCues(byID map[uint32]*Cue, b []byte) {
 	subChunks(b, func(id string, body []byte) {
 		if len(body) < 4 {
 			return
@@ -83,7 +89,7 @@ func labelCues(cues []Cue, b []byte) {
 		if cue == nil {
 			return
 		}
-		text := body[4:min(len(body), 4+maxAdtlText)]
+		text := body[4:min(len(body), 4+maxListText)]
 		switch id {
 		case "labl":
 			cue.Label = textOf(text)
@@ -97,10 +103,13 @@ func labelCues(cues []Cue, b []byte) {
 	})
 }
 
-// parseInfo reads the entries of a LIST INFO body behind its type.
-func parseInfo(b []byte) (list []InfoEntry) {
+// parseInfo adds the entries of a LIST INFO body, behind its type, to list.
+func parseInfo(list []InfoEntry, b []byte) []InfoEntry {
 	subChunks(b, func(id string, body []byte) {
-		if text := textOf(body); text != "" && len(list) < maxInfo && printable(id) {
+		if len(list) == maxInfo || !printable(id) {
+			return
+		}
+		if text := textOf(body[:min(len(body), maxListText)]); text != "" {
 			list = append(list, InfoEntry{ID: id, Text: text})
 		}
 	})

@@ -53,12 +53,16 @@ func (m *Metadata) Derive(c Change) (out *Metadata, dropped []string) {
 		c.TakeRate = c.Output.Rate
 	}
 	out = &Metadata{Cues: []Cue{}}
+	// Time references count at a rate of their own where iXML gives one.
+	base, _ := m.TimeBase(c.TakeRate)
+	rate, advance := int64(max(1, base.ReferenceRate)), int64(max(1, base.AdvanceRate))
+	move := c.FirstFrame/advance*rate + c.FirstFrame%advance*rate/advance
 	if m.Bext != nil {
-		out.Bext = m.Bext.derive(c)
+		out.Bext = m.Bext.derive(c, move, rate)
 	}
 	if m.IXML != nil {
 		var gone []string
-		if out.IXML, gone = m.IXML.derive(c); len(gone) > 0 {
+		if out.IXML, gone = m.IXML.derive(c, move, rate); len(gone) > 0 {
 			dropped = append(dropped, gone...)
 		}
 	}
@@ -92,14 +96,15 @@ func (m *Metadata) Derive(c Change) (out *Metadata, dropped []string) {
 	return out, dropped
 }
 
-func (x *Bext) derive(c Change) *Bext {
+// derive moves the time reference by so many samples of a rate.
+func (x *Bext) derive(c Change, move, rate int64) *Bext {
 	y := *x
 	y.Version, y.UMID = 2, ""
 	for _, p := range y.loudness() {
 		*p = nil
 	}
-	day := 24 * 3600 * int64(c.TakeRate)
-	moved := x.TimeReference + c.FirstFrame
+	day := 24 * 3600 * rate
+	moved := x.TimeReference + move
 	if x.TimeReference < day && moved >= day {
 		moved -= day
 		if date, err := time.Parse(time.DateOnly, x.OriginationDate); err == nil {
@@ -140,9 +145,9 @@ func codingLine(c Change) string {
 	return fmt.Sprintf("A=PCM,F=%d,W=%d,M=%s,T=%s\r\n", c.Output.Rate, c.Output.Encoding.Bits(), mode, text)
 }
 
-func (x *IXML) derive(c Change) (*IXML, []string) {
+func (x *IXML) derive(c Change, move, rate int64) (*IXML, []string) {
 	root := x.root.clone()
-	gone := root.drop("FILE_SET", "FILE_UID", "BEXT", "LOUDNESS", "STEINBERG")
+	gone := root.drop("FILE_SET", "FILE_UID", "BEXT", "LOUDNESS")
 	if c.FirstFrame != 0 || c.Frames != c.TakeFrames {
 		gone = append(gone, root.drop("SYNC_POINT_LIST", "PRE_RECORD_SAMPLECOUNT")...)
 	}
@@ -164,15 +169,7 @@ func (x *IXML) derive(c Change) (*IXML, []string) {
 			}
 		}
 		if x.Speed.Timestamp != nil {
-			rate := int64(c.TakeRate)
-			if x.Speed.TimestampRate > 0 {
-				rate = int64(x.Speed.TimestampRate)
-			}
-			advance := int64(c.TakeRate)
-			if x.Speed.DigitizerSampleRate > 0 {
-				advance = int64(x.Speed.DigitizerSampleRate)
-			}
-			moved := *x.Speed.Timestamp + (c.FirstFrame/advance)*rate + (c.FirstFrame%advance)*rate/advance
+			moved := *x.Speed.Timestamp + move
 			if day := 24 * 3600 * rate; *x.Speed.Timestamp < day {
 				moved %= day
 			}

@@ -10,7 +10,7 @@ import (
 
 // Caps on an iXML chunk: real ones have some kilobytes.
 const (
-	maxIXML      = 1 << 20
+	maxIXML      = 512 << 10
 	maxXMLNodes  = 20000
 	maxXMLTokens = 200000
 	maxXMLDepth  = 32
@@ -144,7 +144,15 @@ func parseXML(b []byte) (root *node, whole bool) {
 	d := xml.NewDecoder(bytes.NewReader(utf8Of(b)))
 	d.Strict = false
 	d.CharsetReader = func(charset string, r io.Reader) (io.Reader, error) { return r, nil }
-	var stack []*node
+	var stack []openNode
+	// pop closes the elements of the stack from k on.
+	pop := func(k int) {
+		for _, o := range stack[k:] {
+			o.node.text = string(bytes.TrimSpace(o.text))
+		}
+		stack = stack[:k]
+	}
+	defer func() { pop(0) }()
 	nodes := 0
 	for range maxXMLTokens {
 		token, err := d.RawToken()
@@ -160,26 +168,30 @@ func parseXML(b []byte) (root *node, whole bool) {
 			if root == nil {
 				root = n
 			} else {
-				top := stack[len(stack)-1]
+				top := stack[len(stack)-1].node
 				top.kids = append(top.kids, n)
 			}
-			stack = append(stack, n)
+			stack = append(stack, openNode{node: n})
 		case xml.EndElement:
 			for k := len(stack) - 1; k >= 0; k-- {
-				if stack[k].name == nameText(t.Name) {
-					stack = stack[:k]
+				if stack[k].node.name == nameText(t.Name) {
+					pop(k)
 					break
 				}
 			}
 		case xml.CharData:
-			if len(stack) > 0 {
-				if text := strings.TrimSpace(string(t)); text != "" {
-					stack[len(stack)-1].text += text
-				}
+			if k := len(stack) - 1; k >= 0 {
+				stack[k].text = append(stack[k].text, t...)
 			}
 		}
 	}
 	return root, false
+}
+
+// openNode is an element whose end has not come yet, with its text so far.
+type openNode struct {
+	node *node
+	text []byte
 }
 
 func nameText(n xml.Name) string {

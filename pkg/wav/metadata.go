@@ -1,6 +1,7 @@
 package wav
 
 import (
+	"cmp"
 	"slices"
 	"strconv"
 	"strings"
@@ -11,7 +12,7 @@ const (
 	maxBext     = 1 << 20
 	maxList     = 4 << 20
 	maxOther    = 1 << 20
-	maxMetadata = 16 << 20 // in all
+	maxMetadata = 8 << 20 // in all
 )
 
 // Metadata is what a file carries besides samples. A nil *Metadata carries
@@ -44,6 +45,7 @@ func (s *scan) metadata() (*Metadata, error) {
 		return s.bytesAt(c.body, int(c.Size))
 	}
 	var labels [][]byte
+	sawIXML := false
 	for _, c := range s.chunks {
 		var b []byte
 		var err error
@@ -55,7 +57,8 @@ func (s *scan) metadata() (*Metadata, error) {
 				}
 			}
 		case "iXML":
-			if b, err = read(c, maxIXML); b != nil && m.IXML == nil {
+			if b, err = read(c, maxIXML); b != nil && !sawIXML {
+				sawIXML = true
 				whole := false
 				if m.IXML, whole = parseIXML(b); m.IXML == nil {
 					s.warn(WarnMetadata, c.Offset, "iXML chunk holds no BWFXML element")
@@ -64,14 +67,16 @@ func (s *scan) metadata() (*Metadata, error) {
 				}
 			}
 		case "cue ":
-			if b, err = read(c, maxList); b != nil {
-				m.Cues = append(m.Cues, parseCues(b)...)
+			if b, err = read(c, maxList); b != nil && len(m.Cues) == 0 {
+				if cues := parseCues(b); len(cues) > 0 {
+					m.Cues = cues
+				}
 			}
 		case "LIST":
 			if b, err = read(c, maxList); len(b) >= 4 {
 				switch string(b[:4]) {
 				case "INFO":
-					m.Info = append(m.Info, parseInfo(b[4:])...)
+					m.Info = parseInfo(m.Info, b[4:])
 				case "adtl":
 					labels = append(labels, b[4:])
 				}
@@ -88,11 +93,13 @@ func (s *scan) metadata() (*Metadata, error) {
 			return nil, err
 		}
 	}
-	for _, b := range labels {
-		labelCues(m.Cues, b)
+	if byID := cuesByID(m.Cues); len(byID) > 0 {
+		for _, b := range labels {
+			labelCues(byID, b)
+		}
 	}
 	m.Cues = slices.DeleteFunc(m.Cues, func(c Cue) bool { return c.Frame > s.head.Frames })
-	slices.SortStableFunc(m.Cues, func(a, b Cue) int { return int(a.Frame - b.Frame) })
+	slices.SortStableFunc(m.Cues, func(a, b Cue) int { return cmp.Compare(a.Frame, b.Frame) })
 	if m.Bext != nil && m.IXML != nil && m.IXML.Speed.Timestamp != nil && m.Bext.TimeReference != 0 && *m.IXML.Speed.Timestamp != m.Bext.TimeReference {
 		s.warn(WarnTime, 0, "bext gives the time reference %d, iXML %d: that of bext is taken", m.Bext.TimeReference, *m.IXML.Speed.Timestamp)
 	}

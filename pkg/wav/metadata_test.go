@@ -337,8 +337,10 @@ func TestTheTimestampMovesByTheDigitizersRate(t *testing.T) {
 	speed.set("TIMESTAMP_SAMPLE_RATE", "48000")
 	m.IXML = viewIXML(m.IXML.root)
 	out, _ := m.Derive(Change{Output: Format{48000, 1, PCM24}, TakeFrames: 1 << 20, FirstFrame: 480480, Frames: 10})
-	if got := *out.IXML.Speed.Timestamp; got != 1728000000+480000 {
-		t.Errorf("moved by %d, want ten seconds of 48000", got-1728000000)
+	for name, got := range map[string]int64{"iXML": *out.IXML.Speed.Timestamp, "bext": out.Bext.TimeReference} {
+		if got != 1728000000+480000 {
+			t.Errorf("%s moved by %d, want ten seconds of 48000", name, got-1728000000)
+		}
 	}
 }
 

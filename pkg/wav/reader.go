@@ -22,6 +22,7 @@ type Reader struct {
 	chunks   []Chunk
 	warnings []Warning
 	decode   decoder
+	dataAt   int64 // byte of the data chunk
 
 	at     int64 // next frame
 	buf    []byte
@@ -60,7 +61,7 @@ func Open(r io.ReaderAt, size int64) (*Reader, error) {
 	}
 	frame := int64(s.head.FrameBytes())
 	return &Reader{
-		r: r, head: s.head, meta: meta, chunks: s.chunks, warnings: s.warnings, decode: decoderOf(s.head.Encoding),
+		r: r, head: s.head, meta: meta, chunks: s.chunks, warnings: s.warnings, decode: decoderOf(s.head.Encoding), dataAt: s.data.Offset,
 		buf: make([]byte, max(1, min(readBytes/frame, s.head.Frames))*frame),
 	}, nil
 }
@@ -156,7 +157,7 @@ func (r *Reader) fill() error {
 	if err == nil || errors.Is(err, io.EOF) {
 		err = io.ErrUnexpectedEOF
 	}
-	return fmt.Errorf("data chunk at byte %d: frame %d of %d: %w", r.head.DataOffset-8, r.at, r.head.Frames, err)
+	return fmt.Errorf("data chunk at byte %d: frame %d of %d: %w", r.dataAt, r.at, r.head.Frames, err)
 }
 
 // deal spreads frames of the buffer, from the given one on, over the channels

@@ -108,7 +108,7 @@ func (s *scan) header() (int64, error) {
 			return 0, &UnsupportedError{Where: "file", Offset: s.base, What: "a Wave64 file that holds no wave"}
 		}
 		s.wave64, s.head.Container = true, Wave64
-		s.riffSize = int64(min(binary.LittleEndian.Uint64(b[16:]), math.MaxInt64)) - 24
+		s.riffSize = int64(min(binary.LittleEndian.Uint64(b[16:]), math.MaxInt64/2)) - 8
 		return s.base + 40, nil
 	}
 	if len(b) < 4 || !slices.Contains([]string{"RIFF", "RF64", "BW64"}, string(b[:4])) {
@@ -272,7 +272,7 @@ func (s *scan) take(c Chunk) error {
 		if s.ds64 == nil {
 			s.warn(WarnNoDS64, c.Offset, "ds64 chunk has %d bytes, 28 are the least", len(b))
 		} else if s.riffSize == unset32 {
-			s.riffSize = int64(min(s.ds64.riff, math.MaxInt64))
+			s.riffSize = int64(min(s.ds64.riff, math.MaxInt64/2))
 		}
 	case c.ID == "LIST" && s.data == nil:
 		if b, err := s.bytesAt(c.body, 4); err == nil && string(b) == "wavl" {
