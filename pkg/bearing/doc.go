@@ -30,9 +30,9 @@
 //
 // The files follow the sound: spectra and floor (frames into cross-spectra),
 // look, grid, detect and fit (one window), fuse and solve (the take), track,
-// findings. They are more than half again as long as a package here should be
-// because the window, the take and the track share one model of a place and its
-// error, which would otherwise have to be exported.
+// findings. They are twice as long as a package here should be because the
+// window, the take and the track share one model of a place and its error,
+// which would otherwise have to be exported.
 //
 // # Limits
 //
@@ -57,10 +57,6 @@
 //		return err // no direction found: why
 //	}
 //	fmt.Println(best.Direction.AzimuthDeg(), best.StandardError*180/math.Pi, best.Confidence)
-//
-// Longer than 2,000 lines because one estimate needs all of it at once: the
-// steered response, the likelihood that refines it, the floor, the reflections
-// and the standard error that rests on them, and the tracks over time.
 //
 // # Sources
 //

@@ -97,9 +97,9 @@ func TestReasonsForNoDirection(t *testing.T) {
 	const rate = 16000
 	mics := lineMics(8, 0.04)
 	diffuse := newMixture(mics, rate, 2*rate)
-	for w := range 300 {
-		z := -1 + 2*(float64(w)+0.5)/300
-		diffuse.plane(white(2*rate, uint64(w)), rig.Direction{Azimuth: 2.399963 * float64(w), Elevation: math.Asin(z)}, 0.06)
+	for w := range 120 {
+		z := -1 + 2*(float64(w)+0.5)/120
+		diffuse.plane(white(2*rate, uint64(w)), rig.Direction{Azimuth: 2.399963 * float64(w), Elevation: math.Asin(z)}, 0.09)
 	}
 	for _, c := range []struct {
 		name string

@@ -78,8 +78,11 @@ func badTake(i int, mics []rig.Point, rate, frames int) (b audio.Block, az float
 // Issue "Where the sound comes from": none of 200 such takes gives a
 // confidence of 0.5 or more with an error over 10°.
 func TestBadTakesGiveNoConfidentWrongAnswer(t *testing.T) {
+	if testing.Short() {
+		t.Skip("many takes")
+	}
 	const rate = 16000
-	n := 40
+	n := 20
 	if long() {
 		n = 200
 	}
@@ -167,7 +170,7 @@ func hasFinding(r *Result, code string, mic int) bool {
 // eight: both found in at least 90 % of 50 seeded takes.
 func TestTwoTalkersInARoom(t *testing.T) {
 	const rate = 16000
-	n := 10
+	n := 4
 	if long() {
 		n = 50
 	}

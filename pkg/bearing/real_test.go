@@ -117,6 +117,13 @@ func ring7() []rig.Point {
 }
 
 func TestRealRoomResponsesWithSpeech(t *testing.T) {
+	if testing.Short() {
+		t.Skip("convolves speech with measured rooms")
+	}
+	takes := []string{"0890"}
+	if long() {
+		takes = []string{"0870", "0890", "0930"}
+	}
 	var errs []float64
 	for _, c := range []struct {
 		name string
@@ -128,7 +135,7 @@ func TestRealRoomResponsesWithSpeech(t *testing.T) {
 		{"RLRVarAcLab_Absorptive_100_S210-200_R1_FRL10cm.wav", 150},
 	} {
 		h, rate := recording(t, "ring7-room-responses/"+c.name)
-		for _, dry := range []string{"0870", "0890", "0930"} {
+		for _, dry := range takes {
 			x, low := recording(t, "speech/sense_and_sensibility_01_austen_64kb-"+dry+".wav")
 			n := min(x.Frames(), 5*low)
 			speech := make([]float64, n)
