@@ -209,8 +209,7 @@ func roomTrials(t *testing.T, mics []rig.Point, rt60, distance float64, steady b
 // to 1.5 m and 2.5° at 2 m; the 95 % interval holds the truth in 85 to 99 %,
 // median standard error at most three times the median error. The seeds here were
 // not looked at when the reverberation terms were fitted (500.., 900000..
-// and 5000000..),
-// nor was the steady source at 2 m in 0.2 s.
+// and 5000000..).
 func TestDirectionInRooms(t *testing.T) {
 	if testing.Short() {
 		t.Skip("renders rooms")

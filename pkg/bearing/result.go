@@ -43,7 +43,8 @@ type Source struct {
 	Fix
 	// Windows is the number of windows that heard the source.
 	Windows int
-	// Share is the part of all coherent power that the source holds, 0..1.
+	// Share is the part of all peak heights above the best separate peak, summed
+	// over the windows, that the source holds, 0..1.
 	Share float64
 	// Moves says that the direction drifts by more than its window errors
 	// explain: then the track is the better answer.
@@ -77,7 +78,6 @@ const (
 	CodeMisfit      = "channel-misfit" // agrees with no direction: swapped, late or turned round
 	CodeMoves       = "source-moves"   // see Tracks
 	CodeNearField   = "near-field"     // the wavefront is curved: focus on the point instead
-	CodeDiffuse     = "diffuse-sound"  // coherent, but from no single direction
 )
 
 // Picture is the mean steered response over angle, for a person to look at.
