@@ -52,6 +52,9 @@ func openInput(path string, hashed bool) (*input, error) {
 	return in, nil
 }
 
+// sameInput reports whether two inputs are one file, by whatever name.
+func sameInput(a, b *input) bool { return os.SameFile(a.info, b.info) }
+
 // ReadAt implements io.ReaderAt.
 func (in *input) ReadAt(p []byte, off int64) (int, error) {
 	n, err := in.File.ReadAt(p, off)

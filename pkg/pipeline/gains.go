@@ -133,12 +133,8 @@ func (r *run) stretches(res *Result) (noise, target []measure.Stretch, err error
 		if target, err = r.given("target", r.set.target, duration); err != nil {
 			return nil, nil, err
 		}
-		for _, n := range noise {
-			for _, t := range target {
-				if n.From < t.To && t.From < n.To {
-					return nil, nil, &UsageError{Err: fmt.Errorf("--noise %g..%g and --target %g..%g overlap: where the target sounds is no noise-only stretch", n.From, n.To, t.From, t.To)}
-				}
-			}
+		if err := apart("noise", "target", noise, target); err != nil {
+			return nil, nil, err
 		}
 		if len(target) == 0 {
 			target = complement(noise, duration)
@@ -147,6 +143,24 @@ func (r *run) stretches(res *Result) (noise, target []measure.Stretch, err error
 			}
 		}
 		res.Segments.Source = SegmentsGiven
+		if r.set.NoiseCue != "" || r.set.TargetCue != "" {
+			r.report(Finding{Code: "cues-unused", Severity: Info, Message: "stretches were given with --noise, so the cues were not looked at"})
+		}
+	} else if r.set.NoiseCue != "" {
+		if noise, err = r.cued("noise-cue", r.set.NoiseCue); err != nil {
+			return nil, nil, err
+		}
+		if target, err = r.cued("target-cue", r.set.TargetCue); err != nil {
+			return nil, nil, err
+		}
+		if err := apart("noise-cue", "target-cue", noise, target); err != nil {
+			return nil, nil, err
+		}
+		if len(target) == 0 {
+			target = complement(noise, duration)
+			r.report(Finding{Code: "target-taken", Severity: Info, Message: "no target cues given: all of the take outside the noise stretches is taken to hold the target; give --target-cue LABEL where that is not so"})
+		}
+		res.Segments.Source = SegmentsCues
 	} else {
 		found, err := measure.FindSegments(r.in.Thirds(), r.out.Thirds(), measure.SegmentOptions{ExpectedReductionDB: speechDiffuse(res.Bands)})
 		if err != nil {
@@ -298,7 +312,7 @@ func (l listened) octaves() measure.Pair {
 
 // through runs the beam over another take.
 func (r *run) through(path string) (l listened, err error) {
-	t, err := openTake([]string{path}, false)
+	t, err := openTake([]string{path}, joining{findChain: r.set.FindChain}, false)
 	if err != nil {
 		return l, err
 	}
@@ -312,7 +326,7 @@ func (r *run) through(path string) (l listened, err error) {
 	if l.in, l.out, err = r.drive(src); err != nil {
 		return l, err
 	}
-	if err := t.in.unchanged(); err != nil {
+	if err := t.unchanged(); err != nil {
 		return l, err
 	}
 	for _, f := range t.findings() {

@@ -46,6 +46,13 @@ func (r *run) result() (*Result, error) {
 	}
 	res.Findings = append(append(res.Findings, r.take.findings()...), r.findings...)
 	sortFindings(res.Findings)
+	res.Segments.NoiseTime, res.Segments.TargetTime = r.times(res.Segments.Noise), r.times(res.Segments.Target)
+	if res.Segments.Source == SegmentsIsolated {
+		res.Segments.NoiseTime, res.Segments.TargetTime = nil, nil // those stretches are of other takes
+	}
+	if r.set.Private {
+		r.hide(res)
+	}
 
 	for i, kind := range r.set.reports {
 		if err := r.render[kind](r.reports[i], res); err != nil {

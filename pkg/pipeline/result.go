@@ -147,6 +147,10 @@ type Segments struct {
 	Source string       `json:"source"` // isolated, given, cues, automatic or none
 	Noise  [][2]float64 `json:"noise"`
 	Target [][2]float64 `json:"target"`
+
+	// The same as times of day HH:MM:SS.sss, where the take has a time reference.
+	NoiseTime  [][2]string `json:"noise_time,omitempty"`
+	TargetTime [][2]string `json:"target_time,omitempty"`
 }
 
 // Band is what happened in one band.

@@ -5,7 +5,6 @@ import (
 	"errors"
 	"fmt"
 	"io"
-	"slices"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/measure"
@@ -85,7 +84,7 @@ func (r *run) abandon() {
 func (r *run) report(f Finding) { r.findings = append(r.findings, f) }
 
 func (r *run) steer() (result *Result, err error) {
-	if r.take, err = openTake(r.spec.Take, len(r.set.reports) > 0); err != nil {
+	if r.take, err = openTake(r.spec.Take, r.set.joining(), len(r.set.reports) > 0); err != nil {
 		return nil, err
 	}
 	defer func() { err = joinErrors(err, r.take.close()) }()
@@ -151,31 +150,28 @@ func (r *run) excerpt() (from, to int64, err error) {
 
 // prepare settles the names of the outputs and refuses what cannot be written.
 func (r *run) prepare() (err error) {
-	if r.names, err = outputNames(r.take.path(), r.set.Out, r.set.towardName()); err != nil {
+	if r.names, err = outputNames(r.take.outputBase(), r.set.Out, r.set.towardName()); err != nil {
 		return err
 	}
 	outputs := []string{r.names.track}
 	h := r.take.header
 	frames := r.to - r.from
 	format := wav.Format{Rate: h.Rate, Channels: 1, Encoding: r.set.trackEncoding(h)}
-	bytes := wav.SizeBound(format, nil, frames)
+	meta, dropped := r.carried(format.Encoding, r.beamName())
+	r.dropped(dropped)
+	r.trackNames()
+	bytes := wav.SizeBound(format, meta, frames)
 	if r.set.WithReference {
 		outputs = append(outputs, r.names.reference)
 		format.Encoding = untouchedEncoding(h)
-		bytes += wav.SizeBound(format, nil, frames)
+		bytes += wav.SizeBound(format, meta, frames)
 	}
 	const reportRoom = 1 << 20
 	for _, kind := range r.set.reports {
 		outputs = append(outputs, r.names.report(kind))
 		bytes += reportRoom
 	}
-	inputs := append(slices.Clone(r.spec.Take), r.rig.files...)
-	for _, path := range []string{r.set.IsolatedNoise, r.set.IsolatedTarget} {
-		if path != "" {
-			inputs = append(inputs, path)
-		}
-	}
-	if err := refuseInputs(outputs, inputs); err != nil {
+	if err := refuseInputs(outputs, r.inputs()); err != nil {
 		return err
 	}
 	if err := checkRoom(r.names.track, bytes); err != nil {
@@ -197,14 +193,16 @@ func (r *run) prepare() (err error) {
 // meters.
 func (r *run) pass(encoding wav.Encoding) (err error) {
 	h := r.take.header
-	if r.track, err = newTrack(r.names.track, r.set.Overwrite, h.Rate, encoding, r.from); err != nil {
+	meta, _ := r.carried(encoding, r.beamName())
+	if r.track, err = newTrack(r.names.track, r.set.Overwrite, h.Rate, encoding, r.from, meta); err != nil {
 		return err
 	}
 	r.totals = measure.NewTotals(h.Channels)
 	src := audio.Source(&watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("steering", h.Frames)})
 	src = audio.Tee(src, r.totals)
 	if r.set.WithReference {
-		if r.reference, err = newTrack(r.names.reference, r.set.Overwrite, h.Rate, untouchedEncoding(h), r.from); err != nil {
+		meta, _ := r.carried(untouchedEncoding(h), r.referenceName())
+		if r.reference, err = newTrack(r.names.reference, r.set.Overwrite, h.Rate, untouchedEncoding(h), r.from, meta); err != nil {
 			return err
 		}
 		m := r.rig.Mics[r.line.referenceMic()]

@@ -14,7 +14,7 @@ import (
 
 // Spec is one take to be steered.
 type Spec struct {
-	Take    []string // files of the take, in order
+	Take    []string // files of the take, in order: side by side, or a chain with Options.Chain
 	RigPath string
 	Options Options
 	Version string   // program version, for the report
@@ -33,6 +33,12 @@ type Options struct {
 	Taper         string `json:"taper,omitempty"`          // default uniform
 	UndoSpreading bool   `json:"undo_spreading,omitempty"` // for a focus: undo the level differences of a near source
 
+	Chain     bool `json:"chain,omitempty"`      // the files of the take follow each other
+	FindChain bool `json:"find_chain,omitempty"` // find the files that the recorder split the take into
+	FindSet   bool `json:"find_set,omitempty"`   // find the other files of the set by iXML
+
+	NoiseCue       string `json:"noise_cue,omitempty"`       // label of the cues where only noise sounds
+	TargetCue      string `json:"target_cue,omitempty"`      // label of the cues where the target sounds too
 	Noise          string `json:"noise,omitempty"`           // A..B,... where only noise sounds
 	Target         string `json:"target,omitempty"`          // A..B,... where the target sounds too
 	IsolatedNoise  string `json:"isolated_noise,omitempty"`  // path of a take
@@ -58,7 +64,8 @@ type Options struct {
 	Reports       string  `json:"reports,omitempty"` // json,csv (default) or none
 	Out           string  `json:"out,omitempty"`
 	Overwrite     bool    `json:"overwrite,omitempty"`
-	BlockFrames   int     `json:"-"` // frames a block; 0 is the default. It changes no sample.
+	Private       bool    `json:"private,omitempty"` // leave out what names places, people and machines
+	BlockFrames   int     `json:"-"`                 // frames a block; 0 is the default. It changes no sample.
 }
 
 // UsageError is a fault of the options, the rig or a file that describes what
@@ -195,6 +202,12 @@ func (o Options) resolve() (*settings, error) {
 	if o.Handles != 0 && o.Excerpt == "" {
 		fault("--handles %g: handles belong to --excerpt A..B", o.Handles)
 	}
+	if o.TargetCue != "" && o.NoiseCue == "" && o.Noise == "" && o.IsolatedNoise == "" {
+		fault("--target-cue without --noise-cue: the target's power is what a stretch has above the noise, so the noise must be known (give --noise-cue LABEL)")
+	}
+	if o.Chain && (o.FindChain || o.FindSet) {
+		fault("--chain with --find-chain or --find-set: the files are named or found, not both")
+	}
 	if o.Target != "" && o.Noise == "" && o.IsolatedNoise == "" {
 		fault("--target without --noise: the target's power is what a stretch has above the noise, so the noise must be known (give --noise A..B)")
 	}
@@ -215,6 +228,7 @@ func (o Options) resolve() (*settings, error) {
 	}
 	if o.NoMeasure {
 		for _, given := range []struct{ option, value string }{
+			{"noise-cue", o.NoiseCue}, {"target-cue", o.TargetCue},
 			{"noise", o.Noise}, {"target", o.Target}, {"isolated-noise", o.IsolatedNoise},
 			{"isolated-target", o.IsolatedTarget}, {"compare-to", o.CompareTo},
 		} {

@@ -24,7 +24,7 @@ type Moment struct {
 func (m Moment) String() string { return m.text }
 
 // ParseStretches reads A..B[,A..B...] with A and B in seconds from the take's
-// first frame or as times of day HH:MM:SS[.sss] or HH:MM:SS:FF.
+// first frame or as times of day HH:MM:SS[.sss] or HH:MM:SS:FF (drop-frame labels with ;FF).
 func ParseStretches(text string) ([]Stretch, error) {
 	var list []Stretch
 	for _, part := range strings.Split(text, ",") {
@@ -54,7 +54,10 @@ func ParseStretches(text string) ([]Stretch, error) {
 
 func parseMoment(text string) (Moment, error) {
 	m := Moment{text: text, Frame: -1}
-	fields := strings.Split(text, ":")
+	fields := strings.FieldsFunc(text, func(r rune) bool { return r == ':' || r == ';' })
+	if strings.Count(text, ":")+strings.Count(text, ";") != max(0, len(fields)-1) {
+		fields = nil // an empty field
+	}
 	switch len(fields) {
 	case 1:
 		s, err := strconv.ParseFloat(text, 64)

@@ -20,14 +20,14 @@ type track struct {
 	first  int64 // frame of the take that is the track's first
 }
 
-// newTrack starts a mono track under its temporary name.
-func newTrack(final string, overwrite bool, rate int, encoding wav.Encoding, first int64) (*track, error) {
+// newTrack starts a mono track with metadata under its temporary name.
+func newTrack(final string, overwrite bool, rate int, encoding wav.Encoding, first int64, meta *wav.Metadata) (*track, error) {
 	file, err := stage(final, overwrite)
 	if err != nil {
 		return nil, err
 	}
 	t := &track{file: file, format: wav.Format{Rate: rate, Channels: 1, Encoding: encoding}, first: first}
-	if t.writer, err = wav.NewWriter(file, t.format, wav.Option{Seed: ditherSeed}); err != nil {
+	if t.writer, err = wav.NewWriter(file, t.format, wav.Option{Metadata: meta, Seed: ditherSeed}); err != nil {
 		file.abandon()
 		return nil, fmt.Errorf("%s: %w", final, err)
 	}
