@@ -38,6 +38,14 @@ How
   --method NAME          spectral (default), sinc or farrow
   --taper NAME           uniform (default), hann, hamming, kaiser:BETA,
                          dolph-chebyshev:DB or taylor:DB:N
+  --weights NAME         delay-and-sum (default), constant-beamwidth,
+                         superdirective, or minimum-variance (from the noise
+                         of the take)
+  --null AZ[,EL]         a direction that is not to be heard; several with
+                         several --null
+  --white-noise-gain-floor-db DB
+                         how much the noise of the microphones themselves may
+                         rise with such weights (default 0: not at all)
   --undo-spreading       with --focus: undo the level differences of a near
                          source
   --highpass HZ          cut below HZ, in track and measurement alike
@@ -98,6 +106,9 @@ func steerFlags() []cli.Flag {
 
 		&cli.StringFlag{Name: "method"},
 		&cli.StringFlag{Name: "taper"},
+		&cli.StringFlag{Name: "weights"},
+		&cli.StringSliceFlag{Name: "null"},
+		&cli.Float64Flag{Name: "white-noise-gain-floor-db"},
 		&cli.BoolFlag{Name: "undo-spreading"},
 		&cli.Float64Flag{Name: "highpass"},
 		&cli.Float64Flag{Name: "gain-db"},
@@ -148,7 +159,12 @@ func steerOptions(c *cli.Context) pipeline.Options {
 		ReferencePoint: c.String("reference-point"),
 		Method:         c.String("method"),
 		Taper:          c.String("taper"),
+		Weights:        c.String("weights"),
+		Null:           c.StringSlice("null"),
 		UndoSpreading:  c.Bool("undo-spreading"),
+
+		WhiteNoiseGainFloorDB: number("white-noise-gain-floor-db"),
+
 		HighpassHz:     c.Float64("highpass"),
 		GainDB:         c.Float64("gain-db"),
 		TemperatureC:   number("temperature-c"),

@@ -41,6 +41,11 @@ type beamline struct {
 	filters *beam.Filters
 	set     *settings
 	errorDB float64
+	// shift are the delay corrections of the rig, seconds, applied to the
+	// channels themselves where weights are designed; nil where the filters
+	// hold them.
+	shift []float64
+	fit   *beam.Fit // of designed weights
 }
 
 // nearestFocus is how close to a microphone a focus may lie, metres.
@@ -67,12 +72,20 @@ func newBeamline(l *loadedRig, s *settings, rate int) (*beamline, error) {
 		return nil, &UsageError{Err: fmt.Errorf("--taper %s: %w", s.taper, err)}
 	}
 	arrivals := acoustics.Delays(nil, b.look, b.at, b.ref, l.speed)
+	if s.designed() {
+		b.correctTimes()
+	}
 	for i, m := range b.used {
+		if b.shift != nil {
+			break
+		}
 		// The correction is added to the channel's time: a channel that is late
 		// by d has the correction -d and arrives d later than its place says.
 		arrivals[i] -= l.Mics[m].Delay
-		if s.UndoSpreading {
-			amplitudes[i] /= b.look.Spreading(b.at[i], b.ref)
+	}
+	if s.UndoSpreading {
+		for i, p := range b.at {
+			amplitudes[i] /= b.look.Spreading(p, b.ref)
 		}
 	}
 	kernel, err := b.kernel()
@@ -108,6 +121,15 @@ func (b *beamline) corrected(src audio.Source) (audio.Source, error) {
 	out, err := audio.Map(src, order, gain)
 	if err != nil {
 		return nil, err
+	}
+	if b.shift != nil {
+		kernel, err := delay.NewSinc(sincTaps)
+		if err != nil {
+			return nil, err
+		}
+		if out, err = delay.NewShift(out, kernel, b.shift); err != nil {
+			return nil, &UsageError{Err: err}
+		}
 	}
 	if b.set.HighpassHz > 0 {
 		if out, err = spectral.HighPass(out, b.set.HighpassHz); err != nil {

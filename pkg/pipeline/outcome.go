@@ -79,7 +79,7 @@ func (b *beamline) summary() Steer {
 		Kind: "given", AzimuthDeg: d.AzimuthDeg(), ElevationDeg: d.ElevationDeg(),
 		Ambiguity: rig.Spread(b.at).Ambiguity(),
 		Method:    b.set.Method, MethodErrorDB: b.errorDB,
-		Weights: "delay-and-sum", Taper: b.set.taper.String(),
+		Weights: b.set.Weights, Taper: b.set.taper.String(),
 		UndoSpreading: b.set.UndoSpreading, GainDB: b.set.GainDB, FilterTaps: len(b.filters.H[0]),
 	}
 	if heading, ok := b.rig.Compass(d); ok {
@@ -89,6 +89,12 @@ func (b *beamline) summary() Steer {
 		s.Kind = "focus"
 		s.PointM = &[3]float64{p.X, p.Y, p.Z}
 		s.DistanceM = number(p.Distance(b.ref))
+	}
+	for _, d := range b.set.nulls {
+		s.NullsDeg = append(s.NullsDeg, [2]float64{d.AzimuthDeg(), d.ElevationDeg()})
+	}
+	if b.set.designed() {
+		s.FloorDB = number(b.set.floorDB)
 	}
 	if b.set.HighpassHz > 0 {
 		s.HighpassHz = number(b.set.HighpassHz)

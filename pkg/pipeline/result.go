@@ -104,21 +104,23 @@ type RigMic struct {
 
 // Steer is where and how the beam was pointed.
 type Steer struct {
-	Kind          string      `json:"kind"` // given, focus, estimated, focus-estimated or followed
-	AzimuthDeg    float64     `json:"azimuth_deg"`
-	ElevationDeg  float64     `json:"elevation_deg"`
-	CompassDeg    Number      `json:"compass_deg,omitempty"`
-	PointM        *[3]float64 `json:"point_m,omitempty"`
-	DistanceM     Number      `json:"distance_m,omitempty"` // of the point from the reference point
-	Ambiguity     string      `json:"ambiguity"`            // what the rig cannot tell apart, in words
-	Method        string      `json:"method"`               // sinc, farrow or spectral
-	MethodErrorDB float64     `json:"method_error_db"`      // stated largest error of the method, dB re the signal
-	Weights       string      `json:"weights"`
-	Taper         string      `json:"taper"`
-	UndoSpreading bool        `json:"undo_spreading"`
-	HighpassHz    Number      `json:"highpass_hz,omitempty"`
-	GainDB        float64     `json:"gain_db"` // applied to the track, taken out of every level here
-	FilterTaps    int         `json:"filter_taps"`
+	Kind          string       `json:"kind"` // given, focus, estimated, focus-estimated or followed
+	AzimuthDeg    float64      `json:"azimuth_deg"`
+	ElevationDeg  float64      `json:"elevation_deg"`
+	CompassDeg    Number       `json:"compass_deg,omitempty"`
+	PointM        *[3]float64  `json:"point_m,omitempty"`
+	DistanceM     Number       `json:"distance_m,omitempty"` // of the point from the reference point
+	Ambiguity     string       `json:"ambiguity"`            // what the rig cannot tell apart, in words
+	Method        string       `json:"method"`               // sinc, farrow or spectral
+	MethodErrorDB float64      `json:"method_error_db"`      // stated largest error of the method, dB re the signal
+	Weights       string       `json:"weights"`
+	Taper         string       `json:"taper"`
+	NullsDeg      [][2]float64 `json:"nulls_deg,omitempty"` // azimuth and elevation
+	FloorDB       Number       `json:"white_noise_gain_floor_db,omitempty"`
+	UndoSpreading bool         `json:"undo_spreading"`
+	HighpassHz    Number       `json:"highpass_hz,omitempty"`
+	GainDB        float64      `json:"gain_db"` // applied to the track, taken out of every level here
+	FilterTaps    int          `json:"filter_taps"`
 }
 
 // Direction is an estimated direction.

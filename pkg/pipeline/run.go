@@ -104,6 +104,11 @@ func (r *run) steer() (result *Result, err error) {
 	if r.from, r.to, err = r.excerpt(); err != nil {
 		return nil, err
 	}
+	if r.set.designed() {
+		if err := r.design(); err != nil {
+			return nil, err
+		}
+	}
 	if err := r.prepare(); err != nil {
 		return nil, err
 	}

@@ -29,9 +29,15 @@ type Options struct {
 	Toward string `json:"toward,omitempty"` // AZ[,EL] in degrees
 	Focus  string `json:"focus,omitempty"`  // X,Y,Z in metres from the rig's origin
 
-	Method        string `json:"method,omitempty"`         // sinc, farrow or spectral (default)
-	Taper         string `json:"taper,omitempty"`          // default uniform
-	UndoSpreading bool   `json:"undo_spreading,omitempty"` // for a focus: undo the level differences of a near source
+	Method  string `json:"method,omitempty"`  // sinc, farrow or spectral (default)
+	Weights string `json:"weights,omitempty"` // delay-and-sum (default), constant-beamwidth, superdirective or minimum-variance
+	Taper   string `json:"taper,omitempty"`   // default uniform
+	// Null are directions AZ[,EL] that the beam does not hear.
+	Null []string `json:"null,omitempty"`
+	// WhiteNoiseGainFloorDB bounds how much a design raises the noise of the
+	// microphones themselves, dB; nil is 0.
+	WhiteNoiseGainFloorDB *float64 `json:"white_noise_gain_floor_db,omitempty"`
+	UndoSpreading         bool     `json:"undo_spreading,omitempty"` // for a focus: undo the level differences of a near source
 
 	Chain     bool `json:"chain,omitempty"`      // the files of the take follow each other
 	FindChain bool `json:"find_chain,omitempty"` // find the files that the recorder split the take into
@@ -100,6 +106,14 @@ const (
 	MethodSpectral = "spectral"
 )
 
+// The weights.
+const (
+	WeightsDelayAndSum       = "delay-and-sum"
+	WeightsConstantBeamwidth = "constant-beamwidth"
+	WeightsSuperdirective    = "superdirective"
+	WeightsMinimumVariance   = "minimum-variance"
+)
+
 // The output formats.
 const (
 	FormatAuto    = "auto"
@@ -126,6 +140,8 @@ type settings struct {
 	direction *rig.Direction // of --toward
 	point     *rig.Point     // of --focus
 	taper     beam.Taper
+	nulls     []rig.Direction
+	floorDB   float64
 	noise     []Stretch
 	target    []Stretch
 	excerpt   *Stretch
@@ -169,7 +185,9 @@ func (o Options) resolve() (*settings, error) {
 			fault("--%s %q: want one of %s", option, *value, strings.Join(allowed, ", "))
 		}
 	}
+	choose("weights", &s.Weights, WeightsDelayAndSum, WeightsDelayAndSum, WeightsConstantBeamwidth, WeightsSuperdirective, WeightsMinimumVariance)
 	choose("method", &s.Method, MethodSpectral, MethodSinc, MethodFarrow, MethodSpectral)
+	s.resolveWeights(fault)
 	choose("format", &s.Format, FormatAuto, FormatAuto, FormatPCM16, FormatPCM24, FormatFloat32)
 	choose("over-range", &s.OverRange, OverRangeFail, OverRangeFail, OverRangeFloat32)
 
@@ -232,7 +250,8 @@ func (o Options) resolve() (*settings, error) {
 			{"noise", o.Noise}, {"target", o.Target}, {"isolated-noise", o.IsolatedNoise},
 			{"isolated-target", o.IsolatedTarget}, {"compare-to", o.CompareTo},
 		} {
-			if given.value != "" {
+			forWeights := s.Weights == WeightsMinimumVariance && strings.HasSuffix(given.option, "noise")
+			if given.value != "" && !forWeights {
 				fault("--%s with --no-measure: nothing would be measured with it", given.option)
 			}
 		}
@@ -244,6 +263,50 @@ func (o Options) resolve() (*settings, error) {
 		return nil, &UsageError{Err: errors.Join(faults...)}
 	}
 	return s, nil
+}
+
+// resolveWeights reads the options that belong to the weights.
+func (s *settings) resolveWeights(fault func(format string, args ...any)) {
+	for _, text := range s.Null {
+		d, err := ParseDirection(text)
+		if err != nil {
+			fault("--null %q: %w", text, err)
+			continue
+		}
+		if s.Toward != "" {
+			if look, err := ParseDirection(s.Toward); err == nil && rig.AngleBetween(look, d) < 1e-3 {
+				fault("--null %s: the direction that is steered to: a beam cannot be deaf to what it is to hear", text)
+			}
+		}
+		s.nulls = append(s.nulls, d)
+	}
+	designed := s.Weights != WeightsDelayAndSum || len(s.Null) > 0
+	if designed && s.Method != MethodSpectral {
+		fault("--method %s: weights other than delay-and-sum and nulls depend on frequency and need the method %s", s.Method, MethodSpectral)
+	}
+	if s.WhiteNoiseGainFloorDB != nil {
+		s.floorDB = *s.WhiteNoiseGainFloorDB
+		if !designed {
+			fault("--white-noise-gain-floor-db %g: a floor belongs to weights other than delay-and-sum, which have the most white noise gain there is", s.floorDB)
+		}
+		if !(s.floorDB >= -60 && s.floorDB <= 30) {
+			fault("--white-noise-gain-floor-db %g: want -60 to 30 dB", s.floorDB)
+		}
+	}
+	if (s.Weights == WeightsSuperdirective || s.Weights == WeightsMinimumVariance) && s.Taper != "" && s.Taper != "uniform" {
+		fault("--taper %s: the weights %s are found without a taper", s.Taper, s.Weights)
+	}
+	if s.Weights == WeightsConstantBeamwidth && len(s.Null) > 0 {
+		fault("--null with --weights %s: nulls go with %s, %s and %s", s.Weights, WeightsDelayAndSum, WeightsSuperdirective, WeightsMinimumVariance)
+	}
+	if s.Weights == WeightsMinimumVariance && s.NoMeasure && s.Noise == "" && s.IsolatedNoise == "" {
+		fault("--weights %s with --no-measure: the noise must be known; give --noise A..B", s.Weights)
+	}
+}
+
+// designed says that the weights depend on frequency.
+func (s *settings) designed() bool {
+	return s.Weights != WeightsDelayAndSum || len(s.nulls) > 0
 }
 
 func parseReports(text string) ([]string, error) {
