@@ -40,7 +40,7 @@ type verb struct {
 
 // verbs are the commands in the order in which --help lists them.
 func verbs() []verb {
-	return []verb{demoVerb(), steerVerb(), simulateVerb(), schemaVerb()}
+	return []verb{demoVerb(), steerVerb(), simulateVerb(), inspectVerb(), schemaVerb()}
 }
 
 // The exit codes.

@@ -27,6 +27,17 @@ The track has the take's length, and its frame i is the sound at the
 reference point at frame i of the take. Beside it go a report with the gain
 in each band, measured and predicted, and its 95 % intervals.
 
+A take of several files is one argument too: "roof_07_{ch}.wav" is the set of
+one-channel files of that name with a channel number in place of {ch}.
+
+Which files
+  --chain                the files named are one take, one after the other
+  --set                  the files named are one take, side by side
+  --find-chain           find the files that the recorder split the take into
+                         from its first one
+  --find-set             find the other files of the set by iXML (done anyway
+                         for a file of one channel)
+
 Where to
   --rig FILE             the rig file (alidade schema rig describes it)
   --toward AZ[,EL]       direction in degrees: azimuth from +x towards +y,
@@ -61,6 +72,9 @@ What is measured
   --noise A..B[,A..B]    where only the noise sounds: seconds from the
                          take's start, or HH:MM:SS if the take has a time
   --target A..B[,A..B]   where the wanted sound sounds too
+  --noise-cue LABEL      where cues of that label say that only noise sounds:
+                         regions, or from a cue to the next
+  --target-cue LABEL     likewise where the wanted sound sounds too
   --isolated-noise TAKE  the same scene with the noise alone
   --isolated-target TAKE the same scene with the wanted sound alone
   --compare-to NAME      gain over this microphone as well
@@ -78,6 +92,8 @@ What is written
   --reports LIST         json,csv (default), json, csv or none
   --overwrite            replace tracks and reports that exist
   --no-verify            do not read the written track back
+  --private              leave out of report and track what names places,
+                         people and machines: notes, texts, paths
   --reproducible         leave the time of day out of the report
 
 What is said
@@ -99,6 +115,11 @@ func steerVerb() verb {
 
 func steerFlags() []cli.Flag {
 	return []cli.Flag{
+		&cli.BoolFlag{Name: "chain"},
+		&cli.BoolFlag{Name: "set"},
+		&cli.BoolFlag{Name: "find-chain"},
+		&cli.BoolFlag{Name: "find-set"},
+
 		&cli.StringFlag{Name: "rig"},
 		&cli.StringFlag{Name: "toward"},
 		&cli.StringFlag{Name: "focus"},
@@ -120,6 +141,8 @@ func steerFlags() []cli.Flag {
 
 		&cli.StringSliceFlag{Name: "noise"},
 		&cli.StringSliceFlag{Name: "target"},
+		&cli.StringFlag{Name: "noise-cue"},
+		&cli.StringFlag{Name: "target-cue"},
 		&cli.StringFlag{Name: "isolated-noise"},
 		&cli.StringFlag{Name: "isolated-target"},
 		&cli.StringFlag{Name: "compare-to"},
@@ -135,6 +158,7 @@ func steerFlags() []cli.Flag {
 		&cli.BoolFlag{Name: "overwrite"},
 		&cli.BoolFlag{Name: "verify"},
 		&cli.BoolFlag{Name: "no-verify"},
+		&cli.BoolFlag{Name: "private"},
 		&cli.BoolFlag{Name: "reproducible"},
 
 		&cli.BoolFlag{Name: "json"},
@@ -154,6 +178,12 @@ func steerOptions(c *cli.Context) pipeline.Options {
 	}
 	list := func(name string) string { return strings.Join(c.StringSlice(name), ",") }
 	return pipeline.Options{
+		Chain:          c.Bool("chain"),
+		FindChain:      c.Bool("find-chain"),
+		FindSet:        c.Bool("find-set"),
+		NoiseCue:       c.String("noise-cue"),
+		TargetCue:      c.String("target-cue"),
+		Private:        c.Bool("private"),
 		Toward:         c.String("toward"),
 		Focus:          c.String("focus"),
 		ReferencePoint: c.String("reference-point"),
@@ -214,7 +244,13 @@ func checkSteer(c *cli.Context, o pipeline.Options) error {
 	if c.Bool("verify") && c.Bool("no-verify") {
 		fault("both --verify and --no-verify")
 	}
-	if len(takes) > 1 {
+	if c.Bool("chain") && c.Bool("set") {
+		fault("both --chain and --set: files follow each other or lie side by side (a set of each part of a chain is named by {ch})")
+	}
+	if c.Bool("set") && c.Bool("find-set") {
+		fault("both --set and --find-set: the files are named or found")
+	}
+	if len(takes) > 1 && !oneTake(c) {
 		faults = append(faults, checkTogether(takes, o.Out)...)
 	}
 	if len(faults) > 0 {
@@ -246,11 +282,14 @@ func checkTogether(takes []string, out string) (faults []error) {
 	return faults
 }
 
-// steerSpec is what the pipeline is to do for one take.
-func (u *ui) steerSpec(c *cli.Context, o pipeline.Options, take string) pipeline.Spec {
-	s := pipeline.Spec{
-		Take: []string{take}, RigPath: c.String("rig"), Options: o,
-		Version: version, Command: append([]string{"alidade"}, u.args...),
+// oneTake says whether all files of the command line are one take.
+func oneTake(c *cli.Context) bool { return c.Bool("chain") || c.Bool("set") }
+
+// steerSpec is what the pipeline is to do for one take of the given files.
+func (u *ui) steerSpec(c *cli.Context, o pipeline.Options, files []string) pipeline.Spec {
+	s := pipeline.Spec{Take: files, RigPath: c.String("rig"), Options: o, Version: version}
+	if !o.Private {
+		s.Command = append([]string{"alidade"}, u.args...)
 	}
 	if !c.Bool("reproducible") {
 		s.Created = u.now().UTC().Format(time.RFC3339)

@@ -168,8 +168,12 @@ func runSteer(u *ui, c *cli.Context) error {
 		return err
 	}
 	var specs []pipeline.Spec
-	for _, take := range c.Args().Slice() {
-		specs = append(specs, u.steerSpec(c, options, take))
+	if files := c.Args().Slice(); oneTake(c) {
+		specs = append(specs, u.steerSpec(c, options, files))
+	} else {
+		for _, take := range files {
+			specs = append(specs, u.steerSpec(c, options, []string{take}))
+		}
 	}
 	return takes{
 		run:     steerTake,

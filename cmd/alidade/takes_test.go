@@ -137,7 +137,7 @@ func TestTheSpecHoldsTheTimeUnlessReproducible(t *testing.T) {
 	} {
 		steerLine(t, line, func(c *cli.Context) {
 			b := newBench(strings.Fields("steer " + line)...)
-			s := b.steerSpec(c, steerOptions(c), "x.wav")
+			s := b.steerSpec(c, steerOptions(c), []string{"x.wav"})
 			if s.Created != want || s.RigPath != "r.yaml" || s.Version != version || len(s.Take) != 1 || s.Take[0] != "x.wav" ||
 				strings.Join(s.Command, " ") != "alidade steer "+line {
 				t.Errorf("%q: %+v", line, s)

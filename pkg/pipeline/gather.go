@@ -267,3 +267,21 @@ func Describe(path string) (wav.Description, error) {
 	}
 	return r.Describe(path), nil
 }
+
+// Files returns the files that a path with {ch} stands for, in the order of
+// their numbers, and any other path as it is.
+func Files(path string) ([]string, error) {
+	dir, base := filepath.Split(path)
+	if !strings.Contains(base, channelMark) {
+		return []string{path}, nil
+	}
+	r, err := (&gathering{}).pattern(dir, base)
+	if err != nil {
+		return nil, err
+	}
+	var list []string
+	for _, s := range r {
+		list = append(list, s...)
+	}
+	return list, nil
+}
