@@ -150,17 +150,11 @@ func TestDryDirectionReachesTheBoundAndKnowsItsError(t *testing.T) {
 			if s.rms > 1.5 {
 				t.Errorf("%s at %g: RMS error %.2f of the Cramér–Rao bound, want at most 1.5", g.name, snr, s.rms)
 			}
-			wide, top := 1.25, most
-			if snr > 100 {
-				// Above 20 dB the coherence is capped (maxCoherent): errors of some
-				// thousandths of a degree are stated up to twice too wide.
-				wide, top = 2, 1
+			if s.coverage < least || s.coverage > most {
+				t.Errorf("%s at %g: coverage %.3f, want %.2f to %.2f", g.name, snr, s.coverage, least, most)
 			}
-			if s.coverage < least || s.coverage > top {
-				t.Errorf("%s at %g: coverage %.3f, want %.2f to %.2f", g.name, snr, s.coverage, least, top)
-			}
-			if s.seRatio < 0.8 || s.seRatio > wide {
-				t.Errorf("%s at %g: standard error over RMS error %.2f, want 0.8 to %.2f", g.name, snr, s.seRatio, wide)
+			if s.seRatio < 0.8 || s.seRatio > 1.25 {
+				t.Errorf("%s at %g: standard error over RMS error %.2f, want 0.8 to 1.25", g.name, snr, s.seRatio)
 			}
 			if limit := 0.1*deg + 2*s.rmsDeg*deg/math.Sqrt(float64(s.found)); math.Abs(s.bias)*s.rmsDeg*deg/s.rms > limit {
 				t.Errorf("%s at %g: mean error %.3f bounds, want less than 0.1° and two standard deviations", g.name, snr, s.bias)

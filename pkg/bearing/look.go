@@ -10,10 +10,10 @@ import (
 // Limits of the search in one window, in units of the steered response, which
 // is 1 where every line of every pair is in phase.
 const (
-	detectSigma = 5.0   // peaks below this many standard deviations of pure noise are none
-	detectFloor = 0.06  // nor are peaks lower than this
-	secondPeak  = 0.3   // a further source reaches this part of the first
-	maxCoherent = 0.995 // more is not believed: dry takes above 23 dB get too wide an error, never too narrow a one
+	detectSigma = 5.0    // peaks below this many standard deviations of pure noise are none
+	detectFloor = 0.06   // nor are peaks lower than this
+	secondPeak  = 0.3    // a further source reaches this part of the first
+	maxCoherent = 0.9995 // more is not believed
 	maxGroups   = 16
 	groupHz     = 150 // least width of a group of lines
 )
