@@ -6,6 +6,9 @@
 // main.go holds run, the table of verbs and the one switch of exit codes;
 // args.go lets options stand anywhere; ui.go says how the program speaks.
 //
+// Longer than 2,000 lines because each verb carries its help text, written out,
+// and its flags: a file a verb.
+//
 // # Use
 //
 //	alidade demo

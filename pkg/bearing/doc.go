@@ -58,6 +58,10 @@
 //	}
 //	fmt.Println(best.Direction.AzimuthDeg(), best.StandardError*180/math.Pi, best.Confidence)
 //
+// Longer than 2,000 lines because one estimate needs all of it at once: the
+// steered response, the likelihood that refines it, the floor, the reflections
+// and the standard error that rests on them, and the tracks over time.
+//
 // # Sources
 //
 // [Knapp & Carter 1976] C. H. Knapp, G. C. Carter, The generalized correlation
