@@ -64,10 +64,8 @@ func (r *run) result() (*Result, error) {
 	if r.reference != nil {
 		files = append(files, r.reference.file)
 	}
-	for _, s := range append(files, r.track.file) {
-		if err := s.commit(); err != nil {
-			return nil, err
-		}
+	if err := commitAll(append(files, r.track.file)); err != nil {
+		return nil, err
 	}
 	return res, nil
 }

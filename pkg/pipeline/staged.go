@@ -16,6 +16,8 @@ type staged struct {
 	*os.File
 	final     string
 	overwrite bool
+	replaced  bool // final existed when the file was staged
+	sealed    bool // complete and synced
 	done      bool
 }
 
@@ -60,22 +62,57 @@ func stage(final string, overwrite bool) (*staged, error) {
 				return nil, errors.Join(err, f.Close(), os.Remove(name))
 			}
 		}
-		return &staged{File: f, final: final, overwrite: overwrite}, nil
+		return &staged{File: f, final: final, overwrite: overwrite, replaced: info != nil}, nil
 	}
 	return nil, fmt.Errorf("%s: %d temporary files of earlier runs stand in its folder: remove those named .%s.partial-*", final, maxStagedTries, base)
 }
 
-// commit syncs and closes the file and gives it its final name, exclusively
-// unless it may overwrite. On an error the file is removed.
+// commitAll commits files that belong together: all are whole and synced before
+// the first gets its name, and if one cannot get it, those before it that
+// replaced nothing are taken away again.
+func commitAll(files []*staged) error {
+	for _, s := range files {
+		if err := s.seal(); err != nil {
+			return err
+		}
+	}
+	for k, s := range files {
+		if err := s.commit(); err != nil {
+			for _, before := range files[:k] {
+				if !before.replaced {
+					err = errors.Join(err, os.Remove(before.final))
+				}
+			}
+			return err
+		}
+	}
+	return nil
+}
+
+// seal syncs and closes the file, which is complete. On an error it is removed.
+func (s *staged) seal() error {
+	if s.done || s.sealed {
+		return nil
+	}
+	if err := errors.Join(s.Sync(), s.Close()); err != nil {
+		s.done = true
+		return errors.Join(err, os.Remove(s.Name()))
+	}
+	s.sealed = true
+	return nil
+}
+
+// commit seals the file and gives it its final name, exclusively unless it may
+// overwrite. On an error the file is removed.
 func (s *staged) commit() error {
 	if s.done {
 		return nil
 	}
+	if err := s.seal(); err != nil {
+		return err
+	}
 	s.done = true
 	tmp := s.Name()
-	if err := errors.Join(s.Sync(), s.Close()); err != nil {
-		return errors.Join(err, os.Remove(tmp))
-	}
 	if !s.overwrite {
 		// A link is exclusive where a rename would replace what came in between.
 		err := os.Link(tmp, s.final)
