@@ -103,9 +103,9 @@ const most = 20
 
 // describe writes a description for people, in lines of at most width columns.
 func describe(w io.Writer, d wav.Description, width int) {
-	fmt.Fprintln(w, shown(d.Path))
+	fmt.Fprintln(w, harmless(d.Path))
 	line := func(what, format string, a ...any) {
-		text := shown(fmt.Sprintf(format, a...))
+		text := harmless(fmt.Sprintf(format, a...))
 		for k, part := range folded(text, max(20, width-16)) {
 			if k > 0 {
 				what = ""
@@ -219,9 +219,10 @@ func clock(frames int64, rate int) string {
 	return fmt.Sprintf("%d:%02d:%02d.%03d", int(d.Hours()), int(d.Minutes())%60, int(d.Seconds())%60, ms%1000)
 }
 
-// shown makes the text of a file fit for a terminal: no control characters,
-// which could move the cursor or change colours, and no ends of lines.
-func shown(text string) string {
+// harmless makes the text of a file or a name fit for a terminal: no control
+// characters, which could move the cursor or change colours, and no ends of
+// lines.
+func harmless(text string) string {
 	return strings.Map(func(r rune) rune {
 		switch {
 		case r == '\n' || r == '\r' || r == '\t':

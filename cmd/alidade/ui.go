@@ -89,10 +89,10 @@ func (u *ui) complain(err error) {
 	if text != "" {
 		for _, line := range strings.Split(text, "\n") {
 			if strings.HasPrefix(line, " ") {
-				fmt.Fprintln(u.stderr, line)
+				fmt.Fprintln(u.stderr, harmless(line))
 				continue
 			}
-			fmt.Fprintf(u.stderr, "alidade: %s\n", line)
+			fmt.Fprintf(u.stderr, "alidade: %s\n", harmless(line))
 		}
 	}
 	for _, h := range hints(err, nil) {

@@ -42,7 +42,7 @@ func (r *run) cued(option, label string) ([]measure.Stretch, error) {
 		list = append(list, s) // cues come in the order of their frames
 	}
 	if len(list) == 0 {
-		return nil, &UsageError{Err: fmt.Errorf("--%s %q: no cue of %s has that label: %s", option, label, r.take.path(), r.labels())}
+		return nil, &UsageError{Err: fmt.Errorf("--%s %q: no cue of %s has that label: %s", option, label, r.take.path(), r.labels()), Hint: "give one of its labels, or stretches with --noise A..B"}
 	}
 	return list, nil
 }

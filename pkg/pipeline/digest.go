@@ -29,7 +29,7 @@ func openInput(path string, hashed bool) (*input, error) {
 	// Looked at before it is opened: opening a pipe would wait for its writer.
 	info, err := os.Stat(path)
 	if err != nil {
-		return nil, err
+		return nil, unreadable(err)
 	}
 	if !info.Mode().IsRegular() {
 		return nil, &HintedError{
@@ -39,7 +39,7 @@ func openInput(path string, hashed bool) (*input, error) {
 	}
 	f, err := os.Open(path)
 	if err != nil {
-		return nil, err
+		return nil, unreadable(err)
 	}
 	if info, err = f.Stat(); err != nil {
 		f.Close()

@@ -188,7 +188,7 @@ func (r *run) given(option string, list []Stretch, duration float64) ([]measure.
 			return nil, &UsageError{Err: fmt.Errorf("--%s: %w", option, err)}
 		}
 		if v[0] >= duration {
-			return nil, &UsageError{Err: fmt.Errorf("--%s %s..%s: starts after the end of %s, which is %.3f s long", option, s.From, s.To, r.take.path(), duration)}
+			return nil, &UsageError{Err: fmt.Errorf("--%s %s..%s: starts after the end of %s, which is %.3f s long", option, s.From, s.To, r.take.path(), duration), Hint: "times count in seconds from the take's first frame"}
 		}
 		out = append(out, measure.Stretch{From: v[0], To: math.Min(v[1], duration)})
 	}
@@ -320,7 +320,7 @@ func (r *run) through(path string) (l listened, err error) {
 	mix := r.take.header
 	if t.header.Rate != mix.Rate || t.header.Channels != mix.Channels {
 		return l, &UsageError{Err: fmt.Errorf("%s: %d channels at %d Hz, but %s has %d at %d Hz: isolated takes are recorded with the same rig and settings",
-			path, t.header.Channels, t.header.Rate, r.take.path(), mix.Channels, mix.Rate)}
+			path, t.header.Channels, t.header.Rate, r.take.path(), mix.Channels, mix.Rate), Hint: "give a take that fits, or leave the option out"}
 	}
 	src := audio.Source(&watched{Source: t.source(), ctx: r.ctx, tell: r.tell("measuring "+path, t.header.Frames)})
 	if l.in, l.out, err = r.drive(src); err != nil {

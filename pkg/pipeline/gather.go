@@ -92,7 +92,7 @@ func (g *gathering) row(path string, all []string) (row, error) {
 func (g *gathering) pattern(dir, base string) (row, error) {
 	entries, err := os.ReadDir(here(dir))
 	if err != nil {
-		return nil, err
+		return nil, unreadable(err)
 	}
 	var names []string
 	for _, e := range entries {

@@ -17,7 +17,7 @@ func (r *run) seconds(s Stretch) ([2]float64, error) {
 	}
 	base, ok := r.take.timeBase()
 	if !ok {
-		return [2]float64{}, fmt.Errorf("a time of day: %s has no time reference (bext or iXML), give seconds from its first frame", r.take.path())
+		return [2]float64{}, fmt.Errorf("a time of day: %s has no time reference (bext or iXML); give seconds from its first frame", r.take.path())
 	}
 	var out [2]float64
 	for k, m := range []Moment{s.From, s.To} {

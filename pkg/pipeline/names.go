@@ -29,7 +29,7 @@ func outputNames(takePath, out string, toward string) (names, error) {
 			track = filepath.Join(out, base)
 		case strings.HasSuffix(out, "/") || strings.HasSuffix(out, string(filepath.Separator)):
 			if err := os.MkdirAll(out, 0o777); err != nil {
-				return names{}, err
+				return names{}, unwritable(out, err)
 			}
 			track = filepath.Join(out, base)
 		default:

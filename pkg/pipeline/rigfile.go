@@ -13,6 +13,9 @@ import (
 // maxRigBytes bounds a rig file; real ones are a few kilobytes.
 const maxRigBytes = 4 << 20
 
+// rigHint says what helps where a rig file cannot be used.
+const rigHint = "alidade schema rig says what a rig file holds"
+
 // loadedRig is a rig with the files it came from and the air in force.
 type loadedRig struct {
 	*rig.Rig
@@ -28,7 +31,7 @@ type loadedRig struct {
 func loadRig(path string, o Options) (*loadedRig, error) {
 	data, err := readSmall(path, maxRigBytes)
 	if err != nil {
-		return nil, &UsageError{Err: fmt.Errorf("rig: %w", err)}
+		return nil, &UsageError{Err: fmt.Errorf("rig: %w", unreadable(err)), Hint: rigHint}
 	}
 	l := &loadedRig{digest: digestOf(data), files: []string{path}}
 	open := func(name string) (io.ReadCloser, error) {
@@ -43,7 +46,7 @@ func loadRig(path string, o Options) (*loadedRig, error) {
 		return in, nil
 	}
 	if l.Rig, err = rig.Load(path, data, open); err != nil {
-		return nil, &UsageError{Err: err}
+		return nil, &UsageError{Err: err, Hint: rigHint}
 	}
 	if o.ReferencePoint != "" {
 		m, found := l.Find(o.ReferencePoint)

@@ -89,11 +89,14 @@ func (r *run) steer() (result *Result, err error) {
 	}
 	defer func() { err = joinErrors(err, r.take.close()) }()
 	h := r.take.header
-	if err := r.rig.CheckTake(h.Channels); err != nil {
-		return nil, &UsageError{Err: fmt.Errorf("%s: %w", r.take.path(), err)}
+	if err := r.fits(); err != nil {
+		return nil, err
 	}
 	if h.Frames == 0 {
-		return nil, fmt.Errorf("%s: holds no sound: its header promises %d channels at %d Hz, and no frame follows", r.take.path(), h.Channels, h.Rate)
+		return nil, &HintedError{
+			Err:  fmt.Errorf("%s: holds no sound: its header promises %d channels at %d Hz, and no frame follows", r.take.path(), h.Channels, h.Rate),
+			Hint: "the recorder stopped before the first sound or the copy was cut off: copy it again, or leave it out",
+		}
 	}
 	if r.set.HighpassHz >= float64(h.Rate)/2 {
 		return nil, &UsageError{Err: fmt.Errorf("--highpass %g: at or above half the take's rate of %d Hz", r.set.HighpassHz, h.Rate)}
@@ -148,7 +151,7 @@ func (r *run) excerpt() (from, to int64, err error) {
 	from = max(0, frameAt(s[0]-r.set.Handles, rate))
 	to = min(h.Frames, frameAt(s[1]+r.set.Handles, rate))
 	if from >= to {
-		return 0, 0, &UsageError{Err: fmt.Errorf("--excerpt %s: the take is %.3f s long", r.set.Excerpt, float64(h.Frames)/rate)}
+		return 0, 0, &UsageError{Err: fmt.Errorf("--excerpt %s: the take is %.3f s long", r.set.Excerpt, float64(h.Frames)/rate), Hint: "times count in seconds from the take's first frame"}
 	}
 	return from, to, nil
 }

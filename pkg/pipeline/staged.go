@@ -31,7 +31,10 @@ func stage(final string, overwrite bool) (*staged, error) {
 	info, err := os.Stat(final)
 	switch {
 	case err == nil && !info.Mode().IsRegular():
-		return nil, fmt.Errorf("%s: is %s, not a file that could be replaced", final, kindOf(info.Mode()))
+		return nil, &HintedError{
+			Err:  fmt.Errorf("%s: is %s, not a file that could be replaced", final, kindOf(info.Mode())),
+			Hint: "give another --out",
+		}
 	case err == nil && !overwrite:
 		return nil, &HintedError{
 			Err:  fmt.Errorf("%s: exists already", final),
@@ -40,7 +43,7 @@ func stage(final string, overwrite bool) (*staged, error) {
 	case err == nil:
 		mode = info.Mode().Perm()
 	case !errors.Is(err, fs.ErrNotExist):
-		return nil, err
+		return nil, unwritable(final, err)
 	}
 	dir, base := filepath.Split(final)
 	const maxBase = 200 // leaves room for the rest within the usual 255 bytes
@@ -54,7 +57,7 @@ func stage(final string, overwrite bool) (*staged, error) {
 			continue
 		}
 		if err != nil {
-			return nil, err
+			return nil, unwritable(final, err)
 		}
 		if info != nil {
 			// The mode above went through the umask; an existing file keeps its own.
