@@ -14,10 +14,10 @@
 // rounding to float32:
 //
 //	Sinc,  16 taps   -43 dB
-//	Sinc,  32 taps   -92 dB
-//	Sinc,  64 taps  -134 dB
-//	Sinc, 128 taps  -134 dB (to 0.465 of the rate)
-//	Farrow, 32 taps, order 6   -89 dB
+//	Sinc,  32 taps   -93 dB
+//	Sinc,  64 taps  -123 dB
+//	Sinc, 128 taps  -121 dB (to 0.465 of the rate)
+//	Farrow, 32 taps, order 6   -94 dB
 //
 // # Use
 //
