@@ -265,15 +265,15 @@ func TestSixGiBTakeInLittleMemory(t *testing.T) {
 // a run. Afterwards there is the whole track, with its report, or no track;
 // and a run after that succeeds.
 func TestKilledAtAnyMoment(t *testing.T) {
-	moments := 8
+	moments, frames := 8, 200000
 	if os.Getenv("ALIDADE_LONG") == "1" {
-		moments = 50
+		moments, frames = 50, 1500000
 	}
 	if testing.Short() {
 		t.Skip("runs the program many times")
 	}
 	y := newYard(t)
-	y.put("x.wav", good(4, 200000))
+	y.put("x.wav", good(4, frames))
 	path, err := exec.LookPath("alidade")
 	y.check(err)
 	args := steerArgs("x.wav", "--no-measure", "--out", "out/t.wav", "--reproducible")

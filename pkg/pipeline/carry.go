@@ -102,13 +102,26 @@ func (r *run) hide(res *Result) {
 	}
 }
 
-// inputs are all files that the run reads, as far as they are known by name.
+// inputs are all files that the run reads, as far as they can be told yet.
 func (r *run) inputs() []string {
 	list := slices.Concat(r.take.paths(), r.rig.files)
 	for _, path := range []string{r.set.IsolatedNoise, r.set.IsolatedTarget} {
-		if path != "" {
-			list = append(list, path)
+		if path == "" {
+			continue
+		}
+		list = append(list, path)
+		plan, err := (&gathering{how: r.isolatedJoining(), folders: map[string][]wav.File{}}).plan([]string{path})
+		if err != nil {
+			continue // said when the take is opened
+		}
+		for _, row := range plan {
+			for _, strand := range row {
+				list = append(list, strand...)
+			}
 		}
 	}
 	return list
 }
+
+// isolatedJoining is how the files of an isolated take belong together.
+func (r *run) isolatedJoining() joining { return joining{findChain: r.set.FindChain} }

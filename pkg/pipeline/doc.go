@@ -11,6 +11,11 @@
 // corrected and high-passed; the gain of the track is in none of them. Files
 // appear under their names whole or not at all.
 //
+// A take is one file or several: a set of files whose channels lie side by side
+// (a name with {ch} in it, files listed, or the set that iXML names), a chain
+// of files that follow each other (listed, or found by time reference and
+// name), or both. The track carries what the take carries, as far as it holds.
+//
 // # Use
 //
 //	spec := pipeline.Spec{Take: []string{"take.wav"}, RigPath: "rig.yaml",
@@ -19,7 +24,7 @@
 //	result, err := pipeline.Run(ctx, spec, render, pipeline.Watch{})
 //
 // Longer than 2,000 lines because the plain data of the result, the words of
-// the options and the handling of files are half of it, and the run needs all
+// the options, the files of a take and their metadata are half of it, and the run needs all
 // three.
 //
 // # Sources

@@ -312,7 +312,7 @@ func (l listened) octaves() measure.Pair {
 
 // through runs the beam over another take.
 func (r *run) through(path string) (l listened, err error) {
-	t, err := openTake([]string{path}, joining{findChain: r.set.FindChain}, false)
+	t, err := openTake([]string{path}, r.isolatedJoining(), false)
 	if err != nil {
 		return l, err
 	}

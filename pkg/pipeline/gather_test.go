@@ -320,3 +320,35 @@ func TestFilesOfAPattern(t *testing.T) {
 		t.Errorf("a folder: %v", err)
 	}
 }
+
+// Isolated takes may be sets too; none of their files is ever an output, and
+// with --private none of their folders is named.
+func TestIsolatedTakesOfSeveralFiles(t *testing.T) {
+	b := newBench(t, 40000)
+	take := b.put("take.wav", 0, 4, 0, 40000)
+	if err := os.Mkdir(b.at("secret"), 0o777); err != nil {
+		t.Fatal(err)
+	}
+	for ch := range 4 {
+		data := b.base.file(cut(b.x[ch:ch+1], 0, 39999))
+		if ch == 3 { // odd: cut off within its last frame
+			data = b.base.file(b.x[3:])
+			data = data[:len(data)-1]
+		}
+		put(t, b.at(fmt.Sprintf("secret/n%d.wav", ch+1)), data)
+	}
+	whole := b.put("noise.wav", 0, 4, 0, 39999)
+	o := Options{IsolatedNoise: b.at("secret/n{ch}.wav"), Private: true, Out: b.at("set.wav")}
+	set := b.must(o, take)
+	file := b.must(Options{IsolatedNoise: whole, Out: b.at("file.wav")}, take)
+	if *set.Overall.NoiseReductionDB != *file.Overall.NoiseReductionDB {
+		t.Errorf("noise reduction %v dB from a set, %v dB from a file", *set.Overall.NoiseReductionDB, *file.Overall.NoiseReductionDB)
+	}
+	if f := finding(set, "take-"+wav.WarnTruncated); f == nil || strings.Contains(f.Message, "secret/") || !strings.Contains(f.Message, "n4.wav") {
+		t.Errorf("the odd file of the set: %v", f)
+	}
+	o.Out, o.Overwrite = b.at("secret/n2.wav"), true
+	if _, err := b.run(o, take); err == nil || !strings.Contains(err.Error(), "never written to") {
+		t.Errorf("a track onto a file of the isolated set: %v", err)
+	}
+}
