@@ -1,0 +1,141 @@
+package beam
+
+import (
+	"math"
+	"math/rand/v2"
+	"testing"
+
+	"alidade/pkg/audio"
+	"alidade/pkg/audio/audiotest"
+	"alidade/pkg/delay"
+)
+
+// glideOf is a glide over mics microphones whose delays follow taus(t), t in
+// seconds.
+func glideOf(t *testing.T, rate, mics int, taus func(m int, t float64) float64) Glide {
+	t.Helper()
+	kernel, err := delay.NewFarrow(32, 6)
+	if err != nil {
+		t.Fatal(err)
+	}
+	a := make([]float64, mics)
+	for m := range a {
+		a[m] = 1 / float64(mics)
+	}
+	return Glide{Kernel: kernel, Amplitudes: a, Every: 64, LargestDelay: 0.01,
+		Delays: func(frame int64, delays []float64) {
+			for m := range delays {
+				delays[m] = taus(m, float64(frame)/float64(rate))
+			}
+		}}
+}
+
+// Delays that stand still are the Farrow beam of filters.
+func TestStandingGlideIsTheFarrowBeam(t *testing.T) {
+	const rate = 48000
+	rng := rand.New(rand.NewPCG(8, 2))
+	taus := make([]float64, 5)
+	amplitudes := make([]float64, 5)
+	for m := range taus {
+		taus[m], amplitudes[m] = 2e-3*(rng.Float64()-0.5), 0.2
+	}
+	g := glideOf(t, rate, 5, func(m int, _ float64) float64 { return taus[m] })
+	f, err := DelayAndSum(g.Kernel, rate, taus, amplitudes)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for _, frames := range []int{1, 40, 5000} {
+		x := random(5, frames, 12)
+		stage := func(up audio.Source) audio.Source {
+			s, err := NewGlide(up, g)
+			if err != nil {
+				t.Fatal(err)
+			}
+			return s
+		}
+		audiotest.TestStage(t, rate, x, stage, plain(f, x), audiotest.Options{Tolerance: 2e-6, Rate: rate, Sizes: []int{64, 1024}, Lookahead: 4096})
+	}
+}
+
+// A steady tone from a source that moves: microphone m hears at t + τ_m(t) what
+// the reference point would hear at t. Along the true path the glide gives the
+// steady tone back, to -80 dB in every 10 ms, from fast and slow swings, and
+// without a click at any knot.
+func TestGlideFollowsAMovingTone(t *testing.T) {
+	const rate, n, mics = 48000, 2 * 48000, 6
+	for _, hz := range []float64{440, 3000, 12000} {
+		// Swings as of a source that walks through 90 degrees in some seconds.
+		taus := func(m int, s float64) float64 {
+			return 4e-4 * (float64(m) - 2.5) / 2.5 * math.Cos(2*math.Pi*0.25*s+0.3)
+		}
+		tone := func(s float64) float64 { return 0.5 * math.Sin(2*math.Pi*hz*s+0.7) }
+		x := audio.NewBlock(mics, n)
+		for m := range mics {
+			for i := range n {
+				heard := float64(i) / rate
+				s := heard // s + τ(s) = heard
+				for range 30 {
+					s = heard - taus(m, s)
+				}
+				x.Channel(m)[i] = float32(tone(s))
+			}
+		}
+		src, err := NewGlide(audio.FromBlock(rate, x), glideOf(t, rate, mics, taus))
+		if err != nil {
+			t.Fatal(err)
+		}
+		y, err := audio.ReadAll(src)
+		if err != nil {
+			t.Fatal(err)
+		}
+		worst := math.Inf(-1)
+		for from := 960; from+480 < n-960; from += 480 {
+			e2 := 0.0
+			for i := from; i < from+480; i++ {
+				d := float64(y.Channel(0)[i]) - tone(float64(i)/rate)
+				e2 += d * d
+			}
+			worst = math.Max(worst, 10*math.Log10(e2/480/(0.5*0.5/2)))
+		}
+		t.Logf("%g Hz: worst 10 ms %.1f dB", hz, worst)
+		if worst > -80 {
+			t.Errorf("%g Hz: residual %.1f dB in the worst 10 ms, want at most -80", hz, worst)
+		}
+	}
+}
+
+func TestGlideRefuses(t *testing.T) {
+	src := func() audio.Source { return audio.FromBlock(48000, random(2, 3000, 1)) }
+	good := glideOf(t, 48000, 2, func(int, float64) float64 { return 0 })
+	for what, spoil := range map[string]func(*Glide){
+		"no kernel":         func(g *Glide) { g.Kernel = nil },
+		"other microphones": func(g *Glide) { g.Amplitudes = g.Amplitudes[:1] },
+		"no knots":          func(g *Glide) { g.Every = 0 },
+		"odd knots":         func(g *Glide) { g.Every = 100 },
+		"no delays":         func(g *Glide) { g.Delays = nil },
+		"largest delay":     func(g *Glide) { g.LargestDelay = math.Inf(1) },
+		"amplitude":         func(g *Glide) { g.Amplitudes = []float64{1, math.NaN()} },
+	} {
+		g := good
+		spoil(&g)
+		if _, err := NewGlide(src(), g); err == nil {
+			t.Errorf("%s: accepted", what)
+		}
+	}
+	for what, tau := range map[string]float64{"not a number": math.NaN(), "too far": 0.02} {
+		g := good
+		g.Delays = func(frame int64, delays []float64) {
+			clear(delays)
+			if frame >= 1024 {
+				delays[1] = tau
+			}
+		}
+		s, err := NewGlide(src(), g)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if _, err := audio.ReadAll(s); err == nil {
+			t.Errorf("%s on the way: no error", what)
+		}
+	}
+}
