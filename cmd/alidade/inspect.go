@@ -110,7 +110,7 @@ func describe(w io.Writer, d wav.Description, width int) {
 			if k > 0 {
 				what = ""
 			}
-			fmt.Fprintf(w, "  %-12s  %s\n", what, part)
+			fmt.Fprintf(w, "  %-12s  %s\n", harmless(what), part)
 		}
 	}
 	kind := string(d.Container)

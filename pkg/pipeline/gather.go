@@ -171,7 +171,10 @@ func (g *gathering) chainFrom(dir, base string, named []string) (strand, error) 
 	for _, k := range chain {
 		s = append(s, dir+files[k].Name)
 	}
-	if len(s) > 1 {
+	if len(s) == 1 {
+		g.notes = append(g.notes, Finding{Code: "chain-not-found", Severity: Info, Message: fmt.Sprintf(
+			"no file goes on where %s%s ends, by its time reference or its name: read alone", dir, base)})
+	} else {
 		g.notes = append(g.notes, Finding{Code: "chain-found", Severity: Info, Message: fmt.Sprintf(
 			"%s%s goes on in %s: read as one take of %d files", dir, base, filepath.Base(s[1]), len(s))})
 	}

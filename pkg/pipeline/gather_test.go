@@ -148,6 +148,10 @@ func TestChainIsFoundByTimeReference(t *testing.T) {
 	if finding(r, "chain-found") == nil || finding(r, "chain-gap") != nil {
 		t.Errorf("findings %v", r.Findings)
 	}
+	alone := b.must(Options{NoMeasure: true, FindChain: true}, b.at("c/a.wav"))
+	if f := finding(alone, "chain-not-found"); f == nil || len(alone.Take.Files) != 1 {
+		t.Errorf("the last file: %v, findings %v", bases(alone), alone.Findings)
+	}
 
 	for ch := range 4 {
 		b.put(fmt.Sprintf("s%d.wav", ch+1), ch, ch+1, 0, 4000, when(0))
