@@ -40,7 +40,7 @@ func TestTextsOfFilesAreHarmlessOnATerminal(t *testing.T) {
 				t.Errorf("line %d looks like one of the program: %q", k+1, line)
 			}
 		}
-		for _, want := range []string{"20 of 24 bits in use", "1 channel at", "0.500 s, for 0.010 s", "0:00:01.000", "files of set  3"} {
+		for _, want := range []string{"20 of 24 bits in use", "1 channel", "0.500 s, for 0.010 s", "0:00:01.000", "files of set  3"} {
 			if !strings.Contains(out.String(), want) {
 				t.Errorf("no %q in\n%s", want, out.String())
 			}

@@ -195,6 +195,21 @@ func TestStretchesByCueBySecondsAndByTimeOfDayAreTheSame(t *testing.T) {
 	if both.Segments.Source != SegmentsGiven || finding(both, "cues-unused") == nil || len(both.Segments.Noise) != 2 {
 		t.Errorf("given and cues: %v, %v", both.Segments, both.Findings)
 	}
+	// Each half may come from where it is known.
+	mixed := run(Options{NoiseCue: "noise", Target: "1..2,3..4,7..8,9..10"})
+	if mixed.Segments.Source != SegmentsCues || *mixed.Overall.SNRGainDB != *cues.Overall.SNRGainDB {
+		t.Errorf("noise by cue, target given: %v", mixed.Segments)
+	}
+	mixed = run(Options{Noise: "0..1,2..3,6..7,8..9", TargetCue: "target"})
+	if mixed.Segments.Source != SegmentsGiven || *mixed.Overall.SNRGainDB != *cues.Overall.SNRGainDB || finding(mixed, "cues-unused") != nil {
+		t.Errorf("noise given, target by cue: %v", mixed.Segments)
+	}
+	// Weights learn the noise from cues as from seconds.
+	learnt := run(Options{Weights: WeightsMinimumVariance, NoiseCue: "noise"})
+	told := run(Options{Weights: WeightsMinimumVariance, Noise: "0..1,2..3,6..7,8..9"})
+	if *learnt.Overall.SNRGainDB != *told.Overall.SNRGainDB {
+		t.Errorf("minimum variance: %v dB by cue, %v dB by seconds", *learnt.Overall.SNRGainDB, *told.Overall.SNRGainDB)
+	}
 	// Cues before automatic; without target cues the rest holds the target.
 	half := run(Options{NoiseCue: "noise"})
 	if half.Segments.Source != SegmentsCues || finding(half, "target-taken") == nil || len(half.Segments.Target) == 0 {
@@ -214,6 +229,7 @@ func TestFaultsOfCuesAndTimes(t *testing.T) {
 		{Options{NoiseCue: "nose"}, `there are "noise", "target"`, s},
 		{Options{NoiseCue: "noise"}, "it has no cues", bare},
 		{Options{NoiseCue: "noise", TargetCue: "target"}, "--noise-cue 0..1 and --target-cue 0.5..1.5 overlap", s},
+		{Options{NoiseCue: "noise", Target: "0.5..2"}, "--noise-cue 0..1 and --target 0.5..2 overlap", s},
 		{Options{TargetCue: "target"}, "--target-cue without --noise-cue", s},
 		{Options{NoiseCue: "noise", NoMeasure: true}, "--noise-cue with --no-measure", s},
 		{Options{Noise: "10:00:00..10:00:01"}, "has no time reference", bare},

@@ -11,6 +11,58 @@ import (
 // SegmentsCues is the source of segments that cue labels mark.
 const SegmentsCues = "cues"
 
+// known returns where the noise and where the target sounds by the options, and
+// which of them say so: SegmentsNone if none does. Stretches given come before
+// cues, for noise and target each; with noise alone the rest is the target.
+func (r *run) known() (noise, target []measure.Stretch, source string, err error) {
+	noise, source, err = r.knownNoise()
+	if err != nil || source == SegmentsNone {
+		return nil, nil, SegmentsNone, err
+	}
+	noiseOption, targetOption, unused := "noise", "target", ""
+	if source == SegmentsCues {
+		noiseOption = "noise-cue"
+	} else if r.set.NoiseCue != "" {
+		unused = "--noise-cue"
+	}
+	if target, err = r.given("target", r.set.target, r.take.duration()); err != nil {
+		return nil, nil, SegmentsNone, err
+	}
+	if len(r.set.target) == 0 {
+		targetOption = "target-cue"
+		if target, err = r.cued("target-cue", r.set.TargetCue); err != nil {
+			return nil, nil, SegmentsNone, err
+		}
+	} else if r.set.TargetCue != "" {
+		unused = strings.TrimPrefix(unused+" and --target-cue", " and ")
+	}
+	if unused != "" {
+		r.report(Finding{Code: "cues-unused", Severity: Info, Message: "stretches were given, so " + unused + " had nothing to say"})
+	}
+	if err := apart(noiseOption, targetOption, noise, target); err != nil {
+		return nil, nil, SegmentsNone, err
+	}
+	if len(target) == 0 {
+		if target = complement(noise, r.take.duration()); len(target) > 0 {
+			r.report(Finding{Code: "target-taken", Severity: Info, Message: "no target stretches given: all of the take outside the noise stretches is taken to hold the target; give --target A..B or --target-cue LABEL where that is not so"})
+		}
+	}
+	return noise, target, source, nil
+}
+
+// knownNoise returns where only the noise sounds by the options.
+func (r *run) knownNoise() (list []measure.Stretch, source string, err error) {
+	switch {
+	case len(r.set.noise) > 0:
+		list, err = r.given("noise", r.set.noise, r.take.duration())
+		return list, SegmentsGiven, err
+	case r.set.NoiseCue != "":
+		list, err = r.cued("noise-cue", r.set.NoiseCue)
+		return list, SegmentsCues, err
+	}
+	return nil, SegmentsNone, nil
+}
+
 // cued returns the stretches that the cues of a label mark, sorted and apart:
 // a region as it is, a point up to the next cue or the take's end. An empty
 // label marks none.

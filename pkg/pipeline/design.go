@@ -88,19 +88,18 @@ func (r *run) design() error {
 // in a first pass by delay-and-sum.
 func (r *run) noiseCovariance(task beam.Task) (*beam.Covariance, error) {
 	if path := r.set.IsolatedNoise; path != "" {
-		t, err := openTake([]string{path}, joining{}, false)
+		t, err := openTake([]string{path}, r.isolatedJoining(), false)
 		if err != nil {
 			return nil, err
 		}
 		c, err := r.covariance(task, t, nil)
 		return c, joinErrors(err, t.close())
 	}
-	var stretches []measure.Stretch
-	if len(r.set.noise) > 0 {
-		var err error
-		if stretches, err = r.given("noise", r.set.noise, r.take.duration()); err != nil {
-			return nil, err
-		}
+	stretches, source, err := r.knownNoise()
+	if err != nil {
+		return nil, err
+	}
+	if source != SegmentsNone {
 		r.report(Finding{Code: "weights-from-measured-noise", Severity: Info, Message: "the weights were found on the noise stretches that the gain is measured in: the noise reduction there is better than in noise they have not heard; --isolated-noise and --isolated-target of another time tell the rest"})
 	} else {
 		src := audio.Source(&watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("listening for noise", r.take.header.Frames)})

@@ -125,43 +125,11 @@ const targetGuardS = 0.25
 
 // stretches returns where the noise and where the target sounds.
 func (r *run) stretches(res *Result) (noise, target []measure.Stretch, err error) {
-	duration := float64(r.take.header.Frames) / float64(r.take.header.Rate)
-	if len(r.set.noise) > 0 {
-		if noise, err = r.given("noise", r.set.noise, duration); err != nil {
-			return nil, nil, err
-		}
-		if target, err = r.given("target", r.set.target, duration); err != nil {
-			return nil, nil, err
-		}
-		if err := apart("noise", "target", noise, target); err != nil {
-			return nil, nil, err
-		}
-		if len(target) == 0 {
-			target = complement(noise, duration)
-			if len(target) > 0 {
-				r.report(Finding{Code: "target-taken", Severity: Info, Message: "no target stretches given: all of the take outside the noise stretches is taken to hold the target; give --target A..B where that is not so"})
-			}
-		}
-		res.Segments.Source = SegmentsGiven
-		if r.set.NoiseCue != "" || r.set.TargetCue != "" {
-			r.report(Finding{Code: "cues-unused", Severity: Info, Message: "stretches were given with --noise, so the cues were not looked at"})
-		}
-	} else if r.set.NoiseCue != "" {
-		if noise, err = r.cued("noise-cue", r.set.NoiseCue); err != nil {
-			return nil, nil, err
-		}
-		if target, err = r.cued("target-cue", r.set.TargetCue); err != nil {
-			return nil, nil, err
-		}
-		if err := apart("noise-cue", "target-cue", noise, target); err != nil {
-			return nil, nil, err
-		}
-		if len(target) == 0 {
-			target = complement(noise, duration)
-			r.report(Finding{Code: "target-taken", Severity: Info, Message: "no target cues given: all of the take outside the noise stretches is taken to hold the target; give --target-cue LABEL where that is not so"})
-		}
-		res.Segments.Source = SegmentsCues
-	} else {
+	noise, target, res.Segments.Source, err = r.known()
+	if err != nil {
+		return nil, nil, err
+	}
+	if res.Segments.Source == SegmentsNone {
 		found, err := measure.FindSegments(r.in.Thirds(), r.out.Thirds(), measure.SegmentOptions{ExpectedReductionDB: speechDiffuse(res.Bands)})
 		if err != nil {
 			return nil, nil, err

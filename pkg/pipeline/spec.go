@@ -226,7 +226,7 @@ func (o Options) resolve() (*settings, error) {
 	if o.Chain && (o.FindChain || o.FindSet) {
 		fault("--chain with --find-chain or --find-set: the files are named or found, not both")
 	}
-	if o.Target != "" && o.Noise == "" && o.IsolatedNoise == "" {
+	if o.Target != "" && o.Noise == "" && o.NoiseCue == "" && o.IsolatedNoise == "" {
 		fault("--target without --noise: the target's power is what a stretch has above the noise, so the noise must be known (give --noise A..B)")
 	}
 
@@ -250,7 +250,7 @@ func (o Options) resolve() (*settings, error) {
 			{"noise", o.Noise}, {"target", o.Target}, {"isolated-noise", o.IsolatedNoise},
 			{"isolated-target", o.IsolatedTarget}, {"compare-to", o.CompareTo},
 		} {
-			forWeights := s.Weights == WeightsMinimumVariance && strings.HasSuffix(given.option, "noise")
+			forWeights := s.Weights == WeightsMinimumVariance && slices.Contains([]string{"noise", "noise-cue", "isolated-noise"}, given.option)
 			if given.value != "" && !forWeights {
 				fault("--%s with --no-measure: nothing would be measured with it", given.option)
 			}
@@ -299,7 +299,7 @@ func (s *settings) resolveWeights(fault func(format string, args ...any)) {
 	if s.Weights == WeightsConstantBeamwidth && len(s.Null) > 0 {
 		fault("--null with --weights %s: nulls go with %s, %s and %s", s.Weights, WeightsDelayAndSum, WeightsSuperdirective, WeightsMinimumVariance)
 	}
-	if s.Weights == WeightsMinimumVariance && s.NoMeasure && s.Noise == "" && s.IsolatedNoise == "" {
+	if s.Weights == WeightsMinimumVariance && s.NoMeasure && s.Noise == "" && s.NoiseCue == "" && s.IsolatedNoise == "" {
 		fault("--weights %s with --no-measure: the noise must be known; give --noise A..B", s.Weights)
 	}
 }
