@@ -122,8 +122,14 @@ const (
 	silentDBFS    = -110
 )
 
-// channels describes every channel of the rig as it was recorded.
+// channels describes every channel of the rig as it was recorded; nothing under
+// --no-measure.
 func (r *run) channels(res *Result) {
+	res.Channels = []Channel{}
+	if r.totals == nil {
+		r.report(Finding{Code: "not-measured", Severity: Info, Message: "nothing was measured (--no-measure): no levels, no gains, and no channel was looked at"})
+		return
+	}
 	levels := r.totals.Levels()
 	var used []float64
 	for _, m := range r.line.used {
@@ -131,7 +137,6 @@ func (r *run) channels(res *Result) {
 	}
 	typical := median(used)
 	var silent, clipped []int
-	res.Channels = []Channel{}
 	for _, m := range r.rig.Mics {
 		c := Channel{Channel: m.Channel, Name: m.Name, Used: m.Use, Flags: []string{}}
 		if m.Channel <= len(levels) {

@@ -66,8 +66,8 @@ type run struct {
 
 	track, reference *track
 	reports          []*staged
-	totals           *measure.Totals
-	in, out          *measure.Meter // nil under --no-measure
+	totals           *measure.Totals // nil under --no-measure
+	in, out          *measure.Meter  // nil under --no-measure
 	findings         []Finding
 }
 
@@ -205,9 +205,11 @@ func (r *run) pass(encoding wav.Encoding) (err error) {
 	if r.track, err = newTrack(r.names.track, r.set.Overwrite, h.Rate, encoding, r.from, meta); err != nil {
 		return err
 	}
-	r.totals = measure.NewTotals(h.Channels)
 	src := audio.Source(&watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("steering", h.Frames)})
-	src = audio.Tee(src, r.totals)
+	if !r.set.NoMeasure {
+		r.totals = measure.NewTotals(h.Channels)
+		src = audio.Tee(src, r.totals)
+	}
 	if r.set.WithReference {
 		meta, _ := r.carried(untouchedEncoding(h), r.referenceName())
 		if r.reference, err = newTrack(r.names.reference, r.set.Overwrite, h.Rate, untouchedEncoding(h), r.from, meta); err != nil {
