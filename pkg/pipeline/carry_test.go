@@ -274,3 +274,32 @@ func TestSamplesThatAreNoNumbersAreNamedByChannel(t *testing.T) {
 		t.Errorf("%v", f)
 	}
 }
+
+// Times of day count the clock's seconds: in a recording pulled up by 0.1 % one
+// of them is 16,016 frames of a file marked 16,000 Hz; labels in drop frame are
+// those of SMPTE ST 12-1 (10:00:00;15 at 30000/1001: 36000 s of labels are
+// 1,078,920 picture frames and 15 more, 36000.464 s of the clock).
+func TestTimesOfDayOfPulledAndDropFrameTakes(t *testing.T) {
+	b := newBench(t, 48000)
+	speed := func(rate, flag, digitizer string) chunk {
+		return ixmlChunk(`<SPEED><TIMECODE_RATE>` + rate + `</TIMECODE_RATE><TIMECODE_FLAG>` + flag + `</TIMECODE_FLAG><FILE_SAMPLE_RATE>16000</FILE_SAMPLE_RATE>` +
+			`<DIGITIZER_SAMPLE_RATE>` + digitizer + `</DIGITIZER_SAMPLE_RATE><TIMESTAMP_SAMPLES_SINCE_MIDNIGHT_HI>0</TIMESTAMP_SAMPLES_SINCE_MIDNIGHT_HI>` +
+			`<TIMESTAMP_SAMPLES_SINCE_MIDNIGHT_LO>576000000</TIMESTAMP_SAMPLES_SINCE_MIDNIGHT_LO><TIMESTAMP_SAMPLE_RATE>16000</TIMESTAMP_SAMPLE_RATE></SPEED>`)
+	}
+	pulled := b.put("pulled.wav", 0, 4, 0, 48000, speed("25/1", "NDF", "16016"))
+	r := b.must(Options{NoMeasure: true, Excerpt: "10:00:01..10:00:02"}, pulled)
+	if r.Output.FirstFrame != 16016 || r.Output.Frames != 16016 {
+		t.Errorf("pulled up: %d frames from %d, want 16016 from 16016", r.Output.Frames, r.Output.FirstFrame)
+	}
+	drop := b.put("drop.wav", 0, 4, 0, 48000, speed("30000/1001", "DF", "16000"))
+	r = b.must(Options{NoMeasure: true, Excerpt: "10:00:00;15..10:00:02"}, drop)
+	// 1,078,935 picture frames of 1001/30000 s are 36000.4645 s.
+	if want := int64(math.Ceil((1078935*1001.0/30000 - 36000) * 16000)); r.Output.FirstFrame != want {
+		t.Errorf("drop frame: from frame %d, want %d", r.Output.FirstFrame, want)
+	}
+	// Without the rate of the labels FF has no length, and none is guessed.
+	bare := b.put("bare.wav", 0, 4, 0, 48000, bextChunk("", "", "2026-05-01", "10:00:00", tenOClock, ""))
+	if _, err := b.run(Options{NoMeasure: true, Excerpt: "10:00:00:12..10:00:01:00"}, bare); err == nil || !strings.Contains(err.Error(), "no frame rate") {
+		t.Errorf("labels without a rate: %v", err)
+	}
+}

@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"errors"
 	"fmt"
 	"io"
 	"os"
@@ -31,7 +32,11 @@ type loadedRig struct {
 func loadRig(path string, o Options) (*loadedRig, error) {
 	data, err := readSmall(path, maxRigBytes)
 	if err != nil {
-		return nil, &UsageError{Err: fmt.Errorf("rig: %w", unreadable(err)), Hint: rigHint}
+		hint := rigHint
+		if hinted := (*HintedError)(nil); errors.As(unreadable(err), &hinted) {
+			hint = hinted.Hint
+		}
+		return nil, &UsageError{Err: fmt.Errorf("rig: %w", err), Hint: hint}
 	}
 	l := &loadedRig{digest: digestOf(data), files: []string{path}}
 	open := func(name string) (io.ReadCloser, error) {
