@@ -22,6 +22,7 @@ var layers = map[string]struct {
 	"pkg/report/internal/draw":     {0, "pictures in SVG and PNG, by hand"},
 	"pkg/beam/internal/hermitian":  {0, "small Hermitian solves"},
 	"pkg/audio":                    {1, "io for multichannel sound"},
+	"pkg/batch":                    {1, "many takes, many machines, each result once"},
 	"pkg/rig":                      {1, "the microphones"},
 	"pkg/audio/audiotest":          {2, "the contract of audio as a test"},
 	"pkg/wav":                      {2, "WAV and RF64 files"},

@@ -1,0 +1,21 @@
+//go:build !linux
+
+package batch
+
+import (
+	"os"
+	"strconv"
+)
+
+// runMark names this process.
+func runMark() string {
+	host, _ := os.Hostname()
+	return digest([]byte(host))[:12] + "-" + strconv.Itoa(os.Getpid()) + "-0"
+}
+
+// ended returns false: whether another process still runs is not known here, so
+// what it left is removed when a merge finds everything done.
+func ended(string) bool { return false }
+
+// freeBytes returns false: how much room is left cannot be told here.
+func freeBytes(string) (int64, bool) { return 0, false }

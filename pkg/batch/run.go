@@ -1,0 +1,490 @@
+package batch
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"slices"
+	"sync"
+	"time"
+)
+
+// Assignment is one take to be made.
+type Assignment struct {
+	Take   Take
+	Recipe Recipe
+	Root   string // of the takes
+	Folder string // empty, where all outputs go
+	// Step says how far the work is; it may be called from the work's goroutine
+	// alone.
+	Step func(stage string, done, total int64)
+}
+
+// Paths are the paths of the take as the work opens them.
+func (a Assignment) Paths() []string {
+	list := make([]string, len(a.Take.Paths))
+	for k, p := range a.Take.Paths {
+		list[k] = filepath.Join(a.Root, filepath.FromSlash(p))
+	}
+	return list
+}
+
+// Report is what the work says of a take that it made.
+type Report struct {
+	Missed  string              // which limit was missed; empty for none
+	Digests map[string]string   // SHA-256 of files of the take by the path opened, where known
+	Figures map[string]*float64 // for the summary; nil where not measured
+}
+
+// Do makes one take. It is called from several goroutines at once. It ends soon
+// after ctx is done. An error with a method Cause() string gives the outcome
+// its cause; a *TroubleError leaves the take open.
+type Do func(ctx context.Context, a Assignment) (Report, error)
+
+// Settings are how a plan is carried out here.
+type Settings struct {
+	Root    string // folder that the paths of takes are relative to
+	Out     string // output folder
+	Workers int    // takes at once; below 1 is 1
+	// MemoryMiB bounds the sum of what the takes in work need; 0 is no bound. A
+	// take that needs more than that runs alone.
+	MemoryMiB   int
+	Part        int // -1 is all of them
+	RetryFailed bool
+	Now         func() time.Time
+}
+
+// Tally counts takes.
+type Tally struct {
+	Takes    int // of the part
+	Standing int // done, missed or failed before, and not made again
+	Done     int // by this run
+	Missed   int
+	Failed   int
+	Others   int // committed by another run meanwhile
+	Open     int // not committed
+	// BadStanding is how many of Standing and Others are missed or failed.
+	BadStanding int
+}
+
+// Bad reports whether a committed take is missed or failed.
+func (t Tally) Bad() bool { return t.Missed+t.Failed+t.BadStanding > 0 }
+
+// Observer is told how a run goes on, one call at a time. Functions may be nil.
+type Observer struct {
+	Begun    func(takes, standing int, others int)                     // others: runs at work in the same folder
+	Started  func(t Take)                                              // work on a take begins
+	Step     func(t Take, stage string, done, total int64)             // it goes on
+	Finished func(t Take, o *Outcome, took time.Duration, tally Tally) // it was committed; o is nil if by another run
+	Left     func(t Take, err error)                                   // it stays open
+}
+
+// Run carries out a plan, or a part of it, as far as it is not done. The error
+// is nil when every take was committed, well or badly; a *TroubleError when
+// takes stay open for storage that failed; the cause of ctx when that ended
+// first, and then nothing of the takes in work is left.
+func Run(ctx context.Context, plan *Plan, do Do, s Settings, watch Observer) (Tally, error) {
+	r := &run{plan: plan, do: do, s: s, watch: watch}
+	if r.s.Now == nil {
+		return Tally{}, errors.New("batch: settings without a clock")
+	}
+	r.room.L = &r.mu
+	for _, t := range plan.Takes {
+		if s.Part < 0 || t.Part == s.Part {
+			r.takes = append(r.takes, t)
+		}
+	}
+	r.tally.Takes = len(r.takes)
+	if err := r.all(ctx); err != nil {
+		return r.tally, err
+	}
+	return r.tally, nil
+}
+
+// run is one run.
+type run struct {
+	plan  *Plan
+	do    Do
+	s     Settings
+	watch Observer
+	takes []Take
+
+	mu      sync.Mutex // guards what follows, and the observer
+	room    sync.Cond  // signalled when memory was given back
+	memory  int
+	queue   []job
+	tally   Tally
+	ledger  *Ledger
+	staging *staging
+	open    []error // why takes stay open
+	stop    context.CancelCauseFunc
+}
+
+// job is a take to be made.
+type job struct {
+	take     Take
+	before   *Outcome
+	deferred bool // another run had it in work
+}
+
+func (r *run) all(ctx context.Context) error {
+	if err := os.MkdirAll(r.s.Out, 0o777); err != nil {
+		return trouble(err)
+	}
+	if err := sweep(r.s.Out, false); err != nil {
+		return trouble(err)
+	}
+	resume, err := newResume(r.plan, &r.s)
+	if err != nil {
+		return trouble(err)
+	}
+	for _, t := range r.takes {
+		if ctx.Err() != nil {
+			return context.Cause(ctx)
+		}
+		st, err := resume.look(t)
+		var occupied *OccupiedError
+		if errors.As(err, &occupied) {
+			return err
+		}
+		if err != nil {
+			return trouble(err)
+		}
+		if st.state == "" {
+			r.queue = append(r.queue, job{take: t, before: st.before})
+			continue
+		}
+		r.tally.Standing++
+		if st.state != Done {
+			r.tally.BadStanding++
+		}
+	}
+	r.tally.Open = len(r.queue)
+	others := len(otherRuns(r.s.Out, ""))
+	if r.watch.Begun != nil {
+		r.watch.Begun(r.tally.Takes, r.tally.Standing, others)
+	}
+	if len(r.queue) == 0 {
+		return nil
+	}
+	if r.staging, err = newStaging(r.s.Out); err != nil {
+		return trouble(err)
+	}
+	defer r.staging.close()
+	r.ledger = &Ledger{out: r.s.Out, run: r.staging.name}
+	if err := r.note(Line{Event: EventBegun, PlanID: r.plan.PlanID}); err != nil {
+		return errors.Join(trouble(err), r.ledger.Close())
+	}
+	err = r.work(ctx)
+	r.mu.Lock()
+	defer r.mu.Unlock()
+	ending := Line{Event: EventEnded}
+	if err != nil {
+		ending.Error = err.Error()
+	}
+	if lerr := errors.Join(r.note(ending), r.ledger.Close()); err == nil && lerr != nil {
+		err = trouble(lerr)
+	}
+	return err
+}
+
+// note writes into the ledger.
+func (r *run) note(l Line) error {
+	l.At = r.s.Now().UTC().Format("2006-01-02T15:04:05.000000000Z")
+	return r.ledger.Append(l)
+}
+
+// work runs the workers.
+func (r *run) work(outer context.Context) error {
+	ctx, stop := context.WithCancelCause(outer)
+	defer stop(nil)
+	r.stop = stop
+	// Waiting for memory ends with the run.
+	defer context.AfterFunc(ctx, func() {
+		r.mu.Lock()
+		r.room.Broadcast()
+		r.mu.Unlock()
+	})()
+	var workers sync.WaitGroup
+	for range min(max(r.s.Workers, 1), len(r.queue)) {
+		workers.Add(1)
+		go func() {
+			defer workers.Done()
+			for {
+				j, need, ok := r.next(ctx)
+				if !ok {
+					return
+				}
+				r.make(ctx, j)
+				r.mu.Lock()
+				r.memory -= need
+				r.room.Broadcast()
+				r.mu.Unlock()
+			}
+		}()
+	}
+	workers.Wait()
+	if outer.Err() != nil {
+		return context.Cause(outer)
+	}
+	if ctx.Err() != nil {
+		return context.Cause(ctx)
+	}
+	if len(r.open) > 0 {
+		return &TroubleError{fmt.Errorf("%d of %d takes stay open: %w", len(r.open), r.tally.Takes, r.open[0]),
+			"run again when the storage is well: what is done stays done"}
+	}
+	return nil
+}
+
+// next takes a job off the queue, once there is memory for it.
+func (r *run) next(ctx context.Context) (j job, need int, ok bool) {
+	r.mu.Lock()
+	defer r.mu.Unlock()
+	for {
+		if ctx.Err() != nil || len(r.queue) == 0 {
+			return job{}, 0, false
+		}
+		// A take that another run has in work comes last: that run may commit
+		// it meanwhile.
+		if first := r.queue[0]; !first.deferred && r.staging.inWork(first.take.Key) {
+			first.deferred = true
+			r.queue = append(r.queue[1:], first)
+			continue
+		}
+		j = r.queue[0]
+		need = r.plan.Recipes[j.take.Recipe].MemoryMiB
+		if r.s.MemoryMiB <= 0 || r.memory == 0 || r.memory+need <= r.s.MemoryMiB {
+			r.queue = r.queue[1:]
+			r.memory += need
+			return j, need, true
+		}
+		r.room.Wait()
+	}
+}
+
+// make makes one take and commits what came of it.
+func (r *run) make(ctx context.Context, j job) {
+	t := j.take
+	if j.before == nil {
+		if o, err := ReadOutcome(r.s.Out, t.Key); err == nil {
+			r.byOthers(t, o) // since the run began
+			return
+		}
+	}
+	r.mu.Lock()
+	if r.watch.Started != nil {
+		r.watch.Started(t)
+	}
+	r.mu.Unlock()
+	begun := r.s.Now()
+	dir, err := r.staging.begin(t.Key)
+	if err != nil {
+		r.lost(ctx, j, err)
+		return
+	}
+	defer r.staging.drop(t.Key)
+	o, err := r.outcome(ctx, t, dir)
+	if ctx.Err() != nil {
+		return // interrupted: nothing of it is kept
+	}
+	if err != nil {
+		r.lost(ctx, j, err)
+		return
+	}
+	size, err := r.staging.commit(dir, o, j.before)
+	if err != nil {
+		r.lost(ctx, j, err)
+		return
+	}
+	r.committed(t, o, size, r.s.Now().Sub(begun))
+}
+
+// lost deals with an error of the output folder: somebody else may have
+// committed the take, and removed our staging with everything done.
+func (r *run) lost(ctx context.Context, j job, err error) {
+	o, rerr := ReadOutcome(r.s.Out, j.take.Key)
+	if rerr == nil && (j.before == nil || o.Sum != j.before.Sum) {
+		r.byOthers(j.take, o)
+		return
+	}
+	r.mu.Lock()
+	defer r.mu.Unlock()
+	if ctx.Err() != nil {
+		return
+	}
+	r.open = append(r.open, fmt.Errorf("%s: %w", j.take.Key, err))
+	if r.watch.Left != nil {
+		r.watch.Left(j.take, err)
+	}
+	// Without a ledger the run goes on as long as the folder takes results.
+	_ = r.note(Line{Event: EventLeft, Take: j.take.Key, Error: err.Error()})
+	var open *openError
+	if !errors.As(err, &open) || isAny(err, full) {
+		r.stop(trouble(fmt.Errorf("take %s: %w", j.take.Key, err)))
+	}
+}
+
+func (r *run) byOthers(t Take, o *Outcome) {
+	r.mu.Lock()
+	defer r.mu.Unlock()
+	r.tally.Others++
+	r.tally.Open--
+	if o.State != Done {
+		r.tally.BadStanding++
+	}
+	if r.watch.Finished != nil {
+		r.watch.Finished(t, nil, 0, r.tally)
+	}
+}
+
+func (r *run) committed(t Take, o *Outcome, size int64, took time.Duration) {
+	r.mu.Lock()
+	defer r.mu.Unlock()
+	r.tally.Open--
+	switch o.State {
+	case Done:
+		r.tally.Done++
+	case Missed:
+		r.tally.Missed++
+	default:
+		r.tally.Failed++
+	}
+	err := r.note(Line{Event: EventCommitted, Take: t.Key, Recipe: o.Recipe, State: o.State, Cause: o.Cause, Error: o.Error,
+		Files: o.Files, Size: size, Took: took.Seconds()})
+	if err != nil {
+		// The take is committed all the same: its folder says so.
+		r.stop(trouble(fmt.Errorf("ledger: %w", err)))
+	}
+	if r.watch.Finished != nil {
+		r.watch.Finished(t, o, took, r.tally)
+	}
+}
+
+// openError is trouble with reading one take.
+type openError struct{ error }
+
+func (e *openError) Unwrap() error { return e.error }
+
+// outcome has the work done and says what came of it. An error is trouble with
+// storage.
+func (r *run) outcome(ctx context.Context, t Take, dir string) (*Outcome, error) {
+	recipe := r.plan.Recipes[t.Recipe]
+	o := &Outcome{Schema: OutcomeSchema, Take: t.Key, PlanID: r.plan.PlanID, Recipe: recipe.ID, Version: r.plan.Version, Outputs: []File{}}
+	fail := func(cause, format string, a ...any) (*Outcome, error) {
+		o.State, o.Cause, o.Error = Failed, cause, fmt.Sprintf(format, a...)
+		// Nothing half made goes along.
+		if err := os.RemoveAll(dir); err != nil {
+			return nil, err
+		}
+		return o, os.Mkdir(dir, 0o777)
+	}
+	before, err := r.s.stat(t)
+	switch {
+	case errors.Is(err, fs.ErrNotExist):
+		o.Files = slices.Clone(t.Files)
+		return fail(CauseVanished, "%s: is not there any more", missing(t, &r.s))
+	case err != nil:
+		return nil, &openError{err}
+	}
+	o.Files = before
+	if !sameSizes(before, t.Files) {
+		return fail(CauseChanged, "%s since the plan was made: make the plan again", difference(t.Files, before))
+	}
+	work, cancel := ctx, context.CancelFunc(func() {})
+	if r.plan.TimeoutS > 0 {
+		work, cancel = context.WithTimeout(ctx, time.Duration(r.plan.TimeoutS*float64(time.Second)))
+	}
+	defer cancel()
+	report, err := r.guarded(work, Assignment{Take: t, Recipe: recipe, Root: r.s.Root, Folder: dir, Step: r.step(t)})
+	if ctx.Err() != nil {
+		return nil, context.Cause(ctx)
+	}
+	after, serr := r.s.stat(t)
+	var crash *crashError
+	var open *TroubleError
+	var named interface{ Cause() string }
+	switch {
+	case serr == nil && !slices.Equal(before, after):
+		return fail(CauseChanged, "%s while it was read: wait until the recorder or the copy has finished", difference(before, after))
+	case err == nil:
+	case isAny(err, full) || errors.As(err, &open):
+		return nil, err
+	case errors.Is(serr, fs.ErrNotExist):
+		return fail(CauseVanished, "%s: vanished while it was read", missing(t, &r.s))
+	case isAny(err, shaky) || isAny(serr, shaky):
+		return nil, &openError{errors.Join(err, serr)}
+	case work.Err() != nil:
+		return fail(CauseTimeout, "not done after %g s", r.plan.TimeoutS)
+	case errors.As(err, &crash):
+		return fail(CauseCrash, "%v", err)
+	case errors.As(err, &named) && named.Cause() != "":
+		return fail(named.Cause(), "%v", err)
+	default:
+		return fail(CauseFailed, "%v", err)
+	}
+	o.State, o.Figures = Done, report.Figures
+	if report.Missed != "" {
+		o.State, o.Cause, o.Error = Missed, "limit", report.Missed
+	}
+	for k, f := range o.Files {
+		o.Files[k].SHA256 = report.Digests[r.s.input(f.Path)]
+	}
+	o.Outputs, err = outputsOf(dir)
+	return o, err
+}
+
+// missing names the first file of a take that is not there.
+func missing(t Take, s *Settings) string {
+	for _, f := range t.Files {
+		if _, err := os.Stat(s.input(f.Path)); errors.Is(err, fs.ErrNotExist) {
+			return f.Path
+		}
+	}
+	return t.Key
+}
+
+// difference says which file changed, and how.
+func difference(a, b []File) string {
+	for k, f := range a {
+		if k < len(b) && f.Bytes != b[k].Bytes {
+			return fmt.Sprintf("%s: changed from %d to %d bytes", f.Path, f.Bytes, b[k].Bytes)
+		}
+		if k < len(b) && f != b[k] {
+			return fmt.Sprintf("%s: was written to", f.Path)
+		}
+	}
+	return "its files changed"
+}
+
+func (r *run) step(t Take) func(string, int64, int64) {
+	if r.watch.Step == nil {
+		return func(string, int64, int64) {}
+	}
+	return func(stage string, done, total int64) {
+		r.mu.Lock()
+		defer r.mu.Unlock()
+		r.watch.Step(t, stage, done, total)
+	}
+}
+
+// crashError is a panic of the work.
+type crashError struct{ what any }
+
+// Error implements error.
+func (e *crashError) Error() string {
+	return fmt.Sprintf("the program met a fault of its own with this take: %v", e.what)
+}
+
+// guarded has the work done. A panic fails the take and not the night.
+func (r *run) guarded(ctx context.Context, a Assignment) (report Report, err error) {
+	defer func() {
+		if what := recover(); what != nil {
+			err = &crashError{what}
+		}
+	}()
+	return r.do(ctx, a)
+}
