@@ -78,7 +78,7 @@ type Draft struct {
 // way, and cuts it into parts. All faults are returned together.
 func NewPlan(d Draft) (*Plan, error) {
 	p := &Plan{Schema: PlanSchema, Version: d.Version, Job: d.Job, Root: d.Root, Folder: d.Folder, TimeoutS: d.TimeoutS,
-		Recipes: slices.Clone(d.Recipes), Takes: slices.Clone(d.Takes), LeftOut: slices.Clone(d.LeftOut)}
+		Recipes: append([]Recipe{}, d.Recipes...), Takes: append([]Take{}, d.Takes...), LeftOut: append([]LeftOut{}, d.LeftOut...)}
 	for k := range p.Recipes {
 		r := &p.Recipes[k]
 		var err error
