@@ -22,7 +22,7 @@ import (
 const version = "0.1.0"
 
 func main() {
-	ctx, stop := untilSignalled(context.Background())
+	ctx, stop := untilSignalled(context.Background(), alsoFor(os.Args)...)
 	code := run(ctx, os.Args[1:], os.Stdin, os.Stdout, os.Stderr, os.Getenv)
 	stop()
 	os.Exit(code)
@@ -40,7 +40,7 @@ type verb struct {
 
 // verbs are the commands in the order in which --help lists them.
 func verbs() []verb {
-	return []verb{demoVerb(), steerVerb(), simulateVerb(), inspectVerb(), schemaVerb()}
+	return []verb{demoVerb(), steerVerb(), simulateVerb(), inspectVerb(), planVerb(), batchVerb(), mergeVerb(), checkStorageVerb(), schemaVerb()}
 }
 
 // The exit codes.
@@ -56,8 +56,9 @@ const (
 const exitHelp = `Exit codes
   0    done
   1    nothing usable was produced: take unreadable, output not writable
-  2    wrong usage, or a rig or scenario file with faults
+  2    wrong usage, or a rig, job or scenario file with faults
   3    some takes of several failed, or a limit asked for (--fail-on) was missed
+  75   a batch was interrupted or met storage trouble: the same command goes on
   130  interrupted from the keyboard
   143  asked to end by another program
 `
@@ -67,6 +68,7 @@ func exitCode(ctx context.Context, err error) int {
 	var (
 		signalled *signalError
 		missed    *missedError
+		open      *openError
 		usage     *usageError
 		option    *pipeline.UsageError
 		faults    *sheet.FaultsError
@@ -74,6 +76,8 @@ func exitCode(ctx context.Context, err error) int {
 	switch {
 	case err == nil:
 		return exitDone
+	case errors.As(err, &open):
+		return open.code // by whatever it ended
 	case errors.As(context.Cause(ctx), &signalled):
 		return exitSignal + int(signalled.signal)
 	case errors.As(err, &missed):
@@ -121,11 +125,11 @@ func (e *signalError) Error() string {
 
 // untilSignalled returns a context that the first SIGINT or SIGTERM cancels, so
 // that unfinished files are removed on the way out. The second one ends the
-// program as it would any other.
-func untilSignalled(parent context.Context) (ctx context.Context, stop func()) {
+// program as it would any other. More signals count like these.
+func untilSignalled(parent context.Context, more ...os.Signal) (ctx context.Context, stop func()) {
 	ctx, cancel := context.WithCancelCause(parent)
 	incoming := make(chan os.Signal, 1)
-	signal.Notify(incoming, syscall.SIGINT, syscall.SIGTERM)
+	signal.Notify(incoming, append(more, syscall.SIGINT, syscall.SIGTERM)...)
 	go func() {
 		select {
 		case s := <-incoming:
@@ -146,7 +150,8 @@ func run(ctx context.Context, args []string, stdin io.Reader, stdout, stderr io.
 		err = u.stdoutError()
 	}
 	if err != nil {
-		if cause := context.Cause(ctx); cause != nil {
+		var open *openError
+		if cause := context.Cause(ctx); cause != nil && !errors.As(err, &open) {
 			err = cause
 		}
 		u.complain(err)
@@ -243,7 +248,7 @@ Results go to standard output, progress and remarks to standard error.
 Commands
 `)
 	for _, v := range list {
-		fmt.Fprintf(&b, "  %-9s %s\n", v.name, v.does)
+		fmt.Fprintf(&b, "  %-13s %s\n", v.name, v.does)
 	}
 	b.WriteString(`
   alidade COMMAND --help shows a command's options and an example;

@@ -219,8 +219,12 @@ func TestHelpExamplesRun(t *testing.T) {
 	if err := os.WriteFile(filepath.Join(dir, "quay.yaml"), []byte(quay), 0o666); err != nil {
 		t.Fatal(err)
 	}
-	if _, errs, err := shell(dir, "alidade simulate quay.yaml --out roof && cp roof/take.wav roof_07.wav && cp roof/rig.yaml roof.yaml"); err != nil {
+	if _, errs, err := shell(dir, "alidade simulate quay.yaml --out roof && cp roof/take.wav roof_07.wav && cp roof/take.wav roof_08.wav && cp roof/rig.yaml roof.yaml"); err != nil {
 		t.Fatalf("%v\n%s", err, errs)
+	}
+	night := "rig: roof.yaml\ntakes: [\"roof_0?.wav\"]\nsteer: {toward: 60, noise: 0..2}\n"
+	if err := os.WriteFile(filepath.Join(dir, "night.yaml"), []byte(night), 0o666); err != nil {
+		t.Fatal(err)
 	}
 	for _, v := range verbs() {
 		ran := 0

@@ -14,9 +14,10 @@ import (
 const schemaHelp = `alidade schema: the JSON Schema of a file the program reads or writes
 
 Usage
-  alidade schema rig|scenario|report
+  alidade schema rig|job|scenario|report
 
   rig       the rig file: where the microphones stand, how they are calibrated
+  job       the job file of alidade plan and alidade batch
   scenario  the scenario file of alidade simulate
   report    the report of alidade steer, <track>.report.json
 
@@ -45,7 +46,7 @@ type schema struct {
 }
 
 func schemas() []schema {
-	return []schema{{"rig", rig.Schema}, {"scenario", scenario.Schema}, {"report", report.Schema}}
+	return []schema{{"rig", rig.Schema}, {"job", jobSchema}, {"scenario", scenario.Schema}, {"report", report.Schema}}
 }
 
 func runSchema(u *ui, c *cli.Context) error {

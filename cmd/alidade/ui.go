@@ -28,6 +28,7 @@ import (
 
 	"golang.org/x/term"
 
+	"alidade/pkg/batch"
 	"alidade/pkg/pipeline"
 	"alidade/pkg/sheet"
 )
@@ -128,6 +129,8 @@ func hints(err error, list []string) []string {
 	case *pipeline.UsageError:
 		add(e.Hint)
 	case *pipeline.HintedError:
+		add(e.Hint)
+	case *batch.TroubleError:
 		add(e.Hint)
 	}
 	switch e := err.(type) {
