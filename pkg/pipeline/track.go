@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"path/filepath"
+	"syscall"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/wav"
@@ -139,7 +140,7 @@ func checkRoom(path string, bytes int64) error {
 	free, known := freeBytes(dir)
 	if known && free < bytes {
 		return &HintedError{
-			Err:  fmt.Errorf("%s: %.1f MB free, the outputs need %.1f MB", dir, float64(free)/1e6, float64(bytes)/1e6),
+			Err:  fmt.Errorf("%s: %.1f MB free, the outputs need %.1f MB: %w", dir, float64(free)/1e6, float64(bytes)/1e6, syscall.ENOSPC),
 			Hint: "free some room or give --out on another disk",
 		}
 	}
