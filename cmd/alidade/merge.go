@@ -219,10 +219,7 @@ func summaryWords(s *batch.Summary) string {
 			fmt.Fprintf(&b, "%-20s not measured in any of %d takes\n", f.Name, f.Unknown)
 			continue
 		}
-		fmt.Fprintf(&b, "%-20s median %s, from %s to %s, in %d takes", f.Name, report.Round(*f.Median, f.Name), report.Round(*f.Lowest, f.Name), report.Round(*f.Highest, f.Name), f.Measured)
-		if f.Unknown > 0 {
-			fmt.Fprintf(&b, "; not measured in %d", f.Unknown)
-		}
+		fmt.Fprintf(&b, "%-20s median %s, from %s to %s; measured in %d of %d", f.Name, report.Round(*f.Median, f.Name), report.Round(*f.Lowest, f.Name), report.Round(*f.Highest, f.Name), f.Measured, f.Measured+f.Unknown)
 		b.WriteString("\n")
 	}
 	listed := func(title string, lines []string) {

@@ -202,9 +202,9 @@ func makeSilence(ts *testscript.TestScript, neg bool, args []string) {
 }
 
 func signalled(ts *testscript.TestScript, neg bool, args []string) {
-	signals := map[string]syscall.Signal{"INT": syscall.SIGINT, "TERM": syscall.SIGTERM, "KILL": syscall.SIGKILL}
+	signals := map[string]syscall.Signal{"INT": syscall.SIGINT, "TERM": syscall.SIGTERM, "KILL": syscall.SIGKILL, "USR1": syscall.SIGUSR1, "HUP": syscall.SIGHUP}
 	if neg || len(args) < 4 || signals[args[0]] == 0 {
-		ts.Fatalf("usage: signal INT|TERM|KILL N GLOB COMMAND...")
+		ts.Fatalf("usage: signal INT|TERM|KILL|USR1|HUP N GLOB COMMAND...")
 	}
 	want, err := strconv.Atoi(args[1])
 	ts.Check(err)
@@ -212,6 +212,7 @@ func signalled(ts *testscript.TestScript, neg bool, args []string) {
 	ts.Check(err)
 	cmd := exec.Command(path, args[4:]...)
 	cmd.Dir = ts.MkAbs(".")
+	cmd.Env = append(os.Environ(), "SLURM_RESTART_COUNT="+ts.Getenv("SLURM_RESTART_COUNT"))
 	var stderr strings.Builder
 	cmd.Stderr = &stderr
 	ts.Check(cmd.Start())
