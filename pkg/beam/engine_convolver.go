@@ -7,7 +7,7 @@ import (
 
 // convolverHop is how many frames a convolver computes at once, such that the
 // parts of a microphone's signal and their sums stay in the first-level cache.
-const convolverHop = 1024
+const convolverHop = 2048
 
 // NewConvolver returns the beam that f makes of src, one channel, by
 // convolution in the time domain. Output frame i is the sound at the reference
