@@ -288,6 +288,7 @@ func oneTake(c *cli.Context) bool { return c.Bool("chain") || c.Bool("set") }
 // steerSpec is what the pipeline is to do for one take of the given files.
 func (u *ui) steerSpec(c *cli.Context, o pipeline.Options, files []string) pipeline.Spec {
 	s := pipeline.Spec{Take: files, RigPath: c.String("rig"), Options: o, Version: version}
+	s.NoHashes = o.Reports == "none" && !c.Bool("json")
 	if !o.Private {
 		s.Command = append([]string{"alidade"}, u.args...)
 	}

@@ -46,11 +46,11 @@ func (f *Filters) Response(dst []complex128, hz float64) []complex128 {
 	for m, h := range f.H {
 		// Horner's rule in e^{-jω} from the last tap down.
 		s, c := math.Sincos(-omega)
-		step := complex(c, s)
-		var sum complex128
+		var re, im float64
 		for t := len(h) - 1; t >= 0; t-- {
-			sum = sum*step + complex(h[t], 0)
+			re, im = re*c-im*s+h[t], re*s+im*c
 		}
+		sum := complex(re, im)
 		s, c = math.Sincos(-omega * float64(f.Start[m]))
 		dst = append(dst, sum*complex(c, s))
 	}

@@ -84,7 +84,7 @@ func (r *run) abandon() {
 func (r *run) report(f Finding) { r.findings = append(r.findings, f) }
 
 func (r *run) steer() (result *Result, err error) {
-	if r.take, err = openTake(r.spec.Take, r.set.joining(), len(r.set.reports) > 0); err != nil {
+	if r.take, err = openTake(r.spec.Take, r.set.joining(), !r.spec.NoHashes); err != nil {
 		return nil, err
 	}
 	defer func() { err = joinErrors(err, r.take.close()) }()

@@ -14,12 +14,13 @@ import (
 
 // Spec is one take to be steered.
 type Spec struct {
-	Take    []string // files of the take, in order: side by side, or a chain with Options.Chain
-	RigPath string
-	Options Options
-	Version string   // program version, for the report
-	Command []string // command line, for the report; nil under --private
-	Created string   // RFC 3339 time for the report; empty when reproducible
+	Take     []string // files of the take, in order: side by side, or a chain with Options.Chain
+	RigPath  string
+	Options  Options
+	Version  string   // program version, for the report
+	Command  []string // command line, for the report; nil under --private
+	NoHashes bool     // leave the hashes of take and tracks out: nobody will see them
+	Created  string   // RFC 3339 time for the report; empty when reproducible
 }
 
 // Options are the options of a steer run, in the words of the command line:
