@@ -225,7 +225,7 @@ func runBatch(u *ui, c *cli.Context) error {
 	}
 	u.remark("%s", tallyWords(tally, u.now().Sub(begun)))
 	if s.Part < 0 {
-		summary, err := t.sumUp(batch.MergeSettings{Out: t.out, Worst: worstFigure})
+		summary, err := t.sumUp(batch.MergeSettings{Out: t.out, Worst: worstFigure}, tally.Standing < tally.Takes)
 		if err != nil {
 			return t.again(c.Context, err, tally, restarts, u.env)
 		}

@@ -372,6 +372,21 @@ func (s *Summary) JSON() ([]byte, error) {
 	return append(text, '\n'), nil
 }
 
+// Saved reports whether summary.json of an output folder is this summary, with
+// files of these names beside it.
+func (s *Summary) Saved(out string, beside ...string) bool {
+	text, err := s.JSON()
+	if err != nil || !sameBytes(filepath.Join(out, summaryName), text) {
+		return false
+	}
+	for _, name := range beside {
+		if _, err := os.Lstat(filepath.Join(out, name)); err != nil {
+			return false
+		}
+	}
+	return true
+}
+
 // Save writes summary.json, and other files beside it, each whole or not at
 // all; one that says the same already is left alone. The summary of another
 // plan that stands there is kept as summary.previous.json.
