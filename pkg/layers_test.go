@@ -18,6 +18,7 @@ var layers = map[string]struct {
 	floor   int
 	purpose string
 }{
+	"pkg/kernel":                   {0, "inner loops, plain and for vector units"},
 	"pkg/sheet":                    {0, "YAML files read strictly, every fault with its place"},
 	"pkg/report/internal/draw":     {0, "pictures in SVG and PNG, by hand"},
 	"pkg/beam/internal/hermitian":  {0, "small Hermitian solves"},
@@ -52,7 +53,8 @@ var owner = map[string]string{
 	"github.com/santhosh-tekuri/jsonschema/v6": "pkg/sheet",
 	"github.com/urfave/cli/v2":                 "cmd/alidade",
 	"github.com/vbauerster/mpb/v8":             "cmd/alidade",
-	"golang.org/x/sys":                         "pkg/pipeline",
+	"golang.org/x/sys/cpu":                     "pkg/kernel",
+	"golang.org/x/sys/unix":                    "pkg/pipeline",
 	"golang.org/x/term":                        "cmd/alidade",
 	"gonum.org/v1/gonum":                       "pkg/measure",
 }

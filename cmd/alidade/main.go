@@ -14,6 +14,7 @@ import (
 
 	"github.com/urfave/cli/v2"
 
+	"alidade/pkg/kernel"
 	"alidade/pkg/pipeline"
 	"alidade/pkg/sheet"
 )
@@ -161,6 +162,9 @@ func run(ctx context.Context, args []string, stdin io.Reader, stdout, stderr io.
 
 // dispatch finds the verb and gives it its arguments.
 func dispatch(ctx context.Context, u *ui, args []string) error {
+	if err := kernel.Use(u.env("ALIDADE_KERNEL")); err != nil {
+		return &usageError{fmt.Errorf("ALIDADE_KERNEL: %w", err), "leave it unset for the best that the processor has"}
+	}
 	list := verbs()
 	var names []string
 	for _, v := range list {

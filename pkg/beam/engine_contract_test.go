@@ -14,6 +14,7 @@ import (
 	"alidade/pkg/audio"
 	"alidade/pkg/audio/audiotest"
 	"alidade/pkg/delay"
+	"alidade/pkg/kernel"
 	"alidade/pkg/rig"
 )
 
@@ -420,6 +421,60 @@ func TestEnginesRefuseWhatDoesNotFit(t *testing.T) {
 		}
 		if _, err := audio.ReadAll(s); !errors.Is(err, broken) {
 			t.Errorf("%s: got %v, want the failure of the source", name, err)
+		}
+	}
+}
+
+// Whatever set of kernels the processor has, the plain one holds everything
+// too.
+func TestEnginesWithPlainKernels(t *testing.T) {
+	if kernel.Name() == kernel.Plain {
+		t.Skip("the plain set is the only one here: the tests above ran with it")
+	}
+	if err := kernel.Use(kernel.Plain); err != nil {
+		t.Fatal(err)
+	}
+	defer func() {
+		if err := kernel.Use(""); err != nil {
+			t.Error(err)
+		}
+	}()
+	t.Run("definition", TestEnginesAgainstTheDefinition)
+	t.Run("edges", TestImpulsesAtTheEdges)
+	t.Run("microphones", TestEnginesFromOneTo256Microphones)
+	t.Run("cores", TestSameBitsForAnyCoreCount)
+	t.Run("methods", TestMethodsThroughTheFloat32Chain)
+	t.Run("glide", TestStandingGlideIsTheFarrowBeam)
+	t.Run("tone", TestGlideFollowsAMovingTone)
+}
+
+// The sets differ by rounding only, below -120 dB of the beam.
+func TestSetsOfKernelsAgree(t *testing.T) {
+	if kernel.Name() == kernel.Plain {
+		t.Skip("the plain set is the only one here")
+	}
+	f, x := randomFilters(8, 64, 30, 4), random(8, 30000, 5)
+	for name, engine := range engines {
+		var beams [2]audio.Block
+		for k, set := range []string{kernel.Plain, ""} {
+			if err := kernel.Use(set); err != nil {
+				t.Fatal(err)
+			}
+			src, err := engine(audio.FromBlock(f.Rate, x), f)
+			if err != nil {
+				t.Fatal(err)
+			}
+			if beams[k], err = audio.ReadAll(src); err != nil {
+				t.Fatal(err)
+			}
+		}
+		var e2, s2 float64
+		for i, v := range beams[0].Channel(0) {
+			d := float64(v) - float64(beams[1].Channel(0)[i])
+			e2, s2 = e2+d*d, s2+float64(v)*float64(v)
+		}
+		if db := 10 * math.Log10(e2/s2); db > -120 {
+			t.Errorf("%s: the sets differ by %.1f dB", name, db)
 		}
 	}
 }

@@ -2,7 +2,7 @@ package beam
 
 import (
 	"alidade/pkg/audio"
-	"alidade/pkg/delay"
+	"alidade/pkg/kernel"
 )
 
 // convolverHop is how many frames a convolver computes at once, such that the
@@ -14,7 +14,8 @@ const convolverHop = 2048
 // point at frame i; the length is that of src. It returns an error if f does
 // not fit src.
 //
-// Three steps of the fast FIR algorithm [Mou & Duhamel 1991] take the products
+// With a vector unit the sums are formed tap by tap. Else three steps of the
+// fast FIR algorithm [Mou & Duhamel 1991] take the products
 // down to 27/64 of one for each tap and frame: the sums over the microphones are
 // formed between its additions before and after, so that the latter cost once
 // for all microphones. Its rounding, relative to a sum formed tap by tap, is
@@ -22,6 +23,9 @@ const convolverHop = 2048
 func NewConvolver(src audio.Source, f *Filters) (audio.Source, error) {
 	if err := runnable(src, f); err != nil {
 		return nil, err
+	}
+	if kernel.Name() != kernel.Plain {
+		return newDirect(src, f), nil
 	}
 	longest := 0
 	for _, h := range f.H {
@@ -74,6 +78,40 @@ func NewConvolver(src audio.Source, f *Filters) (audio.Source, error) {
 	return audio.Hops(src, hop, c.run), nil
 }
 
+// newDirect returns the beam with the sums formed tap by tap.
+func newDirect(src audio.Source, f *Filters) audio.Source {
+	d := &direct{taps: make([][]float32, f.Mics()), from: make([]int, f.Mics())}
+	hop := audio.Hop{Channels: 1, Frames: convolverHop}
+	for m, h := range f.H {
+		d.taps[m] = make([]float32, len(h))
+		for t, v := range h {
+			d.taps[m][len(h)-1-t] = float32(v)
+		}
+		hop.Before = max(hop.Before, f.Start[m]+len(h)-1)
+		hop.After = max(hop.After, -f.Start[m])
+	}
+	for m, start := range f.Start {
+		d.from[m] = hop.Before - (start + len(f.H[m]) - 1)
+	}
+	return audio.Hops(src, hop, d.run)
+}
+
+// direct forms y[i] = Σ_m Σ_t c_m[t]·z_m[i+t] with z_m the window of microphone
+// m and c_m its reversed taps.
+type direct struct {
+	taps [][]float32
+	from []int // where in the window the earliest sample lies
+}
+
+func (d *direct) run(out, in audio.Block, _ int64) error {
+	y := out.Channel(0)
+	clear(y)
+	for m, taps := range d.taps {
+		kernel.AddFIR(y, in.Channel(m)[d.from[m]:], taps)
+	}
+	return nil
+}
+
 // convolver forms y[i] = Σ_m Σ_t c_m[t]·z_m[i+t] with z_m the window of
 // microphone m and c_m its reversed taps. A step writes even and odd parts,
 // y[2n] = A[n] + B[n] and y[2n+1] = E[n] - A[n+1] - B[n], where
@@ -113,7 +151,7 @@ func (c *convolver) run(out, in audio.Block, _ int64) error {
 			divide(c.eighth[3*k], c.eighth[3*k+1], c.eighth[3*k+2], x)
 		}
 		for k, taps := range c.taps[m] {
-			delay.AddFIR(c.sum[k], c.eighth[k], taps)
+			kernel.AddFIR(c.sum[k], c.eighth[k], taps)
 		}
 	}
 	for k := range c.sum4 {

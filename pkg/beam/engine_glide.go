@@ -6,6 +6,7 @@ import (
 
 	"alidade/pkg/audio"
 	"alidade/pkg/delay"
+	"alidade/pkg/kernel"
 )
 
 // glideHop is how many frames a glide computes at once.
@@ -129,7 +130,7 @@ func (r *glider) add(y, x []float32, m, mics, knots int) {
 	for k, c := range r.reversed {
 		b := r.branch[k][:count]
 		clear(b)
-		delay.AddFIR(b, x[from:], c)
+		kernel.AddFIR(b, x[from:], c)
 	}
 	amplitude := float32(r.Amplitudes[m])
 	for j := range knots {

@@ -5,6 +5,7 @@ import (
 	"fmt"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 	"alidade/pkg/spectral"
 )
 
@@ -124,7 +125,8 @@ func (o *overlapSave) run(out, in audio.Block, _ int64) error {
 		}
 		o.plan.Forward(o.z.re, o.z.im, a, b)
 		for j, s := range o.sum {
-			addProduct(s, o.z, o.weights[j][pair])
+			w := o.weights[j][pair]
+			kernel.AddProduct(s.re, s.im, o.z.re, o.z.im, w.re, w.im)
 		}
 	}
 	for j, s := range o.sum {
@@ -132,17 +134,4 @@ func (o *overlapSave) run(out, in audio.Block, _ int64) error {
 		copy(out.Channel(j), s.re[n-o.shape.Hop:])
 	}
 	return nil
-}
-
-// addProduct adds a·b to s.
-func addProduct(s, a, b spectrum) {
-	n := len(s.re)
-	sr, si := s.re, s.im[:n]
-	ar, ai := a.re[:n], a.im[:n]
-	br, bi := b.re[:n], b.im[:n]
-	for k := 0; k < n; k++ {
-		xr, xi, wr, wi := ar[k], ai[k], br[k], bi[k]
-		sr[k] += xr*wr - xi*wi
-		si[k] += xr*wi + xi*wr
-	}
 }

@@ -188,34 +188,3 @@ func TestShiftRefuses(t *testing.T) {
 		t.Errorf("got %v, want the failure of the source", err)
 	}
 }
-
-func TestFIRAgreesWithThePlainSum(t *testing.T) {
-	r := rand.New(rand.NewPCG(3, 1))
-	for _, taps := range []int{1, 2, 3, 4, 5, 16, 63, 64, 65} {
-		for _, n := range []int{0, 1, 2, 3, 4, 5, 7, 8, 64, 101} {
-			x, h, y := make([]float32, n+taps-1), make([]float32, taps), make([]float32, n+2)
-			for i := range x {
-				x[i] = float32(r.NormFloat64())
-			}
-			for i := range h {
-				h[i] = float32(r.NormFloat64())
-			}
-			for i := range y {
-				y[i] = float32(i)
-			}
-			AddFIR(y[1:1+n], x, h)
-			if y[0] != 0 || y[n+1] != float32(n+1) {
-				t.Fatalf("%d taps, %d samples: written outside", taps, n)
-			}
-			for i := range n {
-				want := float64(i + 1)
-				for k, v := range h {
-					want += float64(v) * float64(x[i+k])
-				}
-				if math.Abs(float64(y[1+i])-want) > 1e-4 {
-					t.Errorf("%d taps, %d samples: y[%d] = %g, want %g", taps, n, i, y[1+i], want)
-				}
-			}
-		}
-	}
-}

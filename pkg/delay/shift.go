@@ -5,6 +5,7 @@ import (
 	"math"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 )
 
 // shiftHop is how many frames a Shift computes at once.
@@ -55,7 +56,7 @@ func (s *shift) run(out, in audio.Block, _ int64) error {
 	for ch, taps := range s.reversed {
 		y := out.Channel(ch)
 		clear(y)
-		AddFIR(y, in.Channel(ch)[s.from[ch]:], taps)
+		kernel.AddFIR(y, in.Channel(ch)[s.from[ch]:], taps)
 	}
 	return nil
 }

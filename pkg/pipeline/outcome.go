@@ -5,6 +5,7 @@ import (
 	"path/filepath"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 	"alidade/pkg/rig"
 )
 
@@ -16,7 +17,7 @@ func (r *run) result() (*Result, error) {
 		Steer:    r.line.summary(),
 		Bands:    []Band{},
 		Findings: []Finding{}, OctaveBands: []Band{},
-		Provenance: &Provenance{Command: r.spec.Command, Kernel: "plain"},
+		Provenance: &Provenance{Command: r.spec.Command, Kernel: kernel.Name()},
 	}
 	if err := r.gains(res); err != nil {
 		return nil, err

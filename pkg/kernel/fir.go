@@ -1,4 +1,4 @@
-package delay
+package kernel
 
 import "fmt"
 
@@ -6,13 +6,31 @@ import "fmt"
 //
 //	y[i] += Σ_t reversed[t]·x[i+t],   len(x) >= len(y) + len(reversed) - 1
 //
-// It works eight taps and four samples at a time; a plain sum a sample takes
-// twice as long. The order of the additions is the same for every i. It panics
-// if x is too short.
+// y must not overlap x. It panics if x is too short.
 func AddFIR(y, x, reversed []float32) {
-	if len(x) < len(y)+len(reversed)-1 {
-		panic(fmt.Sprintf("delay: %d taps for %d samples from %d", len(reversed), len(y), len(x)))
+	if len(y) == 0 || len(reversed) == 0 {
+		return
 	}
+	if len(x) < len(y)+len(reversed)-1 {
+		panic(fmt.Sprintf("kernel: %d taps for %d samples from %d", len(reversed), len(y), len(x)))
+	}
+	if !vector {
+		addFIR(y, x, reversed)
+		return
+	}
+	n := len(y) &^ 7
+	if n > 0 {
+		addFIRAVX2(&y[0], n, &x[0], &reversed[0], len(reversed))
+	}
+	if n < len(y) {
+		addFIR(y[n:], x[n:], reversed)
+	}
+}
+
+// addFIR is the definition. It works eight taps and four samples at a time; a
+// plain sum a sample takes twice as long. The order of the additions is the
+// same for every sample.
+func addFIR(y, x, reversed []float32) {
 	t := 0
 	for ; t+8 <= len(reversed); t += 8 {
 		h := (*[8]float32)(reversed[t:])
