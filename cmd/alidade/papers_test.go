@@ -125,7 +125,7 @@ func runPaper(t *testing.T, name string) {
 			c.text = strings.Replace(c.text, "go run ./cmd/alidade", "alidade", 1)
 		}
 		switch words[0] {
-		case "alidade", "cat", "head", "ls", "cd", "mkdir", "cp":
+		case "alidade", "cat", "head", "ls", "cd", "mkdir", "cp", "printf":
 			if testing.Short() {
 				continue
 			}

@@ -204,6 +204,7 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 	}
 	recipes := map[string]int{}
 	rigs := map[string]batch.Recipe{}
+	microphones := map[string]int{}
 	var faults []error
 	for _, g := range groups {
 		key := strings.TrimSuffix(g.name, path.Ext(g.name))
@@ -224,7 +225,8 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 				faults = append(faults, &usageError{err: err})
 				continue
 			}
-			r = batch.Recipe{Rig: filepath.ToSlash(rigName), RigSHA256: sum, MemoryMiB: memoryFor(len(loaded.Mics))}
+			r = batch.Recipe{Rig: filepath.ToSlash(rigName), RigSHA256: sum}
+			microphones[rigName] = len(loaded.Mics)
 			rigs[rigName] = r
 		}
 		if r.Options, err = json.Marshal(j.recipe(o)); err != nil {
@@ -237,6 +239,8 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 			recipes[id] = k
 			d.Recipes = append(d.Recipes, r)
 		}
+		take := batch.Take{Paths: g.paths, Files: g.files, Recipe: k}
+		d.Recipes[k].MemoryMiB = max(d.Recipes[k].MemoryMiB, memoryFor(microphones[rigName], take.Bytes()))
 		name := j.Outputs.Name
 		if name == "" {
 			name = "{take}"
@@ -248,7 +252,8 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 		}
 		key = path.Clean(strings.NewReplacer("{take}", key, "{folder}", folder, "{file}", path.Base(key),
 			"{rig}", strings.TrimSuffix(rigBase, path.Ext(rigBase))).Replace(name))
-		d.Takes = append(d.Takes, batch.Take{Key: strings.TrimPrefix(key, "/"), Paths: g.paths, Files: g.files, Recipe: k})
+		take.Key = strings.TrimPrefix(key, "/")
+		d.Takes = append(d.Takes, take)
 	}
 	if len(faults) > 0 {
 		return nil, errors.Join(faults...)
@@ -265,10 +270,10 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 	return plan, nil
 }
 
-// memoryFor is what a worker needs at most for a take of so many channels, MiB.
-// Measured: 24 MiB for 4 channels, 120 MiB for 32 channels of an hour; a budget
-// is better kept than met.
-func memoryFor(channels int) int { return 96 + 4*channels }
+// memoryFor is what a worker needs at most for a take of so many channels and
+// bytes, MiB. Measured: 132 MiB for 32 channels and 10 minutes, 173 MiB for 8
+// channels and an hour, of 16 bits; a budget is better kept than met.
+func memoryFor(channels int, bytes int64) int { return 96 + 4*channels + int(24*(bytes>>20)>>10) }
 
 // overrideOf finds the override of a take by any of its names.
 func (j *job) overrideOf(names ...string) *override {
