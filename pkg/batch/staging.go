@@ -24,12 +24,19 @@ type staging struct {
 // take.
 func newStaging(out string) (*staging, error) {
 	top := filepath.Join(out, stagingFolder)
-	if err := os.MkdirAll(top, 0o777); err != nil {
-		return nil, err
-	}
-	path, err := os.MkdirTemp(top, runMark()+"-")
-	if err != nil {
-		return nil, err
+	var path string
+	for try := 0; ; try++ {
+		if err := os.MkdirAll(top, 0o777); err != nil {
+			return nil, err
+		}
+		var err error
+		if path, err = os.MkdirTemp(top, runMark()+"-"); err == nil {
+			break
+		}
+		// A run that has just ended takes an empty staging folder with it.
+		if !errors.Is(err, fs.ErrNotExist) || try == 100 {
+			return nil, err
+		}
 	}
 	// MkdirTemp keeps others out, but what is renamed out of here is for them.
 	return &staging{out: out, path: path, name: filepath.Base(path)}, nil
