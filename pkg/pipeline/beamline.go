@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"slices"
 
 	"alidade/pkg/acoustics"
 	"alidade/pkg/audio"
@@ -39,6 +40,11 @@ type beamline struct {
 	ref     rig.Point
 	look    acoustics.Wave
 	filters *beam.Filters
+	// model are the filters as the geometry alone would have them, without the
+	// delay corrections of the rig: what filters are to channels that need
+	// corrections, model is to microphones as they stand in the air, and that is
+	// what predictions are about. The same as filters where there are none.
+	model   *beam.Filters
 	set     *settings
 	errorDB float64
 	// shift are the delay corrections of the rig, seconds, applied to the
@@ -72,6 +78,7 @@ func newBeamline(l *loadedRig, s *settings, rate int) (*beamline, error) {
 		return nil, &UsageError{Err: fmt.Errorf("--taper %s: %w", s.taper, err)}
 	}
 	arrivals := acoustics.Delays(nil, b.look, b.at, b.ref, l.speed)
+	corrected := slices.Clone(arrivals)
 	if s.designed() {
 		b.correctTimes()
 	}
@@ -81,7 +88,7 @@ func newBeamline(l *loadedRig, s *settings, rate int) (*beamline, error) {
 		}
 		// The correction is added to the channel's time: a channel that is late
 		// by d has the correction -d and arrives d later than its place says.
-		arrivals[i] -= l.Mics[m].Delay
+		corrected[i] -= l.Mics[m].Delay
 	}
 	if s.UndoSpreading {
 		for i, p := range b.at {
@@ -92,8 +99,13 @@ func newBeamline(l *loadedRig, s *settings, rate int) (*beamline, error) {
 	if err != nil {
 		return nil, err
 	}
-	if b.filters, err = beam.DelayAndSum(kernel, rate, arrivals, amplitudes); err != nil {
+	if b.filters, err = beam.DelayAndSum(kernel, rate, corrected, amplitudes); err != nil {
 		return nil, &UsageError{Err: err}
+	}
+	if b.model = b.filters; !slices.Equal(corrected, arrivals) {
+		if b.model, err = beam.DelayAndSum(kernel, rate, arrivals, amplitudes); err != nil {
+			return nil, &UsageError{Err: err}
+		}
 	}
 	return b, nil
 }

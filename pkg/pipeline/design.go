@@ -69,7 +69,7 @@ func (r *run) design() error {
 	if err != nil {
 		return &UsageError{Err: fmt.Errorf("--weights %s: %w", r.set.Weights, err)}
 	}
-	b.filters, b.fit = filters, &fit
+	b.filters, b.model, b.fit = filters, filters, &fit
 	if from, ok := w.HeldFrom(); len(nulls) > 0 {
 		switch {
 		case !ok:

@@ -69,13 +69,14 @@ func (r *run) gains(res *Result) error {
 	return nil
 }
 
-// predict returns the bands with what the filters, as built, should do in them.
+// predict returns the bands with what the filters, as built, should do in them
+// to microphones whose corrections are right.
 func (b *beamline) predict(bands []measure.Band) []Band {
 	nyquist := float64(b.filters.Rate) / 2
 	grating, found := response.GratingLimit(b.at, b.look.Direction(b.ref), b.rig.speed, nyquist)
 	list := make([]Band, len(bands))
 	for i, band := range bands {
-		white, diffuse, target := response.BandGains(b.filters, b.at, b.look, b.ref, b.rig.speed, band.LowHz, band.HighHz)
+		white, diffuse, target := response.BandGains(b.model, b.at, b.look, b.ref, b.rig.speed, band.LowHz, band.HighHz)
 		list[i] = Band{
 			NominalHz: band.NominalHz, CentreHz: band.CentreHz, LowHz: band.LowHz, HighHz: band.HighHz,
 			PredictedWhiteDB: number(white + target), PredictedDiffuseDB: number(diffuse + target), Flags: []string{},
