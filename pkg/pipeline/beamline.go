@@ -63,11 +63,11 @@ func newBeamline(l *loadedRig, s *settings, rate int) (*beamline, error) {
 	if s.point != nil {
 		for i, p := range b.at {
 			if d := p.Distance(*s.point); d < nearestFocus {
-				return nil, &UsageError{Err: fmt.Errorf("--focus %s: %.1f mm from microphone %s: want at least %g mm", s.Focus, 1000*d, l.Mics[b.used[i]].Name, 1000*nearestFocus)}
+				return nil, &UsageError{Err: fmt.Errorf("--focus %s: %.1f mm from microphone %s: want at least %g mm", s.Focus, 1000*d, l.Mics[b.used[i]].Name, 1000*nearestFocus), Hint: "X,Y,Z count in metres from the rig's origin: look for millimetres, a lost sign or a lost digit"}
 			}
 		}
 		if s.point.Distance(b.ref) < nearestFocus {
-			return nil, &UsageError{Err: fmt.Errorf("--focus %s: at the reference point, from where it has no direction", s.Focus)}
+			return nil, &UsageError{Err: fmt.Errorf("--focus %s: at the reference point, from where it has no direction", s.Focus), Hint: "X,Y,Z count in metres from the rig's origin: look for millimetres, a lost sign or a lost digit"}
 		}
 		b.look = acoustics.Spherical{At: *s.point}
 	} else {

@@ -31,6 +31,12 @@ func openInput(path string, hashed bool) (*input, error) {
 	if err != nil {
 		return nil, unreadable(err)
 	}
+	if info.IsDir() {
+		return nil, &HintedError{
+			Err:  fmt.Errorf("%s: is a folder, not a file", path),
+			Hint: "name the file in it that is meant; alidade batch does a whole folder of takes",
+		}
+	}
 	if !info.Mode().IsRegular() {
 		return nil, &HintedError{
 			Err:  fmt.Errorf("%s: is %s, but a take is read more than once and from any place", path, kindOf(info.Mode())),

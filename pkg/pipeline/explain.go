@@ -31,8 +31,8 @@ func (r *run) explain(res *Result, g *measure.Gains) {
 	}
 	if len(short) > 0 {
 		r.report(Finding{Code: "gain-below-prediction", Severity: Warning, Bands: short, Message: fmt.Sprintf(
-			"the measured gain lies more than %g dB below what the filters give in white and in diffuse noise in %d bands: the noise may come from near the steered direction; else suspect the direction, the spacing, the channel order, a polarity, the air temperature, or reverberation",
-			gainShortDB, len(short))})
+			"the measured gain lies more than %g dB below what the filters give in white and in diffuse noise in %s: the noise may come from near the steered direction; else suspect the direction, the spacing, the channel order, a polarity, the air temperature, or reverberation",
+			gainShortDB, bandCount(len(short)))})
 	}
 	if o := res.Overall; o.TargetChangeDB != nil && *o.TargetChangeDB < -targetLossDB && (o.TargetChangeCI95 == nil || o.TargetChangeCI95[1] < -targetLossDB) {
 		r.report(Finding{Code: "target-loss", Severity: Warning, Message: fmt.Sprintf(
@@ -81,9 +81,9 @@ func (r *run) reasons(res *Result, g *measure.Gains) {
 // flagged adds a finding for each flag on bands.
 func (r *run) flagged(res *Result) {
 	for _, f := range []struct{ flag, code, message string }{
-		{"grating", "grating-lobe", "in %d bands another direction is heard as loud as the steered one (grating lobe): the microphones stand too far apart for them"},
-		{"no-aperture", "no-aperture", "in %d bands the rig is too small for the wavelength: less than 1 dB of diffuse noise can go away there"},
-		{measure.Sparse, "sparse-bands", "in %d bands too little sound stands behind the figures for a good interval: longer stretches help"},
+		{"grating", "grating-lobe", "in %s another direction is heard as loud as the steered one (grating lobe): the microphones stand too far apart there"},
+		{"no-aperture", "no-aperture", "in %s the rig is too small for the wavelength: less than 1 dB of diffuse noise can go away there"},
+		{measure.Sparse, "sparse-bands", "in %s too little sound stands behind the figures for a good interval: longer stretches help"},
 	} {
 		var list []float64
 		for _, b := range res.Bands {
@@ -92,9 +92,17 @@ func (r *run) flagged(res *Result) {
 			}
 		}
 		if len(list) > 0 {
-			r.report(Finding{Code: f.code, Severity: Info, Bands: list, Message: fmt.Sprintf(f.message, len(list))})
+			r.report(Finding{Code: f.code, Severity: Info, Bands: list, Message: fmt.Sprintf(f.message, bandCount(len(list)))})
 		}
 	}
+}
+
+// bandCount puts a number of bands into words.
+func bandCount(n int) string {
+	if n == 1 {
+		return "1 band"
+	}
+	return fmt.Sprintf("%d bands", n)
 }
 
 func hasFlag(b Band, flag string) bool { return slices.Contains(b.Flags, flag) }

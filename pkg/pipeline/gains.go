@@ -35,7 +35,7 @@ func (r *run) gains(res *Result) error {
 	if name := r.set.CompareTo; name != "" {
 		m, found := r.rig.Find(name)
 		if named = slices.Index(r.line.used, m); !found || named < 0 {
-			return &UsageError{Err: fmt.Errorf("--compare-to %q: no used microphone of rig %s has that name", name, r.rig.Name)}
+			return &UsageError{Err: fmt.Errorf("--compare-to %q: no used microphone of rig %s has that name", name, r.rig.Name), Hint: r.rig.namesHint()}
 		}
 	}
 	var third, octave *measure.Gains
@@ -164,7 +164,7 @@ func (r *run) given(option string, list []Stretch, duration float64) ([]measure.
 	slices.SortFunc(out, func(a, b measure.Stretch) int { return cmp.Compare(a.From, b.From) })
 	for i := 1; i < len(out); i++ {
 		if out[i].From < out[i-1].To {
-			return nil, &UsageError{Err: fmt.Errorf("--%s: %g..%g and %g..%g overlap", option, out[i-1].From, out[i-1].To, out[i].From, out[i].To)}
+			return nil, &UsageError{Err: fmt.Errorf("--%s: %g..%g and %g..%g overlap", option, out[i-1].From, out[i-1].To, out[i].From, out[i].To), Hint: "give one stretch from the start of the first to the end of the last, or stretches that leave each other alone"}
 		}
 	}
 	return out, nil
@@ -213,6 +213,7 @@ func speechDiffuse(bands []Band) float64 {
 func (r *run) isolated(res *Result, named int) (third, octave *measure.Gains, err error) {
 	var noise, target listened
 	res.Segments.Source = SegmentsIsolated
+	r.passedOver()
 	if path := r.set.IsolatedNoise; path != "" {
 		if noise, err = r.through(path); err != nil {
 			return nil, nil, err
@@ -239,6 +240,27 @@ func (r *run) isolated(res *Result, named int) (third, octave *measure.Gains, er
 	}
 	octave, err = measure.IsolatedGain(measure.Isolated{Noise: noise.octaves(), Target: target.octaves(), Named: named})
 	return third, octave, err
+}
+
+// passedOver says which of the options that mark stretches of the mix had
+// nothing to say, since isolated takes come before them.
+func (r *run) passedOver() {
+	var unused []string
+	for _, o := range []struct {
+		option, value string
+		learns        bool // minimum variance listens to it where no isolated noise is given
+	}{
+		{"--noise", r.set.Noise, true}, {"--noise-cue", r.set.NoiseCue, true},
+		{"--target", r.set.Target, false}, {"--target-cue", r.set.TargetCue, false},
+	} {
+		learned := o.learns && r.set.Weights == WeightsMinimumVariance && r.set.IsolatedNoise == ""
+		if o.value != "" && !learned {
+			unused = append(unused, o.option)
+		}
+	}
+	if len(unused) > 0 {
+		r.report(Finding{Code: "stretches-unused", Severity: Warning, Message: "the gain was measured on isolated takes, so " + strings.Join(unused, " and ") + " had nothing to say; leave out --isolated-noise and --isolated-target to measure the take itself"})
+	}
 }
 
 // half leaves out the figures of the isolated take that was not given.

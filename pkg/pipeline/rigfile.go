@@ -6,6 +6,7 @@ import (
 	"io"
 	"os"
 	"path/filepath"
+	"strings"
 
 	"alidade/pkg/acoustics"
 	"alidade/pkg/rig"
@@ -58,9 +59,9 @@ func loadRig(path string, o Options) (*loadedRig, error) {
 		switch {
 		case o.ReferencePoint == rig.CentreReference:
 		case !found:
-			return nil, &UsageError{Err: fmt.Errorf("--reference-point %q: rig %s has no microphone of that name", o.ReferencePoint, l.Name)}
+			return nil, &UsageError{Err: fmt.Errorf("--reference-point %q: rig %s has no microphone of that name", o.ReferencePoint, l.Name), Hint: l.namesHint() + ", or centre"}
 		case !l.Mics[m].Use:
-			return nil, &UsageError{Err: fmt.Errorf("--reference-point %q: the rig file leaves that microphone out", o.ReferencePoint)}
+			return nil, &UsageError{Err: fmt.Errorf("--reference-point %q: the rig file leaves that microphone out", o.ReferencePoint), Hint: l.namesHint() + ", or centre"}
 		}
 		l.Reference = o.ReferencePoint
 	}
@@ -76,13 +77,26 @@ func loadRig(path string, o Options) (*loadedRig, error) {
 		}
 	}
 	if err := l.air.Validate(); err != nil {
-		return nil, &UsageError{Err: fmt.Errorf("air: %w", err)}
+		return nil, &UsageError{Err: fmt.Errorf("air: %w", err), Hint: "correct air in the rig file or the air options, or give --speed-of-sound"}
 	}
 	l.speed, l.rule = l.air.Speed(), l.air.SpeedRule()
 	if o.SpeedOfSound != nil {
 		l.speed, l.rule = *o.SpeedOfSound, "given"
 	}
 	return l, nil
+}
+
+// namesHint lists the used microphones as a remedy.
+func (l *loadedRig) namesHint() string {
+	var names []string
+	for _, m := range l.Used() {
+		names = append(names, l.Mics[m].Name)
+	}
+	const most = 12
+	if n := len(names); n > most {
+		names = append(names[:most], fmt.Sprintf("%d more", n-most))
+	}
+	return "give one of " + strings.Join(names, ", ")
 }
 
 // readSmall reads a whole regular file of at most limit bytes.
