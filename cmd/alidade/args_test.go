@@ -121,29 +121,26 @@ func TestTheFlagParserTakesWhatArrangeMakes(t *testing.T) {
 		t.Fatal(err)
 	}
 	ran := false
-	app := &cli.App{Name: "t", HideHelp: true, Commands: []*cli.Command{{
-		Name: "v", Flags: someFlags(), HideHelp: true,
-		Action: func(c *cli.Context) error {
-			ran = true
-			if got := c.String("toward"); got != "-5" {
-				t.Errorf("toward = %q", got)
-			}
-			if got := strings.Join(c.StringSlice("null"), ","); got != "-30,10,4" {
-				t.Errorf("null = %q", got)
-			}
-			if got := c.Float64("gain-db"); got != -3 {
-				t.Errorf("gain-db = %v", got)
-			}
-			if !c.Bool("overwrite") || c.IsSet("rig") {
-				t.Errorf("overwrite = %v, rig set = %v", c.Bool("overwrite"), c.IsSet("rig"))
-			}
-			if got := c.Args().Slice(); !slices.Equal(got, []string{"x.wav", "y.wav", "--rig"}) {
-				t.Errorf("operands = %q", got)
-			}
-			return nil
-		},
-	}}}
-	if err := app.Run(slices.Concat([]string{"t", "v"}, a.options, []string{"--"}, a.operands)); err != nil || !ran {
+	app := flagParser("v", someFlags(), func(c *cli.Context) error {
+		ran = true
+		if got := c.String("toward"); got != "-5" {
+			t.Errorf("toward = %q", got)
+		}
+		if got := c.StringSlice("null"); !slices.Equal(got, []string{"-30,10", "4"}) {
+			t.Errorf("null = %q", got)
+		}
+		if got := c.Float64("gain-db"); got != -3 {
+			t.Errorf("gain-db = %v", got)
+		}
+		if !c.Bool("overwrite") || c.IsSet("rig") {
+			t.Errorf("overwrite = %v, rig set = %v", c.Bool("overwrite"), c.IsSet("rig"))
+		}
+		if got := c.Args().Slice(); !slices.Equal(got, []string{"x.wav", "y.wav", "--rig"}) {
+			t.Errorf("operands = %q", got)
+		}
+		return nil
+	})
+	if err := app.Run(a.line("v")); err != nil || !ran {
 		t.Errorf("ran %v, %v", ran, err)
 	}
 }

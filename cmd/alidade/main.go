@@ -41,7 +41,7 @@ type verb struct {
 
 // verbs are the commands in the order in which --help lists them.
 func verbs() []verb {
-	return []verb{demoVerb(), steerVerb(), simulateVerb(), inspectVerb(), planVerb(), batchVerb(), mergeVerb(), checkStorageVerb(), schemaVerb()}
+	return []verb{demoVerb(), steerVerb(), checkVerb(), simulateVerb(), inspectVerb(), planVerb(), batchVerb(), mergeVerb(), checkStorageVerb(), schemaVerb()}
 }
 
 // The exit codes.
@@ -211,17 +211,29 @@ func dispatch(ctx context.Context, u *ui, args []string) error {
 	if err != nil {
 		return &usageError{prefixed(v.name, err), fmt.Sprintf("alidade %s --help shows its options", v.name)}
 	}
-	app := &cli.App{
+	app := flagParser(v.name, flags, func(c *cli.Context) error { return v.run(u, c) })
+	app.Writer, app.ErrWriter = u.stdout, u.stderr
+	return app.RunContext(ctx, a.line(v.name))
+}
+
+// flagParser reads what arrange makes of a command line, and gives it to
+// action. A value is one value, commas and all: 30,10 is one direction.
+func flagParser(name string, flags []cli.Flag, action cli.ActionFunc) *cli.App {
+	return &cli.App{
 		Name: "alidade", HideHelp: true, HideVersion: true,
-		Writer: u.stdout, ErrWriter: u.stderr,
-		ExitErrHandler: func(*cli.Context, error) {},
+		DisableSliceFlagSeparator: true,
+		ExitErrHandler:            func(*cli.Context, error) {},
 		Commands: []*cli.Command{{
-			Name: v.name, Flags: flags, HideHelp: true,
+			Name: name, Flags: flags, HideHelp: true,
 			OnUsageError: func(_ *cli.Context, err error, _ bool) error { return &usageError{err: err} },
-			Action:       func(c *cli.Context) error { return v.run(u, c) },
+			Action:       action,
 		}},
 	}
-	return app.RunContext(ctx, slices.Concat([]string{"alidade", v.name}, a.options, []string{"--"}, a.operands))
+}
+
+// line is the arguments as the flag parser takes them.
+func (a arguments) line(verb string) []string {
+	return slices.Concat([]string{"alidade", verb}, a.options, []string{"--"}, a.operands)
 }
 
 // prefixed puts the verb before each of several joined faults.

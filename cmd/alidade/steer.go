@@ -55,8 +55,9 @@ How
   --null AZ[,EL]         a direction that is not to be heard; several with
                          several --null
   --white-noise-gain-floor-db DB
-                         how much the noise of the microphones themselves may
-                         rise with such weights (default 0: not at all)
+                         the least white noise gain of such weights: 0, the
+                         default, keeps the noise of the microphones
+                         themselves as it is, -6 lets it rise by 6 dB
   --undo-spreading       with --focus: undo the level differences of a near
                          source
   --highpass HZ          cut below HZ, in track and measurement alike

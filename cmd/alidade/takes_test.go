@@ -6,6 +6,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"reflect"
 	"strings"
 	"syscall"
 	"testing"
@@ -25,51 +26,57 @@ func steerLine(t *testing.T, line string, use func(c *cli.Context)) {
 		t.Fatalf("%q: %v", line, err)
 	}
 	used := false
-	app := &cli.App{Name: "t", HideHelp: true, Commands: []*cli.Command{{
-		Name: "steer", Flags: steerFlags(), HideHelp: true,
-		Action: func(c *cli.Context) error { used = true; use(c); return nil },
-	}}}
-	args := append([]string{"t", "steer"}, a.options...)
-	if err := app.Run(append(append(args, "--"), a.operands...)); err != nil || !used {
+	app := flagParser("steer", steerFlags(), func(c *cli.Context) error { used = true; use(c); return nil })
+	if err := app.Run(a.line("steer")); err != nil || !used {
 		t.Fatalf("%q: used %v, %v", line, used, err)
 	}
 }
 
 func TestEachFlagOfSteerReachesItsOption(t *testing.T) {
 	f := func(v float64) *float64 { return &v }
+	reached := map[string]bool{}
 	for line, want := range map[string]pipeline.Options{
-		"x.wav":                              {},
-		"x.wav --toward -5,10":               {Toward: "-5,10"},
-		"x.wav --focus -1,2,.5":              {Focus: "-1,2,.5"},
-		"x.wav --reference-point M4":         {ReferencePoint: "M4"},
-		"x.wav --method farrow":              {Method: "farrow"},
-		"x.wav --taper taylor:30:4":          {Taper: "taylor:30:4"},
-		"x.wav --undo-spreading":             {UndoSpreading: true},
-		"x.wav --highpass 80":                {HighpassHz: 80},
-		"x.wav --gain-db -6":                 {GainDB: -6},
-		"x.wav --temperature-c 0":            {TemperatureC: f(0)},
-		"x.wav --temperature-c -12.5":        {TemperatureC: f(-12.5)},
-		"x.wav --humidity-pct 40":            {HumidityPct: f(40)},
-		"x.wav --pressure-kpa 98":            {PressureKPa: f(98)},
-		"x.wav --speed-of-sound 340":         {SpeedOfSound: f(340)},
-		"x.wav --noise 0..2,3..4":            {Noise: "0..2,3..4"},
-		"x.wav --noise 0..2 --noise 3..4":    {Noise: "0..2,3..4"},
-		"x.wav --target 5..6":                {Target: "5..6"},
-		"x.wav --isolated-noise n.wav":       {IsolatedNoise: "n.wav"},
-		"x.wav --isolated-target t.wav":      {IsolatedTarget: "t.wav"},
-		"x.wav --compare-to M2":              {CompareTo: "M2"},
-		"x.wav --no-measure":                 {NoMeasure: true},
-		"x.wav --out o/":                     {Out: "o/"},
-		"x.wav --format pcm16":               {Format: "pcm16"},
-		"x.wav --over-range float32":         {OverRange: "float32"},
-		"x.wav --with-reference":             {WithReference: true},
-		"x.wav --excerpt 21:00:00..21:00:05": {Excerpt: "21:00:00..21:00:05"},
-		"x.wav --handles 1.5":                {Handles: 1.5},
-		"x.wav --reports none":               {Reports: "none"},
-		"x.wav --overwrite":                  {Overwrite: true},
-		"x.wav --verify":                     {},
-		"x.wav --verify=false":               {NoVerify: true},
-		"x.wav --no-verify":                  {NoVerify: true},
+		"x.wav":                                {},
+		"x.wav --toward -5,10":                 {Toward: "-5,10"},
+		"x.wav --focus -1,2,.5":                {Focus: "-1,2,.5"},
+		"x.wav --reference-point M4":           {ReferencePoint: "M4"},
+		"x.wav --method farrow":                {Method: "farrow"},
+		"x.wav --taper taylor:30:4":            {Taper: "taylor:30:4"},
+		"x.wav --weights superdirective":       {Weights: "superdirective"},
+		"x.wav --null -30,10 --null 4":         {Null: []string{"-30,10", "4"}},
+		"x.wav --white-noise-gain-floor-db -6": {WhiteNoiseGainFloorDB: f(-6)},
+		"x.wav --chain":                        {Chain: true},
+		"x.wav --find-chain":                   {FindChain: true},
+		"x.wav --find-set":                     {FindSet: true},
+		"x.wav --noise-cue wind":               {NoiseCue: "wind"},
+		"x.wav --target-cue voice":             {TargetCue: "voice"},
+		"x.wav --private":                      {Private: true},
+		"x.wav --undo-spreading":               {UndoSpreading: true},
+		"x.wav --highpass 80":                  {HighpassHz: 80},
+		"x.wav --gain-db -6":                   {GainDB: -6},
+		"x.wav --temperature-c 0":              {TemperatureC: f(0)},
+		"x.wav --temperature-c -12.5":          {TemperatureC: f(-12.5)},
+		"x.wav --humidity-pct 40":              {HumidityPct: f(40)},
+		"x.wav --pressure-kpa 98":              {PressureKPa: f(98)},
+		"x.wav --speed-of-sound 340":           {SpeedOfSound: f(340)},
+		"x.wav --noise 0..2,3..4":              {Noise: "0..2,3..4"},
+		"x.wav --noise 0..2 --noise 3..4":      {Noise: "0..2,3..4"},
+		"x.wav --target 5..6":                  {Target: "5..6"},
+		"x.wav --isolated-noise n.wav":         {IsolatedNoise: "n.wav"},
+		"x.wav --isolated-target t.wav":        {IsolatedTarget: "t.wav"},
+		"x.wav --compare-to M2":                {CompareTo: "M2"},
+		"x.wav --no-measure":                   {NoMeasure: true},
+		"x.wav --out o/":                       {Out: "o/"},
+		"x.wav --format pcm16":                 {Format: "pcm16"},
+		"x.wav --over-range float32":           {OverRange: "float32"},
+		"x.wav --with-reference":               {WithReference: true},
+		"x.wav --excerpt 21:00:00..21:00:05":   {Excerpt: "21:00:00..21:00:05"},
+		"x.wav --handles 1.5":                  {Handles: 1.5},
+		"x.wav --reports none":                 {Reports: "none"},
+		"x.wav --overwrite":                    {Overwrite: true},
+		"x.wav --verify":                       {},
+		"x.wav --verify=false":                 {NoVerify: true},
+		"x.wav --no-verify":                    {NoVerify: true},
 	} {
 		steerLine(t, line, func(c *cli.Context) {
 			got, want := mustJSON(t, steerOptions(c)), mustJSON(t, want)
@@ -80,6 +87,19 @@ func TestEachFlagOfSteerReachesItsOption(t *testing.T) {
 				t.Errorf("%q leaves %q", line, rest)
 			}
 		})
+		var keys map[string]any
+		if err := json.Unmarshal([]byte(mustJSON(t, want)), &keys); err != nil {
+			t.Fatal(err)
+		}
+		for key := range keys {
+			reached[key] = true
+		}
+	}
+	for _, field := range reflect.VisibleFields(reflect.TypeFor[pipeline.Options]()) {
+		key, _, _ := strings.Cut(field.Tag.Get("json"), ",")
+		if key != "-" && !reached[key] {
+			t.Errorf("no command line above reaches the option %s: give it a line", field.Name)
+		}
 	}
 }
 
