@@ -25,7 +25,7 @@ func Summary(w io.Writer, r *pipeline.Result, width int) error {
 	}
 	width = max(width, 60)
 	findings := sortedFindings(r)
-	lines := []string{headline(r, findings, width)}
+	lines := headline(r, findings, width)
 	if a := r.Steer.Ambiguity; a != "" {
 		lines = append(lines, wrap(clean(a), width, "", 2)...)
 	}
@@ -48,13 +48,20 @@ func Summary(w io.Writer, r *pipeline.Result, width int) error {
 	return err
 }
 
-// headline is the first line: what a person reads who reads only one.
-func headline(r *pipeline.Result, findings []pipeline.Finding, width int) string {
+// headline is the first line: what a person reads who reads only one. Where the
+// direction in full would leave no room for the gain and its interval, it has a
+// line of its own after that.
+func headline(r *pipeline.Result, findings []pipeline.Finding, width int) []string {
 	line := fmt.Sprintf("%s: %s", directionWords(r), gainWords(r.Overall))
+	var full []string
+	if text.StringWidthWithoutEscSequences(line) > width {
+		line = fmt.Sprintf("%s: %s", briefDirectionWords(r), gainWords(r.Overall))
+		full = []string{cut("in full: "+directionWords(r), width)}
+	}
 	if len(findings) > 0 && findings[0].Severity != pipeline.Info {
 		line += "; " + string(findings[0].Severity) + ": " + clean(findings[0].Message)
 	}
-	return cut(line, width)
+	return append([]string{cut(line, width)}, full...)
 }
 
 // bandTable is the bands in groups, each figure the mean of the decibels of

@@ -65,6 +65,35 @@ func TestFirstLineHoldsDirectionGainIntervalAndFirstCaution(t *testing.T) {
 	}
 }
 
+// A point with angles and compass is longer than a line has room for beside the
+// gain: the gain stays whole, and the direction follows.
+func TestFirstLineKeepsTheGainBesideALongDirection(t *testing.T) {
+	r := goodTake()
+	r.Steer.PointM, r.Steer.AzimuthDeg, r.Steer.ElevationDeg, r.Steer.CompassDeg = &[3]float64{-10.5, 0.4, 0.2}, 177.8, 1.1, f(302)
+	r.Findings = []pipeline.Finding{{Code: "x", Severity: pipeline.Warning, Message: "look at channel 3"}}
+	for width, want := range map[int][]string{
+		130: {"point -10.50, 0.40, 0.20 m (rig 177.8° up 1.1°, compass 302° true): SNR gain 7.9 dB (95 %: 7.2 to 8.6); warning: look at channel 3"},
+		80: {"point -10.50, 0.40, 0.20 m: SNR gain 7.9 dB (95 %: 7.2 to 8.6); warning: look a…",
+			"in full: point -10.50, 0.40, 0.20 m (rig 177.8° up 1.1°, compass 302° true)"},
+	} {
+		lines := summary(t, r, width)
+		if got := lines[:len(want)]; strings.Join(got, "\n") != strings.Join(want, "\n") {
+			t.Errorf("width %d: got\n%s\nwant\n%s", width, strings.Join(got, "\n"), strings.Join(want, "\n"))
+		}
+		if len(lines) > SummaryLines {
+			t.Errorf("width %d: %d lines", width, len(lines))
+		}
+	}
+	r.Steer.PointM, r.Steer.ElevationDeg = nil, -12.34
+	lines := summary(t, r, 60)
+	if want := "177.8° down 12.3°: SNR gain 7.9 dB (95 %: 7.2 to 8.6); warn…"; lines[0] != want {
+		t.Errorf("got %q, want %q", lines[0], want)
+	}
+	if want := "in full: rig 177.8° down 12.3°, compass 302° true"; lines[1] != want {
+		t.Errorf("got %q, want %q", lines[1], want)
+	}
+}
+
 func TestSummaryKeepsItsLinesAndItsWidth(t *testing.T) {
 	r := goodTake()
 	long := strings.Repeat("a finding that goes on and on about 音 and so forth ", 12)

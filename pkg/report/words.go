@@ -83,9 +83,23 @@ func directionWords(r *pipeline.Result) string {
 		text += fmt.Sprintf(" ± %s°", decimals(*d.StandardErrorDeg, 1))
 	}
 	if s.PointM != nil {
-		text = fmt.Sprintf("point %s, %s, %s m (%s)", decimals(s.PointM[0], 2), decimals(s.PointM[1], 2), decimals(s.PointM[2], 2), text)
+		text = pointWords(*s.PointM) + " (" + text + ")"
 	}
 	return text
+}
+
+// pointWords returns a point in metres from the rig's origin.
+func pointWords(p [3]float64) string {
+	return fmt.Sprintf("point %s, %s, %s m", decimals(p[0], 2), decimals(p[1], 2), decimals(p[2], 2))
+}
+
+// briefDirectionWords returns the least that says where the beam points: the
+// point, or the angles of the rig.
+func briefDirectionWords(r *pipeline.Result) string {
+	if p := r.Steer.PointM; p != nil {
+		return pointWords(*p)
+	}
+	return directionWords(&pipeline.Result{Steer: pipeline.Steer{AzimuthDeg: r.Steer.AzimuthDeg, ElevationDeg: r.Steer.ElevationDeg}})
 }
 
 // gainWords returns the overall figure that counts, with its interval.
