@@ -81,8 +81,15 @@ func (f *Finder) summarise() *Result {
 	trails := f.associate()
 	sort.SliceStable(trails, func(a, b int) bool { return len(trails[a].heard) > len(trails[b].heard) })
 	taken := make([]bool, len(f.sightings))
+	trailOf := make([]int, len(f.sightings))
+	for i := range trailOf {
+		trailOf[i] = -1
+	}
 	var moving [][]int
-	for _, t := range trails {
+	for k, t := range trails {
+		for _, s := range t.heard {
+			trailOf[s] = k
+		}
 		track := f.smoothTrail(t)
 		r.Tracks = append(r.Tracks, track)
 		se := 0.0
@@ -96,7 +103,7 @@ func (f *Finder) summarise() *Result {
 			}
 		}
 	}
-	r.Sources = f.sources(taken, moving)
+	r.Sources = f.sources(taken, moving, trailOf)
 	bad := f.misfits()
 	for i := range r.Sources {
 		if len(bad) > 0 {
@@ -109,7 +116,8 @@ func (f *Finder) summarise() *Result {
 
 // sources finds the sources of the whole take: those that move, by their
 // tracks, and the others where the sightings of many windows lie together.
-func (f *Finder) sources(taken []bool, moving [][]int) []Source {
+// trailOf is the track of each sighting, -1 for none.
+func (f *Finder) sources(taken []bool, moving [][]int, trailOf []int) []Source {
 	anyActive := false
 	for _, s := range f.sightings {
 		anyActive = anyActive || s.active
@@ -249,12 +257,31 @@ func (f *Finder) sources(taken []bool, moving [][]int) []Source {
 		src.Moves = g.moves
 		src.Reflection = g.late
 		src.Share = g.weight / total
+		src.Track = mostOf(g.members, trailOf)
 		if g.moves {
 			src.StandardError = math.Max(src.StandardError, f.scatter(g.members))
 		}
 		out = append(out, src)
 	}
 	return out
+}
+
+// mostOf returns the track that most of the members belong to, the first of
+// several, -1 if none belongs to any.
+func mostOf(members, trailOf []int) int {
+	count := map[int]int{}
+	best := -1
+	for _, s := range members {
+		if k := trailOf[s]; k >= 0 {
+			count[k]++
+		}
+	}
+	for k, n := range count {
+		if best < 0 || n > count[best] || n == count[best] && k < best {
+			best = k
+		}
+	}
+	return best
 }
 
 // windowsOf counts the windows that members stand in; they are in order.

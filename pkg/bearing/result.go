@@ -54,6 +54,9 @@ type Source struct {
 	// Stationary says that the source never rose above its own noise floor: a
 	// steady sound, like a fan or a noise generator.
 	Stationary bool
+	// Track is the index into Result.Tracks of the track that shares most
+	// windows with the source, -1 if none does.
+	Track int
 }
 
 // Window is what was found in one stretch of time.

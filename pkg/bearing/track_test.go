@@ -58,6 +58,8 @@ func TestWalkingSourceIsTracked(t *testing.T) {
 		}
 		if len(r.Sources) == 0 || !r.Sources[0].Moves {
 			t.Errorf("%s: the first source is not said to move: %+v", g.name, r.Sources)
+		} else if r.Sources[0].Track != 0 {
+			t.Errorf("%s: the source that moves is said to be track %d, want 0", g.name, r.Sources[0].Track)
 		}
 	}
 }
@@ -128,7 +130,15 @@ func TestBirthsAndDeathsOfSources(t *testing.T) {
 		}
 	}
 	if len(r.Sources) != 2 {
-		t.Errorf("%d sources, want 2: %+v", len(r.Sources), r.Sources)
+		t.Fatalf("%d sources, want 2: %+v", len(r.Sources), r.Sources)
+	}
+	for i, s := range r.Sources {
+		if s.Track < 0 || s.Track >= len(r.Tracks) {
+			t.Fatalf("source %d is track %d of %d", i+1, s.Track, len(r.Tracks))
+		}
+		if e := rig.AngleBetween(r.Tracks[s.Track].Knots[0].Direction, s.Direction) / deg; e > 3 {
+			t.Errorf("source %d lies %.1f° from its track %d", i+1, e, s.Track)
+		}
 	}
 }
 
