@@ -50,6 +50,11 @@ func runnable(src audio.Source, f *Filters) error {
 	if format.Rate != f.Rate {
 		return fmt.Errorf("beam: filters for %d frames per second for a source of %d", f.Rate, format.Rate)
 	}
+	for m, start := range f.Start { // before they are added to, which could overflow
+		if start < -largestSpan || start > largestSpan {
+			return fmt.Errorf("beam: filter of microphone %d reaches from frame %d: want at most %d either way", m+1, start, largestSpan)
+		}
+	}
 	from, to := f.Span()
 	if from < -largestSpan || to > largestSpan || to-from > largestSpan {
 		return fmt.Errorf("beam: filters reach from frame %d to %d: want at most %d either way", from, to, largestSpan)
