@@ -47,7 +47,7 @@ var reasonWords = map[measure.Reason]string{
 	measure.NoTarget:      "no stretch with the target is known; give --target A..B",
 	measure.TooShort:      "the stretches are too short for the band; give longer ones",
 	measure.Silent:        "there is no sound in the band",
-	measure.NotAboveNoise: "the level with the target does not exceed the noise significantly",
+	measure.NotAboveNoise: "the level with the target does not exceed the noise significantly; their noise is not in the overall SNR gain either",
 }
 
 // reasons adds a finding for each reason that figures are missing for.

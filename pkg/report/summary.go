@@ -52,10 +52,10 @@ func Summary(w io.Writer, r *pipeline.Result, width int) error {
 // direction in full would leave no room for the gain and its interval, it has a
 // line of its own after that.
 func headline(r *pipeline.Result, findings []pipeline.Finding, width int) []string {
-	line := fmt.Sprintf("%s: %s", directionWords(r), gainWords(r.Overall))
+	line := fmt.Sprintf("%s: %s", directionWords(r), gainWords(r))
 	var full []string
 	if text.StringWidthWithoutEscSequences(line) > width {
-		line = fmt.Sprintf("%s: %s", briefDirectionWords(r), gainWords(r.Overall))
+		line = fmt.Sprintf("%s: %s", briefDirectionWords(r), gainWords(r))
 		full = []string{cut("in full: "+directionWords(r), width)}
 	}
 	if len(findings) > 0 && findings[0].Severity != pipeline.Info {

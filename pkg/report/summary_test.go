@@ -94,6 +94,30 @@ func TestFirstLineKeepsTheGainBesideALongDirection(t *testing.T) {
 	}
 }
 
+// A gain over some of the bands is said to be one: the noise of the others is
+// not in it, and with that noise it would be smaller.
+func TestGainOfSomeBandsIsSaidToBeThat(t *testing.T) {
+	r := goodTake()
+	r.Findings = nil
+	for i := range 4 {
+		r.Bands[i].SNRGainDB, r.Bands[i].SNRGainCI95, r.Bands[i].TargetChangeDB = nil, nil, nil
+	}
+	if first, want := summary(t, r, 120)[0], "rig 60.0°, compass 042° true: SNR gain 7.9 dB (95 %: 7.2 to 8.6) in 22 of 26 bands"; first != want {
+		t.Errorf("got  %s\nwant %s", first, want)
+	}
+	if got, want := lead(r), "stands out by 7.9 dB (95 %: 7.2 to 8.6) more in 22 of 26 bands. In the other bands"; !strings.Contains(got, want) {
+		t.Errorf("lead %q, want %q in it", got, want)
+	}
+	r.Overall = pipeline.Overall{NoiseReductionDB: f(4)}
+	r.Bands[0].NoiseReductionDB = nil
+	if first, want := summary(t, r, 120)[0], "noise reduction 4.0 dB in 25 of 26 bands"; !strings.HasSuffix(first, want) {
+		t.Errorf("got  %s\nwant %s", first, want)
+	}
+	if got := lead(goodTake()); strings.Contains(got, "other bands") {
+		t.Errorf("all bands are measured: %q", got)
+	}
+}
+
 func TestSummaryKeepsItsLinesAndItsWidth(t *testing.T) {
 	r := goodTake()
 	long := strings.Repeat("a finding that goes on and on about 音 and so forth ", 12)

@@ -65,10 +65,14 @@ func lead(r *pipeline.Result) string {
 	o := r.Overall
 	switch {
 	case o.SNRGainDB != nil:
+		where := partWords(r.Bands, func(b pipeline.Band) bool { return b.SNRGainDB != nil })
 		if *o.SNRGainDB > -0.05 {
-			parts = append(parts, fmt.Sprintf("Against the mean microphone the wanted sound stands out by %s more.", withInterval(o.SNRGainDB, o.SNRGainCI95)))
+			parts = append(parts, fmt.Sprintf("Against the mean microphone the wanted sound stands out by %s more%s.", withInterval(o.SNRGainDB, o.SNRGainCI95), where))
 		} else {
-			parts = append(parts, fmt.Sprintf("Against the mean microphone the wanted sound stands out less: the SNR gain is %s.", withInterval(o.SNRGainDB, o.SNRGainCI95)))
+			parts = append(parts, fmt.Sprintf("Against the mean microphone the wanted sound stands out less: the SNR gain is %s%s.", withInterval(o.SNRGainDB, o.SNRGainCI95), where))
+		}
+		if where != "" {
+			parts = append(parts, "In the other bands it does not come out of the noise, whose part there is not in that figure.")
 		}
 		if o.NoiseReductionDB != nil && o.TargetChangeDB != nil {
 			parts = append(parts, fmt.Sprintf("The noise %s, the wanted sound %s.", changeWords(-*o.NoiseReductionDB), changeWords(*o.TargetChangeDB)))

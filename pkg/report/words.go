@@ -102,15 +102,31 @@ func briefDirectionWords(r *pipeline.Result) string {
 	return directionWords(&pipeline.Result{Steer: pipeline.Steer{AzimuthDeg: r.Steer.AzimuthDeg, ElevationDeg: r.Steer.ElevationDeg}})
 }
 
-// gainWords returns the overall figure that counts, with its interval.
-func gainWords(o pipeline.Overall) string {
-	switch {
+// gainWords returns the overall figure that counts, with its interval, and in
+// how many bands it was measured unless in all of them: the noise of the others
+// is not in it.
+func gainWords(r *pipeline.Result) string {
+	switch o := r.Overall; {
 	case o.SNRGainDB != nil:
-		return "SNR gain " + withInterval(o.SNRGainDB, o.SNRGainCI95)
+		return "SNR gain " + withInterval(o.SNRGainDB, o.SNRGainCI95) + partWords(r.Bands, func(b pipeline.Band) bool { return b.SNRGainDB != nil })
 	case o.NoiseReductionDB != nil:
-		return "noise reduction " + withInterval(o.NoiseReductionDB, o.NoiseReductionCI95)
+		return "noise reduction " + withInterval(o.NoiseReductionDB, o.NoiseReductionCI95) + partWords(r.Bands, func(b pipeline.Band) bool { return b.NoiseReductionDB != nil })
 	}
 	return "gain not measured"
+}
+
+// partWords says how many of the bands are measured, nothing where all are.
+func partWords(bands []pipeline.Band, measured func(pipeline.Band) bool) string {
+	n := 0
+	for _, b := range bands {
+		if measured(b) {
+			n++
+		}
+	}
+	if n == len(bands) {
+		return ""
+	}
+	return fmt.Sprintf(" in %d of %d bands", n, len(bands))
 }
 
 // sortedFindings returns the findings, errors first, then warnings, then
