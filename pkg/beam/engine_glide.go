@@ -25,8 +25,8 @@ type Glide struct {
 	LargestDelay float64
 	// Delays writes to delays the arrival of the wave at each microphone
 	// against the reference point, seconds, at a knot: a frame 0, Every,
-	// 2·Every, ... It is called once for each, in turn, up to one knot past
-	// the last frame.
+	// 2·Every, ... It is called once for each, in turn, up to the next
+	// multiple of 1024 from the last frame on, which is past the end.
 	Delays func(frame int64, delays []float64)
 }
 
