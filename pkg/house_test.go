@@ -70,7 +70,7 @@ func checkHouse(root fs.FS) ([]string, error) {
 			}
 			return nil
 		}
-		if !d.Type().IsRegular() {
+		if !d.Type().IsRegular() || name == ".git" { // a second working tree has a file of that name
 			return nil
 		}
 		data, err := fs.ReadFile(root, name)
