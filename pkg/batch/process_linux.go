@@ -1,7 +1,9 @@
 package batch
 
 import (
+	"errors"
 	"fmt"
+	"io/fs"
 	"os"
 	"strconv"
 	"strings"
@@ -17,20 +19,26 @@ func here() string {
 	return digest([]byte(host + "\x00" + string(boot) + "\x00" + space))[:12]
 }
 
-// startOf returns when a process of here began, in ticks of the machine, and
-// whether it is there.
-func startOf(pid int) (string, bool) {
+// startOf returns when a process of here began, in ticks of the machine. The
+// error is fs.ErrNotExist where there is none.
+func startOf(pid int) (string, error) {
 	text, err := os.ReadFile(fmt.Sprintf("/proc/%d/stat", pid))
+	if errors.Is(err, syscall.ESRCH) { // it ended while it was read
+		return "", fs.ErrNotExist
+	}
 	if err != nil {
-		return "", false
+		return "", err
 	}
 	// The name in brackets may hold anything: count from behind it.
 	_, rest, ok := strings.Cut(string(text[strings.LastIndexByte(string(text), ')')+1:]), " ")
 	fields := strings.Fields(rest)
-	if !ok || len(fields) < 20 || fields[0] == "Z" || fields[0] == "X" {
-		return "", false
+	if !ok || len(fields) < 20 {
+		return "", fmt.Errorf("/proc/%d/stat: %d fields", pid, len(fields))
 	}
-	return fields[19], true
+	if fields[0] == "Z" || fields[0] == "X" {
+		return "", fs.ErrNotExist
+	}
+	return fields[19], nil
 }
 
 // freeBytes returns how many bytes an ordinary user may still write in the file
@@ -50,17 +58,24 @@ func runMark() string {
 	return here() + "-" + strconv.Itoa(pid) + "-" + start
 }
 
-// ended reports whether the process that a mark names is known to have ended.
-// Of one on another machine nothing is known.
-func ended(mark string) bool {
+// fateOf says what became of the process that a mark names. Of one on another
+// machine nothing is known.
+func fateOf(mark string) fate {
 	parts := strings.SplitN(mark, "-", 4)
 	if len(parts) < 3 || parts[0] != here() {
-		return false
+		return isUnknown
 	}
 	pid, err := strconv.Atoi(parts[1])
 	if err != nil {
-		return false
+		return isUnknown
 	}
-	start, running := startOf(pid)
-	return !running || start != parts[2]
+	switch start, err := startOf(pid); {
+	case errors.Is(err, fs.ErrNotExist):
+		return hasEnded
+	case err != nil || parts[2] == "":
+		return isUnknown
+	case start != parts[2]:
+		return hasEnded
+	}
+	return isRunning
 }

@@ -13,9 +13,9 @@ func runMark() string {
 	return digest([]byte(host))[:12] + "-" + strconv.Itoa(os.Getpid()) + "-0"
 }
 
-// ended returns false: whether another process still runs is not known here, so
-// what it left is removed when a merge finds everything done.
-func ended(string) bool { return false }
+// fateOf knows nothing: whether another process still runs cannot be told here,
+// so what it left is removed when a merge finds everything done.
+func fateOf(string) fate { return isUnknown }
 
 // freeBytes returns false: how much room is left cannot be told here.
 func freeBytes(string) (int64, bool) { return 0, false }

@@ -134,9 +134,7 @@ func (r *run) all(ctx context.Context) error {
 	if err := os.MkdirAll(r.s.Out, 0o777); err != nil {
 		return trouble(err)
 	}
-	if err := sweep(r.s.Out, false); err != nil {
-		return trouble(err)
-	}
+	sweep(r.s.Out, false)
 	resume, err := newResume(r.plan, &r.s)
 	if err != nil {
 		return trouble(err)
@@ -402,6 +400,10 @@ func (r *run) outcome(ctx context.Context, t Take, dir string) (*Outcome, error)
 	report, err := r.guarded(work, Assignment{Take: t, Recipe: recipe, Root: r.s.Root, Folder: dir, Step: r.step(t)})
 	if ctx.Err() != nil {
 		return nil, context.Cause(ctx)
+	}
+	if _, gone := os.Lstat(dir); err != nil && errors.Is(gone, fs.ErrNotExist) {
+		// Not the take's fault: a merge elsewhere found all of its takes done.
+		return nil, &openError{fmt.Errorf("the staging folder went away during the work: %w", err)}
 	}
 	after, serr := r.s.stat(t)
 	var crash *crashError

@@ -7,11 +7,22 @@ import (
 	"os"
 	"path/filepath"
 	"strings"
+	"sync/atomic"
 )
 
 // stagingFolder holds what is not yet committed, below the output folder: a
 // folder for each run, in it one for each take in work.
 const stagingFolder = ".staging"
+
+// fate is what is known of the process of a run.
+type fate int
+
+// The fates.
+const (
+	isUnknown fate = iota
+	isRunning
+	hasEnded
+)
 
 // staging is the folder of one run.
 type staging struct {
@@ -51,7 +62,8 @@ func (s *staging) begin(key string) (string, error) {
 	if err := os.RemoveAll(dir); err != nil {
 		return "", err
 	}
-	return dir, os.Mkdir(dir, 0o777)
+	// With the folder of the run, should a merge have swept that away.
+	return dir, os.MkdirAll(dir, 0o777)
 }
 
 // drop removes the folder of a take.
@@ -75,6 +87,9 @@ func (s *staging) inWork(key string) bool {
 	return false
 }
 
+// sweptMark is in the names of folders that are being removed.
+const sweptMark = "-swept-"
+
 // otherRuns are the staging folders of runs other than own that may be alive.
 func otherRuns(out, own string) (names []string) {
 	entries, err := os.ReadDir(filepath.Join(out, stagingFolder))
@@ -82,29 +97,44 @@ func otherRuns(out, own string) (names []string) {
 		return nil
 	}
 	for _, e := range entries {
-		if e.Name() != own && !ended(e.Name()) {
+		if e.Name() != own && fateOf(e.Name()) != hasEnded && !strings.Contains(e.Name(), sweptMark) {
 			names = append(names, e.Name())
 		}
 	}
 	return names
 }
 
-// sweep removes what runs left that are known to have ended, and with all
-// whatever there is.
-func sweep(out string, all bool) error {
+// sweep removes what runs left that are known to have ended, and with unknown
+// what those left of which nothing is known. A run that is known to be at work
+// keeps its folder and removes it itself. What cannot be removed stays: it is in
+// nobody's way, and the next sweep tries again.
+func sweep(out string, unknown bool) {
 	top := filepath.Join(out, stagingFolder)
 	entries, err := os.ReadDir(top)
-	if errors.Is(err, fs.ErrNotExist) {
-		return nil
+	if err != nil {
+		return
 	}
 	for _, e := range entries {
-		if all || ended(e.Name()) {
-			err = errors.Join(err, os.RemoveAll(filepath.Join(top, e.Name())))
+		if fate := fateOf(e.Name()); fate == isRunning || fate == isUnknown && !unknown {
+			continue
 		}
+		at := filepath.Join(top, e.Name())
+		if !strings.Contains(e.Name(), sweptMark) {
+			// Under another name first: whoever still works there, on a machine
+			// that is not seen from here, can put nothing into a folder that is
+			// being emptied, and finds all of it gone at once.
+			swept := filepath.Join(top, fmt.Sprintf("%s%s%d", runMark(), sweptMark, sweeps.Add(1)))
+			if os.Rename(at, swept) == nil {
+				at = swept
+			}
+		}
+		_ = os.RemoveAll(at) // another run may be doing the same
 	}
 	_ = os.Remove(top) // stays while others use it
-	return err
 }
+
+// sweeps counts the folders that this process swept.
+var sweeps atomic.Int64
 
 // errOthers says that another run committed the take first.
 var errOthers = errors.New("committed by another run")
@@ -160,6 +190,9 @@ func (s *staging) commit(dir string, o, before *Outcome) (size int64, err error)
 // setAside moves the result that a new one replaces into the staging folder of
 // the run. A result that came meanwhile goes back.
 func (s *staging) setAside(final string, before *Outcome) error {
+	if now, err := ReadOutcome(s.out, before.Take); err == nil && now.Sum != before.Sum {
+		return errOthers
+	}
 	aside := filepath.Join(s.path, "replaced-"+short(before.Take))
 	if err := os.RemoveAll(aside); err != nil {
 		return err

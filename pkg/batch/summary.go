@@ -126,9 +126,7 @@ func Merge(plan *Plan, m MergeSettings) (*Summary, error) {
 		return nil, trouble(err)
 	}
 	if s.Complete() {
-		if err := sweep(m.Out, true); err != nil {
-			return nil, trouble(err)
-		}
+		sweep(m.Out, true)
 	}
 	s.Trend = trendOf(m.Out, s)
 	return s, nil
