@@ -119,7 +119,7 @@ func badTakes() map[string][]byte {
 
 // ALIDADE_LONG=1 runs four hundred takes.
 func TestANightWithBadTakesIsTheSameByAnyWorkersAndParts(t *testing.T) {
-	n := 30
+	n := 12
 	if long() {
 		n = 380
 	}
@@ -175,7 +175,7 @@ func TestANightWithBadTakesIsTheSameByAnyWorkersAndParts(t *testing.T) {
 // The process group of a batch is killed at random moments. ALIDADE_LONG=1
 // kills a hundred times over sixty takes.
 func TestABatchKilledAtRandomMomentsEndsAsAnUndisturbedOne(t *testing.T) {
-	n, kills := 30, 8
+	n, kills := 16, 5
 	if long() {
 		n, kills = 60, 100
 	}
@@ -184,7 +184,7 @@ func TestABatchKilledAtRandomMomentsEndsAsAnUndisturbedOne(t *testing.T) {
 		t.Fatalf("exit code %d\n%s", code, errs)
 	}
 	rng := rand.New(rand.NewPCG(11, 7))
-	perRound := 5 // kills until the night begins anew
+	perRound := 3 // kills until the night begins anew
 	for k := range kills {
 		if k%perRound == 0 && k > 0 {
 			if code, _, errs := y.batch("night.yaml", "--quiet"); code != 0 {
@@ -209,7 +209,7 @@ func TestABatchKilledAtRandomMomentsEndsAsAnUndisturbedOne(t *testing.T) {
 }
 
 func TestTwoBatchesAtOnceShareTheNight(t *testing.T) {
-	y := newNight(t, 24, 48000)
+	y := newNight(t, 16, 36000)
 	type end struct {
 		code      int
 		out, errs string
@@ -224,13 +224,13 @@ func TestTwoBatchesAtOnceShareTheNight(t *testing.T) {
 	committed := 0
 	for range 2 {
 		e := <-ends
-		if e.code != 0 || !strings.Contains(e.out, "24 takes, 24 done") {
+		if e.code != 0 || !strings.Contains(e.out, "16 takes, 16 done") {
 			t.Errorf("exit code %d\n%s%s", e.code, e.out, e.errs)
 		}
 		committed += strings.Count(e.errs, `"state":"done"`)
 	}
-	if committed != 24 {
-		t.Errorf("24 takes were committed %d times", committed)
+	if committed != 16 {
+		t.Errorf("16 takes were committed %d times", committed)
 	}
 	if code, _, errs := y.batch("night.yaml", "--out", "alone", "--quiet"); code != 0 {
 		t.Fatalf("exit code %d\n%s", code, errs)

@@ -55,6 +55,8 @@ func TestScripts(t *testing.T) {
 		},
 		Condition: func(cond string) (bool, error) {
 			switch cond {
+			case "long":
+				return os.Getenv("ALIDADE_LONG") == "1", nil
 			case "devfull":
 				_, err := os.Stat("/dev/full")
 				return err == nil, nil
