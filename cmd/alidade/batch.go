@@ -44,6 +44,9 @@ Options
   --part K/N         this part of a plan (default: the array index that Slurm,
                      Kubernetes, AWS, Google, PBS, LSF or SGE gives; else all)
   --retry-failed     make failed takes again
+  --need-room        begin nothing (exit code 75) where the outputs of all takes
+                     may need more room than there is; without it that is said,
+                     and the batch goes as far as it gets
   --root DIR         the folder of the takes, where it is another one here
   --out DIR          the output folder, where it is another one here
   --max-restarts N   exit code 3 in place of 75 when the engine has started the
@@ -92,7 +95,7 @@ func batchVerb() verb {
 		flags: func() []cli.Flag {
 			return []cli.Flag{
 				&cli.Float64Flag{Name: "workers"}, &cli.Float64Flag{Name: "memory-mib"}, &cli.StringFlag{Name: "part"},
-				&cli.BoolFlag{Name: "retry-failed"}, &cli.StringFlag{Name: "root"}, &cli.StringFlag{Name: "out"},
+				&cli.BoolFlag{Name: "retry-failed"}, &cli.BoolFlag{Name: "need-room"}, &cli.StringFlag{Name: "root"}, &cli.StringFlag{Name: "out"},
 				&cli.Float64Flag{Name: "max-restarts", Value: 5}, &cli.BoolFlag{Name: "bad-takes-done"},
 				&cli.BoolFlag{Name: "json"}, &cli.BoolFlag{Name: "quiet"},
 			}
@@ -181,7 +184,7 @@ func runBatch(u *ui, c *cli.Context) error {
 	if c.NArg() != 1 {
 		return &usageError{fmt.Errorf("batch: %d files, want one job file or plan", c.NArg()), "alidade batch --help shows an example"}
 	}
-	s := batch.Settings{Now: u.now, RetryFailed: c.Bool("retry-failed"), Workers: runtime.NumCPU()}
+	s := batch.Settings{Now: u.now, RetryFailed: c.Bool("retry-failed"), NeedRoom: c.Bool("need-room"), Workers: runtime.NumCPU()}
 	if n, err := strconv.Atoi(u.env("SLURM_CPUS_PER_TASK")); err == nil && n > 0 {
 		s.Workers = n
 	}

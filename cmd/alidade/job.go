@@ -29,20 +29,15 @@ const jobSchemaID = "urn:alidade:schema:job:1"
 // those of takes to its root.
 type jobFile struct {
 	Rig       string      `json:"rig,omitempty" jsonschema_description:"rig file of all takes that no entry of rigs matches"`
-	Rigs      []rigChoice `json:"rigs,omitempty" jsonschema_description:"rig files by the paths of takes; the first match counts"`
+	Rigs      []rigChoice `json:"rigs,omitempty" jsonschema_description:"rig files by the paths of takes or by what their files say of themselves; the first entry that fits counts"`
 	Root      string      `json:"root,omitempty" jsonschema_description:"folder that the paths of takes are relative to; the folder of the job file if absent"`
 	Takes     []string    `json:"takes" jsonschema:"minItems=1" jsonschema_description:"patterns of paths: * within a name, ** for any folders, {ch} for the channel number of a set of files"`
 	Exclude   []string    `json:"exclude,omitempty" jsonschema_description:"patterns of paths that are left out"`
 	Steer     jobSteer    `json:"steer" jsonschema_description:"the options of alidade steer by their long names with _ for -"`
 	Outputs   jobOutputs  `json:"outputs,omitempty" jsonschema_description:"what is written, and where"`
 	Limits    jobLimits   `json:"limits,omitempty" jsonschema_description:"what a take must keep; one that does not is kept and counted as missed"`
-	Overrides string      `json:"overrides,omitempty" jsonschema_description:"CSV file with a column take and a column for each option that some takes have otherwise"`
+	Overrides string      `json:"overrides,omitempty" jsonschema_description:"CSV file with a column take and a column for each option that some takes have otherwise; it counts before the files TAKE.alidade.yaml beside the takes (alidade schema sidecar)"`
 	TimeoutS  float64     `json:"timeout_s,omitempty" jsonschema:"minimum=0" jsonschema_description:"seconds that a take may need; 0 is no limit"`
-}
-
-type rigChoice struct {
-	Match string `json:"match" jsonschema_description:"pattern of a take's path or of its file's name"`
-	Rig   string `json:"rig" jsonschema_description:"rig file"`
 }
 
 // jobSteer are the options of steer; a direction may stand there as a number.
@@ -53,7 +48,7 @@ type jobSteer struct {
 
 type jobOutputs struct {
 	Folder  string   `json:"folder,omitempty" jsonschema_description:"output folder; out if absent"`
-	Name    string   `json:"name,omitempty" jsonschema_description:"folder of a take in it: {take} its path without ending, {folder}, {file} and {rig}; {take} if absent"`
+	Name    string   `json:"name,omitempty" jsonschema_description:"folder of a take in it: {take} its path without ending, or its parts {folder} and {file}; {rig} the rig file's name, {date} the day of its metadata or undated, {direction} where the beam points, as in the track's name; {take} if absent"`
 	Format  string   `json:"format,omitempty" jsonschema:"enum=auto,enum=pcm16,enum=pcm24,enum=float32" jsonschema_description:"format of the track"`
 	Reports []string `json:"reports,omitempty" jsonschema:"enum=json,enum=csv,enum=html" jsonschema_description:"report files; all of them if absent"`
 }
@@ -80,6 +75,7 @@ type job struct {
 	path      string
 	base      string // its folder
 	overrides []override
+	beside    map[string]*override // of the files beside the takes, by their paths without ending
 }
 
 // override is a line of the overrides.
@@ -87,6 +83,7 @@ type override struct {
 	take    string // path or key
 	rig     string
 	options map[string]any
+	limits  jobLimits
 	used    bool
 }
 
@@ -97,6 +94,21 @@ var jobOptions = map[string]string{
 	"reports":   "outputs.reports says which",
 	"format":    "outputs.format says which",
 	"chain":     "takes of a job are found: find_chain finds the files of a chain",
+}
+
+// groupOptions say which files a take has: that holds for a whole job.
+var groupOptions = map[string]string{
+	"find_chain": "the job says for all its takes whether chains are looked for",
+	"find_set":   "sets are found by themselves",
+}
+
+// settle makes a direction that stands as a number a text.
+func (s *jobSteer) settle() {
+	if n, ok := s.Toward.(float64); ok {
+		s.Options.Toward = strconv.FormatFloat(n, 'f', -1, 64)
+	} else {
+		s.Options.Toward, _ = s.Toward.(string)
+	}
 }
 
 // readJob reads a job file and its overrides. All faults come together.
@@ -116,11 +128,7 @@ func readJob(name string) (*job, error) {
 	doc := sheet.Parse(name, data, schema)
 	j := &job{path: name, base: filepath.Dir(name)}
 	doc.Fill(&j.jobFile)
-	if n, ok := j.Steer.Toward.(float64); ok {
-		j.Steer.Options.Toward = strconv.FormatFloat(n, 'f', -1, 64)
-	} else {
-		j.Steer.Options.Toward, _ = j.Steer.Toward.(string)
-	}
+	j.Steer.settle()
 	for _, option := range sortedKeys(jobOptions) {
 		if at := "steer." + option; doc.Has(at) {
 			doc.KeyFault(at, "%s", jobOptions[option])
@@ -136,6 +144,8 @@ func readJob(name string) (*job, error) {
 	if j.Rig == "" && len(j.Rigs) == 0 {
 		doc.Fault("", "neither rig nor rigs is given")
 	}
+	j.checkRigChoices(doc)
+	j.checkName(doc)
 	folder := j.folder()
 	if filepath.IsAbs(folder) || !filepath.IsLocal(folder) || folder == "." {
 		doc.Fault("outputs.folder", "%q: want a folder below that of the job file (alidade batch --out takes any)", folder)
@@ -192,7 +202,12 @@ func (j *job) root() string {
 
 // recipe is the recipe of a take with the given override, nil for none.
 func (j *job) recipe(o *override) jobRecipe {
-	r := jobRecipe{Steer: j.Steer.Options, Reports: j.Outputs.Reports, Limits: j.Limits}
+	r := jobRecipe{Reports: j.Outputs.Reports, Limits: j.Limits}
+	// A copy: what is decoded over it below must not reach the job's own lists
+	// and numbers.
+	if text, err := json.Marshal(j.Steer.Options); err != nil || json.Unmarshal(text, &r.Steer) != nil {
+		return jobRecipe{}
+	}
 	r.Steer.Format = j.Outputs.Format
 	if r.Reports == nil {
 		r.Reports = []string{pipeline.ReportJSON, pipeline.ReportCSV, reportHTML}
@@ -203,7 +218,24 @@ func (j *job) recipe(o *override) jobRecipe {
 	if r.Limits.FailOn == "" {
 		r.Limits.FailOn = failError
 	}
+	if o != nil {
+		if o.limits.FailOn != "" {
+			r.Limits.FailOn = o.limits.FailOn
+		}
+		if o.limits.MinimumSNRGainDB != nil {
+			r.Limits.MinimumSNRGainDB = o.limits.MinimumSNRGainDB
+		}
+	}
 	if o != nil && len(o.options) > 0 {
+		// A beam points to one place: the other says so no more.
+		_, toward := o.options["toward"]
+		_, focus := o.options["focus"]
+		switch {
+		case focus && !toward:
+			r.Steer.Toward = ""
+		case toward && !focus:
+			r.Steer.Focus = ""
+		}
 		// By way of JSON, whose keys the options have; the values fit: they were
 		// parsed for the fields.
 		text, err := json.Marshal(o.options)
@@ -223,7 +255,9 @@ func steerFields() map[string]reflect.Type {
 	t := reflect.TypeFor[pipeline.Options]()
 	for k := range t.NumField() {
 		name, _, _ := strings.Cut(t.Field(k).Tag.Get("json"), ",")
-		if _, other := jobOptions[name]; name != "-" && name != "" && (!other || name == "format") {
+		_, other := jobOptions[name]
+		_, grouping := groupOptions[name]
+		if name != "-" && name != "" && !grouping && (!other || name == "format") {
 			fields[name] = t.Field(k).Type
 		}
 	}
@@ -298,22 +332,6 @@ func valueOf(text string, t reflect.Type) (any, error) {
 		return strings.Split(text, ";"), nil
 	}
 	return text, nil
-}
-
-// rigFor is the rig file of a take.
-func (j *job) rigFor(take string, o *override) (string, error) {
-	if o != nil && o.rig != "" {
-		return o.rig, nil
-	}
-	for _, c := range j.Rigs {
-		if batch.Match(c.Match, take) || batch.Match(c.Match, path.Base(take)) {
-			return c.Rig, nil
-		}
-	}
-	if j.Rig == "" {
-		return "", fmt.Errorf("%s: no entry of rigs matches it, and no rig is given for the others", take)
-	}
-	return j.Rig, nil
 }
 
 // rigState is a rig file with everything it names, as a hash, and how many

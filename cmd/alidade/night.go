@@ -2,6 +2,7 @@ package main
 
 import (
 	"encoding/json"
+	"fmt"
 	"time"
 
 	"alidade/pkg/batch"
@@ -39,6 +40,8 @@ type event struct {
 	Standing int         `json:"standing,omitempty"`
 	Others   int         `json:"other_runs,omitempty"`
 	Open     *int        `json:"open,omitempty"`
+	Need     int64       `json:"need_bytes,omitempty"`
+	Free     *int64      `json:"free_bytes,omitempty"`
 }
 
 func (w *nightWatch) say(e event) {
@@ -59,6 +62,12 @@ func (w *nightWatch) observer() batch.Observer {
 				w.u.remark("another run is at work in this folder: the takes are shared")
 			}
 			w.say(event{Event: "begun", Takes: takes, Standing: standing, Others: others})
+		},
+		Short: func(need, free int64) {
+			if w.bar != nil || w.quiet {
+				w.u.remark("alidade: %s", shortWords(need, free))
+			}
+			w.say(event{Event: "short-of-room", Need: need, Free: &free})
 		},
 		Step: func(t batch.Take, stage string, done, total int64) {
 			if now := w.u.now(); now.Sub(w.standby) >= statusEvery {
@@ -85,6 +94,11 @@ func (w *nightWatch) observer() batch.Observer {
 			w.say(event{Event: "open", Take: t.Key, Error: err.Error()})
 		},
 	}
+}
+
+// shortWords says that the outputs may not find room.
+func shortWords(need, free int64) string {
+	return fmt.Sprintf("the outputs need up to %.1f MB, %.1f MB are free", float64(need)/1e6, float64(free)/1e6)
 }
 
 func (w *nightWatch) close() {

@@ -16,6 +16,8 @@ import (
 	"syscall"
 	"testing"
 	"time"
+
+	"alidade/pkg/batch"
 )
 
 // long says whether the long forms of tests run.
@@ -248,7 +250,14 @@ func TestABatchOnADiskThatFillsUpGoesOnWhenThereIsRoom(t *testing.T) {
 		t.Skipf("no tmpfs here: %v", err)
 	}
 	defer func() { y.check(syscall.Unmount(y.at("out"), 0)) }()
-	code, _, errs := y.batch("night.yaml")
+	code, _, errs := y.batch("night.yaml", "--need-room")
+	if code != 75 || !strings.Contains(errs, "the outputs of 12 takes need up to ") || !strings.Contains(errs, "nothing was begun") || len(y.tree("out")) > 0 {
+		t.Fatalf("without room for all: exit code %d\n%s", code, errs)
+	}
+	code, _, errs = y.batch("night.yaml")
+	if !strings.Contains(errs, `"event":"short-of-room","need_bytes":`) {
+		t.Errorf("not said ahead:\n%s", errs)
+	}
 	if code != 75 || !strings.Contains(errs, "no space left on device") || !strings.Contains(errs, "hint: free some room") {
 		t.Fatalf("full: exit code %d\n%s", code, errs)
 	}
@@ -259,7 +268,7 @@ func TestABatchOnADiskThatFillsUpGoesOnWhenThereIsRoom(t *testing.T) {
 		}
 	}
 	y.check(syscall.Mount("tmpfs", y.at("out"), "tmpfs", syscall.MS_REMOUNT, "size=20m"))
-	code, _, errs = y.batch("night.yaml")
+	code, _, errs = y.batch("night.yaml", "--need-room")
 	if code != 0 || done == 0 || !strings.Contains(errs, fmt.Sprintf(`"standing":%d`, done)) {
 		t.Fatalf("with room: exit code %d, %d stood\n%s", code, done, errs)
 	}
@@ -286,6 +295,23 @@ func TestANightThatLosesFilesNamesThem(t *testing.T) {
 	for _, want := range []string{"8 takes, 6 done, 0 missed a limit, 2 failed", lost + ": is not there any more", grown + ": changed from "} {
 		if code != 3 || !strings.Contains(out, want) {
 			t.Errorf("exit code %d, no %q in\n%s", code, want, out)
+		}
+	}
+	// No folder is larger than the plan has it.
+	text, err := os.ReadFile(y.at("night.plan.json"))
+	y.check(err)
+	p, err := batch.ReadPlan("night.plan.json", text)
+	y.check(err)
+	tree := y.tree("out")
+	for _, take := range p.Takes {
+		var size int64
+		for name, text := range tree {
+			if strings.HasPrefix(name, take.Key+"/") {
+				size += int64(len(text))
+			}
+		}
+		if size == 0 || size > take.OutputBytes {
+			t.Errorf("%s: %d bytes of outputs, %d planned", take.Key, size, take.OutputBytes)
 		}
 	}
 	// Planned anew, the one is made and the other is no take any more.

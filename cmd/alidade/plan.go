@@ -16,7 +16,6 @@ import (
 
 	"alidade/pkg/batch"
 	"alidade/pkg/pipeline"
-	"alidade/pkg/wav"
 )
 
 const planHelp = `alidade plan: what a batch will do, as a file
@@ -114,6 +113,13 @@ func runPlan(u *ui, c *cli.Context) error {
 		file.MemoryMiB = max(file.MemoryMiB, r.MemoryMiB)
 	}
 	u.remark("%s: %s", name, planWords(plan))
+	var need int64
+	for _, t := range plan.Takes {
+		need += t.OutputBytes
+	}
+	if free, ok := batch.FreeBytes(filepath.Join(j.base, j.folder())); ok && need > free {
+		u.remark("alidade: %s", shortWords(need, free))
+	}
 	if c.Bool("json") {
 		u.print(text.String())
 	}
@@ -191,6 +197,14 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 	if err != nil {
 		return nil, err
 	}
+	found = slices.DeleteFunc(found, func(f batch.File) bool {
+		beside := strings.HasSuffix(f.Path, sidecarEnding)
+		if beside {
+			left = append(left, batch.LeftOut{Path: f.Path, Reason: "settings of a take"})
+		}
+		return beside
+	})
+	slices.SortFunc(left, func(a, b batch.LeftOut) int { return strings.Compare(a.Path, b.Path) })
 	groups, err := groupTakes(j.root(), found, sets, j.Steer.FindChain)
 	if err != nil {
 		return nil, &usageError{err: err}
@@ -202,14 +216,23 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 	if len(groups) == 0 {
 		return nil, &usageError{fmt.Errorf("%s: no file below %s fits takes", j.path, j.root()), "the patterns are relative to root, or to the job file's folder"}
 	}
+	if err := u.readSidecars(j, groups); err != nil {
+		return nil, err
+	}
 	recipes := map[string]int{}
 	rigs := map[string]batch.Recipe{}
 	microphones := map[string]int{}
 	var faults []error
 	for _, g := range groups {
 		key := strings.TrimSuffix(g.name, path.Ext(g.name))
-		o := j.overrideOf(g.paths[0], g.name, key)
-		rigName, err := j.rigFor(g.name, o)
+		o := overrideOf(j.overrides, g.paths[0], g.name, key).over(j.beside[key])
+		recipe := j.recipe(o)
+		if err := recipe.Steer.Validate(); err != nil {
+			// Each for itself was right.
+			faults = append(faults, &usageError{fmt.Errorf("%s: overrides: %s: %s", j.path, g.name, strings.ReplaceAll(err.Error(), "\n", "; ")), ""})
+			continue
+		}
+		rigName, err := j.rigFor(g, o)
 		if err != nil {
 			faults = append(faults, &usageError{fmt.Errorf("%s: %w", j.path, err), ""})
 			break
@@ -229,7 +252,7 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 			microphones[rigName] = len(loaded.Mics)
 			rigs[rigName] = r
 		}
-		if r.Options, err = json.Marshal(j.recipe(o)); err != nil {
+		if r.Options, err = json.Marshal(recipe); err != nil {
 			return nil, err
 		}
 		id := rigName + "\x00" + string(r.Options)
@@ -241,18 +264,8 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 		}
 		take := batch.Take{Paths: g.paths, Files: g.files, Recipe: k}
 		d.Recipes[k].MemoryMiB = max(d.Recipes[k].MemoryMiB, memoryFor(microphones[rigName], take.Bytes()))
-		name := j.Outputs.Name
-		if name == "" {
-			name = "{take}"
-		}
-		rigBase := path.Base(filepath.ToSlash(rigName))
-		folder := path.Dir(key)
-		if folder == "." {
-			folder = ""
-		}
-		key = path.Clean(strings.NewReplacer("{take}", key, "{folder}", folder, "{file}", path.Base(key),
-			"{rig}", strings.TrimSuffix(rigBase, path.Ext(rigBase))).Replace(name))
-		take.Key = strings.TrimPrefix(key, "/")
+		take.Key = j.keyOf(g, rigName, recipe.Steer)
+		take.OutputBytes = roomFor(g, recipe)
 		d.Takes = append(d.Takes, take)
 	}
 	if len(faults) > 0 {
@@ -276,159 +289,14 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 func memoryFor(channels int, bytes int64) int { return 96 + 4*channels + int(24*(bytes>>20)>>10) }
 
 // overrideOf finds the override of a take by any of its names.
-func (j *job) overrideOf(names ...string) *override {
-	for k := range j.overrides {
-		if slices.Contains(names, j.overrides[k].take) {
-			j.overrides[k].used = true
-			return &j.overrides[k]
+func overrideOf(list []override, names ...string) *override {
+	for k := range list {
+		if slices.Contains(names, list[k].take) {
+			list[k].used = true
+			return &list[k]
 		}
 	}
 	return nil
-}
-
-// group is the files of one take.
-type group struct {
-	name  string // path that names it, with ending
-	paths []string
-	files []batch.File
-}
-
-// setPattern matches the names of the files of a set: before the number, the
-// number, behind it.
-func setPattern(pattern string) *regexp.Regexp {
-	before, behind, _ := strings.Cut(pattern, channelPlace)
-	glob := func(text string) string {
-		q := regexp.QuoteMeta(text)
-		q = strings.ReplaceAll(q, `\*`, `.*`)
-		q = strings.ReplaceAll(q, `\?`, `.`)
-		return q
-	}
-	return regexp.MustCompile(`^(` + glob(before) + `)([0-9]+)(` + glob(behind) + `)$`)
-}
-
-// groupTakes puts the files of each take together: sets by pattern, sets that
-// the metadata of one-channel files announces, and chains if they are looked
-// for.
-func groupTakes(root string, found []batch.File, sets []*regexp.Regexp, chains bool) ([]group, error) {
-	var groups []group
-	bySet := map[string]int{}
-	var single []batch.File
-	for _, f := range found {
-		dir, base := path.Split(f.Path)
-		k := slices.IndexFunc(sets, func(s *regexp.Regexp) bool { return s.MatchString(base) })
-		if k < 0 {
-			single = append(single, f)
-			continue
-		}
-		m := sets[k].FindStringSubmatch(base)
-		pattern := dir + m[1] + channelPlace + m[3]
-		at, ok := bySet[pattern]
-		if !ok {
-			at = len(groups)
-			bySet[pattern] = at
-			groups = append(groups, group{name: dir + strings.TrimRight(m[1], "_- .") + m[3], paths: []string{pattern}})
-		}
-		groups[at].files = append(groups[at].files, f)
-	}
-	byFolder := map[string][]batch.File{}
-	var folders []string
-	for _, f := range single {
-		dir := path.Dir(f.Path)
-		if byFolder[dir] == nil {
-			folders = append(folders, dir)
-		}
-		byFolder[dir] = append(byFolder[dir], f)
-	}
-	for _, dir := range folders {
-		list, err := groupFolder(root, byFolder[dir], chains)
-		if err != nil {
-			return nil, err
-		}
-		groups = append(groups, list...)
-	}
-	return groups, nil
-}
-
-// groupFolder does so for files of one folder. A file that cannot be read is a
-// take of its own: the batch will say what is wrong with it.
-func groupFolder(root string, files []batch.File, chains bool) ([]group, error) {
-	heads := make([]wav.File, len(files))
-	readable := make([]bool, len(files))
-	for k, f := range files {
-		heads[k], readable[k] = headOf(filepath.Join(root, filepath.FromSlash(f.Path)))
-	}
-	taken := make([]bool, len(files))
-	var groups []group
-	one := func(k int) group {
-		return group{name: files[k].Path, paths: []string{files[k].Path}, files: []batch.File{files[k]}}
-	}
-	var known []wav.File // readable ones, for chains
-	var at []int
-	for k := range files {
-		if readable[k] {
-			known, at = append(known, heads[k]), append(at, k)
-		}
-	}
-	for k := range files {
-		if taken[k] {
-			continue
-		}
-		g := one(k)
-		taken[k] = true
-		switch uid := announced(heads[k]); {
-		case !readable[k]:
-		case uid != "":
-			for i := range files {
-				if i != k && readable[i] && announced(heads[i]) == uid {
-					taken[i] = true
-					g.files = append(g.files, files[i])
-				}
-			}
-		case chains:
-			const most = 2000
-			if len(known) > most {
-				return nil, fmt.Errorf("%s: %d files: chains are looked for among at most %d in a folder", path.Dir(files[k].Path), len(known), most)
-			}
-			chain, err := wav.FindChain(known, slices.Index(at, k))
-			if err != nil {
-				return nil, err
-			}
-			for _, c := range chain[1:] {
-				if !taken[at[c]] {
-					taken[at[c]] = true
-					g.files = append(g.files, files[at[c]])
-				}
-			}
-		}
-		groups = append(groups, g)
-	}
-	return groups, nil
-}
-
-// headOf reads what a file says of itself.
-func headOf(name string) (wav.File, bool) {
-	file, err := openBounded(name, 1<<62)
-	if err != nil {
-		return wav.File{}, false
-	}
-	defer file.Close()
-	info, err := file.Stat()
-	if err != nil {
-		return wav.File{}, false
-	}
-	r, err := wav.Open(file, info.Size())
-	if err != nil {
-		return wav.File{}, false
-	}
-	return wav.FileOf(filepath.Base(name), r), true
-}
-
-// announced is the set that a one-channel file says it is of; empty for none.
-func announced(f wav.File) string {
-	if f.Header.Channels != 1 || f.Metadata == nil || f.Metadata.IXML == nil || f.Metadata.IXML.FileSet.TotalFiles == 1 {
-		return ""
-	}
-	return f.Metadata.IXML.FileSet.FamilyUID
 }
 
 // recipeOf reads the options of a recipe.

@@ -14,10 +14,11 @@ import (
 const schemaHelp = `alidade schema: the JSON Schema of a file the program reads or writes
 
 Usage
-  alidade schema rig|job|scenario|report
+  alidade schema rig|job|sidecar|scenario|report
 
   rig       the rig file: where the microphones stand, how they are calibrated
   job       the job file of alidade plan and alidade batch
+  sidecar   settings beside a take of a job, TAKE.alidade.yaml
   scenario  the scenario file of alidade simulate
   report    the report of alidade steer, <track>.report.json
 
@@ -46,7 +47,7 @@ type schema struct {
 }
 
 func schemas() []schema {
-	return []schema{{"rig", rig.Schema}, {"job", jobSchema}, {"scenario", scenario.Schema}, {"report", report.Schema}}
+	return []schema{{"rig", rig.Schema}, {"job", jobSchema}, {"sidecar", sidecarSchema}, {"scenario", scenario.Schema}, {"report", report.Schema}}
 }
 
 func runSchema(u *ui, c *cli.Context) error {

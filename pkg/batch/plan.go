@@ -53,6 +53,8 @@ type Take struct {
 	Files  []File   `json:"files"` // all files, with path and size
 	Recipe int      `json:"recipe"`
 	Part   int      `json:"part"` // from 0
+	// OutputBytes is what its outputs need at most; 0 is not known.
+	OutputBytes int64 `json:"output_bytes,omitempty"`
 }
 
 // Bytes is the size of all files of the take.
@@ -202,6 +204,9 @@ func (p *Plan) check() error {
 		folded[low] = t.Key
 		if t.Recipe < 0 || t.Recipe >= len(p.Recipes) {
 			fault("take %s: recipe %d of %d", t.Key, t.Recipe, len(p.Recipes))
+		}
+		if t.OutputBytes < 0 {
+			fault("take %s: outputs of %d bytes", t.Key, t.OutputBytes)
 		}
 		if len(t.Paths) == 0 || len(t.Files) == 0 {
 			fault("take %s: no files", t.Key)

@@ -10,6 +10,16 @@ import (
 	"syscall"
 )
 
+// freeBytes returns how many bytes an ordinary user may still write in the file
+// system of dir.
+func freeBytes(dir string) (int64, error) {
+	var s syscall.Statfs_t
+	if err := syscall.Statfs(dir, &s); err != nil {
+		return 0, err
+	}
+	return int64(s.Bavail) * s.Bsize, nil
+}
+
 // here names the set of processes that this one can see: machine, start of the
 // machine, and process namespace.
 func here() string {
@@ -39,16 +49,6 @@ func startOf(pid int) (string, error) {
 		return "", fs.ErrNotExist
 	}
 	return fields[19], nil
-}
-
-// freeBytes returns how many bytes an ordinary user may still write in the file
-// system of dir, and false where that cannot be told.
-func freeBytes(dir string) (int64, bool) {
-	var s syscall.Statfs_t
-	if err := syscall.Statfs(dir, &s); err != nil {
-		return 0, false
-	}
-	return int64(s.Bavail) * s.Bsize, true
 }
 
 // runMark names this process such that another can tell whether it still runs.

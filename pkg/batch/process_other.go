@@ -3,6 +3,7 @@
 package batch
 
 import (
+	"errors"
 	"os"
 	"strconv"
 )
@@ -17,5 +18,5 @@ func runMark() string {
 // so what it left is removed when a merge finds everything done.
 func fateOf(string) fate { return isUnknown }
 
-// freeBytes returns false: how much room is left cannot be told here.
-func freeBytes(string) (int64, bool) { return 0, false }
+// freeBytes fails: how much room is left cannot be told here.
+func freeBytes(string) (int64, error) { return 0, errors.ErrUnsupported }

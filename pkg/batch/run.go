@@ -54,7 +54,10 @@ type Settings struct {
 	MemoryMiB   int
 	Part        int // -1 is all of them
 	RetryFailed bool
-	Now         func() time.Time
+	// NeedRoom ends the run before its first take where the outputs of all its
+	// takes may not find room; otherwise it goes as far as it gets.
+	NeedRoom bool
+	Now      func() time.Time
 }
 
 // Tally counts takes.
@@ -76,6 +79,7 @@ func (t Tally) Bad() bool { return t.Missed+t.Failed+t.BadStanding > 0 }
 // Observer is told how a run goes on, one call at a time. Functions may be nil.
 type Observer struct {
 	Begun    func(takes, standing int, others int)                     // others: runs at work in the same folder
+	Short    func(need, free int64)                                    // the outputs may need more bytes than are free
 	Started  func(t Take)                                              // work on a take begins
 	Step     func(t Take, stage string, done, total int64)             // it goes on
 	Finished func(t Take, o *Outcome, took time.Duration, tally Tally) // it was committed; o is nil if by another run
@@ -168,6 +172,9 @@ func (r *run) all(ctx context.Context) error {
 	if len(r.queue) == 0 {
 		return nil
 	}
+	if err := r.lookAhead(); err != nil {
+		return err
+	}
 	if r.staging, err = newStaging(r.s.Out); err != nil {
 		return trouble(err)
 	}
@@ -187,6 +194,26 @@ func (r *run) all(ctx context.Context) error {
 		err = trouble(lerr)
 	}
 	return err
+}
+
+// lookAhead holds what the outputs of the queue need against what is free.
+func (r *run) lookAhead() error {
+	var need int64
+	for _, j := range r.queue {
+		need += j.take.OutputBytes
+	}
+	free, ok := FreeBytes(r.s.Out)
+	if !ok || need <= free {
+		return nil
+	}
+	if r.watch.Short != nil {
+		r.watch.Short(need, free)
+	}
+	if r.s.NeedRoom {
+		return &TroubleError{fmt.Errorf("output folder: the outputs of %d takes need up to %.1f MB, %.1f MB are free: nothing was begun", len(r.queue), float64(need)/1e6, float64(free)/1e6),
+			"free some room, and run again"}
+	}
+	return nil
 }
 
 // note writes into the ledger.

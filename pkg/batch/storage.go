@@ -49,7 +49,7 @@ func CheckStorage(dir string, now func() time.Time) (*StorageReport, error) {
 		return nil, fmt.Errorf("%s: not a folder", dir)
 	}
 	r := &StorageReport{Path: dir, Checks: []StorageCheck{}}
-	if free, ok := freeBytes(dir); ok {
+	if free, ok := FreeBytes(dir); ok {
 		r.FreeBytes = &free
 	}
 	add := func(name string, needed bool, err error, good string) bool {
@@ -79,6 +79,20 @@ func CheckStorage(dir string, now func() time.Time) (*StorageReport, error) {
 	add("the clock agrees", false, tryClock(file, now()), fmt.Sprintf("within %s", clockSlack))
 	add("upper and lower case differ", false, tryCase(at), "they do")
 	return r, nil
+}
+
+// FreeBytes returns how many bytes an ordinary user may still write in the file
+// system of dir, or of the folder that dir will be made in. It is false where
+// that cannot be told.
+func FreeBytes(dir string) (free int64, ok bool) {
+	for {
+		free, err := freeBytes(dir)
+		up := filepath.Dir(dir)
+		if err == nil || !errors.Is(err, fs.ErrNotExist) || up == dir {
+			return free, err == nil
+		}
+		dir = up
+	}
 }
 
 func trySyncFolder(at string) error {
