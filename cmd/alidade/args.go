@@ -130,6 +130,10 @@ func checkValue(f cli.Flag, value string) error {
 		if x, err := strconv.ParseFloat(value, 64); err != nil || math.IsNaN(x) || math.IsInf(x, 0) {
 			return fmt.Errorf("%s %q: not a number", name, value)
 		}
+	case *cli.IntFlag, *cli.Uint64Flag:
+		if _, err := strconv.ParseInt(value, 10, 63); err != nil {
+			return fmt.Errorf("%s %q: not a whole number", name, value)
+		}
 	default:
 		if strings.TrimSpace(value) == "" {
 			return fmt.Errorf("%s %q: an empty value", name, value)

@@ -3,6 +3,7 @@ package response
 import (
 	"math"
 
+	"alidade/pkg/acoustics"
 	"alidade/pkg/beam"
 	"alidade/pkg/rig"
 )
@@ -24,14 +25,23 @@ type Cut struct {
 // line the angle from its axis (0 to π; for a line along x and level, that is
 // the azimuth); for other rigs the azimuth at the elevation of look, or the
 // elevation through the zenith at the azimuth of look where look is steeper
-// than 60°.
+// than 60°; for a level flat rig, which cannot tell above from below, on look's
+// side of the rig only, 0 to π or -π to 0.
 func NewCut(mics []rig.Point, look rig.Direction) Cut {
 	g := rig.Spread(mics)
 	switch {
 	case g.Shape == rig.ShapeLine:
 		return axisCut(g.Axis, look, mics)
 	case math.Abs(look.Elevation) > math.Pi/3:
-		return ElevationCut(look)
+		c := ElevationCut(look)
+		if g.Shape == rig.ShapeFlat && math.Abs(g.Normal.Z) > 0.999 {
+			// The other side of a level rig is the image of this one.
+			c.Closed, c.Low, c.High = false, 0, math.Pi
+			if look.Elevation < 0 {
+				c.Low, c.High = -math.Pi, 0
+			}
+		}
+		return c
 	}
 	return AzimuthCut(look)
 }
@@ -78,4 +88,33 @@ func axisCut(axis rig.Point, look rig.Direction, mics []rig.Point) Cut {
 		c.uniform = spacing
 	}
 	return c
+}
+
+// CutDistance returns the distance from the reference point, metres, of the
+// sources that the figures of b along a cut are for: that of the point it is
+// steered to. ok is false for far sources: for a beam steered to a direction,
+// and for one steered to a point among its microphones, where a circle through
+// it would touch some.
+func (b Beam) CutDistance() (metres float64, ok bool) {
+	near, ok := b.Look.(acoustics.Spherical)
+	if !ok {
+		return 0, false
+	}
+	metres = near.At.Distance(b.Reference)
+	for _, p := range b.Mics {
+		if p.Distance(b.Reference) > 0.95*metres {
+			return 0, false
+		}
+	}
+	return metres, true
+}
+
+// CutWave returns the wave of a source at an angle of a cut: at CutDistance, or
+// far away.
+func (b Beam) CutWave(cut Cut, angle float64) acoustics.Wave {
+	from := cut.Toward(angle)
+	if metres, ok := b.CutDistance(); ok {
+		return acoustics.Spherical{At: b.Reference.Add(from.Unit().Scale(metres))}
+	}
+	return acoustics.Plane{From: from}
 }

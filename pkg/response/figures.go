@@ -52,7 +52,7 @@ type Figures struct {
 const nullDepth = 0.01
 
 // Predict returns the figures of the beam along the cut at each of the
-// frequencies, Hz above 0. The beam must be one that Validate passes.
+// frequencies, Hz above 0, for sources at CutDistance. The beam must be one that Validate passes.
 // Frequencies at which the beam does not respond to its steered
 // direction at all have nothing but gains.
 func (b Beam) Predict(cut Cut, hz []float64) []Figures {
@@ -120,7 +120,7 @@ func (b Beam) along(cut Cut, hz float64) *view {
 
 // power is the power at an angle of the cut re the steered direction.
 func (v *view) power(angle float64) float64 {
-	return power(v.beam.to(v.g, acoustics.Plane{From: v.cut.Toward(angle)}, v.hz)) / v.reference
+	return power(v.beam.to(v.g, v.beam.CutWave(v.cut, angle), v.hz)) / v.reference
 }
 
 // at returns the power of sample k, counted on beyond the ends of a closed cut,

@@ -44,6 +44,19 @@ func (b Beam) Expected(e Errors, w acoustics.Wave, hz float64) float64 {
 	return keep*power(b.to(g, w, hz)) + (1+e.Gain*e.Gain-keep)*sum
 }
 
+// ErrorFloor returns the mean power that such errors alone leave in every
+// direction at hz, re the mean power in the steered direction, without the error
+// of the temperature:
+//
+//	(1 + σg² - e^{-σφ²}) Σ|w_m|² / (e^{-σφ²}|B0|²)
+//
+// with B0 the response to the steered wave [Gilbert & Morgan 1955].
+func (b Beam) ErrorFloor(e Errors, hz float64) float64 {
+	g := b.Transfer.Response(nil, hz)
+	keep := math.Exp(-e.phase(hz, b.Speed))
+	return (1 + e.Gain*e.Gain - keep) * sumSquares(g) / (keep * power(b.to(g, b.Look, hz)))
+}
+
 // maxTrials bounds the trials of one call.
 const maxTrials = 100000
 
