@@ -41,7 +41,10 @@ type verb struct {
 
 // verbs are the commands in the order in which --help lists them.
 func verbs() []verb {
-	return []verb{demoVerb(), steerVerb(), predictVerb(), simulateVerb(), inspectVerb(), planVerb(), batchVerb(), mergeVerb(), checkStorageVerb(), schemaVerb()}
+	return []verb{
+		demoVerb(), steerVerb(), checkVerb(), predictVerb(), simulateVerb(), inspectVerb(),
+		planVerb(), batchVerb(), mergeVerb(), checkStorageVerb(), schemaVerb(),
+	}
 }
 
 // The exit codes.

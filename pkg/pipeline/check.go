@@ -1,0 +1,181 @@
+package pipeline
+
+import (
+	"context"
+	"fmt"
+
+	"alidade/pkg/audio"
+	"alidade/pkg/quality"
+	"alidade/pkg/rig"
+)
+
+// CheckResult is what an inspection of a take found, as plain data.
+type CheckResult struct {
+	Version   string         `json:"version"`
+	Take      Take           `json:"take"`
+	Rig       RigSummary     `json:"rig"`
+	State     string         `json:"state"` // good, caution or fault
+	Verdict   string         `json:"verdict"`
+	Windows   int            `json:"windows"`              // stretches that could be held against the geometry
+	NotJudged string         `json:"not_judged,omitempty"` // why polarity, order and delays were not judged
+	Channels  []CheckChannel `json:"channels"`
+	Findings  []CheckFinding `json:"findings"`
+}
+
+// CheckChannel is what was measured on one channel.
+type CheckChannel struct {
+	Channel          int      `json:"channel"`
+	Name             string   `json:"name"`
+	RMSDBFS          Number   `json:"rms_dbfs"`
+	PeakDBFS         Number   `json:"peak_dbfs"`
+	TruePeakDBFS     Number   `json:"true_peak_dbfs"`
+	ClippedFrames    int64    `json:"clipped_frames"`
+	DC               float64  `json:"dc"`
+	DropOuts         int64    `json:"drop_outs"`
+	RepeatedBlocks   int64    `json:"repeated_blocks"`
+	Thumps           int64    `json:"thumps"`
+	NoiseFloorDBFS   Number   `json:"noise_floor_dbfs"`
+	HumHz            Number   `json:"hum_hz"`
+	HumDBFS          Number   `json:"hum_dbfs"`
+	WindDBFS         Number   `json:"wind_dbfs"`
+	LevelDB          Number   `json:"level_db"` // against the middle channel, corrected
+	DelayUS          Number   `json:"delay_us"` // against the geometry, corrected
+	DriftPPM         Number   `json:"drift_ppm"`
+	MeanSquaredCoher Number   `json:"coherence"` // mean squared, with the other channels
+	Flags            []string `json:"flags"`
+}
+
+// CheckFinding is a finding with what stands behind it.
+type CheckFinding struct {
+	Code     string   `json:"code"`
+	Severity Severity `json:"severity"`
+	Message  string   `json:"message"`
+	Channels []int    `json:"channels,omitempty"`
+	Measured string   `json:"measured"`
+	Expected string   `json:"expected"`
+	Do       string   `json:"do"`
+}
+
+// Check inspects one take against its rig. Of the options it heeds those on
+// files and air. The errors are those of Run.
+func Check(ctx context.Context, spec Spec, limits quality.Limits, watch Watch) (res *CheckResult, err error) {
+	l, err := loadRig(spec.RigPath, spec.Options)
+	if err != nil {
+		return nil, err
+	}
+	t, err := openTake(spec.Take, spec.Options.joining(), true)
+	if err != nil {
+		return nil, err
+	}
+	defer func() { err = joinErrors(err, t.close()) }()
+	r := &run{ctx: ctx, spec: spec, rig: l, watch: watch, take: t}
+	if err := r.fits(); err != nil {
+		return nil, err
+	}
+	if err := r.sounds(); err != nil {
+		return nil, err
+	}
+	found, err := r.inspect(limits, t.header.Frames)
+	if err != nil {
+		return nil, err
+	}
+	res = &CheckResult{Version: spec.Version, Rig: l.summary(), State: found.State, Windows: found.Windows, NotJudged: found.NotJudged}
+	if res.Take, err = t.finish(); err != nil {
+		return nil, err
+	}
+	for _, c := range found.Channels {
+		out := CheckChannel{
+			Channel: c.Channel, Name: c.Name, RMSDBFS: number(c.RMSDBFS), PeakDBFS: number(c.PeakDBFS), TruePeakDBFS: number(c.TruePeakDBFS),
+			ClippedFrames: c.ClippedFrames, DC: c.DC, DropOuts: c.DropOuts, RepeatedBlocks: c.Repeats, Thumps: c.Thumps,
+			NoiseFloorDBFS: c.NoiseDBFS, HumDBFS: c.HumDBFS, WindDBFS: c.WindDBFS, LevelDB: c.LevelDB, DelayUS: c.DelayUS,
+			DriftPPM: c.DriftPPM, MeanSquaredCoher: c.Coherence, Flags: c.Flags,
+		}
+		if c.HumHz > 0 {
+			out.HumHz = number(c.HumHz)
+		}
+		res.Channels = append(res.Channels, out)
+	}
+	res.Findings = []CheckFinding{}
+	for _, f := range found.Findings {
+		res.Findings = append(res.Findings, CheckFinding{f.Code, Severity(f.Severity), f.Message(), f.Channels, f.Measured, f.Expected, f.Do})
+	}
+	for _, f := range t.findings() {
+		res.Findings = append(res.Findings, CheckFinding{Code: f.Code, Severity: f.Severity, Message: f.Message, Channels: f.Channels, Measured: f.Message})
+		if f.Severity == Warning && res.State == quality.Good {
+			res.State = quality.Caution
+		}
+	}
+	res.Verdict = verdict(res)
+	return res, nil
+}
+
+// sounds refuses a take without a frame.
+func (r *run) sounds() error {
+	h := r.take.header
+	if h.Frames > 0 {
+		return nil
+	}
+	return &HintedError{
+		Err:  fmt.Errorf("%s: holds no sound: its header promises %d channels at %d Hz, and no frame follows", r.take.path(), h.Channels, h.Rate),
+		Hint: "the recorder stopped before the first sound or the copy was cut off: copy it again, or leave it out",
+	}
+}
+
+// inspect looks at the first frames of the take, as it was recorded, with the
+// used microphones of the rig.
+func (r *run) inspect(limits quality.Limits, frames int64) (*quality.Result, error) {
+	var mics []rig.Mic
+	var order []int
+	for _, m := range r.rig.Used() {
+		mics = append(mics, r.rig.Mics[m])
+		order = append(order, r.rig.Mics[m].Channel-1)
+	}
+	q, err := quality.New(mics, r.take.header.Rate, quality.Options{Speed: r.rig.speed, Limits: limits})
+	if err != nil {
+		return nil, &UsageError{Err: err}
+	}
+	src := audio.Source(&watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("checking", frames)})
+	if frames < r.take.header.Frames {
+		src = audio.Section(src, 0, frames)
+	}
+	if src, err = audio.Map(src, order, nil); err != nil {
+		return nil, err
+	}
+	if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, r.take.header.Channels), q); err != nil {
+		return nil, err
+	}
+	if err := q.Close(); err != nil {
+		return nil, err
+	}
+	return q.Result(), nil
+}
+
+// verdict is the state in one line.
+func verdict(r *CheckResult) string {
+	errors, warnings := 0, 0
+	for _, f := range r.Findings {
+		switch f.Severity {
+		case Error:
+			errors++
+		case Warning:
+			warnings++
+		}
+	}
+	count := func(n int, what string) string {
+		if n == 1 {
+			return "1 " + what
+		}
+		return fmt.Sprintf("%d %ss", n, what)
+	}
+	judged := fmt.Sprintf("delays held against the rig over %s", count(r.Windows, "second"))
+	if r.NotJudged != "" {
+		judged = "order, polarity and delays not judged: " + r.NotJudged
+	}
+	switch {
+	case errors > 0:
+		return fmt.Sprintf("fault: %s and %s; %s", count(errors, "fault"), count(warnings, "warning"), judged)
+	case warnings > 0:
+		return fmt.Sprintf("caution: %s; %s", count(warnings, "warning"), judged)
+	}
+	return "good: nothing wrong was found; " + judged
+}
