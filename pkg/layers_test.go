@@ -31,6 +31,7 @@ var layers = map[string]struct {
 	"pkg/delay":                    {2, "shifts by fractions of a sample"},
 	"pkg/spectral":                 {2, "blocks into frequency and back"},
 	"pkg/beam":                     {3, "weights, and the beam they form"},
+	"pkg/postfilter":               {3, "gains that follow the sound, from what microphones have in common"},
 	"pkg/bearing":                  {3, "where sound comes from, over time"},
 	"pkg/measure":                  {3, "signals into numbers"},
 	"pkg/scenario/internal/voice":  {0, "a talker of our own making"},

@@ -58,6 +58,13 @@ How
                          the least white noise gain of such weights: 0, the
                          default, keeps the noise of the microphones
                          themselves as it is, -6 lets it rise by 6 dB
+  --reestimate-every S   find minimum-variance weights again from the noise
+                         of every S seconds, 0.5 or more, and cross-fade
+                         between them: for noise that moves
+  --postfilter NAME      none (default), white or diffuse: lower what is left
+                         of such noise by gains that follow the sound
+  --postfilter-floor-db DB
+                         its smallest gain, -15 if absent
   --undo-spreading       with --focus: undo the level differences of a near
                          source
   --highpass HZ          cut below HZ, in track and measurement alike
@@ -131,6 +138,9 @@ func steerFlags() []cli.Flag {
 		&cli.StringFlag{Name: "weights"},
 		&cli.StringSliceFlag{Name: "null"},
 		&cli.Float64Flag{Name: "white-noise-gain-floor-db"},
+		&cli.Float64Flag{Name: "reestimate-every"},
+		&cli.StringFlag{Name: "postfilter"},
+		&cli.Float64Flag{Name: "postfilter-floor-db"},
 		&cli.BoolFlag{Name: "undo-spreading"},
 		&cli.Float64Flag{Name: "highpass"},
 		&cli.Float64Flag{Name: "gain-db"},
@@ -195,6 +205,9 @@ func steerOptions(c *cli.Context) pipeline.Options {
 		UndoSpreading:  c.Bool("undo-spreading"),
 
 		WhiteNoiseGainFloorDB: number("white-noise-gain-floor-db"),
+		ReestimateEvery:       c.Float64("reestimate-every"),
+		Postfilter:            c.String("postfilter"),
+		PostfilterFloorDB:     number("postfilter-floor-db"),
 
 		HighpassHz:     c.Float64("highpass"),
 		GainDB:         c.Float64("gain-db"),

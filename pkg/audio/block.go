@@ -17,6 +17,7 @@ type Block struct {
 	stride   int
 	first    int
 	frames   int
+	lowest   int // channel of data that channel 0 is
 }
 
 // NewBlock returns a block of silence. It panics if channels or frames is
@@ -44,7 +45,7 @@ func (b Block) Channel(ch int) []float32 {
 	if ch < 0 || ch >= b.channels {
 		panic(fmt.Sprintf("audio: channel %d of a block of %d channels", ch, b.channels))
 	}
-	from := ch*b.stride + b.first
+	from := (b.lowest+ch)*b.stride + b.first
 	return b.data[from : from+b.frames : from+b.frames]
 }
 
@@ -56,6 +57,17 @@ func (b Block) Slice(from, to int) Block {
 	}
 	b.first += from
 	b.frames = to - from
+	return b
+}
+
+// Part returns the channels from..to (half-open), shared with b. It panics
+// unless 0 <= from <= to <= Channels.
+func (b Block) Part(from, to int) Block {
+	if from < 0 || to < from || to > b.channels {
+		panic(fmt.Sprintf("audio: channels %d:%d of a block of %d", from, to, b.channels))
+	}
+	b.lowest += from
+	b.channels = to - from
 	return b
 }
 

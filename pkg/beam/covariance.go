@@ -38,8 +38,10 @@ type Covariance struct {
 	sumRe  []float64   // sum[pair*bins+k], pair of m >= n at m(m+1)/2+n
 	sumIm  []float64
 	weight float64
+	centre float64 // weight times the middle of every transform, frames
 	frames int
-	at     int64 // frame of the stream that comes next
+	at     int64 // frame of the stream that the next block begins at
+	from   int64 // and that comes after the ring
 	next   int   // stretch that at lies in or before
 }
 
@@ -122,6 +124,7 @@ func (c *Covariance) Write(src audio.Block) error {
 			c.filled += n
 			i += n
 			if c.filled == c.size {
+				c.from = c.at + int64(i)
 				c.add()
 			}
 		}
@@ -153,6 +156,7 @@ func (c *Covariance) add() {
 		}
 	}
 	c.weight = c.keep*c.weight + 1
+	c.centre = c.keep*c.centre + float64(c.from) - float64(c.size)/2
 	c.frames++
 }
 
@@ -164,6 +168,47 @@ func (c *Covariance) Frames() int { return c.frames }
 // Effective is the number of transforms that the weights of forgetting leave:
 // their sum.
 func (c *Covariance) Effective() float64 { return c.weight }
+
+// Powers appends to dst[:0] the mean square of what was taken in of every
+// microphone, re full scale squared, and returns it; zero before the first
+// transform.
+func (c *Covariance) Powers(dst []float64) []float64 {
+	dst = dst[:0]
+	scale := 0.0
+	for _, v := range c.window {
+		scale += v * v
+	}
+	scale *= c.weight * float64(c.size)
+	bins, pair := c.size/2+1, 0
+	for m := range c.mics {
+		pair += m
+		sum := 0.0
+		for k, v := range c.sumRe[pair*bins : (pair+1)*bins] {
+			if k > 0 && k < bins-1 {
+				v *= 2 // the bin of the negative frequency
+			}
+			sum += v
+		}
+		pair++
+		if scale > 0 {
+			sum /= scale
+		}
+		dst = append(dst, sum)
+	}
+	return dst
+}
+
+// Centre is where in the stream the transforms taken in lie on the mean, frames
+// from its start; NaN before the first.
+func (c *Covariance) Centre() float64 { return c.centre / c.weight }
+
+// Reset forgets the transforms taken in. The stream goes on where it is, and
+// frames that were in no whole transform yet are in the next one.
+func (c *Covariance) Reset() {
+	clear(c.sumRe)
+	clear(c.sumIm)
+	c.weight, c.centre, c.frames = 0, 0, 0
+}
 
 // Matrix sets dst, of M² elements, to R of bin k, in powers of a bin of the
 // transform re full scale; zero before the first transform.

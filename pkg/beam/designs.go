@@ -38,7 +38,8 @@ func diffuse(r []complex128, t Task, hz float64) {
 // MVDR lets through the least noise of a measured covariance [Capon 1969]; the
 // loading that its floor on white noise gain asks for makes it robust [Cox
 // 1987]. With Nulls it is the linearly constrained minimum variance beam of
-// [Frost 1972], solved bin by bin.
+// [Frost 1972], solved bin by bin. A microphone that hears nothing would get all
+// the weight: leave it out (see Covariance.Powers).
 type MVDR struct {
 	Noise   *Covariance // of noise alone, with the rate, microphones and transform of the task
 	FloorDB float64     // white noise gain, dB; -Inf is no floor

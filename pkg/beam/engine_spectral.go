@@ -47,12 +47,14 @@ func NewOverlapSaveMany(src audio.Source, sets []*Filters) (audio.Source, error)
 		return nil, err
 	}
 	o := &overlapSave{shape: shape, plan: plan}
-	design, err := spectral.NewComplex[float64](shape.Size)
+	design, err := newDesigner(shape.Size)
 	if err != nil {
 		return nil, err
 	}
 	for _, f := range sets {
-		o.weights = append(o.weights, pairWeights(design, f, first))
+		weights := newSpectra(f.Mics(), shape.Size)
+		pairWeights(weights, design, f, first)
+		o.weights = append(o.weights, weights)
 		o.sum = append(o.sum, newSpectrum(shape.Size))
 	}
 	o.z = newSpectrum(shape.Size)
@@ -88,12 +90,35 @@ type overlapSave struct {
 	silent  []float32
 }
 
-// pairWeights are the weights of f for taps that start at delay first.
-func pairWeights(design *spectral.Complex[float64], f *Filters, first int) []spectrum {
-	n := design.Len()
-	var list []spectrum
-	re, im := make([]float64, n), make([]float64, n)
-	for m := 0; m < f.Mics(); m += 2 {
+// newSpectra returns spectra of n points for every pair of mics microphones.
+func newSpectra(mics, n int) []spectrum {
+	list := make([]spectrum, (mics+1)/2)
+	for i := range list {
+		list[i] = newSpectrum(n)
+	}
+	return list
+}
+
+// designer transforms filters.
+type designer struct {
+	plan   *spectral.Complex[float64]
+	re, im []float64
+}
+
+func newDesigner(n int) (*designer, error) {
+	plan, err := spectral.NewComplex[float64](n)
+	if err != nil {
+		return nil, err
+	}
+	return &designer{plan, make([]float64, n), make([]float64, n)}, nil
+}
+
+// pairWeights sets dst to the weights of f for taps that start at delay first.
+func pairWeights(dst []spectrum, design *designer, f *Filters, first int) {
+	n := design.plan.Len()
+	re, im := design.re, design.im
+	for i, w := range dst {
+		m := 2 * i
 		clear(re)
 		clear(im)
 		copy(re[f.Start[m]-first:], f.H[m])
@@ -102,14 +127,11 @@ func pairWeights(design *spectral.Complex[float64], f *Filters, first int) []spe
 				im[f.Start[m+1]-first+t] = -v
 			}
 		}
-		design.Forward(re, im, re, im)
-		w := newSpectrum(n)
+		design.plan.Forward(re, im, re, im)
 		for k := range re {
 			w.re[k], w.im[k] = float32(re[k]/float64(n)), float32(im[k]/float64(n))
 		}
-		list = append(list, w)
 	}
-	return list
 }
 
 func (o *overlapSave) run(out, in audio.Block, _ int64) error {
@@ -119,11 +141,7 @@ func (o *overlapSave) run(out, in audio.Block, _ int64) error {
 		clear(s.im)
 	}
 	for pair := 0; 2*pair < in.Channels(); pair++ {
-		a, b := in.Channel(2 * pair)[o.from:][:n], o.silent
-		if 2*pair+1 < in.Channels() {
-			b = in.Channel(2*pair + 1)[o.from:][:n]
-		}
-		o.plan.Forward(o.z.re, o.z.im, a, b)
+		o.transform(in, pair)
 		for j, s := range o.sum {
 			w := o.weights[j][pair]
 			kernel.AddProduct(s.re, s.im, o.z.re, o.z.im, w.re, w.im)
@@ -134,4 +152,14 @@ func (o *overlapSave) run(out, in audio.Block, _ int64) error {
 		copy(out.Channel(j), s.re[n-o.shape.Hop:])
 	}
 	return nil
+}
+
+// transform sets z to the spectrum of a pair of microphones in the window.
+func (o *overlapSave) transform(in audio.Block, pair int) {
+	n := o.shape.Size
+	a, b := in.Channel(2 * pair)[o.from:][:n], o.silent
+	if 2*pair+1 < in.Channels() {
+		b = in.Channel(2*pair + 1)[o.from:][:n]
+	}
+	o.plan.Forward(o.z.re, o.z.im, a, b)
 }

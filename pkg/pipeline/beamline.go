@@ -52,6 +52,9 @@ type beamline struct {
 	// hold them.
 	shift []float64
 	fit   *beam.Fit // of designed weights
+	// changes are weights that change with time, of which filters and model are
+	// the first; nil if they do not.
+	changes *changes
 }
 
 // nearestFocus is how close to a microphone a focus may lie, metres.
@@ -153,6 +156,9 @@ func (b *beamline) corrected(src audio.Source) (audio.Source, error) {
 
 // steered returns the beam over the corrected microphones.
 func (b *beamline) steered(src audio.Source) (audio.Source, error) {
+	if b.changes != nil {
+		return beam.NewChanging(src, b.changes.list, b.changes.fade)
+	}
 	if b.set.Method == MethodSpectral {
 		return beam.NewOverlapSave(src, b.filters)
 	}

@@ -31,6 +31,12 @@ func (r *run) referenceName() string { return r.rig.Mics[r.line.referenceMic()].
 func (b *beamline) settings(name string) string {
 	s := b.summary()
 	text := fmt.Sprintf("%s of %d microphones; %s; %s; taper %s; c %.1f m/s", name, len(b.used), s.Method, s.Weights, s.Taper, b.rig.speed)
+	if b.set.ReestimateEvery > 0 {
+		text += fmt.Sprintf(" again every %g s", b.set.ReestimateEvery)
+	}
+	if b.set.Postfilter != PostfilterNone {
+		text += fmt.Sprintf("; postfilter %s, floor %g dB", b.set.Postfilter, b.set.postfilterFloorDB)
+	}
 	if s.HighpassHz != nil {
 		text += fmt.Sprintf("; high-pass %g Hz", *s.HighpassHz)
 	}

@@ -1,7 +1,6 @@
 package pipeline
 
 import (
-	"errors"
 	"fmt"
 	"math"
 
@@ -53,6 +52,9 @@ func (r *run) design() error {
 	case WeightsSuperdirective:
 		d = beam.Superdirective{FloorDB: r.set.floorDB, Nulls: nulls}
 	case WeightsMinimumVariance:
+		if r.set.ReestimateEvery > 0 {
+			return r.designOverTime(task, nulls)
+		}
 		noise, err := r.noiseCovariance(task)
 		if err != nil {
 			return err
@@ -95,32 +97,9 @@ func (r *run) noiseCovariance(task beam.Task) (*beam.Covariance, error) {
 		c, err := r.covariance(task, t, nil)
 		return c, joinErrors(err, t.close())
 	}
-	stretches, source, err := r.knownNoise()
+	stretches, err := r.noiseStretches(task.Rate)
 	if err != nil {
 		return nil, err
-	}
-	if source != SegmentsNone {
-		r.report(Finding{Code: "weights-from-measured-noise", Severity: Info, Message: "the weights were found on the noise stretches that the gain is measured in: the noise reduction there is better than in noise they have not heard; --isolated-noise and --isolated-target of another time tell the rest"})
-	} else {
-		src := audio.Source(&watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("listening for noise", r.take.header.Frames)})
-		in, out, err := r.drive(src)
-		if err != nil {
-			return nil, err
-		}
-		found, err := measure.FindSegments(in.Thirds(), out.Thirds(), measure.SegmentOptions{ExpectedReductionDB: speechDiffuse(r.line.predict(measure.ThirdOctaves(task.Rate)))})
-		if err != nil {
-			return nil, err
-		}
-		if stretches = found.Noise; len(stretches) == 0 {
-			return nil, &HintedError{
-				Err:  fmt.Errorf("%s: --weights %s: no stretch with noise alone was found: %s", r.take.path(), WeightsMinimumVariance, found.Explanation),
-				Hint: "give --noise A..B or --isolated-noise TAKE",
-			}
-		}
-		r.report(Finding{Code: "weights-from-measured-noise", Severity: Info, Message: "the weights were found on noise stretches of this take: the noise reduction measured there is better than in noise they have not heard"})
-		if err := r.take.rewind(); err != nil {
-			return nil, err
-		}
 	}
 	c, err := r.covariance(task, r.take, stretches)
 	if err != nil {
@@ -129,18 +108,57 @@ func (r *run) noiseCovariance(task beam.Task) (*beam.Covariance, error) {
 	return c, r.take.rewind()
 }
 
+// noiseStretches are where noise alone sounds in the take: as given, or as found
+// in a first pass by delay-and-sum.
+func (r *run) noiseStretches(rate int) ([]measure.Stretch, error) {
+	stretches, source, err := r.knownNoise()
+	if err != nil {
+		return nil, err
+	}
+	if source != SegmentsNone {
+		if r.set.IsolatedNoise == "" {
+			r.report(Finding{Code: "weights-from-measured-noise", Severity: Info, Message: "the weights were found on the noise stretches that the gain is measured in: the noise reduction there is better than in noise they have not heard; --isolated-noise and --isolated-target of another time tell the rest"})
+		}
+		return stretches, nil
+	}
+	src := audio.Source(&watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("listening for noise", r.take.header.Frames)})
+	heard, err := r.drive(src, r.line.steered)
+	if err != nil {
+		return nil, err
+	}
+	found, err := measure.FindSegments(heard.in.Thirds(), heard.out.Thirds(), measure.SegmentOptions{ExpectedReductionDB: speechDiffuse(r.line.predict(measure.ThirdOctaves(rate), r.take.header.Frames))})
+	if err != nil {
+		return nil, err
+	}
+	if stretches = found.Noise; len(stretches) == 0 {
+		return nil, &HintedError{
+			Err:  fmt.Errorf("%s: --weights %s: no stretch with noise alone was found: %s", r.take.path(), WeightsMinimumVariance, found.Explanation),
+			Hint: "give --noise A..B or --isolated-noise TAKE",
+		}
+	}
+	if r.set.IsolatedNoise == "" {
+		r.report(Finding{Code: "weights-from-measured-noise", Severity: Info, Message: "the weights were found on noise stretches of this take: the noise reduction measured there is better than in noise they have not heard"})
+	}
+	return stretches, r.take.rewind()
+}
+
+// frameStretches are stretches in frames.
+func frameStretches(stretches []measure.Stretch, rate float64) [][2]int64 {
+	var frames [][2]int64
+	for _, s := range stretches {
+		frames = append(frames, [2]int64{frameAt(s.From, rate), frameAt(s.To, rate)})
+	}
+	return frames
+}
+
 // covariance is that of the corrected microphones of a take over stretches,
 // nil for all of it.
 func (r *run) covariance(task beam.Task, t *take, stretches []measure.Stretch) (*beam.Covariance, error) {
-	var frames [][2]int64
-	for _, s := range stretches {
-		frames = append(frames, [2]int64{frameAt(s.From, float64(task.Rate)), frameAt(s.To, float64(task.Rate))})
-	}
 	src, err := r.line.corrected(&watched{Source: t.source(), ctx: r.ctx, tell: r.tell("learning the noise", t.header.Frames)})
 	if err != nil {
 		return nil, err
 	}
-	c, err := beam.NewCovariance(task.Rate, len(task.Mics), task.FFTSize, beam.CovarianceOptions{Stretches: frames})
+	c, err := beam.NewCovariance(task.Rate, len(task.Mics), task.FFTSize, beam.CovarianceOptions{Stretches: frameStretches(stretches, float64(task.Rate))})
 	if err != nil {
 		return nil, &UsageError{Err: err}
 	}
@@ -148,10 +166,39 @@ func (r *run) covariance(task beam.Task, t *take, stretches []measure.Stretch) (
 		return nil, err
 	}
 	if c.Frames() < len(task.Mics) {
-		return nil, &UsageError{Err: errors.Join(fmt.Errorf("%s: --weights %s: the noise holds %d transforms of %.0f ms, fewer than its %d microphones: give longer noise",
-			t.path(), WeightsMinimumVariance, c.Frames(), 1000*float64(task.FFTSize)/float64(task.Rate), len(task.Mics)))}
+		return nil, tooLittleNoise(t.path(), c.Frames(), task)
 	}
-	return c, nil
+	return c, r.line.live(c)
+}
+
+// live refuses noise in which a microphone hears nothing: of least variance is
+// to listen to that one alone.
+func (b *beamline) live(c *beam.Covariance) error {
+	var levels []float64
+	for _, p := range c.Powers(nil) {
+		levels = append(levels, audio.PowerDB(p))
+	}
+	typical := median(levels)
+	var silent []int
+	for i, l := range levels {
+		if l < typical-silentBelowDB {
+			silent = append(silent, b.rig.Mics[b.used[i]].Channel)
+		}
+	}
+	if len(silent) == 0 || math.IsInf(typical, -1) {
+		return nil
+	}
+	return &UsageError{
+		Err: fmt.Errorf("--weights %s: %s in the noise more than %d dB below the others: the weights of least variance would listen to silence and lose the target",
+			WeightsMinimumVariance, plural(silent, "channel %s is", "channels %s are"), silentBelowDB),
+		Hint: "leave out dead channels with use: false in the rig file",
+	}
+}
+
+// tooLittleNoise says that noise is too short for weights.
+func tooLittleNoise(path string, transforms int, task beam.Task) error {
+	return &UsageError{Err: fmt.Errorf("%s: --weights %s: the noise holds %d transforms of %.0f ms, fewer than its %d microphones: give longer noise",
+		path, WeightsMinimumVariance, transforms, 1000*float64(task.FFTSize)/float64(task.Rate), len(task.Mics))}
 }
 
 // duration is the take's length in seconds.

@@ -35,9 +35,13 @@ func (r *run) explain(res *Result, g *measure.Gains) {
 			gainShortDB, bandCount(len(short)))})
 	}
 	if o := res.Overall; o.TargetChangeDB != nil && *o.TargetChangeDB < -targetLossDB && (o.TargetChangeCI95 == nil || o.TargetChangeCI95[1] < -targetLossDB) {
+		postfilter := ""
+		if r.set.Postfilter != PostfilterNone {
+			postfilter = "the postfilter takes part of it (steer.postfilter.target_change_db; raise --postfilter-floor-db); "
+		}
 		r.report(Finding{Code: "target-loss", Severity: Warning, Message: fmt.Sprintf(
-			"the target is %.1f dB lower in the track than at the microphones: in a room 2 to 4 dB are normal, since the beam takes away the target's own reverberation; outdoors or beyond that, suspect the direction, a near source (give --focus X,Y,Z), the spacing, a polarity or the air temperature",
-			-*o.TargetChangeDB)})
+			"the target is %.1f dB lower in the track than at the microphones: %sin a room 2 to 4 dB are normal, since the beam takes away the target's own reverberation; outdoors or beyond that, suspect the direction, a near source (give --focus X,Y,Z), the spacing, a polarity or the air temperature",
+			-*o.TargetChangeDB, postfilter)})
 	}
 }
 

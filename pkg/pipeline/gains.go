@@ -26,10 +26,10 @@ func (r *run) gains(res *Result) error {
 	res.Segments = Segments{Source: SegmentsNone, Noise: [][2]float64{}, Target: [][2]float64{}}
 	rate := r.take.header.Rate
 	thirds, octaves := measure.ThirdOctaves(rate), measure.Octaves(rate)
-	res.Bands = r.line.predict(thirds)
-	res.OctaveBands = r.line.predict(octaves)
+	res.Bands = r.line.predict(thirds, r.take.header.Frames)
+	res.OctaveBands = r.line.predict(octaves, r.take.header.Frames)
 	if r.set.NoMeasure {
-		return nil
+		return r.unfixed(res, listened{}, listened{})
 	}
 	named := -1
 	if name := r.set.CompareTo; name != "" {
@@ -40,8 +40,9 @@ func (r *run) gains(res *Result) error {
 	}
 	var third, octave *measure.Gains
 	var err error
+	noise, target := r.heard, r.heard
 	if r.set.IsolatedNoise != "" || r.set.IsolatedTarget != "" {
-		third, octave, err = r.isolated(res, named)
+		third, octave, err = r.isolated(res, named, &noise, &target)
 	} else {
 		third, octave, err = r.blind(res, named)
 	}
@@ -65,18 +66,22 @@ func (r *run) gains(res *Result) error {
 	if r.set.IsolatedNoise != r.set.IsolatedTarget && (r.set.IsolatedNoise == "" || r.set.IsolatedTarget == "") {
 		r.half(res)
 	}
+	if err := r.unfixed(res, noise, target); err != nil {
+		return err
+	}
 	r.explain(res, third)
 	return nil
 }
 
 // predict returns the bands with what the filters, as built, should do in them
-// to microphones whose corrections are right.
-func (b *beamline) predict(bands []measure.Band) []Band {
+// to microphones whose corrections are right, in a take of so many frames.
+func (b *beamline) predict(bands []measure.Band, frames int64) []Band {
+	models := b.models(frames)
 	nyquist := float64(b.filters.Rate) / 2
 	grating, found := response.GratingLimit(b.at, b.look.Direction(b.ref), b.rig.speed, nyquist)
 	list := make([]Band, len(bands))
 	for i, band := range bands {
-		white, diffuse, target := response.BandGains(b.model, b.at, b.look, b.ref, b.rig.speed, band.LowHz, band.HighHz)
+		white, diffuse, target := b.bandGains(models, band)
 		list[i] = Band{
 			NominalHz: band.NominalHz, CentreHz: band.CentreHz, LowHz: band.LowHz, HighHz: band.HighHz,
 			PredictedWhiteDB: number(white + target), PredictedDiffuseDB: number(diffuse + target), Flags: []string{},
@@ -89,6 +94,22 @@ func (b *beamline) predict(bands []measure.Band) []Band {
 		}
 	}
 	return list
+}
+
+// bandGains are the gains of response.BandGains of models that follow each
+// other: means of powers over time.
+func (b *beamline) bandGains(models []model, band measure.Band) (whiteDB, diffuseDB, targetDB float64) {
+	if len(models) == 1 {
+		return response.BandGains(models[0].filters, b.at, b.look, b.ref, b.rig.speed, band.LowHz, band.HighHz)
+	}
+	var white, diffuse, target float64
+	for _, m := range models {
+		w, d, t := response.BandGains(m.filters, b.at, b.look, b.ref, b.rig.speed, band.LowHz, band.HighHz)
+		white += m.share * audio.FromPowerDB(-w)
+		diffuse += m.share * audio.FromPowerDB(-d)
+		target += m.share * audio.FromPowerDB(t)
+	}
+	return -audio.PowerDB(white), -audio.PowerDB(diffuse), audio.PowerDB(target)
 }
 
 // fill copies the measured figures into the bands.
@@ -112,7 +133,7 @@ func (r *run) blind(res *Result, named int) (third, octave *measure.Gains, err e
 	if err != nil {
 		return nil, nil, err
 	}
-	mix := listened{in: r.in, out: r.out}
+	mix := r.heard
 	if third, err = measure.SNRGain(measure.Scene{Pair: mix.thirds(), Noise: noise, Target: target, Named: named}); err != nil {
 		return nil, nil, err
 	}
@@ -131,7 +152,7 @@ func (r *run) stretches(res *Result) (noise, target []measure.Stretch, err error
 		return nil, nil, err
 	}
 	if res.Segments.Source == SegmentsNone {
-		found, err := measure.FindSegments(r.in.Thirds(), r.out.Thirds(), measure.SegmentOptions{ExpectedReductionDB: speechDiffuse(res.Bands)})
+		found, err := measure.FindSegments(r.heard.in.Thirds(), r.heard.beam().Thirds(), measure.SegmentOptions{ExpectedReductionDB: speechDiffuse(res.Bands)})
 		if err != nil {
 			return nil, nil, err
 		}
@@ -210,28 +231,28 @@ func speechDiffuse(bands []Band) float64 {
 // isolated measures with takes of the noise and of the target alone, through
 // the weights of the mix. With only one of them the figures of the other are
 // left out (see half).
-func (r *run) isolated(res *Result, named int) (third, octave *measure.Gains, err error) {
-	var noise, target listened
+func (r *run) isolated(res *Result, named int, noise, target *listened) (third, octave *measure.Gains, err error) {
+	*noise, *target = listened{}, listened{}
 	res.Segments.Source = SegmentsIsolated
 	r.passedOver()
 	if path := r.set.IsolatedNoise; path != "" {
-		if noise, err = r.through(path); err != nil {
+		if *noise, err = r.through(path); err != nil {
 			return nil, nil, err
 		}
 		res.Segments.Noise = [][2]float64{{0, noise.seconds}}
 	}
 	if path := r.set.IsolatedTarget; path != "" {
-		if target, err = r.through(path); err != nil {
+		if *target, err = r.through(path); err != nil {
 			return nil, nil, err
 		}
 		res.Segments.Target = [][2]float64{{0, target.seconds}}
 	}
 	switch {
 	case noise.in == nil:
-		noise = target
+		*noise = *target
 		r.report(Finding{Code: "isolated-noise-missing", Severity: Info, Message: "only the target alone was given: no noise reduction and no SNR gain; give --isolated-noise TAKE too"})
 	case target.in == nil:
-		target = noise
+		*target = *noise
 		r.report(Finding{Code: "isolated-target-missing", Severity: Info, Message: "only the noise alone was given: no target change and no SNR gain; give --isolated-target TAKE too"})
 	}
 	third, err = measure.IsolatedGain(measure.Isolated{Noise: noise.thirds(), Target: target.thirds(), Named: named})
@@ -253,7 +274,7 @@ func (r *run) passedOver() {
 		{"--noise", r.set.Noise, true}, {"--noise-cue", r.set.NoiseCue, true},
 		{"--target", r.set.Target, false}, {"--target-cue", r.set.TargetCue, false},
 	} {
-		learned := o.learns && r.set.Weights == WeightsMinimumVariance && r.set.IsolatedNoise == ""
+		learned := o.learns && r.set.Weights == WeightsMinimumVariance && (r.set.IsolatedNoise == "" || r.set.ReestimateEvery > 0)
 		if o.value != "" && !learned {
 			unused = append(unused, o.option)
 		}
@@ -271,10 +292,7 @@ func (r *run) half(res *Result) {
 			if r.set.IsolatedNoise == "" {
 				b.NoiseInDBFS, b.NoiseOutDBFS, b.NoiseReductionDB, b.NoiseReductionCI95 = nil, nil, nil, nil
 			} else {
-				b.TargetInDBFS, b.TargetOutDBFS, b.TargetChangeDB, b.TargetChangeCI95 = nil, nil, nil, nil
-				if !hasFlag(*b, measure.TargetUnmeasurable) {
-					b.Flags = append(b.Flags, measure.TargetUnmeasurable)
-				}
+				b.noiseOnly()
 			}
 			b.SNRInDB, b.SNROutDB, b.SNRGainDB, b.SNRGainCI95 = nil, nil, nil, nil
 			b.OverBestMicrophoneDB, b.OverNamedMicrophone = nil, nil
@@ -282,14 +300,15 @@ func (r *run) half(res *Result) {
 	}
 	o := Overall{TargetChangeDB: res.Overall.TargetChangeDB, TargetChangeCI95: res.Overall.TargetChangeCI95}
 	if r.set.IsolatedNoise != "" {
-		o = Overall{NoiseReductionDB: res.Overall.NoiseReductionDB, NoiseReductionCI95: res.Overall.NoiseReductionCI95, NoiseReductionADB: res.Overall.NoiseReductionADB}
+		o = res.Overall.noiseOnly()
 	}
 	res.Overall = o
 }
 
 // listened is what the meters heard of one take.
 type listened struct {
-	in, out *measure.Meter
+	in, out *measure.Meter // nil under --no-measure
+	before  *measure.Meter // the beam in front of a postfilter; nil without one
 	seconds float64
 }
 
@@ -314,7 +333,19 @@ func (r *run) through(path string) (l listened, err error) {
 			path, t.header.Channels, t.header.Rate, r.take.path(), mix.Channels, mix.Rate), Hint: "give a take that fits, or leave the option out"}
 	}
 	src := audio.Source(&watched{Source: t.source(), ctx: r.ctx, tell: r.tell("measuring "+path, t.header.Frames)})
-	if l.in, l.out, err = r.drive(src); err != nil {
+	var along audio.Source
+	if r.set.followsSound() && t.header.Frames != mix.Frames {
+		return l, &UsageError{Err: fmt.Errorf("%s: %d frames, but %s has %d: what follows the sound of the take (--postfilter, --reestimate-every) can only be measured on takes that lie frame by frame on it",
+			path, t.header.Frames, r.take.path(), mix.Frames), Hint: "give takes cut like this one, or leave the option out"}
+	}
+	if r.set.Postfilter != PostfilterNone {
+		var done func() error
+		if along, done, err = r.alongside(); err != nil {
+			return l, err
+		}
+		defer func() { err = joinErrors(err, done()) }()
+	}
+	if l, err = r.driveTrack(src, along); err != nil {
 		return l, err
 	}
 	if err := t.unchanged(); err != nil {

@@ -95,6 +95,9 @@ func (b *beamline) summary() Steer {
 	if b.set.designed() {
 		s.FloorDB = number(b.set.floorDB)
 	}
+	if b.changes != nil {
+		s.Changes = &b.changes.report
+	}
 	if b.set.HighpassHz > 0 {
 		s.HighpassHz = number(b.set.HighpassHz)
 	}

@@ -118,6 +118,8 @@ type Steer struct {
 	NullsDeg      [][2]float64 `json:"nulls_deg,omitempty"` // azimuth and elevation
 	FloorDB       Number       `json:"white_noise_gain_floor_db,omitempty"`
 	UndoSpreading bool         `json:"undo_spreading"`
+	Changes       *Changes     `json:"weights_over_time,omitempty"` // under --reestimate-every
+	Postfilter    *Postfilter  `json:"postfilter,omitempty"`
 	HighpassHz    Number       `json:"highpass_hz,omitempty"`
 	GainDB        float64      `json:"gain_db"` // applied to the track, taken out of every level here
 	FilterTaps    int          `json:"filter_taps"`

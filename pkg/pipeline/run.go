@@ -67,7 +67,7 @@ type run struct {
 	track, reference *track
 	reports          []*staged
 	totals           *measure.Totals // nil under --no-measure
-	in, out          *measure.Meter  // nil under --no-measure
+	heard            listened        // of the take, through the chain of the track
 	findings         []Finding
 }
 
@@ -222,7 +222,7 @@ func (r *run) pass(encoding wav.Encoding) (err error) {
 		sink: &louder{sink: r.track, factor: float32(audio.FromAmplitudeDB(r.set.GainDB))},
 		from: r.from, to: r.to,
 	}}
-	if r.in, r.out, err = r.drive(src, sinks...); err != nil {
+	if r.heard, err = r.driveTrack(src, nil, sinks...); err != nil {
 		return err
 	}
 	if err := r.track.close(); err != nil {
@@ -242,36 +242,36 @@ func (r *run) tell(stage string, total int64) func(int64) {
 	return func(done int64) { r.watch.Progress(stage, done, total) }
 }
 
-// drive runs the beam over src to its end into sinks, with a meter at the
-// corrected microphones and one at the beam unless nothing is to be measured.
-func (r *run) drive(src audio.Source, sinks ...audio.Sink) (in, out *measure.Meter, err error) {
+// drive runs a chain over src to its end into sinks, with a meter at the
+// corrected microphones and one at its end unless nothing is to be measured.
+func (r *run) drive(src audio.Source, chain chain, sinks ...audio.Sink) (l listened, err error) {
 	channels := src.Format().Channels
 	if src, err = r.line.corrected(src); err != nil {
-		return nil, nil, err
+		return l, err
 	}
 	if !r.set.NoMeasure {
-		if in, err = measure.NewMeter(src.Format(), measure.MeterOptions{PerChannel: true}); err != nil {
-			return nil, nil, err
+		if l.in, err = measure.NewMeter(src.Format(), measure.MeterOptions{PerChannel: true}); err != nil {
+			return l, err
 		}
-		src = audio.Tee(src, in)
+		src = audio.Tee(src, l.in)
 	}
-	y, err := r.line.steered(src)
+	y, err := chain(src)
 	if err != nil {
-		return nil, nil, err
+		return l, err
 	}
 	if !r.set.NoMeasure {
-		if out, err = measure.NewMeter(y.Format(), measure.MeterOptions{}); err != nil {
-			return nil, nil, err
+		if l.out, err = measure.NewMeter(y.Format(), measure.MeterOptions{}); err != nil {
+			return l, err
 		}
-		sinks = append(sinks, out)
+		sinks = append(sinks, l.out)
 	}
 	if _, err := audio.Copy(y, blockFrames(r.spec.Options.BlockFrames, channels), sinks...); err != nil {
-		return nil, nil, err
+		return l, err
 	}
 	if !r.set.NoMeasure {
-		if err := errors.Join(in.Close(), out.Close()); err != nil {
-			return nil, nil, err
+		if err := errors.Join(l.in.Close(), l.out.Close()); err != nil {
+			return l, err
 		}
 	}
-	return in, out, nil
+	return l, nil
 }

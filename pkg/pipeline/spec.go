@@ -38,7 +38,12 @@ type Options struct {
 	// WhiteNoiseGainFloorDB bounds how much a design raises the noise of the
 	// microphones themselves, dB; nil is 0.
 	WhiteNoiseGainFloorDB *float64 `json:"white_noise_gain_floor_db,omitempty"`
-	UndoSpreading         bool     `json:"undo_spreading,omitempty"` // for a focus: undo the level differences of a near source
+	// ReestimateEvery finds minimum-variance weights again that often, seconds;
+	// 0 is once for the take.
+	ReestimateEvery   float64  `json:"reestimate_every,omitempty"`
+	Postfilter        string   `json:"postfilter,omitempty"`          // none (default), white or diffuse
+	PostfilterFloorDB *float64 `json:"postfilter_floor_db,omitempty"` // smallest gain of the postfilter, dB; nil is -15
+	UndoSpreading     bool     `json:"undo_spreading,omitempty"`      // for a focus: undo the level differences of a near source
 
 	Chain     bool `json:"chain,omitempty"`      // the files of the take follow each other
 	FindChain bool `json:"find_chain,omitempty"` // find the files that the recorder split the take into
@@ -143,10 +148,12 @@ type settings struct {
 	taper     beam.Taper
 	nulls     []rig.Direction
 	floorDB   float64
-	noise     []Stretch
-	target    []Stretch
-	excerpt   *Stretch
-	reports   []string
+
+	postfilterFloorDB float64
+	noise             []Stretch
+	target            []Stretch
+	excerpt           *Stretch
+	reports           []string
 }
 
 // resolve reads the texts of the options and reports everything that is wrong
@@ -189,6 +196,7 @@ func (o Options) resolve() (*settings, error) {
 	choose("weights", &s.Weights, WeightsDelayAndSum, WeightsDelayAndSum, WeightsConstantBeamwidth, WeightsSuperdirective, WeightsMinimumVariance)
 	choose("method", &s.Method, MethodSpectral, MethodSinc, MethodFarrow, MethodSpectral)
 	s.resolveWeights(fault)
+	choose("postfilter", &s.Postfilter, PostfilterNone, PostfilterNone, PostfilterWhite, PostfilterDiffuse)
 	choose("format", &s.Format, FormatAuto, FormatAuto, FormatPCM16, FormatPCM24, FormatFloat32)
 	choose("over-range", &s.OverRange, OverRangeFail, OverRangeFail, OverRangeFloat32)
 
@@ -285,6 +293,7 @@ func (s *settings) resolveWeights(fault func(format string, args ...any)) {
 	if designed && s.Method != MethodSpectral {
 		fault("--method %s: weights other than delay-and-sum and nulls depend on frequency and need the method %s", s.Method, MethodSpectral)
 	}
+	s.resolveChanging(fault)
 	if s.WhiteNoiseGainFloorDB != nil {
 		s.floorDB = *s.WhiteNoiseGainFloorDB
 		if !designed {
@@ -302,6 +311,28 @@ func (s *settings) resolveWeights(fault func(format string, args ...any)) {
 	}
 	if s.Weights == WeightsMinimumVariance && s.NoMeasure && s.Noise == "" && s.NoiseCue == "" && s.IsolatedNoise == "" {
 		fault("--weights %s with --no-measure: the noise must be known; give --noise A..B", s.Weights)
+	}
+}
+
+// resolveChanging reads the options that let the filters follow the sound.
+func (s *settings) resolveChanging(fault func(format string, args ...any)) {
+	if every := s.ReestimateEvery; every != 0 {
+		if !(every >= 0.5 && every <= 3600) {
+			fault("--reestimate-every %g: want 0.5 to 3600 s", every)
+		}
+		if s.Weights != WeightsMinimumVariance {
+			fault("--reestimate-every %g: only the weights %s are found from noise", every, WeightsMinimumVariance)
+		}
+	}
+	s.postfilterFloorDB = postfilterFloorDB
+	if s.PostfilterFloorDB != nil {
+		s.postfilterFloorDB = *s.PostfilterFloorDB
+		if s.Postfilter == "" || s.Postfilter == PostfilterNone {
+			fault("--postfilter-floor-db %g: a floor belongs to --postfilter %s or %s", s.postfilterFloorDB, PostfilterWhite, PostfilterDiffuse)
+		}
+		if !(s.postfilterFloorDB >= -60 && s.postfilterFloorDB <= 0) {
+			fault("--postfilter-floor-db %g: want -60 to 0 dB", s.postfilterFloorDB)
+		}
 	}
 }
 

@@ -41,6 +41,12 @@ func made(r *pipeline.Result) []named {
 	if s.UndoSpreading {
 		extras = append(extras, "spreading undone")
 	}
+	if c := s.Changes; c != nil {
+		extras = append(extras, fmt.Sprintf("weights found again every %s s, %d sets, handed over in %s s", Round(c.EveryS, "every_s"), len(c.FromS), Round(c.CrossFadeS, "cross_fade_s")))
+	}
+	if p := s.Postfilter; p != nil {
+		extras = append(extras, fmt.Sprintf("postfilter %s, gains from %s dB to 0, found over %s s", p.Kind, decimals(p.FloorDB, 1), Round(p.AverageS, "average_s")))
+	}
 	if s.HighpassHz != nil {
 		extras = append(extras, "high-pass "+frequencyWords(*s.HighpassHz)+" on reference and track alike")
 	}
@@ -77,7 +83,8 @@ var definitions = []named{
 	{"", "Target change", "Target level in the track minus at the reference; 0 dB is distortionless. Target power is the power in the stretches with the target minus the power in those with noise alone."},
 	{"", "SNR gain", "Noise reduction plus target change."},
 	{"", "Intervals", "95 %, for the expected gain of these weights in this noise field, not for the noise that happened to sound."},
-	{"", "Predicted", "For the weights in force: in spatially white noise, 1/wᴴw, and in spherically isotropic noise, wᴴΓw with Γ = sin(kd)/kd (Van Trees 2002; Brandstein and Ward 2001)."},
+	{"", "Postfilter", "Where one is used its gains follow the sound, and no figure is that of a fixed filter: they are found on the mix and run through the noise alone and the target alone where those were given (shadow filtering); else only the noise in the pauses is measured (Zelinski 1988; McCowan and Bourlard 2003)."},
+	{"", "Predicted", "For the weights in force, without a postfilter: in spatially white noise, 1/wᴴw, and in spherically isotropic noise, wᴴΓw with Γ = sin(kd)/kd (Van Trees 2002; Brandstein and Ward 2001)."},
 	{"", "Speech-weighted SNR gain", "Band gains weighted with the band-importance function of ANSI S3.5 (Greenberg, Peterson and Zurek 1993). Not a measure of intelligibility."},
 	{"", "A-weighted noise reduction", "Noise powers weighted with the A curve of IEC 61672-1:2013 before they are summed."},
 	{"", "Directions", "Azimuth from the rig's right-hand axis towards its front, elevation from the horizontal up. Microphones are taken as omnidirectional in a free field: body, baffle, windshield and foam are not modelled."},
