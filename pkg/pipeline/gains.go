@@ -74,7 +74,8 @@ func (r *run) gains(res *Result) error {
 }
 
 // predict returns the bands with what the filters, as built, should do in them
-// to microphones whose corrections are right, in a take of so many frames.
+// to microphones whose corrections are right, in a take of so many frames (which
+// only weights that change with time ask for).
 func (b *beamline) predict(bands []measure.Band, frames int64) []Band {
 	models := b.models(frames)
 	nyquist := float64(b.filters.Rate) / 2

@@ -280,7 +280,7 @@ func (p *predictor) frequency(f response.Figures, toward rig.Direction) Predicte
 // bands are the gains in one-third octaves.
 func (p *predictor) bands() []PredictedBand {
 	list := []PredictedBand{}
-	for _, b := range p.line.predict(measure.ThirdOctaves(p.set.RateHz)) {
+	for _, b := range p.line.predict(measure.ThirdOctaves(p.set.RateHz), 0) {
 		list = append(list, PredictedBand{b.NominalHz, b.CentreHz, b.LowHz, b.HighHz, b.PredictedWhiteDB, b.PredictedDiffuseDB, b.Flags})
 	}
 	return list
