@@ -108,6 +108,10 @@ func Map(src Source, order []int, gain []float64) (Source, error) {
 			m.gain[j] = float32(gain[j])
 		}
 	}
+	m.same = len(order) == f.Channels
+	for j, ch := range order {
+		m.same = m.same && j == ch
+	}
 	return m, nil
 }
 
@@ -117,6 +121,7 @@ type mapped struct {
 	order  []int
 	gain   []float32
 	in     Block
+	same   bool // every channel in its place: what is read needs no copy
 }
 
 func (m *mapped) Format() Format { return m.format }
@@ -124,6 +129,18 @@ func (m *mapped) Format() Format { return m.format }
 func (m *mapped) Read(dst Block) (int, error) {
 	if dst.Channels() != len(m.order) {
 		panic(fmt.Sprintf("audio: read of %d channels into a block of %d", len(m.order), dst.Channels()))
+	}
+	if m.same {
+		n, err := m.src.Read(dst)
+		for j, g := range m.gain {
+			if g != 1 {
+				x := dst.Channel(j)[:n]
+				for i := range x {
+					x[i] *= g
+				}
+			}
+		}
+		return n, err
 	}
 	if m.in.Channels() == 0 || m.in.Frames() < dst.Frames() {
 		m.in = NewBlock(m.src.Format().Channels, dst.Frames())

@@ -61,7 +61,7 @@ func rms(v []float64) float64 {
 func TestAddFIRAgainstDoublePrecision(t *testing.T) {
 	bothSets(t, func(t *testing.T) {
 		r := rand.New(rand.NewPCG(1, 1))
-		for _, n := range []int{0, 1, 7, 8, 9, 15, 16, 31, 32, 33, 40, 63, 64, 65, 257} {
+		for _, n := range []int{0, 1, 7, 8, 9, 15, 16, 31, 32, 33, 40, 63, 64, 65, 95, 96, 97, 104, 136, 257} {
 			for _, taps := range []int{0, 1, 2, 4, 7, 8, 9, 64, 65} {
 				y, yOK := guarded(r, n)
 				x, xOK := guarded(r, n+max(taps, 1)-1)

@@ -5,7 +5,101 @@
 package kernel
 
 // addFIRAVX2 adds a filtered signal of n samples, n a multiple of 8, to y: taps >= 1.
+//
+//go:noescape
 func addFIRAVX2(y *float32, n int, x *float32, h *float32, taps int)
 
 // addProductAVX2 adds the complex products of n bins, n a multiple of 8.
+//
+//go:noescape
 func addProductAVX2(sr *float32, si *float32, ar *float32, ai *float32, br *float32, bi *float32, n int)
+
+// firstStepAVX2 is the first step; count is a multiple of 8.
+//
+//go:noescape
+func firstStepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
+
+// firstStepRealAVX2 is the first step of values whose real and imaginary parts alternate; count is a multiple of 8.
+//
+//go:noescape
+func firstStepRealAVX2(yr *float32, yi *float32, x *float32, wide *float32, count int)
+
+// secondStepAVX2 is the step of four transforms; count is even.
+//
+//go:noescape
+func secondStepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int)
+
+// stepAVX2 is a step of s transforms, a multiple of 8.
+//
+//go:noescape
+func stepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int, s int)
+
+// lastStep2AVX2 is the step of radix 2 of s transforms, a multiple of 8.
+//
+//go:noescape
+func lastStep2AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+
+// lastStep4AVX2 is the last step of radix 4 of s transforms, a multiple of 8.
+//
+//go:noescape
+func lastStep4AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+
+// lastStep8AVX2 is the last step of radix 8 of s transforms, a multiple of 8.
+//
+//go:noescape
+func lastStep8AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+
+// splitHalvesAVX2 splits n bins from 1 up, n a multiple of 8, and those from last down.
+//
+//go:noescape
+func splitHalvesAVX2(re *float32, im *float32, cos *float32, sin *float32, last int, n int)
+
+// joinHalvesAVX2 joins n bins from 1 up, n a multiple of 8, and those from last down.
+//
+//go:noescape
+func joinHalvesAVX2(zr *float32, zi *float32, re *float32, im *float32, cos *float32, sin *float32, last int, n int)
+
+// alternateAVX2 scales and interleaves n values, n a multiple of 8.
+//
+//go:noescape
+func alternateAVX2(x *float32, zr *float32, zi *float32, scale float32, n int)
+
+// eightFrom16AVX2 spreads n frames, n a multiple of 8, over the channels at dst.
+//
+//go:noescape
+func eightFrom16AVX2(dst **float32, src *byte, frame int, n int)
+
+// fourFrom16AVX2 spreads n frames, n a multiple of 8, over the channels at dst.
+//
+//go:noescape
+func fourFrom16AVX2(dst **float32, src *byte, frame int, n int)
+
+// eightFrom24AVX2 spreads n frames, n a multiple of 8, over the channels at dst.
+//
+//go:noescape
+func eightFrom24AVX2(dst **float32, src *byte, frame int, n int)
+
+// fourFrom24AVX2 spreads n frames, n a multiple of 8, over the channels at dst.
+//
+//go:noescape
+func fourFrom24AVX2(dst **float32, src *byte, frame int, n int)
+
+// eightFrom32AVX2 spreads n frames, n a multiple of 8, over the channels at dst.
+//
+//go:noescape
+func eightFrom32AVX2(dst **float32, src *byte, frame int, n int)
+
+// fourFrom32AVX2 spreads n frames, n a multiple of 8, over the channels at dst.
+//
+//go:noescape
+func fourFrom32AVX2(dst **float32, src *byte, frame int, n int)
+
+// eightFromFloat32AVX2 spreads n frames, n a multiple of 8, over the channels at dst. It returns a value other than 0 if one was not finite.
+//
+//go:noescape
+func eightFromFloat32AVX2(dst **float32, src *byte, frame int, n int) uint32
+
+// fourFromFloat32AVX2 spreads n frames, n a multiple of 8, over the channels at dst. It returns a value other than 0 if one was not finite.
+//
+//go:noescape
+func fourFromFloat32AVX2(dst **float32, src *byte, frame int, n int) uint32

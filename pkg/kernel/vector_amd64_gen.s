@@ -13,21 +13,37 @@ TEXT ·addFIRAVX2(SB), NOSPLIT, $0-40
 	MOVQ h+24(FP), BX
 	MOVQ taps+32(FP), SI
 
-wide_block:
-	CMPQ    CX, $0x20
-	JL      narrow_block
+wide:
+	CMPQ    CX, $0x00000060
+	JL      middle
 	VMOVUPS (AX), Y0
 	VMOVUPS 32(AX), Y1
 	VMOVUPS 64(AX), Y2
 	VMOVUPS 96(AX), Y3
+	VMOVUPS 128(AX), Y4
+	VMOVUPS 160(AX), Y5
+	VMOVUPS 192(AX), Y6
+	VMOVUPS 224(AX), Y7
+	VMOVUPS 256(AX), Y8
+	VMOVUPS 288(AX), Y9
+	VMOVUPS 320(AX), Y10
+	VMOVUPS 352(AX), Y11
 	XORQ    DI, DI
 
 wide_tap:
-	VBROADCASTSS (BX)(DI*4), Y4
-	VFMADD231PS  (DX)(DI*4), Y4, Y0
-	VFMADD231PS  32(DX)(DI*4), Y4, Y1
-	VFMADD231PS  64(DX)(DI*4), Y4, Y2
-	VFMADD231PS  96(DX)(DI*4), Y4, Y3
+	VBROADCASTSS (BX)(DI*4), Y12
+	VFMADD231PS  (DX)(DI*4), Y12, Y0
+	VFMADD231PS  32(DX)(DI*4), Y12, Y1
+	VFMADD231PS  64(DX)(DI*4), Y12, Y2
+	VFMADD231PS  96(DX)(DI*4), Y12, Y3
+	VFMADD231PS  128(DX)(DI*4), Y12, Y4
+	VFMADD231PS  160(DX)(DI*4), Y12, Y5
+	VFMADD231PS  192(DX)(DI*4), Y12, Y6
+	VFMADD231PS  224(DX)(DI*4), Y12, Y7
+	VFMADD231PS  256(DX)(DI*4), Y12, Y8
+	VFMADD231PS  288(DX)(DI*4), Y12, Y9
+	VFMADD231PS  320(DX)(DI*4), Y12, Y10
+	VFMADD231PS  352(DX)(DI*4), Y12, Y11
 	INCQ         DI
 	CMPQ         DI, SI
 	JL           wide_tap
@@ -35,13 +51,48 @@ wide_tap:
 	VMOVUPS      Y1, 32(AX)
 	VMOVUPS      Y2, 64(AX)
 	VMOVUPS      Y3, 96(AX)
-	ADDQ         $0x80, AX
-	ADDQ         $0x80, DX
-	SUBQ         $0x20, CX
-	JMP          wide_block
+	VMOVUPS      Y4, 128(AX)
+	VMOVUPS      Y5, 160(AX)
+	VMOVUPS      Y6, 192(AX)
+	VMOVUPS      Y7, 224(AX)
+	VMOVUPS      Y8, 256(AX)
+	VMOVUPS      Y9, 288(AX)
+	VMOVUPS      Y10, 320(AX)
+	VMOVUPS      Y11, 352(AX)
+	ADDQ         $0x00000180, AX
+	ADDQ         $0x00000180, DX
+	SUBQ         $0x00000060, CX
+	JMP          wide
 
-narrow_block:
-	CMPQ    CX, $0x08
+middle:
+	CMPQ    CX, $0x00000020
+	JL      narrow
+	VMOVUPS (AX), Y0
+	VMOVUPS 32(AX), Y1
+	VMOVUPS 64(AX), Y2
+	VMOVUPS 96(AX), Y3
+	XORQ    DI, DI
+
+middle_tap:
+	VBROADCASTSS (BX)(DI*4), Y4
+	VFMADD231PS  (DX)(DI*4), Y4, Y0
+	VFMADD231PS  32(DX)(DI*4), Y4, Y1
+	VFMADD231PS  64(DX)(DI*4), Y4, Y2
+	VFMADD231PS  96(DX)(DI*4), Y4, Y3
+	INCQ         DI
+	CMPQ         DI, SI
+	JL           middle_tap
+	VMOVUPS      Y0, (AX)
+	VMOVUPS      Y1, 32(AX)
+	VMOVUPS      Y2, 64(AX)
+	VMOVUPS      Y3, 96(AX)
+	ADDQ         $0x00000080, AX
+	ADDQ         $0x00000080, DX
+	SUBQ         $0x00000020, CX
+	JMP          middle
+
+narrow:
+	CMPQ    CX, $0x00000008
 	JL      done
 	VMOVUPS (AX), Y0
 	XORQ    DI, DI
@@ -53,10 +104,10 @@ narrow_tap:
 	CMPQ         DI, SI
 	JL           narrow_tap
 	VMOVUPS      Y0, (AX)
-	ADDQ         $0x20, AX
-	ADDQ         $0x20, DX
-	SUBQ         $0x08, CX
-	JMP          narrow_block
+	ADDQ         $0x00000020, AX
+	ADDQ         $0x00000020, DX
+	SUBQ         $0x00000008, CX
+	JMP          narrow
 
 done:
 	VZEROUPPER
@@ -93,5 +144,1477 @@ bins:
 	JMP          bins
 
 end:
+	VZEROUPPER
+	RET
+
+// func firstStepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
+// Requires: AVX, FMA3
+TEXT ·firstStepAVX2(SB), NOSPLIT, $0-48
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ xr+16(FP), DX
+	MOVQ xi+24(FP), BX
+	MOVQ wide+32(FP), SI
+	MOVQ count+40(FP), DI
+	MOVQ DI, R8
+	SHLQ $0x02, R8
+	LEAQ (R8)(R8*2), R9
+	LEAQ (SI)(R8*4), R10
+
+eight:
+	VMOVUPS      (DX), Y0
+	VMOVUPS      (BX), Y1
+	VMOVUPS      (DX)(R8*2), Y2
+	VMOVUPS      (BX)(R8*2), Y3
+	VADDPS       Y2, Y0, Y4
+	VSUBPS       Y2, Y0, Y0
+	VADDPS       Y3, Y1, Y2
+	VSUBPS       Y3, Y1, Y1
+	VMOVUPS      (DX)(R8*1), Y3
+	VMOVUPS      (BX)(R8*1), Y5
+	VMOVUPS      (DX)(R9*1), Y6
+	VMOVUPS      (BX)(R9*1), Y7
+	VADDPS       Y6, Y3, Y8
+	VSUBPS       Y6, Y3, Y3
+	VADDPS       Y7, Y5, Y6
+	VSUBPS       Y7, Y5, Y5
+	VADDPS       Y8, Y4, Y7
+	VSUBPS       Y8, Y4, Y4
+	VADDPS       Y6, Y2, Y8
+	VSUBPS       Y6, Y2, Y2
+	VADDPS       Y5, Y0, Y6
+	VSUBPS       Y5, Y0, Y0
+	VADDPS       Y3, Y1, Y5
+	VSUBPS       Y3, Y1, Y1
+	VMULPS       (SI)(R8*1), Y6, Y3
+	VFMADD231PS  (SI), Y1, Y3
+	VMULPS       (SI)(R8*1), Y1, Y1
+	VFMSUB132PS  (SI), Y1, Y6
+	VMULPS       (SI)(R9*1), Y4, Y1
+	VFMADD231PS  (SI)(R8*2), Y2, Y1
+	VMULPS       (SI)(R9*1), Y2, Y2
+	VFMSUB132PS  (SI)(R8*2), Y2, Y4
+	VMULPS       (R10)(R8*1), Y0, Y2
+	VFMADD231PS  (R10), Y5, Y2
+	VMULPS       (R10)(R8*1), Y5, Y5
+	VFMSUB132PS  (R10), Y5, Y0
+	VUNPCKLPS    Y6, Y7, Y5
+	VUNPCKLPS    Y0, Y4, Y9
+	VUNPCKHPS    Y6, Y7, Y10
+	VUNPCKHPS    Y0, Y4, Y0
+	VUNPCKLPD    Y9, Y5, Y7
+	VMOVUPS      X7, (AX)
+	VEXTRACTF128 $0x01, Y7, 64(AX)
+	VUNPCKHPD    Y9, Y5, Y6
+	VMOVUPS      X6, 16(AX)
+	VEXTRACTF128 $0x01, Y6, 80(AX)
+	VUNPCKLPD    Y0, Y10, Y4
+	VMOVUPS      X4, 32(AX)
+	VEXTRACTF128 $0x01, Y4, 96(AX)
+	VUNPCKHPD    Y0, Y10, Y0
+	VMOVUPS      X0, 48(AX)
+	VEXTRACTF128 $0x01, Y0, 112(AX)
+	VUNPCKLPS    Y3, Y8, Y0
+	VUNPCKLPS    Y2, Y1, Y4
+	VUNPCKHPS    Y3, Y8, Y5
+	VUNPCKHPS    Y2, Y1, Y2
+	VUNPCKLPD    Y4, Y0, Y8
+	VMOVUPS      X8, (CX)
+	VEXTRACTF128 $0x01, Y8, 64(CX)
+	VUNPCKHPD    Y4, Y0, Y3
+	VMOVUPS      X3, 16(CX)
+	VEXTRACTF128 $0x01, Y3, 80(CX)
+	VUNPCKLPD    Y2, Y5, Y1
+	VMOVUPS      X1, 32(CX)
+	VEXTRACTF128 $0x01, Y1, 96(CX)
+	VUNPCKHPD    Y2, Y5, Y2
+	VMOVUPS      X2, 48(CX)
+	VEXTRACTF128 $0x01, Y2, 112(CX)
+	ADDQ         $0x20, DX
+	ADDQ         $0x20, BX
+	ADDQ         $0x20, SI
+	ADDQ         $0x20, R10
+	ADDQ         $0x80, AX
+	ADDQ         $0x80, CX
+	SUBQ         $0x08, DI
+	JNZ          eight
+	VZEROUPPER
+	RET
+
+// func firstStepRealAVX2(yr *float32, yi *float32, x *float32, wide *float32, count int)
+// Requires: AVX, FMA3
+TEXT ·firstStepRealAVX2(SB), NOSPLIT, $0-40
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ x+16(FP), DX
+	MOVQ wide+24(FP), BX
+	MOVQ count+32(FP), SI
+	MOVQ SI, DI
+	SHLQ $0x02, DI
+	LEAQ (DI)(DI*2), R8
+	LEAQ (BX)(DI*4), R9
+	MOVQ DI, R10
+	SHLQ $0x01, R10
+	LEAQ (R10)(R10*2), R11
+
+eight:
+	VBROADCASTF128 (DX), Y0
+	VINSERTF128    $0x01, 32(DX), Y0, Y0
+	VBROADCASTF128 16(DX), Y1
+	VINSERTF128    $0x01, 48(DX), Y1, Y1
+	VSHUFPS        $0x88, Y1, Y0, Y2
+	VSHUFPS        $0xdd, Y1, Y0, Y0
+	VBROADCASTF128 (DX)(R10*2), Y1
+	VINSERTF128    $0x01, 32(DX)(R10*2), Y1, Y1
+	VBROADCASTF128 16(DX)(R10*2), Y3
+	VINSERTF128    $0x01, 48(DX)(R10*2), Y3, Y3
+	VSHUFPS        $0x88, Y3, Y1, Y4
+	VSHUFPS        $0xdd, Y3, Y1, Y1
+	VADDPS         Y4, Y2, Y3
+	VSUBPS         Y4, Y2, Y2
+	VADDPS         Y1, Y0, Y4
+	VSUBPS         Y1, Y0, Y0
+	VBROADCASTF128 (DX)(R10*1), Y1
+	VINSERTF128    $0x01, 32(DX)(R10*1), Y1, Y1
+	VBROADCASTF128 16(DX)(R10*1), Y5
+	VINSERTF128    $0x01, 48(DX)(R10*1), Y5, Y5
+	VSHUFPS        $0x88, Y5, Y1, Y6
+	VSHUFPS        $0xdd, Y5, Y1, Y1
+	VBROADCASTF128 (DX)(R11*1), Y5
+	VINSERTF128    $0x01, 32(DX)(R11*1), Y5, Y5
+	VBROADCASTF128 16(DX)(R11*1), Y7
+	VINSERTF128    $0x01, 48(DX)(R11*1), Y7, Y7
+	VSHUFPS        $0x88, Y7, Y5, Y8
+	VSHUFPS        $0xdd, Y7, Y5, Y5
+	VADDPS         Y8, Y6, Y7
+	VSUBPS         Y8, Y6, Y6
+	VADDPS         Y5, Y1, Y8
+	VSUBPS         Y5, Y1, Y1
+	VADDPS         Y7, Y3, Y5
+	VSUBPS         Y7, Y3, Y3
+	VADDPS         Y8, Y4, Y7
+	VSUBPS         Y8, Y4, Y4
+	VADDPS         Y1, Y2, Y8
+	VSUBPS         Y1, Y2, Y2
+	VADDPS         Y6, Y0, Y1
+	VSUBPS         Y6, Y0, Y0
+	VMULPS         (BX)(DI*1), Y8, Y6
+	VFMADD231PS    (BX), Y0, Y6
+	VMULPS         (BX)(DI*1), Y0, Y0
+	VFMSUB132PS    (BX), Y0, Y8
+	VMULPS         (BX)(R8*1), Y3, Y0
+	VFMADD231PS    (BX)(DI*2), Y4, Y0
+	VMULPS         (BX)(R8*1), Y4, Y4
+	VFMSUB132PS    (BX)(DI*2), Y4, Y3
+	VMULPS         (R9)(DI*1), Y2, Y4
+	VFMADD231PS    (R9), Y1, Y4
+	VMULPS         (R9)(DI*1), Y1, Y1
+	VFMSUB132PS    (R9), Y1, Y2
+	VUNPCKLPS      Y8, Y5, Y1
+	VUNPCKLPS      Y2, Y3, Y9
+	VUNPCKHPS      Y8, Y5, Y10
+	VUNPCKHPS      Y2, Y3, Y2
+	VUNPCKLPD      Y9, Y1, Y5
+	VMOVUPS        X5, (AX)
+	VEXTRACTF128   $0x01, Y5, 64(AX)
+	VUNPCKHPD      Y9, Y1, Y8
+	VMOVUPS        X8, 16(AX)
+	VEXTRACTF128   $0x01, Y8, 80(AX)
+	VUNPCKLPD      Y2, Y10, Y3
+	VMOVUPS        X3, 32(AX)
+	VEXTRACTF128   $0x01, Y3, 96(AX)
+	VUNPCKHPD      Y2, Y10, Y2
+	VMOVUPS        X2, 48(AX)
+	VEXTRACTF128   $0x01, Y2, 112(AX)
+	VUNPCKLPS      Y6, Y7, Y1
+	VUNPCKLPS      Y4, Y0, Y2
+	VUNPCKHPS      Y6, Y7, Y3
+	VUNPCKHPS      Y4, Y0, Y4
+	VUNPCKLPD      Y2, Y1, Y7
+	VMOVUPS        X7, (CX)
+	VEXTRACTF128   $0x01, Y7, 64(CX)
+	VUNPCKHPD      Y2, Y1, Y6
+	VMOVUPS        X6, 16(CX)
+	VEXTRACTF128   $0x01, Y6, 80(CX)
+	VUNPCKLPD      Y4, Y3, Y0
+	VMOVUPS        X0, 32(CX)
+	VEXTRACTF128   $0x01, Y0, 96(CX)
+	VUNPCKHPD      Y4, Y3, Y4
+	VMOVUPS        X4, 48(CX)
+	VEXTRACTF128   $0x01, Y4, 112(CX)
+	ADDQ           $0x40, DX
+	ADDQ           $0x20, BX
+	ADDQ           $0x20, R9
+	ADDQ           $0x80, AX
+	ADDQ           $0x80, CX
+	SUBQ           $0x08, SI
+	JNZ            eight
+	VZEROUPPER
+	RET
+
+// func secondStepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int)
+// Requires: AVX, FMA3
+TEXT ·secondStepAVX2(SB), NOSPLIT, $0-48
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ xr+16(FP), DX
+	MOVQ xi+24(FP), BX
+	MOVQ tw+32(FP), SI
+	MOVQ count+40(FP), DI
+	MOVQ DI, R8
+	SHLQ $0x04, R8
+	LEAQ (R8)(R8*2), R9
+
+two:
+	VMOVUPS      (DX), Y0
+	VMOVUPS      (BX), Y1
+	VMOVUPS      (DX)(R8*2), Y2
+	VMOVUPS      (BX)(R8*2), Y3
+	VADDPS       Y2, Y0, Y4
+	VSUBPS       Y2, Y0, Y0
+	VADDPS       Y3, Y1, Y2
+	VSUBPS       Y3, Y1, Y1
+	VMOVUPS      (DX)(R8*1), Y3
+	VMOVUPS      (BX)(R8*1), Y5
+	VMOVUPS      (DX)(R9*1), Y6
+	VMOVUPS      (BX)(R9*1), Y7
+	VADDPS       Y6, Y3, Y8
+	VSUBPS       Y6, Y3, Y3
+	VADDPS       Y7, Y5, Y6
+	VSUBPS       Y7, Y5, Y5
+	VADDPS       Y8, Y4, Y7
+	VSUBPS       Y8, Y4, Y4
+	VADDPS       Y6, Y2, Y8
+	VSUBPS       Y6, Y2, Y2
+	VADDPS       Y5, Y0, Y6
+	VSUBPS       Y5, Y0, Y0
+	VADDPS       Y3, Y1, Y5
+	VSUBPS       Y3, Y1, Y1
+	VBROADCASTSS (SI), Y3
+	VBROADCASTSS 24(SI), Y9
+	VBLENDPS     $0xf0, Y9, Y3, Y3
+	VBROADCASTSS 4(SI), Y9
+	VBROADCASTSS 28(SI), Y10
+	VBLENDPS     $0xf0, Y10, Y9, Y9
+	VMULPS       Y9, Y6, Y10
+	VFMADD231PS  Y3, Y1, Y10
+	VMULPS       Y9, Y1, Y1
+	VFMSUB132PS  Y3, Y1, Y6
+	VBROADCASTSS 8(SI), Y1
+	VBROADCASTSS 32(SI), Y3
+	VBLENDPS     $0xf0, Y3, Y1, Y1
+	VBROADCASTSS 12(SI), Y3
+	VBROADCASTSS 36(SI), Y9
+	VBLENDPS     $0xf0, Y9, Y3, Y3
+	VMULPS       Y3, Y4, Y9
+	VFMADD231PS  Y1, Y2, Y9
+	VMULPS       Y3, Y2, Y2
+	VFMSUB132PS  Y1, Y2, Y4
+	VBROADCASTSS 16(SI), Y1
+	VBROADCASTSS 40(SI), Y2
+	VBLENDPS     $0xf0, Y2, Y1, Y1
+	VBROADCASTSS 20(SI), Y2
+	VBROADCASTSS 44(SI), Y3
+	VBLENDPS     $0xf0, Y3, Y2, Y2
+	VMULPS       Y2, Y0, Y3
+	VFMADD231PS  Y1, Y5, Y3
+	VMULPS       Y2, Y5, Y5
+	VFMSUB132PS  Y1, Y5, Y0
+	VMOVUPS      X7, (AX)
+	VEXTRACTF128 $0x01, Y7, 64(AX)
+	VMOVUPS      X8, (CX)
+	VEXTRACTF128 $0x01, Y8, 64(CX)
+	VMOVUPS      X6, 16(AX)
+	VEXTRACTF128 $0x01, Y6, 80(AX)
+	VMOVUPS      X10, 16(CX)
+	VEXTRACTF128 $0x01, Y10, 80(CX)
+	VMOVUPS      X4, 32(AX)
+	VEXTRACTF128 $0x01, Y4, 96(AX)
+	VMOVUPS      X9, 32(CX)
+	VEXTRACTF128 $0x01, Y9, 96(CX)
+	VMOVUPS      X0, 48(AX)
+	VEXTRACTF128 $0x01, Y0, 112(AX)
+	VMOVUPS      X3, 48(CX)
+	VEXTRACTF128 $0x01, Y3, 112(CX)
+	ADDQ         $0x20, DX
+	ADDQ         $0x20, BX
+	ADDQ         $0x80, AX
+	ADDQ         $0x80, CX
+	ADDQ         $0x30, SI
+	SUBQ         $0x02, DI
+	JNZ          two
+	VZEROUPPER
+	RET
+
+// func stepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int, s int)
+// Requires: AVX, FMA3
+TEXT ·stepAVX2(SB), NOSPLIT, $0-56
+	MOVQ  yr+0(FP), AX
+	MOVQ  yi+8(FP), CX
+	MOVQ  xr+16(FP), DX
+	MOVQ  xi+24(FP), BX
+	MOVQ  tw+32(FP), SI
+	MOVQ  count+40(FP), DI
+	MOVQ  s+48(FP), R8
+	SHLQ  $0x02, R8
+	MOVQ  DI, R9
+	IMULQ R8, R9
+	LEAQ  (R9)(R9*2), R10
+	LEAQ  (R8)(R8*2), R11
+
+twiddle:
+	VBROADCASTSS (SI), Y0
+	VBROADCASTSS 4(SI), Y1
+	VBROADCASTSS 8(SI), Y2
+	VBROADCASTSS 12(SI), Y3
+	VBROADCASTSS 16(SI), Y4
+	VBROADCASTSS 20(SI), Y5
+	MOVQ         R8, R12
+
+eight:
+	VMOVUPS     (DX), Y6
+	VMOVUPS     (BX), Y7
+	VMOVUPS     (DX)(R9*2), Y8
+	VMOVUPS     (BX)(R9*2), Y9
+	VADDPS      Y8, Y6, Y10
+	VSUBPS      Y8, Y6, Y6
+	VADDPS      Y9, Y7, Y8
+	VSUBPS      Y9, Y7, Y7
+	VMOVUPS     (DX)(R9*1), Y9
+	VMOVUPS     (BX)(R9*1), Y11
+	VMOVUPS     (DX)(R10*1), Y12
+	VMOVUPS     (BX)(R10*1), Y13
+	VADDPS      Y12, Y9, Y14
+	VSUBPS      Y12, Y9, Y9
+	VADDPS      Y13, Y11, Y12
+	VSUBPS      Y13, Y11, Y11
+	VADDPS      Y14, Y10, Y13
+	VSUBPS      Y14, Y10, Y10
+	VADDPS      Y12, Y8, Y14
+	VSUBPS      Y12, Y8, Y8
+	VADDPS      Y11, Y6, Y12
+	VSUBPS      Y11, Y6, Y6
+	VADDPS      Y9, Y7, Y11
+	VSUBPS      Y9, Y7, Y7
+	VMOVUPS     Y13, (AX)
+	VMOVUPS     Y14, (CX)
+	VMULPS      Y1, Y12, Y9
+	VFMADD231PS Y0, Y7, Y9
+	VMULPS      Y1, Y7, Y7
+	VFMSUB132PS Y0, Y7, Y12
+	VMOVUPS     Y12, (AX)(R8*1)
+	VMOVUPS     Y9, (CX)(R8*1)
+	VMULPS      Y3, Y10, Y7
+	VFMADD231PS Y2, Y8, Y7
+	VMULPS      Y3, Y8, Y8
+	VFMSUB132PS Y2, Y8, Y10
+	VMOVUPS     Y10, (AX)(R8*2)
+	VMOVUPS     Y7, (CX)(R8*2)
+	VMULPS      Y5, Y6, Y7
+	VFMADD231PS Y4, Y11, Y7
+	VMULPS      Y5, Y11, Y11
+	VFMSUB132PS Y4, Y11, Y6
+	VMOVUPS     Y6, (AX)(R11*1)
+	VMOVUPS     Y7, (CX)(R11*1)
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, CX
+	SUBQ        $0x20, R12
+	JNZ         eight
+	ADDQ        R11, AX
+	ADDQ        R11, CX
+	ADDQ        $0x18, SI
+	DECQ        DI
+	JNZ         twiddle
+	VZEROUPPER
+	RET
+
+// func lastStep2AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+// Requires: AVX
+TEXT ·lastStep2AVX2(SB), NOSPLIT, $0-40
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ xr+16(FP), DX
+	MOVQ xi+24(FP), BX
+	MOVQ s+32(FP), SI
+	SHLQ $0x02, SI
+	MOVQ SI, DI
+
+eight:
+	VMOVUPS (DX), Y0
+	VMOVUPS (DX)(DI*1), Y1
+	VADDPS  Y1, Y0, Y2
+	VSUBPS  Y1, Y0, Y0
+	VMOVUPS Y2, (AX)
+	VMOVUPS Y0, (AX)(DI*1)
+	VMOVUPS (BX), Y0
+	VMOVUPS (BX)(DI*1), Y1
+	VADDPS  Y1, Y0, Y2
+	VSUBPS  Y1, Y0, Y0
+	VMOVUPS Y2, (CX)
+	VMOVUPS Y0, (CX)(DI*1)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DX
+	ADDQ    $0x20, BX
+	SUBQ    $0x20, SI
+	JNZ     eight
+	VZEROUPPER
+	RET
+
+// func lastStep4AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+// Requires: AVX
+TEXT ·lastStep4AVX2(SB), NOSPLIT, $0-40
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ xr+16(FP), DX
+	MOVQ xi+24(FP), BX
+	MOVQ s+32(FP), SI
+	SHLQ $0x02, SI
+	MOVQ SI, DI
+	LEAQ (DI)(DI*2), R8
+
+eight:
+	VMOVUPS (DX), Y0
+	VMOVUPS (BX), Y1
+	VMOVUPS (DX)(DI*2), Y2
+	VMOVUPS (BX)(DI*2), Y3
+	VADDPS  Y2, Y0, Y4
+	VSUBPS  Y2, Y0, Y0
+	VADDPS  Y3, Y1, Y2
+	VSUBPS  Y3, Y1, Y1
+	VMOVUPS (DX)(DI*1), Y3
+	VMOVUPS (BX)(DI*1), Y5
+	VMOVUPS (DX)(R8*1), Y6
+	VMOVUPS (BX)(R8*1), Y7
+	VADDPS  Y6, Y3, Y8
+	VSUBPS  Y6, Y3, Y3
+	VADDPS  Y7, Y5, Y6
+	VSUBPS  Y7, Y5, Y5
+	VADDPS  Y8, Y4, Y7
+	VSUBPS  Y8, Y4, Y4
+	VADDPS  Y6, Y2, Y8
+	VSUBPS  Y6, Y2, Y2
+	VADDPS  Y5, Y0, Y6
+	VSUBPS  Y5, Y0, Y0
+	VADDPS  Y3, Y1, Y5
+	VSUBPS  Y3, Y1, Y1
+	VMOVUPS Y7, (AX)
+	VMOVUPS Y8, (CX)
+	VMOVUPS Y6, (AX)(DI*1)
+	VMOVUPS Y1, (CX)(DI*1)
+	VMOVUPS Y4, (AX)(DI*2)
+	VMOVUPS Y2, (CX)(DI*2)
+	VMOVUPS Y0, (AX)(R8*1)
+	VMOVUPS Y5, (CX)(R8*1)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DX
+	ADDQ    $0x20, BX
+	SUBQ    $0x20, SI
+	JNZ     eight
+	VZEROUPPER
+	RET
+
+DATA rootHalf<>+0(SB)/4, $(0.70710677)
+GLOBL rootHalf<>(SB), RODATA|NOPTR, $4
+
+// func lastStep8AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+// Requires: AVX
+TEXT ·lastStep8AVX2(SB), NOSPLIT, $0-40
+	MOVQ         yr+0(FP), AX
+	MOVQ         yi+8(FP), CX
+	MOVQ         xr+16(FP), DX
+	MOVQ         xi+24(FP), BX
+	MOVQ         s+32(FP), SI
+	SHLQ         $0x02, SI
+	MOVQ         SI, DI
+	LEAQ         (DI)(DI*2), R8
+	LEAQ         (DI)(DI*4), R9
+	LEAQ         (R8)(DI*4), R10
+	VBROADCASTSS rootHalf<>+0(SB), Y0
+
+eight:
+	VMOVUPS (DX), Y1
+	VMOVUPS (BX), Y2
+	VADDPS  (DX)(DI*4), Y1, Y1
+	VADDPS  (BX)(DI*4), Y2, Y2
+	VMOVUPS (DX)(DI*2), Y3
+	VMOVUPS (BX)(DI*2), Y4
+	VADDPS  (DX)(R8*2), Y3, Y3
+	VADDPS  (BX)(R8*2), Y4, Y4
+	VADDPS  Y3, Y1, Y5
+	VSUBPS  Y3, Y1, Y1
+	VADDPS  Y4, Y2, Y3
+	VSUBPS  Y4, Y2, Y2
+	VMOVUPS (DX)(DI*1), Y4
+	VMOVUPS (BX)(DI*1), Y6
+	VADDPS  (DX)(R9*1), Y4, Y4
+	VADDPS  (BX)(R9*1), Y6, Y6
+	VMOVUPS (DX)(R8*1), Y7
+	VMOVUPS (BX)(R8*1), Y8
+	VADDPS  (DX)(R10*1), Y7, Y7
+	VADDPS  (BX)(R10*1), Y8, Y8
+	VADDPS  Y7, Y4, Y9
+	VSUBPS  Y7, Y4, Y4
+	VADDPS  Y8, Y6, Y7
+	VSUBPS  Y8, Y6, Y6
+	VADDPS  Y9, Y5, Y8
+	VSUBPS  Y9, Y5, Y5
+	VADDPS  Y7, Y3, Y9
+	VSUBPS  Y7, Y3, Y3
+	VADDPS  Y6, Y1, Y7
+	VSUBPS  Y6, Y1, Y1
+	VADDPS  Y4, Y2, Y6
+	VSUBPS  Y4, Y2, Y2
+	VMOVUPS Y8, (AX)
+	VMOVUPS Y9, (CX)
+	VMOVUPS Y7, (AX)(DI*2)
+	VMOVUPS Y2, (CX)(DI*2)
+	VMOVUPS Y5, (AX)(DI*4)
+	VMOVUPS Y3, (CX)(DI*4)
+	VMOVUPS Y1, (AX)(R8*2)
+	VMOVUPS Y6, (CX)(R8*2)
+	VMOVUPS (DX), Y1
+	VMOVUPS (BX), Y2
+	VSUBPS  (DX)(DI*4), Y1, Y1
+	VSUBPS  (BX)(DI*4), Y2, Y2
+	VMOVUPS (DX)(DI*2), Y3
+	VMOVUPS (BX)(DI*2), Y4
+	VSUBPS  (DX)(R8*2), Y3, Y3
+	VSUBPS  (BX)(R8*2), Y4, Y4
+	VADDPS  Y4, Y1, Y5
+	VSUBPS  Y4, Y1, Y1
+	VADDPS  Y3, Y2, Y4
+	VSUBPS  Y3, Y2, Y2
+	VMOVUPS (DX)(DI*1), Y3
+	VMOVUPS (BX)(DI*1), Y6
+	VSUBPS  (DX)(R9*1), Y3, Y3
+	VSUBPS  (BX)(R9*1), Y6, Y6
+	VADDPS  Y6, Y3, Y7
+	VSUBPS  Y3, Y6, Y6
+	VMULPS  Y0, Y7, Y7
+	VMULPS  Y0, Y6, Y6
+	VMOVUPS (DX)(R8*1), Y3
+	VMOVUPS (BX)(R8*1), Y8
+	VSUBPS  (DX)(R10*1), Y3, Y3
+	VSUBPS  (BX)(R10*1), Y8, Y8
+	VADDPS  Y8, Y3, Y9
+	VSUBPS  Y3, Y8, Y8
+	VMULPS  Y0, Y9, Y9
+	VMULPS  Y0, Y8, Y8
+	VADDPS  Y8, Y7, Y3
+	VSUBPS  Y8, Y7, Y7
+	VADDPS  Y9, Y6, Y8
+	VSUBPS  Y9, Y6, Y6
+	VADDPS  Y3, Y5, Y9
+	VSUBPS  Y3, Y5, Y5
+	VADDPS  Y6, Y2, Y3
+	VSUBPS  Y6, Y2, Y2
+	VADDPS  Y8, Y1, Y6
+	VSUBPS  Y8, Y1, Y1
+	VADDPS  Y7, Y4, Y8
+	VSUBPS  Y7, Y4, Y4
+	VMOVUPS Y9, (AX)(DI*1)
+	VMOVUPS Y3, (CX)(DI*1)
+	VMOVUPS Y6, (AX)(R8*1)
+	VMOVUPS Y4, (CX)(R8*1)
+	VMOVUPS Y5, (AX)(R9*1)
+	VMOVUPS Y2, (CX)(R9*1)
+	VMOVUPS Y1, (AX)(R10*1)
+	VMOVUPS Y8, (CX)(R10*1)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DX
+	ADDQ    $0x20, BX
+	SUBQ    $0x20, SI
+	JNZ     eight
+	VZEROUPPER
+	RET
+
+DATA backwards<>+0(SB)/4, $0x00000007
+DATA backwards<>+4(SB)/4, $0x00000006
+DATA backwards<>+8(SB)/4, $0x00000005
+DATA backwards<>+12(SB)/4, $0x00000004
+DATA backwards<>+16(SB)/4, $0x00000003
+DATA backwards<>+20(SB)/4, $0x00000002
+DATA backwards<>+24(SB)/4, $0x00000001
+DATA backwards<>+28(SB)/4, $0x00000000
+GLOBL backwards<>(SB), RODATA|NOPTR, $32
+
+DATA oneHalf<>+0(SB)/4, $(0.5)
+GLOBL oneHalf<>(SB), RODATA|NOPTR, $4
+
+// func splitHalvesAVX2(re *float32, im *float32, cos *float32, sin *float32, last int, n int)
+// Requires: AVX, AVX2, FMA3
+TEXT ·splitHalvesAVX2(SB), NOSPLIT, $0-48
+	MOVQ         re+0(FP), AX
+	MOVQ         im+8(FP), CX
+	MOVQ         cos+16(FP), DX
+	MOVQ         sin+24(FP), BX
+	MOVQ         last+32(FP), SI
+	MOVQ         n+40(FP), DI
+	LEAQ         -28(AX)(SI*4), R8
+	LEAQ         -28(CX)(SI*4), SI
+	VMOVDQU      backwards<>+0(SB), Y0
+	VBROADCASTSS oneHalf<>+0(SB), Y1
+
+eight:
+	VMOVUPS      4(AX), Y2
+	VMOVUPS      4(CX), Y3
+	VPERMPS      (R8), Y0, Y4
+	VPERMPS      (SI), Y0, Y5
+	VADDPS       Y4, Y2, Y6
+	VSUBPS       Y4, Y2, Y2
+	VADDPS       Y5, Y3, Y4
+	VSUBPS       Y5, Y3, Y3
+	VMULPS       Y1, Y6, Y6
+	VMULPS       Y1, Y2, Y2
+	VMULPS       Y1, Y4, Y4
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      4(DX), Y5
+	VMOVUPS      4(BX), Y7
+	VMULPS       Y5, Y4, Y8
+	VFNMADD231PS Y2, Y7, Y8
+	VMULPS       Y7, Y4, Y4
+	VFMADD231PS  Y2, Y5, Y4
+	VADDPS       Y8, Y6, Y2
+	VMOVUPS      Y2, 4(AX)
+	VSUBPS       Y4, Y3, Y2
+	VMOVUPS      Y2, 4(CX)
+	VSUBPS       Y8, Y6, Y6
+	VPERMPS      Y6, Y0, Y6
+	VMOVUPS      Y6, (R8)
+	VXORPS       Y2, Y2, Y2
+	VSUBPS       Y4, Y2, Y2
+	VSUBPS       Y3, Y2, Y2
+	VPERMPS      Y2, Y0, Y2
+	VMOVUPS      Y2, (SI)
+	ADDQ         $0x20, AX
+	ADDQ         $0x20, CX
+	ADDQ         $0x20, DX
+	ADDQ         $0x20, BX
+	SUBQ         $0x20, R8
+	SUBQ         $0x20, SI
+	SUBQ         $0x08, DI
+	JNZ          eight
+	VZEROUPPER
+	RET
+
+// func joinHalvesAVX2(zr *float32, zi *float32, re *float32, im *float32, cos *float32, sin *float32, last int, n int)
+// Requires: AVX, AVX2, FMA3
+TEXT ·joinHalvesAVX2(SB), NOSPLIT, $0-64
+	MOVQ    zr+0(FP), AX
+	MOVQ    zi+8(FP), CX
+	MOVQ    re+16(FP), DX
+	MOVQ    im+24(FP), BX
+	MOVQ    cos+32(FP), SI
+	MOVQ    sin+40(FP), DI
+	MOVQ    last+48(FP), R8
+	MOVQ    n+56(FP), R9
+	LEAQ    -28(DX)(R8*4), R10
+	LEAQ    -28(BX)(R8*4), R11
+	LEAQ    -28(AX)(R8*4), R12
+	LEAQ    -28(CX)(R8*4), R8
+	VMOVDQU backwards<>+0(SB), Y0
+
+eight:
+	VMOVUPS      4(DX), Y1
+	VMOVUPS      4(BX), Y2
+	VPERMPS      (R10), Y0, Y3
+	VADDPS       Y3, Y1, Y4
+	VSUBPS       Y3, Y1, Y1
+	VPERMPS      (R11), Y0, Y3
+	VADDPS       Y3, Y2, Y5
+	VSUBPS       Y3, Y2, Y2
+	VMOVUPS      4(SI), Y3
+	VMOVUPS      4(DI), Y6
+	VMULPS       Y3, Y1, Y7
+	VFNMADD231PS Y6, Y5, Y7
+	VMULPS       Y6, Y1, Y1
+	VFMADD231PS  Y3, Y5, Y1
+	VSUBPS       Y1, Y4, Y3
+	VMOVUPS      Y3, 4(AX)
+	VADDPS       Y7, Y2, Y3
+	VMOVUPS      Y3, 4(CX)
+	VADDPS       Y1, Y4, Y4
+	VPERMPS      Y4, Y0, Y4
+	VMOVUPS      Y4, (R12)
+	VSUBPS       Y2, Y7, Y7
+	VPERMPS      Y7, Y0, Y7
+	VMOVUPS      Y7, (R8)
+	ADDQ         $0x20, AX
+	ADDQ         $0x20, CX
+	ADDQ         $0x20, DX
+	ADDQ         $0x20, BX
+	ADDQ         $0x20, SI
+	ADDQ         $0x20, DI
+	SUBQ         $0x20, R10
+	SUBQ         $0x20, R11
+	SUBQ         $0x20, R12
+	SUBQ         $0x20, R8
+	SUBQ         $0x08, R9
+	JNZ          eight
+	VZEROUPPER
+	RET
+
+// func alternateAVX2(x *float32, zr *float32, zi *float32, scale float32, n int)
+// Requires: AVX
+TEXT ·alternateAVX2(SB), NOSPLIT, $0-40
+	MOVQ         x+0(FP), AX
+	MOVQ         zr+8(FP), CX
+	MOVQ         zi+16(FP), DX
+	MOVQ         n+32(FP), BX
+	VBROADCASTSS scale+24(FP), Y0
+
+eight:
+	VMULPS       (CX), Y0, Y1
+	VMULPS       (DX), Y0, Y2
+	VUNPCKLPS    Y2, Y1, Y3
+	VUNPCKHPS    Y2, Y1, Y1
+	VMOVUPS      X3, (AX)
+	VMOVUPS      X1, 16(AX)
+	VEXTRACTF128 $0x01, Y3, 32(AX)
+	VEXTRACTF128 $0x01, Y1, 48(AX)
+	ADDQ         $0x20, CX
+	ADDQ         $0x20, DX
+	ADDQ         $0x40, AX
+	SUBQ         $0x08, BX
+	JNZ          eight
+	VZEROUPPER
+	RET
+
+DATA take24low<>+0(SB)/1, $0x80
+DATA take24low<>+1(SB)/1, $0x00
+DATA take24low<>+2(SB)/1, $0x01
+DATA take24low<>+3(SB)/1, $0x02
+DATA take24low<>+4(SB)/1, $0x80
+DATA take24low<>+5(SB)/1, $0x03
+DATA take24low<>+6(SB)/1, $0x04
+DATA take24low<>+7(SB)/1, $0x05
+DATA take24low<>+8(SB)/1, $0x80
+DATA take24low<>+9(SB)/1, $0x06
+DATA take24low<>+10(SB)/1, $0x07
+DATA take24low<>+11(SB)/1, $0x08
+DATA take24low<>+12(SB)/1, $0x80
+DATA take24low<>+13(SB)/1, $0x09
+DATA take24low<>+14(SB)/1, $0x0a
+DATA take24low<>+15(SB)/1, $0x0b
+DATA take24low<>+16(SB)/1, $0x80
+DATA take24low<>+17(SB)/1, $0x00
+DATA take24low<>+18(SB)/1, $0x01
+DATA take24low<>+19(SB)/1, $0x02
+DATA take24low<>+20(SB)/1, $0x80
+DATA take24low<>+21(SB)/1, $0x03
+DATA take24low<>+22(SB)/1, $0x04
+DATA take24low<>+23(SB)/1, $0x05
+DATA take24low<>+24(SB)/1, $0x80
+DATA take24low<>+25(SB)/1, $0x06
+DATA take24low<>+26(SB)/1, $0x07
+DATA take24low<>+27(SB)/1, $0x08
+DATA take24low<>+28(SB)/1, $0x80
+DATA take24low<>+29(SB)/1, $0x09
+DATA take24low<>+30(SB)/1, $0x0a
+DATA take24low<>+31(SB)/1, $0x0b
+GLOBL take24low<>(SB), RODATA|NOPTR, $32
+
+DATA take24high<>+0(SB)/1, $0x80
+DATA take24high<>+1(SB)/1, $0x04
+DATA take24high<>+2(SB)/1, $0x05
+DATA take24high<>+3(SB)/1, $0x06
+DATA take24high<>+4(SB)/1, $0x80
+DATA take24high<>+5(SB)/1, $0x07
+DATA take24high<>+6(SB)/1, $0x08
+DATA take24high<>+7(SB)/1, $0x09
+DATA take24high<>+8(SB)/1, $0x80
+DATA take24high<>+9(SB)/1, $0x0a
+DATA take24high<>+10(SB)/1, $0x0b
+DATA take24high<>+11(SB)/1, $0x0c
+DATA take24high<>+12(SB)/1, $0x80
+DATA take24high<>+13(SB)/1, $0x0d
+DATA take24high<>+14(SB)/1, $0x0e
+DATA take24high<>+15(SB)/1, $0x0f
+DATA take24high<>+16(SB)/1, $0x80
+DATA take24high<>+17(SB)/1, $0x04
+DATA take24high<>+18(SB)/1, $0x05
+DATA take24high<>+19(SB)/1, $0x06
+DATA take24high<>+20(SB)/1, $0x80
+DATA take24high<>+21(SB)/1, $0x07
+DATA take24high<>+22(SB)/1, $0x08
+DATA take24high<>+23(SB)/1, $0x09
+DATA take24high<>+24(SB)/1, $0x80
+DATA take24high<>+25(SB)/1, $0x0a
+DATA take24high<>+26(SB)/1, $0x0b
+DATA take24high<>+27(SB)/1, $0x0c
+DATA take24high<>+28(SB)/1, $0x80
+DATA take24high<>+29(SB)/1, $0x0d
+DATA take24high<>+30(SB)/1, $0x0e
+DATA take24high<>+31(SB)/1, $0x0f
+GLOBL take24high<>(SB), RODATA|NOPTR, $32
+
+DATA take16low<>+0(SB)/1, $0x80
+DATA take16low<>+1(SB)/1, $0x80
+DATA take16low<>+2(SB)/1, $0x00
+DATA take16low<>+3(SB)/1, $0x01
+DATA take16low<>+4(SB)/1, $0x80
+DATA take16low<>+5(SB)/1, $0x80
+DATA take16low<>+6(SB)/1, $0x02
+DATA take16low<>+7(SB)/1, $0x03
+DATA take16low<>+8(SB)/1, $0x80
+DATA take16low<>+9(SB)/1, $0x80
+DATA take16low<>+10(SB)/1, $0x04
+DATA take16low<>+11(SB)/1, $0x05
+DATA take16low<>+12(SB)/1, $0x80
+DATA take16low<>+13(SB)/1, $0x80
+DATA take16low<>+14(SB)/1, $0x06
+DATA take16low<>+15(SB)/1, $0x07
+DATA take16low<>+16(SB)/1, $0x80
+DATA take16low<>+17(SB)/1, $0x80
+DATA take16low<>+18(SB)/1, $0x00
+DATA take16low<>+19(SB)/1, $0x01
+DATA take16low<>+20(SB)/1, $0x80
+DATA take16low<>+21(SB)/1, $0x80
+DATA take16low<>+22(SB)/1, $0x02
+DATA take16low<>+23(SB)/1, $0x03
+DATA take16low<>+24(SB)/1, $0x80
+DATA take16low<>+25(SB)/1, $0x80
+DATA take16low<>+26(SB)/1, $0x04
+DATA take16low<>+27(SB)/1, $0x05
+DATA take16low<>+28(SB)/1, $0x80
+DATA take16low<>+29(SB)/1, $0x80
+DATA take16low<>+30(SB)/1, $0x06
+DATA take16low<>+31(SB)/1, $0x07
+GLOBL take16low<>(SB), RODATA|NOPTR, $32
+
+DATA take16high<>+0(SB)/1, $0x80
+DATA take16high<>+1(SB)/1, $0x80
+DATA take16high<>+2(SB)/1, $0x08
+DATA take16high<>+3(SB)/1, $0x09
+DATA take16high<>+4(SB)/1, $0x80
+DATA take16high<>+5(SB)/1, $0x80
+DATA take16high<>+6(SB)/1, $0x0a
+DATA take16high<>+7(SB)/1, $0x0b
+DATA take16high<>+8(SB)/1, $0x80
+DATA take16high<>+9(SB)/1, $0x80
+DATA take16high<>+10(SB)/1, $0x0c
+DATA take16high<>+11(SB)/1, $0x0d
+DATA take16high<>+12(SB)/1, $0x80
+DATA take16high<>+13(SB)/1, $0x80
+DATA take16high<>+14(SB)/1, $0x0e
+DATA take16high<>+15(SB)/1, $0x0f
+DATA take16high<>+16(SB)/1, $0x80
+DATA take16high<>+17(SB)/1, $0x80
+DATA take16high<>+18(SB)/1, $0x08
+DATA take16high<>+19(SB)/1, $0x09
+DATA take16high<>+20(SB)/1, $0x80
+DATA take16high<>+21(SB)/1, $0x80
+DATA take16high<>+22(SB)/1, $0x0a
+DATA take16high<>+23(SB)/1, $0x0b
+DATA take16high<>+24(SB)/1, $0x80
+DATA take16high<>+25(SB)/1, $0x80
+DATA take16high<>+26(SB)/1, $0x0c
+DATA take16high<>+27(SB)/1, $0x0d
+DATA take16high<>+28(SB)/1, $0x80
+DATA take16high<>+29(SB)/1, $0x80
+DATA take16high<>+30(SB)/1, $0x0e
+DATA take16high<>+31(SB)/1, $0x0f
+GLOBL take16high<>(SB), RODATA|NOPTR, $32
+
+DATA fullScale<>+0(SB)/4, $(4.656613e-10)
+GLOBL fullScale<>(SB), RODATA|NOPTR, $4
+
+DATA exponent<>+0(SB)/4, $0x7f800000
+GLOBL exponent<>(SB), RODATA|NOPTR, $4
+
+// func eightFrom16AVX2(dst **float32, src *byte, frame int, n int)
+// Requires: AVX, AVX2
+TEXT ·eightFrom16AVX2(SB), NOSPLIT, $0-32
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         frame+16(FP), DX
+	MOVQ         n+24(FP), BX
+	LEAQ         (DX)(DX*2), SI
+	XORQ         R8, R8
+	VBROADCASTSS fullScale<>+0(SB), Y0
+	VMOVDQU      take16low<>+0(SB), Y1
+	VMOVDQU      take16high<>+0(SB), Y2
+
+frames:
+	LEAQ           (CX)(DX*4), DI
+	VBROADCASTI128 (CX), Y3
+	VINSERTI128    $0x01, (DI), Y3, Y3
+	VPSHUFB        Y1, Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 (CX)(DX*1), Y4
+	VINSERTI128    $0x01, (DI)(DX*1), Y4, Y4
+	VPSHUFB        Y1, Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VBROADCASTI128 (CX)(DX*2), Y5
+	VINSERTI128    $0x01, (DI)(DX*2), Y5, Y5
+	VPSHUFB        Y1, Y5, Y5
+	VCVTDQ2PS      Y5, Y5
+	VBROADCASTI128 (CX)(SI*1), Y6
+	VINSERTI128    $0x01, (DI)(SI*1), Y6, Y6
+	VPSHUFB        Y1, Y6, Y6
+	VCVTDQ2PS      Y6, Y6
+	VUNPCKLPS      Y4, Y3, Y7
+	VUNPCKLPS      Y6, Y5, Y8
+	VUNPCKHPS      Y4, Y3, Y9
+	VUNPCKHPS      Y6, Y5, Y6
+	VUNPCKLPD      Y8, Y7, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           (AX), R9
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKHPD      Y8, Y7, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           8(AX), R9
+	VMOVUPS        Y4, (R9)(R8*4)
+	VUNPCKLPD      Y6, Y9, Y5
+	VMULPS         Y0, Y5, Y5
+	MOVQ           16(AX), R9
+	VMOVUPS        Y5, (R9)(R8*4)
+	VUNPCKHPD      Y6, Y9, Y6
+	VMULPS         Y0, Y6, Y6
+	MOVQ           24(AX), R9
+	VMOVUPS        Y6, (R9)(R8*4)
+	VBROADCASTI128 (CX), Y3
+	VINSERTI128    $0x01, (DI), Y3, Y3
+	VPSHUFB        Y2, Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 (CX)(DX*1), Y4
+	VINSERTI128    $0x01, (DI)(DX*1), Y4, Y4
+	VPSHUFB        Y2, Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VBROADCASTI128 (CX)(DX*2), Y5
+	VINSERTI128    $0x01, (DI)(DX*2), Y5, Y5
+	VPSHUFB        Y2, Y5, Y5
+	VCVTDQ2PS      Y5, Y5
+	VBROADCASTI128 (CX)(SI*1), Y6
+	VINSERTI128    $0x01, (DI)(SI*1), Y6, Y6
+	VPSHUFB        Y2, Y6, Y6
+	VCVTDQ2PS      Y6, Y6
+	VUNPCKLPS      Y4, Y3, Y7
+	VUNPCKLPS      Y6, Y5, Y8
+	VUNPCKHPS      Y4, Y3, Y9
+	VUNPCKHPS      Y6, Y5, Y6
+	VUNPCKLPD      Y8, Y7, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           32(AX), R9
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKHPD      Y8, Y7, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           40(AX), R9
+	VMOVUPS        Y4, (R9)(R8*4)
+	VUNPCKLPD      Y6, Y9, Y5
+	VMULPS         Y0, Y5, Y5
+	MOVQ           48(AX), R9
+	VMOVUPS        Y5, (R9)(R8*4)
+	VUNPCKHPD      Y6, Y9, Y6
+	VMULPS         Y0, Y6, Y6
+	MOVQ           56(AX), R9
+	VMOVUPS        Y6, (R9)(R8*4)
+	LEAQ           (CX)(DX*8), CX
+	ADDQ           $0x08, R8
+	CMPQ           R8, BX
+	JL             frames
+	VZEROUPPER
+	RET
+
+// func fourFrom16AVX2(dst **float32, src *byte, frame int, n int)
+// Requires: AVX, AVX2
+TEXT ·fourFrom16AVX2(SB), NOSPLIT, $0-32
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         frame+16(FP), DX
+	MOVQ         n+24(FP), BX
+	LEAQ         (DX)(DX*2), SI
+	XORQ         R8, R8
+	VBROADCASTSS fullScale<>+0(SB), Y0
+	VMOVDQU      take16low<>+0(SB), Y1
+
+frames:
+	LEAQ           (CX)(DX*4), DI
+	VBROADCASTI128 (CX), Y2
+	VINSERTI128    $0x01, (DI), Y2, Y2
+	VPSHUFB        Y1, Y2, Y2
+	VCVTDQ2PS      Y2, Y2
+	VBROADCASTI128 (CX)(DX*1), Y3
+	VINSERTI128    $0x01, (DI)(DX*1), Y3, Y3
+	VPSHUFB        Y1, Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 (CX)(DX*2), Y4
+	VINSERTI128    $0x01, (DI)(DX*2), Y4, Y4
+	VPSHUFB        Y1, Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VBROADCASTI128 (CX)(SI*1), Y5
+	VINSERTI128    $0x01, (DI)(SI*1), Y5, Y5
+	VPSHUFB        Y1, Y5, Y5
+	VCVTDQ2PS      Y5, Y5
+	VUNPCKLPS      Y3, Y2, Y6
+	VUNPCKLPS      Y5, Y4, Y7
+	VUNPCKHPS      Y3, Y2, Y8
+	VUNPCKHPS      Y5, Y4, Y5
+	VUNPCKLPD      Y7, Y6, Y2
+	VMULPS         Y0, Y2, Y2
+	MOVQ           (AX), DI
+	VMOVUPS        Y2, (DI)(R8*4)
+	VUNPCKHPD      Y7, Y6, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           8(AX), DI
+	VMOVUPS        Y3, (DI)(R8*4)
+	VUNPCKLPD      Y5, Y8, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           16(AX), DI
+	VMOVUPS        Y4, (DI)(R8*4)
+	VUNPCKHPD      Y5, Y8, Y5
+	VMULPS         Y0, Y5, Y5
+	MOVQ           24(AX), DI
+	VMOVUPS        Y5, (DI)(R8*4)
+	LEAQ           (CX)(DX*8), CX
+	ADDQ           $0x08, R8
+	CMPQ           R8, BX
+	JL             frames
+	VZEROUPPER
+	RET
+
+// func eightFrom24AVX2(dst **float32, src *byte, frame int, n int)
+// Requires: AVX, AVX2
+TEXT ·eightFrom24AVX2(SB), NOSPLIT, $0-32
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         frame+16(FP), DX
+	MOVQ         n+24(FP), BX
+	LEAQ         (DX)(DX*2), SI
+	XORQ         R8, R8
+	VBROADCASTSS fullScale<>+0(SB), Y0
+	VMOVDQU      take24low<>+0(SB), Y1
+	VMOVDQU      take24high<>+0(SB), Y2
+
+frames:
+	LEAQ           (CX)(DX*4), DI
+	VBROADCASTI128 (CX), Y3
+	VINSERTI128    $0x01, (DI), Y3, Y3
+	VPSHUFB        Y1, Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 (CX)(DX*1), Y4
+	VINSERTI128    $0x01, (DI)(DX*1), Y4, Y4
+	VPSHUFB        Y1, Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VBROADCASTI128 (CX)(DX*2), Y5
+	VINSERTI128    $0x01, (DI)(DX*2), Y5, Y5
+	VPSHUFB        Y1, Y5, Y5
+	VCVTDQ2PS      Y5, Y5
+	VBROADCASTI128 (CX)(SI*1), Y6
+	VINSERTI128    $0x01, (DI)(SI*1), Y6, Y6
+	VPSHUFB        Y1, Y6, Y6
+	VCVTDQ2PS      Y6, Y6
+	VUNPCKLPS      Y4, Y3, Y7
+	VUNPCKLPS      Y6, Y5, Y8
+	VUNPCKHPS      Y4, Y3, Y9
+	VUNPCKHPS      Y6, Y5, Y6
+	VUNPCKLPD      Y8, Y7, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           (AX), R9
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKHPD      Y8, Y7, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           8(AX), R9
+	VMOVUPS        Y4, (R9)(R8*4)
+	VUNPCKLPD      Y6, Y9, Y5
+	VMULPS         Y0, Y5, Y5
+	MOVQ           16(AX), R9
+	VMOVUPS        Y5, (R9)(R8*4)
+	VUNPCKHPD      Y6, Y9, Y6
+	VMULPS         Y0, Y6, Y6
+	MOVQ           24(AX), R9
+	VMOVUPS        Y6, (R9)(R8*4)
+	VBROADCASTI128 8(CX), Y3
+	VINSERTI128    $0x01, 8(DI), Y3, Y3
+	VPSHUFB        Y2, Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 8(CX)(DX*1), Y4
+	VINSERTI128    $0x01, 8(DI)(DX*1), Y4, Y4
+	VPSHUFB        Y2, Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VBROADCASTI128 8(CX)(DX*2), Y5
+	VINSERTI128    $0x01, 8(DI)(DX*2), Y5, Y5
+	VPSHUFB        Y2, Y5, Y5
+	VCVTDQ2PS      Y5, Y5
+	VBROADCASTI128 8(CX)(SI*1), Y6
+	VINSERTI128    $0x01, 8(DI)(SI*1), Y6, Y6
+	VPSHUFB        Y2, Y6, Y6
+	VCVTDQ2PS      Y6, Y6
+	VUNPCKLPS      Y4, Y3, Y7
+	VUNPCKLPS      Y6, Y5, Y8
+	VUNPCKHPS      Y4, Y3, Y9
+	VUNPCKHPS      Y6, Y5, Y6
+	VUNPCKLPD      Y8, Y7, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           32(AX), R9
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKHPD      Y8, Y7, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           40(AX), R9
+	VMOVUPS        Y4, (R9)(R8*4)
+	VUNPCKLPD      Y6, Y9, Y5
+	VMULPS         Y0, Y5, Y5
+	MOVQ           48(AX), R9
+	VMOVUPS        Y5, (R9)(R8*4)
+	VUNPCKHPD      Y6, Y9, Y6
+	VMULPS         Y0, Y6, Y6
+	MOVQ           56(AX), R9
+	VMOVUPS        Y6, (R9)(R8*4)
+	LEAQ           (CX)(DX*8), CX
+	ADDQ           $0x08, R8
+	CMPQ           R8, BX
+	JL             frames
+	VZEROUPPER
+	RET
+
+// func fourFrom24AVX2(dst **float32, src *byte, frame int, n int)
+// Requires: AVX, AVX2
+TEXT ·fourFrom24AVX2(SB), NOSPLIT, $0-32
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         frame+16(FP), DX
+	MOVQ         n+24(FP), BX
+	LEAQ         (DX)(DX*2), SI
+	XORQ         R8, R8
+	VBROADCASTSS fullScale<>+0(SB), Y0
+	VMOVDQU      take24low<>+0(SB), Y1
+
+frames:
+	LEAQ           (CX)(DX*4), DI
+	VBROADCASTI128 (CX), Y2
+	VINSERTI128    $0x01, (DI), Y2, Y2
+	VPSHUFB        Y1, Y2, Y2
+	VCVTDQ2PS      Y2, Y2
+	VBROADCASTI128 (CX)(DX*1), Y3
+	VINSERTI128    $0x01, (DI)(DX*1), Y3, Y3
+	VPSHUFB        Y1, Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 (CX)(DX*2), Y4
+	VINSERTI128    $0x01, (DI)(DX*2), Y4, Y4
+	VPSHUFB        Y1, Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VBROADCASTI128 (CX)(SI*1), Y5
+	VINSERTI128    $0x01, (DI)(SI*1), Y5, Y5
+	VPSHUFB        Y1, Y5, Y5
+	VCVTDQ2PS      Y5, Y5
+	VUNPCKLPS      Y3, Y2, Y6
+	VUNPCKLPS      Y5, Y4, Y7
+	VUNPCKHPS      Y3, Y2, Y8
+	VUNPCKHPS      Y5, Y4, Y5
+	VUNPCKLPD      Y7, Y6, Y2
+	VMULPS         Y0, Y2, Y2
+	MOVQ           (AX), DI
+	VMOVUPS        Y2, (DI)(R8*4)
+	VUNPCKHPD      Y7, Y6, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           8(AX), DI
+	VMOVUPS        Y3, (DI)(R8*4)
+	VUNPCKLPD      Y5, Y8, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           16(AX), DI
+	VMOVUPS        Y4, (DI)(R8*4)
+	VUNPCKHPD      Y5, Y8, Y5
+	VMULPS         Y0, Y5, Y5
+	MOVQ           24(AX), DI
+	VMOVUPS        Y5, (DI)(R8*4)
+	LEAQ           (CX)(DX*8), CX
+	ADDQ           $0x08, R8
+	CMPQ           R8, BX
+	JL             frames
+	VZEROUPPER
+	RET
+
+// func eightFrom32AVX2(dst **float32, src *byte, frame int, n int)
+// Requires: AVX, AVX2
+TEXT ·eightFrom32AVX2(SB), NOSPLIT, $0-32
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         frame+16(FP), DX
+	MOVQ         n+24(FP), BX
+	LEAQ         (DX)(DX*2), SI
+	XORQ         R8, R8
+	VBROADCASTSS fullScale<>+0(SB), Y0
+
+frames:
+	LEAQ           (CX)(DX*4), DI
+	VBROADCASTI128 (CX), Y1
+	VINSERTI128    $0x01, (DI), Y1, Y1
+	VCVTDQ2PS      Y1, Y1
+	VBROADCASTI128 (CX)(DX*1), Y2
+	VINSERTI128    $0x01, (DI)(DX*1), Y2, Y2
+	VCVTDQ2PS      Y2, Y2
+	VBROADCASTI128 (CX)(DX*2), Y3
+	VINSERTI128    $0x01, (DI)(DX*2), Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 (CX)(SI*1), Y4
+	VINSERTI128    $0x01, (DI)(SI*1), Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VUNPCKLPS      Y2, Y1, Y5
+	VUNPCKLPS      Y4, Y3, Y6
+	VUNPCKHPS      Y2, Y1, Y7
+	VUNPCKHPS      Y4, Y3, Y4
+	VUNPCKLPD      Y6, Y5, Y1
+	VMULPS         Y0, Y1, Y1
+	MOVQ           (AX), R9
+	VMOVUPS        Y1, (R9)(R8*4)
+	VUNPCKHPD      Y6, Y5, Y2
+	VMULPS         Y0, Y2, Y2
+	MOVQ           8(AX), R9
+	VMOVUPS        Y2, (R9)(R8*4)
+	VUNPCKLPD      Y4, Y7, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           16(AX), R9
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKHPD      Y4, Y7, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           24(AX), R9
+	VMOVUPS        Y4, (R9)(R8*4)
+	VBROADCASTI128 16(CX), Y1
+	VINSERTI128    $0x01, 16(DI), Y1, Y1
+	VCVTDQ2PS      Y1, Y1
+	VBROADCASTI128 16(CX)(DX*1), Y2
+	VINSERTI128    $0x01, 16(DI)(DX*1), Y2, Y2
+	VCVTDQ2PS      Y2, Y2
+	VBROADCASTI128 16(CX)(DX*2), Y3
+	VINSERTI128    $0x01, 16(DI)(DX*2), Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 16(CX)(SI*1), Y4
+	VINSERTI128    $0x01, 16(DI)(SI*1), Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VUNPCKLPS      Y2, Y1, Y5
+	VUNPCKLPS      Y4, Y3, Y6
+	VUNPCKHPS      Y2, Y1, Y7
+	VUNPCKHPS      Y4, Y3, Y4
+	VUNPCKLPD      Y6, Y5, Y1
+	VMULPS         Y0, Y1, Y1
+	MOVQ           32(AX), R9
+	VMOVUPS        Y1, (R9)(R8*4)
+	VUNPCKHPD      Y6, Y5, Y2
+	VMULPS         Y0, Y2, Y2
+	MOVQ           40(AX), R9
+	VMOVUPS        Y2, (R9)(R8*4)
+	VUNPCKLPD      Y4, Y7, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           48(AX), R9
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKHPD      Y4, Y7, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           56(AX), R9
+	VMOVUPS        Y4, (R9)(R8*4)
+	LEAQ           (CX)(DX*8), CX
+	ADDQ           $0x08, R8
+	CMPQ           R8, BX
+	JL             frames
+	VZEROUPPER
+	RET
+
+// func fourFrom32AVX2(dst **float32, src *byte, frame int, n int)
+// Requires: AVX, AVX2
+TEXT ·fourFrom32AVX2(SB), NOSPLIT, $0-32
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         frame+16(FP), DX
+	MOVQ         n+24(FP), BX
+	LEAQ         (DX)(DX*2), SI
+	XORQ         R8, R8
+	VBROADCASTSS fullScale<>+0(SB), Y0
+
+frames:
+	LEAQ           (CX)(DX*4), DI
+	VBROADCASTI128 (CX), Y1
+	VINSERTI128    $0x01, (DI), Y1, Y1
+	VCVTDQ2PS      Y1, Y1
+	VBROADCASTI128 (CX)(DX*1), Y2
+	VINSERTI128    $0x01, (DI)(DX*1), Y2, Y2
+	VCVTDQ2PS      Y2, Y2
+	VBROADCASTI128 (CX)(DX*2), Y3
+	VINSERTI128    $0x01, (DI)(DX*2), Y3, Y3
+	VCVTDQ2PS      Y3, Y3
+	VBROADCASTI128 (CX)(SI*1), Y4
+	VINSERTI128    $0x01, (DI)(SI*1), Y4, Y4
+	VCVTDQ2PS      Y4, Y4
+	VUNPCKLPS      Y2, Y1, Y5
+	VUNPCKLPS      Y4, Y3, Y6
+	VUNPCKHPS      Y2, Y1, Y7
+	VUNPCKHPS      Y4, Y3, Y4
+	VUNPCKLPD      Y6, Y5, Y1
+	VMULPS         Y0, Y1, Y1
+	MOVQ           (AX), DI
+	VMOVUPS        Y1, (DI)(R8*4)
+	VUNPCKHPD      Y6, Y5, Y2
+	VMULPS         Y0, Y2, Y2
+	MOVQ           8(AX), DI
+	VMOVUPS        Y2, (DI)(R8*4)
+	VUNPCKLPD      Y4, Y7, Y3
+	VMULPS         Y0, Y3, Y3
+	MOVQ           16(AX), DI
+	VMOVUPS        Y3, (DI)(R8*4)
+	VUNPCKHPD      Y4, Y7, Y4
+	VMULPS         Y0, Y4, Y4
+	MOVQ           24(AX), DI
+	VMOVUPS        Y4, (DI)(R8*4)
+	LEAQ           (CX)(DX*8), CX
+	ADDQ           $0x08, R8
+	CMPQ           R8, BX
+	JL             frames
+	VZEROUPPER
+	RET
+
+// func eightFromFloat32AVX2(dst **float32, src *byte, frame int, n int) uint32
+// Requires: AVX, AVX2
+TEXT ·eightFromFloat32AVX2(SB), NOSPLIT, $0-36
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         frame+16(FP), DX
+	MOVQ         n+24(FP), BX
+	LEAQ         (DX)(DX*2), SI
+	XORQ         R8, R8
+	VXORPS       Y0, Y0, Y0
+	VBROADCASTSS exponent<>+0(SB), Y1
+
+frames:
+	LEAQ           (CX)(DX*4), DI
+	VBROADCASTI128 (CX), Y2
+	VINSERTI128    $0x01, (DI), Y2, Y2
+	VANDPS         Y1, Y2, Y3
+	VPCMPEQD       Y1, Y3, Y3
+	VORPS          Y3, Y0, Y0
+	VBROADCASTI128 (CX)(DX*1), Y3
+	VINSERTI128    $0x01, (DI)(DX*1), Y3, Y3
+	VANDPS         Y1, Y3, Y4
+	VPCMPEQD       Y1, Y4, Y4
+	VORPS          Y4, Y0, Y0
+	VBROADCASTI128 (CX)(DX*2), Y4
+	VINSERTI128    $0x01, (DI)(DX*2), Y4, Y4
+	VANDPS         Y1, Y4, Y5
+	VPCMPEQD       Y1, Y5, Y5
+	VORPS          Y5, Y0, Y0
+	VBROADCASTI128 (CX)(SI*1), Y5
+	VINSERTI128    $0x01, (DI)(SI*1), Y5, Y5
+	VANDPS         Y1, Y5, Y6
+	VPCMPEQD       Y1, Y6, Y6
+	VORPS          Y6, Y0, Y0
+	VUNPCKLPS      Y3, Y2, Y6
+	VUNPCKLPS      Y5, Y4, Y7
+	VUNPCKHPS      Y3, Y2, Y8
+	VUNPCKHPS      Y5, Y4, Y5
+	VUNPCKLPD      Y7, Y6, Y2
+	MOVQ           (AX), R9
+	VMOVUPS        Y2, (R9)(R8*4)
+	VUNPCKHPD      Y7, Y6, Y3
+	MOVQ           8(AX), R9
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKLPD      Y5, Y8, Y4
+	MOVQ           16(AX), R9
+	VMOVUPS        Y4, (R9)(R8*4)
+	VUNPCKHPD      Y5, Y8, Y5
+	MOVQ           24(AX), R9
+	VMOVUPS        Y5, (R9)(R8*4)
+	VBROADCASTI128 16(CX), Y2
+	VINSERTI128    $0x01, 16(DI), Y2, Y2
+	VANDPS         Y1, Y2, Y3
+	VPCMPEQD       Y1, Y3, Y3
+	VORPS          Y3, Y0, Y0
+	VBROADCASTI128 16(CX)(DX*1), Y3
+	VINSERTI128    $0x01, 16(DI)(DX*1), Y3, Y3
+	VANDPS         Y1, Y3, Y4
+	VPCMPEQD       Y1, Y4, Y4
+	VORPS          Y4, Y0, Y0
+	VBROADCASTI128 16(CX)(DX*2), Y4
+	VINSERTI128    $0x01, 16(DI)(DX*2), Y4, Y4
+	VANDPS         Y1, Y4, Y5
+	VPCMPEQD       Y1, Y5, Y5
+	VORPS          Y5, Y0, Y0
+	VBROADCASTI128 16(CX)(SI*1), Y5
+	VINSERTI128    $0x01, 16(DI)(SI*1), Y5, Y5
+	VANDPS         Y1, Y5, Y6
+	VPCMPEQD       Y1, Y6, Y6
+	VORPS          Y6, Y0, Y0
+	VUNPCKLPS      Y3, Y2, Y6
+	VUNPCKLPS      Y5, Y4, Y7
+	VUNPCKHPS      Y3, Y2, Y8
+	VUNPCKHPS      Y5, Y4, Y5
+	VUNPCKLPD      Y7, Y6, Y2
+	MOVQ           32(AX), R9
+	VMOVUPS        Y2, (R9)(R8*4)
+	VUNPCKHPD      Y7, Y6, Y3
+	MOVQ           40(AX), R9
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKLPD      Y5, Y8, Y4
+	MOVQ           48(AX), R9
+	VMOVUPS        Y4, (R9)(R8*4)
+	VUNPCKHPD      Y5, Y8, Y5
+	MOVQ           56(AX), R9
+	VMOVUPS        Y5, (R9)(R8*4)
+	LEAQ           (CX)(DX*8), CX
+	ADDQ           $0x08, R8
+	CMPQ           R8, BX
+	JL             frames
+	VMOVMSKPS      Y0, AX
+	MOVL           AX, ret+32(FP)
+	VZEROUPPER
+	RET
+
+// func fourFromFloat32AVX2(dst **float32, src *byte, frame int, n int) uint32
+// Requires: AVX, AVX2
+TEXT ·fourFromFloat32AVX2(SB), NOSPLIT, $0-36
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         frame+16(FP), DX
+	MOVQ         n+24(FP), BX
+	LEAQ         (DX)(DX*2), SI
+	XORQ         R8, R8
+	VXORPS       Y0, Y0, Y0
+	VBROADCASTSS exponent<>+0(SB), Y1
+
+frames:
+	LEAQ           (CX)(DX*4), DI
+	VBROADCASTI128 (CX), Y2
+	VINSERTI128    $0x01, (DI), Y2, Y2
+	VANDPS         Y1, Y2, Y3
+	VPCMPEQD       Y1, Y3, Y3
+	VORPS          Y3, Y0, Y0
+	VBROADCASTI128 (CX)(DX*1), Y3
+	VINSERTI128    $0x01, (DI)(DX*1), Y3, Y3
+	VANDPS         Y1, Y3, Y4
+	VPCMPEQD       Y1, Y4, Y4
+	VORPS          Y4, Y0, Y0
+	VBROADCASTI128 (CX)(DX*2), Y4
+	VINSERTI128    $0x01, (DI)(DX*2), Y4, Y4
+	VANDPS         Y1, Y4, Y5
+	VPCMPEQD       Y1, Y5, Y5
+	VORPS          Y5, Y0, Y0
+	VBROADCASTI128 (CX)(SI*1), Y5
+	VINSERTI128    $0x01, (DI)(SI*1), Y5, Y5
+	VANDPS         Y1, Y5, Y6
+	VPCMPEQD       Y1, Y6, Y6
+	VORPS          Y6, Y0, Y0
+	VUNPCKLPS      Y3, Y2, Y6
+	VUNPCKLPS      Y5, Y4, Y7
+	VUNPCKHPS      Y3, Y2, Y8
+	VUNPCKHPS      Y5, Y4, Y5
+	VUNPCKLPD      Y7, Y6, Y2
+	MOVQ           (AX), DI
+	VMOVUPS        Y2, (DI)(R8*4)
+	VUNPCKHPD      Y7, Y6, Y3
+	MOVQ           8(AX), DI
+	VMOVUPS        Y3, (DI)(R8*4)
+	VUNPCKLPD      Y5, Y8, Y4
+	MOVQ           16(AX), DI
+	VMOVUPS        Y4, (DI)(R8*4)
+	VUNPCKHPD      Y5, Y8, Y5
+	MOVQ           24(AX), DI
+	VMOVUPS        Y5, (DI)(R8*4)
+	LEAQ           (CX)(DX*8), CX
+	ADDQ           $0x08, R8
+	CMPQ           R8, BX
+	JL             frames
+	VMOVMSKPS      Y0, AX
+	MOVL           AX, ret+32(FP)
 	VZEROUPPER
 	RET

@@ -3,6 +3,8 @@ package spectral
 import (
 	"fmt"
 	"math"
+
+	"alidade/pkg/kernel"
 )
 
 // Complex is a plan for transforms of n complex values in split format, n a
@@ -10,18 +12,10 @@ import (
 // transform. It holds scratch memory and is for one goroutine at a time.
 type Complex[T Float] struct {
 	n      int
-	stages []stage[T]
-	two    bool // a step of radix 2 ends the transform
-	br, bi []T  // scratch
-}
-
-// stage is one step of radix 4: real and imaginary part of e^{-j2πp/m}, of its
-// square and its cube for each p = 0..m/4-1, with m the size of the transforms
-// that are left and s the number of them.
-type stage[T Float] struct {
-	tw [][6]T
-	m  int
-	s  int
+	steps  [][]kernel.Twiddle[T] // of each step of radix 4 but a last one
+	rows   []T                   // the twiddles of the first step as rows
+	last   int                   // the radix of the last step
+	br, bi []T                   // scratch
 }
 
 // NewComplex returns a plan for n complex values. n must be a power of two, 2
@@ -31,18 +25,21 @@ func NewComplex[T Float](n int) (*Complex[T], error) {
 		return nil, fmt.Errorf("spectral: transform of %d complex values: want a power of two, 2 to %d", n, MaxSize)
 	}
 	c := &Complex[T]{n: n}
-	m, s := n, 1
-	for ; m >= 4; m, s = m/4, s*4 {
-		tw := make([][6]T, m/4)
-		for p := range m / 4 {
+	m := n
+	for ; m > 8 || m == 8 && (n == 8 || n >= 8192); m /= 4 {
+		tw := make([]kernel.Twiddle[T], m/4)
+		for p := range tw {
 			for q := 1; q <= 3; q++ {
 				sin, cos := math.Sincos(-2 * math.Pi * float64(q*p) / float64(m))
 				tw[p][2*q-2], tw[p][2*q-1] = T(cos), T(sin)
 			}
 		}
-		c.stages = append(c.stages, stage[T]{tw: tw, m: m, s: s})
+		c.steps = append(c.steps, tw)
 	}
-	c.two = m == 2
+	c.last = m
+	if len(c.steps) > 0 {
+		c.rows = kernel.Rows(c.steps[0])
+	}
 	c.br, c.bi = pair[T](n)
 	return c, nil
 }
@@ -93,18 +90,11 @@ func (c *Complex[T]) check(what string, a, b, x, y []T) {
 	}
 }
 
-// steps is the number of passes over the data.
-func (c *Complex[T]) steps() int {
-	if c.two {
-		return len(c.stages) + 1
-	}
-	return len(c.stages)
-}
-
 // transform is the unscaled forward transform [Stockham 1966].
 func (c *Complex[T]) transform(re, im, xr, xi []T) {
-	if c.steps()%2 == 1 && &re[0] == &xr[0] {
-		// The first step would overwrite what it reads.
+	if len(c.steps)%2 == 0 && &re[0] == &xr[0] {
+		// With an odd number of steps, the first one would overwrite what it
+		// reads.
 		copy(c.br, xr)
 		copy(c.bi, xi)
 		xr, xi = c.br, c.bi
@@ -114,40 +104,43 @@ func (c *Complex[T]) transform(re, im, xr, xi []T) {
 
 // forwardReal is transform for the n values x[0] + j·x[1], x[2] + j·x[3], ...
 func (c *Complex[T]) forwardReal(re, im, x []T) {
-	tr, ti := re, im
-	if c.steps()%2 == 0 {
-		tr, ti = c.br, c.bi
-	}
-	if len(c.stages) == 0 {
-		tr[0], ti[0] = x[0]+x[2], x[1]+x[3]
-		tr[1], ti[1] = x[0]-x[2], x[1]-x[3]
+	if len(c.steps) == 0 { // two values, or four
+		tr, ti := c.br, c.bi
+		for i := range tr {
+			tr[i], ti[i] = x[2*i], x[2*i+1]
+		}
+		c.run(re, im, tr, ti, 0)
 		return
 	}
-	firstReal4(tr, ti, x, c.stages[0].tw)
+	tr, ti := re, im
+	if len(c.steps)%2 == 1 {
+		tr, ti = c.br, c.bi
+	}
+	kernel.FirstStepReal(tr, ti, x, c.steps[0], c.rows)
 	c.run(re, im, tr, ti, 1)
 }
 
 // run carries out the steps from the given one on. The data go to and fro
 // between the scratch and re, im, such that the last step ends there.
 func (c *Complex[T]) run(re, im, xr, xi []T, from int) {
-	total := c.steps()
-	for k := from; k < total; k++ {
+	for k := from; k < len(c.steps); k++ {
 		yr, yi := c.br, c.bi
-		if (total-k)%2 == 1 {
+		if (len(c.steps)-k)%2 == 0 {
 			yr, yi = re, im
 		}
-		switch {
-		case k == len(c.stages):
-			last2(yr, yi, xr, xi)
-		case k == 0:
-			first4(yr, yi, xr, xi, c.stages[0].tw)
-		case c.stages[k].m == 4:
-			last4(yr, yi, xr, xi)
-		case k == 1:
-			second4(yr, yi, xr, xi, c.stages[1].tw)
-		default:
-			step4(yr, yi, xr, xi, c.stages[k].tw, c.stages[k].s)
+		if k == 0 {
+			kernel.FirstStep(yr, yi, xr, xi, c.steps[0], c.rows)
+		} else {
+			kernel.Step(yr, yi, xr, xi, c.steps[k])
 		}
 		xr, xi = yr, yi
+	}
+	switch c.last {
+	case 2:
+		kernel.LastStep2(re, im, xr, xi)
+	case 4:
+		kernel.LastStep4(re, im, xr, xi)
+	default:
+		kernel.LastStep8(re, im, xr, xi)
 	}
 }

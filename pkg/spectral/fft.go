@@ -4,10 +4,12 @@ import (
 	"fmt"
 	"math"
 	"math/bits"
+
+	"alidade/pkg/kernel"
 )
 
 // Float is what a transform computes in.
-type Float interface{ float32 | float64 }
+type Float = kernel.Float
 
 // Smallest and largest sizes of a real transform.
 const (
@@ -68,23 +70,8 @@ func (f *FFT[T]) Bins() int { return f.n/2 + 1 }
 func (f *FFT[T]) Forward(re, im, x []T) {
 	f.check("forward", re, im, x)
 	h := f.n / 2
-	re, im = re[:h+1], im[:h+1]
 	f.half.forwardReal(re[:h], im[:h], x)
-
-	// z = even + j·odd, so with Z its transform, E the spectrum of the even
-	// values and O that of the odd ones: E[k] = (Z[k] + Z*[h-k])/2,
-	// O[k] = (Z[k] - Z*[h-k])/2j, and X[k] = E[k] + e^{-j2πk/n}·O[k].
-	r, i := re[0], im[0]
-	re[0], im[0] = r+i, 0
-	re[h], im[h] = r-i, 0
-	for a, b := 1, h-1; a <= b; a, b = a+1, b-1 {
-		er, ei := (re[a]+re[b])*0.5, (im[a]-im[b])*0.5
-		or, oi := (im[a]+im[b])*0.5, (re[b]-re[a])*0.5
-		c, s := f.cos[a], f.sin[a]
-		tr, ti := c*or+s*oi, c*oi-s*or
-		re[a], im[a] = er+tr, ei+ti
-		re[b], im[b] = er-tr, ti-ei
-	}
+	kernel.SplitHalves(re, im, f.cos, f.sin)
 }
 
 // Inverse writes to x the n real values whose spectrum is re and im. The
@@ -93,27 +80,10 @@ func (f *FFT[T]) Forward(re, im, x []T) {
 // lengths.
 func (f *FFT[T]) Inverse(x, re, im []T) {
 	f.check("inverse", re, im, x)
-	h := f.n / 2
-	re, im = re[:h+1], im[:h+1]
-	zr, zi := f.zr[:h], f.zi[:h]
-	// The steps of Forward backwards, each without its factor 1/2.
-	zr[0], zi[0] = re[0]+re[h], re[0]-re[h]
-	for a, b := 1, h-1; a <= b; a, b = a+1, b-1 {
-		er, ei := re[a]+re[b], im[a]-im[b]
-		tr, ti := re[a]-re[b], im[a]+im[b]
-		c, s := f.cos[a], f.sin[a]
-		or, oi := c*tr-s*ti, c*ti+s*tr
-		zr[a], zi[a] = er-oi, ei+or
-		zr[b], zi[b] = er+oi, or-ei
-	}
+	kernel.JoinHalves(f.zr, f.zi, re, im, f.cos, f.sin)
 	// A transform with real and imaginary part swapped runs backwards.
-	f.half.transform(zi, zr, zi, zr)
-	scale := f.scale
-	x = x[:2*h]
-	for k, r := range zr {
-		x[2*k] = r * scale
-		x[2*k+1] = zi[k] * scale
-	}
+	f.half.transform(f.zi, f.zr, f.zi, f.zr)
+	kernel.Alternate(x, f.zr, f.zi, f.scale)
 }
 
 func (f *FFT[T]) check(what string, re, im, x []T) {

@@ -7,6 +7,7 @@ import (
 	"slices"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 )
 
 // readBytes is how much is read of a file at a time.
@@ -26,6 +27,7 @@ type Reader struct {
 
 	at     int64 // next frame
 	buf    []byte
+	planes [][]float32 // of a tile, see deal
 	bufAt  int64 // frame at buf[0]
 	bufLen int64 // whole frames in buf
 	err    error
@@ -62,7 +64,8 @@ func Open(r io.ReaderAt, size int64) (*Reader, error) {
 	frame := int64(s.head.FrameBytes())
 	return &Reader{
 		r: r, head: s.head, meta: meta, chunks: s.chunks, warnings: s.warnings, decode: decoderOf(s.head.Encoding), dataAt: s.data.Offset,
-		buf: make([]byte, max(1, min(readBytes/frame, s.head.Frames))*frame),
+		buf:    make([]byte, max(1, min(readBytes/frame, s.head.Frames))*frame),
+		planes: make([][]float32, s.head.Channels),
 	}, nil
 }
 
@@ -164,21 +167,54 @@ func (r *Reader) fill() error {
 // of dst, in tiles that stay in the nearest cache.
 func (r *Reader) deal(dst audio.Block, from int64) {
 	frame := r.head.FrameBytes()
-	width := frame / r.head.Channels
-	tile := max(16, 12<<10/frame)
+	tile := max(16, 12<<10/frame&^7)
 	raw := r.buf[from*int64(frame):]
+	layout, known := layoutOf(r.head.Encoding)
 	for at := 0; at < dst.Frames(); at += tile {
 		n := min(tile, dst.Frames()-at)
 		part := raw[at*frame : (at+n)*frame]
-		for ch := range r.head.Channels {
-			bad, first := r.decode(dst.Channel(ch)[at:at+n], part[ch*width:], frame)
-			if bad > 0 {
-				where := r.bufAt + from + int64(at+first)
-				if r.bad.Samples == 0 || where < r.bad.Frame {
-					r.bad.Frame, r.bad.Channel = where, ch
-				}
-				r.bad.Samples += int64(bad)
+		done := 0
+		if known {
+			for ch := range r.planes {
+				r.planes[ch] = dst.Channel(ch)[at : at+n]
+			}
+			done = kernel.Deinterleave(r.planes, part, frame, layout)
+			if done == n {
+				continue
 			}
 		}
+		r.dealSlowly(dst.Slice(at+done, at+n), part[done*frame:], from+int64(at+done))
 	}
+}
+
+// dealSlowly is deal for a part in which the first frame is the given one of the
+// buffer.
+func (r *Reader) dealSlowly(dst audio.Block, part []byte, from int64) {
+	frame := r.head.FrameBytes()
+	width := frame / r.head.Channels
+	for ch := range r.head.Channels {
+		bad, first := r.decode(dst.Channel(ch), part[ch*width:], frame)
+		if bad > 0 {
+			where := r.bufAt + from + int64(first)
+			if r.bad.Samples == 0 || where < r.bad.Frame {
+				r.bad.Frame, r.bad.Channel = where, ch
+			}
+			r.bad.Samples += int64(bad)
+		}
+	}
+}
+
+// layoutOf returns how the kernels call an encoding that they know.
+func layoutOf(e Encoding) (kernel.Layout, bool) {
+	switch e {
+	case PCM16:
+		return kernel.Int16, true
+	case PCM24:
+		return kernel.Int24, true
+	case PCM32:
+		return kernel.Int32, true
+	case Float32:
+		return kernel.Float32, true
+	}
+	return 0, false
 }

@@ -1,5 +1,9 @@
 // Command kernels writes the vector kernels of package kernel: run
 // go generate ./pkg/kernel.
+//
+// The functions are AVX2 with FMA and use the sixteen registers that such a
+// processor has. Lengths are those that the Go callers promise: they check them
+// and leave what does not fill a register to the plain functions.
 package main
 
 import (
@@ -12,68 +16,87 @@ func main() {
 	ConstraintExpr("amd64")
 	addFIR()
 	addProduct()
+	transforms()
+	halves()
+	deinterleave()
 	Generate()
 }
 
-// addFIR is y[i] += Σ_t h[t]·x[i+t] for n samples, n a multiple of 8: 32 sums
-// at a time in four registers, then 8 at a time.
+// function begins a function that keeps no pointer it is given.
+func function(name, signature, doc string) {
+	TEXT(name, NOSPLIT, signature)
+	Pragma("noescape")
+	Doc(doc)
+}
+
+// params loads parameters into general registers.
+func params(names ...string) []Register {
+	list := make([]Register, len(names))
+	for k, name := range names {
+		list[k] = Load(Param(name), GP64())
+	}
+	return list
+}
+
+// end closes a function that used vector registers.
+func end() {
+	VZEROUPPER()
+	RET()
+}
+
+// addFIR is y[i] += Σ_t h[t]·x[i+t] for n samples, n a multiple of 8: 96 sums
+// at a time in twelve registers, which hides the latency of the products and
+// shares the load of a tap among them; then 32 and 8 at a time.
 func addFIR() {
-	TEXT("addFIRAVX2", NOSPLIT, "func(y *float32, n int, x *float32, h *float32, taps int)")
-	Doc("addFIRAVX2 adds a filtered signal of n samples, n a multiple of 8, to y: taps >= 1.")
-	y, n := Load(Param("y"), GP64()), Load(Param("n"), GP64())
-	x, h := Load(Param("x"), GP64()), Load(Param("h"), GP64())
-	taps := Load(Param("taps"), GP64())
-	for _, step := range []struct {
-		name string
-		sums int
-	}{{"wide", 4}, {"narrow", 1}} {
-		next := "narrow_block"
-		if step.name == "narrow" {
-			next = "done"
+	function("addFIRAVX2", "func(y *float32, n int, x *float32, h *float32, taps int)",
+		"addFIRAVX2 adds a filtered signal of n samples, n a multiple of 8, to y: taps >= 1.")
+	p := params("y", "n", "x", "h", "taps")
+	y, n, x, h, taps := p[0], p[1], p[2], p[3], p[4]
+	steps := []int{12, 4, 1}
+	name := func(k int) string {
+		if k == len(steps) {
+			return "done"
 		}
-		Label(step.name + "_block")
-		CMPQ(n, Imm(uint64(8*step.sums)))
-		JL(LabelRef(next))
-		sum := make([]VecVirtual, step.sums)
-		for k := range sum {
-			sum[k] = YMM()
-			VMOVUPS(Mem{Base: y, Disp: 32 * k}, sum[k])
+		return []string{"wide", "middle", "narrow"}[k]
+	}
+	for k, sums := range steps {
+		Label(name(k))
+		CMPQ(n, U32(8*sums))
+		JL(LabelRef(name(k + 1)))
+		sum := make([]VecVirtual, sums)
+		for j := range sum {
+			sum[j] = YMM()
+			VMOVUPS(Mem{Base: y, Disp: 32 * j}, sum[j])
 		}
-		t := GP64()
+		t, tap := GP64(), YMM()
 		XORQ(t, t)
-		Label(step.name + "_tap")
-		tap := YMM()
+		Label(name(k) + "_tap")
 		VBROADCASTSS(Mem{Base: h, Index: t, Scale: 4}, tap)
-		for k := range sum {
-			VFMADD231PS(Mem{Base: x, Index: t, Scale: 4, Disp: 32 * k}, tap, sum[k])
+		for j := range sum {
+			VFMADD231PS(Mem{Base: x, Index: t, Scale: 4, Disp: 32 * j}, tap, sum[j])
 		}
 		INCQ(t)
 		CMPQ(t, taps)
-		JL(LabelRef(step.name + "_tap"))
-		for k := range sum {
-			VMOVUPS(sum[k], Mem{Base: y, Disp: 32 * k})
+		JL(LabelRef(name(k) + "_tap"))
+		for j := range sum {
+			VMOVUPS(sum[j], Mem{Base: y, Disp: 32 * j})
 		}
-		ADDQ(Imm(uint64(32*step.sums)), y)
-		ADDQ(Imm(uint64(32*step.sums)), x)
-		SUBQ(Imm(uint64(8*step.sums)), n)
-		JMP(LabelRef(step.name + "_block"))
+		ADDQ(U32(32*sums), y)
+		ADDQ(U32(32*sums), x)
+		SUBQ(U32(8*sums), n)
+		JMP(LabelRef(name(k)))
 	}
 	Label("done")
-	VZEROUPPER()
-	RET()
+	end()
 }
 
 // addProduct is s[k] += a[k]·b[k], complex in split form, for n bins, n a
 // multiple of 8.
 func addProduct() {
-	TEXT("addProductAVX2", NOSPLIT, "func(sr, si, ar, ai, br, bi *float32, n int)")
-	Doc("addProductAVX2 adds the complex products of n bins, n a multiple of 8.")
-	var at [6]Register
-	for k, name := range []string{"sr", "si", "ar", "ai", "br", "bi"} {
-		at[k] = Load(Param(name), GP64())
-	}
-	n := Load(Param("n"), GP64())
-	i := GP64()
+	function("addProductAVX2", "func(sr, si, ar, ai, br, bi *float32, n int)",
+		"addProductAVX2 adds the complex products of n bins, n a multiple of 8.")
+	at := params("sr", "si", "ar", "ai", "br", "bi", "n")
+	n, i := at[6], GP64()
 	XORQ(i, i)
 	Label("bins")
 	CMPQ(i, n)
@@ -94,6 +117,5 @@ func addProduct() {
 	ADDQ(Imm(8), i)
 	JMP(LabelRef("bins"))
 	Label("end")
-	VZEROUPPER()
-	RET()
+	end()
 }
