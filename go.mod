@@ -21,7 +21,7 @@ require (
 	github.com/invopop/jsonschema v0.14.0 // indirect
 	github.com/jedib0t/go-pretty/v6 v6.9.2 // indirect
 	github.com/mattn/go-runewidth v0.0.30 // indirect
-	github.com/mewkiz/flac v1.0.14 // indirect
+	github.com/mewkiz/flac v1.0.14
 	github.com/mewkiz/pkg v0.0.0-20250417130911-3f050ff8c56d // indirect
 	github.com/mewpkg/term v0.0.0-20241026122259-37a80af23985 // indirect
 	github.com/mjibson/go-dsp v0.0.0-20180508042940-11479a337f12 // indirect

@@ -56,6 +56,7 @@ var owner = map[string]string{
 	"github.com/vbauerster/mpb/v8":             "cmd/alidade",
 	"golang.org/x/sys/cpu":                     "pkg/kernel",
 	"golang.org/x/sys/unix":                    "pkg/pipeline",
+	"github.com/mewkiz/flac":                   "pkg/pipeline",
 	"golang.org/x/term":                        "cmd/alidade",
 	"gonum.org/v1/gonum":                       "pkg/measure",
 }

@@ -1,11 +1,9 @@
 package main
 
 import (
-	"bytes"
 	"context"
 	"errors"
 	"fmt"
-	"io"
 	"io/fs"
 	"os"
 	"path/filepath"
@@ -21,7 +19,6 @@ import (
 
 	"alidade/pkg/batch"
 	"alidade/pkg/pipeline"
-	"alidade/pkg/report"
 	"alidade/pkg/sheet"
 )
 
@@ -63,9 +60,6 @@ Exit codes
   2   wrong usage, or a plan that does not fit its job
   75  interrupted, or storage trouble: the same command goes on
 `
-
-// reportHTML is the page of a take among a job's reports.
-const reportHTML = "html"
 
 // exitAgain ends a batch that is worth another try.
 const exitAgain = 75
@@ -296,23 +290,13 @@ func (t *undertaking) steer(ctx context.Context, a batch.Assignment) (batch.Repo
 			*path = filepath.Join(a.Root, filepath.FromSlash(*path))
 		}
 	}
-	html := false
-	var kinds []string
-	for _, kind := range recipe.Reports {
-		if kind == reportHTML {
-			html = true
-		} else {
-			kinds = append(kinds, kind)
-		}
-	}
-	if o.Reports = strings.Join(kinds, ","); o.Reports == "" {
+	if o.Reports = strings.Join(recipe.Reports, ","); o.Reports == "" {
 		o.Reports = "none"
 	}
 	// Reports say the same wherever they are made: paths are those of the plan.
 	tidy := func(r *pipeline.Result) *pipeline.Result { return t.tidy(r, a) }
-	render := pipeline.Renderers{
-		pipeline.ReportJSON: rendererOf(report.JSON, tidy), pipeline.ReportCSV: rendererOf(report.CSV, tidy),
-	}
+	folder := strings.Repeat("../", strings.Count(a.Take.Key, "/")+1) + indexFile
+	render := renderers(o, folder, tidy)
 	spec := pipeline.Spec{Take: a.Paths(), RigPath: t.rig(a.Recipe), Options: o, Version: version}
 	r, err := pipeline.Run(ctx, spec, render, pipeline.Watch{Progress: a.Step})
 	if err != nil {
@@ -323,11 +307,6 @@ func (t *undertaking) steer(ctx context.Context, a batch.Assignment) (batch.Repo
 		digests[f.Path] = f.SHA256
 	}
 	done := tidy(r)
-	if html {
-		if err := writePage(done, a); err != nil {
-			return batch.Report{}, err
-		}
-	}
 	out := batch.Report{Digests: digests, Figures: map[string]*float64{
 		worstFigure: done.Overall.SNRGainDB, figureNoise: done.Overall.NoiseReductionDB,
 		figureTarget: done.Overall.TargetChangeDB, figureAz: &done.Steer.AzimuthDeg,
@@ -337,10 +316,6 @@ func (t *undertaking) steer(ctx context.Context, a batch.Assignment) (batch.Repo
 	}
 	out.Missed = recipe.Limits.missed(done)
 	return out, nil
-}
-
-func rendererOf(f renderer, tidy func(*pipeline.Result) *pipeline.Result) renderer {
-	return func(w io.Writer, r *pipeline.Result) error { return f(w, tidy(r)) }
 }
 
 // missed says which limit a result misses; empty for none.
@@ -420,24 +395,4 @@ func (t *undertaking) plain(err error, a batch.Assignment) error {
 		e.cause = "permission"
 	}
 	return e
-}
-
-// writePage writes the page of a take beside its track.
-func writePage(r *pipeline.Result, a batch.Assignment) error {
-	stem := strings.TrimSuffix(r.Output.Path, filepath.Ext(r.Output.Path))
-	up := strings.Repeat("../", strings.Count(a.Take.Key, "/")+1)
-	var page bytes.Buffer
-	assets := report.Assets{Folder: up + indexFile, Track: r.Output.Path}
-	for _, f := range []struct {
-		name string
-		into *string
-	}{{stem + ".report.json", &assets.Report}, {stem + ".bands.csv", &assets.Bands}} {
-		if _, err := os.Lstat(filepath.Join(a.Folder, f.name)); err == nil {
-			*f.into = f.name
-		}
-	}
-	if err := report.HTML(&page, r, assets); err != nil {
-		return err
-	}
-	return os.WriteFile(filepath.Join(a.Folder, stem+".html"), page.Bytes(), 0o666)
 }

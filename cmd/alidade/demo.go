@@ -1,6 +1,7 @@
 package main
 
 import (
+	"context"
 	"fmt"
 	"io"
 	"math"
@@ -82,14 +83,22 @@ func runDemo(u *ui, c *cli.Context) error {
 	spec := pipeline.Spec{
 		Take:    []string{filepath.Join(out, takeFile)},
 		RigPath: filepath.Join(out, rigFile),
-		Options: pipeline.Options{Toward: degreesText(target.Track[0].AzimuthDeg)},
+		// Nobody is heard in it: the voice is made up.
+		Options: pipeline.Options{Toward: degreesText(target.Track[0].AzimuthDeg), Preview: true},
 		Version: version, Command: append([]string{"alidade"}, u.args...),
 	}
 	if !c.Bool("reproducible") {
 		spec.Created = u.now().UTC().Format(time.RFC3339)
 	}
+	page := ""
 	err = takes{
-		run:     steerTake,
+		run: func(ctx context.Context, spec pipeline.Spec, step func(stage string, done, total int64)) (*pipeline.Result, error) {
+			r, err := steerTake(ctx, spec, step)
+			if err == nil {
+				page = reportFile(r.Output.Path, pipeline.ReportHTML)
+			}
+			return r, err
+		},
 		summary: func(w io.Writer, r *pipeline.Result) error { return report.Summary(w, r, u.width()) },
 		report:  report.JSON,
 		json:    c.Bool("json"), failOn: failNever, quiet: c.Bool("quiet"),
@@ -99,6 +108,7 @@ func runDemo(u *ui, c *cli.Context) error {
 	}
 	u.printf("\nthe take, its rig, track, report and truth lie in %s\n", out)
 	u.printf("try next: alidade steer %s --rig %s --toward %s\n", spec.Take[0], spec.RigPath, degreesText(other.Track[0].AzimuthDeg))
+	u.printf("to look at and to listen to, in a browser: %s\n", page)
 	return nil
 }
 

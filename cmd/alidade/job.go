@@ -210,7 +210,7 @@ func (j *job) recipe(o *override) jobRecipe {
 	}
 	r.Steer.Format = j.Outputs.Format
 	if r.Reports == nil {
-		r.Reports = []string{pipeline.ReportJSON, pipeline.ReportCSV, reportHTML}
+		r.Reports = []string{pipeline.ReportJSON, pipeline.ReportCSV, pipeline.ReportHTML}
 	}
 	if r.Steer.OverRange == "" {
 		r.Steer.OverRange = pipeline.OverRangeFloat32

@@ -354,10 +354,12 @@ func (line *override) over(beside *override) *override {
 }
 
 // reportRoom is what the reports of a take and its outcome need on a disk at
-// most, bytes, and a page on top of that.
+// most, bytes; a page with the pictures in the report on top of that, and the
+// listening excerpts in both.
 const (
-	reportRoom = 192 << 10
-	pageRoom   = 512 << 10
+	reportRoom  = 192 << 10
+	pageRoom    = 1536 << 10
+	excerptRoom = 16 << 20
 )
 
 // roomFor is what the outputs of a take need at most, bytes; 0 where its header
@@ -375,8 +377,11 @@ func roomFor(g group, r jobRecipe) int64 {
 		frames *= 2
 	}
 	room := frames*width + reportRoom
-	if slices.Contains(r.Reports, reportHTML) {
+	if slices.Contains(r.Reports, pipeline.ReportHTML) {
 		room += pageRoom
+	}
+	if r.Steer.Preview {
+		room += excerptRoom
 	}
 	return room
 }

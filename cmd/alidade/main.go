@@ -43,7 +43,7 @@ type verb struct {
 func verbs() []verb {
 	return []verb{
 		demoVerb(), steerVerb(), checkVerb(), predictVerb(), simulateVerb(), inspectVerb(),
-		planVerb(), batchVerb(), mergeVerb(), checkStorageVerb(), schemaVerb(),
+		planVerb(), batchVerb(), mergeVerb(), checkStorageVerb(), reportVerb(), schemaVerb(),
 	}
 }
 

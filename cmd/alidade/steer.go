@@ -97,11 +97,16 @@ What is written
   --with-reference       the reference as a track of its own too
   --excerpt A..B         only this part of the take
   --handles S            this many seconds more at both ends of the excerpt
-  --reports LIST         json,csv (default), json, csv or none
+  --reports LIST         json,csv,html (default), some of them, or none; html
+                         is the page to look at
+  --preview              listening excerpts in the page and in the JSON report,
+                         up to 20 s (those of --excerpt: up to 30 s): whoever
+                         gets them hears the voices in them
   --overwrite            replace tracks and reports that exist
   --no-verify            do not read the written track back
   --private              leave out of report and track what names places,
-                         people and machines: notes, texts, paths
+                         people and machines: notes, texts, paths; the page's
+                         spectrograms are too coarse for words
   --reproducible         leave the time of day out of the report
 
 What is said
@@ -166,6 +171,7 @@ func steerFlags() []cli.Flag {
 		&cli.StringFlag{Name: "excerpt"},
 		&cli.Float64Flag{Name: "handles"},
 		&cli.StringFlag{Name: "reports"},
+		&cli.BoolFlag{Name: "preview"},
 		&cli.BoolFlag{Name: "overwrite"},
 		&cli.BoolFlag{Name: "verify"},
 		&cli.BoolFlag{Name: "no-verify"},
@@ -228,6 +234,7 @@ func steerOptions(c *cli.Context) pipeline.Options {
 		Excerpt:        c.String("excerpt"),
 		Handles:        c.Float64("handles"),
 		Reports:        c.String("reports"),
+		Preview:        c.Bool("preview"),
 		Overwrite:      c.Bool("overwrite"),
 		NoVerify:       c.Bool("no-verify") || c.IsSet("verify") && !c.Bool("verify"),
 	}

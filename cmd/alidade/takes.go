@@ -157,8 +157,7 @@ func newFailure(take string, err error) failure {
 
 // steerTake is the engine of the program.
 func steerTake(ctx context.Context, spec pipeline.Spec, step func(stage string, done, total int64)) (*pipeline.Result, error) {
-	renderers := pipeline.Renderers{pipeline.ReportJSON: report.JSON, pipeline.ReportCSV: report.CSV}
-	return pipeline.Run(ctx, spec, renderers, pipeline.Watch{Progress: step})
+	return pipeline.Run(ctx, spec, renderers(spec.Options, "", nil), pipeline.Watch{Progress: step})
 }
 
 // runSteer is the verb.

@@ -73,6 +73,7 @@ func TestEachFlagOfSteerReachesItsOption(t *testing.T) {
 		"x.wav --excerpt 21:00:00..21:00:05":   {Excerpt: "21:00:00..21:00:05"},
 		"x.wav --handles 1.5":                  {Handles: 1.5},
 		"x.wav --reports none":                 {Reports: "none"},
+		"x.wav --preview":                      {Preview: true},
 		"x.wav --overwrite":                    {Overwrite: true},
 		"x.wav --verify":                       {},
 		"x.wav --verify=false":                 {NoVerify: true},

@@ -88,7 +88,7 @@ func (r *run) hide(res *Result) {
 	}
 	var pairs []string
 	paths := append(r.inputs(), r.spec.Take...)
-	paths = append(paths, r.names.track, r.names.reference, r.names.json, r.names.csv)
+	paths = append(paths, r.names.track, r.names.reference, r.names.json, r.names.csv, r.names.html)
 	slices.SortFunc(paths, func(a, b string) int { return len(b) - len(a) })
 	for _, p := range paths {
 		if base := filepath.Base(p); p != "" && base != p {

@@ -15,6 +15,7 @@ type names struct {
 	track     string
 	reference string // of --with-reference
 	json, csv string
+	html      string
 }
 
 // outputNames follows --out: a folder if it exists or ends in a separator,
@@ -45,13 +46,17 @@ func outputNames(takePath, out string, toward string) (names, error) {
 		reference: stem + ".reference.wav",
 		json:      stem + ".report.json",
 		csv:       stem + ".bands.csv",
+		html:      stem + ".html",
 	}, nil
 }
 
 // report is the name of a report file.
 func (n names) report(kind string) string {
-	if kind == ReportCSV {
+	switch kind {
+	case ReportCSV:
 		return n.csv
+	case ReportHTML:
+		return n.html
 	}
 	return n.json
 }

@@ -23,7 +23,10 @@ func (r *run) result() (*Result, error) {
 		return nil, err
 	}
 	r.channels(res)
-	var err error
+	err := r.pictures(res)
+	if err != nil {
+		return nil, err
+	}
 	if res.Output, err = r.track.output(!r.set.NoVerify); err != nil {
 		return nil, err
 	}
@@ -45,12 +48,17 @@ func (r *run) result() (*Result, error) {
 	if res.Take, err = r.take.finish(); err != nil {
 		return nil, err
 	}
-	res.Findings = append(append(res.Findings, r.take.findings()...), r.findings...)
-	sortFindings(res.Findings)
 	res.Segments.NoiseTime, res.Segments.TargetTime = r.times(res.Segments.Noise), r.times(res.Segments.Target)
 	if res.Segments.Source == SegmentsIsolated {
 		res.Segments.NoiseTime, res.Segments.TargetTime = nil, nil // those stretches are of other takes
 	}
+	if r.set.Preview {
+		if err := r.preview(res); err != nil {
+			return nil, err
+		}
+	}
+	res.Findings = append(append(res.Findings, r.take.findings()...), r.findings...)
+	sortFindings(res.Findings)
 	if r.set.Private {
 		r.hide(res)
 	}

@@ -4,7 +4,7 @@ package pipeline
 // and then the page does without.
 type Pictures struct {
 	Reference *Spectrogram `json:"reference,omitempty"` // the reference, gain corrections applied
-	Output    *Spectrogram `json:"output,omitempty"`    // the steered track; same axes and scale
+	Output    *Spectrogram `json:"output,omitempty"`    // the beam, without the gain of the track; same axes and scale
 	Response  *Response    `json:"response,omitempty"`
 	Scan      *Scan        `json:"scan,omitempty"`
 }
@@ -22,10 +22,11 @@ type Levels struct {
 
 // Spectrogram is the level of a track over time and frequency.
 type Spectrogram struct {
-	StartS float64   `json:"start_s"` // of the first column, from the take's first frame
-	StepS  float64   `json:"step_s"`  // from column to column; at most about 1200 columns are worth drawing
-	Hz     []float64 `json:"hz"`      // middle of each row, ascending, evenly spaced on a logarithmic axis
-	Levels Levels    `json:"levels"`  // [frequency][time], dBFS
+	Of     string    `json:"of,omitempty"` // whose: the microphone that stands for the reference, or empty
+	StartS float64   `json:"start_s"`      // of the first column, from the take's first frame
+	StepS  float64   `json:"step_s"`       // from column to column; at most about 1200 columns are worth drawing
+	Hz     []float64 `json:"hz"`           // middle of each row, ascending, evenly spaced on a logarithmic axis
+	Levels Levels    `json:"levels"`       // [frequency][time], dBFS
 }
 
 // Response is what the weights in force let through.
@@ -64,8 +65,8 @@ type Preview struct {
 	StartS       float64 `json:"start_s"` // from the take's first frame
 	EndS         float64 `json:"end_s"`
 	SampleRateHz int     `json:"sample_rate_hz"`
-	// GainDB was applied to both, so that the louder one peaks at -6 dBFS at
-	// most; both begin with a fade of 50 ms.
+	// GainDB was applied to both, so that the louder one peaks at -6 dBFS; both
+	// begin and end with a fade of 50 ms.
 	GainDB    float64 `json:"gain_db"`
 	Reference Clip    `json:"reference"`
 	Output    Clip    `json:"output"`
@@ -75,5 +76,5 @@ type Preview struct {
 type Clip struct {
 	LevelDBFS float64 `json:"level_dbfs"` // of the whole clip as it stands, for matching by level
 	PeakDBFS  float64 `json:"peak_dbfs"`
-	Audio     []byte  `json:"audio"` // a WAV or FLAC file of one channel
+	Audio     []byte  `json:"audio"` // a FLAC file of one channel, 16 bit
 }

@@ -68,6 +68,8 @@ type run struct {
 	reports          []*staged
 	totals           *measure.Totals // nil under --no-measure
 	heard            listened        // of the take, through the chain of the track
+	painter          *painter        // nil without a page
+	painting         *painter        // while the take itself passes
 	findings         []Finding
 }
 
@@ -178,6 +180,9 @@ func (r *run) prepare() (err error) {
 	for _, kind := range r.set.reports {
 		outputs = append(outputs, r.names.report(kind))
 		bytes += reportRoom
+		if r.set.Preview && kind != ReportCSV {
+			bytes += previewRoom
+		}
 	}
 	if err := refuseInputs(outputs, r.inputs()); err != nil {
 		return err
@@ -222,7 +227,14 @@ func (r *run) pass(encoding wav.Encoding) (err error) {
 		sink: &louder{sink: r.track, factor: float32(audio.FromAmplitudeDB(r.set.GainDB))},
 		from: r.from, to: r.to,
 	}}
-	if r.heard, err = r.driveTrack(src, nil, sinks...); err != nil {
+	if r.painter, err = r.newPainter(); err != nil {
+		return err
+	}
+	if r.painting = r.painter; r.painting != nil {
+		sinks = append(sinks, r.painter.after)
+	}
+	r.heard, err = r.driveTrack(src, nil, sinks...)
+	if r.painting = nil; err != nil {
 		return err
 	}
 	if err := r.track.close(); err != nil {
@@ -254,6 +266,9 @@ func (r *run) drive(src audio.Source, chain chain, sinks ...audio.Sink) (l liste
 			return l, err
 		}
 		src = audio.Tee(src, l.in)
+	}
+	if r.painting != nil {
+		src = audio.Tee(src, r.painting)
 	}
 	y, err := chain(src)
 	if err != nil {

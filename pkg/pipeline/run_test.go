@@ -60,6 +60,7 @@ func newScene(t *testing.T, seconds float64, encoding wav.Encoding) scene {
 var jsonRenderers = Renderers{
 	ReportJSON: func(w io.Writer, r *Result) error { return json.NewEncoder(w).Encode(r) },
 	ReportCSV:  func(w io.Writer, r *Result) error { return json.NewEncoder(w).Encode(r.Bands) },
+	ReportHTML: func(w io.Writer, r *Result) error { return json.NewEncoder(w).Encode(r.Pictures) },
 }
 
 func (s scene) run(o Options) (*Result, error) {

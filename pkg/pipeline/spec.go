@@ -73,7 +73,8 @@ type Options struct {
 	Handles       float64 `json:"handles,omitempty"` // seconds
 	NoVerify      bool    `json:"no_verify,omitempty"`
 	NoMeasure     bool    `json:"no_measure,omitempty"`
-	Reports       string  `json:"reports,omitempty"` // json,csv (default) or none
+	Reports       string  `json:"reports,omitempty"` // json,csv,html (default) or none
+	Preview       bool    `json:"preview,omitempty"` // listening excerpts in page and report
 	Out           string  `json:"out,omitempty"`
 	Overwrite     bool    `json:"overwrite,omitempty"`
 	Private       bool    `json:"private,omitempty"` // leave out what names places, people and machines
@@ -138,6 +139,7 @@ const (
 const (
 	ReportJSON = "json"
 	ReportCSV  = "csv"
+	ReportHTML = "html"
 )
 
 // settings are options with their texts understood.
@@ -267,6 +269,8 @@ func (o Options) resolve() (*settings, error) {
 	}
 	if s.reports, err = parseReports(o.Reports); err != nil {
 		fault("--reports %q: %w", o.Reports, err)
+	} else if o.Preview && !slices.Contains(s.reports, ReportHTML) {
+		fault("--preview with --reports %s: the excerpts are for the page (give html among the reports)", o.Reports)
 	}
 	if len(faults) > 0 {
 		return nil, &UsageError{Err: errors.Join(faults...)}
@@ -344,15 +348,15 @@ func (s *settings) designed() bool {
 func parseReports(text string) ([]string, error) {
 	switch text {
 	case "":
-		return []string{ReportJSON, ReportCSV}, nil
+		return []string{ReportJSON, ReportCSV, ReportHTML}, nil
 	case "none":
 		return nil, nil
 	}
 	var list []string
 	for _, name := range strings.Split(text, ",") {
 		name = strings.TrimSpace(name)
-		if name != ReportJSON && name != ReportCSV {
-			return nil, fmt.Errorf("%q is not a report: want json, csv or none", name)
+		if name != ReportJSON && name != ReportCSV && name != ReportHTML {
+			return nil, fmt.Errorf("%q is not a report: want json, csv, html or none", name)
 		}
 		if !slices.Contains(list, name) {
 			list = append(list, name)
