@@ -342,3 +342,21 @@ func TestTakesOfAFolderAreGroupedByTheirMetadata(t *testing.T) {
 		t.Errorf("folders %v", names)
 	}
 }
+
+// The line for GNU parallel, carried out on this machine.
+func TestTheLineForGNUParallelRuns(t *testing.T) {
+	if _, err := exec.LookPath("parallel"); err != nil {
+		t.Skip("GNU parallel is not installed (Debian: parallel)")
+	}
+	y := newNight(t, 7, 9600)
+	y.put("takes/bad.wav", []byte("RIFF"))
+	y.check(os.Rename(y.at("night.yaml"), y.at("a night.yaml")))
+	if code, _, errs := y.batch("a night.yaml", "--out", "calm", "--quiet"); code != 3 {
+		t.Fatalf("exit code %d\n%s", code, errs)
+	}
+	out, errs, err := shell(y.dir, "alidade plan 'a night.yaml' --parts 3 --for parallel > run.sh && HOME=$PWD sh run.sh")
+	if err != nil || !strings.Contains(string(out), "8 takes, 7 done, 0 missed a limit, 1 failed") {
+		t.Fatalf("%v\n%s%s", err, out, errs)
+	}
+	y.same("calm", "out")
+}

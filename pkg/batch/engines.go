@@ -147,9 +147,14 @@ spec:
 
 func (j JobFile) parallel() string {
 	return fmt.Sprintf(`#!/bin/sh
-# %[1]d parts with GNU parallel. For several machines, which must see the folder
-# under the same path, add: --sshlogin host1,host2 --workdir .
-seq 1 %[1]d | parallel --jobs 1 --retries %[2]d --joblog %[3]s-parallel.log \
+# %[1]d parts with GNU parallel, one at a time on each machine. In the folder of
+# the plan:
+#   sh THIS_FILE
+# or, on machines that see the folder under the same path:
+#   sh THIS_FILE --sshlogin host1,host2 --workdir .
+# A part that was interrupted, or whose storage failed, is started again, %[2]d
+# times at most, elsewhere if there is an elsewhere.
+seq 1 %[1]d | parallel -q --jobs 1 --retries %[2]d --joblog %[3]s-parallel.log "$@" \
   alidade batch %[4]s --workers %[5]d --part {}/%[1]d --bad-takes-done
 exec alidade merge %[4]s --wait 60
 `, j.Parts, maxRestarts, j.Name, quoted(j.Plan), max(j.Workers, 1))

@@ -199,7 +199,7 @@ func TestJobFilesAreWhatTheirEnginesRead(t *testing.T) {
 	for engine, want := range map[string][]string{
 		Slurm:      {"#SBATCH --array=0-11\n", "#SBATCH --job-name=a-night\n", "#SBATCH --mem=656M\n", "#SBATCH --cpus-per-task=2\n", "alidade batch 'a night.plan.json' --workers 2"},
 		Kubernetes: {"completions: 12\n", `args: [batch, "/data/a night.plan.json", --workers, "2", --bad-takes-done]`, "completionMode: Indexed\n", `memory: 656Mi`},
-		Parallel:   {"seq 1 12 | parallel", "--part {}/12", "'a night.plan.json'"},
+		Parallel:   {"seq 1 12 | parallel -q ", "--part {}/12", "'a night.plan.json'"},
 	} {
 		j.Engine = engine
 		text, err := j.Text()
