@@ -51,6 +51,8 @@ type jobOutputs struct {
 	Name    string   `json:"name,omitempty" jsonschema_description:"folder of a take in it: {take} its path without ending, or its parts {folder} and {file}; {rig} the rig file's name, {date} the day of its metadata or undated, {direction} where the beam points, as in the track's name; {take} if absent"`
 	Format  string   `json:"format,omitempty" jsonschema:"enum=auto,enum=pcm16,enum=pcm24,enum=float32" jsonschema_description:"format of the track"`
 	Reports []string `json:"reports,omitempty" jsonschema:"enum=json,enum=csv,enum=html" jsonschema_description:"report files; all of them if absent"`
+	// Previews choose the pages that sound.
+	Previews []previewRule `json:"previews,omitempty" jsonschema_description:"listening excerpts in the pages of takes; the first entry that fits counts, and a take that none fits has none"`
 }
 
 type jobLimits struct {
@@ -63,6 +65,15 @@ type jobRecipe struct {
 	Steer   pipeline.Options `json:"steer"`
 	Reports []string         `json:"reports"`
 	Limits  jobLimits        `json:"limits"`
+}
+
+// validate reports everything that is wrong with the options of a recipe.
+func (r jobRecipe) validate() error {
+	o := r.Steer
+	if o.Reports = strings.Join(r.Reports, ","); o.Reports == "" {
+		o.Reports = "none"
+	}
+	return o.Validate()
 }
 
 func jobSchema() ([]byte, error) {
@@ -146,12 +157,13 @@ func readJob(name string) (*job, error) {
 	}
 	j.checkRigChoices(doc)
 	j.checkName(doc)
+	j.checkPreviews(doc)
 	folder := j.folder()
 	if filepath.IsAbs(folder) || !filepath.IsLocal(folder) || folder == "." {
 		doc.Fault("outputs.folder", "%q: want a folder below that of the job file (alidade batch --out takes any)", folder)
 	}
 	if doc.Err() == nil {
-		if err := j.recipe(nil).Steer.Validate(); err != nil {
+		if err := j.recipe(nil).validate(); err != nil {
 			for _, line := range strings.Split(err.Error(), "\n") {
 				doc.Fault("steer", "%s", line)
 			}
@@ -303,7 +315,7 @@ func (j *job) readOverrides() error {
 				o.options[f] = v
 			}
 		}
-		if err := j.recipe(&o).Steer.Validate(); err != nil && table.Err() == nil {
+		if err := j.recipe(&o).validate(); err != nil && table.Err() == nil {
 			table.Fault(row, "take", "%s", strings.ReplaceAll(err.Error(), "\n", "; "))
 		}
 		j.overrides = append(j.overrides, o)

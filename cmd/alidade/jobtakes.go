@@ -81,6 +81,36 @@ func (m takeMetadata) fits(f *wav.File) bool {
 	return (m.Channels == 0 || m.Channels == f.Header.Channels) && (m.SampleRateHz == 0 || m.SampleRateHz == f.Header.Rate)
 }
 
+// of reports whether a take fits a pattern and says of itself what is asked
+// for; sure is false where its file cannot be read.
+func (m takeMetadata) of(match string, g group) (fits, sure bool) {
+	if match != "" && !batch.Match(match, g.name) && !batch.Match(match, path.Base(g.name)) {
+		return false, true
+	}
+	if m == (takeMetadata{}) {
+		return true, true
+	}
+	if g.head == nil {
+		return true, false
+	}
+	return m.fits(g.head), true
+}
+
+// check holds a pattern and what is asked for against what they may be.
+func (m takeMetadata) check(doc *sheet.Document, at, match string) {
+	if doc.Has(at + ".match") {
+		if err := batch.CheckPattern(match); err != nil {
+			doc.Fault(at+".match", "%v", err)
+		}
+	}
+	texts := m.texts(nil)
+	for _, key := range sortedKeys(texts) {
+		if _, err := textPattern(texts[key][0], ""); err != nil {
+			doc.Fault(at+".metadata."+key, "%q: not a pattern", texts[key][0])
+		}
+	}
+}
+
 // checkRigChoices holds the entries of rigs against what they may be.
 func (j *job) checkRigChoices(doc *sheet.Document) {
 	for k, c := range j.Rigs {
@@ -88,16 +118,56 @@ func (j *job) checkRigChoices(doc *sheet.Document) {
 		if c.Match == "" && c.Metadata == (takeMetadata{}) {
 			doc.Fault(at, "neither match nor metadata says which takes the rig is for")
 		}
-		if doc.Has(at + ".match") {
-			if err := batch.CheckPattern(c.Match); err != nil {
-				doc.Fault(at+".match", "%v", err)
+		c.Metadata.check(doc, at, c.Match)
+	}
+}
+
+// previewRule says which part of the takes that fit is heard in their pages.
+type previewRule struct {
+	Match    string       `json:"match,omitempty" jsonschema_description:"pattern of a take's path or of its file's name; all takes if absent"`
+	Metadata takeMetadata `json:"metadata,omitempty" jsonschema_description:"what the take's first file must say of itself"`
+	At       string       `json:"at,omitempty" jsonschema_description:"A..B, at most 30 s: this part; chosen by itself if absent"`
+	None     bool         `json:"none,omitempty" jsonschema_description:"none of it is heard"`
+}
+
+// checkPreviews holds the rules of excerpts against what they may be.
+func (j *job) checkPreviews(doc *sheet.Document) {
+	if len(j.Outputs.Previews) > 0 && j.Outputs.Reports != nil && !slices.Contains(j.Outputs.Reports, pipeline.ReportHTML) {
+		doc.KeyFault("outputs.previews", "they are heard in pages, and outputs.reports has no html")
+	}
+	for _, option := range []string{"preview", "preview_at"} {
+		if at := "steer." + option; doc.Has(at) && len(j.Outputs.Previews) > 0 {
+			doc.KeyFault(at, "outputs.previews says which takes are heard, and where")
+		}
+	}
+	for k, p := range j.Outputs.Previews {
+		at := fmt.Sprintf("outputs.previews[%d]", k)
+		p.Metadata.check(doc, at, p.Match)
+		if p.None && p.At != "" {
+			doc.Fault(at+".at", "%q, and none of it is to be heard", p.At)
+		} else if p.At != "" {
+			if list, err := pipeline.ParseStretches(p.At); err != nil {
+				doc.Fault(at+".at", "%v", err)
+			} else if len(list) != 1 {
+				doc.Fault(at+".at", "%d stretches, want one", len(list))
 			}
 		}
-		texts := c.Metadata.texts(nil)
-		for _, key := range sortedKeys(texts) {
-			if _, err := textPattern(texts[key][0], ""); err != nil {
-				doc.Fault(at+".metadata."+key, "%q: not a pattern", texts[key][0])
-			}
+	}
+}
+
+// preview gives a take the excerpt of the first rule that it fits, unless its
+// own settings speak of one.
+func (j *job) preview(g group, o *override, options *pipeline.Options) {
+	if o != nil {
+		_, itself := o.options["preview"]
+		if _, at := o.options["preview_at"]; itself || at {
+			return
+		}
+	}
+	for _, p := range j.Outputs.Previews {
+		if fits, sure := p.Metadata.of(p.Match, g); fits && sure {
+			options.Preview, options.PreviewAt = !p.None, p.At
+			return
 		}
 	}
 }
@@ -111,19 +181,11 @@ func (j *job) rigFor(g group, o *override) (string, error) {
 	}
 	unread := ""
 	for _, c := range j.Rigs {
-		if c.Match != "" && !batch.Match(c.Match, g.name) && !batch.Match(c.Match, path.Base(g.name)) {
-			continue
-		}
-		if c.Metadata == (takeMetadata{}) {
+		switch fits, sure := c.Metadata.of(c.Match, g); {
+		case fits && sure:
 			return c.Rig, nil
-		}
-		switch {
-		case g.head == nil:
-			if unread == "" {
-				unread = c.Rig
-			}
-		case c.Metadata.fits(g.head):
-			return c.Rig, nil
+		case fits && unread == "":
+			unread = c.Rig
 		}
 	}
 	switch {
@@ -312,7 +374,7 @@ func (s *sidecars) read(name, stem string) error {
 	}
 	o.limits.MinimumSNRGainDB = f.Limits.MinimumSNRGainDB
 	if doc.Err() == nil {
-		if err := s.job.recipe(&o).Steer.Validate(); err != nil {
+		if err := s.job.recipe(&o).validate(); err != nil {
 			for _, line := range strings.Split(err.Error(), "\n") {
 				doc.Fault("steer", "%s", line)
 			}

@@ -227,7 +227,8 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 		key := strings.TrimSuffix(g.name, path.Ext(g.name))
 		o := overrideOf(j.overrides, g.paths[0], g.name, key).over(j.beside[key])
 		recipe := j.recipe(o)
-		if err := recipe.Steer.Validate(); err != nil {
+		j.preview(g, o, &recipe.Steer)
+		if err := recipe.validate(); err != nil {
 			// Each for itself was right.
 			faults = append(faults, &usageError{fmt.Errorf("%s: overrides: %s: %s", j.path, g.name, strings.ReplaceAll(err.Error(), "\n", "; ")), ""})
 			continue

@@ -102,6 +102,7 @@ What is written
   --preview              listening excerpts in the page and in the JSON report,
                          up to 20 s (those of --excerpt: up to 30 s): whoever
                          gets them hears the voices in them
+  --preview-at A..B      these up to 30 s of the take are heard
   --overwrite            replace tracks and reports that exist
   --no-verify            do not read the written track back
   --private              leave out of report and track what names places,
@@ -172,6 +173,7 @@ func steerFlags() []cli.Flag {
 		&cli.Float64Flag{Name: "handles"},
 		&cli.StringFlag{Name: "reports"},
 		&cli.BoolFlag{Name: "preview"},
+		&cli.StringFlag{Name: "preview-at"},
 		&cli.BoolFlag{Name: "overwrite"},
 		&cli.BoolFlag{Name: "verify"},
 		&cli.BoolFlag{Name: "no-verify"},
@@ -235,6 +237,7 @@ func steerOptions(c *cli.Context) pipeline.Options {
 		Handles:        c.Float64("handles"),
 		Reports:        c.String("reports"),
 		Preview:        c.Bool("preview"),
+		PreviewAt:      c.String("preview-at"),
 		Overwrite:      c.Bool("overwrite"),
 		NoVerify:       c.Bool("no-verify") || c.IsSet("verify") && !c.Bool("verify"),
 	}

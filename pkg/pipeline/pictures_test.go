@@ -3,11 +3,13 @@ package pipeline
 import (
 	"bytes"
 	"encoding/json"
+	"errors"
 	"math"
 	"math/rand/v2"
 	"os"
 	"os/exec"
 	"path/filepath"
+	"strings"
 	"testing"
 
 	"github.com/mewkiz/flac"
@@ -184,6 +186,7 @@ func TestPreviewIsWhatTheTrackHolds(t *testing.T) {
 	s := noiseScene(t, 8000, 30*8000)
 	for name, o := range map[string]Options{
 		"automatic": {Noise: "10..14"}, "excerpt": {Excerpt: "3..7", Handles: 0.5, NoMeasure: true}, "gain": {Excerpt: "1..9", GainDB: -12, NoMeasure: true}, "long excerpt": {Excerpt: "1..29.5", NoMeasure: true},
+		"given": {Noise: "10..14", PreviewAt: "20.5..24"}, "given in an excerpt": {Excerpt: "2..20", PreviewAt: "18..27", NoMeasure: true},
 	} {
 		o.Toward, o.Preview, o.Out = "60", true, filepath.Join(s.dir, name+"/")+"/"
 		r := s.must(t, o)
@@ -197,6 +200,9 @@ func TestPreviewIsWhatTheTrackHolds(t *testing.T) {
 		}
 		if name == "automatic" && (p.StartS > 11 || p.EndS < 14+6 || length != previewS) {
 			t.Errorf("chosen: %g to %g s with noise from 10 to 14 s", p.StartS, p.EndS)
+		}
+		if want := map[string][2]float64{"given": {20.5, 24}, "given in an excerpt": {18, 20}}[name]; want[1] > 0 && (p.StartS != want[0] || p.EndS != want[1]) {
+			t.Errorf("%s: %g to %g s, want %v", name, p.StartS, p.EndS, want)
 		}
 		after, before := decodeClip(t, p.Output.Audio), decodeClip(t, p.Reference.Audio)
 		if len(after) != len(before) || float64(len(after)) != math.Round(length*float64(p.SampleRateHz)) {
@@ -234,6 +240,26 @@ func TestPreviewIsWhatTheTrackHolds(t *testing.T) {
 				break
 			}
 		}
+	}
+}
+
+func TestPreviewThatCannotBeIsRefusedAhead(t *testing.T) {
+	s := noiseScene(t, 8000, 40*8000)
+	for at, want := range map[string]string{
+		"0..30.5": "30.5 s, want at most 30 s", "41..42": "the track holds 0.000 to 40.000 s", "1..2,3..4": "one stretch A..B, not 2", "4..3": "--preview-at", "10:00:00..10:00:05": "no time reference",
+	} {
+		out := filepath.Join(s.dir, "refused") + "/"
+		_, err := s.run(Options{Toward: "60", Preview: true, PreviewAt: at, NoMeasure: true, Out: out})
+		var usage *UsageError
+		if !errors.As(err, &usage) || !strings.Contains(err.Error(), want) {
+			t.Errorf("%s: %v, want %q", at, err, want)
+		}
+		if list, _ := os.ReadDir(out); len(list) > 0 {
+			t.Errorf("%s: left %v", at, list)
+		}
+	}
+	if err := (Options{Toward: "60", PreviewAt: "1..2"}).Validate(); err == nil || !strings.Contains(err.Error(), "give that too") {
+		t.Errorf("without --preview: %v", err)
 	}
 }
 

@@ -18,7 +18,7 @@ import (
 // What a listening excerpt is.
 const (
 	previewS        = 20    // chosen by itself
-	previewMostS    = 30    // of an --excerpt
+	previewMostS    = 30    // of an --excerpt or --preview-at
 	previewFadeS    = 0.05  // at its beginning and end
 	previewPeak     = 0.5   // -6.02 dBFS
 	previewMostRate = 48000 // Hz; what has more is decimated
@@ -77,10 +77,33 @@ func (r *run) preview(res *Result) error {
 	return nil
 }
 
+// previewGiven returns the frames of the take that --preview-at names.
+func (r *run) previewGiven() (from, to int64, err error) {
+	if r.set.previewAt == nil {
+		return 0, 0, nil
+	}
+	s, err := r.seconds(*r.set.previewAt)
+	if err != nil {
+		return 0, 0, &UsageError{Err: fmt.Errorf("--preview-at %s: %w", r.set.PreviewAt, err)}
+	}
+	rate := float64(r.take.header.Rate)
+	from, to = max(r.from, frameAt(s[0], rate)), min(r.to, frameAt(s[1], rate))
+	switch {
+	case from >= to:
+		return 0, 0, &UsageError{Err: fmt.Errorf("--preview-at %s: the track holds %.3f to %.3f s of the take", r.set.PreviewAt, float64(r.from)/rate, float64(r.to)/rate), Hint: "times count in seconds from the take's first frame"}
+	case to-from > frameAt(previewMostS, rate):
+		return 0, 0, &UsageError{Err: fmt.Errorf("--preview-at %s: %.1f s, want at most %d s", r.set.PreviewAt, float64(to-from)/rate, previewMostS)}
+	}
+	return from, to, nil
+}
+
 // previewFrames chooses the frames of the take that are heard: those of
-// --excerpt, or the part of the track with most of the target and some noise
+// --preview-at, of --excerpt, or the part of the track with most of the target and some noise
 // alone before or after it; without stretches, where the beam is loudest.
 func (r *run) previewFrames(res *Result) (from, to int64) {
+	if from, to, err := r.previewGiven(); err == nil && to > from {
+		return from, to
+	}
 	rate := float64(r.take.header.Rate)
 	long := r.to - r.from
 	if r.set.excerpt != nil && long <= frameAt(previewMostS, rate) || long <= frameAt(previewS, rate) {

@@ -163,6 +163,9 @@ func (r *run) prepare() (err error) {
 	if r.names, err = outputNames(r.take.outputBase(), r.set.Out, r.set.towardName()); err != nil {
 		return err
 	}
+	if _, _, err := r.previewGiven(); err != nil {
+		return err
+	}
 	outputs := []string{r.names.track}
 	h := r.take.header
 	frames := r.to - r.from

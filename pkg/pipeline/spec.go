@@ -73,8 +73,9 @@ type Options struct {
 	Handles       float64 `json:"handles,omitempty"` // seconds
 	NoVerify      bool    `json:"no_verify,omitempty"`
 	NoMeasure     bool    `json:"no_measure,omitempty"`
-	Reports       string  `json:"reports,omitempty"` // json,csv,html (default) or none
-	Preview       bool    `json:"preview,omitempty"` // listening excerpts in page and report
+	Reports       string  `json:"reports,omitempty"`    // json,csv,html (default) or none
+	Preview       bool    `json:"preview,omitempty"`    // listening excerpts in page and report
+	PreviewAt     string  `json:"preview_at,omitempty"` // A..B of the take: where they are; by itself if empty
 	Out           string  `json:"out,omitempty"`
 	Overwrite     bool    `json:"overwrite,omitempty"`
 	Private       bool    `json:"private,omitempty"` // leave out what names places, people and machines
@@ -155,6 +156,7 @@ type settings struct {
 	noise             []Stretch
 	target            []Stretch
 	excerpt           *Stretch
+	previewAt         *Stretch
 	reports           []string
 }
 
@@ -227,6 +229,13 @@ func (o Options) resolve() (*settings, error) {
 		s.excerpt = &list[0]
 	} else if len(list) > 1 {
 		fault("--excerpt %q: one stretch A..B, not %d", o.Excerpt, len(list))
+	}
+	if list := stretches("preview-at", o.PreviewAt); len(list) == 1 && o.Preview {
+		s.previewAt = &list[0]
+	} else if len(list) > 1 {
+		fault("--preview-at %q: one stretch A..B, not %d", o.PreviewAt, len(list))
+	} else if len(list) == 1 {
+		fault("--preview-at %s: it says where --preview listens: give that too", o.PreviewAt)
 	}
 	if o.Handles != 0 && o.Excerpt == "" {
 		fault("--handles %g: handles belong to --excerpt A..B", o.Handles)
