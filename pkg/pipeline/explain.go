@@ -19,20 +19,30 @@ const (
 func (r *run) explain(res *Result, g *measure.Gains) {
 	r.reasons(res, g)
 	r.flagged(res)
-	var short []float64
+	var noise, target []float64
 	for _, b := range res.Bands {
 		if b.SNRGainDB == nil || b.SNRGainCI95 == nil || b.PredictedWhiteDB == nil || b.PredictedDiffuseDB == nil || hasFlag(b, measure.Sparse) {
 			continue
 		}
-		least := math.Min(*b.PredictedWhiteDB, *b.PredictedDiffuseDB)
-		if b.SNRGainCI95[1] < least-gainShortDB {
-			short = append(short, b.NominalHz)
+		if b.SNRGainCI95[1] >= math.Min(*b.PredictedWhiteDB, *b.PredictedDiffuseDB)-gainShortDB {
+			continue
+		}
+		// Either the noise is not what the models say, or the target is not.
+		if b.PredictedInNoiseDB != nil && *b.PredictedInNoiseDB-*b.SNRGainDB > gainShortDB/2 {
+			target = append(target, b.NominalHz)
+		} else {
+			noise = append(noise, b.NominalHz)
 		}
 	}
-	if len(short) > 0 {
-		r.report(Finding{Code: "gain-below-prediction", Severity: Warning, Bands: short, Message: fmt.Sprintf(
-			"the measured gain lies more than %g dB below what the filters give in white and in diffuse noise in %s: the noise may come from near the steered direction; else suspect the direction, the spacing, the channel order, a polarity, the air temperature, or reverberation",
-			gainShortDB, bandCount(len(short)))})
+	if len(noise) > 0 {
+		r.report(Finding{Code: "gain-below-prediction", Severity: Warning, Bands: noise, Message: fmt.Sprintf(
+			"the measured gain lies more than %g dB below what the filters give in white and in diffuse noise in %s, as it should in the noise that was measured: the noise may come from near the steered direction or from a grating lobe; else suspect the direction or the noise stretches",
+			gainShortDB, bandCount(len(noise)))})
+	}
+	if len(target) > 0 {
+		r.report(Finding{Code: "gain-below-prediction", Severity: Warning, Bands: target, Message: fmt.Sprintf(
+			"the measured gain lies more than %g dB below what the filters give in white, in diffuse and in the measured noise in %s: the target is lost there, not the noise kept; suspect the direction, a near source (give --focus X,Y,Z), the spacing, the channel order, a polarity, the air temperature, or reverberation",
+			gainShortDB, bandCount(len(target)))})
 	}
 	if o := res.Overall; o.TargetChangeDB != nil && *o.TargetChangeDB < -targetLossDB && (o.TargetChangeCI95 == nil || o.TargetChangeCI95[1] < -targetLossDB) {
 		postfilter := ""

@@ -69,6 +69,9 @@ func (r *run) gains(res *Result) error {
 	if err := r.unfixed(res, noise, target); err != nil {
 		return err
 	}
+	if err := r.predictInNoise(res); err != nil {
+		return err
+	}
 	r.explain(res, third)
 	return nil
 }

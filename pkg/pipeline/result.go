@@ -120,6 +120,7 @@ type Steer struct {
 	UndoSpreading bool         `json:"undo_spreading"`
 	Changes       *Changes     `json:"weights_over_time,omitempty"` // under --reestimate-every
 	Postfilter    *Postfilter  `json:"postfilter,omitempty"`
+	Predicted     *Predicted   `json:"predicted,omitempty"` // gains overall, where the noise was measured
 	HighpassHz    Number       `json:"highpass_hz,omitempty"`
 	GainDB        float64      `json:"gain_db"` // applied to the track, taken out of every level here
 	FilterTaps    int          `json:"filter_taps"`
@@ -181,7 +182,8 @@ type Band struct {
 
 	PredictedWhiteDB   Number   `json:"predicted_white_db"`
 	PredictedDiffuseDB Number   `json:"predicted_diffuse_db"`
-	Flags              []string `json:"flags"` // grating, no-aperture, sparse, target-unmeasurable
+	PredictedInNoiseDB Number   `json:"predicted_measured_noise_db"` // in the noise as it was measured; one-third octaves only
+	Flags              []string `json:"flags"`                       // grating, no-aperture, sparse, target-unmeasurable
 }
 
 // Overall sums the bands up.

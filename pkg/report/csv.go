@@ -64,6 +64,7 @@ func bandColumns() []bandColumn {
 		number("snr_gain_over_named_microphone_db", func(b *band) pipeline.Number { return b.OverNamedMicrophone }),
 		number("predicted_white_db", func(b *band) pipeline.Number { return b.PredictedWhiteDB }),
 		number("predicted_diffuse_db", func(b *band) pipeline.Number { return b.PredictedDiffuseDB }),
+		number("predicted_measured_noise_db", func(b *band) pipeline.Number { return b.PredictedInNoiseDB }),
 		bandColumn{"flags", func(b *band) string { return strings.Join(b.Flags, " ") }})
 }
 

@@ -85,6 +85,7 @@ var definitions = []named{
 	{"", "Intervals", "95 %, for the expected gain of these weights in this noise field, not for the noise that happened to sound."},
 	{"", "Postfilter", "Where one is used its gains follow the sound, and no figure is that of a fixed filter: they are found on the mix and run through the noise alone and the target alone where those were given (shadow filtering); else only the noise in the pauses is measured (Zelinski 1988; McCowan and Bourlard 2003)."},
 	{"", "Predicted", "For the weights in force, without a postfilter: in spatially white noise, 1/wᴴw, and in spherically isotropic noise, wᴴΓw with Γ = sin(kd)/kd (Van Trees 2002; Brandstein and Ward 2001)."},
+	{"", "Predicted in the measured noise", "For the weights in force and the spatial covariance R of the noise stretches (at most 8 s of them): tr R/(M·wᴴRw), for a target where the beam points. A measured gain below it is a loss of target."},
 	{"", "Speech-weighted SNR gain", "Band gains weighted with the band-importance function of ANSI S3.5 (Greenberg, Peterson and Zurek 1993). Not a measure of intelligibility."},
 	{"", "A-weighted noise reduction", "Noise powers weighted with the A curve of IEC 61672-1:2013 before they are summed."},
 	{"", "Directions", "Azimuth from the rig's right-hand axis towards its front, elevation from the horizontal up. Microphones are taken as omnidirectional in a free field: body, baffle, windshield and foam are not modelled."},
