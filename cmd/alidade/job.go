@@ -43,7 +43,7 @@ type jobFile struct {
 // jobSteer are the options of steer; a direction may stand there as a number.
 type jobSteer struct {
 	pipeline.Options
-	Toward any `json:"toward,omitempty" jsonschema:"oneof_type=string;number" jsonschema_description:"direction AZ or AZ,EL in degrees"`
+	Toward any `json:"toward,omitempty" jsonschema:"oneof_type=string;number" jsonschema_description:"direction AZ or AZ,EL in degrees, auto or follow"`
 }
 
 type jobOutputs struct {
@@ -338,6 +338,12 @@ func valueOf(text string, t reflect.Type) (any, error) {
 		v, err := strconv.ParseFloat(text, 64)
 		if err != nil || v != v || v > 1e300 || v < -1e300 {
 			return nil, fmt.Errorf("%q: not a number", text)
+		}
+		return v, nil
+	case reflect.Int:
+		v, err := strconv.Atoi(text)
+		if err != nil {
+			return nil, fmt.Errorf("%q: not a whole number", text)
 		}
 		return v, nil
 	case reflect.Slice:

@@ -18,6 +18,7 @@ const steerHelp = `alidade steer: one clean track from each take, aimed at the w
 Usage
   alidade steer TAKE... --rig RIG --toward AZ[,EL] [OPTIONS]
   alidade steer TAKE... --rig RIG --focus X,Y,Z [OPTIONS]
+  alidade steer TAKE... --rig RIG --toward auto [OPTIONS]
 
 Example
   $ alidade steer roof_07.wav --rig roof.yaml --toward 60 --noise 0..2
@@ -43,6 +44,13 @@ Where to
   --toward AZ[,EL]       direction in degrees: azimuth from +x towards +y,
                          elevation up; a negative value needs no quoting
   --focus X,Y,Z          point in metres from the rig's origin
+  --toward auto          the direction of the dominant sound, found in the take
+                         (alidade locate shows what is heard from where)
+  --toward follow        the path of a source that moves; goes with --method
+                         farrow and --weights delay-and-sum, and takes them
+  --focus auto           the point of a source near enough to tell its distance
+  --pick N               with auto and follow: source N of those found, 1
+                         (default) the dominant one
   --reference-point NAME a microphone's name, or centre
 
 How
@@ -137,6 +145,7 @@ func steerFlags() []cli.Flag {
 		&cli.StringFlag{Name: "rig"},
 		&cli.StringFlag{Name: "toward"},
 		&cli.StringFlag{Name: "focus"},
+		&cli.IntFlag{Name: "pick"},
 		&cli.StringFlag{Name: "reference-point"},
 
 		&cli.StringFlag{Name: "method"},
@@ -205,6 +214,7 @@ func steerOptions(c *cli.Context) pipeline.Options {
 		Private:        c.Bool("private"),
 		Toward:         c.String("toward"),
 		Focus:          c.String("focus"),
+		Pick:           c.Int("pick"),
 		ReferencePoint: c.String("reference-point"),
 		Method:         c.String("method"),
 		Taper:          c.String("taper"),

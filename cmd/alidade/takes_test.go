@@ -39,6 +39,7 @@ func TestEachFlagOfSteerReachesItsOption(t *testing.T) {
 		"x.wav":                                {},
 		"x.wav --toward -5,10":                 {Toward: "-5,10"},
 		"x.wav --focus -1,2,.5":                {Focus: "-1,2,.5"},
+		"x.wav --toward auto --pick 2":         {Toward: "auto", Pick: 2},
 		"x.wav --reference-point M4":           {ReferencePoint: "M4"},
 		"x.wav --method farrow":                {Method: "farrow"},
 		"x.wav --taper taylor:30:4":            {Taper: "taylor:30:4"},
@@ -127,7 +128,7 @@ func TestSteerNamesEveryFaultOfItsCommandLineAtOnce(t *testing.T) {
 		{"x.wav --rig r.yaml --toward 60 --verify --no-verify", []string{"steer: both --verify and --no-verify"}},
 		{"--fail-on sometimes", []string{
 			"steer: no take: name at least one WAV file", "steer: no rig: give --rig FILE",
-			"steer: no direction: give --toward AZ[,EL] or --focus X,Y,Z",
+			"steer: no direction: give --toward AZ[,EL] or --focus X,Y,Z, or --toward auto to have it found",
 			`steer: --fail-on "sometimes": want one of never, warning, error`}},
 		{"x.wav y.wav --rig r.yaml --toward 60 --out one.wav", []string{
 			`steer: --out "one.wav": one track for 2 takes: name a folder that exists, or end it in /`}},

@@ -51,7 +51,9 @@ type beamline struct {
 	// channels themselves where weights are designed; nil where the filters
 	// hold them.
 	shift []float64
-	fit   *beam.Fit // of designed weights
+	// amplitudes are those of the microphones in the beam.
+	amplitudes []float64
+	fit        *beam.Fit // of designed weights
 	// changes are weights that change with time, of which filters and model are
 	// the first; nil if they do not.
 	changes *changes
@@ -98,6 +100,7 @@ func newBeamline(l *loadedRig, s *settings, rate int) (*beamline, error) {
 			amplitudes[i] /= b.look.Spreading(p, b.ref)
 		}
 	}
+	b.amplitudes = amplitudes
 	kernel, err := b.kernel()
 	if err != nil {
 		return nil, err
@@ -129,11 +132,7 @@ func (b *beamline) kernel() (delay.Kernel, error) {
 // corrected returns the used microphones of a take in rig order, with gain and
 // polarity corrections and the high-pass.
 func (b *beamline) corrected(src audio.Source) (audio.Source, error) {
-	order, gain := make([]int, len(b.used)), make([]float64, len(b.used))
-	for i, m := range b.used {
-		order[i], gain[i] = b.rig.Mics[m].Channel-1, b.rig.Mics[m].Factor()
-	}
-	out, err := audio.Map(src, order, gain)
+	out, err := b.rig.corrected(src)
 	if err != nil {
 		return nil, err
 	}
@@ -158,6 +157,9 @@ func (b *beamline) corrected(src audio.Source) (audio.Source, error) {
 func (b *beamline) steered(src audio.Source) (audio.Source, error) {
 	if b.changes != nil {
 		return beam.NewChanging(src, b.changes.list, b.changes.fade)
+	}
+	if b.set.path != nil {
+		return b.followed(src)
 	}
 	if b.set.Method == MethodSpectral {
 		return beam.NewOverlapSave(src, b.filters)

@@ -72,7 +72,7 @@ func Check(ctx context.Context, spec Spec, limits quality.Limits, watch Watch) (
 	if err := r.fits(); err != nil {
 		return nil, err
 	}
-	if err := r.sounds(); err != nil {
+	if err := t.sounds(); err != nil {
 		return nil, err
 	}
 	found, err := r.inspect(limits, t.header.Frames)
@@ -107,18 +107,6 @@ func Check(ctx context.Context, spec Spec, limits quality.Limits, watch Watch) (
 	}
 	res.Verdict = verdict(res)
 	return res, nil
-}
-
-// sounds refuses a take without a frame.
-func (r *run) sounds() error {
-	h := r.take.header
-	if h.Frames > 0 {
-		return nil
-	}
-	return &HintedError{
-		Err:  fmt.Errorf("%s: holds no sound: its header promises %d channels at %d Hz, and no frame follows", r.take.path(), h.Channels, h.Rate),
-		Hint: "the recorder stopped before the first sound or the copy was cut off: copy it again, or leave it out",
-	}
 }
 
 // inspect looks at the first frames of the take, as it was recorded, with the

@@ -16,6 +16,10 @@
 // of files that follow each other (listed, or found by time reference and
 // name), or both. The track carries what the take carries, as far as it holds.
 //
+// Where the direction is to be found, a pass over the take comes first: package
+// bearing hears the same corrected channels, and the beam points to the source
+// that was asked for, or goes along its track. Locate is that pass alone.
+//
 // # Use
 //
 //	spec := pipeline.Spec{Take: []string{"take.wav"}, RigPath: "rig.yaml",

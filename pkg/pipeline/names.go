@@ -63,6 +63,9 @@ func (n names) report(kind string) string {
 
 // towardName is the part of an output's name that says where the beam points.
 func (s *settings) towardName() string {
+	if s.aim != aimGiven {
+		return s.aimName()
+	}
 	if s.point != nil {
 		return pointName(*s.point)
 	}

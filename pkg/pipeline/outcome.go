@@ -17,6 +17,7 @@ func (r *run) result() (*Result, error) {
 		Steer:    r.line.summary(),
 		Bands:    []Band{},
 		Findings: []Finding{}, OctaveBands: []Band{},
+		Direction:  r.found,
 		Provenance: &Provenance{Command: r.spec.Command, Kernel: kernel.Name()},
 	}
 	if err := r.gains(res); err != nil {
@@ -96,6 +97,9 @@ func (b *beamline) summary() Steer {
 		s.Kind = "focus"
 		s.PointM = &[3]float64{p.X, p.Y, p.Z}
 		s.DistanceM = number(p.Distance(b.ref))
+	}
+	if b.set.aim != aimGiven {
+		s.Kind = b.set.aim.kind()
 	}
 	for _, d := range b.set.nulls {
 		s.NullsDeg = append(s.NullsDeg, [2]float64{d.AzimuthDeg(), d.ElevationDeg()})

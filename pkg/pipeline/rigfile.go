@@ -9,6 +9,7 @@ import (
 	"strings"
 
 	"alidade/pkg/acoustics"
+	"alidade/pkg/audio"
 	"alidade/pkg/rig"
 )
 
@@ -84,6 +85,17 @@ func loadRig(path string, o Options) (*loadedRig, error) {
 		l.speed, l.rule = *o.SpeedOfSound, "given"
 	}
 	return l, nil
+}
+
+// corrected returns the used microphones of a take in rig order, with gain and
+// polarity corrections.
+func (l *loadedRig) corrected(src audio.Source) (audio.Source, error) {
+	used := l.Used()
+	order, gain := make([]int, len(used)), make([]float64, len(used))
+	for i, m := range used {
+		order[i], gain[i] = l.Mics[m].Channel-1, l.Mics[m].Factor()
+	}
+	return audio.Map(src, order, gain)
 }
 
 // namesHint lists the used microphones as a remedy.

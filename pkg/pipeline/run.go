@@ -70,6 +70,7 @@ type run struct {
 	heard            listened        // of the take, through the chain of the track
 	painter          *painter        // nil without a page
 	painting         *painter        // while the take itself passes
+	found            *Direction      // of --toward auto and follow and --focus auto
 	findings         []Finding
 }
 
@@ -94,14 +95,16 @@ func (r *run) steer() (result *Result, err error) {
 	if err := r.fits(); err != nil {
 		return nil, err
 	}
-	if h.Frames == 0 {
-		return nil, &HintedError{
-			Err:  fmt.Errorf("%s: holds no sound: its header promises %d channels at %d Hz, and no frame follows", r.take.path(), h.Channels, h.Rate),
-			Hint: "the recorder stopped before the first sound or the copy was cut off: copy it again, or leave it out",
-		}
+	if err := r.take.sounds(); err != nil {
+		return nil, err
 	}
 	if r.set.HighpassHz >= float64(h.Rate)/2 {
 		return nil, &UsageError{Err: fmt.Errorf("--highpass %g: at or above half the take's rate of %d Hz", r.set.HighpassHz, h.Rate)}
+	}
+	if !r.set.aimed() {
+		if err := r.findAim(); err != nil {
+			return nil, err
+		}
 	}
 	if r.line, err = newBeamline(r.rig, r.set, h.Rate); err != nil {
 		return nil, err

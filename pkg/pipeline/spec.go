@@ -9,6 +9,7 @@ import (
 	"strings"
 
 	"alidade/pkg/beam"
+	"alidade/pkg/bearing"
 	"alidade/pkg/rig"
 )
 
@@ -27,8 +28,9 @@ type Spec struct {
 // each field is the long option of that name with _ for -. The zero value of a
 // field is its default.
 type Options struct {
-	Toward string `json:"toward,omitempty"` // AZ[,EL] in degrees
-	Focus  string `json:"focus,omitempty"`  // X,Y,Z in metres from the rig's origin
+	Toward string `json:"toward,omitempty"` // AZ[,EL] in degrees, auto or follow
+	Focus  string `json:"focus,omitempty"`  // X,Y,Z in metres from the rig's origin, or auto
+	Pick   int    `json:"pick,omitempty"`   // for auto and follow: which of those found, 1 (default) the dominant one
 
 	Method  string `json:"method,omitempty"`  // sinc, farrow or spectral (default)
 	Weights string `json:"weights,omitempty"` // delay-and-sum (default), constant-beamwidth, superdirective or minimum-variance
@@ -114,6 +116,12 @@ const (
 	MethodSpectral = "spectral"
 )
 
+// What --toward says in place of a direction, and --focus in place of a point.
+const (
+	TowardAuto   = "auto"   // find the source and steer to it
+	TowardFollow = "follow" // find the source's path and go with it
+)
+
 // The weights.
 const (
 	WeightsDelayAndSum       = "delay-and-sum"
@@ -146,8 +154,10 @@ const (
 // settings are options with their texts understood.
 type settings struct {
 	Options
-	direction *rig.Direction // of --toward
-	point     *rig.Point     // of --focus
+	aim       aim
+	direction *rig.Direction // of --toward, or found; of a path the mean
+	point     *rig.Point     // of --focus, or found
+	path      *bearing.Track // found, of --toward follow
 	taper     beam.Taper
 	nulls     []rig.Direction
 	floorDB   float64
@@ -169,9 +179,15 @@ func (o Options) resolve() (*settings, error) {
 
 	switch {
 	case o.Toward == "" && o.Focus == "":
-		fault("no direction: give --toward AZ[,EL] or --focus X,Y,Z")
+		fault("no direction: give --toward AZ[,EL] or --focus X,Y,Z, or --toward auto to have it found")
 	case o.Toward != "" && o.Focus != "":
 		fault("both --toward %q and --focus %q: a beam points to one place", o.Toward, o.Focus)
+	case o.Toward == TowardAuto:
+		s.aim = aimFound
+	case o.Toward == TowardFollow:
+		s.aim = aimFollow
+	case o.Focus == TowardAuto:
+		s.aim = aimFoundPoint
 	case o.Toward != "":
 		d, err := ParseDirection(o.Toward)
 		if err != nil {
@@ -185,6 +201,7 @@ func (o Options) resolve() (*settings, error) {
 		}
 		s.point = &p
 	}
+	s.resolvePick(fault)
 	if o.UndoSpreading && o.Focus == "" {
 		fault("--undo-spreading needs a point: a far source has no spreading to undo (give --focus X,Y,Z)")
 	}
@@ -198,7 +215,11 @@ func (o Options) resolve() (*settings, error) {
 		}
 	}
 	choose("weights", &s.Weights, WeightsDelayAndSum, WeightsDelayAndSum, WeightsConstantBeamwidth, WeightsSuperdirective, WeightsMinimumVariance)
-	choose("method", &s.Method, MethodSpectral, MethodSinc, MethodFarrow, MethodSpectral)
+	method := MethodSpectral
+	if s.aim == aimFollow {
+		method = MethodFarrow
+	}
+	choose("method", &s.Method, method, MethodSinc, MethodFarrow, MethodSpectral)
 	s.resolveWeights(fault)
 	choose("postfilter", &s.Postfilter, PostfilterNone, PostfilterNone, PostfilterWhite, PostfilterDiffuse)
 	choose("format", &s.Format, FormatAuto, FormatAuto, FormatPCM16, FormatPCM24, FormatFloat32)
@@ -296,14 +317,16 @@ func (s *settings) resolveWeights(fault func(format string, args ...any)) {
 			continue
 		}
 		if s.Toward != "" {
-			if look, err := ParseDirection(s.Toward); err == nil && rig.AngleBetween(look, d) < 1e-3 {
+			if look, err := ParseDirection(s.Toward); err == nil && rig.AngleBetween(look, d) < nullApart {
 				fault("--null %s: the direction that is steered to: a beam cannot be deaf to what it is to hear", text)
 			}
 		}
 		s.nulls = append(s.nulls, d)
 	}
 	designed := s.Weights != WeightsDelayAndSum || len(s.Null) > 0
-	if designed && s.Method != MethodSpectral {
+	if s.aim == aimFollow {
+		s.resolveFollow(designed, fault)
+	} else if designed && s.Method != MethodSpectral {
 		fault("--method %s: weights other than delay-and-sum and nulls depend on frequency and need the method %s", s.Method, MethodSpectral)
 	}
 	s.resolveChanging(fault)

@@ -254,6 +254,17 @@ func (t *take) source() audio.Source {
 	return named{t.reader, t.path()}
 }
 
+// sounds refuses a take without a frame.
+func (t *take) sounds() error {
+	if t.header.Frames > 0 {
+		return nil
+	}
+	return &HintedError{
+		Err:  fmt.Errorf("%s: holds no sound: its header promises %d channels at %d Hz, and no frame follows", t.path(), t.header.Channels, t.header.Rate),
+		Hint: "the recorder stopped before the first sound or the copy was cut off: copy it again, or leave it out",
+	}
+}
+
 // unchanged reports a take one of whose files changed since it was opened.
 func (t *take) unchanged() error {
 	for _, f := range t.files {

@@ -80,7 +80,11 @@ func directionWords(r *pipeline.Result) string {
 		text += fmt.Sprintf(", compass %03.0f° true", math.Mod(math.Round(*s.CompassDeg), 360))
 	}
 	if d := r.Direction; d != nil && d.StandardErrorDeg != nil {
-		text += fmt.Sprintf(" ± %s°", decimals(*d.StandardErrorDeg, 1))
+		digits := 1
+		if *d.StandardErrorDeg < 0.1 {
+			digits = 2
+		}
+		text += fmt.Sprintf(" ± %s°", decimals(*d.StandardErrorDeg, digits))
 	}
 	if s.PointM != nil {
 		text = pointWords(*s.PointM) + " (" + text + ")"
