@@ -128,7 +128,7 @@ func TestSteerNamesEveryFaultOfItsCommandLineAtOnce(t *testing.T) {
 		{"x.wav --rig r.yaml --toward 60 --verify --no-verify", []string{"steer: both --verify and --no-verify"}},
 		{"--fail-on sometimes", []string{
 			"steer: no take: name at least one WAV file", "steer: no rig: give --rig FILE",
-			"steer: no direction: give --toward AZ[,EL] or --focus X,Y,Z, or --toward auto to have it found",
+			"steer: no direction: give --toward AZ[,EL] or --focus X,Y,Z",
 			`steer: --fail-on "sometimes": want one of never, warning, error`}},
 		{"x.wav y.wav --rig r.yaml --toward 60 --out one.wav", []string{
 			`steer: --out "one.wav": one track for 2 takes: name a folder that exists, or end it in /`}},

@@ -66,6 +66,12 @@ func (o PredictOptions) resolve() (*predictSettings, error) {
 	var err error
 	if s.beam, err = o.Options.resolve(); err != nil {
 		faults = append(faults, err)
+	} else if !s.beam.aimed() {
+		option, place := "--toward "+o.Toward, "--toward AZ[,EL]"
+		if o.Focus != "" {
+			option, place = "--focus "+o.Focus, "--focus X,Y,Z"
+		}
+		fault("%s: found in a take, and there is none here; give %s", option, place)
 	}
 	if s.RateHz == 0 {
 		s.RateHz = predictRate

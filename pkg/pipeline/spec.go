@@ -179,7 +179,7 @@ func (o Options) resolve() (*settings, error) {
 
 	switch {
 	case o.Toward == "" && o.Focus == "":
-		fault("no direction: give --toward AZ[,EL] or --focus X,Y,Z, or --toward auto to have it found")
+		fault("no direction: give --toward AZ[,EL] or --focus X,Y,Z")
 	case o.Toward != "" && o.Focus != "":
 		fault("both --toward %q and --focus %q: a beam points to one place", o.Toward, o.Focus)
 	case o.Toward == TowardAuto:
