@@ -39,6 +39,7 @@ var layers = map[string]struct {
 	"pkg/scenario":                 {4, "takes of imagined rooms, truth known"},
 	"pkg/response":                 {4, "what a beam should do, predicted"},
 	"pkg/quality":                  {4, "is this take fit to use?"},
+	"pkg/calibration":              {4, "what makes channels agree"},
 	"pkg/pipeline":                 {5, "one take, from file to result"},
 	"pkg/report":                   {6, "results into pages and tables"},
 	"cmd/alidade":                  {7, "flags in, exit code out"},

@@ -11,8 +11,17 @@ import (
 // YAML returns the rig as a rig file, its microphones as a list, one a line.
 // Load reads the text back into an equal rig. Keys at their default are left
 // out.
-func (r *Rig) YAML() []byte {
+func (r *Rig) YAML() []byte { return r.Annotated(nil, nil) }
+
+// Annotated is YAML with comments: the lines of head before everything, and
+// behind each microphone what note says of it, where that is not empty. Line
+// breaks in them become spaces. A nil note says nothing.
+func (r *Rig) Annotated(head []string, note func(m int) string) []byte {
 	var b bytes.Buffer
+	oneLine := func(text string) string { return strings.Join(strings.Fields(text), " ") }
+	for _, line := range head {
+		fmt.Fprintf(&b, "# %s\n", oneLine(line))
+	}
 	fmt.Fprintf(&b, "rig: %s\n", quote(r.Name))
 	var air []string
 	for _, v := range []struct {
@@ -35,7 +44,7 @@ func (r *Rig) YAML() []byte {
 		fmt.Fprintf(&b, "heading_deg: %s\n", numberText(*r.HeadingDeg))
 	}
 	b.WriteString("microphones:\n")
-	for _, m := range r.Mics {
+	for i, m := range r.Mics {
 		fmt.Fprintf(&b, "  - {name: %s, channel: %d, at_mm: [%s, %s, %s]", quote(m.Name), m.Channel,
 			shifted(m.At.X, 3), shifted(m.At.Y, 3), shifted(m.At.Z, 3))
 		optional := func(key string, v float64, text string) {
@@ -53,7 +62,13 @@ func (r *Rig) YAML() []byte {
 		}
 		optional("sensitivity_mv_pa", m.SensitivityMVPa, numberText(m.SensitivityMVPa))
 		optional("clock_ppm", m.ClockPPM, numberText(m.ClockPPM))
-		b.WriteString("}\n")
+		b.WriteString("}")
+		if note != nil {
+			if text := oneLine(note(i)); text != "" {
+				b.WriteString("  # " + text)
+			}
+		}
+		b.WriteString("\n")
 	}
 	return b.Bytes()
 }

@@ -1,0 +1,84 @@
+package pipeline
+
+// CalibrationSchema is the version of the calibration's JSON form.
+const CalibrationSchema = "alidade-calibration/1"
+
+// The kinds of a calibration.
+const (
+	CalibratedChannels  = "channels"   // gain, delay and polarity from one known source
+	CalibratedLevels    = "calibrator" // sensitivity from a sound level calibrator
+	CalibratedPositions = "positions"  // places from sounds of unknown direction
+)
+
+// Calibration is what a calibration found, and the rig file it wrote, as plain
+// data. Uncertainties are expanded ones: twice the combined standard
+// uncertainty (k = 2, about 95 %) [JCGM 100:2008, 6.2].
+type Calibration struct {
+	Schema      string             `json:"schema"`
+	Version     string             `json:"version"`
+	Kind        string             `json:"kind"` // channels, calibrator or positions
+	Takes       []Take             `json:"takes"`
+	Rig         RigSummary         `json:"rig"` // as it was
+	Source      *CalibrationSource `json:"source,omitempty"`
+	Heard       *Listening         `json:"heard,omitempty"`
+	Microphones []CalibratedMic    `json:"microphones"`
+	Findings    []Finding          `json:"findings"`
+	Output      CalibrationOutput  `json:"output"`
+}
+
+// CalibrationSource is the sound as it was said to be, and how well that is
+// known (standard uncertainties).
+type CalibrationSource struct {
+	AzimuthDeg           float64     `json:"azimuth_deg"`
+	ElevationDeg         float64     `json:"elevation_deg"`
+	DistanceM            Number      `json:"distance_m"` // null: far
+	PointM               *[3]float64 `json:"point_m,omitempty"`
+	DirectionStdDeg      float64     `json:"direction_uncertainty_deg"`
+	DistanceStdM         Number      `json:"distance_uncertainty_m"`
+	TemperatureStdC      float64     `json:"temperature_uncertainty_c"`
+	PlacementStdMM       float64     `json:"placement_uncertainty_mm"`
+	SpeedOfSoundMS       float64     `json:"speed_of_sound_m_s"`
+	MisfitUS             Number      `json:"misfit_us"` // of the arrivals with the rig's corrections so far, root mean square
+	ChannelsHeard        int         `json:"channels_heard"`
+	RelativeTo           string      `json:"relative_to"`
+	PolarityByMajority   bool        `json:"polarity_by_majority"` // all channels turned over alike would not show
+	DelayFromOneSideOnly bool        `json:"delay_from_one_side"`  // a misplaced microphone looks like a delay
+}
+
+// Listening is what of a take a calibration rests on.
+type Listening struct {
+	Sound      string  `json:"sound"` // steady or claps
+	Frames     int     `json:"frames"`
+	ShareTaken float64 `json:"share"` // of the take in which the source sounds
+	LowHz      float64 `json:"low_hz"`
+	HighHz     float64 `json:"high_hz"` // the middle 90 % of the information lies between
+}
+
+// CalibratedMic is one microphone before and after. What was not measured is
+// null and keeps its old value.
+type CalibratedMic struct {
+	Channel int    `json:"channel"`
+	Name    string `json:"name"`
+	Used    bool   `json:"used"`
+	Heard   bool   `json:"heard"` // its channel carries the sound
+
+	GainBeforeDB      float64 `json:"gain_before_db"`
+	GainDB            float64 `json:"gain_db"`
+	GainUncertaintyDB Number  `json:"gain_uncertainty_db"`
+	GainNoiseDB       Number  `json:"gain_noise_db,omitempty"` // standard error of the take's own
+
+	DelayBeforeUS      float64 `json:"delay_before_us"`
+	DelayUS            float64 `json:"delay_us"`
+	DelayUncertaintyUS Number  `json:"delay_uncertainty_us"`
+	DelayNoiseUS       Number  `json:"delay_noise_us,omitempty"`
+
+	PolarityBefore string `json:"polarity_before"`
+	Polarity       string `json:"polarity"`
+	SNRDB          Number `json:"snr_db,omitempty"`
+}
+
+// CalibrationOutput is the rig file that was written.
+type CalibrationOutput struct {
+	Path   string `json:"path"`
+	SHA256 string `json:"sha256"`
+}

@@ -1,0 +1,93 @@
+package report
+
+import (
+	"fmt"
+	"io"
+	"math"
+	"strings"
+
+	"github.com/jedib0t/go-pretty/v6/table"
+	"github.com/jedib0t/go-pretty/v6/text"
+
+	"alidade/pkg/pipeline"
+)
+
+// Calibration writes what a calibration found for a person at a terminal of the
+// given width in cells (80 where it is 0, never less than 60): what it rests
+// on, a line a microphone, the findings, and the rig file.
+func Calibration(w io.Writer, c *pipeline.Calibration, width int) error {
+	if width == 0 {
+		width = 80
+	}
+	width = max(width, 60)
+	lines := wrap(calibrationBasis(c), width, "", 4)
+	lines = append(lines, calibrationTable(c, width)...)
+	lines = append(lines, "± is twice the standard uncertainty (k = 2, about 95 %)")
+	for _, f := range c.Findings {
+		lines = append(lines, wrap(string(f.Severity)+": "+clean(f.Message), width, "  ", 6)...)
+	}
+	lines = append(lines, "wrote "+clean(c.Output.Path))
+	_, err := io.WriteString(w, strings.Join(lines, "\n")+"\n")
+	return err
+}
+
+// calibrationBasis says in words what was listened to.
+func calibrationBasis(c *pipeline.Calibration) string {
+	s, h := c.Source, c.Heard
+	if s == nil || h == nil {
+		return ""
+	}
+	from := fmt.Sprintf("azimuth %.1f°, elevation %.1f°", s.AzimuthDeg, s.ElevationDeg)
+	if s.DistanceM != nil {
+		from += fmt.Sprintf(", %.2f m away", *s.DistanceM)
+	}
+	what := fmt.Sprintf("%d frames, %.0f %% of the take", h.Frames, 100*h.ShareTaken)
+	if h.Sound == pipeline.SoundClaps {
+		what = fmt.Sprintf("the direct sound of %d claps", h.Frames)
+	}
+	return fmt.Sprintf("%s: %d of %d channels hear the sound from %s; %s, %.0f to %.0f Hz; the rig as it was is %s µs off",
+		clean(c.Rig.Name), s.ChannelsHeard, c.Rig.MicrophonesUsed, from, what, h.LowHz, h.HighHz, levelText(s.MisfitUS))
+}
+
+// calibrationTable is a line a microphone: old, new, change, uncertainty.
+func calibrationTable(c *pipeline.Calibration, width int) []string {
+	t := table.NewWriter()
+	style := table.StyleLight
+	style.Options = table.OptionsNoBordersAndSeparators
+	style.Format.Header = text.FormatDefault
+	style.Color = table.ColorOptions{}
+	t.SetStyle(style)
+	right := []int{1}
+	plusMinus := func(v pipeline.Number, n int) string {
+		if v == nil || math.IsNaN(*v) {
+			return "–"
+		}
+		return "± " + decimals(*v, n)
+	}
+	t.AppendHeader(table.Row{"ch", "name", "gain, dB", "was", "", "delay, µs", "was", "", "polarity"})
+	right = append(right, 3, 4, 5, 6, 7, 8)
+	for _, m := range c.Microphones {
+		polarity := m.Polarity
+		if m.Polarity != m.PolarityBefore {
+			polarity += ", changed"
+		}
+		if !m.Used {
+			polarity = "not in use"
+		} else if !m.Heard {
+			polarity += ", not heard"
+		}
+		t.AppendRow(table.Row{m.Channel, cut(clean(m.Name), 12),
+			decimals(m.GainDB, 2), decimals(m.GainBeforeDB, 2), plusMinus(m.GainUncertaintyDB, 2),
+			decimals(m.DelayUS, 1), decimals(m.DelayBeforeUS, 1), plusMinus(m.DelayUncertaintyUS, 1), polarity})
+	}
+	var configs []table.ColumnConfig
+	for _, column := range right {
+		configs = append(configs, table.ColumnConfig{Number: column, Align: text.AlignRight, AlignHeader: text.AlignRight})
+	}
+	t.SetColumnConfigs(configs)
+	var lines []string
+	for _, line := range strings.Split(text.StripEscape(t.Render()), "\n") {
+		lines = append(lines, cut(strings.TrimRight(line, " "), width))
+	}
+	return lines
+}
