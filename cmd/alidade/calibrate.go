@@ -18,7 +18,7 @@ Usage
   alidade calibrate TAKE --rig RIG --focus X,Y,Z [OPTIONS]
 
 Example
-  $ alidade calibrate noise.wav --rig roof.yaml --toward 90 --out roof2.yaml
+  $ alidade calibrate roof_07.wav --rig roof.yaml --toward 141 --excerpt 0..3
 
 One sound from a known place (noise, a sweep, speech, claps) gives the gain,
 delay and polarity corrections of every channel against the others. A new rig
@@ -41,8 +41,10 @@ How it is listened to
   --to-hz HZ             up to this one (16000, at most 0.4 of the rate)
   --max-delay-us US      largest error of a delay that is looked for (1000)
   --excerpt A..B         only this part of the take
-  --chain, --set, --find-chain, --find-set
-                         which files make the take, as in alidade steer
+  --chain                the files named are one take, one after the other
+  --set                  the files named are one take, side by side
+  --find-chain           find the files that the recorder split the take into
+  --find-set             find the other files of the set by iXML
 
 How well the circumstances are known (standard uncertainties)
   --direction-uncertainty-deg DEG   of azimuth and elevation (0.5)
@@ -50,8 +52,10 @@ How well the circumstances are known (standard uncertainties)
   --focus-uncertainty-mm MM         of the point in each axis (10)
   --temperature-uncertainty-c C     of the air (1)
   --placement-uncertainty-mm MM     of each microphone in each axis (0.5)
-  --temperature-c C, --humidity-pct PCT, --pressure-kpa KPA,
-  --speed-of-sound MS               the air, where the rig's is not right
+  --temperature-c C                 air temperature, in place of the rig's
+  --humidity-pct PCT                relative humidity
+  --pressure-kpa KPA                air pressure
+  --speed-of-sound MS               in m/s, in place of the three above
 
 What is written
   --relative-to NAME     this microphone keeps its corrections; without it

@@ -135,7 +135,7 @@ func (c *calibrating) name() error {
 func (c *calibrating) explained(err error) error {
 	var refused *calibration.RefusedError
 	if errors.As(err, &refused) {
-		return &HintedError{Err: fmt.Errorf("%s: cannot carry a calibration: %w", c.takes[len(c.takes)-1].path(), refused), Hint: refused.Help}
+		return &HintedError{Err: fmt.Errorf("%s: carries no calibration: %w", c.takes[len(c.takes)-1].path(), refused), Hint: refused.Help}
 	}
 	return err
 }
