@@ -28,6 +28,18 @@ func angleTicks(first, last float64) []float64 {
 	return ticks
 }
 
+// angleMarks writes the angles beneath a picture; every other one makes room
+// where the page is narrow.
+func angleMarks(s *draw.SVG, x draw.Scale, first, last float64) {
+	for i, a := range angleTicks(first, last) {
+		class := "tick mid"
+		if i%2 == 1 {
+			class += " minor"
+		}
+		s.Text(x.At(a), 100, class, draw.Number(a)+"°", "dy", "18")
+	}
+}
+
 // responseChart draws what the beam lets through over angle and frequency; nil
 // where the report has no such picture.
 func responseChart(r *pipeline.Result) (*chart, error) {
@@ -52,16 +64,14 @@ func responseChart(r *pipeline.Result) (*chart, error) {
 		"data-y-from", Round(p.Hz[0], "y_hz"), "data-y-to", Round(p.Hz[len(p.Hz)-1], "y_hz"))
 	s.Element("image", "href", url, "width", "100%", "height", "100%", "preserveAspectRatio", "none")
 	frequencyTicks(&s, p.Hz)
-	for _, a := range angleTicks(first, last) {
-		s.Text(x.At(a), 100, "tick mid", draw.Number(a)+"°", "dy", "18")
-	}
+	angleMarks(&s, x, first, last)
 	steer := x.At(r.Steer.AzimuthDeg)
 	s.Line(steer, 0, steer, 100, "overlay casing")
 	s.Line(steer, 0, steer, 100, "overlay")
 	if g := p.GratingFreeBelowHz; g != nil && y.Inside(*g) {
 		s.Line(0, y.At(*g), 100, y.At(*g), "overlay casing")
 		s.Line(0, y.At(*g), 100, y.At(*g), "overlay dashed")
-		s.Text(100, y.At(*g), "overlay right", "grating lobes above "+frequencyWords(math.Round(*g)), "dx", "-6", "dy", "-5")
+		s.Text(100, y.At(*g), "overlay right", "grating lobes above "+frequencyWords(threeDigits(*g)), "dx", "-6", "dy", "-5")
 	}
 	for _, lobe := range p.Lobes {
 		if !x.Inside(lobe.AzimuthDeg) || !(lobe.Hz > 0) || !y.Inside(lobe.Hz) {
@@ -73,10 +83,12 @@ func responseChart(r *pipeline.Result) (*chart, error) {
 			s.Diamond(x.At(lobe.AzimuthDeg), y.At(lobe.Hz), 4, "lobe grating", data...)
 		case "side":
 			s.Dot(x.At(lobe.AzimuthDeg), y.At(lobe.Hz), 2.5, "lobe side", data...)
+		case "main":
+			s.Dot(x.At(lobe.AzimuthDeg), y.At(lobe.Hz), 5, "lobe main", data...)
 		}
 	}
-	return &chart{Key: "response", Name: "What the beam lets in", Picture: s.Close(),
-		Caption: fmt.Sprintf("Light is let through: %s to %s dB against the steered direction (the upright line), for a far source at elevation %s°. Dots are side lobes, diamonds grating lobes, heard like the wanted sound.",
+	return &chart{Key: "response", Name: "Response over angle and frequency, Hz", Picture: s.Close(), Low: decimals(p.Levels.LowDB, 0) + " dB", High: decimals(p.Levels.HighDB, 0) + " dB",
+		Caption: fmt.Sprintf("Light is let through: %s to %s dB against the steered direction (the upright line), for a far source at elevation %s°. Marked at a few frequencies: rings the main lobe, dots side lobes, diamonds grating lobes, heard like the wanted sound.",
 			decimals(p.Levels.LowDB, 0), decimals(p.Levels.HighDB, 0), decimals(p.ElevationDeg, 0))}, nil
 }
 
@@ -126,9 +138,12 @@ func polarCharts(r *pipeline.Result) []chart {
 	return list
 }
 
-// twoDigits rounds a frequency to two significant digits.
-func twoDigits(hz float64) float64 {
-	p := math.Pow(10, math.Floor(math.Log10(hz))-1)
+// twoDigits and threeDigits round a frequency to so many significant digits.
+func twoDigits(hz float64) float64   { return digits(hz, 2) }
+func threeDigits(hz float64) float64 { return digits(hz, 3) }
+
+func digits(hz float64, n int) float64 {
+	p := math.Pow(10, math.Floor(math.Log10(hz))+1-float64(n))
 	return math.Round(hz/p) * p
 }
 
@@ -141,11 +156,7 @@ func scanCharts(r *pipeline.Result) ([]chart, error) {
 	p := r.Pictures.Scan
 	first, last := p.AnglesDeg[0], p.AnglesDeg[len(p.AnglesDeg)-1]
 	x := draw.Linear(first, last)
-	angles := func(s *draw.SVG) {
-		for _, a := range angleTicks(first, last) {
-			s.Text(x.At(a), 100, "tick mid", draw.Number(a)+"°", "dy", "18")
-		}
-	}
+	angles := func(s *draw.SVG) { angleMarks(s, x, first, last) }
 	var list []chart
 	for _, part := range []struct {
 		key, name, unit string
@@ -210,7 +221,7 @@ func scanCharts(r *pipeline.Result) ([]chart, error) {
 			}
 		}
 		angles(&s)
-		list = append(list, chart{Key: "scan-bands", Name: "Level by steered angle and band", Picture: s.Close(),
+		list = append(list, chart{Key: "scan-bands", Name: "Level by steered angle and band, Hz", Picture: s.Close(), Low: decimals(p.Levels.LowDB, 0) + " dBFS", High: decimals(p.Levels.HighDB, 0) + " dBFS",
 			Caption: fmt.Sprintf("Light is loud: %s to %s dBFS. A source stands out as a light column that gets narrower with frequency.", decimals(p.Levels.LowDB, 0), decimals(p.Levels.HighDB, 0))})
 	}
 	return list, nil

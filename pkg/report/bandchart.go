@@ -31,6 +31,8 @@ type chart struct {
 	Name    string
 	Picture template.HTML
 	Caption string
+	// Low and High are the ends of the scale of a map of levels.
+	Low, High string
 }
 
 // bandCharts draws the bands once for each quantity that has figures, always

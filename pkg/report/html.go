@@ -53,9 +53,34 @@ type channelView struct {
 // playerView is a preview as the page takes it.
 type playerView struct {
 	Words, LevelOffset, TargetOffset                         string
+	Jumps                                                    []jump
 	Rate                                                     int
 	Length, Start, ReferenceLevel, OutputLevel, TargetChange string
 	Reference, Output                                        template.HTML
+}
+
+// jump is a place in the excerpt that is worth hearing, in seconds of the take.
+type jump struct{ At, Words string }
+
+// jumps are the first of the stretches that the excerpt holds, at most two of a
+// kind.
+func jumps(r *pipeline.Result) []jump {
+	if r.Segments.Source == "isolated" {
+		return nil
+	}
+	var list []jump
+	for k, stretches := range [][][2]float64{r.Segments.Noise, r.Segments.Target} {
+		count := 0
+		for _, s := range stretches {
+			from, to := math.Max(s[0], r.Preview.StartS), math.Min(s[1], r.Preview.EndS)
+			if to-from < 0.3 || count == 2 {
+				continue
+			}
+			count++
+			list = append(list, jump{Round(from, "x_s"), [2]string{"noise, ", "target, "}[k] + clock(math.Round(10*from)/10, r.Take.DurationS)})
+		}
+	}
+	return list
 }
 
 // takeView is everything that the template of a take's page shows.
@@ -66,13 +91,12 @@ type takeView struct {
 	Script                                                                 template.JS
 	Stamp                                                                  template.HTML
 	Legend                                                                 template.URL
-	LegendLow, LegendHigh                                                  string
 	State                                                                  state
 	Assets                                                                 Assets
 	Findings, MoreFindings                                                 []findingView
 	Player                                                                 *playerView
 	Bands, Spectrograms, Polars, Scan                                      []chart
-	RigPicture, Segments, DirectionChart, Response                         *chart
+	RigPicture, Segments, DirectionChart, Response, Levels                 *chart
 	Rows                                                                   []bandRow
 	Flags                                                                  []flagView
 	Totals, Made, Definitions                                              []named
@@ -132,7 +156,7 @@ func viewTake(r *pipeline.Result, assets Assets) (*takeView, error) {
 		BandHeading: bandHeading(r), TimeHeading: timeHeading(r), ChannelHeading: channelHeading(r),
 		Stamp: stamp(r), State: stateOf(r), Assets: assets,
 		Bands: bandCharts(r), Rows: bandRows(r.Bands), RigPicture: rigPicture(r),
-		Segments: segmentChart(r), DirectionChart: directionChart(r), Polars: polarCharts(r),
+		Levels: channelChart(levelsOf(r.Channels)), Segments: segmentChart(r), DirectionChart: directionChart(r), Polars: polarCharts(r),
 		Totals: totalsOf(r), Made: made(r), Definitions: definitions, Channels: channelViews(r), Player: playerOf(r),
 	}
 	list := findingViews(r)
@@ -154,8 +178,11 @@ func viewTake(r *pipeline.Result, assets Assets) (*takeView, error) {
 	}
 	if d := r.Direction; d != nil {
 		for _, w := range d.Windows {
+			if w.AzimuthDeg == nil {
+				continue
+			}
 			v.Windows = append(v.Windows, []string{Round(w.StartS, "start_s"), Round(w.EndS, "end_s"),
-				cellText(w.AzimuthDeg, "azimuth_deg"), cellText(w.ElevationDeg, "elevation_deg"), cellText(w.StandardErrorDeg, "standard_error_deg"), cellText(w.Confidence, "confidence")})
+				cellText(w.AzimuthDeg, "azimuth_deg"), cellText(w.ElevationDeg, "elevation_deg"), cellText(w.StandardErrorDeg, "standard_error_deg"), cellText(w.Confidence, "confidence_db")})
 		}
 	}
 	var err error
@@ -168,15 +195,11 @@ func viewTake(r *pipeline.Result, assets Assets) (*takeView, error) {
 	if v.Response, err = responseChart(r); err != nil {
 		return nil, err
 	}
-	if v.Response != nil {
-		l := r.Pictures.Response.Levels
-		v.LegendLow, v.LegendHigh = decimals(l.LowDB, 0)+" dB", decimals(l.HighDB, 0)+" dB"
-		legend, err := draw.Legend()
-		if err != nil {
-			return nil, err
-		}
-		v.Legend = template.URL(legend)
+	legend, err := draw.Legend()
+	if err != nil {
+		return nil, err
 	}
+	v.Legend = template.URL(legend)
 	return v, nil
 }
 
@@ -299,6 +322,17 @@ func channelViews(r *pipeline.Result) []channelView {
 	return list
 }
 
+// gainOfExcerpt says what was done to the level of both excerpts.
+func gainOfExcerpt(db float64) string {
+	switch {
+	case db >= 0.05:
+		return "raised by " + decimals(db, 1) + " dB"
+	case db <= -0.05:
+		return "lowered by " + decimals(-db, 1) + " dB"
+	}
+	return "at their level"
+}
+
 // playerOf prepares the excerpts; nil where the report carries none.
 func playerOf(r *pipeline.Result) *playerView {
 	p := r.Preview
@@ -312,7 +346,13 @@ func playerOf(r *pipeline.Result) *playerView {
 		Reference: template.HTML(base64.StdEncoding.EncodeToString(p.Reference.Audio)),
 		Output:    template.HTML(base64.StdEncoding.EncodeToString(p.Output.Audio)),
 	}
-	v.Words = fmt.Sprintf("%s s of the take from %s on, at most 6 dB below full scale.", draw.Number(p.EndS-p.StartS), clock(p.StartS, r.Take.DurationS))
+	v.Jumps = jumps(r)
+	before := "the reference"
+	if g := r.Pictures; g != nil && g.Reference != nil && g.Reference.Of != "" {
+		before = "microphone " + shorten(clean(g.Reference.Of), 24)
+	}
+	v.Words = fmt.Sprintf("%s s of the take from %s on: before is %s, after is the steered track, both %s, at most 6 dB below full scale.",
+		draw.Number(p.EndS-p.StartS), clock(math.Round(10*p.StartS)/10, r.Take.DurationS), before, gainOfExcerpt(p.GainDB))
 	down := func(difference float64) string {
 		switch text := decimals(math.Abs(difference), 1) + " dB down"; {
 		case math.Abs(difference) < 0.05:

@@ -138,22 +138,28 @@ func badRig() *pipeline.Result {
 	return r
 }
 
+// rampSlope is by how much the samples of a ramp rise a second; they begin at
+// as much.
+const rampSlope = 0.1
+
+// ramps are an excerpt whose samples say where they stand: t seconds from its
+// beginning the reference is rampSlope·(1 + t), the track the opposite.
+func ramps() *pipeline.Preview {
+	const rate, frames = 48000, 3 * 48000
+	clip := func(sign float64) pipeline.Clip {
+		x := make([]int16, frames)
+		for i := range x {
+			x[i] = int16(math.Round(32767 * sign * rampSlope * (1 + float64(i)/rate)))
+		}
+		return pipeline.Clip{LevelDBFS: -10, PeakDBFS: -8, Audio: wavFile(rate, x)}
+	}
+	return &pipeline.Preview{StartS: 9, EndS: 12, SampleRateHz: rate, Reference: clip(1), Output: clip(-1)}
+}
+
 // preview is three seconds of noise before, less of it after, as 16 bit WAV.
 func preview(rng *rand.Rand) *pipeline.Preview {
 	const rate, frames = 16000, 48000
 	clip := func(noise float64) pipeline.Clip {
-		var b bytes.Buffer
-		head := struct {
-			Riff             [4]byte
-			Size             uint32
-			Wave, Fmt        [4]byte
-			FmtSize          uint32
-			Format, Channels uint16
-			Rate, ByteRate   uint32
-			Align, Bits      uint16
-			Data             [4]byte
-			DataSize         uint32
-		}{[4]byte([]byte("RIFF")), 36 + 2*frames, [4]byte([]byte("WAVE")), [4]byte([]byte("fmt ")), 16, 1, 1, rate, 2 * rate, 2, 16, [4]byte([]byte("data")), 2 * frames}
 		x := make([]int16, frames)
 		sum, peak := 0.0, 0.0
 		for i := range x {
@@ -162,10 +168,28 @@ func preview(rng *rand.Rand) *pipeline.Preview {
 			sum, peak = sum+v*v, math.Max(peak, math.Abs(v))
 			x[i] = int16(math.Round(32767 * v))
 		}
-		// Neither can fail on a buffer.
-		_ = binary.Write(&b, binary.LittleEndian, head)
-		_ = binary.Write(&b, binary.LittleEndian, x)
-		return pipeline.Clip{LevelDBFS: 10*math.Log10(2*sum/frames) + 0, PeakDBFS: 20 * math.Log10(peak), Audio: b.Bytes()}
+		return pipeline.Clip{LevelDBFS: 10*math.Log10(2*sum/frames) + 0, PeakDBFS: 20 * math.Log10(peak), Audio: wavFile(rate, x)}
 	}
 	return &pipeline.Preview{StartS: 9, EndS: 12, SampleRateHz: rate, GainDB: -3, Reference: clip(0.08), Output: clip(0.02)}
+}
+
+// wavFile is a WAV file of one channel of 16 bit.
+func wavFile(rate uint32, x []int16) []byte {
+	var b bytes.Buffer
+	size := uint32(2 * len(x))
+	head := struct {
+		Riff             [4]byte
+		Size             uint32
+		Wave, Fmt        [4]byte
+		FmtSize          uint32
+		Format, Channels uint16
+		Rate, ByteRate   uint32
+		Align, Bits      uint16
+		Data             [4]byte
+		DataSize         uint32
+	}{[4]byte([]byte("RIFF")), 36 + size, [4]byte([]byte("WAVE")), [4]byte([]byte("fmt ")), 16, 1, 1, rate, 2 * rate, 2, 16, [4]byte([]byte("data")), size}
+	// Neither can fail on a buffer.
+	_ = binary.Write(&b, binary.LittleEndian, head)
+	_ = binary.Write(&b, binary.LittleEndian, x)
+	return b.Bytes()
 }

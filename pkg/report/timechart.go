@@ -37,7 +37,7 @@ func clock(t, whole float64) string {
 // none in the take.
 func segmentChart(r *pipeline.Result) *chart {
 	g := r.Segments
-	if len(g.Noise)+len(g.Target) == 0 || r.Take.DurationS <= 0 {
+	if len(g.Noise)+len(g.Target) == 0 || r.Take.DurationS <= 0 || g.Source == "isolated" {
 		return nil
 	}
 	x := timeAxis(r)
@@ -54,7 +54,7 @@ func segmentChart(r *pipeline.Result) *chart {
 	}
 	timeTicks(&s, r)
 	words := map[string]string{
-		"given": "as given", "cues": "from cue points", "automatic": "found by the level of the steered track against its own floor", "isolated": "from takes of the one and the other alone",
+		"given": "as given", "cues": "from cue points", "automatic": "found by the level of the steered track against its own floor",
 	}
 	source, known := words[g.Source]
 	if !known {
@@ -95,7 +95,9 @@ func directionChart(r *pipeline.Result) *chart {
 		s.Line(0, y.At(v), 100, y.At(v), "grid")
 		s.Text(0, y.At(v), "tick left", draw.Number(v)+"°", "dx", "-8", "dy", "4")
 	}
+	pointed := "The beam followed it."
 	if r.Steer.Kind != "followed" {
+		pointed = "The line is where the beam was pointed."
 		s.Line(0, y.At(r.Steer.AzimuthDeg), 100, y.At(r.Steer.AzimuthDeg), "steer")
 	}
 	for _, w := range d.Windows {
@@ -114,7 +116,7 @@ func directionChart(r *pipeline.Result) *chart {
 	}
 	timeTicks(&s, r)
 	return &chart{Key: "direction", Name: "Direction over time", Picture: s.Close(),
-		Caption: "Each dot is the direction in one window, its whisker two standard errors either way; hollow dots are unsure. The line is where the beam was pointed."}
+		Caption: "Each dot is the direction in one window, its whisker two standard errors either way; hollow dots are unsure. " + pointed}
 }
 
 // spectrogramCharts draws the take before and after on one scale.
@@ -132,6 +134,9 @@ func spectrogramCharts(r *pipeline.Result) ([]chart, error) {
 		if g == nil || !sound(g.Levels, len(g.Hz), -1) {
 			continue
 		}
+		if g.Of != "" {
+			part.name = "Before: microphone " + shorten(clean(g.Of), 24)
+		}
 		url, err := draw.HeatMap(g.Levels.Rows, g.Levels.Columns, g.Levels.Bytes)
 		if err != nil {
 			return nil, err
@@ -143,18 +148,31 @@ func spectrogramCharts(r *pipeline.Result) ([]chart, error) {
 			decimals(g.Levels.LowDB, 0), decimals(g.Levels.HighDB, 0)))
 		s.Element("image", "href", url, "x", draw.Percent(from), "y", "0", "width", draw.Percent(to-from), "height", "100%", "preserveAspectRatio", "none")
 		frequencyTicks(&s, g.Hz)
-		for _, st := range r.Segments.Noise {
-			s.Line(x.At(st[0]), 0, x.At(st[1]), 0, "stretch noise")
-		}
-		for _, st := range r.Segments.Target {
-			s.Line(x.At(st[0]), 0, x.At(st[1]), 0, "stretch target")
+		if r.Segments.Source != "isolated" { // those are of other takes
+			for _, st := range r.Segments.Noise {
+				s.Line(x.At(st[0]), 0, x.At(st[1]), 0, "stretch noise")
+			}
+			for _, st := range r.Segments.Target {
+				s.Line(x.At(st[0]), 0, x.At(st[1]), 0, "stretch target")
+			}
 		}
 		timeTicks(&s, r)
-		list = append(list, chart{Key: part.key, Name: part.name, Picture: s.Close(),
-			Caption: fmt.Sprintf("Light is loud: %s to %s dBFS, the same scale before and after. The strip at the top marks the stretches of noise (orange) and target (blue).",
-				decimals(g.Levels.LowDB, 0), decimals(g.Levels.HighDB, 0))})
+		list = append(list, chart{Key: part.key, Name: part.name + ", Hz", Picture: s.Close(), Low: decimals(g.Levels.LowDB, 0) + " dBFS", High: decimals(g.Levels.HighDB, 0) + " dBFS",
+			Caption: spectrogramWords(part.key, r)})
 	}
 	return list, nil
+}
+
+// spectrogramWords say what to look for.
+func spectrogramWords(key string, r *pipeline.Result) string {
+	text := "Light is loud, on the same scale before and after."
+	if key == "after" {
+		text = "What got darker is what the beam took away; the wanted sound should look as it did before."
+	}
+	if len(r.Segments.Noise)+len(r.Segments.Target) > 0 && r.Segments.Source != "isolated" {
+		text += " The strip above it marks the stretches used: orange the noise, blue the target."
+	}
+	return text
 }
 
 // frequencyTicks marks octaves on a vertical logarithmic axis.

@@ -85,7 +85,7 @@
   var player = $("#player");
   if (!player) return;
   var context, buffer, source, gains, analysers, started = 0, offset = 0, playing = false, side = "output", blind = null, right = 0, tries = 0;
-  var length = +player.dataset.length, ramp = 0.012;
+  var length = +player.dataset.length, ramp = 0.012, rise = 0.05;
   var play = $("#play"), seek = $("#seek"), match = $("#match"), from = $("#loopfrom"), to = $("#loopto"), loop = $("#loop"), say = $("#say"), time = $("#time");
   var bytes = function (name) {
     var text = atob($("[data-clip=" + name + "]").textContent.trim()), b = new Uint8Array(text.length);
@@ -111,9 +111,9 @@
     var a = Math.max(0, Math.min(+from.value || 0, length)), b = Math.max(0, Math.min(+to.value || length, length));
     return loop.checked && b - a >= 0.1 ? [a, b] : null;
   };
-  var position = function () {
+  var position = function (now) {
     if (!playing) return offset;
-    var t = context.currentTime - started + offset, l = source.loop ? [source.loopStart, source.loopEnd] : null;
+    var t = (now === undefined ? context.currentTime : now) - started + offset, l = source.loop ? [source.loopStart, source.loopEnd] : null;
     if (l && t > l[1]) t = l[0] + (t - l[0]) % (l[1] - l[0]);
     return Math.min(t, length);
   };
@@ -130,7 +130,8 @@
     gains.forEach(function (g, i) {
       var v = i === heard ? want[i] : 0, t = context.currentTime;
       g.gain.cancelScheduledValues(t);
-      if (now) { g.gain.setValueAtTime(v, t); return; }
+      // A start anywhere rises from silence.
+      if (now) { g.gain.setValueAtTime(0, t); g.gain.linearRampToValueAtTime(v, t + rise); return; }
       g.gain.setValueAtTime(g.gain.value, t);
       g.gain.linearRampToValueAtTime(v, t + ramp);
     });
@@ -223,9 +224,13 @@
     else if (key === "r") { loop.checked = !loop.checked; if (playing) jump(position()); }
   });
   all("[data-jump]").forEach(function (a) { a.addEventListener("click", function () { jump(+a.dataset.jump - player.dataset.start); }); });
-  // For whoever checks: the playhead with the clock of the sound, and the level
-  // of what each gain lets through.
-  player.alidadeClock = function () { return [position(), context ? context.currentTime : 0]; };
+  // For whoever checks: the playhead with the clock of the sound, the last
+  // sample that each gain let through, and the level of what it lets through.
+  player.alidadeClock = function () { var t = context ? context.currentTime : 0; return [position(t), t]; };
+  player.alidadeHeard = function () {
+    var last = analysers.map(function (a) { var d = new Float32Array(a.fftSize); a.getFloatTimeDomainData(d); return d[d.length - 1]; });
+    return [position(), last[0], last[1]];
+  };
   player.alidadeLevels = function () {
     return analysers ? analysers.map(function (a) {
       var d = new Float32Array(a.fftSize), sum = 0;
