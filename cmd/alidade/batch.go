@@ -220,9 +220,13 @@ func runBatch(u *ui, c *cli.Context) error {
 	if err != nil {
 		return t.again(c.Context, err, tally, restarts, u.env)
 	}
-	u.remark("%s", tallyWords(tally, u.now().Sub(begun)))
+	took := u.now().Sub(begun)
+	u.remark("%s", tallyWords(tally, took))
+	if w, err := batch.Throughput(t.out, begun); err == nil && w.Takes > 0 && took > 0 {
+		u.remark("%s", workWords(w)+fmt.Sprintf(", %.2f workers busy", w.Spent.Seconds()/took.Seconds()))
+	}
 	if s.Part < 0 {
-		summary, err := t.sumUp(batch.MergeSettings{Out: t.out, Worst: worstFigure}, tally.Standing < tally.Takes)
+		summary, err := t.sumUp(batch.MergeSettings{Out: t.out, Worst: worstFigure, Angles: angleFigures}, tally.Standing < tally.Takes)
 		if err != nil {
 			return t.again(c.Context, err, tally, restarts, u.env)
 		}
@@ -253,6 +257,12 @@ func (t *undertaking) again(ctx context.Context, err error, tally batch.Tally, m
 	return &openError{code, err}
 }
 
+// workWords is what lies behind results.
+func workWords(w batch.Work) string {
+	s := max(w.Spent.Seconds(), 1e-3)
+	return fmt.Sprintf("%d takes of %.1f MB in %.1f s of work: %.1f takes a minute and worker, %.1f MB a second", w.Takes, float64(w.Bytes)/1e6, w.Spent.Seconds(), float64(w.Takes)*60/s, float64(w.Bytes)/1e6/s)
+}
+
 func tallyWords(t batch.Tally, took time.Duration) string {
 	text := fmt.Sprintf("%d takes: %d done, %d missed a limit, %d failed", t.Takes, t.Done, t.Missed, t.Failed)
 	if t.Standing > 0 {
@@ -272,10 +282,14 @@ func tallyWords(t batch.Tally, took time.Duration) string {
 const (
 	worstFigure  = "snr_gain_db"
 	figureAz     = "azimuth_deg"
+	figureEl     = "elevation_deg"
 	figureNoise  = "noise_reduction_db"
 	figureTarget = "target_change_db"
 	figureError  = "standard_error_deg"
 )
+
+// angleFigures are those that turn round.
+var angleFigures = []string{figureAz}
 
 // steer is the work of the batch: one take into its staging folder.
 func (t *undertaking) steer(ctx context.Context, a batch.Assignment) (batch.Report, error) {
@@ -309,7 +323,7 @@ func (t *undertaking) steer(ctx context.Context, a batch.Assignment) (batch.Repo
 	done := tidy(r)
 	out := batch.Report{Digests: digests, Figures: map[string]*float64{
 		worstFigure: done.Overall.SNRGainDB, figureNoise: done.Overall.NoiseReductionDB,
-		figureTarget: done.Overall.TargetChangeDB, figureAz: &done.Steer.AzimuthDeg,
+		figureTarget: done.Overall.TargetChangeDB, figureAz: &done.Steer.AzimuthDeg, figureEl: &done.Steer.ElevationDeg,
 	}}
 	if done.Direction != nil {
 		out.Figures[figureError] = done.Direction.StandardErrorDeg

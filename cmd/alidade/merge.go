@@ -90,7 +90,7 @@ func runMerge(u *ui, c *cli.Context) error {
 		return err
 	}
 	until := u.now().Add(time.Duration(wait * float64(time.Second)))
-	m := batch.MergeSettings{Out: t.out, Worst: worstFigure, Verify: true, Look: func(absent int) bool {
+	m := batch.MergeSettings{Out: t.out, Worst: worstFigure, Angles: angleFigures, Verify: true, Look: func(absent int) bool {
 		if !u.now().Before(until) {
 			return false
 		}
@@ -110,6 +110,9 @@ func runMerge(u *ui, c *cli.Context) error {
 	}
 	if err := u.showSummary(s, c.Bool("json")); err != nil {
 		return err
+	}
+	if w, err := batch.Throughput(t.out, time.Time{}); err == nil && w.Takes > 0 {
+		u.remark("%s", workWords(w))
 	}
 	if s.Complete() {
 		return nil
@@ -264,7 +267,11 @@ func summaryWords(s *batch.Summary) string {
 		for _, f := range t.Figures {
 			fmt.Fprintf(&b, "  median %s: %s%s\n", f.Name, plus(f.Change), report.Round(f.Change, f.Name))
 		}
+		if len(t.New)+len(t.Gone) > 0 {
+			fmt.Fprintf(&b, "  %d takes new, %d not there any more\n", len(t.New), len(t.Gone))
+		}
 		listed("Done then, not now", t.NewlyNo)
+		listed("Done now, not then", t.NewlyOK)
 	}
 	return b.String()
 }

@@ -360,3 +360,29 @@ func TestTheLineForGNUParallelRuns(t *testing.T) {
 	}
 	y.same("calm", "out")
 }
+
+// A plan of a large folder reads headers alone. ALIDADE_LONG=1 plans twenty
+// thousand takes.
+func TestALargeFolderIsPlannedQuicklyInLittleMemory(t *testing.T) {
+	n, most := 1000, 10*time.Second
+	if long() {
+		n = 20_000
+	}
+	y := newYard(t)
+	y.put("night.yaml", []byte("rig: rig.yaml\ntakes: [\"takes/**/*.wav\"]\nsteer: {toward: 60}\n"))
+	take := good(4, 100)
+	for k := range n {
+		y.put(fmt.Sprintf("takes/d%02d/t%05d.wav", k%40, k), take)
+	}
+	cmd := exec.Command("alidade", "plan", "night.yaml", "--parts", "1000")
+	cmd.Dir = y.dir
+	begun := time.Now()
+	if out, err := cmd.CombinedOutput(); err != nil || !strings.Contains(string(out), fmt.Sprintf("%d takes, ", n)) {
+		t.Fatalf("%v\n%s", err, out)
+	}
+	took, peak := time.Since(begun), cmd.ProcessState.SysUsage().(*syscall.Rusage).Maxrss>>10
+	t.Logf("%d takes planned in %s with %d MiB", n, took.Round(time.Millisecond), peak)
+	if took > most || peak > 200 {
+		t.Errorf("%s and %d MiB, want at most %s and 200 MiB", took, peak, most)
+	}
+}

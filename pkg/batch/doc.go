@@ -40,7 +40,7 @@
 //		return batch.Report{}, work(ctx, a.Paths(), a.Folder) // writes into a.Folder
 //	}
 //	tally, err := batch.Run(ctx, plan, do, batch.Settings{Root: root, Out: out, Workers: 2, Now: time.Now}, batch.Observer{})
-//	summary, err := batch.Merge(plan, batch.Settings{Root: root, Out: out})
+//	summary, err := batch.Merge(plan, batch.MergeSettings{Out: out})
 //
 // Longer than 2,000 lines because plan, staging, resume and merge share one form
 // of result on disk, which nothing else should know.
@@ -50,5 +50,6 @@
 // Longest processing time first: Graham, R. L., "Bounds on multiprocessing
 // timing anomalies", SIAM Journal on Applied Mathematics 17(2), 1969. Renaming
 // a folder onto one that is not empty fails: IEEE Std 1003.1-2017, rename().
-// CRC-32C: RFC 3720, appendix B.4.
+// Mean directions: Fisher, N. I., "Statistical Analysis of Circular Data",
+// Cambridge 1993, 2.3.1. CRC-32C: RFC 3720, appendix B.4.
 package batch

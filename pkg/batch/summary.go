@@ -7,12 +7,10 @@ import (
 	"errors"
 	"fmt"
 	"io/fs"
-	"math"
 	"os"
 	"path"
 	"path/filepath"
 	"slices"
-	"time"
 )
 
 // SummarySchema is the version of the form of a summary.
@@ -54,16 +52,6 @@ type CauseCount struct {
 	Takes []string `json:"takes"`
 }
 
-// FigureStats are the statistics of one figure over the takes.
-type FigureStats struct {
-	Name     string   `json:"name"`
-	Measured int      `json:"measured"`
-	Unknown  int      `json:"unknown"` // takes made in which it could not be measured
-	Lowest   *float64 `json:"lowest"`
-	Median   *float64 `json:"median"`
-	Highest  *float64 `json:"highest"`
-}
-
 // Row is one take of a summary.
 type Row struct {
 	Take    string              `json:"take"`
@@ -73,30 +61,13 @@ type Row struct {
 	Figures map[string]*float64 `json:"figures,omitempty"`
 }
 
-// Trend is what changed since the last summary of another plan in the same
-// folder.
-type Trend struct {
-	PlanID  string        `json:"plan_id"` // of then
-	Takes   int           `json:"takes"`
-	Done    int           `json:"done"`
-	Missed  int           `json:"missed"`
-	Failed  int           `json:"failed"`
-	NewlyOK []string      `json:"newly_done"`   // takes that were not done then
-	NewlyNo []string      `json:"newly_failed"` // takes that are missed or failed now and were done then
-	Figures []FigureTrend `json:"figures"`
-}
-
-// FigureTrend is how the median of a figure moved, now minus then.
-type FigureTrend struct {
-	Name   string  `json:"name"`
-	Change float64 `json:"change"`
-}
-
 // MergeSettings are how results are gathered.
 type MergeSettings struct {
 	Out    string
 	Verify bool   // hold every output against its SHA-256
 	Worst  string // figure by which done takes are ordered, lowest first
+	// Angles are the figures that are angles in degrees, with 180 = -180.
+	Angles []string
 	// Look is asked after a look that found takes absent whether to look again,
 	// and waits in between: over a network a name that was looked up too early
 	// stays missing for a while. Nil looks once.
@@ -128,7 +99,7 @@ func Merge(plan *Plan, m MergeSettings) (*Summary, error) {
 	if s.Complete() {
 		sweep(m.Out, true)
 	}
-	s.Trend = trendOf(m.Out, s)
+	s.Trend = trendOf(m.Out, s, m.Angles)
 	return s, nil
 }
 
@@ -228,7 +199,7 @@ func (g *gathered) summary() *Summary {
 		s.parts = append(s.parts, p)
 	}
 	slices.Sort(s.parts)
-	s.Figures = figuresOf(s.Results)
+	s.Figures = figuresOf(s.Results, g.m.Angles)
 	rank := map[State]int{Failed: 0, Missed: 1, Done: 2}
 	slices.SortStableFunc(s.Results, func(a, b Row) int {
 		return cmp.Or(cmp.Compare(rank[a.State], rank[b.State]), compareFigure(a.Figures[g.m.Worst], b.Figures[g.m.Worst]), cmp.Compare(a.Take, b.Take))
@@ -247,40 +218,6 @@ func compareFigure(a, b *float64) int {
 		return 1
 	}
 	return cmp.Compare(*a, *b)
-}
-
-func figuresOf(rows []Row) []FigureStats {
-	values, unknown := map[string][]float64{}, map[string]int{}
-	var names []string
-	for _, r := range rows {
-		if r.State == Failed {
-			continue
-		}
-		for name, v := range r.Figures {
-			if _, ok := values[name]; !ok {
-				values[name] = []float64{}
-				names = append(names, name)
-			}
-			if v == nil || math.IsNaN(*v) {
-				unknown[name]++
-			} else {
-				values[name] = append(values[name], *v)
-			}
-		}
-	}
-	slices.Sort(names)
-	list := []FigureStats{}
-	for _, name := range names {
-		v := values[name]
-		slices.Sort(v)
-		f := FigureStats{Name: name, Measured: len(v), Unknown: unknown[name]}
-		if n := len(v); n > 0 {
-			median := v[(n-1)/2]/2 + v[n/2]/2
-			f.Lowest, f.Median, f.Highest = &v[0], &median, &v[n-1]
-		}
-		list = append(list, f)
-	}
-	return list
 }
 
 // strays lists results in the output folder that are of no take of the plan.
@@ -316,49 +253,6 @@ func strays(out string, plan *Plan) ([]string, error) {
 		return nil
 	}
 	return list, visit(".")
-}
-
-// trendOf compares with the last summary of another plan.
-func trendOf(out string, s *Summary) *Trend {
-	var was Summary
-	for _, name := range []string{summaryName, previousName} {
-		text, err := os.ReadFile(filepath.Join(out, name))
-		if err != nil || json.Unmarshal(text, &was) != nil || was.Schema != SummarySchema {
-			continue
-		}
-		if was.PlanID != s.PlanID {
-			return was.trendTo(s)
-		}
-		was = Summary{}
-	}
-	return nil
-}
-
-// trendTo is what changed from was to s.
-func (was *Summary) trendTo(s *Summary) *Trend {
-	t := &Trend{PlanID: was.PlanID, Takes: was.Takes, Done: was.Done, Missed: was.Missed, Failed: was.Failed,
-		NewlyOK: []string{}, NewlyNo: []string{}, Figures: []FigureTrend{}}
-	then := make(map[string]State, len(was.Results))
-	for _, r := range was.Results {
-		then[r.Take] = r.State
-	}
-	for _, r := range s.Results {
-		if before := then[r.Take]; before == Done && r.State != Done {
-			t.NewlyNo = append(t.NewlyNo, r.Take)
-		} else if before != Done && r.State == Done {
-			t.NewlyOK = append(t.NewlyOK, r.Take)
-		}
-	}
-	slices.Sort(t.NewlyOK)
-	slices.Sort(t.NewlyNo)
-	for _, now := range s.Figures {
-		for _, before := range was.Figures {
-			if now.Name == before.Name && now.Median != nil && before.Median != nil {
-				t.Figures = append(t.Figures, FigureTrend{now.Name, *now.Median - *before.Median})
-			}
-		}
-	}
-	return t
 }
 
 // JSON is the text of summary.json. The same outcomes give the same bytes.
@@ -416,17 +310,4 @@ func (s *Summary) Save(out string, beside map[string][]byte) error {
 		return nil
 	}
 	return trouble(replaceFile(name, text))
-}
-
-// Throughput is what the ledgers of an output folder say of the work behind
-// it: takes committed, time spent on them, over all runs.
-func Throughput(out string) (takes int, spent time.Duration, err error) {
-	lines, _, err := ReadLedgers(out)
-	for _, l := range lines {
-		if l.Event == EventCommitted {
-			takes++
-			spent += time.Duration(l.Took * float64(time.Second))
-		}
-	}
-	return takes, spent, err
 }

@@ -155,7 +155,7 @@ func TestTheTrendIsAgainstTheLastOtherPlanAndMergingAgainChangesNothing(t *testi
 	b.replan(1)
 	second := night()
 	// The median of 3 and 5 is 4, it was 3.
-	if tr := second.Trend; tr == nil || tr.Takes != 2 || tr.Failed != 1 || !slices.Equal(tr.NewlyOK, []string{"b"}) || len(tr.Figures) != 1 || tr.Figures[0].Change != 1 {
+	if tr := second.Trend; tr == nil || tr.Takes != 2 || tr.Failed != 1 || !slices.Equal(tr.NewlyOK, []string{"b"}) || !slices.Equal(tr.New, []string{"c"}) || len(tr.Gone) != 0 || len(tr.Figures) != 1 || tr.Figures[0].Change != 1 {
 		t.Errorf("%+v", tr)
 	}
 	before := b.all()
@@ -167,8 +167,19 @@ func TestTheTrendIsAgainstTheLastOtherPlanAndMergingAgainChangesNothing(t *testi
 	if err := json.Unmarshal([]byte(before[previousName]), &was); err != nil || was.Takes != 2 {
 		t.Errorf("%+v, %v", was, err)
 	}
-	if takes, spent, err := Throughput(b.out); err != nil || takes != 4 || spent < 0 {
-		t.Errorf("%d takes in %s, %v, want 4: a, b twice, c", takes, spent, err)
+	// a, b twice, c.
+	if w, err := Throughput(b.out, time.Time{}); err != nil || w.Takes != 4 || w.Spent <= 0 || w.Bytes != 3+3+5+3 {
+		t.Errorf("%+v, %v, want 4 takes: a, b twice, c", w, err)
+	}
+	if w, err := Throughput(b.out, time.Now().Add(time.Hour)); err != nil || w != (Work{}) {
+		t.Errorf("since tomorrow: %+v, %v", w, err)
+	}
+	if err := os.Remove(filepath.Join(b.root, "a.wav")); err != nil {
+		t.Fatal(err)
+	}
+	b.replan(1)
+	if tr := night().Trend; tr == nil || !slices.Equal(tr.Gone, []string{"a"}) || len(tr.New)+len(tr.NewlyNo)+len(tr.NewlyOK) != 0 {
+		t.Errorf("%+v", tr)
 	}
 }
 
@@ -226,5 +237,40 @@ func TestJobFilesAreWhatTheirEnginesRead(t *testing.T) {
 	}
 	if got := quoted("it's"); got != `'it'\''s'` {
 		t.Errorf("quoted %s", got)
+	}
+}
+
+// Directions on both sides of 180° have no median of 0°: by the definition of a
+// mean direction in Fisher 1993, 2.3.1.
+func TestAnglesAreTakenAroundTheirMeanDirection(t *testing.T) {
+	stats := func(deg ...float64) FigureStats {
+		var rows []Row
+		for _, d := range deg {
+			rows = append(rows, Row{State: Done, Figures: map[string]*float64{"az": &d}})
+		}
+		return figuresOf(rows, []string{"az"})[0]
+	}
+	for _, c := range []struct {
+		deg                  []float64
+		lowest, mid, highest float64
+	}{
+		{[]float64{170, 179, -179}, 170, 179, -179},
+		{[]float64{-170, 160, 175, -178}, 160, 178.5, -170},
+		{[]float64{10, 20, 60}, 10, 20, 60},
+		{[]float64{-5, 5}, -5, 0, 5},
+		{[]float64{180}, 180, 180, 180},
+	} {
+		if f := stats(c.deg...); f.Median == nil || *f.Lowest != c.lowest || *f.Median != c.mid || *f.Highest != c.highest || f.Measured != len(c.deg) {
+			t.Errorf("%v: from %g through %g to %g", c.deg, *f.Lowest, *f.Median, *f.Highest)
+		}
+	}
+	// Nothing points anywhere.
+	if f := stats(0, 180); f.Median != nil || f.Measured != 2 {
+		t.Errorf("%+v", f)
+	}
+	a, b := 178.0, -177.0
+	now, then := &Summary{Figures: []FigureStats{{Name: "az", Median: &b}}}, &Summary{Figures: []FigureStats{{Name: "az", Median: &a}}}
+	if tr := then.trendTo(now, []string{"az"}); len(tr.Figures) != 1 || tr.Figures[0].Change != 5 {
+		t.Errorf("%+v", tr.Figures)
 	}
 }
