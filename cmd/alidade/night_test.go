@@ -246,7 +246,7 @@ func TestABatchOnADiskThatFillsUpGoesOnWhenThereIsRoom(t *testing.T) {
 	}
 	y := newNight(t, 12, 24000)
 	y.check(os.Mkdir(y.at("out"), 0o777))
-	if err := syscall.Mount("tmpfs", y.at("out"), "tmpfs", 0, "size=2600k"); err != nil {
+	if err := syscall.Mount("tmpfs", y.at("out"), "tmpfs", 0, "size=4m"); err != nil {
 		t.Skipf("no tmpfs here: %v", err)
 	}
 	defer func() { y.check(syscall.Unmount(y.at("out"), 0)) }()
@@ -267,7 +267,7 @@ func TestABatchOnADiskThatFillsUpGoesOnWhenThereIsRoom(t *testing.T) {
 			t.Errorf("%s is left", name)
 		}
 	}
-	y.check(syscall.Mount("tmpfs", y.at("out"), "tmpfs", syscall.MS_REMOUNT, "size=20m"))
+	y.check(syscall.Mount("tmpfs", y.at("out"), "tmpfs", syscall.MS_REMOUNT, "size=60m"))
 	code, _, errs = y.batch("night.yaml", "--need-room")
 	if code != 0 || done == 0 || !strings.Contains(errs, fmt.Sprintf(`"standing":%d`, done)) {
 		t.Fatalf("with room: exit code %d, %d stood\n%s", code, done, errs)
