@@ -339,7 +339,7 @@ func (r *run) through(path string) (l listened, err error) {
 	src := audio.Source(&watched{Source: t.source(), ctx: r.ctx, tell: r.tell("measuring "+path, t.header.Frames)})
 	var along audio.Source
 	if r.set.followsSound() && t.header.Frames != mix.Frames {
-		return l, &UsageError{Err: fmt.Errorf("%s: %d frames, but %s has %d: what follows the sound of the take (--postfilter, --reestimate-every) can only be measured on takes that lie frame by frame on it",
+		return l, &UsageError{Err: fmt.Errorf("%s: %d frames, but %s has %d: what follows the sound of the take (--postfilter, --reestimate-every, --toward follow) can only be measured on takes that lie frame by frame on it",
 			path, t.header.Frames, r.take.path(), mix.Frames), Hint: "give takes cut like this one, or leave the option out"}
 	}
 	if r.set.Postfilter != PostfilterNone {

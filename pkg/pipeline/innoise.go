@@ -56,6 +56,10 @@ func (r *run) predictInNoise(res *Result) error {
 	if len(res.Segments.Noise) == 0 {
 		return nil
 	}
+	if r.set.path != nil {
+		r.report(Finding{Code: "noise-unpredicted", Severity: Info, Message: "no gain was predicted in the measured noise: the beam moves"})
+		return nil
+	}
 	t := r.take
 	if res.Segments.Source == SegmentsIsolated {
 		if r.set.IsolatedNoise == "" {

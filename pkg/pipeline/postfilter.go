@@ -109,7 +109,7 @@ func (b *beamline) postfilter() postfilter.Options {
 // followsSound says that what is done to the sound changes with time, so that an
 // isolated take has to lie frame by frame on the mix.
 func (s *settings) followsSound() bool {
-	return s.Postfilter != PostfilterNone || s.ReestimateEvery > 0
+	return s.Postfilter != PostfilterNone || s.ReestimateEvery > 0 || s.aim == aimFollow
 }
 
 // alongside returns the corrected microphones of the mix once more, for the
