@@ -19,6 +19,7 @@ import (
 
 	"alidade/pkg/batch"
 	"alidade/pkg/pipeline"
+	"alidade/pkg/quality"
 	"alidade/pkg/sheet"
 )
 
@@ -311,7 +312,7 @@ func (t *undertaking) steer(ctx context.Context, a batch.Assignment) (batch.Repo
 	tidy := func(r *pipeline.Result) *pipeline.Result { return t.tidy(r, a) }
 	folder := strings.Repeat("../", strings.Count(a.Take.Key, "/")+1) + indexFile
 	render := renderers(o, folder, tidy)
-	spec := pipeline.Spec{Take: a.Paths(), RigPath: t.rig(a.Recipe), Options: o, Version: version}
+	spec := pipeline.Spec{Take: a.Paths(), RigPath: t.rig(a.Recipe), Options: o, Limits: quality.Limits(recipe.Limits.Limits), Version: version}
 	r, err := pipeline.Run(ctx, spec, render, pipeline.Watch{Progress: a.Step})
 	if err != nil {
 		return batch.Report{}, t.plain(err, a)

@@ -131,12 +131,12 @@ func runCheck(u *ui, c *cli.Context) error {
 		v := c.Float64(name)
 		return &v
 	}
-	spec := pipeline.Spec{Take: files, RigPath: c.String("rig"), Version: version, Options: pipeline.Options{
+	spec := pipeline.Spec{Take: files, RigPath: c.String("rig"), Version: version, Limits: limits, Options: pipeline.Options{
 		Chain: c.Bool("chain"), FindChain: c.Bool("find-chain"), FindSet: c.Bool("find-set"),
 		TemperatureC: number("temperature-c"), HumidityPct: number("humidity-pct"), PressureKPa: number("pressure-kpa"), SpeedOfSound: number("speed-of-sound"),
 	}}
 	progress := u.progress(c.Bool("quiet"))
-	res, err := pipeline.Check(c.Context, spec, limits, pipeline.Watch{Progress: progress.step})
+	res, err := pipeline.Check(c.Context, spec, pipeline.Watch{Progress: progress.step})
 	progress.finish()
 	if err != nil {
 		return err

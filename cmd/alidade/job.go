@@ -18,6 +18,7 @@ import (
 
 	"alidade/pkg/batch"
 	"alidade/pkg/pipeline"
+	"alidade/pkg/quality"
 	"alidade/pkg/rig"
 	"alidade/pkg/sheet"
 )
@@ -58,6 +59,7 @@ type jobOutputs struct {
 type jobLimits struct {
 	FailOn           string   `json:"fail_on,omitempty" jsonschema:"enum=never,enum=warning,enum=error" jsonschema_description:"level of a finding that fails a take; error if absent"`
 	MinimumSNRGainDB *float64 `json:"minimum_snr_gain_db,omitempty" jsonschema_description:"least SNR gain of the whole, dB; a take whose gain could not be measured misses it"`
+	rig.Limits                // of the inspection, over those of the rig file
 }
 
 // jobRecipe is what the options of a batch recipe hold.
@@ -237,6 +239,7 @@ func (j *job) recipe(o *override) jobRecipe {
 		if o.limits.MinimumSNRGainDB != nil {
 			r.Limits.MinimumSNRGainDB = o.limits.MinimumSNRGainDB
 		}
+		r.Limits.Limits = rig.Limits(quality.Limits(o.limits.Limits).Over(quality.Limits(r.Limits.Limits)))
 	}
 	if o != nil && len(o.options) > 0 {
 		// A beam points to one place: the other says so no more.

@@ -372,7 +372,7 @@ func (s *sidecars) read(name, stem string) error {
 	if doc.Has("limits.fail_on") {
 		o.limits.FailOn = f.Limits.FailOn
 	}
-	o.limits.MinimumSNRGainDB = f.Limits.MinimumSNRGainDB
+	o.limits.MinimumSNRGainDB, o.limits.Limits = f.Limits.MinimumSNRGainDB, f.Limits.Limits
 	if doc.Err() == nil {
 		if err := s.job.recipe(&o).validate(); err != nil {
 			for _, line := range strings.Split(err.Error(), "\n") {

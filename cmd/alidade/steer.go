@@ -94,6 +94,8 @@ What is measured
   --isolated-noise TAKE  the same scene with the noise alone
   --isolated-target TAKE the same scene with the wanted sound alone
   --compare-to NAME      gain over this microphone as well
+  --keep-dead            dead microphones, found by an inspection of parts of
+                         the take, stay in the beam; else they are left out
   --no-measure           write the track only
 
 What is written
@@ -173,6 +175,7 @@ func steerFlags() []cli.Flag {
 		&cli.StringFlag{Name: "isolated-target"},
 		&cli.StringFlag{Name: "compare-to"},
 		&cli.BoolFlag{Name: "no-measure"},
+		&cli.BoolFlag{Name: "keep-dead"},
 
 		&cli.StringFlag{Name: "out"},
 		&cli.StringFlag{Name: "format"},
@@ -239,6 +242,7 @@ func steerOptions(c *cli.Context) pipeline.Options {
 		IsolatedTarget: c.String("isolated-target"),
 		CompareTo:      c.String("compare-to"),
 		NoMeasure:      c.Bool("no-measure"),
+		KeepDead:       c.Bool("keep-dead"),
 		Out:            c.String("out"),
 		Format:         c.String("format"),
 		OverRange:      c.String("over-range"),

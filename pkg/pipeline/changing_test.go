@@ -355,7 +355,7 @@ func TestSetsOfWeightsAreBounded(t *testing.T) {
 	}
 }
 
-// Minimum variance on a take with a dead channel would listen to it alone: it is
+// Minimum variance with a dead channel kept would listen to it alone: it is
 // refused, by its channel; the other channels in use, down to two, can be used.
 func TestMinimumVarianceRefusesDeadChannels(t *testing.T) {
 	s, _, _ := wandering(t, 6)
@@ -365,7 +365,7 @@ func TestMinimumVarianceRefusesDeadChannels(t *testing.T) {
 	s.mix.Channel(1)[5] = 1e-5
 	writeWAV(t, s.take, 8000, wav.Float32, s.mix)
 	for _, every := range []float64{0, 2} {
-		o := Options{Toward: "60", Weights: WeightsMinimumVariance, ReestimateEvery: every, Noise: wanderingShort, Out: filepath.Join(s.dir, "y.wav")}
+		o := Options{Toward: "60", Weights: WeightsMinimumVariance, ReestimateEvery: every, Noise: wanderingShort, KeepDead: true, Out: filepath.Join(s.dir, "y.wav")}
 		_, err := s.run(o)
 		var usage *UsageError
 		if !errors.As(err, &usage) || !strings.Contains(err.Error(), "channels 2 and 5 are in the noise more than 40 dB below") || !strings.Contains(usage.Hint, "use: false") {

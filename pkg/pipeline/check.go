@@ -4,9 +4,7 @@ import (
 	"context"
 	"fmt"
 
-	"alidade/pkg/audio"
 	"alidade/pkg/quality"
-	"alidade/pkg/rig"
 )
 
 // CheckResult is what an inspection of a take found, as plain data.
@@ -58,7 +56,7 @@ type CheckFinding struct {
 
 // Check inspects one take against its rig. Of the options it heeds those on
 // files and air. The errors are those of Run.
-func Check(ctx context.Context, spec Spec, limits quality.Limits, watch Watch) (res *CheckResult, err error) {
+func Check(ctx context.Context, spec Spec, watch Watch) (res *CheckResult, err error) {
 	l, err := loadRig(spec.RigPath, spec.Options)
 	if err != nil {
 		return nil, err
@@ -75,7 +73,7 @@ func Check(ctx context.Context, spec Spec, limits quality.Limits, watch Watch) (
 	if err := t.sounds(); err != nil {
 		return nil, err
 	}
-	found, err := r.inspect(limits, t.header.Frames)
+	found, err := r.inspect([][2]int64{{0, t.header.Frames}}, false)
 	if err != nil {
 		return nil, err
 	}
@@ -107,35 +105,6 @@ func Check(ctx context.Context, spec Spec, limits quality.Limits, watch Watch) (
 	}
 	res.Verdict = verdict(res)
 	return res, nil
-}
-
-// inspect looks at the first frames of the take, as it was recorded, with the
-// used microphones of the rig.
-func (r *run) inspect(limits quality.Limits, frames int64) (*quality.Result, error) {
-	var mics []rig.Mic
-	var order []int
-	for _, m := range r.rig.Used() {
-		mics = append(mics, r.rig.Mics[m])
-		order = append(order, r.rig.Mics[m].Channel-1)
-	}
-	q, err := quality.New(mics, r.take.header.Rate, quality.Options{Speed: r.rig.speed, Limits: limits})
-	if err != nil {
-		return nil, &UsageError{Err: err}
-	}
-	src := audio.Source(&watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("checking", frames)})
-	if frames < r.take.header.Frames {
-		src = audio.Section(src, 0, frames)
-	}
-	if src, err = audio.Map(src, order, nil); err != nil {
-		return nil, err
-	}
-	if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, r.take.header.Channels), q); err != nil {
-		return nil, err
-	}
-	if err := q.Close(); err != nil {
-		return nil, err
-	}
-	return q.Result(), nil
 }
 
 // verdict is the state in one line.

@@ -270,10 +270,15 @@ func TestNothingFoundWritesNothing(t *testing.T) {
 	}
 }
 
-// A dead channel is left out of the search and named; the direction stands.
+// A dead channel is left out of the search and named, kept in the beam or not;
+// the direction stands.
 func TestDeadChannelDoesNotBendTheDirection(t *testing.T) {
 	s := sceneFrom(t, ringOfEight, twoTalkers+"faults:\n  - {channels: [3], dead: true}\n")
-	r := s.must(t, Options{Toward: TowardAuto})
+	r := s.must(t, Options{Toward: TowardAuto, Out: filepath.Join(s.dir, "left.wav")})
+	if d := r.Direction; math.Abs(rig.WrapDeg(d.AzimuthDeg+40)) > 2 || r.Rig.MicrophonesUsed != 7 {
+		t.Errorf("found at %.1f° with %d microphones, want -40° with 7", d.AzimuthDeg, r.Rig.MicrophonesUsed)
+	}
+	r = s.must(t, Options{Toward: TowardAuto, KeepDead: true})
 	if d := r.Direction; math.Abs(rig.WrapDeg(d.AzimuthDeg+40)) > 2 {
 		t.Errorf("found at %.1f°, want -40°", d.AzimuthDeg)
 	}

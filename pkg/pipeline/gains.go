@@ -34,7 +34,9 @@ func (r *run) gains(res *Result) error {
 	named := -1
 	if name := r.set.CompareTo; name != "" {
 		m, found := r.rig.Find(name)
-		if named = slices.Index(r.line.used, m); !found || named < 0 {
+		if named = slices.Index(r.line.used, m); found && slices.Contains(r.left, m) {
+			r.report(Finding{Code: "compared-left-out", Severity: Warning, Message: fmt.Sprintf("no gain over %s (--compare-to): it was left out as dead", name)})
+		} else if !found || named < 0 {
 			return &UsageError{Err: fmt.Errorf("--compare-to %q: no used microphone of rig %s has that name", name, r.rig.Name), Hint: r.rig.namesHint()}
 		}
 	}

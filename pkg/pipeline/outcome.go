@@ -3,9 +3,11 @@ package pipeline
 import (
 	"fmt"
 	"path/filepath"
+	"slices"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/kernel"
+	"alidade/pkg/quality"
 	"alidade/pkg/rig"
 )
 
@@ -119,7 +121,7 @@ func (b *beamline) summary() Steer {
 // referenceMic is the index into the rig's microphones of the one that stands
 // for the reference point: the named one, or the used one nearest to it.
 func (b *beamline) referenceMic() int {
-	if m, ok := b.rig.Find(b.rig.Reference); ok {
+	if m, ok := b.rig.Find(b.rig.Reference); ok && b.rig.Mics[m].Use {
 		return m
 	}
 	best := 0
@@ -132,7 +134,8 @@ func (b *beamline) referenceMic() int {
 }
 
 // silentBelowDB is how far below the median of the used channels a channel
-// counts as silent, and silentDBFS where it does whatever the others do.
+// counts as silent over the whole take, and silentDBFS where it does whatever
+// the others do.
 const (
 	silentBelowDB = 40
 	silentDBFS    = -110
@@ -143,7 +146,7 @@ const (
 func (r *run) channels(res *Result) {
 	res.Channels = []Channel{}
 	if r.totals == nil {
-		r.report(Finding{Code: "not-measured", Severity: Info, Message: "nothing was measured (--no-measure): no levels, no gains, and no channel was looked at"})
+		r.report(Finding{Code: "not-measured", Severity: Info, Message: "nothing was measured (--no-measure): no levels, no gains; of the channels only dead ones were looked for, by their level"})
 		return
 	}
 	levels := r.totals.Levels()
@@ -153,15 +156,21 @@ func (r *run) channels(res *Result) {
 	}
 	typical := median(used)
 	var silent, clipped []int
+	dead := r.deadChannels()
 	for _, m := range r.rig.Mics {
-		c := Channel{Channel: m.Channel, Name: m.Name, Used: m.Use, Flags: []string{}}
+		c := Channel{Channel: m.Channel, Name: m.Name, Used: m.Use, Flags: append([]string{}, r.flagsOf(m.Channel)...)}
+		for _, k := range r.left {
+			if r.rig.Mics[k].Channel == m.Channel {
+				c.Flags = append(c.Flags, "left-out")
+			}
+		}
 		if m.Channel <= len(levels) {
 			l := levels[m.Channel-1]
 			c.RMSDBFS, c.PeakDBFS = number(l.RMSDBFS), number(l.PeakDBFS)
 			c.ClippedFrames, c.DC = l.ClippedFrames, l.DC
 			if l.RMSDBFS < silentDBFS || l.RMSDBFS < typical-silentBelowDB {
 				c.Flags = append(c.Flags, "silent")
-				if m.Use {
+				if m.Use && (!slices.Contains(dead, m.Channel) || len(dead) == len(r.line.used)) {
 					silent = append(silent, m.Channel)
 				}
 			}
@@ -182,6 +191,10 @@ func (r *run) channels(res *Result) {
 			plural(silent, "channel %s holds", "channels %s each hold"), silentBelowDB)})
 	}
 	if len(clipped) > 0 {
+		// The whole take was counted here, parts of it by the inspection.
+		r.findings = slices.DeleteFunc(r.findings, func(f Finding) bool {
+			return f.Code == quality.CodeClipped && len(f.Channels) == 1 && slices.Contains(clipped, f.Channels[0])
+		})
 		r.report(Finding{Code: "channel-clipped", Severity: Warning, Channels: clipped, Message: fmt.Sprintf(
 			"%s at full scale: the beam and its gain figures contain the distortion; record with less gain",
 			plural(clipped, "channel %s stands", "channels %s stand"))})

@@ -6,6 +6,7 @@ import (
 	"io"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 
 	"alidade/pkg/acoustics"
@@ -27,6 +28,31 @@ type loadedRig struct {
 	air    acoustics.Air
 	speed  float64 // m/s
 	rule   string  // where the speed comes from
+	// centre is the reference point where microphones were left out on the way,
+	// which does not move it; else nil.
+	centre *rig.Point
+}
+
+// ReferencePoint is that of the rig file, whatever was left out since.
+func (l *loadedRig) ReferencePoint() rig.Point {
+	if l.centre != nil {
+		return *l.centre
+	}
+	return l.Rig.ReferencePoint()
+}
+
+// without is the rig without the microphones of the given indices.
+func (l *loadedRig) without(mics []int) *loadedRig {
+	out := *l
+	ref := l.ReferencePoint()
+	out.centre = &ref
+	changed := *l.Rig
+	changed.Mics = slices.Clone(l.Mics)
+	for _, m := range mics {
+		changed.Mics[m].Use = false
+	}
+	out.Rig = &changed
+	return &out
 }
 
 // loadRig reads the rig file at path, with the reference point and the air of

@@ -8,6 +8,7 @@ import (
 
 	"alidade/pkg/audio"
 	"alidade/pkg/measure"
+	"alidade/pkg/quality"
 	"alidade/pkg/wav"
 )
 
@@ -72,6 +73,8 @@ type run struct {
 	painting         *painter        // while the take itself passes
 	found            *Direction      // of --toward auto and follow and --focus auto
 	findings         []Finding
+	checked          *quality.Result // of the inspection; nil without one
+	left             []int           // microphones that it left out, indices into the rig's
 }
 
 // abandon removes whatever was not committed.
@@ -101,16 +104,19 @@ func (r *run) steer() (result *Result, err error) {
 	if r.set.HighpassHz >= float64(h.Rate)/2 {
 		return nil, &UsageError{Err: fmt.Errorf("--highpass %g: at or above half the take's rate of %d Hz", r.set.HighpassHz, h.Rate)}
 	}
+	if r.from, r.to, err = r.excerpt(); err != nil {
+		return nil, err
+	}
+	if err := r.sound(); err != nil {
+		return nil, err
+	}
 	if !r.set.aimed() {
 		if err := r.findAim(); err != nil {
 			return nil, err
 		}
 	}
 	if r.line, err = newBeamline(r.rig, r.set, h.Rate); err != nil {
-		return nil, err
-	}
-	if r.from, r.to, err = r.excerpt(); err != nil {
-		return nil, err
+		return nil, r.ofThoseLeft(err)
 	}
 	if r.set.designed() {
 		if err := r.design(); err != nil {

@@ -10,6 +10,7 @@ import (
 
 	"alidade/pkg/beam"
 	"alidade/pkg/bearing"
+	"alidade/pkg/quality"
 	"alidade/pkg/rig"
 )
 
@@ -18,10 +19,11 @@ type Spec struct {
 	Take     []string // files of the take, in order: side by side, or a chain with Options.Chain
 	RigPath  string
 	Options  Options
-	Version  string   // program version, for the report
-	Command  []string // command line, for the report; nil under --private
-	NoHashes bool     // leave the hashes of take and tracks out: nobody will see them
-	Created  string   // RFC 3339 time for the report; empty when reproducible
+	Limits   quality.Limits // over those of the rig file, where not zero
+	Version  string         // program version, for the report
+	Command  []string       // command line, for the report; nil under --private
+	NoHashes bool           // leave the hashes of take and tracks out: nobody will see them
+	Created  string         // RFC 3339 time for the report; empty when reproducible
 }
 
 // Options are the options of a steer run, in the words of the command line:
@@ -71,8 +73,9 @@ type Options struct {
 	Format        string  `json:"format,omitempty"`     // auto (default), pcm16, pcm24 or float32
 	OverRange     string  `json:"over_range,omitempty"` // fail (default) or float32
 	WithReference bool    `json:"with_reference,omitempty"`
-	Excerpt       string  `json:"excerpt,omitempty"` // A..B
-	Handles       float64 `json:"handles,omitempty"` // seconds
+	Excerpt       string  `json:"excerpt,omitempty"`   // A..B
+	Handles       float64 `json:"handles,omitempty"`   // seconds
+	KeepDead      bool    `json:"keep_dead,omitempty"` // dead microphones stay part of the beam
 	NoVerify      bool    `json:"no_verify,omitempty"`
 	NoMeasure     bool    `json:"no_measure,omitempty"`
 	Reports       string  `json:"reports,omitempty"`    // json,csv,html (default) or none

@@ -158,8 +158,8 @@ func TestDiskFull(t *testing.T) {
 	s := newScene(t, 20, wav.PCM24) // a track of 0.96 MB and a megabyte for each report
 	full := false
 	spec := Spec{Take: []string{s.take}, RigPath: s.rig, Options: Options{Toward: "90", NoMeasure: true, BlockFrames: 4096, Out: disk + "/", Reports: "json"}}
-	_, err := Run(t.Context(), spec, jsonRenderers, Watch{Progress: func(string, int64, int64) {
-		if !full {
+	_, err := Run(t.Context(), spec, jsonRenderers, Watch{Progress: func(stage string, _, _ int64) {
+		if !full && stage == "steering" {
 			full = true
 			_ = os.WriteFile(filepath.Join(disk, "filler"), make([]byte, 4<<20), 0o666) // ends in ENOSPC
 		}

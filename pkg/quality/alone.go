@@ -3,6 +3,7 @@ package quality
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"alidade/pkg/audio"
 )
@@ -15,8 +16,12 @@ func (j *judgement) deadOnes() {
 		level[m] = audio.PowerDB(2*s.rms()*s.rms()) + j.mics[m].GainDB
 		all = append(all, level[m])
 	}
-	middle := median(all)
+	slices.Sort(all)
+	middle := all[len(all)/2] // the upper one of two: half of the channels may be dead
 	j.dead = make([]bool, len(level))
+	if j.frames < int64(j.rate/10) { // a blink of sound says nothing of a channel
+		return
+	}
 	var silent, low []int
 	for m, l := range level {
 		switch {

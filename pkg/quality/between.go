@@ -79,12 +79,17 @@ func (j *judgement) coherences(alive []int) {
 	level := median(spectra)
 	for _, m := range alive {
 		v := *j.result.Channels[m].Coherence
-		if v >= j.limits.CoherenceLoss*middle {
+		below := level - (c.logAuto[m]/float64(c.measured) + j.mics[m].GainDB)
+		loss := j.limits.CoherenceLoss
+		if below > 20 { // half of it is noise of its own, and little is left of the sound
+			loss *= 2
+		}
+		if v >= loss*middle {
 			continue
 		}
 		j.dead[m] = true
-		j.result.Dead = append(j.result.Dead, m)
-		if below := level - (c.logAuto[m]/float64(c.measured) + j.mics[m].GainDB); below > 10 {
+		if below > 10 {
+			j.result.Dead = append(j.result.Dead, m)
 			j.add(CodeDead, Error, []int{m}, fmt.Sprintf("%s holds noise of its own, %.1f dB below the middle channel and not coherent with it (%.3f)", j.names([]int{m}), below, v),
 				fmt.Sprintf("the sound that the others hear (coherence %.3f)", middle), "look at its cable, plug and power; leave it out until then")
 		} else {
@@ -289,7 +294,7 @@ func (j *judgement) spreading(alive []int, list []window, db []float64) []float6
 	parts := make([][]float64, len(db))
 	for _, win := range list {
 		for m := range t {
-			t[m] = win.time[m] + j.mics[m].Delay
+			t[m] = win.time[m] + j.mics[m].Delay - j.mics[m].ClockPPM*1e-6*win.at
 		}
 		s, _, ok := pl.fit(t, w, at, nil)
 		if !ok || s.kappa <= 0 {

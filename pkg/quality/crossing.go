@@ -25,7 +25,10 @@ type crossing struct {
 	stft       *spectral.STFT
 	frames     int // in the window under way
 	perWindow  int
-	count      int64 // windows begun
+	count      int64     // windows begun
+	start      int64     // frame of the take that the stretch under way begins at
+	inStretch  int64     // windows of it that have ended
+	lead       []float64 // times of the last window solved; nil before
 	auto       [][]float64
 	re, im     [][]float64
 	inverse    *spectral.FFT[float64]
@@ -90,8 +93,17 @@ func newCrossing(at []rig.Point, rate int, speed float64) (*crossing, error) {
 		return nil, err
 	}
 	c.zr, c.zi, c.z = make([]float64, n/2+1), make([]float64, n/2+1), make([]float64, n)
-	c.stft, err = spectral.NewSTFT(len(at), c.size, c.hop, spectral.Periodic(c.size, spectral.Hann), c.take)
-	return c, err
+	return c, c.begin(0)
+}
+
+// begin begins a stretch of the take at a frame; what is under way ends.
+func (c *crossing) begin(frame int64) (err error) {
+	if c.frames > 0 {
+		c.endWindow()
+	}
+	c.start, c.inStretch = frame, 0
+	c.stft, err = spectral.NewSTFT(len(c.at), c.size, c.hop, spectral.Periodic(c.size, spectral.Hann), c.take)
+	return err
 }
 
 // pairsOf returns all pairs, or for many microphones those a few places apart.
@@ -141,15 +153,19 @@ func (c *crossing) take(_ int64, s *spectral.Spectra) error {
 // endWindow turns the sums into a window, if they hold enough.
 func (c *crossing) endWindow() {
 	n := c.frames
-	at := (float64(c.count)*float64(c.perWindow) + float64(n)/2) * float64(c.hop) / float64(c.rate)
+	at := (float64(c.start) + (float64(c.inStretch)*float64(c.perWindow)+float64(n)/2)*float64(c.hop)) / float64(c.rate)
 	c.frames = 0
 	c.count++
+	c.inStretch++
 	if n >= 16 {
 		c.levels(n)
 		if (c.count-1)%c.every == 0 {
 			if w, ok := c.solve(float64(n)); ok {
 				w.at = at
 				c.windows = append(c.windows, w)
+				if w.quality > 0.45 {
+					c.lead = w.time
+				}
 			}
 		}
 		if len(c.windows) >= maxWindows {
@@ -260,9 +276,17 @@ func (c *crossing) correlate(p int, n float64) pairDelay {
 	reach := int(math.Ceil((1.3*c.at[d.i].Distance(c.at[d.j])/c.speed + 0.5e-3) * float64(c.rate) * finer))
 	// Swapped microphones may hear as far apart as the rig is wide.
 	reach = min(max(reach, int((1.1*c.extent/c.speed+0.2e-3)*float64(c.rate)*finer)), size/2-2)
+	first, last := -reach, reach
+	if c.lead != nil && !math.IsNaN(c.lead[d.i]+c.lead[d.j]) {
+		// Clocks that run apart take the delay out of what the rig allows, a little
+		// from window to window.
+		lead := int((c.lead[d.j] - c.lead[d.i]) * float64(c.rate) * finer)
+		aside := int(0.3e-3 * float64(c.rate) * finer)
+		first, last = max(min(first, lead-aside), 2-size/2), min(max(last, lead+aside), size/2-2)
+	}
 	for side, sign := range []float64{1, -1} {
 		best, at := math.Inf(-1), 0
-		for l := -reach; l <= reach; l++ {
+		for l := first; l <= last; l++ {
 			if v := sign * c.z[(l+size)%size]; v > best {
 				best, at = v, l
 			}
@@ -374,119 +398,4 @@ func (c *crossing) common(list []pairDelay, n float64) {
 			list[i].logGain = sum[i] / float64(bins)
 		}
 	}
-}
-
-// consensus returns the leading eigenvector of the sign matrix, turned so that
-// the majority is positive.
-func consensus(a [][]float64) []float64 {
-	M := len(a)
-	v := make([]float64, M)
-	for m := range v {
-		v[m] = 1 + 0.1*float64(m%3)
-	}
-	for range 100 {
-		u := make([]float64, M)
-		norm := 0.0
-		for i := range u {
-			u[i] = float64(M) * v[i] // keeps the largest eigenvalue in front
-			for j := range v {
-				u[i] += a[i][j] * v[j]
-			}
-			norm = math.Max(norm, math.Abs(u[i]))
-		}
-		for i := range u {
-			v[i] = u[i] / norm
-		}
-	}
-	sum := 0.0
-	for _, x := range v {
-		sum += math.Copysign(1, x)
-	}
-	if sum < 0 || sum == 0 && v[0] < 0 {
-		for i := range v {
-			v[i] = -v[i]
-		}
-	}
-	return v
-}
-
-// balance returns the times whose differences fit the delays best, with mean 0,
-// and the information on each.
-func balance(M int, list []pairDelay, delay, weight []float64) (t, info []float64) {
-	t, info = make([]float64, M), make([]float64, M)
-	rhs := make([]float64, M)
-	for i, d := range list {
-		info[d.i] += weight[i]
-		info[d.j] += weight[i]
-		rhs[d.i] -= weight[i] * delay[i]
-		rhs[d.j] += weight[i] * delay[i]
-	}
-	// Gauss-Seidel: the matrix is a weighted Laplacian.
-	for range 200 {
-		change := 0.0
-		next := slices.Clone(rhs)
-		for i, d := range list {
-			next[d.i] += weight[i] * t[d.j]
-			next[d.j] += weight[i] * t[d.i]
-		}
-		mean := 0.0
-		for m := range t {
-			if info[m] > 0 {
-				v := 0.5*t[m] + 0.5*next[m]/info[m]
-				change = math.Max(change, math.Abs(v-t[m]))
-				t[m] = v
-			}
-			mean += t[m] / float64(M)
-		}
-		for m := range t {
-			t[m] -= mean
-		}
-		if change < 1e-12 {
-			break
-		}
-	}
-	for m := range t {
-		if info[m] <= 0 {
-			t[m] = math.NaN()
-		}
-	}
-	return t, info
-}
-
-// shares splits the common power of the pairs into the gains of the
-// microphones, dB: the product of two gains is what a pair has in common, so
-// noise of a microphone's own leaves no trace.
-func shares(M int, list []pairDelay) []float64 {
-	g, n, rest := make([]float64, M), make([]float64, M), 0.0
-	for _, d := range list {
-		rest += d.logGain / float64(len(list))
-	}
-	for range 60 {
-		sum := make([]float64, M)
-		clear(n)
-		for _, d := range list {
-			v := d.logGain - rest
-			sum[d.i] += v - g[d.j]
-			sum[d.j] += v - g[d.i]
-			n[d.i]++
-			n[d.j]++
-		}
-		mean, count := 0.0, 0.0
-		for m := range g {
-			if n[m] > 0 {
-				g[m] = 0.5*g[m] + 0.5*sum[m]/n[m]
-				mean += g[m]
-				count++
-			}
-		}
-		for m := range g {
-			g[m] -= mean / count
-		}
-	}
-	for m := range g {
-		if n[m] < 2 {
-			g[m] = math.NaN()
-		}
-	}
-	return g
 }

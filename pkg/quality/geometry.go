@@ -37,7 +37,7 @@ func newGeometry(j *judgement, alive []int, list []window) *geometry {
 		}
 		middle := median(info)
 		for m := range t {
-			t[m] = w.time[m] + j.mics[m].Delay
+			t[m] = w.time[m] + j.mics[m].Delay - j.mics[m].ClockPPM*1e-6*w.at
 		}
 		for _, m := range alive {
 			v[m] = math.Min(w.info[m]/middle, 1)

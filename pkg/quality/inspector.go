@@ -14,6 +14,8 @@ import (
 type Options struct {
 	Speed  float64 // of sound, m/s; 343.2 if 0
 	Limits Limits
+	// LevelsOnly looks for dead channels by their level and at nothing else.
+	LevelsOnly bool
 }
 
 // Inspector is a sink that looks at a take: channel m of what is written is
@@ -28,6 +30,8 @@ type Inspector struct {
 	lines  *lines
 	cross  *crossing // nil with fewer than two microphones
 	frames int64
+	only   bool  // the levels
+	gaps   int64 // frames left out
 	closed bool
 	err    error
 	result *Result
@@ -55,6 +59,9 @@ func New(mics []rig.Mic, rate int, o Options) (*Inspector, error) {
 	for _, m := range mics {
 		q.at = append(q.at, m.At)
 		q.strips = append(q.strips, newStrip(rate))
+	}
+	if q.only = o.LevelsOnly; q.only {
+		return q, nil
 	}
 	var err error
 	if q.lines, err = newLines(q.at, rate); err != nil {
@@ -89,11 +96,45 @@ func (q *Inspector) Write(src audio.Block) error {
 				return q.err
 			}
 		}
-		s.add(x)
+		if q.only {
+			s.addLevel(x)
+		} else {
+			s.add(x)
+		}
 	}
 	q.frames += int64(src.Frames())
+	if q.only {
+		return nil
+	}
 	if q.err = q.lines.stft.Write(src); q.err == nil && q.cross != nil {
 		q.err = q.cross.stft.Write(src)
+	}
+	return q.err
+}
+
+// Gap says that the next block begins so many frames after the end of the last:
+// a take may be inspected in stretches, of which those of 2 s and more tell
+// most. Frames of the result are those written.
+func (q *Inspector) Gap(frames int64) error {
+	switch {
+	case q.err != nil:
+		return q.err
+	case q.closed:
+		return errors.New("quality: gap after close")
+	case frames < 0:
+		return fmt.Errorf("quality: gap of %d frames", frames)
+	case frames == 0:
+		return nil
+	}
+	q.gaps += frames
+	if q.only {
+		return nil
+	}
+	for _, s := range q.strips {
+		s.gap()
+	}
+	if q.err = q.lines.begin(); q.err == nil && q.cross != nil {
+		q.err = q.cross.begin(q.frames + q.gaps)
 	}
 	return q.err
 }
@@ -128,6 +169,10 @@ func (q *Inspector) judge() *Result {
 	j := &judgement{Inspector: q, result: &Result{Frames: q.frames, Findings: []Finding{}}}
 	j.channels()
 	j.deadOnes()
+	if q.only {
+		j.result.NotJudged = "only levels were looked at"
+		return j.finish()
+	}
 	j.tops()
 	j.stills()
 	j.noises()
@@ -137,6 +182,12 @@ func (q *Inspector) judge() *Result {
 		j.result.NotJudged = "one microphone has no geometry"
 	}
 	j.floors()
+	return j.finish()
+}
+
+// finish puts what was found in order.
+func (j *judgement) finish() *Result {
+	slices.Sort(j.result.Dead)
 	for i := range j.result.Channels {
 		c := &j.result.Channels[i]
 		c.Flags = []string{}

@@ -3,41 +3,36 @@ package quality
 import (
 	"errors"
 	"fmt"
+
+	"alidade/pkg/rig"
 )
 
 // Limits say from where on something is a finding. A zero field takes its
-// default; a negative one turns the check off.
-type Limits struct {
-	DeadDB        float64 // a channel this far below the middle one is dead; 35
-	SilentDBFS    float64 // and one below this level whatever the others do; -110
-	LevelDB       float64 // level against the middle channel; 1
-	ClippedShare  float64 // share of frames on a flat top; 0.0005
-	DC            float64 // constant offset re 1.0; 0.002
-	HumDB         float64 // mains lines above the spectrum around them; 9
-	WindShare     float64 // incoherent part of the power from 20 to 120 Hz; 0.25
-	HandlingDB    float64 // thumps above the middle level below 80 Hz; 20
-	NoiseFloorDB  float64 // quietest moments above those of the middle channel; 6
-	DelayUS       float64 // a late or early channel, microseconds; 6
-	DriftPPM      float64 // one clock against the others; 0.5
-	ScalePct      float64 // delays against the geometry, per cent; 2
-	CoherenceLoss float64 // coherence against the middle channel; 0.25
-}
+// default (withDefaults has them, and so does the schema of a rig file); a
+// negative one turns the check off.
+type Limits rig.Limits
 
 // withDefaults returns the limits with every zero field at its default.
 func (l Limits) withDefaults() Limits {
-	for _, v := range []struct {
-		field *float64
-		def   float64
-	}{
-		{&l.DeadDB, 35}, {&l.SilentDBFS, -110}, {&l.LevelDB, 1}, {&l.ClippedShare, 0.0005},
-		{&l.DC, 0.002}, {&l.HumDB, 9}, {&l.WindShare, 0.25}, {&l.HandlingDB, 20},
-		{&l.NoiseFloorDB, 6}, {&l.DelayUS, 6}, {&l.DriftPPM, 0.5}, {&l.ScalePct, 2}, {&l.CoherenceLoss, 0.25},
-	} {
-		if *v.field == 0 {
-			*v.field = v.def
+	return l.Over(Limits{DeadDB: 35, SilentDBFS: -110, LevelDB: 1, ClippedShare: 0.0005, DC: 0.002, HumDB: 9, WindShare: 0.25,
+		HandlingDB: 20, NoiseFloorDB: 6, DelayUS: 6, DriftPPM: 0.5, ScalePct: 2, CoherenceLoss: 0.25})
+}
+
+// Over returns l with what is not zero in it, and base elsewhere.
+func (l Limits) Over(base Limits) Limits {
+	out, from := l.fields(), base.fields()
+	for k, v := range out {
+		if *v == 0 {
+			*v = *from[k]
 		}
 	}
 	return l
+}
+
+// fields are the limits in order.
+func (l *Limits) fields() []*float64 {
+	return []*float64{&l.DeadDB, &l.SilentDBFS, &l.LevelDB, &l.ClippedShare, &l.DC, &l.HumDB, &l.WindShare, &l.HandlingDB,
+		&l.NoiseFloorDB, &l.DelayUS, &l.DriftPPM, &l.ScalePct, &l.CoherenceLoss}
 }
 
 // Validate reports every limit that is not a number that can be compared with.

@@ -48,9 +48,13 @@ func newLines(at []rig.Point, rate int) (*lines, error) {
 		l.re = append(l.re, make([]float64, len(order)*(l.to-l.from)))
 		l.im = append(l.im, make([]float64, len(order)*(l.to-l.from)))
 	}
-	var err error
-	l.stft, err = spectral.NewSTFT(len(at), l.size, l.size/2, spectral.Periodic(l.size, spectral.Hann), l.take)
-	return l, err
+	return l, l.begin()
+}
+
+// begin begins a stretch of the take; what does not fill a frame is dropped.
+func (l *lines) begin() (err error) {
+	l.stft, err = spectral.NewSTFT(len(l.power), l.size, l.size/2, spectral.Periodic(l.size, spectral.Hann), l.take)
+	return err
 }
 
 func (l *lines) take(_ int64, s *spectral.Spectra) error {

@@ -96,7 +96,7 @@ type Result struct {
 	Frames   int64
 	Channels []Channel
 	Findings []Finding // errors first
-	Dead     []int     // indices into the microphones given
+	Dead     []int     // indices into the microphones given, in order
 	// Windows is how many stretches of the take could be held against the
 	// geometry, and NotJudged why there are none; empty if there are.
 	Windows   int

@@ -68,6 +68,7 @@ type strip struct {
 	lows        [momentBins]uint32 // of their energy below 80 Hz
 	onsets      [momentBins]uint32 // of sudden low moments
 	moments     int64
+	settling    int // moments to go until the filters have settled after a gap
 	oversampler oversampler
 }
 
@@ -124,11 +125,11 @@ func (s *strip) add(x []float32) {
 		if p := s.oversampler.next(v); p > s.true4 {
 			s.true4 = p
 		}
-		if v == s.last && f > 0 {
+		if v == s.last && s.run > 0 {
 			s.run++
 		} else {
 			d := math.Abs(w - float64(s.last))
-			if f > 0 && d < s.step {
+			if s.run > 0 && d < s.step {
 				s.step = d
 			}
 			if s.run >= least {
@@ -150,6 +151,27 @@ func (s *strip) add(x []float32) {
 			s.endMoment()
 		}
 	}
+}
+
+// addLevel takes samples, all finite, for the level alone.
+func (s *strip) addLevel(x []float32) {
+	for _, v := range x {
+		w := float64(v)
+		s.sum += w
+		s.square += w * w
+		s.peak = max(s.peak, v, -v)
+	}
+	s.frames += int64(len(x))
+}
+
+// gap says that frames are missing before the next sample: what is under way
+// ends, and nothing is compared across.
+func (s *strip) gap() {
+	s.close()
+	s.run, s.lag, s.fullIn = 0, 0, 0
+	s.copyEnd = s.frames + history
+	s.settling = 12
+	s.inMoment, s.mean, s.energy, s.low, s.high = 0, 0, 0, 0, 0
 }
 
 // leastStill is from how many frames on a stretch of equal samples counts: 2 ms.
@@ -217,9 +239,13 @@ func (s *strip) endMoment() {
 	n := float64(s.moment)
 	s.levels[momentBin(s.energy/n)]++
 	low, high := s.low/n, s.high/n
-	s.lows[momentBin(low)]++
+	if s.settling == 0 {
+		s.lows[momentBin(low)]++
+	}
 	// A thump rises below 80 Hz and leaves the sound above 500 Hz as it was.
-	if s.moments > 0 && low > 10*s.before[0] && low > s.before[0]+3*math.Max(0, high-s.before[1]) {
+	if s.settling > 0 {
+		s.settling--
+	} else if s.moments > 0 && low > 10*s.before[0] && low > s.before[0]+3*math.Max(0, high-s.before[1]) {
 		s.onsets[momentBin(low)]++
 	}
 	s.before = [2]float64{low, high}

@@ -63,6 +63,7 @@ type file struct {
 	Air         *airFile    `json:"air,omitempty" jsonschema_description:"The air on site; dry air of 20 °C if absent."`
 	Reference   string      `json:"reference,omitempty" jsonschema:"minLength=1,maxLength=200" jsonschema_description:"centre (the mean of the microphones in use) or the name of a microphone."`
 	HeadingDeg  *float64    `json:"heading_deg,omitempty" jsonschema:"minimum=-360,maximum=360" jsonschema_description:"Compass heading of the rig's +y axis, degrees clockwise from true north."`
+	Limits      *Limits     `json:"limits,omitempty" jsonschema_description:"From where on something about a take is a finding; a negative number turns a check off."`
 	Microphones []micFile   `json:"microphones,omitempty" jsonschema:"minItems=1,maxItems=256" jsonschema_description:"The microphones, one by one. Exactly one of microphones, positions, line, ring, grid and spiral is given."`
 	Positions   string      `json:"positions,omitempty" jsonschema:"minLength=1,maxLength=1000" jsonschema_description:"A CSV file with the columns name, channel, x_mm, y_mm, z_mm, and if wanted gain_db, delay_us, polarity, use, sensitivity_mv_pa, clock_ppm."`
 	Line        *lineFile   `json:"line,omitempty" jsonschema_description:"Microphones along x, centred on the origin, channels from -x to +x."`
@@ -161,6 +162,9 @@ type loader struct {
 func (l *loader) rig(name string) *Rig {
 	f := l.file
 	r := &Rig{Name: f.Rig, Reference: CentreReference, HeadingDeg: f.HeadingDeg}
+	if f.Limits != nil {
+		r.Limits = *f.Limits
+	}
 	if r.Name == "" {
 		base := path.Base(strings.ReplaceAll(name, `\`, "/"))
 		r.Name = strings.TrimSuffix(base, path.Ext(base))

@@ -291,7 +291,7 @@ microphones:
 `
 	_, err := Load("r.yaml", []byte(text), nil)
 	const want = `r.yaml:1:12: reference: no microphone is named "M7", want centre or one of A, A, C
-r.yaml:2:1: colour: unknown key, known are air, grid, heading_deg, line, microphones, positions, reference, rig, ring, spiral
+r.yaml:2:1: colour: unknown key, known are air, grid, heading_deg, limits, line, microphones, positions, reference, rig, ring, spiral
 r.yaml:5:12: microphones[1].name: the name "A" is given twice, first in channel 1
 r.yaml:5:24: microphones[1].channel: channel 1 is given twice, first to "A"
 r.yaml:5:34: microphones[1].at_mm: 0 mm from "A", want at least 1 mm (or use: false)

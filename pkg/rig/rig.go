@@ -119,6 +119,26 @@ type Rig struct {
 	Reference  string   // CentreReference or the name of a microphone
 	HeadingDeg *float64 // compass heading of +y, degrees clockwise from true north; nil if not given
 	Mics       []Mic    // in file order
+	Limits     Limits   // of the inspection of takes
+}
+
+// Limits say from where on something about a take of this rig is a finding. A
+// zero field takes the default of package quality; a negative one turns the
+// check off.
+type Limits struct {
+	DeadDB        float64 `json:"dead_db,omitempty" jsonschema:"minimum=-200,maximum=200" jsonschema_description:"a channel this far below the middle one is dead, dB; 35 if absent"`
+	SilentDBFS    float64 `json:"silent_dbfs,omitempty" jsonschema:"minimum=-200,maximum=200" jsonschema_description:"and one below this level whatever the others do, dBFS; -110 if absent"`
+	LevelDB       float64 `json:"level_db,omitempty" jsonschema:"minimum=-200,maximum=200" jsonschema_description:"level against the middle channel, dB; 1 if absent"`
+	ClippedShare  float64 `json:"clipped_share,omitempty" jsonschema:"minimum=-200,maximum=1" jsonschema_description:"share of frames on a flat top; 0.0005 if absent"`
+	DC            float64 `json:"dc,omitempty" jsonschema:"minimum=-200,maximum=1" jsonschema_description:"constant offset, full scale 1; 0.002 if absent"`
+	HumDB         float64 `json:"hum_db,omitempty" jsonschema:"minimum=-200,maximum=200" jsonschema_description:"mains lines above the spectrum around them, dB; 9 if absent"`
+	WindShare     float64 `json:"wind_share,omitempty" jsonschema:"minimum=-200,maximum=1" jsonschema_description:"incoherent part of the power from 20 to 120 Hz; 0.25 if absent"`
+	HandlingDB    float64 `json:"handling_db,omitempty" jsonschema:"minimum=-200,maximum=200" jsonschema_description:"thumps above the middle level below 80 Hz, dB; 20 if absent"`
+	NoiseFloorDB  float64 `json:"noise_floor_db,omitempty" jsonschema:"minimum=-200,maximum=200" jsonschema_description:"quietest moments above those of the middle channel, dB; 6 if absent"`
+	DelayUS       float64 `json:"delay_us,omitempty" jsonschema:"minimum=-200,maximum=100000" jsonschema_description:"a late or early channel, microseconds; 6 if absent"`
+	DriftPPM      float64 `json:"drift_ppm,omitempty" jsonschema:"minimum=-200,maximum=10000" jsonschema_description:"one clock against the others, parts per million; 0.5 if absent"`
+	ScalePct      float64 `json:"scale_pct,omitempty" jsonschema:"minimum=-200,maximum=100" jsonschema_description:"delays against the geometry, per cent; 2 if absent"`
+	CoherenceLoss float64 `json:"coherence_loss,omitempty" jsonschema:"minimum=-200,maximum=1" jsonschema_description:"coherence as a part of the middle channel's; 0.25 if absent"`
 }
 
 // Used returns the indices into Mics of the microphones with Use set.

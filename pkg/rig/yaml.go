@@ -43,6 +43,11 @@ func (r *Rig) Annotated(head []string, note func(m int) string) []byte {
 	if r.HeadingDeg != nil {
 		fmt.Fprintf(&b, "heading_deg: %s\n", numberText(*r.HeadingDeg))
 	}
+	if r.Limits != (Limits{}) {
+		if text, err := json.Marshal(r.Limits); err == nil { // JSON is YAML; numbers marshal
+			fmt.Fprintf(&b, "limits: %s\n", text)
+		}
+	}
 	b.WriteString("microphones:\n")
 	for i, m := range r.Mics {
 		fmt.Fprintf(&b, "  - {name: %s, channel: %d, at_mm: [%s, %s, %s]", quote(m.Name), m.Channel,

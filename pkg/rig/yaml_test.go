@@ -16,6 +16,7 @@ func randomRig(rng *rand.Rand) *Rig {
 	if rng.IntN(2) == 0 {
 		h := 720*rng.Float64() - 360
 		r.HeadingDeg = &h
+		r.Limits = Limits{LevelDB: 1 + rng.Float64(), DC: rng.Float64() / 1e7, SilentDBFS: -90 - rng.Float64()}
 		c := 100*rng.Float64() - 45
 		r.Air.TemperatureC = &c
 	}

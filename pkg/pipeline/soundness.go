@@ -1,0 +1,170 @@
+package pipeline
+
+import (
+	"errors"
+	"fmt"
+	"slices"
+
+	"alidade/pkg/audio"
+	"alidade/pkg/quality"
+	"alidade/pkg/rig"
+)
+
+// What a steer run inspects of a take: stretches of stretchS seconds in the
+// middle of equal parts of it, a tenth of its length in all, but at least
+// leastInspectedS and at most mostInspectedS. A short take is inspected whole.
+const (
+	stretchS        = 2
+	leastInspectedS = 4
+	mostInspectedS  = 60
+)
+
+// stretches are the frames from..to of a take that are inspected, in order.
+func inspected(frames int64, rate int) [][2]int64 {
+	second := int64(rate)
+	if frames <= leastInspectedS*second {
+		return [][2]int64{{0, frames}}
+	}
+	total := min(max(frames/10, leastInspectedS*second), mostInspectedS*second)
+	count := total / (stretchS * second)
+	var list [][2]int64
+	for k := range count {
+		from := (2*k+1)*frames/(2*count) - stretchS*second/2
+		list = append(list, [2]int64{from, from + stretchS*second})
+	}
+	return list
+}
+
+// limits of the inspection: those of the run over those of the rig.
+func (r *run) limits() quality.Limits {
+	return r.spec.Limits.Over(quality.Limits(r.rig.Limits))
+}
+
+// inspect looks at stretches of the take, as it was recorded, with the used
+// microphones of the rig.
+func (r *run) inspect(stretches [][2]int64, levelsOnly bool) (*quality.Result, error) {
+	var mics []rig.Mic
+	var order []int
+	for _, m := range r.rig.Used() {
+		mics = append(mics, r.rig.Mics[m])
+		order = append(order, r.rig.Mics[m].Channel-1)
+	}
+	h := r.take.header
+	q, err := quality.New(mics, h.Rate, quality.Options{Speed: r.rig.speed, Limits: r.limits(), LevelsOnly: levelsOnly})
+	if err != nil {
+		return nil, &UsageError{Err: err, Hint: "limits stand in the rig file and in the job file"}
+	}
+	var total, at int64
+	for _, s := range stretches {
+		total += s[1] - s[0]
+	}
+	watch := &watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("checking", total)}
+	for _, s := range stretches {
+		if s[0] != at {
+			if err := r.take.reader.SeekFrame(s[0]); err != nil {
+				return nil, fmt.Errorf("%s: %w", r.take.path(), err)
+			}
+			if err := q.Gap(s[0] - at); err != nil {
+				return nil, err
+			}
+		}
+		at = s[1]
+		src, err := audio.Map(audio.Section(watch, 0, s[1]-s[0]), order, nil)
+		if err != nil {
+			return nil, err
+		}
+		if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, h.Channels), q); err != nil {
+			return nil, err
+		}
+	}
+	if err := q.Close(); err != nil {
+		return nil, err
+	}
+	return q.Result(), nil
+}
+
+// sound inspects the take before it is steered, leaves dead microphones out of
+// the beam and reports the rest. With --no-measure nothing but the levels is
+// looked at, for dead channels.
+func (r *run) sound() error {
+	h := r.take.header
+	if r.set.NoMeasure && r.set.KeepDead {
+		return nil
+	}
+	found, err := r.inspect(inspected(h.Frames, h.Rate), r.set.NoMeasure)
+	if err != nil {
+		return err
+	}
+	if err := r.take.rewind(); err != nil {
+		return err
+	}
+	r.checked = found
+	used := r.rig.Used()
+	alive := len(used) - len(found.Dead)
+	silence := alive == 0
+	if !r.set.KeepDead && len(found.Dead) > 0 && !silence {
+		if alive < 2 {
+			return &HintedError{
+				Err:  fmt.Errorf("%s: %d of %d microphones hold sound: a beam needs two", r.take.path(), alive, len(used)),
+				Hint: "look at cables, plugs and power; --keep-dead steers with all of them all the same",
+			}
+		}
+		for _, k := range found.Dead {
+			r.left = append(r.left, used[k])
+		}
+		r.rig = r.rig.without(r.left)
+	}
+	for _, f := range found.Findings {
+		g := Finding{Code: f.Code, Severity: Severity(f.Severity), Message: f.Message(), Channels: f.Channels}
+		if f.Code == quality.CodeDead {
+			// What was mended is no error any more, and what is asked for none either.
+			g.Severity = Warning
+			switch {
+			case silence:
+				continue // channel-silent says it of the whole take
+			case r.set.KeepDead:
+				g.Message = f.Measured + ", and is still part of the beam (--keep-dead)"
+			default:
+				g.Message = f.Measured + ", and was left out of the beam: look at its cable, plug and power (--keep-dead steers with it all the same)"
+			}
+		}
+		r.report(g)
+	}
+	return nil
+}
+
+// ofThoseLeft is an error of a beam: of the options, unless microphones were left
+// out on the way, which is the take's affair.
+func (r *run) ofThoseLeft(err error) error {
+	var usage *UsageError
+	if len(r.left) == 0 || !errors.As(err, &usage) {
+		return err
+	}
+	return &HintedError{
+		Err:  fmt.Errorf("%s: without its dead microphones: %w", r.take.path(), usage.Err),
+		Hint: "mend the microphones, or --keep-dead steers with all of them",
+	}
+}
+
+// deadChannels are the channels that the inspection found dead.
+func (r *run) deadChannels() (list []int) {
+	if r.checked == nil {
+		return nil
+	}
+	for _, k := range r.checked.Dead {
+		list = append(list, r.checked.Channels[k].Channel)
+	}
+	return list
+}
+
+// flagsOf are what the inspection found on a channel.
+func (r *run) flagsOf(channel int) []string {
+	if r.checked != nil {
+		for _, c := range r.checked.Channels {
+			if c.Channel == channel {
+				return slices.Clone(c.Flags)
+			}
+		}
+	}
+	return nil
+}
