@@ -16,6 +16,7 @@ const calibrateHelp = `alidade calibrate: a rig file whose channels agree, from 
 Usage
   alidade calibrate TAKE --rig RIG --toward AZ[,EL] [OPTIONS]
   alidade calibrate TAKE --rig RIG --focus X,Y,Z [OPTIONS]
+  alidade calibrate TAKE... --rig RIG --positions [OPTIONS]
 
 Example
   $ alidade calibrate roof_07.wav --rig roof.yaml --toward 141 --excerpt 0..3
@@ -57,6 +58,19 @@ How well the circumstances are known (standard uncertainties)
   --pressure-kpa KPA                air pressure
   --speed-of-sound MS               in m/s, in place of the three above
 
+Places of the microphones, from sounds of unknown directions
+  --positions            find them from claps all around, above and below, in
+                         one take or several; gains and delays stay as they
+                         are, and should be calibrated before. With --sound
+                         steady each take is one sound from one direction
+  --elevations DEG[,DEG...]
+                         elevation of all sounds, or of each in order of
+                         takes and time: without it a flat rig or a line is
+                         found in part only, and the rest is named
+  --elevation-uncertainty-deg DEG   of those (2)
+  --delay-uncertainty-us US         of the channels' delays (2)
+  --distance-m M and --placement-uncertainty-mm MM (20 here) hold too
+
 What is written
   --relative-to NAME     this microphone keeps its corrections; without it
                          the mean of all stays as it was
@@ -77,17 +91,18 @@ func calibrateVerb() verb {
 		help: calibrateHelp,
 		flags: func() []cli.Flag {
 			var flags []cli.Flag
-			for _, name := range []string{"rig", "toward", "focus", "sound", "excerpt", "relative-to", "keep", "out"} {
+			for _, name := range []string{"rig", "toward", "focus", "elevations", "sound", "excerpt", "relative-to", "keep", "out"} {
 				flags = append(flags, &cli.StringFlag{Name: name})
 			}
 			for _, name := range []string{
 				"distance-m", "from-hz", "to-hz", "max-delay-us", "direction-uncertainty-deg", "distance-uncertainty-m",
 				"focus-uncertainty-mm", "temperature-uncertainty-c", "placement-uncertainty-mm",
+				"elevation-uncertainty-deg", "delay-uncertainty-us",
 				"temperature-c", "humidity-pct", "pressure-kpa", "speed-of-sound",
 			} {
 				flags = append(flags, &cli.Float64Flag{Name: name})
 			}
-			for _, name := range []string{"chain", "set", "find-chain", "find-set", "overwrite", "json", "quiet"} {
+			for _, name := range []string{"chain", "set", "find-chain", "find-set", "positions", "overwrite", "json", "quiet"} {
 				flags = append(flags, &cli.BoolFlag{Name: name})
 			}
 			return flags
@@ -111,6 +126,8 @@ func calibrateOptions(c *cli.Context) pipeline.CalibrateOptions {
 		Excerpt:         c.String("excerpt"),
 		DirectionStdDeg: number("direction-uncertainty-deg"), FocusStdMM: number("focus-uncertainty-mm"), DistanceStdM: number("distance-uncertainty-m"),
 		TemperatureStdC: number("temperature-uncertainty-c"), PlacementStdMM: number("placement-uncertainty-mm"),
+		Positions: c.Bool("positions"), Elevations: c.String("elevations"),
+		ElevationStdDeg: number("elevation-uncertainty-deg"), DelayStdUS: number("delay-uncertainty-us"),
 		RelativeTo: c.String("relative-to"), Keep: c.String("keep"),
 		TemperatureC: number("temperature-c"), HumidityPct: number("humidity-pct"), PressureKPa: number("pressure-kpa"), SpeedOfSound: number("speed-of-sound"),
 		Chain: c.Bool("chain"), FindChain: c.Bool("find-chain"), FindSet: c.Bool("find-set"),
@@ -126,8 +143,8 @@ func runCalibrate(u *ui, c *cli.Context) error {
 	switch {
 	case len(files) == 0:
 		fault("no take: name a WAV file")
-	case len(files) > 1 && !oneTake(c):
-		fault("%d takes, want one (several files of one take: --chain or --set)", len(files))
+	case len(files) > 1 && !oneTake(c) && !options.Positions:
+		fault("%d takes, want one (several files of one take: --chain or --set; several takes: --positions)", len(files))
 	}
 	if !c.IsSet("rig") {
 		fault("no rig: give --rig FILE")
@@ -145,6 +162,12 @@ func runCalibrate(u *ui, c *cli.Context) error {
 	}
 	progress := u.progress(c.Bool("quiet"))
 	spec := pipeline.CalibrateSpec{Take: files, RigPath: c.String("rig"), Options: options, Version: version}
+	if !oneTake(c) {
+		spec.Take = files[:1]
+		for _, file := range files[1:] {
+			spec.More = append(spec.More, []string{file})
+		}
+	}
 	result, err := pipeline.Calibrate(c.Context, spec, pipeline.Watch{Progress: progress.step})
 	progress.finish()
 	if err != nil {

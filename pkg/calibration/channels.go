@@ -30,6 +30,7 @@ type Options struct {
 	// MaxDelay is the largest error of a delay that is looked for, seconds; 0
 	// means 1 ms.
 	MaxDelay float64
+	anywhere bool // the direction is not known
 	// Responses asks for the channels' differences over frequency too.
 	Responses bool
 }
@@ -228,6 +229,9 @@ func (r *Relative) gather(f *factor, e *Expected, late []float64, known []rig.Mi
 	}
 	if err := r.reliable(f); err != nil {
 		return err
+	}
+	if o.anywhere {
+		return nil
 	}
 	if err := r.direction(f.heard, e, known); err != nil {
 		return err

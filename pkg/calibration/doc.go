@@ -1,5 +1,7 @@
 // Package calibration finds what makes the channels of a rig agree: gain, delay
-// and polarity of each against the others, from a take of one known sound.
+// and polarity of each against the others, from a take of one known sound
+// (Channels), and the places of its microphones from sounds of unknown
+// directions (Arrivals, Locate).
 //
 // # Conventions
 //
@@ -29,6 +31,17 @@
 // direction, distance and speed of sound makes of the expected arrivals; and
 // the doubt about each microphone's place.
 //
+// Places are found together with the directions of the sounds: maximum a
+// posteriori, Gauss and Newton's method with the rig file's places as prior,
+// started from these and from the factorisation of the matrix of arrivals
+// [Thrun 2005], whichever fits better. The information of the arrivals about the
+// places, directions and times taken out, says what is observable: a way of
+// moving microphones counts where the arrivals know it twice as well as the
+// prior. Shift and turn never are, from unknown directions. Where the arrivals
+// show a line or a plane and nothing is known of elevations, directions have no
+// length that would settle the scale: places are then found along the line or
+// plane alone, but for a linear map, and all else is left as it was.
+//
 // # Limits
 //
 // Microphones are omnidirectional in a free field. In a room a steady sound's
@@ -46,6 +59,10 @@
 //	found, err := calibration.Channels(open, e, mics, calibration.Options{})
 //	// mic.GainDB = -found.Channels[m].LevelDB, mic.Delay = -found.Channels[m].Late
 //
+// Longer than 2,000 lines because channels and places rest on one way of
+// listening, one model of arrivals and one small dense algebra, which would
+// otherwise have to be exported.
+//
 // # Sources
 //
 // [Knapp & Carter 1976] C. H. Knapp, G. C. Carter, The generalized correlation
@@ -61,6 +78,20 @@
 //
 // [Welch 1967] P. D. Welch, The use of fast Fourier transform for the estimation
 // of power spectra, IEEE Trans. Audio Electroacoust. 15, p. 70.
+//
+// [Thrun 2005] S. Thrun, Affine structure from sound, Advances in Neural
+// Information Processing Systems 18, p. 1353: the factorisation of arrivals of
+// far sounds into places and directions.
+//
+// [Marchenko & Pastur 1967] V. A. Marchenko, L. A. Pastur, Distribution of
+// eigenvalues for some sets of random matrices, Math. USSR Sbornik 1, p. 457:
+// how far the eigenvalues of noise reach.
+//
+// [Schönemann 1966] P. H. Schönemann, A generalized solution of the orthogonal
+// Procrustes problem, Psychometrika 31, p. 1.
+//
+// [Huber 1964] P. J. Huber, Robust estimation of a location parameter, Ann. Math.
+// Statist. 35, p. 73.
 //
 // [JCGM 100:2008] Guide to the expression of uncertainty in measurement, 5.1 and
 // 6.2.

@@ -19,11 +19,15 @@ import (
 
 // CalibrateSpec is a calibration to be carried out.
 type CalibrateSpec struct {
-	Take    []string // files of the take, as in Spec
+	Take    []string        // files of the take, as in Spec
+	More    []CalibrateTake // further takes, for positions
 	RigPath string
 	Options CalibrateOptions
 	Version string
 }
+
+// CalibrateTake are the files of one more take.
+type CalibrateTake []string
 
 // calibrating is one calibration on its way.
 type calibrating struct {
@@ -58,21 +62,32 @@ func Calibrate(ctx context.Context, spec CalibrateSpec, watch Watch) (res *Calib
 			res = nil
 		}
 	}()
-	if err := c.open(spec.Take); err != nil {
-		return nil, err
+	if len(spec.More) > 0 && !set.Positions {
+		return nil, &UsageError{Err: fmt.Errorf("%d takes, want one: only --positions listens to several", 1+len(spec.More))}
+	}
+	for _, files := range append([]CalibrateTake{spec.Take}, spec.More...) {
+		if err := c.open(files); err != nil {
+			return nil, err
+		}
 	}
 	c.res = &Calibration{
 		Schema: CalibrationSchema, Version: spec.Version, Kind: CalibratedChannels,
 		Rig: c.rig.summary(), Findings: []Finding{}, Microphones: []CalibratedMic{},
 	}
-	e, err := c.expect()
-	if err != nil {
-		return nil, err
+	kind := c.places
+	if set.Positions {
+		c.res.Kind = CalibratedPositions
+	} else {
+		e, err := c.expect()
+		if err != nil {
+			return nil, err
+		}
+		kind = func() (*rig.Rig, []string, error) { return c.channels(e) }
 	}
 	if err := c.name(); err != nil {
 		return nil, err
 	}
-	changed, notes, err := c.channels(e)
+	changed, notes, err := kind()
 	if err != nil {
 		return nil, c.explained(err)
 	}
@@ -160,6 +175,15 @@ func (c *calibrating) raw(t *take, stage string) (func() (audio.Source, error), 
 	}, nil
 }
 
+// used returns the used microphones and their indices.
+func (c *calibrating) used() (used []int, mics []rig.Mic) {
+	used = c.rig.Used()
+	for _, m := range used {
+		mics = append(mics, c.rig.Mics[m])
+	}
+	return used, mics
+}
+
 // or returns the value of a number, or what stands for none.
 func or(v *float64, def float64) float64 {
 	if v == nil {
@@ -221,11 +245,7 @@ func (c *calibrating) channels(e *calibration.Expected) (*rig.Rig, []string, err
 	if err != nil {
 		return nil, nil, err
 	}
-	used := c.rig.Used()
-	var mics []rig.Mic
-	for _, m := range used {
-		mics = append(mics, c.rig.Mics[m])
-	}
+	used, mics := c.used()
 	if to := c.set.ToHz; to > 0.45*float64(t.header.Rate) {
 		return nil, nil, &UsageError{Err: fmt.Errorf("--to-hz %g: above 0.45 of the take's rate of %d Hz", to, t.header.Rate)}
 	}
@@ -402,6 +422,10 @@ func (c *calibrating) head() []string {
 		}
 		lines = append(lines, fmt.Sprintf("Sound from %s (standard uncertainty %.2f°), air %s (%.1f °C), microphones within %.2f mm.",
 			where, s.DirectionStdDeg, acoustics.Air.String(c.rig.air), s.TemperatureStdC, s.PlacementStdMM))
+	}
+	if s := c.res.Survey; s != nil {
+		lines = append(lines, fmt.Sprintf("Places from %d sounds, arrivals within %.2f µs (%.2f µs before); not observable: %s.",
+			len(s.Sounds), s.ResidualUS, s.ResidualBeforeUS, strings.Join(s.Unobservable, ", ")))
 	}
 	return append(lines, "Old values stand behind each microphone; ± is twice the standard uncertainty.")
 }

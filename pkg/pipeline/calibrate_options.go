@@ -31,6 +31,9 @@ const (
 	DefaultFocusStdMM      = 10.0
 	DefaultTemperatureStdC = 1.0
 	DefaultPlacementStdMM  = 0.5
+	DefaultSurveyStdMM     = 20.0 // of places that are to be found
+	DefaultElevationStdDeg = 2.0
+	DefaultDelayStdUS      = 2.0
 )
 
 // CalibrateOptions are the options of a calibration, in the words of the
@@ -55,6 +58,13 @@ type CalibrateOptions struct {
 	RelativeTo      string   `json:"relative_to,omitempty"`               // mean (default) or a microphone's name
 	Keep            string   `json:"keep,omitempty"`                      // of gain,delay,polarity: what stays as it is
 
+	// Positions finds the places of the microphones from sounds of unknown
+	// directions instead.
+	Positions       bool     `json:"positions,omitempty"`
+	Elevations      string   `json:"elevations,omitempty"`                // of the sounds, degrees: one, or one for each
+	ElevationStdDeg *float64 `json:"elevation_uncertainty_deg,omitempty"` // nil is 2
+	DelayStdUS      *float64 `json:"delay_uncertainty_us,omitempty"`      // of the channels' delays; nil is 2
+
 	TemperatureC *float64 `json:"temperature_c,omitempty"`
 	HumidityPct  *float64 `json:"humidity_pct,omitempty"`
 	PressureKPa  *float64 `json:"pressure_kpa,omitempty"`
@@ -75,6 +85,7 @@ type calibrateSettings struct {
 	point     *rig.Point
 	excerpt   *Stretch
 	keep      []string
+	elevation []float64 // degrees
 }
 
 // shared are the options that a steered run has too.
@@ -92,6 +103,8 @@ func (o CalibrateOptions) resolve() (*calibrateSettings, error) {
 	var faults []error
 	fault := func(format string, args ...any) { faults = append(faults, fmt.Errorf(format, args...)) }
 	switch {
+	case o.Positions:
+		s.resolvePositions(fault)
 	case o.Toward == "" && o.Focus == "":
 		fault("no direction: give --toward AZ[,EL] or --focus X,Y,Z of the sound")
 	case o.Toward != "" && o.Focus != "":
@@ -118,8 +131,14 @@ func (o CalibrateOptions) resolve() (*calibrateSettings, error) {
 	if o.DistanceStdM != nil && o.DistanceM == 0 {
 		fault("--distance-uncertainty-m without --distance-m: a far source has no distance")
 	}
+	if !o.Positions && (o.Elevations != "" || o.ElevationStdDeg != nil || o.DelayStdUS != nil) {
+		fault("--elevations, --elevation-uncertainty-deg and --delay-uncertainty-us belong to --positions")
+	}
 	if s.Sound == "" {
 		s.Sound = SoundSteady
+		if o.Positions {
+			s.Sound = SoundClaps
+		}
 	}
 	if s.Sound != SoundSteady && s.Sound != SoundClaps {
 		fault("--sound %q: want %s or %s", s.Sound, SoundSteady, SoundClaps)
@@ -150,6 +169,8 @@ func (o CalibrateOptions) resolve() (*calibrateSettings, error) {
 	inRange("distance-uncertainty-m", o.DistanceStdM, 0, 10000, "m")
 	inRange("temperature-uncertainty-c", o.TemperatureStdC, 0, 30, "°C")
 	inRange("placement-uncertainty-mm", o.PlacementStdMM, 0, 1000, "mm")
+	inRange("elevation-uncertainty-deg", o.ElevationStdDeg, 0.01, 45, "degrees")
+	inRange("delay-uncertainty-us", o.DelayStdUS, 0.01, 1000, "µs")
 	inRange("speed-of-sound", o.SpeedOfSound, 100, 2000, "m/s")
 	if o.SpeedOfSound != nil && (o.TemperatureC != nil || o.HumidityPct != nil || o.PressureKPa != nil) {
 		fault("--speed-of-sound with air options: the one makes the others void")
@@ -184,6 +205,44 @@ func (o CalibrateOptions) resolve() (*calibrateSettings, error) {
 		return nil, &UsageError{Err: errors.Join(faults...)}
 	}
 	return s, nil
+}
+
+// resolvePositions reads the options of a survey.
+func (s *calibrateSettings) resolvePositions(fault func(format string, args ...any)) {
+	o := s.CalibrateOptions
+	if o.Toward != "" || o.Focus != "" {
+		fault("--positions with --toward or --focus: places are found from sounds whose directions are not known (--elevations says what is)")
+	}
+	for _, given := range []struct {
+		option string
+		is     bool
+	}{
+		{"keep", o.Keep != ""}, {"relative-to", o.RelativeTo != ""}, {"max-delay-us", o.MaxDelayUS != 0}, {"direction-uncertainty-deg", o.DirectionStdDeg != nil},
+		{"focus-uncertainty-mm", o.FocusStdMM != nil}, {"distance-uncertainty-m", o.DistanceStdM != nil},
+	} {
+		if given.is {
+			fault("--%s with --positions: gains, delays and polarities stay as they are", given.option)
+		}
+	}
+	if o.PlacementStdMM != nil && *o.PlacementStdMM < 0.01 {
+		fault("--placement-uncertainty-mm %g: places so certain need not be found", *o.PlacementStdMM)
+	}
+	if o.Elevations == "" {
+		if o.ElevationStdDeg != nil {
+			fault("--elevation-uncertainty-deg without --elevations")
+		}
+		return
+	}
+	list, err := parseNumbers(o.Elevations, 1, 1000)
+	if err != nil {
+		fault("--elevations %q: %w", o.Elevations, err)
+	}
+	for _, v := range list {
+		if !(v >= -90 && v <= 90) {
+			fault("--elevations %q: %g is outside -90 to 90", o.Elevations, v)
+		}
+	}
+	s.elevation = list
 }
 
 // Validate reports everything that is wrong with the options that can be seen

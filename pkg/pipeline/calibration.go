@@ -21,6 +21,7 @@ type Calibration struct {
 	Rig         RigSummary         `json:"rig"` // as it was
 	Source      *CalibrationSource `json:"source,omitempty"`
 	Heard       *Listening         `json:"heard,omitempty"`
+	Survey      *Survey            `json:"survey,omitempty"` // of positions
 	Microphones []CalibratedMic    `json:"microphones"`
 	Findings    []Finding          `json:"findings"`
 	Output      CalibrationOutput  `json:"output"`
@@ -75,6 +76,45 @@ type CalibratedMic struct {
 	PolarityBefore string `json:"polarity_before"`
 	Polarity       string `json:"polarity"`
 	SNRDB          Number `json:"snr_db,omitempty"`
+
+	// Of positions: millimetres. The uncertainty is that of the rig's shape,
+	// shift and turn of the whole left out.
+	AtBeforeMM      *[3]float64 `json:"at_before_mm,omitempty"`
+	AtMM            *[3]float64 `json:"at_mm,omitempty"`
+	MovedMM         Number      `json:"moved_mm,omitempty"`
+	AtUncertaintyMM *[3]float64 `json:"at_uncertainty_mm,omitempty"`
+}
+
+// Survey is what places were found from.
+type Survey struct {
+	Sounds           []SurveySound `json:"sounds"`
+	ResidualUS       float64       `json:"residual_us"`        // root mean square
+	ResidualBeforeUS float64       `json:"residual_before_us"` // with the places as they were
+	ChiSquared       Number        `json:"chi_squared"`        // of the residuals, a degree of freedom
+	Outliers         int           `json:"outliers"`           // arrivals that were given less weight
+	Dimensions       int           `json:"dimensions"`         // of the rig, as far as the arrivals show: 1, 2 or 3
+	Affine           bool          `json:"affine"`             // found but for a linear map, which the old rig file settles
+	Observable       int           `json:"observable"`         // ways to move microphones that the arrivals determine
+	Ways             int           `json:"ways"`               // of so many
+	Modes            []SurveyMode  `json:"modes"`
+	Unobservable     []string      `json:"unobservable"`
+	PlacementStdMM   float64       `json:"placement_uncertainty_mm"`
+	DelayStdUS       float64       `json:"delay_uncertainty_us"`
+}
+
+// SurveySound is one sound of a survey.
+type SurveySound struct {
+	Take         string  `json:"take"`
+	AtS          float64 `json:"at_s"`
+	AzimuthDeg   float64 `json:"azimuth_deg"`
+	ElevationDeg float64 `json:"elevation_deg"`
+}
+
+// SurveyMode is a way in which microphones can move together, and the share of
+// it that the arrivals determine.
+type SurveyMode struct {
+	Name  string  `json:"name"`
+	Known float64 `json:"known"`
 }
 
 // CalibrationOutput is the rig file that was written.

@@ -22,7 +22,11 @@ func Calibration(w io.Writer, c *pipeline.Calibration, width int) error {
 	width = max(width, 60)
 	lines := wrap(calibrationBasis(c), width, "", 4)
 	lines = append(lines, calibrationTable(c, width)...)
-	lines = append(lines, "± is twice the standard uncertainty (k = 2, about 95 %)")
+	note := "± is twice the standard uncertainty (k = 2, about 95 %)"
+	if c.Survey != nil {
+		note += "; shift and turn of the whole rig are in none of them"
+	}
+	lines = append(lines, wrap(note, width, "  ", 2)...)
 	for _, f := range c.Findings {
 		lines = append(lines, wrap(string(f.Severity)+": "+clean(f.Message), width, "  ", 6)...)
 	}
@@ -34,6 +38,10 @@ func Calibration(w io.Writer, c *pipeline.Calibration, width int) error {
 // calibrationBasis says in words what was listened to.
 func calibrationBasis(c *pipeline.Calibration) string {
 	s, h := c.Source, c.Heard
+	if v := c.Survey; v != nil {
+		return fmt.Sprintf("%s: places of %d microphones from %d sounds: arrivals are %s µs off, %s µs with the places before; of %d ways to move microphones the sounds determine %d",
+			clean(c.Rig.Name), c.Rig.MicrophonesUsed, len(v.Sounds), decimals(v.ResidualUS, 2), decimals(v.ResidualBeforeUS, 2), v.Ways, v.Observable)
+	}
 	if s == nil || h == nil {
 		return ""
 	}
@@ -64,6 +72,24 @@ func calibrationTable(c *pipeline.Calibration, width int) []string {
 		}
 		return "± " + decimals(*v, n)
 	}
+	if c.Survey != nil {
+		t.AppendHeader(table.Row{"ch", "name", "x, mm", "", "y, mm", "", "z, mm", "", "moved, mm"})
+		right = append(right, 3, 4, 5, 6, 7, 8, 9)
+		for _, m := range c.Microphones {
+			row := table.Row{m.Channel, cut(clean(m.Name), 12)}
+			if m.AtMM == nil || m.AtUncertaintyMM == nil {
+				for range 6 {
+					row = append(row, "–")
+				}
+			} else {
+				for k, v := range m.AtMM {
+					row = append(row, decimals(v, 1), "± "+decimals(m.AtUncertaintyMM[k], 1))
+				}
+			}
+			t.AppendRow(append(row, levelText(m.MovedMM)))
+		}
+		return calibrationLines(t, right, width)
+	}
 	t.AppendHeader(table.Row{"ch", "name", "gain, dB", "was", "", "delay, µs", "was", "", "polarity"})
 	right = append(right, 3, 4, 5, 6, 7, 8)
 	for _, m := range c.Microphones {
@@ -80,6 +106,11 @@ func calibrationTable(c *pipeline.Calibration, width int) []string {
 			decimals(m.GainDB, 2), decimals(m.GainBeforeDB, 2), plusMinus(m.GainUncertaintyDB, 2),
 			decimals(m.DelayUS, 1), decimals(m.DelayBeforeUS, 1), plusMinus(m.DelayUncertaintyUS, 1), polarity})
 	}
+	return calibrationLines(t, right, width)
+}
+
+// calibrationLines renders a table with some columns to the right.
+func calibrationLines(t table.Writer, right []int, width int) []string {
 	var configs []table.ColumnConfig
 	for _, column := range right {
 		configs = append(configs, table.ColumnConfig{Number: column, Align: text.AlignRight, AlignHeader: text.AlignRight})
