@@ -5,6 +5,7 @@ import (
 	"math"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 	"alidade/pkg/spectral"
 )
 
@@ -148,10 +149,7 @@ func (c *Covariance) add() {
 		for n := range m + 1 {
 			sumRe, sumIm := c.sumRe[pair*bins:(pair+1)*bins], c.sumIm[pair*bins:(pair+1)*bins]
 			ar, ai, br, bi := c.re[m][:bins], c.im[m][:bins], c.re[n][:bins], c.im[n][:bins]
-			for k := range sumRe {
-				sumRe[k] = c.keep*sumRe[k] + ar[k]*br[k] + ai[k]*bi[k]
-				sumIm[k] = c.keep*sumIm[k] + ai[k]*br[k] - ar[k]*bi[k]
-			}
+			kernel.AddCross(sumRe, sumIm, ar, ai, br, bi, nil, c.keep)
 			pair++
 		}
 	}

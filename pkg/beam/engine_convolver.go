@@ -5,16 +5,21 @@ import (
 	"alidade/pkg/kernel"
 )
 
-// convolverHop is how many frames a convolver computes at once, such that the
-// parts of a microphone's signal and their sums stay in the first-level cache.
-const convolverHop = 2048
+// convolverHop and phasesHop are how many frames a convolver computes at once
+// with the plain kernels and with vectors, such that the parts of a microphone's
+// signal and their sums stay in the first-level cache.
+const (
+	convolverHop = 2048
+	phasesHop    = 760
+)
 
 // NewConvolver returns the beam that f makes of src, one channel, by
 // convolution in the time domain. Output frame i is the sound at the reference
 // point at frame i; the length is that of src. It returns an error if f does
 // not fit src.
 //
-// With a vector unit the sums are formed tap by tap. Else three steps of the
+// With a vector unit the sums are formed tap by tap, by the place of a tap modulo
+// eight (kernel.Phases). Else three steps of the
 // fast FIR algorithm [Mou & Duhamel 1991] take the products
 // down to 27/64 of one for each tap and frame: the sums over the microphones are
 // formed between its additions before and after, so that the latter cost once
@@ -25,7 +30,7 @@ func NewConvolver(src audio.Source, f *Filters) (audio.Source, error) {
 		return nil, err
 	}
 	if kernel.Name() != kernel.Plain {
-		return newDirect(src, f), nil
+		return newPhased(src, f), nil
 	}
 	longest := 0
 	for _, h := range f.H {
@@ -78,37 +83,41 @@ func NewConvolver(src audio.Source, f *Filters) (audio.Source, error) {
 	return audio.Hops(src, hop, c.run), nil
 }
 
-// newDirect returns the beam with the sums formed tap by tap.
-func newDirect(src audio.Source, f *Filters) audio.Source {
-	d := &direct{taps: make([][]float32, f.Mics()), from: make([]int, f.Mics())}
-	hop := audio.Hop{Channels: 1, Frames: convolverHop}
+// newPhased returns the beam with the sums formed by the place of a tap modulo
+// eight.
+func newPhased(src audio.Source, f *Filters) audio.Source {
+	p := &phased{taps: make([][]float32, f.Mics()), from: make([]int, f.Mics()), sums: kernel.NewPhases(phasesHop)}
+	hop := audio.Hop{Channels: 1, Frames: phasesHop}
 	for m, h := range f.H {
-		d.taps[m] = make([]float32, len(h))
+		// Reversed, with zeros where still earlier samples would be.
+		n := (len(h) + 7) &^ 7
+		p.taps[m] = make([]float32, n)
 		for t, v := range h {
-			d.taps[m][len(h)-1-t] = float32(v)
+			p.taps[m][n-1-t] = float32(v)
 		}
-		hop.Before = max(hop.Before, f.Start[m]+len(h)-1)
-		hop.After = max(hop.After, -f.Start[m])
+		hop.Before = max(hop.Before, f.Start[m]+n-1)
+		hop.After = max(hop.After, 1-f.Start[m]) // one more than the taps reach
 	}
 	for m, start := range f.Start {
-		d.from[m] = hop.Before - (start + len(f.H[m]) - 1)
+		p.from[m] = hop.Before - (start + len(p.taps[m]) - 1)
 	}
-	return audio.Hops(src, hop, d.run)
+	return audio.Hops(src, hop, p.run)
 }
 
-// direct forms y[i] = Σ_m Σ_t c_m[t]·z_m[i+t] with z_m the window of microphone
+// phased forms y[i] = Σ_m Σ_t c_m[t]·z_m[i+t] with z_m the window of microphone
 // m and c_m its reversed taps.
-type direct struct {
+type phased struct {
 	taps [][]float32
 	from []int // where in the window the earliest sample lies
+	sums *kernel.Phases
 }
 
-func (d *direct) run(out, in audio.Block, _ int64) error {
-	y := out.Channel(0)
-	clear(y)
-	for m, taps := range d.taps {
-		kernel.AddFIR(y, in.Channel(m)[d.from[m]:], taps)
+func (p *phased) run(out, in audio.Block, _ int64) error {
+	p.sums.Clear()
+	for m, taps := range p.taps {
+		p.sums.Add(in.Channel(m)[p.from[m]:], taps)
 	}
+	p.sums.Join(out.Channel(0))
 	return nil
 }
 

@@ -3,6 +3,7 @@ package bearing
 import (
 	"math"
 
+	"alidade/pkg/kernel"
 	"alidade/pkg/spectral"
 )
 
@@ -125,22 +126,8 @@ func (c *crossSum) add(f *frameSpectra, pairs []pairIndex, w []float64) {
 		}
 	}
 	for p, q := range pairs {
-		dr, di := c.re[p*K:p*K+K], c.im[p*K:p*K+K]
-		di = di[:len(dr)]
-		ar, ai := f.re[q.i*K : q.i*K+K][:len(dr)], f.im[q.i*K : q.i*K+K][:len(dr)]
-		br, bi := f.re[q.j*K : q.j*K+K][:len(dr)], f.im[q.j*K : q.j*K+K][:len(dr)]
-		if w == nil {
-			for k := range dr {
-				dr[k] += ar[k]*br[k] + ai[k]*bi[k]
-				di[k] += ai[k]*br[k] - ar[k]*bi[k]
-			}
-			continue
-		}
-		ww := w[:len(dr)]
-		for k := range dr {
-			dr[k] += ww[k] * (ar[k]*br[k] + ai[k]*bi[k])
-			di[k] += ww[k] * (ai[k]*br[k] - ar[k]*bi[k])
-		}
+		at := func(x []float64, m int) []float64 { return x[m*K : m*K+K] }
+		kernel.AddCross(at(c.re, p), at(c.im, p), at(f.re, q.i), at(f.im, q.i), at(f.re, q.j), at(f.im, q.j), w, 1)
 	}
 }
 
@@ -186,9 +173,7 @@ func (f *framer) transform() {
 	scale := 1 / math.Sqrt(0.375*float64(f.size))
 	clear(f.spectra.power)
 	for m, h := range f.hold {
-		for i, v := range h {
-			f.x[i] = v * f.window[i]
-		}
+		kernel.Multiply(f.x, h, f.window)
 		f.fft.Forward(f.re, f.im, f.x)
 		re, im := f.spectra.re[m*K:m*K+K], f.spectra.im[m*K:m*K+K]
 		sum := 0.0

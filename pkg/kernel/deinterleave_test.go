@@ -141,9 +141,8 @@ func TestKernelsDoNotAllocate(t *testing.T) {
 	if a := testing.AllocsPerRun(10, func() { Deinterleave(dst, src, 48, Int24) }); a != 0 {
 		t.Errorf("deinterleave: %g allocations", a)
 	}
-	tw := twiddles[float32](64)
-	rows := Rows(tw)
-	if a := testing.AllocsPerRun(10, func() { FirstStep(dst[0], dst[1], dst[2], dst[3], tw, rows) }); a != 0 {
+	tw := NewTwiddles[float32](64, 1)
+	if a := testing.AllocsPerRun(10, func() { FirstStep(dst[0], dst[1], dst[2], dst[3], tw) }); a != 0 {
 		t.Errorf("first step: %g allocations", a)
 	}
 }

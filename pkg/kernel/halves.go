@@ -9,6 +9,14 @@ import "fmt"
 //	E[k] = (Z[k] + Z*[h-k])/2,  O[k] = (Z[k] - Z*[h-k])/2j,
 //	X[k] = E[k] + (c - js)·O[k],  X[h-k] = (E[k] - (c - js)·O[k])*.
 
+// whole is how many of n values fill registers.
+func whole[T Float](n int) int {
+	if l := lanes[T](); l > 0 && n > 0 {
+		return n / l * l
+	}
+	return 0
+}
+
 // SplitHalves takes Z in re[:h] and im[:h] to X in re and im, of h+1 values, in
 // place; cos and sin are c and s for k = 0..h/2. It panics if lengths do not
 // fit.
@@ -22,8 +30,12 @@ func SplitHalves[T Float](re, im, cos, sin []T) {
 	re[h], im[h] = r-i, 0
 	first := 1
 	// Bins 1 to n and h-1 down to h-n, which must not meet.
-	if n := (h/2 - 1) &^ 7; vectored[T]() && n > 0 {
-		splitHalvesAVX2(at(re), at(im), at(cos), at(sin), h-1, n)
+	if n := whole[T](h/2 - 1); n > 0 {
+		if single[T]() {
+			splitHalvesFloat32AVX2(f32(re), f32(im), f32(cos), f32(sin), h-1, n)
+		} else {
+			splitHalvesFloat64AVX2(f64(re), f64(im), f64(cos), f64(sin), h-1, n)
+		}
 		first += n
 	}
 	for a, b := first, h-first; a <= b; a, b = a+1, b-1 {
@@ -46,8 +58,12 @@ func JoinHalves[T Float](zr, zi, re, im, cos, sin []T) {
 	}
 	zr[0], zi[0] = re[0]+re[h], re[0]-re[h]
 	first := 1
-	if n := (h/2 - 1) &^ 7; vectored[T]() && n > 0 {
-		joinHalvesAVX2(at(zr), at(zi), at(re), at(im), at(cos), at(sin), h-1, n)
+	if n := whole[T](h/2 - 1); n > 0 {
+		if single[T]() {
+			joinHalvesFloat32AVX2(f32(zr), f32(zi), f32(re), f32(im), f32(cos), f32(sin), h-1, n)
+		} else {
+			joinHalvesFloat64AVX2(f64(zr), f64(zi), f64(re), f64(im), f64(cos), f64(sin), h-1, n)
+		}
 		first += n
 	}
 	for a, b := first, h-first; a <= b; a, b = a+1, b-1 {
@@ -66,8 +82,12 @@ func Alternate[T Float](x, zr, zi []T, scale T) {
 	if len(zi) != len(zr) || len(x) != 2*len(zr) {
 		panic(fmt.Sprintf("kernel: %d and %d values into %d", len(zr), len(zi), len(x)))
 	}
-	if n := len(zr) &^ 7; vectored[T]() && n > 0 {
-		alternateAVX2(at(x), at(zr), at(zi), float32(scale), n)
+	if n := whole[T](len(zr)); n > 0 {
+		if single[T]() {
+			alternateFloat32AVX2(f32(x), f32(zr), f32(zi), float32(scale), n)
+		} else {
+			alternateFloat64AVX2(f64(x), f64(zr), f64(zi), float64(scale), n)
+		}
 		x, zr, zi = x[2*n:], zr[n:], zi[n:]
 	}
 	x, zi = x[:2*len(zr)], zi[:len(zr)]

@@ -7,37 +7,24 @@ import (
 	"testing"
 )
 
-// twiddles are those of a step of transforms of size m.
-func twiddles[T Float](m int) []Twiddle[T] {
-	tw := make([]Twiddle[T], m/4)
-	for p := range tw {
-		for q := 1; q <= 3; q++ {
-			s, c := math.Sincos(-2 * math.Pi * float64(q*p) / float64(m))
-			tw[p][2*q-2], tw[p][2*q-1] = T(c), T(s)
-		}
-	}
-	return tw
-}
-
 // steps are the steps of the transform as functions of four slices.
 func steps[T Float](n int) map[string]func(yr, yi, xr, xi []T) {
 	list := map[string]func(yr, yi, xr, xi []T){}
 	if n%4 == 0 {
-		tw := twiddles[T](n)
-		rows := Rows(tw)
-		list["first"] = func(yr, yi, xr, xi []T) { FirstStep(yr, yi, xr, xi, tw, rows) }
+		tw := NewTwiddles[T](n, 1)
+		list["first"] = func(yr, yi, xr, xi []T) { FirstStep(yr, yi, xr, xi, tw) }
 		list["first real"] = func(yr, yi, xr, xi []T) {
 			x := make([]T, 2*n)
 			for i := range xr {
 				x[2*i], x[2*i+1] = xr[i], xi[i]
 			}
-			FirstStepReal(yr, yi, x, tw, rows)
+			FirstStepReal(yr, yi, x, tw)
 		}
 		list["last 4"] = LastStep4[T]
 	}
 	for _, s := range []int{4, 16, 64} {
 		if n%(4*s) == 0 {
-			tw := twiddles[T](n / s)
+			tw := NewTwiddles[T](n/s, s)
 			list[fmt.Sprintf("middle %d", s)] = func(yr, yi, xr, xi []T) { Step(yr, yi, xr, xi, tw) }
 		}
 	}
@@ -90,6 +77,66 @@ func TestStepsOfBothSetsAgree(t *testing.T) {
 			}
 			if e := apart(yr, yi, wr, wi); e > -120 {
 				t.Errorf("%s step of %d: sets differ by %.1f dB", name, n, e)
+			}
+		}
+	}
+}
+
+// The same in double precision, to -280 dB.
+func TestStepsOfBothSetsAgreeInDoublePrecision(t *testing.T) {
+	best := bestSet(t)
+	r := rand.New(rand.NewPCG(15, 1))
+	for _, n := range []int{2, 4, 8, 16, 24, 32, 64, 96, 128, 256, 512, 1024} {
+		for name, step := range steps[float64](n) {
+			var v [4][]float64
+			var ok [4]func() bool
+			for k := range v {
+				v[k], ok[k] = guarded64(r, n)
+			}
+			wr, wi := make([]float64, n), make([]float64, n)
+			under(t, Plain, func() { step(wr, wi, v[2], v[3]) })
+			under(t, best, func() { step(v[0], v[1], v[2], v[3]) })
+			for k := range ok {
+				if !ok[k]() {
+					t.Fatalf("%s step of %d: written outside slice %d", name, n, k)
+				}
+			}
+			for k := range wr {
+				if math.Hypot(v[0][k]-wr[k], v[1][k]-wi[k]) > 1e-14 {
+					t.Fatalf("%s step of %d: value %d is %g%+gj, plain %g%+gj", name, n, k, v[0][k], v[1][k], wr[k], wi[k])
+				}
+			}
+		}
+	}
+	for _, h := range []int{2, 4, 10, 12, 16, 18, 32, 34, 64, 130} {
+		cos, sin := make([]float64, h/2+1), make([]float64, h/2+1)
+		for k := range cos {
+			sin[k], cos[k] = math.Sincos(math.Pi * float64(k) / float64(h))
+		}
+		re, okR := guarded64(r, h+1)
+		im, okI := guarded64(r, h+1)
+		wr, wi := append([]float64(nil), re...), append([]float64(nil), im...)
+		zr, okZR := guarded64(r, h)
+		zi, okZI := guarded64(r, h)
+		vr, vi := make([]float64, h), make([]float64, h)
+		x, okX := guarded64(r, 2*h)
+		under(t, Plain, func() { JoinHalves(vr, vi, re, im, cos, sin); SplitHalves(wr, wi, cos, sin) })
+		under(t, best, func() {
+			JoinHalves(zr, zi, re, im, cos, sin)
+			SplitHalves(re, im, cos, sin)
+			Alternate(x, zr, zi, 0.5)
+		})
+		if !okR() || !okI() || !okZR() || !okZI() || !okX() {
+			t.Fatalf("halves of %d: written outside", h)
+		}
+		for k := range wr {
+			if math.Hypot(re[k]-wr[k], im[k]-wi[k]) > 1e-14 {
+				t.Fatalf("split of %d: bin %d is %g%+gj, plain %g%+gj", h, k, re[k], im[k], wr[k], wi[k])
+			}
+		}
+		for k := range vr {
+			if math.Hypot(zr[k]-vr[k], zi[k]-vi[k]) > 1e-14 || x[2*k] != zr[k]/2 || x[2*k+1] != zi[k]/2 {
+				t.Fatalf("join of %d: value %d is %g%+gj, plain %g%+gj", h, k, zr[k], zi[k], vr[k], vi[k])
 			}
 		}
 	}
@@ -218,20 +265,21 @@ func TestAlternate(t *testing.T) {
 
 func TestStepsRefuseLengthsThatDoNotFit(t *testing.T) {
 	v := func(n int) []float32 { return make([]float32, n) }
-	tw := twiddles[float32](32)
+	first, middle := NewTwiddles[float32](32, 1), NewTwiddles[float32](32, 16)
 	for what, f := range map[string]func(){
-		"first":        func() { FirstStep(v(32), v(32), v(32), v(31), tw, nil) },
-		"first real":   func() { FirstStepReal(v(32), v(32), v(63), tw, nil) },
-		"middle":       func() { Step(v(32), v(32), v(32), v(32), tw[:3]) },
-		"middle empty": func() { Step(v(32), v(32), v(32), v(32), nil) },
-		"middle of 8":  func() { Step(v(256), v(256), v(256), v(256), tw) },
-		"last 2":       func() { LastStep2(v(3), v(3), v(3), v(3)) },
-		"last 4":       func() { LastStep4(v(6), v(6), v(6), v(6)) },
-		"last 8":       func() { LastStep8(v(12), v(12), v(12), v(12)) },
-		"split":        func() { SplitHalves(v(17), v(17), v(8), v(9)) },
-		"split odd":    func() { SplitHalves(v(16), v(16), v(8), v(8)) },
-		"join":         func() { JoinHalves(v(16), v(16), v(16), v(17), v(9), v(9)) },
-		"alternate":    func() { Alternate(v(16), v(8), v(7), 1) },
+		"first":       func() { FirstStep(v(32), v(32), v(32), v(31), first) },
+		"first of 16": func() { FirstStep(v(512), v(512), v(512), v(512), middle) },
+		"first real":  func() { FirstStepReal(v(32), v(32), v(63), first) },
+		"middle":      func() { Step(v(512), v(512), v(512), v(511), middle) },
+		"middle of 8": func() { Step(v(256), v(256), v(256), v(256), NewTwiddles[float32](32, 8)) },
+		"twiddles":    func() { NewTwiddles[float32](6, 1) },
+		"last 2":      func() { LastStep2(v(3), v(3), v(3), v(3)) },
+		"last 4":      func() { LastStep4(v(6), v(6), v(6), v(6)) },
+		"last 8":      func() { LastStep8(v(12), v(12), v(12), v(12)) },
+		"split":       func() { SplitHalves(v(17), v(17), v(8), v(9)) },
+		"split odd":   func() { SplitHalves(v(16), v(16), v(8), v(8)) },
+		"join":        func() { JoinHalves(v(16), v(16), v(16), v(17), v(9), v(9)) },
+		"alternate":   func() { Alternate(v(16), v(8), v(7), 1) },
 	} {
 		func() {
 			defer func() {

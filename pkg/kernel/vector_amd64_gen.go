@@ -14,55 +14,100 @@ func addFIRAVX2(y *float32, n int, x *float32, h *float32, taps int)
 //go:noescape
 func addProductAVX2(sr *float32, si *float32, ar *float32, ai *float32, br *float32, bi *float32, n int)
 
-// firstStepAVX2 is the first step; count is a multiple of 8.
+// firstStepFloat32AVX2 is the first step; count is a multiple of 8.
 //
 //go:noescape
-func firstStepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
+func firstStepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
 
-// firstStepRealAVX2 is the first step of values whose real and imaginary parts alternate; count is a multiple of 8.
+// firstStepRealFloat32AVX2 is the first step of values whose real and imaginary parts alternate; count is a multiple of 8.
 //
 //go:noescape
-func firstStepRealAVX2(yr *float32, yi *float32, x *float32, wide *float32, count int)
+func firstStepRealFloat32AVX2(yr *float32, yi *float32, x *float32, wide *float32, count int)
 
-// secondStepAVX2 is the step of four transforms; count is even.
+// secondStepFloat32AVX2 is the step of four transforms; count is even.
 //
 //go:noescape
-func secondStepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int)
+func secondStepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
 
-// stepAVX2 is a step of s transforms, a multiple of 8.
+// stepFloat32AVX2 is a step of s transforms, a multiple of 8.
 //
 //go:noescape
-func stepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int, s int)
+func stepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int, s int)
 
-// lastStep2AVX2 is the step of radix 2 of s transforms, a multiple of 8.
+// lastStep2Float32AVX2 is the step of radix 2 of s transforms, a multiple of 8.
 //
 //go:noescape
-func lastStep2AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+func lastStep2Float32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
 
-// lastStep4AVX2 is the last step of radix 4 of s transforms, a multiple of 8.
+// lastStep4Float32AVX2 is the last step of radix 4 of s transforms, a multiple of 8.
 //
 //go:noescape
-func lastStep4AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+func lastStep4Float32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
 
-// lastStep8AVX2 is the last step of radix 8 of s transforms, a multiple of 8.
+// lastStep8Float32AVX2 is the last step of radix 8 of s transforms, a multiple of 8.
 //
 //go:noescape
-func lastStep8AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+func lastStep8Float32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
 
-// splitHalvesAVX2 splits n bins from 1 up, n a multiple of 8, and those from last down.
+// splitHalvesFloat32AVX2 splits n bins from 1 up, n a multiple of 8, and those from last down.
 //
 //go:noescape
-func splitHalvesAVX2(re *float32, im *float32, cos *float32, sin *float32, last int, n int)
+func splitHalvesFloat32AVX2(re *float32, im *float32, cos *float32, sin *float32, last int, n int)
 
-// joinHalvesAVX2 joins n bins from 1 up, n a multiple of 8, and those from last down.
+// joinHalvesFloat32AVX2 joins n bins from 1 up, n a multiple of 8, and those from last down.
 //
 //go:noescape
-func joinHalvesAVX2(zr *float32, zi *float32, re *float32, im *float32, cos *float32, sin *float32, last int, n int)
+func joinHalvesFloat32AVX2(zr *float32, zi *float32, re *float32, im *float32, cos *float32, sin *float32, last int, n int)
 
-// alternateAVX2 scales and interleaves n values, n a multiple of 8.
+// alternateFloat32AVX2 scales and interleaves n values, n a multiple of 8.
 //
 //go:noescape
-func alternateAVX2(x *float32, zr *float32, zi *float32, scale float32, n int)
+func alternateFloat32AVX2(x *float32, zr *float32, zi *float32, scale float32, n int)
+
+// firstStepFloat64AVX2 is the first step; count is a multiple of 4.
+//
+//go:noescape
+func firstStepFloat64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, wide *float64, count int)
+
+// firstStepRealFloat64AVX2 is the first step of values whose real and imaginary parts alternate; count is a multiple of 4.
+//
+//go:noescape
+func firstStepRealFloat64AVX2(yr *float64, yi *float64, x *float64, wide *float64, count int)
+
+// stepFloat64AVX2 is a step of s transforms, a multiple of 4.
+//
+//go:noescape
+func stepFloat64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, tw *float64, count int, s int)
+
+// lastStep2Float64AVX2 is the step of radix 2 of s transforms, a multiple of 4.
+//
+//go:noescape
+func lastStep2Float64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, s int)
+
+// lastStep4Float64AVX2 is the last step of radix 4 of s transforms, a multiple of 4.
+//
+//go:noescape
+func lastStep4Float64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, s int)
+
+// lastStep8Float64AVX2 is the last step of radix 8 of s transforms, a multiple of 4.
+//
+//go:noescape
+func lastStep8Float64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, s int)
+
+// splitHalvesFloat64AVX2 splits n bins from 1 up, n a multiple of 4, and those from last down.
+//
+//go:noescape
+func splitHalvesFloat64AVX2(re *float64, im *float64, cos *float64, sin *float64, last int, n int)
+
+// joinHalvesFloat64AVX2 joins n bins from 1 up, n a multiple of 4, and those from last down.
+//
+//go:noescape
+func joinHalvesFloat64AVX2(zr *float64, zi *float64, re *float64, im *float64, cos *float64, sin *float64, last int, n int)
+
+// alternateFloat64AVX2 scales and interleaves n values, n a multiple of 4.
+//
+//go:noescape
+func alternateFloat64AVX2(x *float64, zr *float64, zi *float64, scale float64, n int)
 
 // eightFrom16AVX2 spreads n frames, n a multiple of 8, over the channels at dst.
 //
@@ -103,3 +148,53 @@ func eightFromFloat32AVX2(dst **float32, src *byte, frame int, n int) uint32
 //
 //go:noescape
 func fourFromFloat32AVX2(dst **float32, src *byte, frame int, n int) uint32
+
+// addPhasesAVX2 adds to eight rows, stride values apart, of vectors registers the sums of groups times eight taps.
+//
+//go:noescape
+func addPhasesAVX2(z *float32, stride int, vectors int, x *float32, h *float32, groups int)
+
+// joinPhasesAVX2 adds up eight rows, each one sample on, for n samples, n a multiple of 8.
+//
+//go:noescape
+func joinPhasesAVX2(y *float32, z *float32, stride int, n int)
+
+// dotAVX2 is the scalar product of n values, n a multiple of 32.
+//
+//go:noescape
+func dotAVX2(a *float32, b *float32, n int) float32
+
+// peakAVX2 is the largest magnitude of n values as bits, n a multiple of 32.
+//
+//go:noescape
+func peakAVX2(x *float32, n int) uint32
+
+// addSquaresAVX2 adds n values and their squares to eight sums each, n a multiple of 8.
+//
+//go:noescape
+func addSquaresAVX2(sum *float64, square *float64, x *float32, n int)
+
+// powersAVX2 is p = re² + im² for n values, n a multiple of 8.
+//
+//go:noescape
+func powersAVX2(p *float32, re *float32, im *float32, n int)
+
+// multiplyAVX2 is y = a·b for n values, n a multiple of 8.
+//
+//go:noescape
+func multiplyAVX2(y *float32, a *float32, b *float32, n int)
+
+// quantiseAVX2 scales, clips and rounds n values to even, n a multiple of 8.
+//
+//go:noescape
+func quantiseAVX2(q *int32, x *float32, scale float32, low float32, high float32, n int)
+
+// addCrossAVX2 is s = keep·s + a·b* for n bins, n a multiple of 4.
+//
+//go:noescape
+func addCrossAVX2(sr *float64, si *float64, ar *float64, ai *float64, br *float64, bi *float64, keep float64, n int)
+
+// addWeightedCrossAVX2 is s = keep·s + w·a·b* for n bins, n a multiple of 4.
+//
+//go:noescape
+func addWeightedCrossAVX2(sr *float64, si *float64, ar *float64, ai *float64, br *float64, bi *float64, w *float64, keep float64, n int)

@@ -147,9 +147,9 @@ end:
 	VZEROUPPER
 	RET
 
-// func firstStepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
+// func firstStepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
 // Requires: AVX, FMA3
-TEXT ·firstStepAVX2(SB), NOSPLIT, $0-48
+TEXT ·firstStepFloat32AVX2(SB), NOSPLIT, $0-48
 	MOVQ yr+0(FP), AX
 	MOVQ yi+8(FP), CX
 	MOVQ xr+16(FP), DX
@@ -162,88 +162,88 @@ TEXT ·firstStepAVX2(SB), NOSPLIT, $0-48
 	LEAQ (SI)(R8*4), R10
 
 eight:
-	VMOVUPS      (DX), Y0
-	VMOVUPS      (BX), Y1
-	VMOVUPS      (DX)(R8*2), Y2
-	VMOVUPS      (BX)(R8*2), Y3
-	VADDPS       Y2, Y0, Y4
-	VSUBPS       Y2, Y0, Y0
-	VADDPS       Y3, Y1, Y2
-	VSUBPS       Y3, Y1, Y1
-	VMOVUPS      (DX)(R8*1), Y3
-	VMOVUPS      (BX)(R8*1), Y5
-	VMOVUPS      (DX)(R9*1), Y6
-	VMOVUPS      (BX)(R9*1), Y7
-	VADDPS       Y6, Y3, Y8
-	VSUBPS       Y6, Y3, Y3
-	VADDPS       Y7, Y5, Y6
-	VSUBPS       Y7, Y5, Y5
-	VADDPS       Y8, Y4, Y7
-	VSUBPS       Y8, Y4, Y4
-	VADDPS       Y6, Y2, Y8
-	VSUBPS       Y6, Y2, Y2
-	VADDPS       Y5, Y0, Y6
-	VSUBPS       Y5, Y0, Y0
-	VADDPS       Y3, Y1, Y5
-	VSUBPS       Y3, Y1, Y1
-	VMULPS       (SI)(R8*1), Y6, Y3
-	VFMADD231PS  (SI), Y1, Y3
-	VMULPS       (SI)(R8*1), Y1, Y1
-	VFMSUB132PS  (SI), Y1, Y6
-	VMULPS       (SI)(R9*1), Y4, Y1
-	VFMADD231PS  (SI)(R8*2), Y2, Y1
-	VMULPS       (SI)(R9*1), Y2, Y2
-	VFMSUB132PS  (SI)(R8*2), Y2, Y4
-	VMULPS       (R10)(R8*1), Y0, Y2
-	VFMADD231PS  (R10), Y5, Y2
-	VMULPS       (R10)(R8*1), Y5, Y5
-	VFMSUB132PS  (R10), Y5, Y0
-	VUNPCKLPS    Y6, Y7, Y5
-	VUNPCKLPS    Y0, Y4, Y9
-	VUNPCKHPS    Y6, Y7, Y10
-	VUNPCKHPS    Y0, Y4, Y0
-	VUNPCKLPD    Y9, Y5, Y7
-	VMOVUPS      X7, (AX)
-	VEXTRACTF128 $0x01, Y7, 64(AX)
-	VUNPCKHPD    Y9, Y5, Y6
-	VMOVUPS      X6, 16(AX)
-	VEXTRACTF128 $0x01, Y6, 80(AX)
-	VUNPCKLPD    Y0, Y10, Y4
-	VMOVUPS      X4, 32(AX)
-	VEXTRACTF128 $0x01, Y4, 96(AX)
-	VUNPCKHPD    Y0, Y10, Y0
-	VMOVUPS      X0, 48(AX)
-	VEXTRACTF128 $0x01, Y0, 112(AX)
-	VUNPCKLPS    Y3, Y8, Y0
-	VUNPCKLPS    Y2, Y1, Y4
-	VUNPCKHPS    Y3, Y8, Y5
-	VUNPCKHPS    Y2, Y1, Y2
-	VUNPCKLPD    Y4, Y0, Y8
-	VMOVUPS      X8, (CX)
-	VEXTRACTF128 $0x01, Y8, 64(CX)
-	VUNPCKHPD    Y4, Y0, Y3
-	VMOVUPS      X3, 16(CX)
-	VEXTRACTF128 $0x01, Y3, 80(CX)
-	VUNPCKLPD    Y2, Y5, Y1
-	VMOVUPS      X1, 32(CX)
-	VEXTRACTF128 $0x01, Y1, 96(CX)
-	VUNPCKHPD    Y2, Y5, Y2
-	VMOVUPS      X2, 48(CX)
-	VEXTRACTF128 $0x01, Y2, 112(CX)
-	ADDQ         $0x20, DX
-	ADDQ         $0x20, BX
-	ADDQ         $0x20, SI
-	ADDQ         $0x20, R10
-	ADDQ         $0x80, AX
-	ADDQ         $0x80, CX
-	SUBQ         $0x08, DI
-	JNZ          eight
+	VMOVUPS     (DX), Y0
+	VMOVUPS     (BX), Y1
+	VMOVUPS     (DX)(R8*2), Y2
+	VMOVUPS     (BX)(R8*2), Y3
+	VADDPS      Y2, Y0, Y4
+	VSUBPS      Y2, Y0, Y0
+	VADDPS      Y3, Y1, Y2
+	VSUBPS      Y3, Y1, Y1
+	VMOVUPS     (DX)(R8*1), Y3
+	VMOVUPS     (BX)(R8*1), Y5
+	VMOVUPS     (DX)(R9*1), Y6
+	VMOVUPS     (BX)(R9*1), Y7
+	VADDPS      Y6, Y3, Y8
+	VSUBPS      Y6, Y3, Y3
+	VADDPS      Y7, Y5, Y6
+	VSUBPS      Y7, Y5, Y5
+	VADDPS      Y8, Y4, Y7
+	VSUBPS      Y8, Y4, Y4
+	VADDPS      Y6, Y2, Y8
+	VSUBPS      Y6, Y2, Y2
+	VADDPS      Y5, Y0, Y6
+	VSUBPS      Y5, Y0, Y0
+	VADDPS      Y3, Y1, Y5
+	VSUBPS      Y3, Y1, Y1
+	VMULPS      (SI)(R8*1), Y6, Y3
+	VFMADD231PS (SI), Y1, Y3
+	VMULPS      (SI)(R8*1), Y1, Y1
+	VFMSUB132PS (SI), Y1, Y6
+	VMULPS      (SI)(R9*1), Y4, Y1
+	VFMADD231PS (SI)(R8*2), Y2, Y1
+	VMULPS      (SI)(R9*1), Y2, Y2
+	VFMSUB132PS (SI)(R8*2), Y2, Y4
+	VMULPS      (R10)(R8*1), Y0, Y2
+	VFMADD231PS (R10), Y5, Y2
+	VMULPS      (R10)(R8*1), Y5, Y5
+	VFMSUB132PS (R10), Y5, Y0
+	VUNPCKLPS   Y6, Y7, Y5
+	VUNPCKLPS   Y0, Y4, Y9
+	VUNPCKHPS   Y6, Y7, Y10
+	VUNPCKHPS   Y0, Y4, Y0
+	VUNPCKLPD   Y9, Y5, Y7
+	VUNPCKHPD   Y9, Y5, Y6
+	VUNPCKLPD   Y0, Y10, Y4
+	VUNPCKHPD   Y0, Y10, Y0
+	VINSERTF128 $0x01, X6, Y7, Y5
+	VPERM2F128  $0x31, Y6, Y7, Y7
+	VMOVUPS     Y5, (AX)
+	VMOVUPS     Y7, 64(AX)
+	VINSERTF128 $0x01, X0, Y4, Y5
+	VPERM2F128  $0x31, Y0, Y4, Y4
+	VMOVUPS     Y5, 32(AX)
+	VMOVUPS     Y4, 96(AX)
+	VUNPCKLPS   Y3, Y8, Y0
+	VUNPCKLPS   Y2, Y1, Y4
+	VUNPCKHPS   Y3, Y8, Y5
+	VUNPCKHPS   Y2, Y1, Y2
+	VUNPCKLPD   Y4, Y0, Y8
+	VUNPCKHPD   Y4, Y0, Y3
+	VUNPCKLPD   Y2, Y5, Y1
+	VUNPCKHPD   Y2, Y5, Y2
+	VINSERTF128 $0x01, X3, Y8, Y0
+	VPERM2F128  $0x31, Y3, Y8, Y8
+	VMOVUPS     Y0, (CX)
+	VMOVUPS     Y8, 64(CX)
+	VINSERTF128 $0x01, X2, Y1, Y0
+	VPERM2F128  $0x31, Y2, Y1, Y1
+	VMOVUPS     Y0, 32(CX)
+	VMOVUPS     Y1, 96(CX)
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, SI
+	ADDQ        $0x20, R10
+	ADDQ        $0x80, AX
+	ADDQ        $0x80, CX
+	SUBQ        $0x08, DI
+	JNZ         eight
 	VZEROUPPER
 	RET
 
-// func firstStepRealAVX2(yr *float32, yi *float32, x *float32, wide *float32, count int)
+// func firstStepRealFloat32AVX2(yr *float32, yi *float32, x *float32, wide *float32, count int)
 // Requires: AVX, FMA3
-TEXT ·firstStepRealAVX2(SB), NOSPLIT, $0-40
+TEXT ·firstStepRealFloat32AVX2(SB), NOSPLIT, $0-40
 	MOVQ yr+0(FP), AX
 	MOVQ yi+8(FP), CX
 	MOVQ x+16(FP), DX
@@ -315,33 +315,33 @@ eight:
 	VUNPCKHPS      Y8, Y5, Y10
 	VUNPCKHPS      Y2, Y3, Y2
 	VUNPCKLPD      Y9, Y1, Y5
-	VMOVUPS        X5, (AX)
-	VEXTRACTF128   $0x01, Y5, 64(AX)
 	VUNPCKHPD      Y9, Y1, Y8
-	VMOVUPS        X8, 16(AX)
-	VEXTRACTF128   $0x01, Y8, 80(AX)
 	VUNPCKLPD      Y2, Y10, Y3
-	VMOVUPS        X3, 32(AX)
-	VEXTRACTF128   $0x01, Y3, 96(AX)
 	VUNPCKHPD      Y2, Y10, Y2
-	VMOVUPS        X2, 48(AX)
-	VEXTRACTF128   $0x01, Y2, 112(AX)
+	VINSERTF128    $0x01, X8, Y5, Y1
+	VPERM2F128     $0x31, Y8, Y5, Y5
+	VMOVUPS        Y1, (AX)
+	VMOVUPS        Y5, 64(AX)
+	VINSERTF128    $0x01, X2, Y3, Y1
+	VPERM2F128     $0x31, Y2, Y3, Y3
+	VMOVUPS        Y1, 32(AX)
+	VMOVUPS        Y3, 96(AX)
 	VUNPCKLPS      Y6, Y7, Y1
 	VUNPCKLPS      Y4, Y0, Y2
 	VUNPCKHPS      Y6, Y7, Y3
 	VUNPCKHPS      Y4, Y0, Y4
 	VUNPCKLPD      Y2, Y1, Y7
-	VMOVUPS        X7, (CX)
-	VEXTRACTF128   $0x01, Y7, 64(CX)
 	VUNPCKHPD      Y2, Y1, Y6
-	VMOVUPS        X6, 16(CX)
-	VEXTRACTF128   $0x01, Y6, 80(CX)
 	VUNPCKLPD      Y4, Y3, Y0
-	VMOVUPS        X0, 32(CX)
-	VEXTRACTF128   $0x01, Y0, 96(CX)
 	VUNPCKHPD      Y4, Y3, Y4
-	VMOVUPS        X4, 48(CX)
-	VEXTRACTF128   $0x01, Y4, 112(CX)
+	VINSERTF128    $0x01, X6, Y7, Y1
+	VPERM2F128     $0x31, Y6, Y7, Y7
+	VMOVUPS        Y1, (CX)
+	VMOVUPS        Y7, 64(CX)
+	VINSERTF128    $0x01, X4, Y0, Y1
+	VPERM2F128     $0x31, Y4, Y0, Y0
+	VMOVUPS        Y1, 32(CX)
+	VMOVUPS        Y0, 96(CX)
 	ADDQ           $0x40, DX
 	ADDQ           $0x20, BX
 	ADDQ           $0x20, R9
@@ -352,103 +352,85 @@ eight:
 	VZEROUPPER
 	RET
 
-// func secondStepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int)
+// func secondStepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
 // Requires: AVX, FMA3
-TEXT ·secondStepAVX2(SB), NOSPLIT, $0-48
+TEXT ·secondStepFloat32AVX2(SB), NOSPLIT, $0-48
 	MOVQ yr+0(FP), AX
 	MOVQ yi+8(FP), CX
 	MOVQ xr+16(FP), DX
 	MOVQ xi+24(FP), BX
-	MOVQ tw+32(FP), SI
+	MOVQ wide+32(FP), SI
 	MOVQ count+40(FP), DI
 	MOVQ DI, R8
 	SHLQ $0x04, R8
 	LEAQ (R8)(R8*2), R9
 
 two:
-	VMOVUPS      (DX), Y0
-	VMOVUPS      (BX), Y1
-	VMOVUPS      (DX)(R8*2), Y2
-	VMOVUPS      (BX)(R8*2), Y3
-	VADDPS       Y2, Y0, Y4
-	VSUBPS       Y2, Y0, Y0
-	VADDPS       Y3, Y1, Y2
-	VSUBPS       Y3, Y1, Y1
-	VMOVUPS      (DX)(R8*1), Y3
-	VMOVUPS      (BX)(R8*1), Y5
-	VMOVUPS      (DX)(R9*1), Y6
-	VMOVUPS      (BX)(R9*1), Y7
-	VADDPS       Y6, Y3, Y8
-	VSUBPS       Y6, Y3, Y3
-	VADDPS       Y7, Y5, Y6
-	VSUBPS       Y7, Y5, Y5
-	VADDPS       Y8, Y4, Y7
-	VSUBPS       Y8, Y4, Y4
-	VADDPS       Y6, Y2, Y8
-	VSUBPS       Y6, Y2, Y2
-	VADDPS       Y5, Y0, Y6
-	VSUBPS       Y5, Y0, Y0
-	VADDPS       Y3, Y1, Y5
-	VSUBPS       Y3, Y1, Y1
-	VBROADCASTSS (SI), Y3
-	VBROADCASTSS 24(SI), Y9
-	VBLENDPS     $0xf0, Y9, Y3, Y3
-	VBROADCASTSS 4(SI), Y9
-	VBROADCASTSS 28(SI), Y10
-	VBLENDPS     $0xf0, Y10, Y9, Y9
-	VMULPS       Y9, Y6, Y10
-	VFMADD231PS  Y3, Y1, Y10
-	VMULPS       Y9, Y1, Y1
-	VFMSUB132PS  Y3, Y1, Y6
-	VBROADCASTSS 8(SI), Y1
-	VBROADCASTSS 32(SI), Y3
-	VBLENDPS     $0xf0, Y3, Y1, Y1
-	VBROADCASTSS 12(SI), Y3
-	VBROADCASTSS 36(SI), Y9
-	VBLENDPS     $0xf0, Y9, Y3, Y3
-	VMULPS       Y3, Y4, Y9
-	VFMADD231PS  Y1, Y2, Y9
-	VMULPS       Y3, Y2, Y2
-	VFMSUB132PS  Y1, Y2, Y4
-	VBROADCASTSS 16(SI), Y1
-	VBROADCASTSS 40(SI), Y2
-	VBLENDPS     $0xf0, Y2, Y1, Y1
-	VBROADCASTSS 20(SI), Y2
-	VBROADCASTSS 44(SI), Y3
-	VBLENDPS     $0xf0, Y3, Y2, Y2
-	VMULPS       Y2, Y0, Y3
-	VFMADD231PS  Y1, Y5, Y3
-	VMULPS       Y2, Y5, Y5
-	VFMSUB132PS  Y1, Y5, Y0
-	VMOVUPS      X7, (AX)
-	VEXTRACTF128 $0x01, Y7, 64(AX)
-	VMOVUPS      X8, (CX)
-	VEXTRACTF128 $0x01, Y8, 64(CX)
-	VMOVUPS      X6, 16(AX)
-	VEXTRACTF128 $0x01, Y6, 80(AX)
-	VMOVUPS      X10, 16(CX)
-	VEXTRACTF128 $0x01, Y10, 80(CX)
-	VMOVUPS      X4, 32(AX)
-	VEXTRACTF128 $0x01, Y4, 96(AX)
-	VMOVUPS      X9, 32(CX)
-	VEXTRACTF128 $0x01, Y9, 96(CX)
-	VMOVUPS      X0, 48(AX)
-	VEXTRACTF128 $0x01, Y0, 112(AX)
-	VMOVUPS      X3, 48(CX)
-	VEXTRACTF128 $0x01, Y3, 112(CX)
-	ADDQ         $0x20, DX
-	ADDQ         $0x20, BX
-	ADDQ         $0x80, AX
-	ADDQ         $0x80, CX
-	ADDQ         $0x30, SI
-	SUBQ         $0x02, DI
-	JNZ          two
+	VMOVUPS     (DX), Y0
+	VMOVUPS     (BX), Y1
+	VMOVUPS     (DX)(R8*2), Y2
+	VMOVUPS     (BX)(R8*2), Y3
+	VADDPS      Y2, Y0, Y4
+	VSUBPS      Y2, Y0, Y0
+	VADDPS      Y3, Y1, Y2
+	VSUBPS      Y3, Y1, Y1
+	VMOVUPS     (DX)(R8*1), Y3
+	VMOVUPS     (BX)(R8*1), Y5
+	VMOVUPS     (DX)(R9*1), Y6
+	VMOVUPS     (BX)(R9*1), Y7
+	VADDPS      Y6, Y3, Y8
+	VSUBPS      Y6, Y3, Y3
+	VADDPS      Y7, Y5, Y6
+	VSUBPS      Y7, Y5, Y5
+	VADDPS      Y8, Y4, Y7
+	VSUBPS      Y8, Y4, Y4
+	VADDPS      Y6, Y2, Y8
+	VSUBPS      Y6, Y2, Y2
+	VADDPS      Y5, Y0, Y6
+	VSUBPS      Y5, Y0, Y0
+	VADDPS      Y3, Y1, Y5
+	VSUBPS      Y3, Y1, Y1
+	VMULPS      32(SI), Y6, Y3
+	VFMADD231PS (SI), Y1, Y3
+	VMULPS      32(SI), Y1, Y1
+	VFMSUB132PS (SI), Y1, Y6
+	VMULPS      96(SI), Y4, Y1
+	VFMADD231PS 64(SI), Y2, Y1
+	VMULPS      96(SI), Y2, Y2
+	VFMSUB132PS 64(SI), Y2, Y4
+	VMULPS      160(SI), Y0, Y2
+	VFMADD231PS 128(SI), Y5, Y2
+	VMULPS      160(SI), Y5, Y5
+	VFMSUB132PS 128(SI), Y5, Y0
+	VINSERTF128 $0x01, X6, Y7, Y5
+	VPERM2F128  $0x31, Y6, Y7, Y7
+	VMOVUPS     Y5, (AX)
+	VMOVUPS     Y7, 64(AX)
+	VINSERTF128 $0x01, X0, Y4, Y5
+	VPERM2F128  $0x31, Y0, Y4, Y4
+	VMOVUPS     Y5, 32(AX)
+	VMOVUPS     Y4, 96(AX)
+	VINSERTF128 $0x01, X3, Y8, Y0
+	VPERM2F128  $0x31, Y3, Y8, Y8
+	VMOVUPS     Y0, (CX)
+	VMOVUPS     Y8, 64(CX)
+	VINSERTF128 $0x01, X2, Y1, Y0
+	VPERM2F128  $0x31, Y2, Y1, Y1
+	VMOVUPS     Y0, 32(CX)
+	VMOVUPS     Y1, 96(CX)
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, BX
+	ADDQ        $0x00000080, AX
+	ADDQ        $0x00000080, CX
+	ADDQ        $0x000000c0, SI
+	SUBQ        $0x02, DI
+	JNZ         two
 	VZEROUPPER
 	RET
 
-// func stepAVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int, s int)
+// func stepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, tw *float32, count int, s int)
 // Requires: AVX, FMA3
-TEXT ·stepAVX2(SB), NOSPLIT, $0-56
+TEXT ·stepFloat32AVX2(SB), NOSPLIT, $0-56
 	MOVQ  yr+0(FP), AX
 	MOVQ  yi+8(FP), CX
 	MOVQ  xr+16(FP), DX
@@ -530,9 +512,9 @@ eight:
 	VZEROUPPER
 	RET
 
-// func lastStep2AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+// func lastStep2Float32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
 // Requires: AVX
-TEXT ·lastStep2AVX2(SB), NOSPLIT, $0-40
+TEXT ·lastStep2Float32AVX2(SB), NOSPLIT, $0-40
 	MOVQ yr+0(FP), AX
 	MOVQ yi+8(FP), CX
 	MOVQ xr+16(FP), DX
@@ -563,9 +545,9 @@ eight:
 	VZEROUPPER
 	RET
 
-// func lastStep4AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+// func lastStep4Float32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
 // Requires: AVX
-TEXT ·lastStep4AVX2(SB), NOSPLIT, $0-40
+TEXT ·lastStep4Float32AVX2(SB), NOSPLIT, $0-40
 	MOVQ yr+0(FP), AX
 	MOVQ yi+8(FP), CX
 	MOVQ xr+16(FP), DX
@@ -617,12 +599,12 @@ eight:
 	VZEROUPPER
 	RET
 
-DATA rootHalf<>+0(SB)/4, $(0.70710677)
-GLOBL rootHalf<>(SB), RODATA|NOPTR, $4
+DATA rootHalf32<>+0(SB)/4, $(0.70710677)
+GLOBL rootHalf32<>(SB), RODATA|NOPTR, $4
 
-// func lastStep8AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
+// func lastStep8Float32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, s int)
 // Requires: AVX
-TEXT ·lastStep8AVX2(SB), NOSPLIT, $0-40
+TEXT ·lastStep8Float32AVX2(SB), NOSPLIT, $0-40
 	MOVQ         yr+0(FP), AX
 	MOVQ         yi+8(FP), CX
 	MOVQ         xr+16(FP), DX
@@ -633,7 +615,7 @@ TEXT ·lastStep8AVX2(SB), NOSPLIT, $0-40
 	LEAQ         (DI)(DI*2), R8
 	LEAQ         (DI)(DI*4), R9
 	LEAQ         (R8)(DI*4), R10
-	VBROADCASTSS rootHalf<>+0(SB), Y0
+	VBROADCASTSS rootHalf32<>+0(SB), Y0
 
 eight:
 	VMOVUPS (DX), Y1
@@ -743,12 +725,12 @@ DATA backwards<>+24(SB)/4, $0x00000001
 DATA backwards<>+28(SB)/4, $0x00000000
 GLOBL backwards<>(SB), RODATA|NOPTR, $32
 
-DATA oneHalf<>+0(SB)/4, $(0.5)
-GLOBL oneHalf<>(SB), RODATA|NOPTR, $4
+DATA oneHalf32<>+0(SB)/4, $(0.5)
+GLOBL oneHalf32<>(SB), RODATA|NOPTR, $4
 
-// func splitHalvesAVX2(re *float32, im *float32, cos *float32, sin *float32, last int, n int)
+// func splitHalvesFloat32AVX2(re *float32, im *float32, cos *float32, sin *float32, last int, n int)
 // Requires: AVX, AVX2, FMA3
-TEXT ·splitHalvesAVX2(SB), NOSPLIT, $0-48
+TEXT ·splitHalvesFloat32AVX2(SB), NOSPLIT, $0-48
 	MOVQ         re+0(FP), AX
 	MOVQ         im+8(FP), CX
 	MOVQ         cos+16(FP), DX
@@ -758,7 +740,7 @@ TEXT ·splitHalvesAVX2(SB), NOSPLIT, $0-48
 	LEAQ         -28(AX)(SI*4), R8
 	LEAQ         -28(CX)(SI*4), SI
 	VMOVDQU      backwards<>+0(SB), Y0
-	VBROADCASTSS oneHalf<>+0(SB), Y1
+	VBROADCASTSS oneHalf32<>+0(SB), Y1
 
 eight:
 	VMOVUPS      4(AX), Y2
@@ -802,9 +784,9 @@ eight:
 	VZEROUPPER
 	RET
 
-// func joinHalvesAVX2(zr *float32, zi *float32, re *float32, im *float32, cos *float32, sin *float32, last int, n int)
+// func joinHalvesFloat32AVX2(zr *float32, zi *float32, re *float32, im *float32, cos *float32, sin *float32, last int, n int)
 // Requires: AVX, AVX2, FMA3
-TEXT ·joinHalvesAVX2(SB), NOSPLIT, $0-64
+TEXT ·joinHalvesFloat32AVX2(SB), NOSPLIT, $0-64
 	MOVQ    zr+0(FP), AX
 	MOVQ    zi+8(FP), CX
 	MOVQ    re+16(FP), DX
@@ -859,9 +841,9 @@ eight:
 	VZEROUPPER
 	RET
 
-// func alternateAVX2(x *float32, zr *float32, zi *float32, scale float32, n int)
+// func alternateFloat32AVX2(x *float32, zr *float32, zi *float32, scale float32, n int)
 // Requires: AVX
-TEXT ·alternateAVX2(SB), NOSPLIT, $0-40
+TEXT ·alternateFloat32AVX2(SB), NOSPLIT, $0-40
 	MOVQ         x+0(FP), AX
 	MOVQ         zr+8(FP), CX
 	MOVQ         zi+16(FP), DX
@@ -869,19 +851,635 @@ TEXT ·alternateAVX2(SB), NOSPLIT, $0-40
 	VBROADCASTSS scale+24(FP), Y0
 
 eight:
-	VMULPS       (CX), Y0, Y1
-	VMULPS       (DX), Y0, Y2
-	VUNPCKLPS    Y2, Y1, Y3
-	VUNPCKHPS    Y2, Y1, Y1
-	VMOVUPS      X3, (AX)
-	VMOVUPS      X1, 16(AX)
-	VEXTRACTF128 $0x01, Y3, 32(AX)
-	VEXTRACTF128 $0x01, Y1, 48(AX)
+	VMULPS      (CX), Y0, Y1
+	VMULPS      (DX), Y0, Y2
+	VUNPCKLPS   Y2, Y1, Y3
+	VUNPCKHPS   Y2, Y1, Y1
+	VINSERTF128 $0x01, X1, Y3, Y2
+	VPERM2F128  $0x31, Y1, Y3, Y3
+	VMOVUPS     Y2, (AX)
+	VMOVUPS     Y3, 32(AX)
+	ADDQ        $0x20, CX
+	ADDQ        $0x20, DX
+	ADDQ        $0x40, AX
+	SUBQ        $0x08, BX
+	JNZ         eight
+	VZEROUPPER
+	RET
+
+// func firstStepFloat64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, wide *float64, count int)
+// Requires: AVX, FMA3
+TEXT ·firstStepFloat64AVX2(SB), NOSPLIT, $0-48
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ xr+16(FP), DX
+	MOVQ xi+24(FP), BX
+	MOVQ wide+32(FP), SI
+	MOVQ count+40(FP), DI
+	MOVQ DI, R8
+	SHLQ $0x03, R8
+	LEAQ (R8)(R8*2), R9
+	LEAQ (SI)(R8*4), R10
+
+eight:
+	VMOVUPD     (DX), Y0
+	VMOVUPD     (BX), Y1
+	VMOVUPD     (DX)(R8*2), Y2
+	VMOVUPD     (BX)(R8*2), Y3
+	VADDPD      Y2, Y0, Y4
+	VSUBPD      Y2, Y0, Y0
+	VADDPD      Y3, Y1, Y2
+	VSUBPD      Y3, Y1, Y1
+	VMOVUPD     (DX)(R8*1), Y3
+	VMOVUPD     (BX)(R8*1), Y5
+	VMOVUPD     (DX)(R9*1), Y6
+	VMOVUPD     (BX)(R9*1), Y7
+	VADDPD      Y6, Y3, Y8
+	VSUBPD      Y6, Y3, Y3
+	VADDPD      Y7, Y5, Y6
+	VSUBPD      Y7, Y5, Y5
+	VADDPD      Y8, Y4, Y7
+	VSUBPD      Y8, Y4, Y4
+	VADDPD      Y6, Y2, Y8
+	VSUBPD      Y6, Y2, Y2
+	VADDPD      Y5, Y0, Y6
+	VSUBPD      Y5, Y0, Y0
+	VADDPD      Y3, Y1, Y5
+	VSUBPD      Y3, Y1, Y1
+	VMULPD      (SI)(R8*1), Y6, Y3
+	VFMADD231PD (SI), Y1, Y3
+	VMULPD      (SI)(R8*1), Y1, Y1
+	VFMSUB132PD (SI), Y1, Y6
+	VMULPD      (SI)(R9*1), Y4, Y1
+	VFMADD231PD (SI)(R8*2), Y2, Y1
+	VMULPD      (SI)(R9*1), Y2, Y2
+	VFMSUB132PD (SI)(R8*2), Y2, Y4
+	VMULPD      (R10)(R8*1), Y0, Y2
+	VFMADD231PD (R10), Y5, Y2
+	VMULPD      (R10)(R8*1), Y5, Y5
+	VFMSUB132PD (R10), Y5, Y0
+	VUNPCKLPD   Y6, Y7, Y5
+	VUNPCKHPD   Y6, Y7, Y7
+	VUNPCKLPD   Y0, Y4, Y6
+	VUNPCKHPD   Y0, Y4, Y0
+	VINSERTF128 $0x01, X6, Y5, Y4
+	VPERM2F128  $0x31, Y6, Y5, Y5
+	VMOVUPD     Y4, (AX)
+	VMOVUPD     Y5, 64(AX)
+	VINSERTF128 $0x01, X0, Y7, Y4
+	VPERM2F128  $0x31, Y0, Y7, Y7
+	VMOVUPD     Y4, 32(AX)
+	VMOVUPD     Y7, 96(AX)
+	VUNPCKLPD   Y3, Y8, Y0
+	VUNPCKHPD   Y3, Y8, Y4
+	VUNPCKLPD   Y2, Y1, Y3
+	VUNPCKHPD   Y2, Y1, Y1
+	VINSERTF128 $0x01, X3, Y0, Y2
+	VPERM2F128  $0x31, Y3, Y0, Y0
+	VMOVUPD     Y2, (CX)
+	VMOVUPD     Y0, 64(CX)
+	VINSERTF128 $0x01, X1, Y4, Y0
+	VPERM2F128  $0x31, Y1, Y4, Y4
+	VMOVUPD     Y0, 32(CX)
+	VMOVUPD     Y4, 96(CX)
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, SI
+	ADDQ        $0x20, R10
+	ADDQ        $0x80, AX
+	ADDQ        $0x80, CX
+	SUBQ        $0x04, DI
+	JNZ         eight
+	VZEROUPPER
+	RET
+
+// func firstStepRealFloat64AVX2(yr *float64, yi *float64, x *float64, wide *float64, count int)
+// Requires: AVX, FMA3
+TEXT ·firstStepRealFloat64AVX2(SB), NOSPLIT, $0-40
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ x+16(FP), DX
+	MOVQ wide+24(FP), BX
+	MOVQ count+32(FP), SI
+	MOVQ SI, DI
+	SHLQ $0x03, DI
+	LEAQ (DI)(DI*2), R8
+	LEAQ (BX)(DI*4), R9
+	MOVQ DI, R10
+	SHLQ $0x01, R10
+	LEAQ (R10)(R10*2), R11
+
+eight:
+	VBROADCASTF128 (DX), Y0
+	VINSERTF128    $0x01, 32(DX), Y0, Y0
+	VBROADCASTF128 16(DX), Y1
+	VINSERTF128    $0x01, 48(DX), Y1, Y1
+	VUNPCKLPD      Y1, Y0, Y2
+	VUNPCKHPD      Y1, Y0, Y0
+	VBROADCASTF128 (DX)(R10*2), Y1
+	VINSERTF128    $0x01, 32(DX)(R10*2), Y1, Y1
+	VBROADCASTF128 16(DX)(R10*2), Y3
+	VINSERTF128    $0x01, 48(DX)(R10*2), Y3, Y3
+	VUNPCKLPD      Y3, Y1, Y4
+	VUNPCKHPD      Y3, Y1, Y1
+	VADDPD         Y4, Y2, Y3
+	VSUBPD         Y4, Y2, Y2
+	VADDPD         Y1, Y0, Y4
+	VSUBPD         Y1, Y0, Y0
+	VBROADCASTF128 (DX)(R10*1), Y1
+	VINSERTF128    $0x01, 32(DX)(R10*1), Y1, Y1
+	VBROADCASTF128 16(DX)(R10*1), Y5
+	VINSERTF128    $0x01, 48(DX)(R10*1), Y5, Y5
+	VUNPCKLPD      Y5, Y1, Y6
+	VUNPCKHPD      Y5, Y1, Y1
+	VBROADCASTF128 (DX)(R11*1), Y5
+	VINSERTF128    $0x01, 32(DX)(R11*1), Y5, Y5
+	VBROADCASTF128 16(DX)(R11*1), Y7
+	VINSERTF128    $0x01, 48(DX)(R11*1), Y7, Y7
+	VUNPCKLPD      Y7, Y5, Y8
+	VUNPCKHPD      Y7, Y5, Y5
+	VADDPD         Y8, Y6, Y7
+	VSUBPD         Y8, Y6, Y6
+	VADDPD         Y5, Y1, Y8
+	VSUBPD         Y5, Y1, Y1
+	VADDPD         Y7, Y3, Y5
+	VSUBPD         Y7, Y3, Y3
+	VADDPD         Y8, Y4, Y7
+	VSUBPD         Y8, Y4, Y4
+	VADDPD         Y1, Y2, Y8
+	VSUBPD         Y1, Y2, Y2
+	VADDPD         Y6, Y0, Y1
+	VSUBPD         Y6, Y0, Y0
+	VMULPD         (BX)(DI*1), Y8, Y6
+	VFMADD231PD    (BX), Y0, Y6
+	VMULPD         (BX)(DI*1), Y0, Y0
+	VFMSUB132PD    (BX), Y0, Y8
+	VMULPD         (BX)(R8*1), Y3, Y0
+	VFMADD231PD    (BX)(DI*2), Y4, Y0
+	VMULPD         (BX)(R8*1), Y4, Y4
+	VFMSUB132PD    (BX)(DI*2), Y4, Y3
+	VMULPD         (R9)(DI*1), Y2, Y4
+	VFMADD231PD    (R9), Y1, Y4
+	VMULPD         (R9)(DI*1), Y1, Y1
+	VFMSUB132PD    (R9), Y1, Y2
+	VUNPCKLPD      Y8, Y5, Y1
+	VUNPCKHPD      Y8, Y5, Y8
+	VUNPCKLPD      Y2, Y3, Y5
+	VUNPCKHPD      Y2, Y3, Y2
+	VINSERTF128    $0x01, X5, Y1, Y3
+	VPERM2F128     $0x31, Y5, Y1, Y1
+	VMOVUPD        Y3, (AX)
+	VMOVUPD        Y1, 64(AX)
+	VINSERTF128    $0x01, X2, Y8, Y1
+	VPERM2F128     $0x31, Y2, Y8, Y8
+	VMOVUPD        Y1, 32(AX)
+	VMOVUPD        Y8, 96(AX)
+	VUNPCKLPD      Y6, Y7, Y1
+	VUNPCKHPD      Y6, Y7, Y3
+	VUNPCKLPD      Y4, Y0, Y2
+	VUNPCKHPD      Y4, Y0, Y0
+	VINSERTF128    $0x01, X2, Y1, Y4
+	VPERM2F128     $0x31, Y2, Y1, Y1
+	VMOVUPD        Y4, (CX)
+	VMOVUPD        Y1, 64(CX)
+	VINSERTF128    $0x01, X0, Y3, Y1
+	VPERM2F128     $0x31, Y0, Y3, Y3
+	VMOVUPD        Y1, 32(CX)
+	VMOVUPD        Y3, 96(CX)
+	ADDQ           $0x40, DX
+	ADDQ           $0x20, BX
+	ADDQ           $0x20, R9
+	ADDQ           $0x80, AX
+	ADDQ           $0x80, CX
+	SUBQ           $0x04, SI
+	JNZ            eight
+	VZEROUPPER
+	RET
+
+// func stepFloat64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, tw *float64, count int, s int)
+// Requires: AVX, FMA3
+TEXT ·stepFloat64AVX2(SB), NOSPLIT, $0-56
+	MOVQ  yr+0(FP), AX
+	MOVQ  yi+8(FP), CX
+	MOVQ  xr+16(FP), DX
+	MOVQ  xi+24(FP), BX
+	MOVQ  tw+32(FP), SI
+	MOVQ  count+40(FP), DI
+	MOVQ  s+48(FP), R8
+	SHLQ  $0x03, R8
+	MOVQ  DI, R9
+	IMULQ R8, R9
+	LEAQ  (R9)(R9*2), R10
+	LEAQ  (R8)(R8*2), R11
+
+twiddle:
+	VBROADCASTSD (SI), Y0
+	VBROADCASTSD 8(SI), Y1
+	VBROADCASTSD 16(SI), Y2
+	VBROADCASTSD 24(SI), Y3
+	VBROADCASTSD 32(SI), Y4
+	VBROADCASTSD 40(SI), Y5
+	MOVQ         R8, R12
+
+eight:
+	VMOVUPD     (DX), Y6
+	VMOVUPD     (BX), Y7
+	VMOVUPD     (DX)(R9*2), Y8
+	VMOVUPD     (BX)(R9*2), Y9
+	VADDPD      Y8, Y6, Y10
+	VSUBPD      Y8, Y6, Y6
+	VADDPD      Y9, Y7, Y8
+	VSUBPD      Y9, Y7, Y7
+	VMOVUPD     (DX)(R9*1), Y9
+	VMOVUPD     (BX)(R9*1), Y11
+	VMOVUPD     (DX)(R10*1), Y12
+	VMOVUPD     (BX)(R10*1), Y13
+	VADDPD      Y12, Y9, Y14
+	VSUBPD      Y12, Y9, Y9
+	VADDPD      Y13, Y11, Y12
+	VSUBPD      Y13, Y11, Y11
+	VADDPD      Y14, Y10, Y13
+	VSUBPD      Y14, Y10, Y10
+	VADDPD      Y12, Y8, Y14
+	VSUBPD      Y12, Y8, Y8
+	VADDPD      Y11, Y6, Y12
+	VSUBPD      Y11, Y6, Y6
+	VADDPD      Y9, Y7, Y11
+	VSUBPD      Y9, Y7, Y7
+	VMOVUPD     Y13, (AX)
+	VMOVUPD     Y14, (CX)
+	VMULPD      Y1, Y12, Y9
+	VFMADD231PD Y0, Y7, Y9
+	VMULPD      Y1, Y7, Y7
+	VFMSUB132PD Y0, Y7, Y12
+	VMOVUPD     Y12, (AX)(R8*1)
+	VMOVUPD     Y9, (CX)(R8*1)
+	VMULPD      Y3, Y10, Y7
+	VFMADD231PD Y2, Y8, Y7
+	VMULPD      Y3, Y8, Y8
+	VFMSUB132PD Y2, Y8, Y10
+	VMOVUPD     Y10, (AX)(R8*2)
+	VMOVUPD     Y7, (CX)(R8*2)
+	VMULPD      Y5, Y6, Y7
+	VFMADD231PD Y4, Y11, Y7
+	VMULPD      Y5, Y11, Y11
+	VFMSUB132PD Y4, Y11, Y6
+	VMOVUPD     Y6, (AX)(R11*1)
+	VMOVUPD     Y7, (CX)(R11*1)
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, CX
+	SUBQ        $0x20, R12
+	JNZ         eight
+	ADDQ        R11, AX
+	ADDQ        R11, CX
+	ADDQ        $0x30, SI
+	DECQ        DI
+	JNZ         twiddle
+	VZEROUPPER
+	RET
+
+// func lastStep2Float64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, s int)
+// Requires: AVX
+TEXT ·lastStep2Float64AVX2(SB), NOSPLIT, $0-40
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ xr+16(FP), DX
+	MOVQ xi+24(FP), BX
+	MOVQ s+32(FP), SI
+	SHLQ $0x03, SI
+	MOVQ SI, DI
+
+eight:
+	VMOVUPD (DX), Y0
+	VMOVUPD (DX)(DI*1), Y1
+	VADDPD  Y1, Y0, Y2
+	VSUBPD  Y1, Y0, Y0
+	VMOVUPD Y2, (AX)
+	VMOVUPD Y0, (AX)(DI*1)
+	VMOVUPD (BX), Y0
+	VMOVUPD (BX)(DI*1), Y1
+	VADDPD  Y1, Y0, Y2
+	VSUBPD  Y1, Y0, Y0
+	VMOVUPD Y2, (CX)
+	VMOVUPD Y0, (CX)(DI*1)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DX
+	ADDQ    $0x20, BX
+	SUBQ    $0x20, SI
+	JNZ     eight
+	VZEROUPPER
+	RET
+
+// func lastStep4Float64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, s int)
+// Requires: AVX
+TEXT ·lastStep4Float64AVX2(SB), NOSPLIT, $0-40
+	MOVQ yr+0(FP), AX
+	MOVQ yi+8(FP), CX
+	MOVQ xr+16(FP), DX
+	MOVQ xi+24(FP), BX
+	MOVQ s+32(FP), SI
+	SHLQ $0x03, SI
+	MOVQ SI, DI
+	LEAQ (DI)(DI*2), R8
+
+eight:
+	VMOVUPD (DX), Y0
+	VMOVUPD (BX), Y1
+	VMOVUPD (DX)(DI*2), Y2
+	VMOVUPD (BX)(DI*2), Y3
+	VADDPD  Y2, Y0, Y4
+	VSUBPD  Y2, Y0, Y0
+	VADDPD  Y3, Y1, Y2
+	VSUBPD  Y3, Y1, Y1
+	VMOVUPD (DX)(DI*1), Y3
+	VMOVUPD (BX)(DI*1), Y5
+	VMOVUPD (DX)(R8*1), Y6
+	VMOVUPD (BX)(R8*1), Y7
+	VADDPD  Y6, Y3, Y8
+	VSUBPD  Y6, Y3, Y3
+	VADDPD  Y7, Y5, Y6
+	VSUBPD  Y7, Y5, Y5
+	VADDPD  Y8, Y4, Y7
+	VSUBPD  Y8, Y4, Y4
+	VADDPD  Y6, Y2, Y8
+	VSUBPD  Y6, Y2, Y2
+	VADDPD  Y5, Y0, Y6
+	VSUBPD  Y5, Y0, Y0
+	VADDPD  Y3, Y1, Y5
+	VSUBPD  Y3, Y1, Y1
+	VMOVUPD Y7, (AX)
+	VMOVUPD Y8, (CX)
+	VMOVUPD Y6, (AX)(DI*1)
+	VMOVUPD Y1, (CX)(DI*1)
+	VMOVUPD Y4, (AX)(DI*2)
+	VMOVUPD Y2, (CX)(DI*2)
+	VMOVUPD Y0, (AX)(R8*1)
+	VMOVUPD Y5, (CX)(R8*1)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DX
+	ADDQ    $0x20, BX
+	SUBQ    $0x20, SI
+	JNZ     eight
+	VZEROUPPER
+	RET
+
+DATA rootHalf64<>+0(SB)/8, $(0.7071067811865476)
+GLOBL rootHalf64<>(SB), RODATA|NOPTR, $8
+
+// func lastStep8Float64AVX2(yr *float64, yi *float64, xr *float64, xi *float64, s int)
+// Requires: AVX
+TEXT ·lastStep8Float64AVX2(SB), NOSPLIT, $0-40
+	MOVQ         yr+0(FP), AX
+	MOVQ         yi+8(FP), CX
+	MOVQ         xr+16(FP), DX
+	MOVQ         xi+24(FP), BX
+	MOVQ         s+32(FP), SI
+	SHLQ         $0x03, SI
+	MOVQ         SI, DI
+	LEAQ         (DI)(DI*2), R8
+	LEAQ         (DI)(DI*4), R9
+	LEAQ         (R8)(DI*4), R10
+	VBROADCASTSD rootHalf64<>+0(SB), Y0
+
+eight:
+	VMOVUPD (DX), Y1
+	VMOVUPD (BX), Y2
+	VADDPD  (DX)(DI*4), Y1, Y1
+	VADDPD  (BX)(DI*4), Y2, Y2
+	VMOVUPD (DX)(DI*2), Y3
+	VMOVUPD (BX)(DI*2), Y4
+	VADDPD  (DX)(R8*2), Y3, Y3
+	VADDPD  (BX)(R8*2), Y4, Y4
+	VADDPD  Y3, Y1, Y5
+	VSUBPD  Y3, Y1, Y1
+	VADDPD  Y4, Y2, Y3
+	VSUBPD  Y4, Y2, Y2
+	VMOVUPD (DX)(DI*1), Y4
+	VMOVUPD (BX)(DI*1), Y6
+	VADDPD  (DX)(R9*1), Y4, Y4
+	VADDPD  (BX)(R9*1), Y6, Y6
+	VMOVUPD (DX)(R8*1), Y7
+	VMOVUPD (BX)(R8*1), Y8
+	VADDPD  (DX)(R10*1), Y7, Y7
+	VADDPD  (BX)(R10*1), Y8, Y8
+	VADDPD  Y7, Y4, Y9
+	VSUBPD  Y7, Y4, Y4
+	VADDPD  Y8, Y6, Y7
+	VSUBPD  Y8, Y6, Y6
+	VADDPD  Y9, Y5, Y8
+	VSUBPD  Y9, Y5, Y5
+	VADDPD  Y7, Y3, Y9
+	VSUBPD  Y7, Y3, Y3
+	VADDPD  Y6, Y1, Y7
+	VSUBPD  Y6, Y1, Y1
+	VADDPD  Y4, Y2, Y6
+	VSUBPD  Y4, Y2, Y2
+	VMOVUPD Y8, (AX)
+	VMOVUPD Y9, (CX)
+	VMOVUPD Y7, (AX)(DI*2)
+	VMOVUPD Y2, (CX)(DI*2)
+	VMOVUPD Y5, (AX)(DI*4)
+	VMOVUPD Y3, (CX)(DI*4)
+	VMOVUPD Y1, (AX)(R8*2)
+	VMOVUPD Y6, (CX)(R8*2)
+	VMOVUPD (DX), Y1
+	VMOVUPD (BX), Y2
+	VSUBPD  (DX)(DI*4), Y1, Y1
+	VSUBPD  (BX)(DI*4), Y2, Y2
+	VMOVUPD (DX)(DI*2), Y3
+	VMOVUPD (BX)(DI*2), Y4
+	VSUBPD  (DX)(R8*2), Y3, Y3
+	VSUBPD  (BX)(R8*2), Y4, Y4
+	VADDPD  Y4, Y1, Y5
+	VSUBPD  Y4, Y1, Y1
+	VADDPD  Y3, Y2, Y4
+	VSUBPD  Y3, Y2, Y2
+	VMOVUPD (DX)(DI*1), Y3
+	VMOVUPD (BX)(DI*1), Y6
+	VSUBPD  (DX)(R9*1), Y3, Y3
+	VSUBPD  (BX)(R9*1), Y6, Y6
+	VADDPD  Y6, Y3, Y7
+	VSUBPD  Y3, Y6, Y6
+	VMULPD  Y0, Y7, Y7
+	VMULPD  Y0, Y6, Y6
+	VMOVUPD (DX)(R8*1), Y3
+	VMOVUPD (BX)(R8*1), Y8
+	VSUBPD  (DX)(R10*1), Y3, Y3
+	VSUBPD  (BX)(R10*1), Y8, Y8
+	VADDPD  Y8, Y3, Y9
+	VSUBPD  Y3, Y8, Y8
+	VMULPD  Y0, Y9, Y9
+	VMULPD  Y0, Y8, Y8
+	VADDPD  Y8, Y7, Y3
+	VSUBPD  Y8, Y7, Y7
+	VADDPD  Y9, Y6, Y8
+	VSUBPD  Y9, Y6, Y6
+	VADDPD  Y3, Y5, Y9
+	VSUBPD  Y3, Y5, Y5
+	VADDPD  Y6, Y2, Y3
+	VSUBPD  Y6, Y2, Y2
+	VADDPD  Y8, Y1, Y6
+	VSUBPD  Y8, Y1, Y1
+	VADDPD  Y7, Y4, Y8
+	VSUBPD  Y7, Y4, Y4
+	VMOVUPD Y9, (AX)(DI*1)
+	VMOVUPD Y3, (CX)(DI*1)
+	VMOVUPD Y6, (AX)(R8*1)
+	VMOVUPD Y4, (CX)(R8*1)
+	VMOVUPD Y5, (AX)(R9*1)
+	VMOVUPD Y2, (CX)(R9*1)
+	VMOVUPD Y1, (AX)(R10*1)
+	VMOVUPD Y8, (CX)(R10*1)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DX
+	ADDQ    $0x20, BX
+	SUBQ    $0x20, SI
+	JNZ     eight
+	VZEROUPPER
+	RET
+
+DATA oneHalf64<>+0(SB)/8, $(0.5)
+GLOBL oneHalf64<>(SB), RODATA|NOPTR, $8
+
+// func splitHalvesFloat64AVX2(re *float64, im *float64, cos *float64, sin *float64, last int, n int)
+// Requires: AVX, AVX2, FMA3
+TEXT ·splitHalvesFloat64AVX2(SB), NOSPLIT, $0-48
+	MOVQ         re+0(FP), AX
+	MOVQ         im+8(FP), CX
+	MOVQ         cos+16(FP), DX
+	MOVQ         sin+24(FP), BX
+	MOVQ         last+32(FP), SI
+	MOVQ         n+40(FP), DI
+	LEAQ         -24(AX)(SI*8), R8
+	LEAQ         -24(CX)(SI*8), SI
+	VBROADCASTSD oneHalf64<>+0(SB), Y0
+
+eight:
+	VMOVUPD      8(AX), Y1
+	VMOVUPD      8(CX), Y2
+	VPERMPD      $0x1b, (R8), Y3
+	VPERMPD      $0x1b, (SI), Y4
+	VADDPD       Y3, Y1, Y5
+	VSUBPD       Y3, Y1, Y1
+	VADDPD       Y4, Y2, Y3
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       Y0, Y5, Y5
+	VMULPD       Y0, Y1, Y1
+	VMULPD       Y0, Y3, Y3
+	VMULPD       Y0, Y2, Y2
+	VMOVUPD      8(DX), Y4
+	VMOVUPD      8(BX), Y6
+	VMULPD       Y4, Y3, Y7
+	VFNMADD231PD Y1, Y6, Y7
+	VMULPD       Y6, Y3, Y3
+	VFMADD231PD  Y1, Y4, Y3
+	VADDPD       Y7, Y5, Y1
+	VMOVUPD      Y1, 8(AX)
+	VSUBPD       Y3, Y2, Y1
+	VMOVUPD      Y1, 8(CX)
+	VSUBPD       Y7, Y5, Y5
+	VPERMPD      $0x1b, Y5, Y5
+	VMOVUPD      Y5, (R8)
+	VXORPS       Y1, Y1, Y1
+	VSUBPD       Y3, Y1, Y1
+	VSUBPD       Y2, Y1, Y1
+	VPERMPD      $0x1b, Y1, Y1
+	VMOVUPD      Y1, (SI)
+	ADDQ         $0x20, AX
 	ADDQ         $0x20, CX
 	ADDQ         $0x20, DX
-	ADDQ         $0x40, AX
-	SUBQ         $0x08, BX
+	ADDQ         $0x20, BX
+	SUBQ         $0x20, R8
+	SUBQ         $0x20, SI
+	SUBQ         $0x04, DI
 	JNZ          eight
+	VZEROUPPER
+	RET
+
+// func joinHalvesFloat64AVX2(zr *float64, zi *float64, re *float64, im *float64, cos *float64, sin *float64, last int, n int)
+// Requires: AVX, AVX2, FMA3
+TEXT ·joinHalvesFloat64AVX2(SB), NOSPLIT, $0-64
+	MOVQ zr+0(FP), AX
+	MOVQ zi+8(FP), CX
+	MOVQ re+16(FP), DX
+	MOVQ im+24(FP), BX
+	MOVQ cos+32(FP), SI
+	MOVQ sin+40(FP), DI
+	MOVQ last+48(FP), R8
+	MOVQ n+56(FP), R9
+	LEAQ -24(DX)(R8*8), R10
+	LEAQ -24(BX)(R8*8), R11
+	LEAQ -24(AX)(R8*8), R12
+	LEAQ -24(CX)(R8*8), R8
+
+eight:
+	VMOVUPD      8(DX), Y0
+	VMOVUPD      8(BX), Y1
+	VPERMPD      $0x1b, (R10), Y2
+	VADDPD       Y2, Y0, Y3
+	VSUBPD       Y2, Y0, Y0
+	VPERMPD      $0x1b, (R11), Y2
+	VADDPD       Y2, Y1, Y4
+	VSUBPD       Y2, Y1, Y1
+	VMOVUPD      8(SI), Y2
+	VMOVUPD      8(DI), Y5
+	VMULPD       Y2, Y0, Y6
+	VFNMADD231PD Y5, Y4, Y6
+	VMULPD       Y5, Y0, Y0
+	VFMADD231PD  Y2, Y4, Y0
+	VSUBPD       Y0, Y3, Y2
+	VMOVUPD      Y2, 8(AX)
+	VADDPD       Y6, Y1, Y2
+	VMOVUPD      Y2, 8(CX)
+	VADDPD       Y0, Y3, Y3
+	VPERMPD      $0x1b, Y3, Y3
+	VMOVUPD      Y3, (R12)
+	VSUBPD       Y1, Y6, Y6
+	VPERMPD      $0x1b, Y6, Y6
+	VMOVUPD      Y6, (R8)
+	ADDQ         $0x20, AX
+	ADDQ         $0x20, CX
+	ADDQ         $0x20, DX
+	ADDQ         $0x20, BX
+	ADDQ         $0x20, SI
+	ADDQ         $0x20, DI
+	SUBQ         $0x20, R10
+	SUBQ         $0x20, R11
+	SUBQ         $0x20, R12
+	SUBQ         $0x20, R8
+	SUBQ         $0x04, R9
+	JNZ          eight
+	VZEROUPPER
+	RET
+
+// func alternateFloat64AVX2(x *float64, zr *float64, zi *float64, scale float64, n int)
+// Requires: AVX
+TEXT ·alternateFloat64AVX2(SB), NOSPLIT, $0-40
+	MOVQ         x+0(FP), AX
+	MOVQ         zr+8(FP), CX
+	MOVQ         zi+16(FP), DX
+	MOVQ         n+32(FP), BX
+	VBROADCASTSD scale+24(FP), Y0
+
+eight:
+	VMULPD      (CX), Y0, Y1
+	VMULPD      (DX), Y0, Y2
+	VUNPCKLPD   Y2, Y1, Y3
+	VUNPCKHPD   Y2, Y1, Y1
+	VINSERTF128 $0x01, X1, Y3, Y2
+	VPERM2F128  $0x31, Y1, Y3, Y3
+	VMOVUPD     Y2, (AX)
+	VMOVUPD     Y3, 32(AX)
+	ADDQ        $0x20, CX
+	ADDQ        $0x20, DX
+	ADDQ        $0x40, AX
+	SUBQ        $0x04, BX
+	JNZ         eight
 	VZEROUPPER
 	RET
 
@@ -1616,5 +2214,464 @@ frames:
 	JL             frames
 	VMOVMSKPS      Y0, AX
 	MOVL           AX, ret+32(FP)
+	VZEROUPPER
+	RET
+
+// func addPhasesAVX2(z *float32, stride int, vectors int, x *float32, h *float32, groups int)
+// Requires: AVX, FMA3
+TEXT ·addPhasesAVX2(SB), NOSPLIT, $0-48
+	MOVQ z+0(FP), AX
+	MOVQ stride+8(FP), CX
+	MOVQ vectors+16(FP), DX
+	MOVQ x+24(FP), BX
+	MOVQ h+32(FP), SI
+	MOVQ groups+40(FP), DI
+	SHLQ $0x02, CX
+	LEAQ (CX)(CX*2), R8
+
+three:
+	CMPQ    DX, $0x03
+	JL      one
+	LEAQ    (AX)(CX*4), R9
+	VMOVUPS (AX), Y0
+	VMOVUPS 32(AX), Y1
+	VMOVUPS 64(AX), Y2
+	VMOVUPS (AX)(CX*1), Y3
+	VMOVUPS 32(AX)(CX*1), Y4
+	VMOVUPS 64(AX)(CX*1), Y5
+	VMOVUPS (AX)(CX*2), Y6
+	VMOVUPS 32(AX)(CX*2), Y7
+	VMOVUPS 64(AX)(CX*2), Y8
+	VMOVUPS (AX)(R8*1), Y9
+	VMOVUPS 32(AX)(R8*1), Y10
+	VMOVUPS 64(AX)(R8*1), Y11
+	MOVQ    BX, R10
+	MOVQ    SI, R11
+	MOVQ    DI, R12
+
+three_low:
+	VMOVUPS      (R10), Y12
+	VMOVUPS      32(R10), Y13
+	VMOVUPS      64(R10), Y14
+	VBROADCASTSS (R11), Y15
+	VFMADD231PS  Y12, Y15, Y0
+	VFMADD231PS  Y13, Y15, Y1
+	VFMADD231PS  Y14, Y15, Y2
+	VBROADCASTSS 4(R11), Y15
+	VFMADD231PS  Y12, Y15, Y3
+	VFMADD231PS  Y13, Y15, Y4
+	VFMADD231PS  Y14, Y15, Y5
+	VBROADCASTSS 8(R11), Y15
+	VFMADD231PS  Y12, Y15, Y6
+	VFMADD231PS  Y13, Y15, Y7
+	VFMADD231PS  Y14, Y15, Y8
+	VBROADCASTSS 12(R11), Y15
+	VFMADD231PS  Y12, Y15, Y9
+	VFMADD231PS  Y13, Y15, Y10
+	VFMADD231PS  Y14, Y15, Y11
+	ADDQ         $0x20, R10
+	ADDQ         $0x20, R11
+	DECQ         R12
+	JNZ          three_low
+	VMOVUPS      Y0, (AX)
+	VMOVUPS      Y1, 32(AX)
+	VMOVUPS      Y2, 64(AX)
+	VMOVUPS      Y3, (AX)(CX*1)
+	VMOVUPS      Y4, 32(AX)(CX*1)
+	VMOVUPS      Y5, 64(AX)(CX*1)
+	VMOVUPS      Y6, (AX)(CX*2)
+	VMOVUPS      Y7, 32(AX)(CX*2)
+	VMOVUPS      Y8, 64(AX)(CX*2)
+	VMOVUPS      Y9, (AX)(R8*1)
+	VMOVUPS      Y10, 32(AX)(R8*1)
+	VMOVUPS      Y11, 64(AX)(R8*1)
+	VMOVUPS      (R9), Y0
+	VMOVUPS      32(R9), Y1
+	VMOVUPS      64(R9), Y2
+	VMOVUPS      (R9)(CX*1), Y3
+	VMOVUPS      32(R9)(CX*1), Y4
+	VMOVUPS      64(R9)(CX*1), Y5
+	VMOVUPS      (R9)(CX*2), Y6
+	VMOVUPS      32(R9)(CX*2), Y7
+	VMOVUPS      64(R9)(CX*2), Y8
+	VMOVUPS      (R9)(R8*1), Y9
+	VMOVUPS      32(R9)(R8*1), Y10
+	VMOVUPS      64(R9)(R8*1), Y11
+	MOVQ         BX, R10
+	MOVQ         SI, R11
+	MOVQ         DI, R12
+
+three_high:
+	VMOVUPS      (R10), Y12
+	VMOVUPS      32(R10), Y13
+	VMOVUPS      64(R10), Y14
+	VBROADCASTSS 16(R11), Y15
+	VFMADD231PS  Y12, Y15, Y0
+	VFMADD231PS  Y13, Y15, Y1
+	VFMADD231PS  Y14, Y15, Y2
+	VBROADCASTSS 20(R11), Y15
+	VFMADD231PS  Y12, Y15, Y3
+	VFMADD231PS  Y13, Y15, Y4
+	VFMADD231PS  Y14, Y15, Y5
+	VBROADCASTSS 24(R11), Y15
+	VFMADD231PS  Y12, Y15, Y6
+	VFMADD231PS  Y13, Y15, Y7
+	VFMADD231PS  Y14, Y15, Y8
+	VBROADCASTSS 28(R11), Y15
+	VFMADD231PS  Y12, Y15, Y9
+	VFMADD231PS  Y13, Y15, Y10
+	VFMADD231PS  Y14, Y15, Y11
+	ADDQ         $0x20, R10
+	ADDQ         $0x20, R11
+	DECQ         R12
+	JNZ          three_high
+	VMOVUPS      Y0, (R9)
+	VMOVUPS      Y1, 32(R9)
+	VMOVUPS      Y2, 64(R9)
+	VMOVUPS      Y3, (R9)(CX*1)
+	VMOVUPS      Y4, 32(R9)(CX*1)
+	VMOVUPS      Y5, 64(R9)(CX*1)
+	VMOVUPS      Y6, (R9)(CX*2)
+	VMOVUPS      Y7, 32(R9)(CX*2)
+	VMOVUPS      Y8, 64(R9)(CX*2)
+	VMOVUPS      Y9, (R9)(R8*1)
+	VMOVUPS      Y10, 32(R9)(R8*1)
+	VMOVUPS      Y11, 64(R9)(R8*1)
+	ADDQ         $0x60, AX
+	ADDQ         $0x60, BX
+	SUBQ         $0x03, DX
+	JMP          three
+
+one:
+	CMPQ    DX, $0x01
+	JL      done
+	LEAQ    (AX)(CX*4), R9
+	VMOVUPS (AX), Y0
+	VMOVUPS (AX)(CX*1), Y1
+	VMOVUPS (AX)(CX*2), Y2
+	VMOVUPS (AX)(R8*1), Y3
+	MOVQ    BX, R10
+	MOVQ    SI, R11
+	MOVQ    DI, R12
+
+one_low:
+	VMOVUPS      (R10), Y4
+	VBROADCASTSS (R11), Y5
+	VFMADD231PS  Y4, Y5, Y0
+	VBROADCASTSS 4(R11), Y5
+	VFMADD231PS  Y4, Y5, Y1
+	VBROADCASTSS 8(R11), Y5
+	VFMADD231PS  Y4, Y5, Y2
+	VBROADCASTSS 12(R11), Y5
+	VFMADD231PS  Y4, Y5, Y3
+	ADDQ         $0x20, R10
+	ADDQ         $0x20, R11
+	DECQ         R12
+	JNZ          one_low
+	VMOVUPS      Y0, (AX)
+	VMOVUPS      Y1, (AX)(CX*1)
+	VMOVUPS      Y2, (AX)(CX*2)
+	VMOVUPS      Y3, (AX)(R8*1)
+	VMOVUPS      (R9), Y0
+	VMOVUPS      (R9)(CX*1), Y1
+	VMOVUPS      (R9)(CX*2), Y2
+	VMOVUPS      (R9)(R8*1), Y3
+	MOVQ         BX, R10
+	MOVQ         SI, R11
+	MOVQ         DI, R12
+
+one_high:
+	VMOVUPS      (R10), Y4
+	VBROADCASTSS 16(R11), Y5
+	VFMADD231PS  Y4, Y5, Y0
+	VBROADCASTSS 20(R11), Y5
+	VFMADD231PS  Y4, Y5, Y1
+	VBROADCASTSS 24(R11), Y5
+	VFMADD231PS  Y4, Y5, Y2
+	VBROADCASTSS 28(R11), Y5
+	VFMADD231PS  Y4, Y5, Y3
+	ADDQ         $0x20, R10
+	ADDQ         $0x20, R11
+	DECQ         R12
+	JNZ          one_high
+	VMOVUPS      Y0, (R9)
+	VMOVUPS      Y1, (R9)(CX*1)
+	VMOVUPS      Y2, (R9)(CX*2)
+	VMOVUPS      Y3, (R9)(R8*1)
+	ADDQ         $0x20, AX
+	ADDQ         $0x20, BX
+	SUBQ         $0x01, DX
+	JMP          one
+
+done:
+	VZEROUPPER
+	RET
+
+// func joinPhasesAVX2(y *float32, z *float32, stride int, n int)
+// Requires: AVX
+TEXT ·joinPhasesAVX2(SB), NOSPLIT, $0-32
+	MOVQ y+0(FP), AX
+	MOVQ z+8(FP), CX
+	MOVQ stride+16(FP), DX
+	MOVQ n+24(FP), BX
+	SHLQ $0x02, DX
+	LEAQ (DX)(DX*2), SI
+	LEAQ (CX)(DX*4), DI
+
+eight:
+	VMOVUPS (CX), Y0
+	VADDPS  4(CX)(DX*1), Y0, Y0
+	VADDPS  8(CX)(DX*2), Y0, Y0
+	VADDPS  12(CX)(SI*1), Y0, Y0
+	VMOVUPS 16(DI), Y1
+	VADDPS  20(DI)(DX*1), Y1, Y1
+	VADDPS  24(DI)(DX*2), Y1, Y1
+	VADDPS  28(DI)(SI*1), Y1, Y1
+	VADDPS  Y1, Y0, Y0
+	VMOVUPS Y0, (AX)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DI
+	SUBQ    $0x08, BX
+	JNZ     eight
+	VZEROUPPER
+	RET
+
+// func dotAVX2(a *float32, b *float32, n int) float32
+// Requires: AVX, FMA3, SSE
+TEXT ·dotAVX2(SB), NOSPLIT, $0-28
+	MOVQ   a+0(FP), AX
+	MOVQ   b+8(FP), CX
+	MOVQ   n+16(FP), DX
+	VXORPS Y0, Y0, Y0
+	VXORPS Y1, Y1, Y1
+	VXORPS Y2, Y2, Y2
+	VXORPS Y3, Y3, Y3
+
+values:
+	VMOVUPS      (CX), Y4
+	VFMADD231PS  (AX), Y4, Y0
+	VMOVUPS      32(CX), Y4
+	VFMADD231PS  32(AX), Y4, Y1
+	VMOVUPS      64(CX), Y4
+	VFMADD231PS  64(AX), Y4, Y2
+	VMOVUPS      96(CX), Y4
+	VFMADD231PS  96(AX), Y4, Y3
+	ADDQ         $0x00000080, AX
+	ADDQ         $0x00000080, CX
+	SUBQ         $0x20, DX
+	JNZ          values
+	VADDPS       Y1, Y0, Y0
+	VADDPS       Y3, Y2, Y2
+	VADDPS       Y2, Y0, Y0
+	VEXTRACTF128 $0x01, Y0, X1
+	VADDPS       X1, X0, X1
+	VMOVHLPS     X1, X1, X0
+	VADDPS       X0, X1, X1
+	VMOVSHDUP    X1, X0
+	VADDSS       X0, X1, X1
+	MOVSS        X1, ret+24(FP)
+	VZEROUPPER
+	RET
+
+// func peakAVX2(x *float32, n int) uint32
+// Requires: AVX, AVX2
+TEXT ·peakAVX2(SB), NOSPLIT, $0-20
+	MOVQ         x+0(FP), AX
+	MOVQ         n+8(FP), CX
+	VBROADCASTSS magnitude<>+0(SB), Y0
+	VXORPS       Y1, Y1, Y1
+	VXORPS       Y2, Y2, Y2
+	VXORPS       Y3, Y3, Y3
+	VXORPS       Y4, Y4, Y4
+
+values:
+	VANDPS       (AX), Y0, Y5
+	VPMAXUD      Y5, Y1, Y1
+	VANDPS       32(AX), Y0, Y5
+	VPMAXUD      Y5, Y2, Y2
+	VANDPS       64(AX), Y0, Y5
+	VPMAXUD      Y5, Y3, Y3
+	VANDPS       96(AX), Y0, Y5
+	VPMAXUD      Y5, Y4, Y4
+	ADDQ         $0x00000080, AX
+	SUBQ         $0x20, CX
+	JNZ          values
+	VPMAXUD      Y2, Y1, Y1
+	VPMAXUD      Y4, Y3, Y3
+	VPMAXUD      Y3, Y1, Y1
+	VEXTRACTI128 $0x01, Y1, X0
+	VPMAXUD      X0, X1, X0
+	VPSHUFD      $0x4e, X0, X1
+	VPMAXUD      X1, X0, X0
+	VPSHUFD      $0xb1, X0, X1
+	VPMAXUD      X1, X0, X0
+	VMOVD        X0, AX
+	MOVL         AX, ret+16(FP)
+	VZEROUPPER
+	RET
+
+DATA magnitude<>+0(SB)/4, $0x7fffffff
+GLOBL magnitude<>(SB), RODATA|NOPTR, $4
+
+// func addSquaresAVX2(sum *float64, square *float64, x *float32, n int)
+// Requires: AVX, FMA3
+TEXT ·addSquaresAVX2(SB), NOSPLIT, $0-32
+	MOVQ    sum+0(FP), AX
+	MOVQ    square+8(FP), CX
+	MOVQ    x+16(FP), DX
+	MOVQ    n+24(FP), BX
+	VMOVUPD (AX), Y0
+	VMOVUPD 32(AX), Y1
+	VMOVUPD (CX), Y2
+	VMOVUPD 32(CX), Y3
+
+values:
+	VCVTPS2PD   (DX), Y4
+	VADDPD      Y4, Y0, Y0
+	VFMADD231PD Y4, Y4, Y2
+	VCVTPS2PD   16(DX), Y4
+	VADDPD      Y4, Y1, Y1
+	VFMADD231PD Y4, Y4, Y3
+	ADDQ        $0x20, DX
+	SUBQ        $0x08, BX
+	JNZ         values
+	VMOVUPD     Y0, (AX)
+	VMOVUPD     Y1, 32(AX)
+	VMOVUPD     Y2, (CX)
+	VMOVUPD     Y3, 32(CX)
+	VZEROUPPER
+	RET
+
+// func powersAVX2(p *float32, re *float32, im *float32, n int)
+// Requires: AVX, FMA3
+TEXT ·powersAVX2(SB), NOSPLIT, $0-32
+	MOVQ p+0(FP), AX
+	MOVQ re+8(FP), CX
+	MOVQ im+16(FP), DX
+	MOVQ n+24(FP), BX
+
+values:
+	VMOVUPS     (CX), Y0
+	VMOVUPS     (DX), Y1
+	VMULPS      Y1, Y1, Y1
+	VFMADD231PS Y0, Y0, Y1
+	VMOVUPS     Y1, (AX)
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, CX
+	ADDQ        $0x20, DX
+	SUBQ        $0x08, BX
+	JNZ         values
+	VZEROUPPER
+	RET
+
+// func multiplyAVX2(y *float32, a *float32, b *float32, n int)
+// Requires: AVX
+TEXT ·multiplyAVX2(SB), NOSPLIT, $0-32
+	MOVQ y+0(FP), AX
+	MOVQ a+8(FP), CX
+	MOVQ b+16(FP), DX
+	MOVQ n+24(FP), BX
+
+values:
+	VMOVUPS (CX), Y0
+	VMULPS  (DX), Y0, Y0
+	VMOVUPS Y0, (AX)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DX
+	SUBQ    $0x08, BX
+	JNZ     values
+	VZEROUPPER
+	RET
+
+// func quantiseAVX2(q *int32, x *float32, scale float32, low float32, high float32, n int)
+// Requires: AVX
+TEXT ·quantiseAVX2(SB), NOSPLIT, $0-40
+	MOVQ         q+0(FP), AX
+	MOVQ         x+8(FP), CX
+	MOVQ         n+32(FP), DX
+	VBROADCASTSS scale+16(FP), Y0
+	VBROADCASTSS low+20(FP), Y1
+	VBROADCASTSS high+24(FP), Y2
+
+values:
+	VMULPS    (CX), Y0, Y3
+	VMAXPS    Y1, Y3, Y3
+	VMINPS    Y2, Y3, Y3
+	VCVTPS2DQ Y3, Y3
+	VMOVDQU   Y3, (AX)
+	ADDQ      $0x20, AX
+	ADDQ      $0x20, CX
+	SUBQ      $0x08, DX
+	JNZ       values
+	VZEROUPPER
+	RET
+
+// func addCrossAVX2(sr *float64, si *float64, ar *float64, ai *float64, br *float64, bi *float64, keep float64, n int)
+// Requires: AVX, FMA3
+TEXT ·addCrossAVX2(SB), NOSPLIT, $0-64
+	MOVQ         sr+0(FP), AX
+	MOVQ         si+8(FP), CX
+	MOVQ         ar+16(FP), DX
+	MOVQ         ai+24(FP), BX
+	MOVQ         br+32(FP), SI
+	MOVQ         bi+40(FP), DI
+	MOVQ         n+56(FP), R8
+	VBROADCASTSD keep+48(FP), Y0
+	XORQ         R9, R9
+
+bins:
+	VMOVUPD     (DX)(R9*8), Y1
+	VMOVUPD     (BX)(R9*8), Y2
+	VMOVUPD     (SI)(R9*8), Y3
+	VMOVUPD     (DI)(R9*8), Y4
+	VMULPD      Y2, Y4, Y5
+	VFMADD231PD Y1, Y3, Y5
+	VMULPD      Y1, Y4, Y1
+	VFMSUB231PD Y2, Y3, Y1
+	VFMADD231PD (AX)(R9*8), Y0, Y5
+	VFMADD231PD (CX)(R9*8), Y0, Y1
+	VMOVUPD     Y5, (AX)(R9*8)
+	VMOVUPD     Y1, (CX)(R9*8)
+	ADDQ        $0x04, R9
+	CMPQ        R9, R8
+	JL          bins
+	VZEROUPPER
+	RET
+
+// func addWeightedCrossAVX2(sr *float64, si *float64, ar *float64, ai *float64, br *float64, bi *float64, w *float64, keep float64, n int)
+// Requires: AVX, FMA3
+TEXT ·addWeightedCrossAVX2(SB), NOSPLIT, $0-72
+	MOVQ         sr+0(FP), AX
+	MOVQ         si+8(FP), CX
+	MOVQ         ar+16(FP), DX
+	MOVQ         ai+24(FP), BX
+	MOVQ         br+32(FP), SI
+	MOVQ         bi+40(FP), DI
+	MOVQ         w+48(FP), R8
+	MOVQ         n+64(FP), R9
+	VBROADCASTSD keep+56(FP), Y0
+	XORQ         R10, R10
+
+bins:
+	VMOVUPD     (DX)(R10*8), Y1
+	VMOVUPD     (BX)(R10*8), Y2
+	VMOVUPD     (SI)(R10*8), Y3
+	VMOVUPD     (DI)(R10*8), Y4
+	VMULPD      Y2, Y4, Y5
+	VFMADD231PD Y1, Y3, Y5
+	VMULPD      Y1, Y4, Y1
+	VFMSUB231PD Y2, Y3, Y1
+	VMOVUPD     (R8)(R10*8), Y2
+	VMULPD      Y2, Y5, Y5
+	VMULPD      Y2, Y1, Y1
+	VFMADD231PD (AX)(R10*8), Y0, Y5
+	VFMADD231PD (CX)(R10*8), Y0, Y1
+	VMOVUPD     Y5, (AX)(R10*8)
+	VMOVUPD     Y1, (CX)(R10*8)
+	ADDQ        $0x04, R10
+	CMPQ        R10, R9
+	JL          bins
 	VZEROUPPER
 	RET

@@ -3,6 +3,8 @@ package measure
 import (
 	"fmt"
 	"math"
+
+	"alidade/pkg/kernel"
 )
 
 // The analysis: short-time spectra under a periodic Hann window, half
@@ -169,24 +171,9 @@ func besselI0(x float64) float64 {
 // powers adds up the bin powers of one spectrum into the bands of g; dst is
 // indexed like layout.bands. p is scratch of size/2+1.
 func (g *grid) powers(dst []float64, p, re, im []float32) {
-	re, im = re[:len(p)], im[:len(p)]
-	for k := range p {
-		p[k] = re[k]*re[k] + im[k]*im[k]
-	}
+	kernel.Powers(p, re[:len(p)], im[:len(p)])
 	for i, b := range g.bands {
 		w := g.weights[i]
-		x := p[g.first[i] : g.first[i]+len(w)]
-		var s0, s1, s2, s3 float32
-		for len(w) >= 4 && len(x) >= 4 {
-			s0 += w[0] * x[0]
-			s1 += w[1] * x[1]
-			s2 += w[2] * x[2]
-			s3 += w[3] * x[3]
-			w, x = w[4:], x[4:]
-		}
-		for k, v := range w {
-			s0 += v * x[k]
-		}
-		dst[b] = g.scale * (float64(s0+s1) + float64(s2+s3))
+		dst[b] = g.scale * float64(kernel.Dot(w, p[g.first[i]:g.first[i]+len(w)]))
 	}
 }

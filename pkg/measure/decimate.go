@@ -1,5 +1,7 @@
 package measure
 
+import "alidade/pkg/kernel"
+
 // decimator makes every factor-th sample of the filtered signal and keeps the
 // last ones in a row. Sample i of its output stands at sample i·factor of its
 // input: the filter is symmetric and its delay is taken out. Before the first
@@ -32,7 +34,7 @@ func newDecimator(taps []float32, factor, chunk, row int) decimator {
 func (d *decimator) add(x []float32) {
 	d.n += copy(d.x[d.n:], x)
 	for d.next+len(d.taps) <= d.n {
-		d.fresh[d.made] = dot(d.taps, d.x[d.next:d.next+len(d.taps)])
+		d.fresh[d.made] = kernel.Dot(d.taps, d.x[d.next:d.next+len(d.taps)])
 		d.made++
 		d.next += d.factor
 	}
@@ -59,24 +61,3 @@ func (d *decimator) advance(n int) {
 
 // last returns the last n samples advanced over, shared.
 func (d *decimator) last(n int) []float32 { return d.row[len(d.row)-n:] }
-
-// dot is the scalar product. The order of the sum is fixed.
-func dot(a, b []float32) float32 {
-	b = b[:len(a)]
-	var s0, s1, s2, s3, s4, s5, s6, s7 float32
-	for len(a) >= 8 && len(b) >= 8 {
-		s0 += a[0] * b[0]
-		s1 += a[1] * b[1]
-		s2 += a[2] * b[2]
-		s3 += a[3] * b[3]
-		s4 += a[4] * b[4]
-		s5 += a[5] * b[5]
-		s6 += a[6] * b[6]
-		s7 += a[7] * b[7]
-		a, b = a[8:], b[8:]
-	}
-	for i, v := range a {
-		s0 += v * b[i]
-	}
-	return ((s0 + s1) + (s2 + s3)) + ((s4 + s5) + (s6 + s7))
-}

@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 )
 
 // FullScaleSamples is how many samples in a row have to stand at full scale to
@@ -17,21 +18,16 @@ const fullScale = 32767.0 / 32768
 // total adds up one channel.
 type total struct {
 	frames      int64
-	sum, square [2]float64 // of even and of odd frames
+	sums        kernel.Squares
 	peak        float32
 	run         int64 // samples at full scale just before
 	clipped     int64
 }
 
 // add takes samples and returns -1, or the place of the first one that is not
-// a finite number. Even and odd frames are added up apart, which is faster, and
-// in the order of frames, so the sums do not depend on how a signal is cut.
+// a finite number. The sums do not depend on how a signal is cut.
 func (t *total) add(x []float32) int {
-	var top uint32 // magnitudes compare like their bits; no number is above infinity
-	for _, v := range x {
-		top = max(top, math.Float32bits(v)&^(1<<31))
-	}
-	peak := math.Float32frombits(top)
+	peak := kernel.Peak(x)
 	if !(peak <= math.MaxFloat32) {
 		for i, v := range x {
 			if v-v != 0 {
@@ -45,27 +41,7 @@ func (t *total) add(x []float32) int {
 		t.run = 0
 	}
 	t.peak = max(t.peak, peak)
-	y := x
-	if t.frames%2 == 1 && len(y) > 0 {
-		v := float64(y[0])
-		t.sum[1] += v
-		t.square[1] += v * v
-		y = y[1:]
-	}
-	s0, s1, q0, q1 := t.sum[0], t.sum[1], t.square[0], t.square[1]
-	for ; len(y) >= 2; y = y[2:] {
-		a, b := float64(y[0]), float64(y[1])
-		s0 += a
-		s1 += b
-		q0 += a * a
-		q1 += b * b
-	}
-	if len(y) == 1 {
-		v := float64(y[0])
-		s0 += v
-		q0 += v * v
-	}
-	t.sum, t.square = [2]float64{s0, s1}, [2]float64{q0, q1}
+	t.sums.Add(x)
 	t.frames += int64(len(x))
 	return -1
 }
@@ -105,8 +81,8 @@ func (t *total) level() Level {
 	l := Level{Frames: t.frames, ClippedFrames: t.clipped, AWeightedDBFS: math.NaN(), RMSDBFS: math.Inf(-1)}
 	l.PeakDBFS = audio.AmplitudeDB(float64(t.peak))
 	if t.frames > 0 {
-		l.DC = (t.sum[0] + t.sum[1]) / float64(t.frames)
-		l.RMSDBFS = audio.PowerDB(2 * (t.square[0] + t.square[1]) / float64(t.frames))
+		l.DC = t.sums.Sum() / float64(t.frames)
+		l.RMSDBFS = audio.PowerDB(2 * t.sums.Square() / float64(t.frames))
 	}
 	return l
 }

@@ -5,6 +5,7 @@ import (
 	"math"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 	"alidade/pkg/spectral"
 )
 
@@ -215,11 +216,8 @@ func (m *Meter) window() {
 // analyse adds one window x of used channel i to the mean of grid g.
 func (m *Meter) analyse(g, i int, x []float32) {
 	l := &m.layout.grids[g]
-	w := l.window
 	y := m.x[:len(x)]
-	for n, v := range x {
-		y[n] = v * w[n]
-	}
+	kernel.Multiply(y, x, l.window)
 	bins := l.size/2 + 1
 	m.fft[g].Forward(m.re[:bins], m.im[:bins], y)
 	l.powers(m.power, m.p[:bins], m.re, m.im)

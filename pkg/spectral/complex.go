@@ -2,7 +2,6 @@ package spectral
 
 import (
 	"fmt"
-	"math"
 
 	"alidade/pkg/kernel"
 )
@@ -12,8 +11,7 @@ import (
 // transform. It holds scratch memory and is for one goroutine at a time.
 type Complex[T Float] struct {
 	n      int
-	steps  [][]kernel.Twiddle[T] // of each step of radix 4 but a last one
-	rows   []T                   // the twiddles of the first step as rows
+	steps  []*kernel.Twiddles[T] // of each step of radix 4 but a last one
 	last   int                   // the radix of the last step
 	br, bi []T                   // scratch
 }
@@ -27,19 +25,9 @@ func NewComplex[T Float](n int) (*Complex[T], error) {
 	c := &Complex[T]{n: n}
 	m := n
 	for ; m > 8 || m == 8 && (n == 8 || n >= 8192); m /= 4 {
-		tw := make([]kernel.Twiddle[T], m/4)
-		for p := range tw {
-			for q := 1; q <= 3; q++ {
-				sin, cos := math.Sincos(-2 * math.Pi * float64(q*p) / float64(m))
-				tw[p][2*q-2], tw[p][2*q-1] = T(cos), T(sin)
-			}
-		}
-		c.steps = append(c.steps, tw)
+		c.steps = append(c.steps, kernel.NewTwiddles[T](m, n/m))
 	}
 	c.last = m
-	if len(c.steps) > 0 {
-		c.rows = kernel.Rows(c.steps[0])
-	}
 	c.br, c.bi = pair[T](n)
 	return c, nil
 }
@@ -116,7 +104,7 @@ func (c *Complex[T]) forwardReal(re, im, x []T) {
 	if len(c.steps)%2 == 1 {
 		tr, ti = c.br, c.bi
 	}
-	kernel.FirstStepReal(tr, ti, x, c.steps[0], c.rows)
+	kernel.FirstStepReal(tr, ti, x, c.steps[0])
 	c.run(re, im, tr, ti, 1)
 }
 
@@ -129,7 +117,7 @@ func (c *Complex[T]) run(re, im, xr, xi []T, from int) {
 			yr, yi = re, im
 		}
 		if k == 0 {
-			kernel.FirstStep(yr, yi, xr, xi, c.steps[0], c.rows)
+			kernel.FirstStep(yr, yi, xr, xi, c.steps[0])
 		} else {
 			kernel.Step(yr, yi, xr, xi, c.steps[k])
 		}

@@ -4,6 +4,7 @@ import (
 	"fmt"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 )
 
 // Spectra are the spectra of one frame of an STFT. They belong to the STFT and
@@ -122,11 +123,8 @@ func (s *STFT) transform() error {
 	for ch := range s.channels {
 		x := s.in.Channel(ch)
 		if s.window != nil {
-			w, y := s.window[:len(x)], s.windowed[:len(x)]
-			for i, v := range x {
-				y[i] = v * w[i]
-			}
-			x = y
+			kernel.Multiply(s.windowed, x, s.window)
+			x = s.windowed
 		}
 		s.fft.Forward(s.spec.Re[ch], s.spec.Im[ch], x)
 	}

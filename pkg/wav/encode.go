@@ -3,6 +3,8 @@ package wav
 import (
 	"encoding/binary"
 	"math"
+
+	"alidade/pkg/kernel"
 )
 
 // The integer encoders turn channel ch of a block into interleaved samples:
@@ -34,12 +36,17 @@ func encode16(dst []byte, src []float32, stride int, sum, seed, at, step uint64)
 
 func encode24(dst []byte, src []float32, stride int, sum uint64) uint64 {
 	p := 0
-	for _, x := range src {
-		v := clamp(math.RoundToEven(float64(x)*(1<<23)), 1<<23)
-		b := dst[p : p+3 : p+3]
-		b[0], b[1], b[2] = byte(v), byte(v>>8), byte(v>>16)
-		sum = mix(sum, uint32(v))
-		p += stride
+	var whole [256]int32
+	for len(src) > 0 {
+		n := min(len(src), len(whole))
+		kernel.Quantise(whole[:n], src[:n], 1<<23)
+		for _, v := range whole[:n] {
+			b := dst[p : p+3 : p+3]
+			b[0], b[1], b[2] = byte(v), byte(v>>8), byte(v>>16)
+			sum = mix(sum, uint32(v))
+			p += stride
+		}
+		src = src[n:]
 	}
 	return sum
 }

@@ -9,6 +9,7 @@ import (
 	"slices"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 )
 
 const (
@@ -257,10 +258,8 @@ func (w *Writer) measure(part audio.Block) error {
 	peak := uint32(math.Float32bits(float32(w.out.Peak)))
 	was, top := peak, uint32(0)
 	for ch := range part.Channels() {
-		for _, x := range part.Channel(ch) {
-			// Without its sign, a float32 is ordered like its bits.
-			top = max(top, math.Float32bits(x)&^(1<<31))
-		}
+		// Without its sign, a float32 is ordered like its bits.
+		top = max(top, math.Float32bits(kernel.Peak(part.Channel(ch))))
 	}
 	if top <= was && top <= math.Float32bits(1) {
 		return nil

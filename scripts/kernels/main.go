@@ -7,6 +7,9 @@
 package main
 
 import (
+	"fmt"
+	"strings"
+
 	. "github.com/mmcloughlin/avo/build"
 	. "github.com/mmcloughlin/avo/operand"
 	. "github.com/mmcloughlin/avo/reg"
@@ -16,15 +19,23 @@ func main() {
 	ConstraintExpr("amd64")
 	addFIR()
 	addProduct()
-	transforms()
-	halves()
+	for _, b := range []int{4, 8} {
+		precision(b)
+		transforms()
+		halves()
+	}
+	precision(4)
 	deinterleave()
+	phases()
+	sums()
+	crosses()
 	Generate()
 }
 
-// function begins a function that keeps no pointer it is given.
+// function begins a function that keeps no pointer it is given. T in the
+// signature is the float of the present precision.
 func function(name, signature, doc string) {
-	TEXT(name, NOSPLIT, signature)
+	TEXT(name, NOSPLIT, strings.NewReplacer("*T", fmt.Sprintf("*float%d", 8*bytes), " float,", fmt.Sprintf(" float%d,", 8*bytes)).Replace(signature))
 	Pragma("noescape")
 	Doc(doc)
 }

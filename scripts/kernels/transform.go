@@ -8,15 +8,17 @@ import (
 	. "github.com/mmcloughlin/avo/reg"
 )
 
-// value is eight complex values.
+// value is a register of complex values.
 type value struct{ r, i VecVirtual }
 
 // transforms are the steps of the complex transform, see pkg/kernel/transform.go
 // for what each of them is.
 func transforms() {
-	firstStep("firstStepAVX2", false)
-	firstStep("firstStepRealAVX2", true)
-	secondStep()
+	firstStep(named("firstStep"), false)
+	firstStep(named("firstStepReal"), true)
+	if bytes == 4 {
+		secondStep()
+	}
 	step()
 	lastStep2()
 	lastStep4()
@@ -26,8 +28,8 @@ func transforms() {
 // sumDifference returns x + y and x - y; x and y are used up.
 func sumDifference(x, y VecVirtual) (sum, difference VecVirtual) {
 	sum = YMM()
-	VADDPS(y, x, sum)
-	VSUBPS(y, x, x)
+	add(y, x, sum)
+	sub(y, x, x)
 	return sum, x
 }
 
@@ -56,17 +58,17 @@ func fourth(t0, t1, t2, t3 value) [4]value {
 // times returns v·w; v is used up.
 func times(v value, wr, wi Op) value {
 	i := YMM()
-	VMULPS(wi, v.r, i)
-	VFMADD231PS(wr, v.i, i)
-	VMULPS(wi, v.i, v.i)
-	VFMSUB132PS(wr, v.i, v.r)
+	mul(wi, v.r, i)
+	mulAdd(wr, v.i, i)
+	mul(wi, v.i, v.i)
+	mulSub132(wr, v.i, v.r)
 	return value{v.r, i}
 }
 
 // loaded returns a register with the eight values at m.
 func loaded(m Mem) VecVirtual {
 	v := YMM()
-	VMOVUPS(m, v)
+	move(m, v)
 	return v
 }
 
@@ -87,30 +89,46 @@ func tripled(r Register) Register {
 // lands at 4·p + j.
 func across(to Register, v [4]VecVirtual) {
 	u := [4]VecVirtual{YMM(), YMM(), YMM(), YMM()}
+	if bytes == 8 {
+		VUNPCKLPD(v[1], v[0], u[0])
+		VUNPCKHPD(v[1], v[0], u[2])
+		VUNPCKLPD(v[3], v[2], u[1])
+		VUNPCKHPD(v[3], v[2], u[3])
+		rows(to, u)
+		return
+	}
 	VUNPCKLPS(v[1], v[0], u[0])
 	VUNPCKLPS(v[3], v[2], u[1])
 	VUNPCKHPS(v[1], v[0], u[2])
 	VUNPCKHPS(v[3], v[2], u[3])
-	for k := range 4 {
-		row := v[k]
-		if k%2 == 0 {
-			VUNPCKLPD(u[k+1], u[k], row)
-		} else {
-			VUNPCKHPD(u[k], u[k-1], row)
-		}
-		VMOVUPS(row.AsX(), Mem{Base: to, Disp: 16 * k})
-		VEXTRACTF128(Imm(1), row, Mem{Base: to, Disp: 64 + 16*k})
+	VUNPCKLPD(u[1], u[0], v[0])
+	VUNPCKHPD(u[1], u[0], v[1])
+	VUNPCKLPD(u[3], u[2], v[2])
+	VUNPCKHPD(u[3], u[2], v[3])
+	rows(to, v)
+}
+
+// rows writes the lower halves of four registers to memory, one after the
+// other, and behind them the upper halves. Four whole stores are faster than
+// eight of halves.
+func rows(to Register, v [4]VecVirtual) {
+	for k := 0; k < 4; k += 2 {
+		low := YMM()
+		VINSERTF128(Imm(1), v[k+1].AsX(), v[k], low)
+		VPERM2F128(Imm(0x31), v[k+1], v[k], v[k])
+		move(low, Mem{Base: to, Disp: 16 * k})
+		move(v[k], Mem{Base: to, Disp: 64 + 16*k})
 	}
 }
 
 // firstStep is the first step: count twiddles, a multiple of 8, wide holds the
 // real and imaginary parts of w, w² and w³ in six rows of count values.
 func firstStep(name string, alternating bool) {
-	what, signature := "", "func(yr, yi, xr, xi, wide *float32, count int)"
+	what, signature := "", "func(yr, yi, xr, xi, wide *T, count int)"
 	if alternating {
-		what, signature = " of values whose real and imaginary parts alternate", "func(yr, yi, x, wide *float32, count int)"
+		what, signature = " of values whose real and imaginary parts alternate", "func(yr, yi, x, wide *T, count int)"
 	}
-	function(name, signature, name+" is the first step"+what+"; count is a multiple of 8.")
+	function(name, signature, name+" is the first step"+what+"; count is a multiple of "+width()+".")
 	to := params("yr", "yi")
 	var from []Register
 	if alternating {
@@ -121,7 +139,7 @@ func firstStep(name string, alternating bool) {
 	w, count := Load(Param("wide"), GP64()), Load(Param("count"), GP64())
 	row := GP64() // bytes of a row, and of a quarter of the real parts
 	MOVQ(count, row)
-	SHLQ(Imm(2), row)
+	SHLQ(Imm(shift), row)
 	threeRows := tripled(row)
 	w2 := GP64() // the row of the real part of w³, the fifth
 	LEAQ(Mem{Base: w, Index: row, Scale: 4}, w2)
@@ -138,7 +156,8 @@ func firstStep(name string, alternating bool) {
 		if !alternating {
 			return value{loaded(m), loaded(quarters(from[1], stride, three)[k])}
 		}
-		// Values 0..3 and 8..11, 4..7 and 12..15: then each half is whole. (A
+		// The first and third sixteen bytes, the second and fourth: then shuffling
+		// within the halves is enough. (A
 		// load of the lower half alone would count as a partial definition.)
 		low, high := YMM(), YMM()
 		at := func(d int) Mem { m.Disp = d; return m }
@@ -147,8 +166,13 @@ func firstStep(name string, alternating bool) {
 		VBROADCASTF128(at(16), high)
 		VINSERTF128(Imm(1), at(48), high, high)
 		r := YMM()
-		VSHUFPS(Imm(0x88), high, low, r)
-		VSHUFPS(Imm(0xDD), high, low, low)
+		if bytes == 8 {
+			VUNPCKLPD(high, low, r)
+			VUNPCKHPD(high, low, low)
+		} else {
+			VSHUFPS(Imm(0x88), high, low, r)
+			VSHUFPS(Imm(0xDD), high, low, low)
+		}
 		return value{r, low}
 	})
 	near := quarters(w, row, threeRows)
@@ -169,17 +193,19 @@ func firstStep(name string, alternating bool) {
 	for _, r := range to {
 		ADDQ(Imm(128), r)
 	}
-	SUBQ(Imm(8), count)
+	SUBQ(Imm(uint64(32/bytes)), count)
 	JNZ(LabelRef("eight"))
 	end()
 }
 
-// secondStep is the step with s = 4, count twiddles, an even number.
+// secondStep is the step with s = 4 in float32, count twiddles, an even number:
+// two at a time. wide holds the six parts of two twiddles in registers, each four
+// times.
 func secondStep() {
-	function("secondStepAVX2", "func(yr, yi, xr, xi, tw *float32, count int)",
-		"secondStepAVX2 is the step of four transforms; count is even.")
-	p := params("yr", "yi", "xr", "xi", "tw", "count")
-	yr, yi, xr, xi, tw, count := p[0], p[1], p[2], p[3], p[4], p[5]
+	function("secondStepFloat32AVX2", "func(yr, yi, xr, xi, wide *float32, count int)",
+		"secondStepFloat32AVX2 is the step of four transforms; count is even.")
+	p := params("yr", "yi", "xr", "xi", "wide", "count")
+	yr, yi, xr, xi, wide, count := p[0], p[1], p[2], p[3], p[4], p[5]
 	stride := GP64()
 	MOVQ(count, stride)
 	SHLQ(Imm(4), stride)
@@ -188,31 +214,16 @@ func secondStep() {
 	y := butterfly(func(k int) value {
 		return value{loaded(quarters(xr, stride, three)[k]), loaded(quarters(xi, stride, three)[k])}
 	})
-	// The factor of this twiddle in the lower half, of the next in the upper.
-	factor := func(k int) VecVirtual {
-		low, high := YMM(), YMM()
-		VBROADCASTSS(Mem{Base: tw, Disp: 4 * k}, low)
-		VBROADCASTSS(Mem{Base: tw, Disp: 24 + 4*k}, high)
-		VBLENDPS(Imm(0xF0), high, low, low)
-		return low
-	}
 	for k := 1; k < 4; k++ {
-		y[k] = times(y[k], factor(2*k-2), factor(2*k-1))
+		y[k] = times(y[k], Mem{Base: wide, Disp: 64*k - 64}, Mem{Base: wide, Disp: 64*k - 32})
 	}
-	for k, v := range y {
-		for _, part := range []struct {
-			to Register
-			v  VecVirtual
-		}{{yr, v.r}, {yi, v.i}} {
-			VMOVUPS(part.v.AsX(), Mem{Base: part.to, Disp: 16 * k})
-			VEXTRACTF128(Imm(1), part.v, Mem{Base: part.to, Disp: 64 + 16*k})
-		}
-	}
+	rows(yr, [4]VecVirtual{y[0].r, y[1].r, y[2].r, y[3].r})
+	rows(yi, [4]VecVirtual{y[0].i, y[1].i, y[2].i, y[3].i})
 	ADDQ(Imm(32), xr)
 	ADDQ(Imm(32), xi)
-	ADDQ(Imm(128), yr)
-	ADDQ(Imm(128), yi)
-	ADDQ(Imm(48), tw)
+	ADDQ(U32(128), yr)
+	ADDQ(U32(128), yi)
+	ADDQ(U32(192), wide)
 	SUBQ(Imm(2), count)
 	JNZ(LabelRef("two"))
 	end()
@@ -220,11 +231,11 @@ func secondStep() {
 
 // step is a step of s transforms, a multiple of 8, and count twiddles.
 func step() {
-	function("stepAVX2", "func(yr, yi, xr, xi, tw *float32, count, s int)",
-		"stepAVX2 is a step of s transforms, a multiple of 8.")
+	function(named("step"), "func(yr, yi, xr, xi, tw *T, count, s int)",
+		named("step")+" is a step of s transforms, a multiple of "+width()+".")
 	p := params("yr", "yi", "xr", "xi", "tw", "count", "s")
 	yr, yi, xr, xi, tw, count, s := p[0], p[1], p[2], p[3], p[4], p[5], p[6]
-	SHLQ(Imm(2), s)
+	SHLQ(Imm(shift), s)
 	stride := GP64()
 	MOVQ(count, stride)
 	IMULQ(s, stride)
@@ -233,7 +244,7 @@ func step() {
 	var w [6]VecVirtual
 	for k := range w {
 		w[k] = YMM()
-		VBROADCASTSS(Mem{Base: tw, Disp: 4 * k}, w[k])
+		spread(Mem{Base: tw, Disp: bytes * k}, w[k])
 	}
 	left := GP64()
 	MOVQ(s, left)
@@ -245,8 +256,8 @@ func step() {
 		if k > 0 {
 			v = times(v, w[2*k-2], w[2*k-1])
 		}
-		VMOVUPS(v.r, quarters(yr, s, threeS)[k])
-		VMOVUPS(v.i, quarters(yi, s, threeS)[k])
+		move(v.r, quarters(yr, s, threeS)[k])
+		move(v.i, quarters(yi, s, threeS)[k])
 	}
 	for _, r := range []Register{xr, xi, yr, yi} {
 		ADDQ(Imm(32), r)
@@ -255,7 +266,7 @@ func step() {
 	JNZ(LabelRef("eight"))
 	ADDQ(threeS, yr)
 	ADDQ(threeS, yi)
-	ADDQ(Imm(24), tw)
+	ADDQ(Imm(uint64(6*bytes)), tw)
 	DECQ(count)
 	JNZ(LabelRef("twiddle"))
 	end()
@@ -263,19 +274,19 @@ func step() {
 
 // lastStep2 is the step of radix 2, s a multiple of 8.
 func lastStep2() {
-	function("lastStep2AVX2", "func(yr, yi, xr, xi *float32, s int)",
-		"lastStep2AVX2 is the step of radix 2 of s transforms, a multiple of 8.")
+	function(named("lastStep2"), "func(yr, yi, xr, xi *T, s int)",
+		named("lastStep2")+" is the step of radix 2 of s transforms, a multiple of "+width()+".")
 	p := params("yr", "yi", "xr", "xi", "s")
 	yr, yi, xr, xi, left := p[0], p[1], p[2], p[3], p[4]
-	SHLQ(Imm(2), left)
+	SHLQ(Imm(shift), left)
 	stride := GP64()
 	MOVQ(left, stride)
 	Label("eight")
 	for k, from := range []Register{xr, xi} {
 		to := []Register{yr, yi}[k]
 		sum, difference := sumDifference(loaded(Mem{Base: from}), loaded(Mem{Base: from, Index: stride, Scale: 1}))
-		VMOVUPS(sum, Mem{Base: to})
-		VMOVUPS(difference, Mem{Base: to, Index: stride, Scale: 1})
+		move(sum, Mem{Base: to})
+		move(difference, Mem{Base: to, Index: stride, Scale: 1})
 	}
 	for _, r := range p[:4] {
 		ADDQ(Imm(32), r)
@@ -287,11 +298,11 @@ func lastStep2() {
 
 // lastStep4 is the last step of radix 4, s a multiple of 8.
 func lastStep4() {
-	function("lastStep4AVX2", "func(yr, yi, xr, xi *float32, s int)",
-		"lastStep4AVX2 is the last step of radix 4 of s transforms, a multiple of 8.")
+	function(named("lastStep4"), "func(yr, yi, xr, xi *T, s int)",
+		named("lastStep4")+" is the last step of radix 4 of s transforms, a multiple of "+width()+".")
 	p := params("yr", "yi", "xr", "xi", "s")
 	yr, yi, xr, xi, left := p[0], p[1], p[2], p[3], p[4]
-	SHLQ(Imm(2), left)
+	SHLQ(Imm(shift), left)
 	stride := GP64()
 	MOVQ(left, stride)
 	three := tripled(stride)
@@ -300,8 +311,8 @@ func lastStep4() {
 		return value{loaded(quarters(xr, stride, three)[k]), loaded(quarters(xi, stride, three)[k])}
 	})
 	for k, v := range y {
-		VMOVUPS(v.r, quarters(yr, stride, three)[k])
-		VMOVUPS(v.i, quarters(yi, stride, three)[k])
+		move(v.r, quarters(yr, stride, three)[k])
+		move(v.i, quarters(yi, stride, three)[k])
 	}
 	for _, r := range p[:4] {
 		ADDQ(Imm(32), r)
@@ -314,13 +325,12 @@ func lastStep4() {
 // lastStep8 is the last step of radix 8, s a multiple of 8: the even bins of
 // the eight from sums of values four apart, the odd ones from differences.
 func lastStep8() {
-	root := GLOBL("rootHalf", RODATA|NOPTR)
-	DATA(0, F32(float32(math.Sqrt(0.5))))
-	function("lastStep8AVX2", "func(yr, yi, xr, xi *float32, s int)",
-		"lastStep8AVX2 is the last step of radix 8 of s transforms, a multiple of 8.")
+	root := constant("rootHalf", math.Sqrt(0.5))
+	function(named("lastStep8"), "func(yr, yi, xr, xi *T, s int)",
+		named("lastStep8")+" is the last step of radix 8 of s transforms, a multiple of "+width()+".")
 	p := params("yr", "yi", "xr", "xi", "s")
 	yr, yi, xr, xi, left := p[0], p[1], p[2], p[3], p[4]
-	SHLQ(Imm(2), left)
+	SHLQ(Imm(shift), left)
 	s1 := GP64()
 	MOVQ(left, s1)
 	s3, s5, s7 := tripled(s1), GP64(), GP64()
@@ -340,24 +350,24 @@ func lastStep8() {
 		return Mem{Base: r, Index: s7, Scale: 1}
 	}
 	half := YMM()
-	VBROADCASTSS(root, half)
+	spread(root, half)
 	store := func(first int, y [4]value) {
 		for k, v := range y {
-			VMOVUPS(v.r, at(yr, first+2*k))
-			VMOVUPS(v.i, at(yi, first+2*k))
+			move(v.r, at(yr, first+2*k))
+			move(v.i, at(yi, first+2*k))
 		}
 	}
 	Label("eight")
 	store(0, butterfly(func(k int) value {
 		v := value{loaded(at(xr, k)), loaded(at(xi, k))}
-		VADDPS(at(xr, k+4), v.r, v.r)
-		VADDPS(at(xi, k+4), v.i, v.i)
+		add(at(xr, k+4), v.r, v.r)
+		add(at(xi, k+4), v.i, v.i)
 		return v
 	}))
 	difference := func(k int) value {
 		v := value{loaded(at(xr, k)), loaded(at(xi, k))}
-		VSUBPS(at(xr, k+4), v.r, v.r)
-		VSUBPS(at(xi, k+4), v.i, v.i)
+		sub(at(xr, k+4), v.r, v.r)
+		sub(at(xi, k+4), v.i, v.i)
 		return v
 	}
 	// c1·e^{-jπ/4} and c3·e^{-j3π/4} are (r+i, i-r)/√2 and (i-r, -r-i)/√2.
@@ -366,10 +376,10 @@ func lastStep8() {
 	t1i, t0i := sumDifference(c0.i, c2.r)
 	turned := func(c value) (sum, back VecVirtual) {
 		sum = YMM()
-		VADDPS(c.i, c.r, sum)
-		VSUBPS(c.r, c.i, c.i)
-		VMULPS(half, sum, sum)
-		VMULPS(half, c.i, c.i)
+		add(c.i, c.r, sum)
+		sub(c.r, c.i, c.i)
+		mul(half, sum, sum)
+		mul(half, c.i, c.i)
 		return sum, c.i
 	}
 	c1r, c1i := turned(difference(1))
