@@ -3,6 +3,7 @@ package main
 import (
 	"errors"
 	"fmt"
+	"io"
 	"strings"
 
 	"github.com/urfave/cli/v2"
@@ -49,6 +50,8 @@ Limits (a negative number turns a check off)
 
 What is said
   --json                 one JSON document: state, channels[], findings[]
+  --html FILE            the page to look at
+  --overwrite            replace a page that exists
   --fail-on LEVEL        exit code 3 on a finding of this level or above:
                          never (default), warning or error
   --quiet                no progress
@@ -77,7 +80,7 @@ func checkVerb() verb {
 				&cli.BoolFlag{Name: "find-chain"}, &cli.BoolFlag{Name: "find-set"},
 				&cli.Float64Flag{Name: "temperature-c"}, &cli.Float64Flag{Name: "humidity-pct"},
 				&cli.Float64Flag{Name: "pressure-kpa"}, &cli.Float64Flag{Name: "speed-of-sound"},
-				&cli.BoolFlag{Name: "json"}, &cli.StringFlag{Name: "fail-on", Value: failNever}, &cli.BoolFlag{Name: "quiet"},
+				&cli.BoolFlag{Name: "json"}, &cli.StringFlag{Name: "html"}, &cli.BoolFlag{Name: "overwrite"}, &cli.StringFlag{Name: "fail-on", Value: failNever}, &cli.BoolFlag{Name: "quiet"},
 			}
 			for _, l := range checkLimits {
 				list = append(list, &cli.Float64Flag{Name: l.name})
@@ -140,6 +143,16 @@ func runCheck(u *ui, c *cli.Context) error {
 	progress.finish()
 	if err != nil {
 		return err
+	}
+	if c.IsSet("html") {
+		inputs := []string{c.String("rig")}
+		for _, f := range res.Take.Files {
+			inputs = append(inputs, f.Path)
+		}
+		err := pipeline.WriteWhole(c.String("html"), c.Bool("overwrite"), inputs, func(w io.Writer) error { return report.CheckHTML(w, res) })
+		if err != nil {
+			return err
+		}
 	}
 	if c.Bool("json") {
 		if err := report.WriteJSON(u.stdout, res); err != nil {

@@ -72,7 +72,8 @@ What is said
   --json                 one JSON document on standard output
   --csv FILE             the figures at each frequency as a table
   --pattern-csv FILE     the response over angle and frequency as a table
-  --overwrite            replace tables that exist
+  --html FILE            the page to look at
+  --overwrite            replace tables and pages that exist
   --help, -h             this text
 `
 
@@ -120,6 +121,7 @@ func predictFlags() []cli.Flag {
 		&cli.BoolFlag{Name: "json"},
 		&cli.StringFlag{Name: "csv"},
 		&cli.StringFlag{Name: "pattern-csv"},
+		&cli.StringFlag{Name: "html"},
 		&cli.BoolFlag{Name: "overwrite"},
 	)
 }
@@ -132,7 +134,7 @@ func runPredict(u *ui, c *cli.Context) error {
 		Pattern: c.Bool("pattern") || c.IsSet("pattern-csv"), StepDeg: c.Float64("pattern-step"),
 		PlacementMM: c.Float64("placement-mm"), GainErrorDB: c.Float64("gain-error-db"),
 		PhaseErrorDeg: c.Float64("phase-error-deg"), TemperatureErrorC: c.Float64("temperature-error-c"),
-		Trials: c.Int("trials"), Seed: c.Uint64("seed"),
+		Trials: c.Int("trials"), Seed: c.Uint64("seed"), Picture: c.IsSet("html"),
 	}
 	var faults []error
 	fault := func(format string, args ...any) { faults = append(faults, fmt.Errorf("predict: "+format, args...)) }
@@ -165,7 +167,7 @@ func runPredict(u *ui, c *cli.Context) error {
 	for _, file := range []struct {
 		option string
 		write  func(io.Writer, *pipeline.Prediction) error
-	}{{"csv", report.PredictionCSV}, {"pattern-csv", report.PatternCSV}} {
+	}{{"csv", report.PredictionCSV}, {"pattern-csv", report.PatternCSV}, {"html", report.PredictionHTML}} {
 		if !c.IsSet(file.option) {
 			continue
 		}

@@ -34,8 +34,11 @@ type Response struct {
 	// AnglesDeg are the azimuths of the columns, ascending and evenly spaced.
 	AnglesDeg    []float64 `json:"angles_deg"`
 	ElevationDeg float64   `json:"elevation_deg"` // of all of them
-	Hz           []float64 `json:"hz"`            // of the rows, ascending, evenly spaced on a logarithmic axis
-	Levels       Levels    `json:"levels"`        // [frequency][angle], dB re the steered direction
+	// DistanceM is how far from the reference point the sources are taken to be,
+	// that of a focus; null for far sources.
+	DistanceM Number    `json:"distance_m"`
+	Hz        []float64 `json:"hz"`     // of the rows, ascending, evenly spaced on a logarithmic axis
+	Levels    Levels    `json:"levels"` // [frequency][angle], dB re the steered direction
 	// GratingFreeBelowHz is the frequency from which on a grating lobe lies in
 	// the visible region.
 	GratingFreeBelowHz Number `json:"grating_free_below_hz"`

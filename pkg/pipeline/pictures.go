@@ -291,8 +291,8 @@ const (
 // lobeHz are the frequencies at which lobes are marked.
 var lobeHz = [...]float64{500, 1000, 2000, 4000, 8000, 12500}
 
-// pattern is what the weights in force let through, for far sources at the
-// elevation that the beam is steered to.
+// pattern is what the weights in force let through, for sources at the
+// elevation that the beam is steered to and at the distance of a focus.
 func (b *beamline) pattern() *Response {
 	rate := float64(b.model.Rate)
 	look := b.look.Direction(b.ref)
@@ -303,10 +303,19 @@ func (b *beamline) pattern() *Response {
 	if len(b.at) > fineMics {
 		step = 2
 	}
+	metres, near := beam.CutDistance()
+	if near {
+		p.DistanceM = number(metres)
+	}
 	var waves []acoustics.Wave
 	for a := -180; a <= 180; a += step {
 		p.AnglesDeg = append(p.AnglesDeg, float64(a))
-		waves = append(waves, acoustics.Plane{From: rig.Direction{Azimuth: float64(a) * math.Pi / 180, Elevation: look.Elevation}})
+		from := rig.Direction{Azimuth: float64(a) * math.Pi / 180, Elevation: look.Elevation}
+		if near {
+			waves = append(waves, acoustics.Spherical{At: b.ref.Add(from.Unit().Scale(metres))})
+		} else {
+			waves = append(waves, acoustics.Plane{From: from})
+		}
 	}
 	pattern := beam.Pattern(waves, p.Hz)
 	levels := make([]float64, 0, len(p.Hz)*len(waves))
@@ -368,14 +377,13 @@ func lobes(b response.Beam, look rig.Direction, highest float64) []Lobe {
 		}
 		for _, a := range at.GratingLobes {
 			for _, az := range place(a) {
-				wave := acoustics.Plane{From: cut.Toward(a)}
-				level := b.Pattern([]acoustics.Wave{wave}, []float64{at.Hz}).LevelDB(0, 0)
+				level := b.Pattern([]acoustics.Wave{b.CutWave(cut, a)}, []float64{at.Hz}).LevelDB(0, 0)
 				here = append(here, Lobe{Hz: at.Hz, AzimuthDeg: az, LevelDB: level, Kind: "grating"})
 			}
 		}
 		if at.Beamwidth != nil {
 			for _, az := range place(at.Peak) {
-				level := b.Pattern([]acoustics.Wave{acoustics.Plane{From: cut.Toward(at.Peak)}}, []float64{at.Hz}).LevelDB(0, 0)
+				level := b.Pattern([]acoustics.Wave{b.CutWave(cut, at.Peak)}, []float64{at.Hz}).LevelDB(0, 0)
 				here = append(here, Lobe{Hz: at.Hz, AzimuthDeg: az, LevelDB: level, Kind: "main"})
 			}
 		}

@@ -23,6 +23,7 @@ type PredictOptions struct {
 	RateHz  int     `json:"rate,omitempty"`  // of the takes to come; default 48000
 	Pattern bool    `json:"pattern,omitempty"`
 	StepDeg float64 `json:"pattern_step,omitempty"` // default 1
+	Picture bool    `json:"-"`                      // fill in what the page draws
 
 	PlacementMM       float64 `json:"placement_mm,omitempty"` // standard deviations of errors
 	GainErrorDB       float64 `json:"gain_error_db,omitempty"`
@@ -227,6 +228,9 @@ func (p *predictor) predict(version string) (*Prediction, error) {
 	out.Bands = p.bands()
 	if p.set.Pattern {
 		out.Response = p.pattern()
+	}
+	if p.set.Picture {
+		out.Picture = p.line.pattern()
 	}
 	if p.set.tolerant() {
 		var err error

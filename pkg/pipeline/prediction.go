@@ -28,6 +28,7 @@ type Prediction struct {
 	Bands              []PredictedBand      `json:"bands"` // one-third octaves
 	Response           *PredictedResponse   `json:"response,omitempty"`
 	Tolerance          *Tolerance           `json:"tolerance,omitempty"`
+	Picture            *Response            `json:"picture,omitempty"` // what the page draws, where one is asked for
 	Findings           []Finding            `json:"findings"`
 }
 

@@ -87,9 +87,16 @@ func responseChart(r *pipeline.Result) (*chart, error) {
 			s.Dot(x.At(lobe.AzimuthDeg), y.At(lobe.Hz), 5, "lobe main", data...)
 		}
 	}
+	far := "a far source"
+	if r.Steer.Kind == "followed" {
+		far = "the mean direction, since the beam moved, and a far source"
+	}
+	if p.DistanceM != nil {
+		far = "a source " + decimals(*p.DistanceM, 2) + " m away"
+	}
 	return &chart{Key: "response", Name: "Response over angle and frequency, Hz", Picture: s.Close(), Low: decimals(p.Levels.LowDB, 0) + " dB", High: decimals(p.Levels.HighDB, 0) + " dB",
-		Caption: fmt.Sprintf("Light is let through: %s to %s dB against the steered direction (the upright line), for a far source at elevation %s°. Marked at a few frequencies: rings the main lobe, dots side lobes, diamonds grating lobes, heard like the wanted sound.",
-			decimals(p.Levels.LowDB, 0), decimals(p.Levels.HighDB, 0), decimals(p.ElevationDeg, 0))}, nil
+		Caption: fmt.Sprintf("Light is let through: %s to %s dB against the steered direction (the upright line), for %s at elevation %s°. Marked at a few frequencies: rings the main lobe, dots side lobes, diamonds grating lobes, heard like the wanted sound.",
+			decimals(p.Levels.LowDB, 0), decimals(p.Levels.HighDB, 0), far, decimals(p.ElevationDeg, 0))}, nil
 }
 
 // polarCharts draws the response around the rig at a few frequencies.

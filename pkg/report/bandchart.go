@@ -47,6 +47,12 @@ func bandCharts(r *pipeline.Result) []chart {
 		if measured == 0 && (!q.predicted || len(list) > 0) {
 			continue
 		}
+		if q.Key == "snr_gain_db" && measured == 0 {
+			// The noise alone may be known: its chart has the predictions too.
+			if _, noise := meanOf(r.Bands, func(b pipeline.Band) pipeline.Number { return b.NoiseReductionDB }); noise > 0 {
+				continue
+			}
+		}
 		list = append(list, bandChart(r.Bands, q, measured))
 	}
 	return list
@@ -89,7 +95,7 @@ func bandChart(bands []pipeline.Band, q quantity, measured int) chart {
 	}
 	step := 100 / math.Max(1, float64(len(bands)))
 	for i, b := range bands {
-		drawBand(&s, b, q, y, float64(i)*step, step)
+		drawBand(&s, b, q, y, float64(i)*step, step, measured > 0)
 	}
 	s.Line(0, y.At(0), 100, y.At(0), "zero")
 	for i, b := range bands {
@@ -112,8 +118,9 @@ func bandChart(bands []pipeline.Band, q quantity, measured int) chart {
 	return chart{Key: q.Key, Name: name, Picture: s.Close(), Caption: caption}
 }
 
-// drawBand draws one band of the chart between x and x+step per cent.
-func drawBand(s *draw.SVG, b pipeline.Band, q quantity, y draw.Scale, x, step float64) {
+// drawBand draws one band of the chart between x and x+step per cent; what was
+// not measured is marked where anything was.
+func drawBand(s *draw.SVG, b pipeline.Band, q quantity, y draw.Scale, x, step float64, some bool) {
 	mid := x + step/2
 	s.Group("band", "data-hz", Round(b.NominalHz, "nominal_hz"))
 	if v := q.value(b); v != nil {
@@ -123,7 +130,7 @@ func drawBand(s *draw.SVG, b pipeline.Band, q quantity, y draw.Scale, x, step fl
 		}
 		top, bottom := y.At(math.Max(*v, 0)), y.At(math.Min(*v, 0))
 		s.Rect(x+0.14*step, top, 0.72*step, bottom-top, class, "data-value", Round(*v, q.Key))
-	} else {
+	} else if some {
 		s.Rect(x+0.14*step, y.At(0)-2, 0.72*step, 2, "unmeasured")
 	}
 	if ci := q.interval(b); ci != nil {

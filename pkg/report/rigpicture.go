@@ -62,8 +62,13 @@ func rigPicture(r *pipeline.Result) *chart {
 		from, edge = "from behind, up at the top", "up"
 	}
 	var s draw.SVG
-	s.Open("rig", fmt.Sprintf("The rig %s seen %s: %d microphones, %d in use, steered to %s.",
-		clean(r.Rig.Name), from, len(r.Rig.Mics), r.Rig.MicrophonesUsed, directionWords(r)))
+	// A rig that is only looked at is steered nowhere.
+	steered, toward, line := r.Steer.Kind != "", "", ""
+	if steered {
+		toward, line = ", steered to "+directionWords(r), " The line is the steered direction from the reference point."
+	}
+	s.Open("rig", fmt.Sprintf("The rig %s seen %s: %d microphones, %d in use%s.",
+		clean(r.Rig.Name), from, len(r.Rig.Mics), r.Rig.MicrophonesUsed, toward))
 	az, el := r.Steer.AzimuthDeg*math.Pi/180, r.Steer.ElevationDeg*math.Pi/180
 	u := [3]float64{math.Cos(el) * math.Cos(az), math.Cos(el) * math.Sin(az), math.Sin(el)}
 	rx, ry := v.at(r.Rig.ReferencePointM)
@@ -71,8 +76,10 @@ func rigPicture(r *pipeline.Result) *chart {
 	if v.front {
 		uy = u[2]
 	}
-	s.Line(rx, ry, rx+46*ux, ry-46*uy, "steer casing")
-	s.Line(rx, ry, rx+46*ux, ry-46*uy, "steer", "data-azimuth", Round(r.Steer.AzimuthDeg, "azimuth_deg"))
+	if steered {
+		s.Line(rx, ry, rx+46*ux, ry-46*uy, "steer casing")
+		s.Line(rx, ry, rx+46*ux, ry-46*uy, "steer", "data-azimuth", Round(r.Steer.AzimuthDeg, "azimuth_deg"))
+	}
 	s.Text(50, 0, "tick mid", edge, "dy", "12")
 	// Names beside the dots are legible up to a couple of dozen.
 	names := len(r.Rig.Mics) <= 24
@@ -105,7 +112,7 @@ func rigPicture(r *pipeline.Result) *chart {
 	s.Line(4, 96, 4+50*length/v.radius, 96, "ruler")
 	s.Text(4, 96, "tick", lengthWords(length), "dy", "-6")
 	return &chart{Key: "rig", Name: "Rig", Picture: s.Close(),
-		Caption: fmt.Sprintf("The rig seen %s. The line is the steered direction from the reference point. Crossed microphones are left out, hollow ones have a remark.", from)}
+		Caption: fmt.Sprintf("The rig seen %s.%s Crossed microphones are left out, hollow ones have a remark.", from, line)}
 }
 
 // stamp is the mark of a rig: its microphones and where it was pointed, without
@@ -115,7 +122,7 @@ func stamp(r *pipeline.Result) template.HTML {
 	s.Open("stamp", "")
 	v := viewOf(r)
 	az := r.Steer.AzimuthDeg * math.Pi / 180
-	if len(r.Rig.Mics) > 0 {
+	if len(r.Rig.Mics) > 0 && r.Steer.Kind != "" {
 		rx, ry := v.at(r.Rig.ReferencePointM)
 		s.Line(rx, ry, rx+45*math.Cos(az), ry-45*math.Sin(az), "steer")
 	}

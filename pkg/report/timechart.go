@@ -89,6 +89,10 @@ func directionChart(r *pipeline.Result) *chart {
 	}
 	low, high = math.Max(math.Floor(low/5)*5, -180), math.Min(math.Ceil(high/5)*5, 180)
 	x, y := timeAxis(r), draw.Linear(high, low)
+	radius := 3.0
+	if len(d.Windows) > 120 {
+		radius = 1.5
+	}
 	var s draw.SVG
 	s.Open("direction", fmt.Sprintf("Azimuth over time: heard in %d of %d windows, %s.", found, len(d.Windows), timeHeading(r)))
 	for _, v := range draw.Ticks(low, high, 6) {
@@ -112,7 +116,7 @@ func directionChart(r *pipeline.Result) *chart {
 		if w.Confidence != nil && *w.Confidence < 0.5 {
 			class += " unsure"
 		}
-		s.Dot(mid, y.At(*w.AzimuthDeg), 3, class, "data-azimuth", Round(*w.AzimuthDeg, "azimuth_deg"))
+		s.Dot(mid, y.At(*w.AzimuthDeg), radius, class, "data-azimuth", Round(*w.AzimuthDeg, "azimuth_deg"))
 	}
 	timeTicks(&s, r)
 	return &chart{Key: "direction", Name: "Direction over time", Picture: s.Close(),

@@ -182,14 +182,18 @@ func bandHeading(r *pipeline.Result) string {
 		return b.NoiseReductionDB
 	}
 	for i, b := range r.Bands {
-		if len(b.Flags) == 0 && value(b) != nil && (best < 0 || *value(b) > *value(r.Bands[best])) {
+		if sound := len(b.Flags) == 0 || r.Overall.SNRGainDB == nil && len(b.Flags) == 1 && b.Flags[0] == "target-unmeasurable"; sound && value(b) != nil && (best < 0 || *value(b) > *value(r.Bands[best])) {
 			best = i
 		}
 	}
 	if best < 0 {
 		return "What the rig should gain in each band"
 	}
-	return fmt.Sprintf("It helps most at %s: %s dB", frequencyWords(r.Bands[best].NominalHz), levelText(value(r.Bands[best])))
+	less := ""
+	if r.Overall.SNRGainDB == nil {
+		less = " less noise"
+	}
+	return fmt.Sprintf("It helps most at %s: %s dB%s", frequencyWords(r.Bands[best].NominalHz), levelText(value(r.Bands[best])), less)
 }
 
 // channelHeading is the finding of the table of channels.
