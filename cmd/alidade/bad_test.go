@@ -187,6 +187,7 @@ const (
 // what, what helps, the exit code, nothing written, quickly and in little room.
 func (y *yard) refused(o outcome, code int, want string, before []string) {
 	y.t.Helper()
+	y.t.Logf("exit %d, %v, %.0f MiB\n%s", o.code, o.took.Round(time.Millisecond), o.residentMiB, o.stderr)
 	if o.code != code {
 		y.t.Errorf("exit code %d, want %d", o.code, code)
 	}
@@ -371,7 +372,6 @@ func TestBadInputs(t *testing.T) {
 			o := y.alidade(args...)
 			y.refused(o, c.code, c.want, before)
 			slowest, largest = max(slowest, o.took), max(largest, o.residentMiB)
-			t.Logf("exit %d, %v, %.0f MiB\n%s", o.code, o.took.Round(time.Millisecond), o.residentMiB, o.stderr)
 		})
 	}
 	t.Logf("%d kinds; the slowest took %v, the largest %.0f MiB", len(list), slowest.Round(time.Millisecond), largest)
