@@ -3,6 +3,7 @@ package main
 import (
 	"errors"
 	"fmt"
+	"math"
 	"strings"
 
 	"github.com/urfave/cli/v2"
@@ -17,6 +18,7 @@ Usage
   alidade calibrate TAKE --rig RIG --toward AZ[,EL] [OPTIONS]
   alidade calibrate TAKE --rig RIG --focus X,Y,Z [OPTIONS]
   alidade calibrate TAKE... --rig RIG --positions [OPTIONS]
+  alidade calibrate TAKE... --rig RIG --calibrator-db 94 [OPTIONS]
 
 Example
   $ alidade calibrate roof_07.wav --rig roof.yaml --toward 141 --excerpt 0..3
@@ -71,6 +73,15 @@ Places of the microphones, from sounds of unknown directions
   --delay-uncertainty-us US         of the channels' delays (2)
   --distance-m M and --placement-uncertainty-mm MM (20 here) hold too
 
+Levels in dB SPL, from a sound level calibrator (IEC 60942)
+  --calibrator-db DB     its level: 94 or 114. It sits on one microphone after
+                         the other, two seconds or more each, in one take or
+                         one take each; reports then give dB SPL too. On every
+                         microphone, it sets the gain corrections as well
+  --calibrator-hz HZ     its frequency (1000)
+  --calibrator-class C   LS, 1 (default) or 2: what its level may be off
+  --channel N            it sits on this channel throughout; found if absent
+
 What is written
   --relative-to NAME     this microphone keeps its corrections; without it
                          the mean of all stays as it was
@@ -91,13 +102,13 @@ func calibrateVerb() verb {
 		help: calibrateHelp,
 		flags: func() []cli.Flag {
 			var flags []cli.Flag
-			for _, name := range []string{"rig", "toward", "focus", "elevations", "sound", "excerpt", "relative-to", "keep", "out"} {
+			for _, name := range []string{"rig", "toward", "focus", "elevations", "calibrator-class", "sound", "excerpt", "relative-to", "keep", "out"} {
 				flags = append(flags, &cli.StringFlag{Name: name})
 			}
 			for _, name := range []string{
 				"distance-m", "from-hz", "to-hz", "max-delay-us", "direction-uncertainty-deg", "distance-uncertainty-m",
 				"focus-uncertainty-mm", "temperature-uncertainty-c", "placement-uncertainty-mm",
-				"elevation-uncertainty-deg", "delay-uncertainty-us",
+				"calibrator-db", "calibrator-hz", "channel", "elevation-uncertainty-deg", "delay-uncertainty-us",
 				"temperature-c", "humidity-pct", "pressure-kpa", "speed-of-sound",
 			} {
 				flags = append(flags, &cli.Float64Flag{Name: name})
@@ -126,6 +137,7 @@ func calibrateOptions(c *cli.Context) pipeline.CalibrateOptions {
 		Excerpt:         c.String("excerpt"),
 		DirectionStdDeg: number("direction-uncertainty-deg"), FocusStdMM: number("focus-uncertainty-mm"), DistanceStdM: number("distance-uncertainty-m"),
 		TemperatureStdC: number("temperature-uncertainty-c"), PlacementStdMM: number("placement-uncertainty-mm"),
+		CalibratorDB: c.Float64("calibrator-db"), CalibratorHz: c.Float64("calibrator-hz"), CalibratorClass: c.String("calibrator-class"), Channel: int(c.Float64("channel")),
 		Positions: c.Bool("positions"), Elevations: c.String("elevations"),
 		ElevationStdDeg: number("elevation-uncertainty-deg"), DelayStdUS: number("delay-uncertainty-us"),
 		RelativeTo: c.String("relative-to"), Keep: c.String("keep"),
@@ -143,14 +155,20 @@ func runCalibrate(u *ui, c *cli.Context) error {
 	switch {
 	case len(files) == 0:
 		fault("no take: name a WAV file")
-	case len(files) > 1 && !oneTake(c) && !options.Positions:
-		fault("%d takes, want one (several files of one take: --chain or --set; several takes: --positions)", len(files))
+	case len(files) > 1 && !oneTake(c) && !options.Several():
+		fault("%d takes, want one (several files of one take: --chain or --set; several takes: --positions, --calibrator-db)", len(files))
 	}
 	if !c.IsSet("rig") {
 		fault("no rig: give --rig FILE")
 	}
 	if c.Bool("chain") && c.Bool("set") {
 		fault("both --chain and --set: files follow each other or lie side by side")
+	}
+	if ch := c.Float64("channel"); ch != math.Trunc(ch) || c.IsSet("channel") && ch < 1 {
+		fault("--channel %g: channels are counted from 1", ch)
+	}
+	if c.IsSet("calibrator-db") && options.CalibratorDB == 0 {
+		fault("--calibrator-db 0: want 60 to 140 dB")
 	}
 	if err := options.Validate(); err != nil {
 		for _, line := range strings.Split(err.Error(), "\n") {

@@ -1,7 +1,8 @@
 // Package calibration finds what makes the channels of a rig agree: gain, delay
 // and polarity of each against the others, from a take of one known sound
-// (Channels), and the places of its microphones from sounds of unknown
-// directions (Arrivals, Locate).
+// (Channels), the places of its microphones from sounds of unknown directions
+// (Arrivals, Locate), and their sensitivities from a sound level calibrator
+// (Tones).
 //
 // # Conventions
 //
@@ -41,6 +42,12 @@
 // show a line or a plane and nothing is known of elevations, directions have no
 // length that would settle the scale: places are then found along the line or
 // plane alone, but for a linear map, and all else is left as it was.
+//
+// A calibrator's stretch is the longest second or more in which a channel
+// carries a pure tone of its frequency, steady within 0.15 dB and 10 dB above
+// the other channels. Sensitivities are in dBFS at 94 dB (AES17: a full-scale
+// sine reads 0), and their uncertainty is what the class of the calibrator
+// allows; corrections for air pressure and coupler are not made.
 //
 // # Limits
 //
@@ -92,6 +99,11 @@
 //
 // [Huber 1964] P. J. Huber, Robust estimation of a location parameter, Ann. Math.
 // Statist. 35, p. 73.
+//
+// [IEC 60942:2017] Electroacoustics, sound calibrators, tables 2, 4 and 7.
+//
+// [Harris 1978] F. J. Harris, On the use of windows for harmonic analysis with
+// the discrete Fourier transform, Proc. IEEE 66, p. 51.
 //
 // [JCGM 100:2008] Guide to the expression of uncertainty in measurement, 5.1 and
 // 6.2.

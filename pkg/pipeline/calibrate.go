@@ -62,8 +62,8 @@ func Calibrate(ctx context.Context, spec CalibrateSpec, watch Watch) (res *Calib
 			res = nil
 		}
 	}()
-	if len(spec.More) > 0 && !set.Positions {
-		return nil, &UsageError{Err: fmt.Errorf("%d takes, want one: only --positions listens to several", 1+len(spec.More))}
+	if len(spec.More) > 0 && !set.Several() {
+		return nil, &UsageError{Err: fmt.Errorf("%d takes, want one: only --positions and --calibrator-db listen to several", 1+len(spec.More))}
 	}
 	for _, files := range append([]CalibrateTake{spec.Take}, spec.More...) {
 		if err := c.open(files); err != nil {
@@ -75,9 +75,12 @@ func Calibrate(ctx context.Context, spec CalibrateSpec, watch Watch) (res *Calib
 		Rig: c.rig.summary(), Findings: []Finding{}, Microphones: []CalibratedMic{},
 	}
 	kind := c.places
-	if set.Positions {
+	switch {
+	case set.Positions:
 		c.res.Kind = CalibratedPositions
-	} else {
+	case set.CalibratorDB != 0:
+		c.res.Kind, kind = CalibratedLevels, c.levels
+	default:
 		e, err := c.expect()
 		if err != nil {
 			return nil, err
@@ -426,6 +429,9 @@ func (c *calibrating) head() []string {
 	if s := c.res.Survey; s != nil {
 		lines = append(lines, fmt.Sprintf("Places from %d sounds, arrivals within %.2f µs (%.2f µs before); not observable: %s.",
 			len(s.Sounds), s.ResidualUS, s.ResidualBeforeUS, strings.Join(s.Unobservable, ", ")))
+	}
+	if s := c.res.Calibrator; s != nil {
+		lines = append(lines, fmt.Sprintf("Sensitivities by a calibrator of %g dB SPL at %g Hz, class %s (± %g dB).", s.LevelDBSPL, s.Hz, s.Class, s.ToleranceDB))
 	}
 	return append(lines, "Old values stand behind each microphone; ± is twice the standard uncertainty.")
 }

@@ -6,6 +6,7 @@ import (
 	"slices"
 	"strings"
 
+	"alidade/pkg/calibration"
 	"alidade/pkg/rig"
 )
 
@@ -65,6 +66,11 @@ type CalibrateOptions struct {
 	ElevationStdDeg *float64 `json:"elevation_uncertainty_deg,omitempty"` // nil is 2
 	DelayStdUS      *float64 `json:"delay_uncertainty_us,omitempty"`      // of the channels' delays; nil is 2
 
+	CalibratorDB    float64 `json:"calibrator_db,omitempty"`    // level of a calibrator, dB re 20 µPa: sensitivities instead
+	CalibratorHz    float64 `json:"calibrator_hz,omitempty"`    // 0 is 1000
+	CalibratorClass string  `json:"calibrator_class,omitempty"` // LS, 1 (default) or 2
+	Channel         int     `json:"channel,omitempty"`          // the calibrator sits on this one throughout; 0: found
+
 	TemperatureC *float64 `json:"temperature_c,omitempty"`
 	HumidityPct  *float64 `json:"humidity_pct,omitempty"`
 	PressureKPa  *float64 `json:"pressure_kpa,omitempty"`
@@ -103,6 +109,8 @@ func (o CalibrateOptions) resolve() (*calibrateSettings, error) {
 	var faults []error
 	fault := func(format string, args ...any) { faults = append(faults, fmt.Errorf(format, args...)) }
 	switch {
+	case o.CalibratorDB != 0:
+		s.resolveCalibrator(fault)
 	case o.Positions:
 		s.resolvePositions(fault)
 	case o.Toward == "" && o.Focus == "":
@@ -130,6 +138,9 @@ func (o CalibrateOptions) resolve() (*calibrateSettings, error) {
 	}
 	if o.DistanceStdM != nil && o.DistanceM == 0 {
 		fault("--distance-uncertainty-m without --distance-m: a far source has no distance")
+	}
+	if o.CalibratorDB == 0 && (o.CalibratorHz != 0 || o.CalibratorClass != "" || o.Channel != 0) {
+		fault("--calibrator-hz, --calibrator-class and --channel belong to --calibrator-db")
 	}
 	if !o.Positions && (o.Elevations != "" || o.ElevationStdDeg != nil || o.DelayStdUS != nil) {
 		fault("--elevations, --elevation-uncertainty-deg and --delay-uncertainty-us belong to --positions")
@@ -207,6 +218,37 @@ func (o CalibrateOptions) resolve() (*calibrateSettings, error) {
 	return s, nil
 }
 
+// resolveCalibrator reads the options of a calibrator.
+func (s *calibrateSettings) resolveCalibrator(fault func(format string, args ...any)) {
+	o := s.CalibrateOptions
+	if o.Toward != "" || o.Focus != "" || o.Positions {
+		fault("--calibrator-db with --toward, --focus or --positions: a calibrator sits on one microphone at a time")
+	}
+	if !(o.CalibratorDB >= 60 && o.CalibratorDB <= 140) {
+		fault("--calibrator-db %g: want 60 to 140 dB (94 and 114 are usual)", o.CalibratorDB)
+	}
+	if o.CalibratorHz != 0 && !(o.CalibratorHz >= 160 && o.CalibratorHz <= 1250) {
+		fault("--calibrator-hz %g: want 160 to 1250 Hz (250 and 1000 are usual)", o.CalibratorHz)
+	}
+	if _, ok := calibration.CalibratorTolerance(o.CalibratorClass); !ok && o.CalibratorClass != "" {
+		fault("--calibrator-class %q: want LS, 1 or 2", o.CalibratorClass)
+	}
+	if o.Channel < 0 || o.Channel > rig.MaxMicrophones {
+		fault("--channel %d: want 1 to %d", o.Channel, rig.MaxMicrophones)
+	}
+	for _, given := range []struct {
+		option string
+		is     bool
+	}{
+		{"relative-to", o.RelativeTo != ""}, {"sound", o.Sound != ""}, {"from-hz", o.FromHz != 0}, {"to-hz", o.ToHz != 0},
+		{"max-delay-us", o.MaxDelayUS != 0}, {"distance-m", o.DistanceM != 0},
+	} {
+		if given.is {
+			fault("--%s with --calibrator-db: it belongs to a sound from a distance", given.option)
+		}
+	}
+}
+
 // resolvePositions reads the options of a survey.
 func (s *calibrateSettings) resolvePositions(fault func(format string, args ...any)) {
 	o := s.CalibrateOptions
@@ -244,6 +286,9 @@ func (s *calibrateSettings) resolvePositions(fault func(format string, args ...a
 	}
 	s.elevation = list
 }
+
+// Several reports whether several takes may be given.
+func (o CalibrateOptions) Several() bool { return o.Positions || o.CalibratorDB != 0 }
 
 // Validate reports everything that is wrong with the options that can be seen
 // without a take and a rig, as one *UsageError.

@@ -22,6 +22,7 @@ type Calibration struct {
 	Source      *CalibrationSource `json:"source,omitempty"`
 	Heard       *Listening         `json:"heard,omitempty"`
 	Survey      *Survey            `json:"survey,omitempty"` // of positions
+	Calibrator  *CalibratorUsed    `json:"calibrator,omitempty"`
 	Microphones []CalibratedMic    `json:"microphones"`
 	Findings    []Finding          `json:"findings"`
 	Output      CalibrationOutput  `json:"output"`
@@ -77,12 +78,38 @@ type CalibratedMic struct {
 	Polarity       string `json:"polarity"`
 	SNRDB          Number `json:"snr_db,omitempty"`
 
+	// Of levels: what 94 dB SPL reads before the gain correction.
+	SensitivityBeforeDBFS    Number          `json:"sensitivity_before_dbfs,omitempty"`
+	SensitivityDBFS          Number          `json:"sensitivity_dbfs,omitempty"`
+	SensitivityUncertaintyDB Number          `json:"sensitivity_uncertainty_db,omitempty"`
+	Tone                     *CalibratorTone `json:"tone,omitempty"`
+
 	// Of positions: millimetres. The uncertainty is that of the rig's shape,
 	// shift and turn of the whole left out.
 	AtBeforeMM      *[3]float64 `json:"at_before_mm,omitempty"`
 	AtMM            *[3]float64 `json:"at_mm,omitempty"`
 	MovedMM         Number      `json:"moved_mm,omitempty"`
 	AtUncertaintyMM *[3]float64 `json:"at_uncertainty_mm,omitempty"`
+}
+
+// CalibratorUsed is the sound level calibrator.
+type CalibratorUsed struct {
+	LevelDBSPL  float64 `json:"level_db_spl"`
+	Hz          float64 `json:"frequency_hz"`
+	Class       string  `json:"class"`        // LS, 1 or 2 of IEC 60942
+	ToleranceDB float64 `json:"tolerance_db"` // of its level, half width
+	GainsSet    bool    `json:"gains_set"`    // gain corrections follow the tone too: it was on every microphone
+}
+
+// CalibratorTone is the stretch of a take in which the calibrator sat on a
+// microphone.
+type CalibratorTone struct {
+	Take  string  `json:"take"`
+	FromS float64 `json:"from_s"`
+	ToS   float64 `json:"to_s"`
+	DBFS  float64 `json:"level_dbfs"`
+	StdDB float64 `json:"fluctuation_db"`
+	Hz    float64 `json:"frequency_hz"`
 }
 
 // Survey is what places were found from.

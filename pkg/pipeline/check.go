@@ -25,6 +25,7 @@ type CheckChannel struct {
 	Channel          int      `json:"channel"`
 	Name             string   `json:"name"`
 	RMSDBFS          Number   `json:"rms_dbfs"`
+	RMSDBSPL         Number   `json:"rms_db_spl,omitempty"` // where the rig knows the sensitivity
 	PeakDBFS         Number   `json:"peak_dbfs"`
 	TruePeakDBFS     Number   `json:"true_peak_dbfs"`
 	ClippedFrames    int64    `json:"clipped_frames"`
@@ -33,6 +34,7 @@ type CheckChannel struct {
 	RepeatedBlocks   int64    `json:"repeated_blocks"`
 	Thumps           int64    `json:"thumps"`
 	NoiseFloorDBFS   Number   `json:"noise_floor_dbfs"`
+	NoiseFloorDBSPL  Number   `json:"noise_floor_db_spl,omitempty"`
 	HumHz            Number   `json:"hum_hz"`
 	HumDBFS          Number   `json:"hum_dbfs"`
 	WindDBFS         Number   `json:"wind_dbfs"`
@@ -88,6 +90,7 @@ func Check(ctx context.Context, spec Spec, watch Watch) (res *CheckResult, err e
 			NoiseFloorDBFS: c.NoiseDBFS, HumDBFS: c.HumDBFS, WindDBFS: c.WindDBFS, LevelDB: c.LevelDB, DelayUS: c.DelayUS,
 			DriftPPM: c.DriftPPM, MeanSquaredCoher: c.Coherence, Flags: c.Flags,
 		}
+		out.RMSDBSPL, out.NoiseFloorDBSPL = l.channelSPL(c.Channel, out.RMSDBFS), l.channelSPL(c.Channel, out.NoiseFloorDBFS)
 		if c.HumHz > 0 {
 			out.HumHz = number(c.HumHz)
 		}

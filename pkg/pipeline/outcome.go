@@ -26,6 +26,7 @@ func (r *run) result() (*Result, error) {
 		return nil, err
 	}
 	r.channels(res)
+	r.soundLevels(res)
 	err := r.pictures(res)
 	if err != nil {
 		return nil, err

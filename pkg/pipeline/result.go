@@ -88,7 +88,10 @@ type RigSummary struct {
 	SpeedRule       string     `json:"speed_of_sound_rule"`
 	Air             string     `json:"air"`
 	Shape           string     `json:"shape"` // line, flat or solid
-	Mics            []RigMic   `json:"microphones"`
+	// FullScaleDBSPL is the sound pressure level of a full-scale sine, dB re 20
+	// µPa; absent where no sensitivity is known.
+	FullScaleDBSPL Number   `json:"full_scale_db_spl,omitempty"`
+	Mics           []RigMic `json:"microphones"`
 }
 
 // RigMic is one microphone of the rig in force.
@@ -100,6 +103,8 @@ type RigMic struct {
 	DelayUS  float64    `json:"delay_us"`
 	Polarity string     `json:"polarity"` // normal or inverted
 	Used     bool       `json:"used"`
+	// SensitivityDBFS is what the raw channel reads at 94 dB SPL.
+	SensitivityDBFS Number `json:"sensitivity_dbfs,omitempty"`
 }
 
 // Steer is where and how the beam was pointed.
@@ -165,12 +170,17 @@ type Band struct {
 	LowHz     float64 `json:"low_hz"`
 	HighHz    float64 `json:"high_hz"`
 
-	NoiseInDBFS          Number   `json:"noise_in_dbfs"`
-	NoiseOutDBFS         Number   `json:"noise_out_dbfs"`
-	NoiseReductionDB     Number   `json:"noise_reduction_db"`
-	NoiseReductionCI95   Interval `json:"noise_reduction_ci95_db"`
-	TargetInDBFS         Number   `json:"target_in_dbfs"`
-	TargetOutDBFS        Number   `json:"target_out_dbfs"`
+	NoiseInDBFS        Number   `json:"noise_in_dbfs"`
+	NoiseOutDBFS       Number   `json:"noise_out_dbfs"`
+	NoiseReductionDB   Number   `json:"noise_reduction_db"`
+	NoiseReductionCI95 Interval `json:"noise_reduction_ci95_db"`
+	TargetInDBFS       Number   `json:"target_in_dbfs"`
+	TargetOutDBFS      Number   `json:"target_out_dbfs"`
+	// The same levels re 20 µPa, where the rig's sensitivity is known.
+	NoiseInDBSPL         Number   `json:"noise_in_db_spl,omitempty"`
+	NoiseOutDBSPL        Number   `json:"noise_out_db_spl,omitempty"`
+	TargetInDBSPL        Number   `json:"target_in_db_spl,omitempty"`
+	TargetOutDBSPL       Number   `json:"target_out_db_spl,omitempty"`
 	TargetChangeDB       Number   `json:"target_change_db"`
 	TargetChangeCI95     Interval `json:"target_change_ci95_db"`
 	SNRInDB              Number   `json:"snr_in_db"`
@@ -205,8 +215,9 @@ type Channel struct {
 	Channel       int      `json:"channel"`
 	Name          string   `json:"name"`
 	Used          bool     `json:"used"`
-	RMSDBFS       Number   `json:"rms_dbfs"`  // AES17: a full-scale sine reads 0
-	PeakDBFS      Number   `json:"peak_dbfs"` // re 1.0; null for digital silence
+	RMSDBFS       Number   `json:"rms_dbfs"`             // AES17: a full-scale sine reads 0
+	RMSDBSPL      Number   `json:"rms_db_spl,omitempty"` // re 20 µPa, where the channel's sensitivity is known
+	PeakDBFS      Number   `json:"peak_dbfs"`            // re 1.0; null for digital silence
 	ClippedFrames int64    `json:"clipped_frames"`
 	DC            float64  `json:"dc"` // mean, re 1.0
 	Flags         []string `json:"flags"`

@@ -171,7 +171,7 @@ func (l *loadedRig) summary() RigSummary {
 		}
 		s.Mics = append(s.Mics, RigMic{
 			Name: m.Name, Channel: m.Channel, AtM: [3]float64{m.At.X, m.At.Y, m.At.Z},
-			GainDB: m.GainDB, DelayUS: m.Delay * 1e6, Polarity: polarity, Used: m.Use,
+			GainDB: m.GainDB, DelayUS: m.Delay * 1e6, Polarity: polarity, Used: m.Use, SensitivityDBFS: m.SensitivityDBFS,
 		})
 	}
 	return s

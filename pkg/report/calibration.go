@@ -42,6 +42,20 @@ func calibrationBasis(c *pipeline.Calibration) string {
 		return fmt.Sprintf("%s: places of %d microphones from %d sounds: arrivals are %s µs off, %s µs with the places before; of %d ways to move microphones the sounds determine %d",
 			clean(c.Rig.Name), c.Rig.MicrophonesUsed, len(v.Sounds), decimals(v.ResidualUS, 2), decimals(v.ResidualBeforeUS, 2), v.Ways, v.Observable)
 	}
+	if v := c.Calibrator; v != nil {
+		found := 0
+		for _, m := range c.Microphones {
+			if m.Tone != nil {
+				found++
+			}
+		}
+		text := fmt.Sprintf("%s: a calibrator of %g dB SPL at %g Hz, class %s (± %g dB), on %d of %d microphones",
+			clean(c.Rig.Name), v.LevelDBSPL, v.Hz, clean(v.Class), v.ToleranceDB, found, c.Rig.MicrophonesUsed)
+		if v.GainsSet {
+			text += "; gain corrections follow it"
+		}
+		return text
+	}
 	if s == nil || h == nil {
 		return ""
 	}
@@ -87,6 +101,25 @@ func calibrationTable(c *pipeline.Calibration, width int) []string {
 				}
 			}
 			t.AppendRow(append(row, levelText(m.MovedMM)))
+		}
+		return calibrationLines(t, right, width)
+	}
+	if c.Calibrator != nil {
+		t.AppendHeader(table.Row{"ch", "name", "94 dB reads, dBFS", "was", "", "gain, dB", "was", "stretch"})
+		right = append(right, 3, 4, 5, 6, 7)
+		level := func(v pipeline.Number) string {
+			if v == nil {
+				return "–"
+			}
+			return decimals(*v, 2)
+		}
+		for _, m := range c.Microphones {
+			stretch := "no tone"
+			if m.Tone != nil {
+				stretch = fmt.Sprintf("%.1f to %.1f s", m.Tone.FromS, m.Tone.ToS)
+			}
+			t.AppendRow(table.Row{m.Channel, cut(clean(m.Name), 12), level(m.SensitivityDBFS), level(m.SensitivityBeforeDBFS),
+				plusMinus(m.SensitivityUncertaintyDB, 2), decimals(m.GainDB, 2), decimals(m.GainBeforeDB, 2), stretch})
 		}
 		return calibrationLines(t, right, width)
 	}

@@ -70,10 +70,19 @@ func bandColumns() []bandColumn {
 
 // CSV writes the table of bands: a header line, the one-third octaves, then the
 // octaves, told apart by the first column. A quantity that could not be
-// measured is an empty cell. Flags are separated by blanks. The figures are
+// measured is an empty cell. Flags are separated by blanks. Levels in dB SPL are
+// the last columns, where the rig is calibrated. The figures are
 // those of the JSON report.
 func CSV(w io.Writer, r *pipeline.Result) error {
 	columns := bandColumns()
+	if r.Rig.FullScaleDBSPL != nil {
+		type band = pipeline.Band
+		columns = append(columns,
+			number("noise_in_db_spl", func(b *band) pipeline.Number { return b.NoiseInDBSPL }),
+			number("noise_out_db_spl", func(b *band) pipeline.Number { return b.NoiseOutDBSPL }),
+			number("target_in_db_spl", func(b *band) pipeline.Number { return b.TargetInDBSPL }),
+			number("target_out_db_spl", func(b *band) pipeline.Number { return b.TargetOutDBSPL }))
+	}
 	out := csv.NewWriter(w)
 	row := []string{"bands"}
 	for _, c := range columns {

@@ -305,7 +305,7 @@ func channelViews(r *pipeline.Result) []channelView {
 	slices.Sort(levels)
 	var list []channelView
 	for _, c := range r.Channels {
-		v := channelView{Channel: c.Channel, Name: shorten(clean(c.Name), 60), State: "✓ in use", Class: "good", Level: levelText(c.RMSDBFS), Against: "–", Peak: levelText(c.PeakDBFS),
+		v := channelView{Channel: c.Channel, Name: shorten(clean(c.Name), 60), State: "✓ in use", Class: "good", Level: bothLevels(c), Against: "–", Peak: levelText(c.PeakDBFS),
 			Clipped: strconv.FormatInt(c.ClippedFrames, 10), DC: strconv.FormatFloat(c.DC, 'g', 2, 64), Flags: clean(strings.Join(c.Flags, ", "))}
 		switch {
 		case !c.Used:
@@ -369,4 +369,12 @@ func playerOf(r *pipeline.Result) *playerView {
 		v.TargetChange, v.TargetOffset = Round(*t, "x_db"), down(*t)
 	}
 	return v
+}
+
+// bothLevels is the level of a channel in dBFS, and in dB SPL where it is known.
+func bothLevels(c pipeline.Channel) string {
+	if c.RMSDBSPL == nil {
+		return levelText(c.RMSDBFS)
+	}
+	return levelText(c.RMSDBFS) + " (" + levelText(c.RMSDBSPL) + " dB SPL)"
 }

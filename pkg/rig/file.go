@@ -65,7 +65,7 @@ type file struct {
 	HeadingDeg  *float64    `json:"heading_deg,omitempty" jsonschema:"minimum=-360,maximum=360" jsonschema_description:"Compass heading of the rig's +y axis, degrees clockwise from true north."`
 	Limits      *Limits     `json:"limits,omitempty" jsonschema_description:"From where on something about a take is a finding; a negative number turns a check off."`
 	Microphones []micFile   `json:"microphones,omitempty" jsonschema:"minItems=1,maxItems=256" jsonschema_description:"The microphones, one by one. Exactly one of microphones, positions, line, ring, grid and spiral is given."`
-	Positions   string      `json:"positions,omitempty" jsonschema:"minLength=1,maxLength=1000" jsonschema_description:"A CSV file with the columns name, channel, x_mm, y_mm, z_mm, and if wanted gain_db, delay_us, polarity, use, sensitivity_mv_pa, clock_ppm."`
+	Positions   string      `json:"positions,omitempty" jsonschema:"minLength=1,maxLength=1000" jsonschema_description:"A CSV file with the columns name, channel, x_mm, y_mm, z_mm, and if wanted gain_db, delay_us, polarity, use, sensitivity_mv_pa, sensitivity_dbfs, clock_ppm."`
 	Line        *lineFile   `json:"line,omitempty" jsonschema_description:"Microphones along x, centred on the origin, channels from -x to +x."`
 	Ring        *ringFile   `json:"ring,omitempty" jsonschema_description:"Microphones on a level circle around the origin, the first on +x, then towards +y."`
 	Grid        *gridFile   `json:"grid,omitempty" jsonschema_description:"Microphones on a level grid centred on the origin, columns along x, rows along y; row by row from -y, each from -x."`
@@ -87,6 +87,7 @@ type micFile struct {
 	Polarity        string   `json:"polarity,omitempty" jsonschema:"enum=normal,enum=inverted" jsonschema_description:"Polarity of the channel; an inverted one is turned over."`
 	Use             *bool    `json:"use,omitempty" jsonschema_description:"false leaves the microphone out, of the reference point too."`
 	SensitivityMVPa *float64 `json:"sensitivity_mv_pa,omitempty" jsonschema:"exclusiveMinimum=0,maximum=100000" jsonschema_description:"Sensitivity, mV/Pa."`
+	SensitivityDBFS *float64 `json:"sensitivity_dbfs,omitempty" jsonschema:"minimum=-200,maximum=60" jsonschema_description:"What the channel reads at 94 dB sound pressure level before its gain correction, dBFS (a full-scale sine reads 0): levels are given in dB SPL too."`
 	ClockPPM        float64  `json:"clock_ppm,omitempty" jsonschema:"minimum=-10000,maximum=10000" jsonschema_description:"How fast the channel's clock runs, parts per million; positive is fast."`
 }
 
@@ -263,6 +264,7 @@ func (l *loader) list(r *Rig) {
 		if m.SensitivityMVPa != nil {
 			mic.SensitivityMVPa = *m.SensitivityMVPa
 		}
+		mic.SensitivityDBFS = m.SensitivityDBFS
 		if mic.Name == "" && m.Channel > 0 {
 			mic.Name = "M" + strconv.Itoa(m.Channel)
 		}

@@ -14,7 +14,7 @@ import (
 var positionColumns = []sheet.Column{
 	{Name: "name", Required: true}, {Name: "channel", Required: true},
 	{Name: "x_mm", Required: true}, {Name: "y_mm", Required: true}, {Name: "z_mm", Required: true},
-	{Name: "gain_db"}, {Name: "delay_us"}, {Name: "polarity"}, {Name: "use"}, {Name: "sensitivity_mv_pa"}, {Name: "clock_ppm"},
+	{Name: "gain_db"}, {Name: "delay_us"}, {Name: "polarity"}, {Name: "use"}, {Name: "sensitivity_mv_pa"}, {Name: "sensitivity_dbfs"}, {Name: "clock_ppm"},
 }
 
 // positions fills in the microphones from the CSV file that the rig names.
@@ -117,6 +117,11 @@ func tableMic(t *sheet.Table, row int) (Mic, place) {
 	mic.Delay = shift(t, row, "delay_us", delay, -6)
 	mic.ClockPPM, _ = number(t, row, "clock_ppm", -1e4, 1e4)
 	mic.SensitivityMVPa, _ = number(t, row, "sensitivity_mv_pa", math.SmallestNonzeroFloat64, 1e5)
+	if _, ok := t.Text(row, "sensitivity_dbfs"); ok {
+		if v, ok := number(t, row, "sensitivity_dbfs", -200, 60); ok {
+			mic.SensitivityDBFS = &v
+		}
+	}
 	if text, ok := t.Text(row, "polarity"); ok {
 		mic.Inverted = text == "inverted"
 		if !mic.Inverted && text != "normal" {

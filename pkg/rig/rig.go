@@ -88,6 +88,10 @@ type Mic struct {
 	Use      bool    // false: left out, and not part of the reference point
 
 	SensitivityMVPa float64 // mV/Pa, 0 if not known
+	// SensitivityDBFS is what the channel reads at a sound pressure level of 94
+	// dB before its gain correction, dBFS (AES17: a full-scale sine reads 0); nil
+	// if not known.
+	SensitivityDBFS *float64
 	ClockPPM        float64 // positive: the channel's clock runs fast, parts per million
 }
 

@@ -66,6 +66,9 @@ func (r *Rig) Annotated(head []string, note func(m int) string) []byte {
 			b.WriteString(", use: false")
 		}
 		optional("sensitivity_mv_pa", m.SensitivityMVPa, numberText(m.SensitivityMVPa))
+		if v := m.SensitivityDBFS; v != nil {
+			fmt.Fprintf(&b, ", sensitivity_dbfs: %s", numberText(*v))
+		}
 		optional("clock_ppm", m.ClockPPM, numberText(m.ClockPPM))
 		b.WriteString("}")
 		if note != nil {

@@ -32,6 +32,8 @@ func randomRig(rng *rand.Rand) *Rig {
 			mic.Inverted = true
 			mic.SensitivityMVPa = 50 * rng.Float64()
 			mic.ClockPPM = 10 * rng.NormFloat64()
+			v := 40*rng.Float64() - 60
+			mic.SensitivityDBFS = &v
 		}
 		r.Mics = append(r.Mics, mic)
 	}

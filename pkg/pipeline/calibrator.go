@@ -1,0 +1,150 @@
+package pipeline
+
+import (
+	"fmt"
+	"math"
+	"slices"
+
+	"alidade/pkg/calibration"
+	"alidade/pkg/rig"
+)
+
+// The calibrator that is assumed where no more is said.
+const (
+	DefaultCalibratorHz    = 1000.0
+	DefaultCalibratorClass = "1"
+)
+
+// maxToneDifference is how far two takes of one channel may lie apart, dB.
+const maxToneDifference = 0.3
+
+// levels finds sensitivities from a calibrator on one microphone after the
+// other.
+func (c *calibrating) levels() (*rig.Rig, []string, error) {
+	used, _ := c.used()
+	cal := calibration.Calibrator{LevelDB: c.set.CalibratorDB, Hz: c.set.CalibratorHz}
+	if cal.Hz == 0 {
+		cal.Hz = DefaultCalibratorHz
+	}
+	class := c.set.CalibratorClass
+	if class == "" {
+		class = DefaultCalibratorClass
+	}
+	cal.Tolerance, _ = calibration.CalibratorTolerance(class)
+	only := -1
+	if ch := c.set.Channel; ch != 0 {
+		if only = slices.IndexFunc(used, func(m int) bool { return c.rig.Mics[m].Channel == ch }); only < 0 {
+			return nil, nil, &UsageError{Err: fmt.Errorf("--channel %d: rig %s has no microphone in use on it", ch, c.rig.Name)}
+		}
+	}
+	type heard struct {
+		tone calibration.Tone
+		take string
+	}
+	best := make([]*heard, len(used))
+	why := make([]string, len(used))
+	for _, t := range c.takes {
+		open, err := c.raw(t, "listening")
+		if err != nil {
+			return nil, nil, err
+		}
+		if cal.Hz > 0.4*float64(t.header.Rate) {
+			return nil, nil, &UsageError{Err: fmt.Errorf("--calibrator-hz %g: above 0.4 of the rate of %s, %d Hz", cal.Hz, t.path(), t.header.Rate)}
+		}
+		src, err := open()
+		if err != nil {
+			return nil, nil, err
+		}
+		tones, err := calibration.Tones(src, cal, only)
+		if err != nil {
+			return nil, nil, explainedFor(t, err)
+		}
+		for i, tone := range tones {
+			switch {
+			case !tone.Found:
+				why[i] = tone.Why
+			case best[i] == nil:
+				best[i] = &heard{tone, t.path()}
+			case math.Abs(best[i].tone.DBFS-tone.DBFS) > maxToneDifference:
+				return nil, nil, explainedFor(t, &calibration.RefusedError{
+					Why:  fmt.Sprintf("channel %d reads %.2f dBFS here and %.2f dBFS in %s", c.rig.Mics[used[i]].Channel, tone.DBFS, best[i].tone.DBFS, best[i].take),
+					Help: "seat the calibrator again, and leave the gains of the recorder alone in between",
+				})
+			default:
+				best[i].tone.SensitivityDBFS = (best[i].tone.SensitivityDBFS + tone.SensitivityDBFS) / 2
+			}
+		}
+	}
+	found := 0
+	for _, b := range best {
+		if b != nil {
+			found++
+		}
+	}
+	if found == 0 {
+		i := max(only, 0)
+		return nil, nil, &calibration.RefusedError{
+			Why:  fmt.Sprintf("no channel carries the tone of a calibrator: channel %d: %s", c.rig.Mics[used[i]].Channel, why[i]),
+			Help: "put the calibrator on one microphone after the other, at least two seconds each; --calibrator-hz gives its frequency",
+		}
+	}
+	changed := *c.rig.Rig
+	changed.Mics = slices.Clone(changed.Mics)
+	var missing []int
+	for i, m := range used {
+		if best[i] == nil {
+			missing = append(missing, changed.Mics[m].Channel)
+			continue
+		}
+		v := rounded(best[i].tone.SensitivityDBFS, 3)
+		changed.Mics[m].SensitivityDBFS = &v
+	}
+	gains := len(missing) == 0 && !slices.Contains(c.set.keep, KeepGain)
+	if gains {
+		// One tone at every microphone: what gain corrections are.
+		mean := 0.0
+		for _, m := range used {
+			mean += (changed.Mics[m].GainDB + *changed.Mics[m].SensitivityDBFS) / float64(len(used))
+		}
+		for _, m := range used {
+			changed.Mics[m].GainDB = rounded(mean-*changed.Mics[m].SensitivityDBFS, 4)
+		}
+	}
+	notes := make([]string, len(changed.Mics))
+	for m, mic := range changed.Mics {
+		old := c.rig.Mics[m]
+		e := CalibratedMic{
+			Channel: mic.Channel, Name: mic.Name, Used: mic.Use, GainBeforeDB: old.GainDB, GainDB: mic.GainDB,
+			DelayBeforeUS: 1e6 * old.Delay, DelayUS: 1e6 * mic.Delay,
+			PolarityBefore: polarityWord(old.Inverted), Polarity: polarityWord(mic.Inverted),
+			SensitivityBeforeDBFS: old.SensitivityDBFS, SensitivityDBFS: mic.SensitivityDBFS,
+		}
+		if i := slices.Index(used, m); i >= 0 && best[i] != nil {
+			tone := best[i].tone
+			e.Heard = true
+			e.SensitivityUncertaintyDB = number(2 * tone.Std)
+			e.Tone = &CalibratorTone{Take: best[i].take, FromS: tone.From, ToS: tone.To, DBFS: tone.DBFS, StdDB: tone.StdDB, Hz: tone.Hz}
+			was := "none"
+			if old.SensitivityDBFS != nil {
+				was = fmt.Sprintf("%g", *old.SensitivityDBFS)
+			}
+			notes[m] = fmt.Sprintf("was sensitivity_dbfs %s, gain_db %g; sensitivity now ± %.2f dB", was, old.GainDB, 2*tone.Std)
+			if gains {
+				e.GainUncertaintyDB = number(2 * math.Sqrt2 * math.Max(tone.StdDB, 0.02))
+			}
+		}
+		c.res.Microphones = append(c.res.Microphones, e)
+	}
+	c.res.Calibrator = &CalibratorUsed{LevelDBSPL: cal.LevelDB, Hz: cal.Hz, Class: class, ToleranceDB: cal.Tolerance, GainsSet: gains}
+	add := func(code string, severity Severity, channels []int, text string) {
+		c.res.Findings = append(c.res.Findings, Finding{Code: code, Severity: severity, Message: text, Channels: channels})
+	}
+	if len(missing) > 0 {
+		add("no-calibrator-tone", Info, missing, plural(missing, "channel %s", "channels %s")+" without the calibrator's tone: left as before, gain corrections too; levels follow by the gain corrections that the rig has")
+	}
+	for _, t := range c.takes {
+		c.res.Findings = append(c.res.Findings, t.findings()...)
+	}
+	sortFindings(c.res.Findings)
+	return &changed, notes, nil
+}
