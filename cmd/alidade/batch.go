@@ -258,14 +258,22 @@ func (t *undertaking) again(ctx context.Context, err error, tally batch.Tally, m
 	return &openError{code, err}
 }
 
+// takesWord is a number of takes.
+func takesWord(n int) string {
+	if n == 1 {
+		return "1 take"
+	}
+	return fmt.Sprintf("%d takes", n)
+}
+
 // workWords is what lies behind results.
 func workWords(w batch.Work) string {
 	s := max(w.Spent.Seconds(), 1e-3)
-	return fmt.Sprintf("%d takes of %.1f MB in %.1f s of work: %.1f takes a minute and worker, %.1f MB a second", w.Takes, float64(w.Bytes)/1e6, w.Spent.Seconds(), float64(w.Takes)*60/s, float64(w.Bytes)/1e6/s)
+	return fmt.Sprintf("%s of %.1f MB in %.1f s of work: %.1f takes a minute and worker, %.1f MB a second", takesWord(w.Takes), float64(w.Bytes)/1e6, w.Spent.Seconds(), float64(w.Takes)*60/s, float64(w.Bytes)/1e6/s)
 }
 
 func tallyWords(t batch.Tally, took time.Duration) string {
-	text := fmt.Sprintf("%d takes: %d done, %d missed a limit, %d failed", t.Takes, t.Done, t.Missed, t.Failed)
+	text := fmt.Sprintf("%s: %d done, %d missed a limit, %d failed", takesWord(t.Takes), t.Done, t.Missed, t.Failed)
 	if t.Standing > 0 {
 		text += fmt.Sprintf(", %d stood from before", t.Standing)
 	}

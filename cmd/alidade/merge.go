@@ -217,7 +217,7 @@ const mostListed = 10
 // summaryWords is a summary for a person.
 func summaryWords(s *batch.Summary) string {
 	var b strings.Builder
-	fmt.Fprintf(&b, "%s: %d takes, %d done, %d missed a limit, %d failed", s.Job, s.Takes, s.Done, s.Missed, s.Failed)
+	fmt.Fprintf(&b, "%s: %s, %d done, %d missed a limit, %d failed", s.Job, takesWord(s.Takes), s.Done, s.Missed, s.Failed)
 	if n := len(s.Absent) + len(s.Damaged); n > 0 {
 		fmt.Fprintf(&b, ", %d without a result", n)
 	}
@@ -263,12 +263,12 @@ func summaryWords(s *batch.Summary) string {
 	listed("Not usable", s.Damaged)
 	listed("Results of no take of the plan", s.Strays)
 	if t := s.Trend; t != nil {
-		fmt.Fprintf(&b, "\nLast time (plan %.12s): %d takes, %d done, %d missed a limit, %d failed\n", t.PlanID, t.Takes, t.Done, t.Missed, t.Failed)
+		fmt.Fprintf(&b, "\nLast time (plan %.12s): %s, %d done, %d missed a limit, %d failed\n", t.PlanID, takesWord(t.Takes), t.Done, t.Missed, t.Failed)
 		for _, f := range t.Figures {
 			fmt.Fprintf(&b, "  median %s: %s%s\n", f.Name, plus(f.Change), report.Round(f.Change, f.Name))
 		}
 		if len(t.New)+len(t.Gone) > 0 {
-			fmt.Fprintf(&b, "  %d takes new, %d not there any more\n", len(t.New), len(t.Gone))
+			fmt.Fprintf(&b, "  %s new, %d not there any more\n", takesWord(len(t.New)), len(t.Gone))
 		}
 		listed("Done then, not now", t.NewlyNo)
 		listed("Done now, not then", t.NewlyOK)

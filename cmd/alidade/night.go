@@ -30,6 +30,7 @@ func (u *ui) nightWatch(quiet bool) *nightWatch {
 
 // event is a line of JSON.
 type event struct {
+	At       string      `json:"at"` // RFC 3339
 	Event    string      `json:"event"`
 	Take     string      `json:"take,omitempty"`
 	State    batch.State `json:"state,omitempty"`
@@ -48,6 +49,7 @@ func (w *nightWatch) say(e event) {
 	if w.quiet || w.bar != nil {
 		return
 	}
+	e.At = w.u.now().UTC().Format(time.RFC3339)
 	if text, err := json.Marshal(e); err == nil {
 		w.u.remark("%s", text)
 	}

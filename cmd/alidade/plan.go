@@ -138,7 +138,7 @@ func planWords(p *batch.Plan) string {
 	for _, t := range p.Takes {
 		bytes += t.Bytes()
 	}
-	text := fmt.Sprintf("%d takes, %.1f MB, %d left out, plan %.12s", len(p.Takes), float64(bytes)/1e6, len(p.LeftOut), p.PlanID)
+	text := fmt.Sprintf("%s, %.1f MB, %d left out, plan %.12s", takesWord(len(p.Takes)), float64(bytes)/1e6, len(p.LeftOut), p.PlanID)
 	if p.Parts > 1 {
 		text += fmt.Sprintf(", %d parts", p.Parts)
 	}
