@@ -363,9 +363,17 @@ func TestForeignDecoderReadsTheExcerpts(t *testing.T) {
 	for _, n := range []int{15, 4097, 20000} {
 		samples := make([]int32, n)
 		for i := range samples {
-			samples[i] = int32(rng.NormFloat64() * 3000)
-			if i%10 > 6 {
-				samples[i] = 0
+			switch { // noise with gaps, silence, full scale, a tone
+			case i < 6000:
+				samples[i] = int32(rng.NormFloat64() * 3000)
+				if i%10 > 6 {
+					samples[i] = 0
+				}
+			case i < 12000:
+			case i < 16000:
+				samples[i] = int32(rng.IntN(1<<16) - 1<<15)
+			default:
+				samples[i] = int32(16000 * math.Sin(float64(i)/20))
 			}
 		}
 		data, err := flacFile(samples, 44100)

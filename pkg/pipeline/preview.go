@@ -291,7 +291,6 @@ func flacFile(samples []int32, rate int) ([]byte, error) {
 	if err != nil {
 		return nil, err
 	}
-	enc.EnablePredictionAnalysis(true)
 	for at := 0; at < len(samples); at += block {
 		part := samples[at:min(at+block, len(samples))]
 		f := &frame.Frame{
@@ -299,7 +298,7 @@ func flacFile(samples []int32, rate int) ([]byte, error) {
 				HasFixedBlockSize: true, BlockSize: uint16(len(part)), SampleRate: uint32(rate),
 				Channels: frame.ChannelsMono, BitsPerSample: 16, Num: uint64(at / block),
 			},
-			Subframes: []*frame.Subframe{{SubHeader: frame.SubHeader{Pred: frame.PredVerbatim}, Samples: part, NSamples: len(part)}},
+			Subframes: []*frame.Subframe{{SubHeader: flacHeader(part), Samples: part, NSamples: len(part)}},
 		}
 		if err := enc.WriteFrame(f); err != nil {
 			return nil, err
@@ -309,4 +308,60 @@ func flacFile(samples []int32, rate int) ([]byte, error) {
 		return nil, err
 	}
 	return b.Bytes(), nil
+}
+
+// flacHeader chooses how a block is predicted: the fixed polynomial of the
+// smallest residual, and the Rice parameter that codes it shortest (RFC 9639,
+// sections 9.2.5 and 9.2.7).
+func flacHeader(x []int32) frame.SubHeader {
+	const mostOrder, mostParam = 4, 14
+	residual := append([]int32(nil), x...) // of the order at hand, from that index on
+	best, least := 0, math.Inf(1)
+	for order := 0; order <= mostOrder && order < len(x); order++ {
+		if order > 0 {
+			for i := len(x) - 1; i >= order; i-- {
+				residual[i] -= residual[i-1]
+			}
+		}
+		sum := 0.0
+		for _, v := range residual[order:] {
+			sum += math.Abs(float64(v))
+		}
+		if order == 0 && sum == 0 {
+			return frame.SubHeader{Pred: frame.PredConstant}
+		}
+		if sum += float64(order) * (1 << 12); sum < least {
+			best, least = order, sum
+		}
+	}
+	// The folded residual is about twice as large; its bits at parameter k are
+	// those of the quotients, one to end each, and k.
+	bits := func(k uint) int {
+		n := 0
+		prev := [mostOrder + 1]int32{}
+		for i, v := range x {
+			e := v
+			for order := range best {
+				e, prev[order] = e-prev[order], e
+			}
+			if i >= best {
+				n += int(uint32(e<<1)^uint32(e>>31))>>k + 1 + int(k)
+			}
+		}
+		return n
+	}
+	guess := int(math.Round(math.Log2(math.Max(1, 1.4*least/float64(len(x))))))
+	param, fewest := uint(0), math.MaxInt
+	for k := max(0, guess-1); k <= min(mostParam, guess+1); k++ {
+		if n := bits(uint(k)); n < fewest {
+			param, fewest = uint(k), n
+		}
+	}
+	if fewest > 16*len(x) { // noise at full scale is shorter as it stands
+		return frame.SubHeader{Pred: frame.PredVerbatim}
+	}
+	return frame.SubHeader{
+		Pred: frame.PredFixed, Order: best, ResidualCodingMethod: frame.ResidualCodingMethodRice1,
+		RiceSubframe: &frame.RiceSubframe{Partitions: []frame.RicePartition{{Param: param}}},
+	}
 }
