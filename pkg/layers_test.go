@@ -37,6 +37,7 @@ var layers = map[string]struct {
 	"pkg/scenario/internal/voice":  {0, "a talker of our own making"},
 	"pkg/scenario/internal/render": {3, "sound on its way from a source to the samples of a channel"},
 	"pkg/scenario":                 {4, "takes of imagined rooms, truth known"},
+	"pkg/scan":                     {4, "many directions from one analysis"},
 	"pkg/response":                 {4, "what a beam should do, predicted"},
 	"pkg/quality":                  {4, "is this take fit to use?"},
 	"pkg/calibration":              {4, "what makes channels agree"},

@@ -42,7 +42,7 @@ type verb struct {
 // verbs are the commands in the order in which --help lists them.
 func verbs() []verb {
 	return []verb{
-		demoVerb(), steerVerb(), locateVerb(), checkVerb(), calibrateVerb(), predictVerb(), simulateVerb(), inspectVerb(),
+		demoVerb(), steerVerb(), locateVerb(), checkVerb(), calibrateVerb(), predictVerb(), scanVerb(), simulateVerb(), inspectVerb(),
 		planVerb(), batchVerb(), mergeVerb(), checkStorageVerb(), reportVerb(), schemaVerb(),
 	}
 }

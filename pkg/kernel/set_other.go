@@ -14,6 +14,10 @@ func addProductAVX2(sr *float32, si *float32, ar *float32, ai *float32, br *floa
 	none()
 }
 
+func powerOfSumsAVX2(p *float32, pStride int, x *float32, xStride int, w *float32, sources int, lines int) {
+	none()
+}
+
 func firstStepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int) {
 	none()
 }

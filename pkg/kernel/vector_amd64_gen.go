@@ -14,6 +14,11 @@ func addFIRAVX2(y *float32, n int, x *float32, h *float32, taps int)
 //go:noescape
 func addProductAVX2(sr *float32, si *float32, ar *float32, ai *float32, br *float32, bi *float32, n int)
 
+// powerOfSumsAVX2 sets four rows of 8·lines powers; strides are in bytes, sources and lines at least 1.
+//
+//go:noescape
+func powerOfSumsAVX2(p *float32, pStride int, x *float32, xStride int, w *float32, sources int, lines int)
+
 // firstStepFloat32AVX2 is the first step; count is a multiple of 8.
 //
 //go:noescape

@@ -147,6 +147,95 @@ end:
 	VZEROUPPER
 	RET
 
+// func powerOfSumsAVX2(p *float32, pStride int, x *float32, xStride int, w *float32, sources int, lines int)
+// Requires: AVX, FMA3
+TEXT ·powerOfSumsAVX2(SB), NOSPLIT, $0-56
+	MOVQ p+0(FP), AX
+	MOVQ pStride+8(FP), CX
+	MOVQ x+16(FP), DX
+	MOVQ xStride+24(FP), BX
+	MOVQ w+32(FP), SI
+	MOVQ sources+40(FP), DI
+	MOVQ lines+48(FP), R8
+	MOVQ DX, R9
+	ADDQ BX, R9
+	MOVQ AX, R12
+	ADDQ CX, R12
+	MOVQ R9, R10
+	ADDQ BX, R10
+	MOVQ R12, R13
+	ADDQ CX, R13
+	MOVQ R10, R11
+	ADDQ BX, R11
+	MOVQ R13, BX
+	ADDQ CX, BX
+
+line:
+	VXORPS Y0, Y0, Y0
+	VXORPS Y1, Y1, Y1
+	VXORPS Y2, Y2, Y2
+	VXORPS Y3, Y3, Y3
+	VXORPS Y4, Y4, Y4
+	VXORPS Y5, Y5, Y5
+	VXORPS Y6, Y6, Y6
+	VXORPS Y7, Y7, Y7
+	MOVQ   DI, CX
+
+source:
+	VMOVUPS      (SI), Y8
+	VMOVUPS      32(SI), Y9
+	ADDQ         $0x40, SI
+	VMOVUPS      (DX), Y10
+	VMOVUPS      32(DX), Y11
+	ADDQ         $0x40, DX
+	VFMADD231PS  Y10, Y8, Y0
+	VFMADD231PS  Y10, Y9, Y1
+	VFNMADD231PS Y11, Y9, Y0
+	VFMADD231PS  Y11, Y8, Y1
+	VMOVUPS      (R9), Y10
+	VMOVUPS      32(R9), Y11
+	ADDQ         $0x40, R9
+	VFMADD231PS  Y10, Y8, Y2
+	VFMADD231PS  Y10, Y9, Y3
+	VFNMADD231PS Y11, Y9, Y2
+	VFMADD231PS  Y11, Y8, Y3
+	VMOVUPS      (R10), Y10
+	VMOVUPS      32(R10), Y11
+	ADDQ         $0x40, R10
+	VFMADD231PS  Y10, Y8, Y4
+	VFMADD231PS  Y10, Y9, Y5
+	VFNMADD231PS Y11, Y9, Y4
+	VFMADD231PS  Y11, Y8, Y5
+	VMOVUPS      (R11), Y10
+	VMOVUPS      32(R11), Y11
+	ADDQ         $0x40, R11
+	VFMADD231PS  Y10, Y8, Y6
+	VFMADD231PS  Y10, Y9, Y7
+	VFNMADD231PS Y11, Y9, Y6
+	VFMADD231PS  Y11, Y8, Y7
+	DECQ         CX
+	JNE          source
+	VMULPS       Y0, Y0, Y0
+	VFMADD231PS  Y1, Y1, Y0
+	VMOVUPS      Y0, (AX)
+	ADDQ         $0x20, AX
+	VMULPS       Y2, Y2, Y2
+	VFMADD231PS  Y3, Y3, Y2
+	VMOVUPS      Y2, (R12)
+	ADDQ         $0x20, R12
+	VMULPS       Y4, Y4, Y4
+	VFMADD231PS  Y5, Y5, Y4
+	VMOVUPS      Y4, (R13)
+	ADDQ         $0x20, R13
+	VMULPS       Y6, Y6, Y6
+	VFMADD231PS  Y7, Y7, Y6
+	VMOVUPS      Y6, (BX)
+	ADDQ         $0x20, BX
+	DECQ         R8
+	JNE          line
+	VZEROUPPER
+	RET
+
 // func firstStepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
 // Requires: AVX, FMA3
 TEXT ·firstStepFloat32AVX2(SB), NOSPLIT, $0-48

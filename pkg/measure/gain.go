@@ -48,6 +48,9 @@ type Scene struct {
 	// Named is the microphone (0-based in Microphones) to compare with, -1 for
 	// none.
 	Named int
+	// NoIntervals leaves the intervals nil, which are most of the work; every
+	// other figure stays the same.
+	NoIntervals bool
 }
 
 // BandGain is what happened in one band. Levels are dBFS (AES17), ratios dB,
@@ -99,6 +102,7 @@ type Gains struct {
 
 	named    int
 	isolated bool
+	plain    bool    // without intervals
 	slowS    float64 // block length of the noise level, see slowBlock
 	data     []bandData
 }
@@ -108,6 +112,7 @@ type bandData struct {
 	noise, target part
 	slowS         float64 // block length of the noise level, see slowBlock
 	isolated      bool
+	plain         bool // without intervals
 	mics          []micPower
 }
 

@@ -10,6 +10,8 @@ type Isolated struct {
 	NoiseIn, TargetIn []Stretch
 	// Named is the microphone (0-based) to compare with, -1 for none.
 	Named int
+	// NoIntervals leaves the intervals nil, which are most of the work.
+	NoIntervals bool
 }
 
 // IsolatedGain returns the figures of every band from isolated noise and
@@ -31,7 +33,7 @@ func IsolatedGain(s Isolated) (*Gains, error) {
 	if count := min(len(s.Noise.Microphones), len(s.Target.Microphones)); s.Named >= count && s.Named >= 0 {
 		return nil, fmt.Errorf("measure: named microphone %d: there are %d", s.Named+1, count)
 	}
-	g := &Gains{Best: -1, named: s.Named, isolated: true}
+	g := &Gains{Best: -1, named: s.Named, isolated: true, plain: s.NoIntervals}
 	for b := range s.Noise.Reference.Tracks {
 		nr, no, err := align(s.Noise.Reference.Tracks[b], s.Noise.Output.Tracks[b])
 		if err != nil {

@@ -76,6 +76,9 @@ func (g *Gains) overallNoise(o *Overall, bands []int) {
 	}
 	o.NoiseReduction = level(r / y)
 	o.NoiseReductionA = level(ra / ya)
+	if g.plain {
+		return
+	}
 	if s, ok := g.cells(bands, false, 1/r, -1/y, 0); ok {
 		o.NoiseReductionCI = interval(math.Log(r/y), s)
 	}
@@ -93,6 +96,9 @@ func (g *Gains) overallTarget(o *Overall, bands []int) {
 	o.SNRGain = level(sy / y / (sr / r))
 	o.OverBest = g.overall(bands, g.Best, *o.SNRGain, sr/r)
 	o.OverNamed = g.overall(bands, g.named, *o.SNRGain, sr/r)
+	if g.plain {
+		return
+	}
 	if g.isolated {
 		if s, ok := g.cells(bands, false, 1/r, -1/y, 0); ok {
 			o.SNRGainCI = interval(math.Log(sy/sr*r/y), s)

@@ -2,6 +2,8 @@ package measure
 
 import (
 	"math"
+	"math/rand/v2"
+	"reflect"
 	"testing"
 
 	"alidade/pkg/acoustics"
@@ -146,5 +148,53 @@ func TestOverallIntervalCountsWhatBandsHaveInCommon(t *testing.T) {
 	all, single := width(g.Overall(nil).NoiseReductionCI), width(g.Bands[0].NoiseReductionCI)
 	if math.Abs(all/single-1) > 0.05 {
 		t.Errorf("interval of five equal bands %.3f dB, of one %.3f", all, single)
+	}
+}
+
+// Without intervals every other figure is the same.
+func TestFiguresWithoutIntervalsAreTheSame(t *testing.T) {
+	rng := rand.New(rand.NewPCG(3, 4))
+	series := func(noise, target float64) *Series {
+		s := &Series{}
+		for _, b := range ThirdOctaves(16000) {
+			track := Track{Band: b, HopS: 0.05, LengthS: 0.1}
+			for j := range 400 {
+				p := noise
+				if j >= 200 {
+					p += target
+				}
+				track.Power = append(track.Power, float32(p*math.Abs(1+0.3*rng.NormFloat64()*rng.Float64())))
+			}
+			s.Tracks = append(s.Tracks, track)
+		}
+		return s
+	}
+	scene := Scene{Pair: Pair{Reference: series(1, 0.2), Output: series(0.1, 0.19)}, Noise: []Stretch{{0, 9.9}}, Target: []Stretch{{10.1, 20}}, Named: -1}
+	full, err := SNRGain(scene)
+	if err != nil {
+		t.Fatal(err)
+	}
+	scene.NoIntervals = true
+	plain, err := SNRGain(scene)
+	if err != nil {
+		t.Fatal(err)
+	}
+	known := 0
+	for b := range full.Bands {
+		f, p := full.Bands[b], plain.Bands[b]
+		if p.NoiseReductionCI != nil || p.TargetChangeCI != nil || p.SNRGainCI != nil {
+			t.Errorf("band %d has an interval", b)
+		}
+		f.NoiseReductionCI, f.TargetChangeCI, f.SNRGainCI = nil, nil, nil
+		if !reflect.DeepEqual(f, p) {
+			t.Errorf("band %d: %+v, want %+v", b, p, f)
+		}
+		if f.SNRGain != nil {
+			known++
+		}
+	}
+	o, q := full.Overall(nil), plain.Overall(nil)
+	if known < 20 || o.SNRGainCI == nil || q.SNRGainCI != nil || q.NoiseReductionCI != nil || *o.SNRGain != *q.SNRGain || *o.NoiseReduction != *q.NoiseReduction {
+		t.Errorf("%d bands, overall %+v and %+v", known, o, q)
 	}
 }

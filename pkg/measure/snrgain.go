@@ -13,7 +13,7 @@ func SNRGain(s Scene) (*Gains, error) {
 	if s.Named >= len(s.Microphones) && s.Named >= 0 {
 		return nil, fmt.Errorf("measure: named microphone %d: there are %d", s.Named+1, len(s.Microphones))
 	}
-	g := &Gains{Best: -1, named: s.Named}
+	g := &Gains{Best: -1, named: s.Named, plain: s.NoIntervals}
 	for b := range s.Reference.Tracks {
 		ref, out, err := align(s.Reference.Tracks[b], s.Output.Tracks[b])
 		if err != nil {
@@ -49,7 +49,7 @@ func (g *Gains) fill(bands []Band) {
 	}
 	g.slowS = slowBlock(parts)
 	for b := range g.data {
-		g.data[b].slowS = g.slowS
+		g.data[b].slowS, g.data[b].plain = g.slowS, g.plain
 		g.Bands = append(g.Bands, g.data[b].gain(bands[b]))
 	}
 	g.compare()
@@ -105,8 +105,10 @@ func (d *bandData) gain(band Band) BandGain {
 	g.NoiseReduction = number(*g.NoiseIn - *g.NoiseOut)
 	s := n.spread(1/n.refMean, -1/n.outMean, 0)
 	g.NoiseBlockS = float64(s.block) * n.hopS
-	bias := 0.5 * (n.spread(0, 1/n.outMean, 0).variance - n.spread(1/n.refMean, 0, 0).variance)
-	g.NoiseReductionCI = interval(math.Log(n.refMean/n.outMean)-bias, s)
+	if !d.plain {
+		bias := 0.5 * (n.spread(0, 1/n.outMean, 0).variance - n.spread(1/n.refMean, 0, 0).variance)
+		g.NoiseReductionCI = interval(math.Log(n.refMean/n.outMean)-bias, s)
+	}
 	sparse := g.NoiseSamples < SparseSamples || n.seconds < SparseSeconds || n.seconds < SparseBlocks*g.NoiseBlockS
 	if sparse {
 		g.Flags = append(g.Flags, Sparse)
@@ -148,13 +150,18 @@ func (g *BandGain) target(d *bandData, refS, outS float64) {
 	g.SNRIn, g.SNROut = number(*g.TargetIn-*g.NoiseIn), number(*g.TargetOut-*g.NoiseOut)
 	g.SNRGain = number(*g.NoiseReduction + *g.TargetChange)
 	if d.isolated {
+		if d.plain {
+			return
+		}
 		ci := [2]float64{g.NoiseReductionCI[0] + *g.TargetChange, g.NoiseReductionCI[1] + *g.TargetChange}
 		g.SNRGainCI = &ci
 		return
 	}
 	g.TargetBlockS = math.Max(float64(a.spread(-1/refS, 1/outS, 0).block)*a.hopS, d.slowS)
-	g.TargetChangeCI = d.selected(math.Log(outS/refS), -1/refS, 1/outS, 0, 0)
-	g.SNRGainCI = d.selected(math.Log(outS/refS*n.refMean/n.outMean), -1/refS, 1/outS, 1/n.refMean, -1/n.outMean)
+	if !d.plain {
+		g.TargetChangeCI = d.selected(math.Log(outS/refS), -1/refS, 1/outS, 0, 0)
+		g.SNRGainCI = d.selected(math.Log(outS/refS*n.refMean/n.outMean), -1/refS, 1/outS, 1/n.refMean, -1/n.outMean)
+	}
 	if !g.Sparse() && (g.TargetSamples < SparseSamples || math.Min(a.seconds, n.seconds) < SparseBlocks*d.slowS ||
 		a.seconds < SparseSeconds || a.seconds < SparseBlocks*g.TargetBlockS) {
 		g.Flags = append(g.Flags, Sparse)
@@ -192,7 +199,10 @@ func (d *bandData) noiseIn(a, b float64) spread {
 
 // above is the spread of the target power a·ref + b·out if there is no target.
 func (d *bandData) above(a, b float64) spread {
-	return d.noiseIn(a, b).plus(d.noise.spread(a, b, d.slowS))
+	s := d.noise.spread(a, b, d.slowS)
+	over := s
+	over.variance *= d.noise.seconds / d.target.seconds
+	return over.plus(s)
 }
 
 // slowBlock is the block length of the noise level, seconds: of the mean of

@@ -55,11 +55,13 @@ func (r *run) design() error {
 		if r.set.ReestimateEvery > 0 {
 			return r.designOverTime(task, nulls)
 		}
-		noise, err := r.noiseCovariance(task)
-		if err != nil {
-			return err
+		if r.learned == nil {
+			var err error
+			if r.learned, err = r.noiseCovariance(task); err != nil {
+				return err
+			}
 		}
-		d = beam.MVDR{Noise: noise, FloorDB: r.set.floorDB, Nulls: nulls}
+		d = beam.MVDR{Noise: r.learned, FloorDB: r.set.floorDB, Nulls: nulls}
 	default:
 		d = beam.LCMV{Taper: r.set.taper, FloorDB: r.set.floorDB, Nulls: nulls}
 	}

@@ -7,6 +7,7 @@ import (
 	"io"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/beam"
 	"alidade/pkg/measure"
 	"alidade/pkg/quality"
 	"alidade/pkg/wav"
@@ -62,6 +63,7 @@ type run struct {
 
 	take     *take
 	line     *beamline
+	learned  *beam.Covariance // the noise, for weights of least variance; nil until it is known
 	names    names
 	from, to int64 // frames of the take that are written
 

@@ -19,6 +19,7 @@ func main() {
 	ConstraintExpr("amd64")
 	addFIR()
 	addProduct()
+	powerOfSums()
 	for _, b := range []int{4, 8} {
 		precision(b)
 		transforms()

@@ -1,0 +1,279 @@
+package scan
+
+import (
+	"math"
+
+	"alidade/pkg/audio"
+	"alidade/pkg/beam"
+	"alidade/pkg/kernel"
+	"alidade/pkg/measure"
+	"alidade/pkg/spectral"
+)
+
+// What a window must hold.
+const (
+	leastSeconds = 0.06
+	leastSpreads = 110 // of the delays of the filters
+	leastPeriods = 18  // of a band in the short windows
+	longPeriods  = 16  // of 50 Hz in the long ones
+	lowestHz     = 50
+)
+
+// batch is how many windows are taken through all beams at once, a multiple of
+// four, so that the weights of a beam are fetched once for all of them, and
+// chunk how many bins: what caches hold of the weights of a beam and of a batch.
+const (
+	batch = 16
+	chunk = 16 * kernel.Line
+)
+
+// grid is one window length with the bands that are taken from it.
+type grid struct {
+	size, hop int
+	seconds   float64   // hop
+	scale     float64   // from the sum of bin powers to power re a full-scale sine
+	bands     []int     // indices of the bands
+	pieces    [][]piece // pieces[chunk]: the parts of the bands in it
+	low, bins int       // the bins low..low+bins are needed, whole lines of them
+	mics      int
+	stft      *spectral.STFT
+
+	weights [][]float32 // [beam], in lines as kernel.PowerOfSums takes them
+	x       []float32   // the windows of a batch, in such lines
+	filled  int
+	p       []float32 // [window][bin of a chunk]
+	powers  []float64 // [beam][window][band] of a batch
+	own     []float64 // [band] of a microphone or of the reference
+	mean    []float64
+	beams   []*store
+	ref     *store
+}
+
+// piece is what a chunk of bins holds of a band.
+type piece struct {
+	band  int
+	first int // bin of the chunk
+	parts []float32
+}
+
+// sizes returns the window lengths, frames: the short ones and, where bands
+// need them, the long ones, else 0.
+func sizes(rate int, sets []*beam.Filters) (short, long int) {
+	r, least := float64(rate), leastSeconds*float64(rate)
+	for _, f := range sets {
+		least = math.Max(least, leastSpreads*spread(f))
+	}
+	for short = 256; float64(short) < least && short < spectral.MaxSize; {
+		short *= 2
+	}
+	for long = 256; float64(long) < longPeriods/float64(lowestHz)*r; {
+		long *= 2
+	}
+	if long <= short {
+		long = 0
+	}
+	return short, long
+}
+
+// spread is the root mean square of the delays that filters make, frames, each
+// with the energy of its tap.
+func spread(f *beam.Filters) float64 {
+	moment, energy := 0.0, 0.0
+	for m, h := range f.H {
+		for t, v := range h {
+			d := float64(f.Start[m] + t)
+			moment += v * v * d * d
+			energy += v * v
+		}
+	}
+	if !(energy > 0) {
+		return 0
+	}
+	return math.Sqrt(moment / energy)
+}
+
+// newGrid makes a grid of windows of size frames for the bands from..to of all.
+func newGrid(format audio.Format, size int, all []measure.Band, from, to int, sets []*beam.Filters, o Options) (*grid, error) {
+	g := &grid{mics: format.Channels, size: size, hop: size / 2, seconds: float64(size/2) / float64(format.Rate)}
+	window := spectral.Periodic(size, spectral.Hann)
+	energy := 0.0
+	for _, w := range window {
+		energy += w * w
+	}
+	// Σ_k |X_k|² over the positive bins is size·energy/4 for a full-scale sine,
+	// by Parseval's relation.
+	g.scale = 4 / (float64(size) * energy)
+	spacing := float64(format.Rate) / float64(size)
+	g.low = int(math.Floor(all[from].LowHz/spacing + 0.5))
+	for b := from; b < to; b++ {
+		first, parts := cells(all[b], spacing)
+		g.bands = append(g.bands, b)
+		for at := first - g.low; len(parts) > 0; {
+			for at/chunk >= len(g.pieces) {
+				g.pieces = append(g.pieces, nil)
+			}
+			n := min(len(parts), chunk-at%chunk)
+			g.pieces[at/chunk] = append(g.pieces[at/chunk], piece{b - from, at % chunk, parts[:n]})
+			parts, at = parts[n:], at+n
+			g.bins = at
+		}
+	}
+	g.bins = (g.bins + kernel.Line - 1) / kernel.Line * kernel.Line
+	var err error
+	if g.stft, err = spectral.NewSTFT(format.Channels, size, g.hop, window, g.take); err != nil {
+		return nil, err
+	}
+	g.x = make([]float32, batch*2*g.mics*g.bins)
+	g.p = make([]float32, 4*chunk)
+	g.powers = make([]float64, len(sets)*batch*len(g.bands))
+	g.own, g.mean = make([]float64, len(g.bands)), make([]float64, len(g.bands))
+	g.ref = newStore(len(g.bands), o.Entries)
+	plan, err := spectral.NewFFT[float64](size)
+	if err != nil {
+		return nil, err
+	}
+	for _, f := range sets {
+		g.weights = append(g.weights, g.responses(f, plan))
+		g.beams = append(g.beams, newStore(len(g.bands), o.Entries))
+	}
+	return g, nil
+}
+
+// at is the place of the real part of bin k of microphone m in lines; the
+// imaginary part lies kernel.Line further.
+func (g *grid) at(m, k int) int {
+	return (k/kernel.Line*g.mics+m)*2*kernel.Line + k%kernel.Line
+}
+
+// cells returns the first bin of a band, and of each of its bins the part of
+// the cell k-1/2 to k+1/2 that lies in the band.
+func cells(b measure.Band, spacing float64) (first int, parts []float32) {
+	low, high := b.LowHz/spacing, b.HighHz/spacing
+	first = int(math.Floor(low + 0.5))
+	for k := first; float64(k)-0.5 < high; k++ {
+		parts = append(parts, float32(math.Min(high, float64(k)+0.5)-math.Max(low, float64(k)-0.5)))
+	}
+	return first, parts
+}
+
+// responses are those of the filters at the bins. Taps wrapped around the
+// transform keep their phase at its bins exactly.
+func (g *grid) responses(f *beam.Filters, plan *spectral.FFT[float64]) []float32 {
+	w := make([]float32, 2*g.mics*g.bins)
+	top := min(g.bins, g.size/2+1-g.low)
+	if 32*g.bins < g.size {
+		var at []complex128
+		for k := range top {
+			at = f.Response(at, float64(g.low+k)*float64(f.Rate)/float64(g.size))
+			for m, z := range at {
+				i := g.at(m, k)
+				w[i], w[i+kernel.Line] = float32(real(z)), float32(imag(z))
+			}
+		}
+		return w
+	}
+	h := make([]float64, g.size)
+	re, im := make([]float64, plan.Bins()), make([]float64, plan.Bins())
+	for m, taps := range f.H {
+		clear(h)
+		for t, v := range taps {
+			at := (f.Start[m] + t) % g.size
+			if at < 0 {
+				at += g.size
+			}
+			h[at] += v
+		}
+		plan.Forward(re, im, h)
+		for k := range top {
+			i := g.at(m, k)
+			w[i], w[i+kernel.Line] = float32(re[g.low+k]), float32(im[g.low+k])
+		}
+	}
+	return w
+}
+
+// take is given each window by the transform.
+func (g *grid) take(_ int64, s *spectral.Spectra) error {
+	x := g.x[g.filled*2*g.mics*g.bins:]
+	clear(g.mean)
+	top := min(g.bins, s.Bins()-g.low)
+	for m := range g.mics {
+		re, im := s.Re[m][g.low:g.low+top], s.Im[m][g.low:g.low+top]
+		for k := 0; k < top; k += kernel.Line {
+			i := g.at(m, k)
+			copy(x[i:i+kernel.Line], re[k:min(k+kernel.Line, top)])
+			copy(x[i+kernel.Line:i+2*kernel.Line], im[k:min(k+kernel.Line, top)])
+		}
+		clear(g.own)
+		for c, list := range g.pieces {
+			p := g.p[:min(chunk, top-c*chunk)]
+			squares(p, re[c*chunk:], im[c*chunk:])
+			inBands(g.own, p, list)
+		}
+		for i, p := range g.own {
+			g.mean[i] += g.scale * p / float64(g.mics)
+		}
+	}
+	g.ref.add(g.mean)
+	if g.filled++; g.filled == batch {
+		g.beamsOf()
+	}
+	return nil
+}
+
+// beamsOf takes the windows of the batch through all beams, chunk by chunk.
+func (g *grid) beamsOf() {
+	bands := len(g.bands)
+	clear(g.powers)
+	for c, list := range g.pieces {
+		from := c * chunk
+		n := min(chunk, g.bins-from)
+		for i, w := range g.weights {
+			for t := 0; t < g.filled; t += 4 { // windows beyond those filled are of no use and do no harm
+				row := 2 * g.mics * g.bins
+				kernel.PowerOfSums(g.p, chunk, g.x[t*row+g.at(0, from):], row, w[g.at(0, from):], g.mics, n)
+				for u := t; u < min(t+4, g.filled); u++ {
+					inBands(g.powers[(i*batch+u)*bands:][:bands], g.p[(u-t)*chunk:][:n], list)
+				}
+			}
+		}
+	}
+	for i, s := range g.beams {
+		for t := range g.filled {
+			powers := g.powers[(i*batch+t)*bands:][:bands]
+			for b := range powers {
+				powers[b] *= g.scale
+			}
+			s.add(powers)
+		}
+	}
+	g.filled = 0
+}
+
+// squares sets p to re² + im².
+func squares(p, re, im []float32) {
+	re, im = re[:len(p)], im[:len(p)]
+	for k := range p {
+		p[k] = re[k]*re[k] + im[k]*im[k]
+	}
+}
+
+// inBands adds the powers of a chunk of bins to those of its bands.
+func inBands(dst []float64, p []float32, list []piece) {
+	for _, part := range list {
+		w := part.parts
+		x := p[part.first : part.first+len(w)]
+		var s0, s1, s2, s3 float32
+		for len(w) >= 4 && len(x) >= 4 {
+			s0 += w[0] * x[0]
+			s1 += w[1] * x[1]
+			s2 += w[2] * x[2]
+			s3 += w[3] * x[3]
+			w, x = w[4:], x[4:]
+		}
+		for k, v := range w {
+			s0 += v * x[k]
+		}
+		dst[part.band] += float64(s0+s1) + float64(s2+s3)
+	}
+}

@@ -1,0 +1,60 @@
+package main
+
+import (
+	. "github.com/mmcloughlin/avo/build"
+	. "github.com/mmcloughlin/avo/operand"
+	. "github.com/mmcloughlin/avo/reg"
+)
+
+// powerOfSums is p[t][k] = |Σ_m x[t][m][k]·w[m][k]|² for four rows t of x, which
+// share the load of a weight: eight sums in eight registers, and nothing stored
+// but the powers. Values lie in lines of eight real and eight imaginary parts.
+func powerOfSums() {
+	function("powerOfSumsAVX2", "func(p *float32, pStride int, x *float32, xStride int, w *float32, sources, lines int)",
+		"powerOfSumsAVX2 sets four rows of 8·lines powers; strides are in bytes, sources and lines at least 1.")
+	at := params("p", "pStride", "x", "xStride", "w", "sources", "lines")
+	p, pStride, x, xStride, w, sources, lines := at[0], at[1], at[2], at[3], at[4], at[5], at[6]
+	rows := []Register{x, GP64(), GP64(), GP64()}
+	to := []Register{p, GP64(), GP64(), GP64()}
+	for t := 1; t < 4; t++ {
+		MOVQ(rows[t-1], rows[t])
+		ADDQ(xStride, rows[t])
+		MOVQ(to[t-1], to[t])
+		ADDQ(pStride, to[t])
+	}
+	m := GP64()
+	Label("line")
+	var re, im [4]VecVirtual
+	for t := range 4 {
+		re[t], im[t] = YMM(), YMM()
+		VXORPS(re[t], re[t], re[t])
+		VXORPS(im[t], im[t], im[t])
+	}
+	MOVQ(sources, m)
+	Label("source")
+	wr, wi := YMM(), YMM()
+	VMOVUPS(Mem{Base: w}, wr)
+	VMOVUPS(Mem{Base: w, Disp: 32}, wi)
+	ADDQ(Imm(64), w)
+	for t, row := range rows {
+		xr, xi := YMM(), YMM()
+		VMOVUPS(Mem{Base: row}, xr)
+		VMOVUPS(Mem{Base: row, Disp: 32}, xi)
+		ADDQ(Imm(64), row)
+		VFMADD231PS(xr, wr, re[t])
+		VFMADD231PS(xr, wi, im[t])
+		VFNMADD231PS(xi, wi, re[t])
+		VFMADD231PS(xi, wr, im[t])
+	}
+	DECQ(m)
+	JNE(LabelRef("source"))
+	for t := range 4 {
+		VMULPS(re[t], re[t], re[t])
+		VFMADD231PS(im[t], im[t], re[t])
+		VMOVUPS(re[t], Mem{Base: to[t]})
+		ADDQ(Imm(32), to[t])
+	}
+	DECQ(lines)
+	JNE(LabelRef("line"))
+	end()
+}
