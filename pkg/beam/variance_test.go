@@ -1,6 +1,7 @@
 package beam
 
 import (
+	"fmt"
 	"math"
 	"math/cmplx"
 	"math/rand/v2"
@@ -139,7 +140,7 @@ func (f field) overall(filters *Filters) float64 {
 // degrees from the target, or a line with it at least 30.
 func draw(r *rand.Rand, onLine bool, diffuseDB float64) field {
 	f := field{diffuse: math.Pow(10, diffuseDB/10), sensor: 1e-4, fault: []complex128{1, 1, 1, 1, 1, 1, 1, 1}}
-	f.task = Task{Mics: ring(8, 0.06), Speed: 343, Rate: 32000, FFTSize: 1024}
+	f.task = Task{Mics: ring(8, 0.06), Speed: 343, Rate: 32000, FFTSize: 2048}
 	target := 360 * r.Float64()
 	other := target + 45 + 270*r.Float64()
 	if onLine {
@@ -159,53 +160,146 @@ func seeds(t *testing.T) uint64 {
 	if os.Getenv("ALIDADE_LONG") == "1" {
 		return 50
 	}
-	t.Log("3 of 50 seeds; ALIDADE_LONG=1 runs them all")
-	return 3
+	t.Log("2 of 50 seeds; ALIDADE_LONG=1 runs them all")
+	return 2
 }
 
 // noiseFrames is what the weights are found from: four seconds.
 const noiseFrames = 1 << 17
 
+// spectra are the power of target and noise alike over a logarithmic axis of
+// frequency from 100 Hz to 8 kHz: what "overall" means depends on it. That of
+// speech is flat up to 500 Hz and falls by 9 dB an octave of density above,
+// roughly the long-term average (common practice).
+var spectra = []struct {
+	name  string
+	power func(hz float64) float64
+}{
+	{"pink", func(hz float64) float64 { return 1 }},
+	{"white", func(hz float64) float64 { return hz }},
+	{"speech", func(hz float64) float64 { return hz / (1 + math.Pow(hz/500, 3)) }},
+}
+
+// gains are the overall SNR gains, dB, of responses in every spectrum.
+func (f field) gains(response func(hz float64) []complex128) (overall [3]float64) {
+	const points = 160
+	n := len(f.task.Mics)
+	var in, out, target, all [3]float64
+	for i := range points {
+		hz := 100 * math.Pow(80, (float64(i)+0.5)/points)
+		g := response(hz)
+		r := f.noise(hz)
+		d := steering(f.task, f.target, hz)
+		var y, power complex128
+		mean := 0.0
+		for m := range g {
+			y += g[m] * d[m] * f.fault[m]
+			mean += real(r[m*n+m]) / float64(n)
+			for j := range g {
+				power += g[m] * r[m*n+j] * cmplx.Conj(g[j])
+			}
+		}
+		for s, spectrum := range spectra {
+			p := spectrum.power(hz)
+			in[s] += p * mean
+			out[s] += p * real(power)
+			target[s] += p * abs2(y)
+			all[s] += p
+		}
+	}
+	for s := range overall {
+		overall[s] = db(in[s] / out[s] * target[s] / all[s])
+	}
+	return overall
+}
+
+// best are the gains that no weights with the floor can exceed: the optimum for
+// the exact covariance, frequency by frequency, with no filter to be built.
+func (f field) best(t *testing.T, floorDB float64) [3]float64 {
+	t.Helper()
+	n := len(f.task.Mics)
+	job := newBinJob(n, 1)
+	w := make([]complex128, n)
+	return f.gains(func(hz float64) []complex128 {
+		copy(job.c, steering(f.task, f.task.Look, hz))
+		clear(job.p)
+		copy(job.r, f.noise(hz))
+		if _, _, err := job.solve(math.Min(floorOf(floorDB), float64(n)*(1-1e-9)), w); err != nil {
+			t.Fatal(err)
+		}
+		for m := range w {
+			w[m] = cmplx.Conj(w[m])
+		}
+		return w
+	})
+}
+
 // Minimum variance against delay-and-sum, one interferer as loud as the target,
-// weights from 4 s of noise and gains in the expected noise, floor -6 dB. With
-// diffuse noise at -10 dB the ring is at least 6 dB better in every case, the
-// line in 48 of 50 (the least is 4.7 dB); with it at -20 dB, 12 dB in 44 and 46
-// of 50 (the least is 8.5 dB). The rest have the interferer near the target:
-// there the floor, not the noise, limits the lowest octaves, even of weights
-// from the exact covariance. The target is kept within 0.5 dB in every band.
+// weights from 4 s of noise, gains in the expected noise, floor -6 dB; ring (45°
+// apart or more) and line (30°). Wanted are 6 dB more than delay-and-sum with
+// diffuse noise at -10 dB and 12 dB with it at -20 dB. Over 50 seeds, with pink
+// spectra, the ring reaches it in 50 and 45 of 50 and the line in 48 and 46: as
+// many as the optimum for the exact covariance does, which no weights that keep
+// the floor can exceed. Without a floor that optimum reaches it in all 50 of
+// each, so that the floor is what the rest stand at: their interferer lies near
+// the target, and to turn from the one to the other within the lowest octaves
+// takes more white noise gain than 6 dB. With the spectra of speech the numbers
+// are 50, 50, 49 and 49.
+//
+// So the test is against that optimum: at most 0.5 dB below it in every case and
+// spectrum. The target is kept within 0.5 dB in every band.
 func TestMinimumVarianceGainOverDelayAndSum(t *testing.T) {
 	n := seeds(t)
 	for _, v := range []struct {
-		name                   string
-		onLine                 bool
-		diffuse, least, median float64
-		goal                   float64 // counted in the log
+		name          string
+		onLine        bool
+		diffuse, goal float64
 	}{
-		{"ring, diffuse -10 dB", false, -10, 6, 6, 6}, {"line, diffuse -10 dB", true, -10, 4.5, 6, 6},
-		{"ring, diffuse -20 dB", false, -20, 8, 12, 12}, {"line, diffuse -20 dB", true, -20, 8, 12, 12},
+		{"ring, diffuse -10 dB", false, -10, 6}, {"line, diffuse -10 dB", true, -10, 6},
+		{"ring, diffuse -20 dB", false, -20, 12}, {"line, diffuse -20 dB", true, -20, 12},
 	} {
-		var better []float64
-		worstTarget := 0.0
+		rows := map[string]*[3][]float64{}
+		worstTarget, worstLoss := 0.0, 0.0
 		for seed := uint64(1); seed <= n; seed++ {
 			r := rand.New(rand.NewPCG(seed, 77))
 			f := draw(r, v.onLine, v.diffuse)
+			_, plain, _ := built(t, Tapered{}, f.task, 0)
+			base := f.gains(func(hz float64) []complex128 { return plain.Response(nil, hz) })
 			noise := covariance(t, 32000, f.take(t, r, noiseFrames), f.task.FFTSize, 1<<14, CovarianceOptions{})
 			_, filters, _ := built(t, MVDR{Noise: noise, FloorDB: -6}, f.task, 0)
-			_, plain, _ := built(t, Tapered{}, f.task, 0)
-			better = append(better, f.overall(filters)-f.overall(plain))
+			learned := f.gains(func(hz float64) []complex128 { return filters.Response(nil, hz) })
+			best := f.best(t, -6)
+			for name, gains := range map[string][3]float64{"as built": learned, "optimum": best, "without a floor": f.best(t, math.Inf(-1))} {
+				if rows[name] == nil {
+					rows[name] = &[3][]float64{}
+				}
+				for s := range gains {
+					rows[name][s] = append(rows[name][s], gains[s]-base[s])
+				}
+			}
+			for s := range best {
+				loss := best[s] - learned[s]
+				worstLoss = math.Max(worstLoss, loss)
+				if loss > 0.5 {
+					t.Errorf("%s, seed %d, %s: %.2f dB better than delay-and-sum, want at most 0.5 dB below the optimum of %.2f", v.name, seed, spectra[s].name, learned[s]-base[s], best[s]-base[s])
+				}
+			}
 			for x := -9; x <= 9; x++ {
 				mid := 1000 * math.Pow(10, float64(x)/10)
 				_, target := f.gain(filters, mid*math.Pow(10, -0.05), mid*math.Pow(10, 0.05), 8)
 				worstTarget = math.Max(worstTarget, math.Abs(db(target)))
 			}
 		}
-		sort.Float64s(better)
-		median := (better[(n-1)/2] + better[n/2]) / 2
-		t.Logf("%s: least %.2f dB, median %.2f dB, %d of %d above %g dB better; target changes by %.4f dB at most",
-			v.name, better[0], median, int(n)-sort.SearchFloat64s(better, v.goal), n, v.goal, worstTarget)
-		if better[0] < v.least || median < v.median {
-			t.Errorf("%s: least %.2f dB, median %.2f dB better than delay-and-sum, want %g and %g", v.name, better[0], median, v.least, v.median)
+		for _, name := range []string{"as built", "optimum", "without a floor"} {
+			text := ""
+			for s, spectrum := range spectra {
+				x := rows[name][s]
+				sort.Float64s(x)
+				text += fmt.Sprintf("; %s least %5.2f, median %5.2f, %2d of %d", spectrum.name, x[0], (x[(n-1)/2]+x[n/2])/2, int(n)-sort.SearchFloat64s(x, v.goal), n)
+			}
+			t.Logf("%s, dB above delay-and-sum, and how many reach %g dB, %-15s%s", v.name, v.goal, name, text)
 		}
+		t.Logf("%s: at most %.2f dB below the optimum; target changes by %.4f dB at most", v.name, worstLoss, worstTarget)
 		if worstTarget > 0.5 {
 			t.Errorf("%s: target changes by %.3f dB", v.name, worstTarget)
 		}

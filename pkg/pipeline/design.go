@@ -88,10 +88,11 @@ func (r *run) design() error {
 }
 
 // noiseCovariance is the covariance of the noise that minimum variance is to
-// keep out: of the isolated noise, of the stretches given, or of those found
-// in a first pass by delay-and-sum.
+// keep out: of the stretches given, else of the isolated noise, or of stretches
+// found in a first pass by delay-and-sum.
 func (r *run) noiseCovariance(task beam.Task) (*beam.Covariance, error) {
-	if path := r.set.IsolatedNoise; path != "" {
+	if path := r.set.IsolatedNoise; path != "" && len(r.set.noise) == 0 && r.set.NoiseCue == "" {
+		r.report(Finding{Code: "weights-from-measured-noise", Severity: Info, Message: "the weights were found on the isolated noise that the gain is measured in: the noise reduction there is better than in noise they have not heard; --noise A..B finds them on the take itself"})
 		t, err := openTake([]string{path}, r.isolatedJoining(), false)
 		if err != nil {
 			return nil, err

@@ -275,12 +275,12 @@ func (r *run) passedOver() {
 	var unused []string
 	for _, o := range []struct {
 		option, value string
-		learns        bool // minimum variance listens to it where no isolated noise is given
+		learns        bool // minimum variance listens to it
 	}{
 		{"--noise", r.set.Noise, true}, {"--noise-cue", r.set.NoiseCue, true},
 		{"--target", r.set.Target, false}, {"--target-cue", r.set.TargetCue, false},
 	} {
-		learned := o.learns && r.set.Weights == WeightsMinimumVariance && (r.set.IsolatedNoise == "" || r.set.ReestimateEvery > 0)
+		learned := o.learns && r.set.Weights == WeightsMinimumVariance
 		if o.value != "" && !learned {
 			unused = append(unused, o.option)
 		}
