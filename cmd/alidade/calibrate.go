@@ -42,6 +42,9 @@ How it is listened to
                          measured responses, before a room's reflections
   --from-hz HZ           from this frequency (300)
   --to-hz HZ             up to this one (16000, at most 0.4 of the rate)
+  --responses            find what each channel does over frequency too, and
+                         write short filters that undo it (response in the
+                         rig file), where the take carries it
   --max-delay-us US      largest error of a delay that is looked for (1000)
   --excerpt A..B         only this part of the take
   --chain                the files named are one take, one after the other
@@ -113,7 +116,7 @@ func calibrateVerb() verb {
 			} {
 				flags = append(flags, &cli.Float64Flag{Name: name})
 			}
-			for _, name := range []string{"chain", "set", "find-chain", "find-set", "positions", "overwrite", "json", "quiet"} {
+			for _, name := range []string{"chain", "set", "find-chain", "find-set", "responses", "positions", "overwrite", "json", "quiet"} {
 				flags = append(flags, &cli.BoolFlag{Name: name})
 			}
 			return flags
@@ -138,7 +141,7 @@ func calibrateOptions(c *cli.Context) pipeline.CalibrateOptions {
 		DirectionStdDeg: number("direction-uncertainty-deg"), FocusStdMM: number("focus-uncertainty-mm"), DistanceStdM: number("distance-uncertainty-m"),
 		TemperatureStdC: number("temperature-uncertainty-c"), PlacementStdMM: number("placement-uncertainty-mm"),
 		CalibratorDB: c.Float64("calibrator-db"), CalibratorHz: c.Float64("calibrator-hz"), CalibratorClass: c.String("calibrator-class"), Channel: int(c.Float64("channel")),
-		Positions: c.Bool("positions"), Elevations: c.String("elevations"),
+		Responses: c.Bool("responses"), Positions: c.Bool("positions"), Elevations: c.String("elevations"),
 		ElevationStdDeg: number("elevation-uncertainty-deg"), DelayStdUS: number("delay-uncertainty-us"),
 		RelativeTo: c.String("relative-to"), Keep: c.String("keep"),
 		TemperatureC: number("temperature-c"), HumidityPct: number("humidity-pct"), PressureKPa: number("pressure-kpa"), SpeedOfSound: number("speed-of-sound"),

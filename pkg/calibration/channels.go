@@ -230,14 +230,13 @@ func (r *Relative) gather(f *factor, e *Expected, late []float64, known []rig.Mi
 	if err := r.reliable(f); err != nil {
 		return err
 	}
-	if o.anywhere {
-		return nil
-	}
-	if err := r.direction(f.heard, e, known); err != nil {
-		return err
+	if !o.anywhere {
+		if err := r.direction(f.heard, e, known); err != nil {
+			return err
+		}
 	}
 	if o.Responses {
-		f.responses(r)
+		return f.responses(r)
 	}
 	return nil
 }

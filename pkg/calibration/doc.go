@@ -1,8 +1,8 @@
 // Package calibration finds what makes the channels of a rig agree: gain, delay
 // and polarity of each against the others, from a take of one known sound
 // (Channels), the places of its microphones from sounds of unknown directions
-// (Arrivals, Locate), and their sensitivities from a sound level calibrator
-// (Tones).
+// (Arrivals, Locate), their sensitivities from a sound level calibrator (Tones),
+// and filters for what the channels do over frequency (Options.Responses, Undo).
 //
 // # Conventions
 //
@@ -42,6 +42,13 @@
 // show a line or a plane and nothing is known of elevations, directions have no
 // length that would settle the scale: places are then found along the line or
 // plane alone, but for a linear map, and all else is left as it was.
+//
+// Responses are fitted by the same model, line by line over a third of an octave
+// or 190 Hz, whichever is wider, each channel against the others turned and
+// weighted by their own responses so far. Their filters are 1.3 ms long and undo
+// what differs from the mean of all channels, by 12 dB at most, where a third of
+// an octave is known within 0.3 dB; beyond that band they keep the level of its
+// edge.
 //
 // A calibrator's stretch is the longest second or more in which a channel
 // carries a pure tone of its frequency, steady within 0.15 dB and 10 dB above

@@ -27,7 +27,9 @@ type factor struct {
 
 	cr, ci  []float64   // scratch: the instrument's cross-spectrum with one channel
 	b       []float64   // scratch: Σ v·|a|² of the instrument
-	cos, sn [][]float64 // of ω·d_m
+	// a_m over g_m is cos - j·sn: the phase of the delay, and later the channel's
+	// own response.
+	cos, sn [][]float64
 }
 
 // smoothing is how many lines to either side spectra are averaged over where
@@ -231,7 +233,7 @@ func (f *factor) instrument(m int) {
 			// times g·e^{-jω·d_n}
 			f.cr[j] += w * (re[j]*cs[j] + s*im[j]*sn[j])
 			f.ci[j] += w * (s*im[j]*cs[j] - re[j]*sn[j])
-			f.b[j] += w * g
+			f.b[j] += w * g * (cs[j]*cs[j] + sn[j]*sn[j])
 		}
 	}
 }
@@ -244,7 +246,7 @@ func (f *factor) source() {
 		g, v, cs, sn := f.g[m], f.v[m], f.cos[m], f.sn[m]
 		for j := range top {
 			top[j] += v[j] * g * (f.cr[j]*cs[j] - f.ci[j]*sn[j])
-			bottom[j] += v[j] * g * g * f.b[j]
+			bottom[j] += v[j] * g * g * (cs[j]*cs[j] + sn[j]*sn[j]) * f.b[j]
 		}
 	}
 	for j := range top {

@@ -174,7 +174,12 @@ func (c *calibrating) raw(t *take, stage string) (func() (audio.Source, error), 
 			return nil, fmt.Errorf("%s: %w", t.path(), err)
 		}
 		src := audio.Source(&watched{Source: t.source(), ctx: c.ctx, tell: c.as(t).tell(stage, to-from)})
-		return audio.Map(audio.Section(src, 0, to-from), order, nil)
+		out, err := audio.Map(audio.Section(src, 0, to-from), order, nil)
+		if err != nil || c.set.Responses {
+			return out, err
+		}
+		// Filters that stay are part of the channels.
+		return c.rig.evened(out)
 	}, nil
 }
 
@@ -253,7 +258,7 @@ func (c *calibrating) channels(e *calibration.Expected) (*rig.Rig, []string, err
 		return nil, nil, &UsageError{Err: fmt.Errorf("--to-hz %g: above 0.45 of the take's rate of %d Hz", to, t.header.Rate)}
 	}
 	r, err := calibration.Channels(open, e, mics, calibration.Options{
-		Claps: c.set.Sound == SoundClaps, FromHz: c.set.FromHz, ToHz: c.set.ToHz, MaxDelay: c.set.MaxDelayUS / 1e6,
+		Claps: c.set.Sound == SoundClaps, FromHz: c.set.FromHz, ToHz: c.set.ToHz, MaxDelay: c.set.MaxDelayUS / 1e6, Responses: c.set.Responses,
 	})
 	if err != nil {
 		return nil, nil, err
@@ -297,6 +302,9 @@ func (c *calibrating) correct(used []int, r *calibration.Relative) *rig.Rig {
 		if !keep(KeepDelay) {
 			mic.Delay = nanoseconds(delay - ch.Late)
 		}
+		if v := ch.Response; v != nil {
+			mic.Response = &rig.Response{RateHz: c.takes[0].header.Rate, Taps: v.Taps}
+		}
 		if !keep(KeepPolarity) && ch.Opposite < uncertainPolarity {
 			mic.Inverted = ch.Inverted
 		}
@@ -318,6 +326,12 @@ func (c *calibrating) correct(used []int, r *calibration.Relative) *rig.Rig {
 			entry.GainUncertaintyDB, entry.DelayUncertaintyUS = number(2*ch.LevelStd), number(2e6*ch.LateStd)
 			entry.GainNoiseDB, entry.DelayNoiseUS = number(ch.LevelNoise), number(1e6*ch.LateNoise)
 			entry.SNRDB = number(ch.SNRDB)
+			if v := ch.Response; v != nil {
+				entry.ResponseTaps = len(v.Taps)
+				for _, b := range v.Bands {
+					entry.Response = append(entry.Response, CalibratedBand{CentreHz: b.CentreHz, LevelDB: b.LevelDB, PhaseDeg: b.PhaseDeg, UncertaintyDB: 2 * b.Std, LeftDB: b.LeftDB})
+				}
+			}
 		}
 		c.res.Microphones = append(c.res.Microphones, entry)
 	}

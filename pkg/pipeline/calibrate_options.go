@@ -59,6 +59,10 @@ type CalibrateOptions struct {
 	RelativeTo      string   `json:"relative_to,omitempty"`               // mean (default) or a microphone's name
 	Keep            string   `json:"keep,omitempty"`                      // of gain,delay,polarity: what stays as it is
 
+	// Responses finds what the channels do over frequency too, and writes filters
+	// that undo it.
+	Responses bool `json:"responses,omitempty"`
+
 	// Positions finds the places of the microphones from sounds of unknown
 	// directions instead.
 	Positions       bool     `json:"positions,omitempty"`
@@ -240,7 +244,7 @@ func (s *calibrateSettings) resolveCalibrator(fault func(format string, args ...
 		option string
 		is     bool
 	}{
-		{"relative-to", o.RelativeTo != ""}, {"sound", o.Sound != ""}, {"from-hz", o.FromHz != 0}, {"to-hz", o.ToHz != 0},
+		{"responses", o.Responses}, {"relative-to", o.RelativeTo != ""}, {"sound", o.Sound != ""}, {"from-hz", o.FromHz != 0}, {"to-hz", o.ToHz != 0},
 		{"max-delay-us", o.MaxDelayUS != 0}, {"distance-m", o.DistanceM != 0},
 	} {
 		if given.is {
@@ -259,7 +263,7 @@ func (s *calibrateSettings) resolvePositions(fault func(format string, args ...a
 		option string
 		is     bool
 	}{
-		{"keep", o.Keep != ""}, {"relative-to", o.RelativeTo != ""}, {"max-delay-us", o.MaxDelayUS != 0}, {"direction-uncertainty-deg", o.DirectionStdDeg != nil},
+		{"responses", o.Responses}, {"keep", o.Keep != ""}, {"relative-to", o.RelativeTo != ""}, {"max-delay-us", o.MaxDelayUS != 0}, {"direction-uncertainty-deg", o.DirectionStdDeg != nil},
 		{"focus-uncertainty-mm", o.FocusStdMM != nil}, {"distance-uncertainty-m", o.DistanceStdM != nil},
 	} {
 		if given.is {

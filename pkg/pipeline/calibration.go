@@ -78,6 +78,11 @@ type CalibratedMic struct {
 	Polarity       string `json:"polarity"`
 	SNRDB          Number `json:"snr_db,omitempty"`
 
+	// The channel against the mean of all over frequency, gain and delay taken
+	// out, and what its filter leaves; with --responses.
+	Response     []CalibratedBand `json:"response,omitempty"`
+	ResponseTaps int              `json:"response_taps,omitempty"`
+
 	// Of levels: what 94 dB SPL reads before the gain correction.
 	SensitivityBeforeDBFS    Number          `json:"sensitivity_before_dbfs,omitempty"`
 	SensitivityDBFS          Number          `json:"sensitivity_dbfs,omitempty"`
@@ -90,6 +95,15 @@ type CalibratedMic struct {
 	AtMM            *[3]float64 `json:"at_mm,omitempty"`
 	MovedMM         Number      `json:"moved_mm,omitempty"`
 	AtUncertaintyMM *[3]float64 `json:"at_uncertainty_mm,omitempty"`
+}
+
+// CalibratedBand is one octave of a channel's response.
+type CalibratedBand struct {
+	CentreHz      float64 `json:"centre_hz"`
+	LevelDB       float64 `json:"level_db"`
+	PhaseDeg      float64 `json:"phase_deg"`
+	UncertaintyDB float64 `json:"uncertainty_db"`
+	LeftDB        float64 `json:"left_db"`
 }
 
 // CalibratorUsed is the sound level calibrator.

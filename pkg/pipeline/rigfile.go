@@ -11,6 +11,7 @@ import (
 
 	"alidade/pkg/acoustics"
 	"alidade/pkg/audio"
+	"alidade/pkg/calibration"
 	"alidade/pkg/rig"
 )
 
@@ -121,7 +122,35 @@ func (l *loadedRig) corrected(src audio.Source) (audio.Source, error) {
 	for i, m := range used {
 		order[i], gain[i] = l.Mics[m].Channel-1, l.Mics[m].Factor()
 	}
-	return audio.Map(src, order, gain)
+	out, err := audio.Map(src, order, gain)
+	if err != nil {
+		return nil, err
+	}
+	return l.evened(out)
+}
+
+// evened returns the used microphones in rig order with their response filters,
+// as they are where the rig has none.
+func (l *loadedRig) evened(src audio.Source) (audio.Source, error) {
+	used := l.Used()
+	taps, some := make([][]float64, len(used)), false
+	for i, m := range used {
+		v := l.Mics[m].Response
+		if v == nil {
+			continue
+		}
+		if rate := src.Format().Rate; v.RateHz != rate {
+			return nil, &UsageError{
+				Err:  fmt.Errorf("rig %s: microphone %q: its response filter is made for %d Hz, the take has %d Hz", l.Name, l.Mics[m].Name, v.RateHz, rate),
+				Hint: "calibrate --responses with a take of that rate, or leave response out of the rig file",
+			}
+		}
+		taps[i], some = v.Taps, true
+	}
+	if !some {
+		return src, nil
+	}
+	return calibration.Undo(src, taps)
 }
 
 // namesHint lists the used microphones as a remedy.

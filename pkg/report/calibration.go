@@ -22,6 +22,7 @@ func Calibration(w io.Writer, c *pipeline.Calibration, width int) error {
 	width = max(width, 60)
 	lines := wrap(calibrationBasis(c), width, "", 4)
 	lines = append(lines, calibrationTable(c, width)...)
+	lines = append(lines, responseTable(c, width)...)
 	note := "± is twice the standard uncertainty (k = 2, about 95 %)"
 	if c.Survey != nil {
 		note += "; shift and turn of the whole rig are in none of them"
@@ -154,4 +155,60 @@ func calibrationLines(t table.Writer, right []int, width int) []string {
 		lines = append(lines, cut(strings.TrimRight(line, " "), width))
 	}
 	return lines
+}
+
+// responseTable is what each channel does over frequency, in octaves, where that
+// was asked for.
+func responseTable(c *pipeline.Calibration, width int) []string {
+	var centres []float64
+	most := 0.0
+	for _, m := range c.Microphones {
+		if len(m.Response) > len(centres) {
+			centres = nil
+			for _, b := range m.Response {
+				centres = append(centres, b.CentreHz)
+			}
+		}
+		for _, b := range m.Response {
+			most = math.Max(most, math.Abs(b.LeftDB))
+		}
+	}
+	if centres == nil {
+		return nil
+	}
+	t := table.NewWriter()
+	style := table.StyleLight
+	style.Options = table.OptionsNoBordersAndSeparators
+	style.Format.Header = text.FormatDefault
+	style.Color = table.ColorOptions{}
+	t.SetStyle(style)
+	head, right := table.Row{"ch", "name"}, []int{1}
+	for k, hz := range centres {
+		head = append(head, nominalOctave(hz))
+		right = append(right, k+3)
+	}
+	t.AppendHeader(head)
+	for _, m := range c.Microphones {
+		if len(m.Response) != len(centres) {
+			continue
+		}
+		row := table.Row{m.Channel, cut(clean(m.Name), 12)}
+		for _, b := range m.Response {
+			row = append(row, decimals(b.LevelDB, 2))
+		}
+		t.AppendRow(row)
+	}
+	lines := wrap(fmt.Sprintf("against the mean of all, gain taken out, dB by octave (Hz); filters leave at most %s dB of it:", decimals(most, 2)), width, "  ", 2)
+	return append(lines, calibrationLines(t, right, width)...)
+}
+
+// nominalOctave is the nominal name of an octave's exact mid-band frequency
+// [IEC 61260-1:2014, annex E].
+func nominalOctave(hz float64) string {
+	names := []string{"16", "31.5", "63", "125", "250", "500", "1 k", "2 k", "4 k", "8 k", "16 k"}
+	k := int(math.Round(math.Log10(hz/1000)/0.3)) + 6
+	if k < 0 || k >= len(names) {
+		return decimals(hz, 0)
+	}
+	return names[k]
 }

@@ -79,16 +79,22 @@ type airFile struct {
 }
 
 type micFile struct {
-	Name            string   `json:"name,omitempty" jsonschema:"minLength=1,maxLength=200" jsonschema_description:"Name of the microphone; M and its channel if absent."`
-	Channel         int      `json:"channel" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the take, counted from 1."`
-	AtMM            []milli  `json:"at_mm" jsonschema:"minItems=2,maxItems=3" jsonschema_description:"Place x, y and, 0 if absent, z in millimetres: x to the right, y to the front, z up."`
-	GainDB          float64  `json:"gain_db,omitempty" jsonschema:"minimum=-60,maximum=60" jsonschema_description:"Correction: added to the channel's level, dB. A quiet channel has a positive gain."`
-	DelayUS         micro    `json:"delay_us,omitempty" jsonschema:"minimum=-100000,maximum=100000" jsonschema_description:"Correction: added to the channel's time, µs. A channel that arrives late has a negative delay."`
-	Polarity        string   `json:"polarity,omitempty" jsonschema:"enum=normal,enum=inverted" jsonschema_description:"Polarity of the channel; an inverted one is turned over."`
-	Use             *bool    `json:"use,omitempty" jsonschema_description:"false leaves the microphone out, of the reference point too."`
-	SensitivityMVPa *float64 `json:"sensitivity_mv_pa,omitempty" jsonschema:"exclusiveMinimum=0,maximum=100000" jsonschema_description:"Sensitivity, mV/Pa."`
-	SensitivityDBFS *float64 `json:"sensitivity_dbfs,omitempty" jsonschema:"minimum=-200,maximum=60" jsonschema_description:"What the channel reads at 94 dB sound pressure level before its gain correction, dBFS (a full-scale sine reads 0): levels are given in dB SPL too."`
-	ClockPPM        float64  `json:"clock_ppm,omitempty" jsonschema:"minimum=-10000,maximum=10000" jsonschema_description:"How fast the channel's clock runs, parts per million; positive is fast."`
+	Name            string        `json:"name,omitempty" jsonschema:"minLength=1,maxLength=200" jsonschema_description:"Name of the microphone; M and its channel if absent."`
+	Channel         int           `json:"channel" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the take, counted from 1."`
+	AtMM            []milli       `json:"at_mm" jsonschema:"minItems=2,maxItems=3" jsonschema_description:"Place x, y and, 0 if absent, z in millimetres: x to the right, y to the front, z up."`
+	GainDB          float64       `json:"gain_db,omitempty" jsonschema:"minimum=-60,maximum=60" jsonschema_description:"Correction: added to the channel's level, dB. A quiet channel has a positive gain."`
+	DelayUS         micro         `json:"delay_us,omitempty" jsonschema:"minimum=-100000,maximum=100000" jsonschema_description:"Correction: added to the channel's time, µs. A channel that arrives late has a negative delay."`
+	Polarity        string        `json:"polarity,omitempty" jsonschema:"enum=normal,enum=inverted" jsonschema_description:"Polarity of the channel; an inverted one is turned over."`
+	Use             *bool         `json:"use,omitempty" jsonschema_description:"false leaves the microphone out, of the reference point too."`
+	SensitivityMVPa *float64      `json:"sensitivity_mv_pa,omitempty" jsonschema:"exclusiveMinimum=0,maximum=100000" jsonschema_description:"Sensitivity, mV/Pa."`
+	SensitivityDBFS *float64      `json:"sensitivity_dbfs,omitempty" jsonschema:"minimum=-200,maximum=60" jsonschema_description:"What the channel reads at 94 dB sound pressure level before its gain correction, dBFS (a full-scale sine reads 0): levels are given in dB SPL too."`
+	Response        *responseFile `json:"response,omitempty" jsonschema_description:"Filter that makes the channel agree with the others over frequency, as alidade calibrate --responses writes it."`
+	ClockPPM        float64       `json:"clock_ppm,omitempty" jsonschema:"minimum=-10000,maximum=10000" jsonschema_description:"How fast the channel's clock runs, parts per million; positive is fast."`
+}
+
+type responseFile struct {
+	RateHz int       `json:"rate_hz" jsonschema:"minimum=8000,maximum=384000" jsonschema_description:"Frames per second of the takes that it is made for."`
+	Taps   []float64 `json:"taps" jsonschema:"minItems=1,maxItems=1023" jsonschema_description:"The filter: an odd number of taps, the middle one at no delay."`
 }
 
 type lineFile struct {
@@ -265,6 +271,17 @@ func (l *loader) list(r *Rig) {
 			mic.SensitivityMVPa = *m.SensitivityMVPa
 		}
 		mic.SensitivityDBFS = m.SensitivityDBFS
+		if v := m.Response; v != nil {
+			mic.Response = &Response{RateHz: v.RateHz, Taps: v.Taps}
+			if l.doc.Has(p+".response.taps") && len(v.Taps)%2 == 0 {
+				l.doc.Fault(p+".response.taps", "%d taps, want an odd number: the middle one stands at no delay", len(v.Taps))
+			}
+			for k, tap := range v.Taps {
+				if entry := fmt.Sprintf("%s.response.taps[%d]", p, k); l.doc.Has(entry) && math.Abs(tap) > 100 {
+					l.doc.Fault(entry, "%g, want a tap within 100", tap)
+				}
+			}
+		}
 		if mic.Name == "" && m.Channel > 0 {
 			mic.Name = "M" + strconv.Itoa(m.Channel)
 		}

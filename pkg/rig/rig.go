@@ -92,7 +92,15 @@ type Mic struct {
 	// dB before its gain correction, dBFS (AES17: a full-scale sine reads 0); nil
 	// if not known.
 	SensitivityDBFS *float64
-	ClockPPM        float64 // positive: the channel's clock runs fast, parts per million
+	Response        *Response // nil: the channel needs no filter
+	ClockPPM        float64   // positive: the channel's clock runs fast, parts per million
+}
+
+// Response is a filter that makes a channel agree with the others over
+// frequency, beside its gain and delay.
+type Response struct {
+	RateHz int       // frames per second of the takes that it is made for
+	Taps   []float64 // an odd number, the middle one at no delay
 }
 
 // Factor returns the factor that the channel is multiplied by: the gain

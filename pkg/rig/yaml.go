@@ -69,6 +69,16 @@ func (r *Rig) Annotated(head []string, note func(m int) string) []byte {
 		if v := m.SensitivityDBFS; v != nil {
 			fmt.Fprintf(&b, ", sensitivity_dbfs: %s", numberText(*v))
 		}
+		if v := m.Response; v != nil {
+			fmt.Fprintf(&b, ", response: {rate_hz: %d, taps: [", v.RateHz)
+			for k, tap := range v.Taps {
+				if k > 0 {
+					b.WriteString(", ")
+				}
+				b.WriteString(numberText(tap))
+			}
+			b.WriteString("]}")
+		}
 		optional("clock_ppm", m.ClockPPM, numberText(m.ClockPPM))
 		b.WriteString("}")
 		if note != nil {

@@ -34,6 +34,7 @@ func randomRig(rng *rand.Rand) *Rig {
 			mic.ClockPPM = 10 * rng.NormFloat64()
 			v := 40*rng.Float64() - 60
 			mic.SensitivityDBFS = &v
+			mic.Response = &Response{RateHz: 48000, Taps: []float64{rng.NormFloat64(), 1, 1e-6 * rng.NormFloat64()}}
 		}
 		r.Mics = append(r.Mics, mic)
 	}
