@@ -25,8 +25,8 @@ type factor struct {
 	peak   []float64   // height of the correlation with the pilot, 0..1
 	rival  []float64   // height of the best correlation of the other sign
 
-	cr, ci  []float64   // scratch: the instrument's cross-spectrum with one channel
-	b       []float64   // scratch: Σ v·|a|² of the instrument
+	cr, ci []float64 // scratch: the instrument's cross-spectrum with one channel
+	b      []float64 // scratch: Σ v·|a|² of the instrument
 	// a_m over g_m is cos - j·sn: the phase of the delay, and later the channel's
 	// own response.
 	cos, sn [][]float64
