@@ -395,11 +395,12 @@ func (l *looker) agreement(j int) []float32 {
 		for k := range K {
 			// Lines where this source is the stronger part.
 			w := l.amp[j][k] * l.coh[k]
-			m := math.Hypot(l.rr[c*K+k], l.ri[c*K+k])
+			re, im := l.rr[c*K+k], l.ri[c*K+k]
+			m := math.Sqrt(re*re + im*im)
 			if m == 0 || w == 0 {
 				continue
 			}
-			in += w * (l.rr[c*K+k]*l.cos[j][c*K+k] - l.ri[c*K+k]*l.sin[j][c*K+k]) / m
+			in += w * (re*l.cos[j][c*K+k] - im*l.sin[j][c*K+k]) / m
 			mag += w
 		}
 		sum[q.i] += in

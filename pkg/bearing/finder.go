@@ -3,6 +3,7 @@ package bearing
 import (
 	"fmt"
 	"math"
+	"runtime"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/rig"
@@ -25,7 +26,6 @@ type Finder struct {
 	noiseSection *crossSum
 	noise        *crossSum // faded sum
 	noiseMean    *crossSum
-	window       *crossSum
 	sectionPower [][]float64
 	section      int // sections complete
 	inSection    int // frames in the section under way
@@ -36,6 +36,10 @@ type Finder struct {
 	samples                    int64
 	picture                    []float64
 	pictureWindows             int
+
+	desks []*desk
+	turn  int // the desk that is next, whose window is the oldest one
+	begun int // windows
 
 	windows   []Window
 	sightings []sighting
@@ -91,7 +95,18 @@ func NewFinder(mics []rig.Point, ref rig.Point, rate int, o Options) (*Finder, e
 		f.onset = append(f.onset, fresh())
 		f.sectionPower = append(f.sectionPower, make([]float64, K))
 	}
-	f.noiseSection, f.noise, f.noiseMean, f.window = fresh(), fresh(), fresh(), fresh()
+	f.noiseSection, f.noise, f.noiseMean = fresh(), fresh(), fresh()
+	// While frames go on, windows are looked at on another core. Each is looked
+	// at by itself and they are collected in order: the result is the same.
+	for d := range min(runtime.GOMAXPROCS(0), mostDesks) {
+		p := &desk{look: f.look, sum: fresh(), noise: fresh(), done: make(chan struct{}, 1)}
+		if d > 0 {
+			if p.look, err = f.look.twin(); err != nil {
+				return nil, err
+			}
+		}
+		f.desks = append(f.desks, p)
+	}
 	for _, p := range []*[]float64{&f.late, &f.prev, &f.smooth, &f.weight} {
 		*p = make([]float64, K)
 	}
@@ -236,53 +251,35 @@ func (f *Finder) endWindow(first, count int) {
 		}
 	}
 	w.Active = above > activeDB || float64(bins) > activeBins*float64(K)
-	var found []sighting
+	p := f.desks[f.turn]
+	f.turn = (f.turn + 1) % len(f.desks)
+	f.collect(p)
+	p.held, p.index, p.window, p.mean, p.found = true, f.begun, w, mean, nil
+	f.begun++
 	if mean < silenceFloor {
-		w.Reason = "silence"
+		p.window.Reason = "silence"
+		p.done <- struct{}{}
+		return
+	}
+	p.sum.clear()
+	sums := f.plain
+	p.noisy = false
+	if w.Active {
+		sums = f.onset
+		if f.noise.frames >= 8 {
+			p.noisy = true
+			copy(p.noise.re, f.noiseMean.re)
+			copy(p.noise.im, f.noiseMean.im)
+		}
+	}
+	for i := range count {
+		p.sum.plus(sums[(first+i)%f.set.sections])
+	}
+	if len(f.desks) > 1 {
+		go p.work()
 	} else {
-		f.window.clear()
-		var noise *crossSum
-		sums := f.plain
-		if w.Active {
-			sums = f.onset
-			if f.noise.frames >= 8 {
-				noise = f.noiseMean
-			}
-		}
-		for i := range count {
-			f.window.plus(sums[(first+i)%f.set.sections])
-		}
-		if w.Reason = f.look.load(f.window, noise); w.Reason == "" {
-			found, w.Reason = f.look.look(len(f.windows), w.Active)
-		}
+		p.work()
 	}
-	if len(found) > 0 {
-		addTo(f.picture, f.look.firstMap)
-		f.pictureWindows++
-		for _, d := range f.look.leads {
-			d.a, d.b = d.a+len(f.sightings), d.b+len(f.sightings)
-			f.leads = append(f.leads, d)
-		}
-		for _, s := range found {
-			s.level = mean
-			inv, _ := s.info.invert(f.look.unknowns(), f.space.lift(s.at))
-			at := s.at
-			at.kappa = 0 // one window alone gives no distance
-			fix := f.space.fix(at, inv, math.Inf(1))
-			fix.Confidence = peakConfidence(s.value, s.rest) * agreementFactor(s.fit)
-			w.Sources = append(w.Sources, fix)
-			if f.detailed >= maxDetailed {
-				s.groups = nil
-			} else {
-				f.detailed++
-			}
-			f.sightings = append(f.sightings, s)
-		}
-	}
-	if w.Reason != "" {
-		f.reasons[w.Reason]++
-	}
-	f.windows = append(f.windows, w)
 }
 
 // Close ends the take: what is left of the last section is looked at, and the
@@ -307,15 +304,19 @@ func (f *Finder) Close() error {
 		}
 		f.frame()
 	}
-	if f.inSection > 0 && (2*f.inSection >= f.set.section || len(f.windows) == 0) {
+	if f.inSection > 0 && (2*f.inSection >= f.set.section || f.begun == 0) {
 		if f.section+1 >= f.set.sections {
 			f.endSection()
 		} else {
 			f.section++
 			f.endWindow(0, f.section)
 		}
-	} else if len(f.windows) == 0 && f.section > 0 {
+	} else if f.begun == 0 && f.section > 0 {
 		f.endWindow(0, f.section)
+	}
+	for range f.desks {
+		f.collect(f.desks[f.turn])
+		f.turn = (f.turn + 1) % len(f.desks)
 	}
 	f.result = f.summarise()
 	return nil

@@ -164,6 +164,18 @@ func newGrid(s *space, set *settings, pairs []pairIndex) (*grid, error) {
 	return g, nil
 }
 
+// twin returns a grid of the same points with scratch memory of its own.
+func (g *grid) twin() (*grid, error) {
+	t := *g
+	var err error
+	if t.fft, err = spectral.NewFFT[float32](len(g.x)); err != nil {
+		return nil, err
+	}
+	t.re, t.im, t.x = make([]float32, len(g.re)), make([]float32, len(g.im)), make([]float32, len(g.x))
+	t.corr, t.value = make([]float32, len(g.corr)), make([]float64, len(g.value))
+	return &t, nil
+}
+
 // search fills value with the steered response, in units of one pair and all
 // of the weight: 1 where every line of every pair is in phase. Shapes:
 // re[p*K+k], weight[p*K+k] already contains the phase transform.

@@ -88,6 +88,19 @@ func newLooker(s *space, set *settings, pairs []pairIndex) (*looker, error) {
 	if err != nil {
 		return nil, err
 	}
+	return newLookerOn(s, set, pairs, g), nil
+}
+
+// twin returns a looker like l with scratch memory of its own.
+func (l *looker) twin() (*looker, error) {
+	g, err := l.grid.twin()
+	if err != nil {
+		return nil, err
+	}
+	return newLookerOn(l.space, l.set, l.pairs, g), nil
+}
+
+func newLookerOn(s *space, set *settings, pairs []pairIndex, g *grid) *looker {
 	K := set.binTo - set.binFrom
 	l := &looker{space: s, set: set, pairs: pairs, grid: g, bins: K}
 	df := float64(set.rate) / float64(set.size)
@@ -126,7 +139,7 @@ func newLooker(s *space, set *settings, pairs []pairIndex) (*looker, error) {
 			l.diffuse[p*K+k] = acoustics.DiffuseCoherence(d, l.omega[k]/(2*math.Pi), set.Speed)
 		}
 	}
-	return l, nil
+	return l
 }
 
 // boxSmooth puts the mean of src over up to half entries to each side into dst.
