@@ -135,6 +135,7 @@ func TestRealRoomResponsesWithSpeech(t *testing.T) {
 		{"RLRVarAcLab_Absorptive_100_S210-200_R1_FRL10cm.wav", 150},
 	} {
 		h, rate := recording(t, "ring7-room-responses/"+c.name)
+		var own []float64 // errors of this azimuth
 		for _, dry := range takes {
 			x, low := recording(t, "speech/sense_and_sensibility_01_austen_64kb-"+dry+".wav")
 			n := min(x.Frames(), 5*low)
@@ -157,13 +158,17 @@ func TestRealRoomResponsesWithSpeech(t *testing.T) {
 			r := find(t, ring7(), rate, b, Options{})
 			if len(r.Sources) == 0 {
 				t.Errorf("%s with %s: nothing found: %+v", c.name, dry, r.Findings)
-				errs = append(errs, 180)
+				errs, own = append(errs, 180), append(own, 180)
 				continue
 			}
 			s := r.Sources[0]
 			e := math.Abs(rig.WrapDeg(s.Direction.AzimuthDeg() - c.az))
-			errs = append(errs, e)
+			errs, own = append(errs, e), append(own, e)
 			t.Logf("%s with %s: azimuth %.2f° (want %.0f°) ± %.2f°, elevation %.1f°, confidence %.2f", c.name[23:35], dry, s.Direction.AzimuthDeg(), c.az, s.StandardError/deg, s.Direction.ElevationDeg(), s.Confidence)
+		}
+		sort.Float64s(own)
+		if median := own[len(own)/2]; median > 3 {
+			t.Errorf("azimuth %.0f°: median error %.2f°, want at most 3°", c.az, median)
 		}
 	}
 	sort.Float64s(errs)
