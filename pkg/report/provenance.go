@@ -37,6 +37,9 @@ func made(r *pipeline.Result) []named {
 	add("Direction", fmt.Sprintf("%s, %s", directionWords(r), kind))
 	add("Method", fmt.Sprintf("%s, largest error %s dB against the signal", s.Method, decimals(s.MethodErrorDB, 0)))
 	add("Weights", fmt.Sprintf("%s, taper %s", s.Weights, s.Taper))
+	if p := s.Predicted; p != nil {
+		add("Predicted overall", fmt.Sprintf("%s dB in noise from all sides, %s dB in noise of each microphone, %s dB in the noise as it was measured, by the measured levels of the bands", levelText(p.DiffuseDB), levelText(p.WhiteDB), levelText(p.MeasuredNoiseDB)))
+	}
 	var extras []string
 	if s.UndoSpreading {
 		extras = append(extras, "spreading undone")
