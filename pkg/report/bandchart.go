@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"html/template"
 	"math"
+	"slices"
 
 	"alidade/pkg/pipeline"
 	"alidade/pkg/report/internal/draw"
@@ -71,7 +72,7 @@ func bandChart(bands []pipeline.Band, q quantity, measured int) chart {
 			take(math.Min(ci[1], 40))
 		}
 		if q.predicted {
-			for _, p := range []pipeline.Number{b.PredictedWhiteDB, b.PredictedDiffuseDB} {
+			for _, p := range []pipeline.Number{b.PredictedWhiteDB, b.PredictedDiffuseDB, b.PredictedInNoiseDB} {
 				if p != nil {
 					take(*p)
 				}
@@ -106,6 +107,9 @@ func bandChart(bands []pipeline.Band, q quantity, measured int) chart {
 	caption := "Bars are measured, whiskers their 95 % intervals; hatched bands carry a flag."
 	if q.predicted {
 		caption += " Diamonds are predicted for noise from everywhere, rings for noise that differs from microphone to microphone."
+		if slices.ContainsFunc(bands, func(b pipeline.Band) bool { return b.PredictedInNoiseDB != nil }) {
+			caption += " Strokes across a bar are predicted for the noise of this take."
+		}
 	}
 	name := q.Name
 	if measured == 0 {
@@ -138,6 +142,10 @@ func drawBand(s *draw.SVG, b pipeline.Band, q quantity, y draw.Scale, x, step fl
 		s.Line(mid, y.At(ci[0]), mid, y.At(ci[1]), "whisker", "data-low", Round(ci[0], q.Key), "data-high", Round(ci[1], q.Key))
 	}
 	if q.predicted {
+		if p := b.PredictedInNoiseDB; p != nil {
+			s.Line(x+0.05*step, y.At(*p), x+0.95*step, y.At(*p), "innoise casing")
+			s.Line(x+0.05*step, y.At(*p), x+0.95*step, y.At(*p), "innoise", "data-value", Round(*p, "predicted_measured_noise_db"))
+		}
 		if p := b.PredictedWhiteDB; p != nil {
 			s.Dot(mid, y.At(*p), 3.5, "white", "data-value", Round(*p, "predicted_white_db"))
 		}
@@ -186,6 +194,7 @@ func frequencyShort(hz float64) string {
 // bandRow is one row of the table of bands, the figures as in the JSON report.
 type bandRow struct {
 	Band, Noise, NoiseCI, Target, TargetCI, Gain, GainCI, Best, White, Diffuse string
+	InNoise                                                                    string
 	In, Out                                                                    string
 	Flags                                                                      []string
 }
@@ -204,7 +213,7 @@ func bandRows(bands []pipeline.Band) []bandRow {
 			Noise: cellText(b.NoiseReductionDB, "x_db"), NoiseCI: ends(b.NoiseReductionCI95),
 			Target: cellText(b.TargetChangeDB, "x_db"), TargetCI: ends(b.TargetChangeCI95),
 			Gain: cellText(b.SNRGainDB, "x_db"), GainCI: ends(b.SNRGainCI95), Best: cellText(b.OverBestMicrophoneDB, "x_db"),
-			White: cellText(b.PredictedWhiteDB, "x_db"), Diffuse: cellText(b.PredictedDiffuseDB, "x_db"),
+			White: cellText(b.PredictedWhiteDB, "x_db"), Diffuse: cellText(b.PredictedDiffuseDB, "x_db"), InNoise: cellText(b.PredictedInNoiseDB, "x_db"),
 			In: cellText(b.NoiseInDBFS, "x_dbfs"), Out: cellText(b.NoiseOutDBFS, "x_dbfs"), Flags: b.Flags,
 		})
 	}

@@ -227,6 +227,9 @@ func TestChartsCarryTheFiguresOfTheReport(t *testing.T) {
 			case "white":
 				want = Round(*b.PredictedWhiteDB, "predicted_white_db")
 				predicted++
+			case "innoise":
+				want = Round(*b.PredictedInNoiseDB, "predicted_measured_noise_db")
+				predicted++
 			case "diffuse":
 				want = Round(*b.PredictedDiffuseDB, "predicted_diffuse_db")
 				predicted++
@@ -242,7 +245,7 @@ func TestChartsCarryTheFiguresOfTheReport(t *testing.T) {
 		}
 	}
 	n := len(r.Bands)
-	if bars != n-1 || whiskers != n-1 || predicted != 2*n {
+	if bars != n-1 || whiskers != n-1 || predicted != 3*n {
 		t.Errorf("%d bars, %d whiskers, %d predictions for %d bands, one not measured", bars, whiskers, predicted, n)
 	}
 

@@ -65,6 +65,9 @@ func lineResponse() *pipeline.Response {
 // picturedTake is the good take with everything that a page can show.
 func picturedTake() *pipeline.Result {
 	r := goodTake()
+	for i := range r.Bands {
+		r.Bands[i].PredictedInNoiseDB = f(*r.Bands[i].SNRGainDB + 0.0625*float64(i%5))
+	}
 	rng := rand.New(rand.NewPCG(7, 8))
 	hz := logSpaced(50, 16000, 96)
 	spectrogram := func(down float64) *pipeline.Spectrogram {
