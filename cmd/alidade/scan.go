@@ -76,12 +76,13 @@ What is measured, as in steer
 
 What is written
   --csv FILE             the figures as a table
+  --html FILE            the page to look at
   --tracks FOLDER        a track of each direction. Tracks of an earlier scan
                          of the same take with the same options are kept, so
                          that the same command goes on where it ended
   --format NAME          auto (default), pcm16, pcm24 or float32
   --gain-db DB           gain of the tracks; no level contains it
-  --overwrite            replace tables and other tracks that exist
+  --overwrite            replace tables, pages and other tracks that exist
   --no-verify            do not read the written tracks back
   --private              leave out what names places, people and machines
   --reproducible         leave the time of day out
@@ -142,6 +143,7 @@ func scanFlags() []cli.Flag {
 		&cli.BoolFlag{Name: "keep-dead"},
 
 		&cli.StringFlag{Name: "csv"},
+		&cli.StringFlag{Name: "html"},
 		&cli.StringFlag{Name: "tracks"},
 		&cli.StringFlag{Name: "format"},
 		&cli.BoolFlag{Name: "overwrite"},
@@ -211,7 +213,7 @@ func runScan(u *ui, c *cli.Context) error {
 	if len(faults) > 0 {
 		return &usageError{errors.Join(faults...), "alidade scan --help shows its options"}
 	}
-	spec := pipeline.ScanSpec{Take: files, RigPath: c.String("rig"), Options: o, Version: version, NoHashes: !c.Bool("json")}
+	spec := pipeline.ScanSpec{Take: files, RigPath: c.String("rig"), Options: o, Version: version, NoHashes: !c.Bool("json") && !c.IsSet("html")}
 	if !c.Bool("reproducible") {
 		spec.Created = u.now().UTC().Format(time.RFC3339)
 	}
@@ -222,9 +224,15 @@ func runScan(u *ui, c *cli.Context) error {
 	if err != nil {
 		return err
 	}
-	if c.IsSet("csv") {
-		err := pipeline.WriteWhole(c.String("csv"), c.Bool("overwrite"), append(files, c.String("rig")),
-			func(w io.Writer) error { return report.ScanCSV(w, r) })
+	for _, file := range []struct {
+		option string
+		write  func(io.Writer, *pipeline.ScanResult) error
+	}{{"csv", report.ScanCSV}, {"html", report.ScanHTML}} {
+		if !c.IsSet(file.option) {
+			continue
+		}
+		err := pipeline.WriteWhole(c.String(file.option), c.Bool("overwrite"), append(files, c.String("rig")),
+			func(w io.Writer) error { return file.write(w, r) })
 		if err != nil {
 			return err
 		}

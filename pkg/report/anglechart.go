@@ -211,7 +211,7 @@ func scanCharts(r *pipeline.Result) ([]chart, error) {
 			}
 		}
 		angles(&s)
-		list = append(list, chart{Key: part.key, Name: part.name, Picture: s.Close(),
+		list = append(list, chart{Key: part.key, Name: part.name + ", " + part.unit, Picture: s.Close(),
 			Caption: fmt.Sprintf("Highest at %s°: %s %s. A flat top means that the rig cannot tell the angles beneath it apart.", draw.Number(p.AnglesDeg[top]), decimals(peak, 1), part.unit)})
 	}
 	if sound(p.Levels, len(p.NominalHz), len(p.AnglesDeg)) {

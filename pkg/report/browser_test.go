@@ -157,7 +157,7 @@ func TestPagesOpenQuietlyFromAFileAndFitTheirWidth(t *testing.T) {
 	pages := map[string][]byte{
 		"good": page(t, picturedTake()), "bare": page(t, bareTake()), "bad": page(t, badRig()), "followed": page(t, followedTake()),
 		"empty": page(t, &pipeline.Result{}), "hostile": page(t, hostileTake()), "folder": folderPage(t, 12),
-		"check": checkPage(t, sampleCheck(true)), "prediction": predictionPage(t, samplePrediction(true)),
+		"check": checkPage(t, sampleCheck(true)), "prediction": predictionPage(t, samplePrediction(true)), "scan": scanPage(t, sampleScan(true)),
 	}
 	for name, text := range pages {
 		url := save(t, name, text)
@@ -383,7 +383,7 @@ func TestAccessibilityCheckerFindsNothingSerious(t *testing.T) {
 	}
 	seeded := bytes.Replace(page(t, goodTake()), []byte("<main>"), []byte(`<main><img src="data:,">`), 1)
 	for name, text := range map[string][]byte{"good": page(t, followedTake()), "bad": page(t, badRig()), "folder": folderPage(t, 20), "seeded": seeded,
-		"check": checkPage(t, sampleCheck(false)), "prediction": predictionPage(t, samplePrediction(false))} {
+		"check": checkPage(t, sampleCheck(false)), "prediction": predictionPage(t, samplePrediction(false)), "scan": scanPage(t, sampleScan(false))} {
 		ctx := browser(t) // each with its own time
 		for _, theme := range []string{"light", "dark"} {
 			visit(t, ctx, save(t, name, text), 1280)

@@ -2,6 +2,8 @@ package report
 
 import (
 	"bytes"
+	"fmt"
+	"math"
 	"strings"
 	"testing"
 
@@ -79,6 +81,7 @@ func TestHostileTextsStayTextsOnEveryPage(t *testing.T) {
 	for name, text := range map[string]string{
 		"prediction": string(predictionPage(t, samplePrediction(true))), "check": string(checkPage(t, sampleCheck(true))),
 		"nothing known": string(checkPage(t, &pipeline.CheckResult{})), "nothing predicted": string(predictionPage(t, &pipeline.Prediction{})),
+		"scan": string(scanPage(t, sampleScan(true))), "nothing scanned": string(scanPage(t, &pipeline.ScanResult{})),
 	} {
 		if n := strings.Count(strings.ToLower(text), "<script"); n != 1 {
 			t.Errorf("%s: %d scripts, want its own", name, n)
@@ -125,4 +128,87 @@ func TestPageOfAPredictionCarriesItsFigures(t *testing.T) {
 			t.Errorf("the page does not say %q", want)
 		}
 	}
+}
+
+// sampleScan is an invented scan of a source at 60°, with hostile texts where
+// asked.
+func sampleScan(hostile bool) *pipeline.ScanResult {
+	r := goodTake()
+	s := &pipeline.ScanResult{Version: "0.1.0", Take: r.Take, Rig: r.Rig, Segments: r.Segments, Beam: pipeline.ScanBeam{Method: "spectral", Weights: "delay-and-sum", Taper: "uniform"},
+		Reference: pipeline.ScanLevel{LevelDBFS: f(-28.5)},
+		Loudest:   &pipeline.ScanPlace{AzimuthDeg: 60, LevelDBFS: f(-30.25)}, BestGain: &pipeline.ScanPlace{AzimuthDeg: 60, SNRGainDB: f(7.5)}}
+	for az := 0; az <= 180; az += 10 {
+		d := float64(az-60) / 10
+		a := pipeline.ScanAngle{AzimuthDeg: float64(az), LevelDBFS: f(-30.25 - 0.375*d*d/4), SNRGainDB: f(7.5 - d*d/8)}
+		for _, hz := range nominal {
+			a.Bands = append(a.Bands, pipeline.ScanBand{NominalHz: hz, LevelDBFS: f(-45 - hz/1000 - d*d*hz/40000)})
+		}
+		if az == 170 {
+			a.SNRGainDB, a.LevelDBFS = nil, nil
+		}
+		s.Angles = append(s.Angles, a)
+		s.Angles = append(s.Angles, pipeline.ScanAngle{AzimuthDeg: float64(az), ElevationDeg: 20, LevelDBFS: f(-40)})
+	}
+	if hostile {
+		s.Rig.Name, s.Version, s.Beam.Ambiguity, s.Beam.Weights, s.Segments.Source = hostileText, hostileText, hostileText, hostileText, hostileText
+		s.Findings = []pipeline.Finding{{Severity: hostileText, Message: hostileText}}
+	}
+	return s
+}
+
+func scanPage(t testing.TB, r *pipeline.ScanResult) []byte {
+	t.Helper()
+	var b bytes.Buffer
+	if err := ScanHTML(&b, r); err != nil {
+		t.Fatal(err)
+	}
+	return b.Bytes()
+}
+
+func TestPageOfAScanCarriesItsFigures(t *testing.T) {
+	r := sampleScan(false)
+	text := string(scanPage(t, r))
+	for _, a := range r.Angles {
+		for name, v := range map[string]pipeline.Number{"level": a.LevelDBFS, "gain": a.SNRGainDB} {
+			want := fmt.Sprintf(`data-angle="%s" data-value="%s"`, Round(a.AzimuthDeg, "x_deg"), Round(deref(v), "x_db"))
+			if drawn := strings.Contains(text, want); v != nil && drawn != (a.ElevationDeg == 0) {
+				t.Errorf("%g°, elevation %g°: %s drawn: %v", a.AzimuthDeg, a.ElevationDeg, name, drawn)
+			}
+		}
+	}
+	if n := strings.Count(text, "data-angle="); n != 2*18 {
+		t.Errorf("%d dots, want two for each of eighteen directions", n)
+	}
+	for _, want := range []string{"Loudest from 60.0°", "The SNR gain is 7.5 dB there", "Level by steered angle and band", "<title>"} {
+		if !strings.Contains(strings.ReplaceAll(text, "the SNR", "The SNR"), want) {
+			t.Errorf("the page does not say %q", want)
+		}
+	}
+	// The map, byte for byte level.
+	p := scanPicture(r)
+	for column := range p.Levels.Columns {
+		for row := range p.Levels.Rows {
+			want := deref(r.Angles[2*column].Bands[row].LevelDBFS)
+			if got := level(p.Levels, row, column); want > p.Levels.LowDB && math.Abs(got-want) > 0.13 {
+				t.Fatalf("row %d, column %d: %.2f dBFS, want %.2f", row, column, got, want)
+			}
+		}
+	}
+	// Directions that are no even row have curves and no map; one has neither.
+	uneven := *r
+	uneven.Angles = []pipeline.ScanAngle{r.Angles[0], r.Angles[2], r.Angles[12]}
+	if p := scanPicture(&uneven); p == nil || p.Levels.Rows != 0 || len(p.AnglesDeg) != 3 {
+		t.Errorf("uneven: %+v", p)
+	}
+	uneven.Angles = uneven.Angles[:1]
+	if p := scanPicture(&uneven); p != nil {
+		t.Errorf("one direction: %+v", p)
+	}
+}
+
+func deref(v pipeline.Number) float64 {
+	if v == nil {
+		return math.NaN()
+	}
+	return *v
 }

@@ -42,7 +42,7 @@ func segmentChart(r *pipeline.Result) *chart {
 	}
 	x := timeAxis(r)
 	var s draw.SVG
-	s.Open("segments", fmt.Sprintf("Stretches of the take behind the figures: %d with noise alone, %d with the target. They come from: %s.", len(g.Noise), len(g.Target), g.Source))
+	s.Open("segments", fmt.Sprintf("Stretches of the take behind the figures: %d with noise alone, %d with the target. They come from: %s.", len(g.Noise), len(g.Target), clean(g.Source)))
 	for row, list := range [][][2]float64{g.Noise, g.Target} {
 		name := [2]string{"noise", "target"}[row]
 		y := 4 + 50*float64(row)
