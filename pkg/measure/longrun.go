@@ -54,6 +54,9 @@ func meanSpread(z []float64, at []int, least int) spread {
 		}
 		c := float64(batches)
 		v := square * c / (c - 1) / (float64(n) * float64(n))
+		if v <= 2*kernel.variance {
+			continue // F at 95 % is above 2.01 for 7 and above 2.60 for 3 degrees of freedom
+		}
 		limit := distuv.F{D1: c - 1, D2: kernel.dof}.Quantile(driftLevel)
 		if v > limit*kernel.variance && v > s.variance {
 			s = spread{v, c - 1, n / batches}

@@ -13,7 +13,18 @@ type store struct {
 }
 
 func newStore(bands, most int) *store {
-	return &store{windows: 1, most: max(64, most&^1), sum: make([]float64, bands), power: make([][]float32, bands), all: make([]float64, bands)}
+	s := &store{windows: 1, most: max(64, most&^1), sum: make([]float64, bands), power: make([][]float32, bands), all: make([]float64, bands)}
+	s.grow(min(64, s.most))
+	return s
+}
+
+// grow moves the powers to a backing array with room for entries each.
+func (s *store) grow(entries int) {
+	all := make([]float32, len(s.power)*entries)
+	for b, p := range s.power {
+		room := all[b*entries : (b+1)*entries : (b+1)*entries]
+		s.power[b] = room[:copy(room, p)]
+	}
 }
 
 // add takes the powers of one window.
@@ -26,13 +37,16 @@ func (s *store) add(power []float64) {
 	if s.filled++; s.filled < s.windows {
 		return
 	}
+	if n := len(s.power[0]); n == cap(s.power[0]) {
+		s.grow(min(2*n, s.most))
+	}
 	scale := 1 / float64(s.filled)
 	for b, p := range s.sum {
 		s.power[b] = append(s.power[b], float32(p*scale))
 		s.sum[b] = 0
 	}
 	s.filled = 0
-	if len(s.power) == 0 || len(s.power[0]) < s.most {
+	if len(s.power[0]) < s.most {
 		return
 	}
 	for b, p := range s.power {
