@@ -99,6 +99,7 @@ type listening struct {
 	open         func() (audio.Source, error)
 	format       audio.Format
 	fromHz, toHz float64
+	level        []float64 // of every frame of a steady sound, once it has been looked at
 }
 
 // Channels compares the channels of a take of one sound, whose arrivals e
@@ -160,6 +161,7 @@ func Channels(open func() (audio.Source, error), e *Expected, known []rig.Mic, o
 			apart = math.Max(apart, math.Abs(f.d[m]))
 		}
 		if apart < 0.25/c.rate || try == 2 {
+			f.converge(mostSweeps)
 			break
 		}
 		for _, m := range f.heard {

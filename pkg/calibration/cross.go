@@ -153,8 +153,9 @@ func (l *listening) steady(late []float64) (*cross, float64, error) {
 		_, err = audio.Copy(src, 4096, stft)
 		return err // without the last frame, which is not whole
 	}
-	var level []float64 // mean over the channels of the log of the power in the band
-	err = run(func(_ int64, s *spectral.Spectra) error {
+	// The mean over the channels of the log of the power in the band: which frames
+	// are loud does not change with how the channels are lined up.
+	look := func(_ int64, s *spectral.Spectra) error {
 		sum := 0.0
 		for m := range s.Channels() {
 			p := 1e-30
@@ -164,12 +165,15 @@ func (l *listening) steady(late []float64) (*cross, float64, error) {
 			}
 			sum += math.Log(p)
 		}
-		level = append(level, sum/float64(s.Channels()))
+		l.level = append(l.level, sum/float64(s.Channels()))
 		return nil
-	})
-	if err != nil {
-		return nil, 0, err
 	}
+	if l.level == nil {
+		if err := run(look); err != nil {
+			return nil, 0, err
+		}
+	}
+	level := l.level
 	if len(level) == 0 {
 		return nil, 0, &RefusedError{Why: fmt.Sprintf("the take is shorter than one frame of %.0f ms", 1000*float64(size)/rate)}
 	}

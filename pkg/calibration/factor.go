@@ -39,7 +39,8 @@ const smoothing = 12
 // noiseFloor bounds the noise of a channel from below, as a share of its power.
 const noiseFloor = 1e-3
 
-// newFactor fits the model. Delays are looked for within maxLag seconds of the
+// newFactor starts a fit of the model, near enough to line channels up; converge
+// ends it. Delays are looked for within maxLag seconds of the
 // pilot channel. heard is empty where no two channels share a sound.
 func newFactor(c *cross, maxLag float64) (*factor, error) {
 	n := c.lines()
@@ -58,7 +59,20 @@ func newFactor(c *cross, maxLag float64) (*factor, error) {
 	if len(f.heard) < 2 {
 		return f, nil
 	}
-	for sweep := range 60 {
+	f.converge(roughSweeps)
+	return f, nil
+}
+
+// The sweeps of a fit that shows how far channels lie apart, and the most that
+// one takes to its end.
+const (
+	roughSweeps = 4
+	mostSweeps  = 60
+)
+
+// converge fits all channels in turn, so many times at most.
+func (f *factor) converge(sweeps int) {
+	for sweep := range sweeps {
 		f.source()
 		if sweep < 5 {
 			f.noise()
@@ -70,13 +84,12 @@ func newFactor(c *cross, maxLag float64) (*factor, error) {
 			change = max(change, math.Abs(f.g[m]/g-1), 2*math.Pi*f.c.hz(f.c.to)*math.Abs(f.d[m]-d))
 		}
 		f.centre()
-		if sweep >= 5 && change < 1e-7 {
+		if sweep >= 5 && change < 1e-6 {
 			break
 		}
 	}
 	f.source()
 	f.noise()
-	return f, nil
 }
 
 // normalise brings every channel to the same power.

@@ -212,11 +212,15 @@ func stretch(frames [][]toneFrame, ch int, c Calibrator, hop, length float64, al
 	// Where the tone begins or ends, frames hold a part of it.
 	var levels []float64
 	sum, square, hz, peak := 0.0, 0.0, 0.0, 0.0
-	for _, f := range frames[ch][first:last] {
+	within := frames[ch][first:last]
+	if len(within) > 4 {
+		within = within[1 : len(within)-1]
+	}
+	for _, f := range within {
 		if math.Abs(float64(f.db)-bestDB) <= toneSteadyDB {
 			levels = append(levels, float64(f.db))
 		}
-		hz += float64(f.hz) / float64(last-first)
+		hz += float64(f.hz) / float64(len(within))
 		peak = math.Max(peak, float64(f.peak))
 	}
 	for _, v := range levels {

@@ -87,7 +87,7 @@ func rigidError(at, truth []rig.Point) float64 {
 // 60°, arrivals within 3 µs: within 2 mm in nine of ten rigs once shift and turn
 // are taken out; and the stated uncertainty covers what is left.
 func TestPlacesOfASolidRig(t *testing.T) {
-	seeds := 20
+	seeds := 10
 	if long() {
 		seeds = 1000
 	}
@@ -138,7 +138,7 @@ func rms(std [][3]float64) float64 {
 // near 30°: within 3 mm; without them nothing is claimed of its size, stretch
 // and shear.
 func TestPlacesOfAFlatRig(t *testing.T) {
-	seeds := 20
+	seeds := 10
 	if long() {
 		seeds = 1000
 	}

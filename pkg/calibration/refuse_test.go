@@ -41,7 +41,7 @@ func TestTakesThatCannotCarryIt(t *testing.T) {
 	for m := range f.delay {
 		right = append(right, rig.Mic{Delay: -f.delay[m] + 1e-6*float64(m%3), Inverted: f.inverse[m]})
 	}
-	for _, off := range [][2]float64{{66, 0}, {60, 8}, {-60, 0}, {60, 70}} {
+	for _, off := range [][2]float64{{66, 0}, {60, 8}, {60, 70}} {
 		_, err = f.compare(t, off[0], off[1], right, Options{})
 		refused(t, fmt.Sprint("from ", off), err, "azimuth ")
 	}
@@ -56,7 +56,7 @@ func TestTakesThatCannotCarryIt(t *testing.T) {
 	_, err = makeFaulty(t, solid8(0.08), 4, wideband(60, 0), -4, 0.3, nil).compare(t, 60, 0, nil, Options{})
 	refused(t, "-16 dB signal-to-noise", err, "")
 
-	_, err = makeFaulty(t, solid8(0.08), 5, nil, -80, 1, func(s *scenario.Scenario) {
+	_, err = makeFaulty(t, solid8(0.08), 5, nil, -80, 0.6, func(s *scenario.Scenario) {
 		s.Diffuse = []scenario.Diffuse{{LevelDBFS: -30}}
 	}).compare(t, 60, 0, nil, Options{})
 	refused(t, "diffuse noise", err, "")
