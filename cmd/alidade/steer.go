@@ -96,6 +96,9 @@ What is measured
   --compare-to NAME      gain over this microphone as well
   --keep-dead            dead microphones, found by an inspection of parts of
                          the take, stay in the beam; else they are left out
+  --align-clocks         measure how far the clocks of the channels run apart,
+                         and resample to one (clock_ppm in the rig file states
+                         it; needs sound from one side)
   --no-measure           write the track only
 
 What is written
@@ -176,6 +179,7 @@ func steerFlags() []cli.Flag {
 		&cli.StringFlag{Name: "compare-to"},
 		&cli.BoolFlag{Name: "no-measure"},
 		&cli.BoolFlag{Name: "keep-dead"},
+		&cli.BoolFlag{Name: "align-clocks"},
 
 		&cli.StringFlag{Name: "out"},
 		&cli.StringFlag{Name: "format"},
@@ -243,6 +247,7 @@ func steerOptions(c *cli.Context) pipeline.Options {
 		CompareTo:      c.String("compare-to"),
 		NoMeasure:      c.Bool("no-measure"),
 		KeepDead:       c.Bool("keep-dead"),
+		AlignClocks:    c.Bool("align-clocks"),
 		Out:            c.String("out"),
 		Format:         c.String("format"),
 		OverRange:      c.String("over-range"),

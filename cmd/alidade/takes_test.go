@@ -67,6 +67,7 @@ func TestEachFlagOfSteerReachesItsOption(t *testing.T) {
 		"x.wav --isolated-target t.wav":        {IsolatedTarget: "t.wav"},
 		"x.wav --compare-to M2":                {CompareTo: "M2"},
 		"x.wav --no-measure":                   {NoMeasure: true},
+		"x.wav --align-clocks":                 {AlignClocks: true},
 		"x.wav --keep-dead":                    {KeepDead: true},
 		"x.wav --out o/":                       {Out: "o/"},
 		"x.wav --format pcm16":                 {Format: "pcm16"},

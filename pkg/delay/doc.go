@@ -25,6 +25,9 @@
 //	start, taps := kernel.Taps(nil, 3.37)                     // 3.37 samples later
 //	late, err := delay.NewShift(src, kernel, []float64{0, 12e-6}) // seconds, one a channel
 //
+// Channels of several clocks are brought to one by NewDrift, a Farrow delay that
+// moves along.
+//
 // # Sources
 //
 // [Laakso et al. 1996] T. I. Laakso, V. Välimäki, M. Karjalainen and U. K.

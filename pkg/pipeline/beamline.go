@@ -132,7 +132,12 @@ func (b *beamline) kernel() (delay.Kernel, error) {
 // corrected returns the used microphones of a take in rig order, with gain and
 // polarity corrections and the high-pass.
 func (b *beamline) corrected(src audio.Source) (audio.Source, error) {
-	out, err := b.rig.corrected(src)
+	return b.correctedFrom(src, 0)
+}
+
+// correctedFrom is corrected for a src that begins with frame first of the take.
+func (b *beamline) correctedFrom(src audio.Source, first int64) (audio.Source, error) {
+	out, err := b.rig.correctedFrom(src, first)
 	if err != nil {
 		return nil, err
 	}

@@ -75,7 +75,7 @@ func Check(ctx context.Context, spec Spec, watch Watch) (res *CheckResult, err e
 	if err := t.sounds(); err != nil {
 		return nil, err
 	}
-	found, err := r.inspect([][2]int64{{0, t.header.Frames}}, false)
+	found, err := r.inspectAll([][2]int64{{0, t.header.Frames}})
 	if err != nil {
 		return nil, err
 	}

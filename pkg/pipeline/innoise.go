@@ -174,7 +174,7 @@ func (r *run) listen(t *take, p *inNoise) error {
 	if err := t.reader.SeekFrame(p.start); err != nil {
 		return fmt.Errorf("%s: %w", t.path(), err)
 	}
-	src, err := r.line.corrected(audio.Section(&watched{Source: t.source(), ctx: r.ctx}, 0, p.to-p.start))
+	src, err := r.line.correctedFrom(audio.Section(&watched{Source: t.source(), ctx: r.ctx}, 0, p.to-p.start), p.start)
 	if err != nil {
 		return err
 	}

@@ -20,6 +20,7 @@ func (r *run) result() (*Result, error) {
 		Bands:    []Band{},
 		Findings: []Finding{}, OctaveBands: []Band{},
 		Direction:  r.found,
+		Clocks:     r.aligned,
 		Provenance: &Provenance{Command: r.spec.Command, Kernel: kernel.Name()},
 	}
 	if err := r.gains(res); err != nil {
@@ -157,13 +158,10 @@ func (r *run) channels(res *Result) {
 	}
 	typical := median(used)
 	var silent, clipped []int
-	dead := r.deadChannels()
-	for _, m := range r.rig.Mics {
-		c := Channel{Channel: m.Channel, Name: m.Name, Used: m.Use, Flags: append([]string{}, r.flagsOf(m.Channel)...)}
-		for _, k := range r.left {
-			if r.rig.Mics[k].Channel == m.Channel {
-				c.Flags = append(c.Flags, "left-out")
-			}
+	for i, m := range r.rig.Mics {
+		c := Channel{Channel: m.Channel, Name: m.Name, Used: m.Use, Flags: append([]string{}, r.flags[m.Channel]...)}
+		if slices.Contains(r.left, i) {
+			c.Flags = append(c.Flags, "left-out")
 		}
 		if m.Channel <= len(levels) {
 			l := levels[m.Channel-1]
@@ -171,7 +169,7 @@ func (r *run) channels(res *Result) {
 			c.ClippedFrames, c.DC = l.ClippedFrames, l.DC
 			if l.RMSDBFS < silentDBFS || l.RMSDBFS < typical-silentBelowDB {
 				c.Flags = append(c.Flags, "silent")
-				if m.Use && (!slices.Contains(dead, m.Channel) || len(dead) == len(r.line.used)) {
+				if m.Use && (!slices.Contains(r.dead, i) || len(r.dead) == len(r.line.used)) {
 					silent = append(silent, m.Channel)
 				}
 			}

@@ -167,7 +167,7 @@ func (r *run) referenceClip(res *Result, from, to int64) ([]float32, error) {
 	if err := r.take.reader.SeekFrame(start); err != nil {
 		return nil, fmt.Errorf("%s: %w", r.take.path(), err)
 	}
-	src, err := r.line.corrected(&watched{Source: r.take.source(), ctx: r.ctx})
+	src, err := r.line.correctedFrom(&watched{Source: r.take.source(), ctx: r.ctx}, start)
 	if err != nil {
 		return nil, err
 	}

@@ -46,6 +46,7 @@ type Result struct {
 	OctaveBands  []Band      `json:"octave_bands"` // octaves
 	Overall      Overall     `json:"overall"`
 	Channels     []Channel   `json:"channels"`
+	Clocks       *Clocks     `json:"clocks,omitempty"` // of --align-clocks
 	Findings     []Finding   `json:"findings"`
 	Output       Output      `json:"output"`
 	OtherOutputs []Output    `json:"other_outputs,omitempty"` // the reference track
@@ -101,10 +102,27 @@ type RigMic struct {
 	AtM      [3]float64 `json:"at_m"`
 	GainDB   float64    `json:"gain_db"`
 	DelayUS  float64    `json:"delay_us"`
-	Polarity string     `json:"polarity"` // normal or inverted
+	ClockPPM float64    `json:"clock_ppm,omitempty"` // as stated or measured
+	Polarity string     `json:"polarity"`            // normal or inverted
 	Used     bool       `json:"used"`
 	// SensitivityDBFS is what the raw channel reads at 94 dB SPL.
 	SensitivityDBFS Number `json:"sensitivity_dbfs,omitempty"`
+}
+
+// Clocks are the clocks of the channels as --align-clocks measured them: one
+// for each group of channels. Without groups they could not be measured, and a
+// finding says why.
+type Clocks struct {
+	Groups           []ClockGroup `json:"groups"`
+	StandardErrorPPM Number       `json:"standard_error_ppm"`
+	SpanS            Number       `json:"span_s"`       // from the first to the last second behind the figure
+	SourceMoved      bool         `json:"source_moved"` // and was told from the clocks by the geometry
+}
+
+// ClockGroup is channels that share a clock.
+type ClockGroup struct {
+	Channels []int   `json:"channels"`
+	PPM      float64 `json:"ppm"` // positive: fast; against the clock that clock_ppm 0 stands for
 }
 
 // Steer is where and how the beam was pointed.

@@ -117,6 +117,11 @@ func loadRig(path string, o Options) (*loadedRig, error) {
 // corrected returns the used microphones of a take in rig order, with gain and
 // polarity corrections.
 func (l *loadedRig) corrected(src audio.Source) (audio.Source, error) {
+	return l.correctedFrom(src, 0)
+}
+
+// correctedFrom is corrected for a src that begins with frame first of the take.
+func (l *loadedRig) correctedFrom(src audio.Source, first int64) (audio.Source, error) {
 	used := l.Used()
 	order, gain := make([]int, len(used)), make([]float64, len(used))
 	for i, m := range used {
@@ -124,6 +129,9 @@ func (l *loadedRig) corrected(src audio.Source) (audio.Source, error) {
 	}
 	out, err := audio.Map(src, order, gain)
 	if err != nil {
+		return nil, err
+	}
+	if out, err = l.onOneClock(out, first); err != nil {
 		return nil, err
 	}
 	return l.evened(out)
@@ -200,7 +208,7 @@ func (l *loadedRig) summary() RigSummary {
 		}
 		s.Mics = append(s.Mics, RigMic{
 			Name: m.Name, Channel: m.Channel, AtM: [3]float64{m.At.X, m.At.Y, m.At.Z},
-			GainDB: m.GainDB, DelayUS: m.Delay * 1e6, Polarity: polarity, Used: m.Use, SensitivityDBFS: m.SensitivityDBFS,
+			GainDB: m.GainDB, DelayUS: m.Delay * 1e6, ClockPPM: m.ClockPPM, Polarity: polarity, Used: m.Use, SensitivityDBFS: m.SensitivityDBFS,
 		})
 	}
 	return s

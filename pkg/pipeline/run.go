@@ -9,7 +9,6 @@ import (
 	"alidade/pkg/audio"
 	"alidade/pkg/beam"
 	"alidade/pkg/measure"
-	"alidade/pkg/quality"
 	"alidade/pkg/wav"
 )
 
@@ -75,8 +74,10 @@ type run struct {
 	painting         *painter        // while the take itself passes
 	found            *Direction      // of --toward auto and follow and --focus auto
 	findings         []Finding
-	checked          *quality.Result // of the inspection; nil without one
-	left             []int           // microphones that it left out, indices into the rig's
+	flags            map[int][]string // what the inspection found, by channel
+	dead             []int            // microphones that it found dead, indices into the rig's
+	left             []int            // those of them that it left out
+	aligned          *Clocks          // of --align-clocks; nil without
 }
 
 // abandon removes whatever was not committed.

@@ -3,7 +3,6 @@ package pipeline
 import (
 	"errors"
 	"fmt"
-	"slices"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/quality"
@@ -40,17 +39,21 @@ func (r *run) limits() quality.Limits {
 	return r.spec.Limits.Over(quality.Limits(r.rig.Limits))
 }
 
-// inspect looks at stretches of the take, as it was recorded, with the used
-// microphones of the rig.
-func (r *run) inspect(stretches [][2]int64, levelsOnly bool) (*quality.Result, error) {
+// inspector looks at stretches of the take with the used microphones of the rig.
+// The take's first frame is the next one read afterwards.
+func (r *run) inspector(stretches [][2]int64, how inspection) (*quality.Inspector, error) {
 	var mics []rig.Mic
 	var order []int
 	for _, m := range r.rig.Used() {
-		mics = append(mics, r.rig.Mics[m])
-		order = append(order, r.rig.Mics[m].Channel-1)
+		mic := r.rig.Mics[m]
+		order = append(order, mic.Channel-1)
+		if how == inspectAligned {
+			mic.ClockPPM = 0
+		}
+		mics = append(mics, mic)
 	}
 	h := r.take.header
-	q, err := quality.New(mics, h.Rate, quality.Options{Speed: r.rig.speed, Limits: r.limits(), LevelsOnly: levelsOnly})
+	q, err := quality.New(mics, h.Rate, quality.Options{Speed: r.rig.speed, Limits: r.limits(), LevelsOnly: how == inspectLevels})
 	if err != nil {
 		return nil, &UsageError{Err: err, Hint: "limits stand in the rig file and in the job file"}
 	}
@@ -58,7 +61,11 @@ func (r *run) inspect(stretches [][2]int64, levelsOnly bool) (*quality.Result, e
 	for _, s := range stretches {
 		total += s[1] - s[0]
 	}
-	watch := &watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell("checking", total)}
+	stage := "checking"
+	if how == inspectAligned {
+		stage = "comparing clocks"
+	}
+	watch := &watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell(stage, total)}
 	for _, s := range stretches {
 		if s[0] != at {
 			if err := r.take.reader.SeekFrame(s[0]); err != nil {
@@ -73,6 +80,11 @@ func (r *run) inspect(stretches [][2]int64, levelsOnly bool) (*quality.Result, e
 		if err != nil {
 			return nil, err
 		}
+		if how == inspectAligned {
+			if src, err = r.rig.onOneClock(src, s[0]); err != nil {
+				return nil, err
+			}
+		}
 		if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, h.Channels), q); err != nil {
 			return nil, err
 		}
@@ -80,28 +92,49 @@ func (r *run) inspect(stretches [][2]int64, levelsOnly bool) (*quality.Result, e
 	if err := q.Close(); err != nil {
 		return nil, err
 	}
-	return q.Result(), nil
+	return q, r.take.rewind()
 }
 
 // sound inspects the take before it is steered, leaves dead microphones out of
-// the beam and reports the rest. With --no-measure nothing but the levels is
-// looked at, for dead channels.
+// the beam, measures the clocks if that is asked for, and reports the rest.
+// With --no-measure nothing but the levels is looked at, for dead channels.
 func (r *run) sound() error {
-	h := r.take.header
-	if r.set.NoMeasure && r.set.KeepDead {
-		return nil
+	stretches := inspected(r.take.header.Frames, r.take.header.Rate)
+	if r.set.NoMeasure || r.set.AlignClocks {
+		if !r.set.KeepDead {
+			q, err := r.inspector(stretches, inspectLevels)
+			if err != nil {
+				return err
+			}
+			if err := r.inspectedFindings(q.Result()); err != nil {
+				return err
+			}
+		}
+		if r.set.AlignClocks {
+			if err := r.alignClocks(); err != nil {
+				return err
+			}
+		}
+		if r.set.NoMeasure {
+			return nil
+		}
 	}
-	found, err := r.inspect(inspected(h.Frames, h.Rate), r.set.NoMeasure)
+	found, err := r.inspectAll(stretches)
 	if err != nil {
 		return err
 	}
-	if err := r.take.rewind(); err != nil {
-		return err
-	}
-	r.checked = found
+	return r.inspectedFindings(found)
+}
+
+// inspectedFindings reports what an inspection found and leaves out of the beam
+// what is dead.
+func (r *run) inspectedFindings(found *quality.Result) error {
 	used := r.rig.Used()
 	alive := len(used) - len(found.Dead)
 	silence := alive == 0
+	for _, k := range found.Dead {
+		r.dead = append(r.dead, used[k])
+	}
 	if !r.set.KeepDead && len(found.Dead) > 0 && !silence {
 		if alive < 2 {
 			return &HintedError{
@@ -113,6 +146,12 @@ func (r *run) sound() error {
 			r.left = append(r.left, used[k])
 		}
 		r.rig = r.rig.without(r.left)
+	}
+	if r.flags == nil {
+		r.flags = map[int][]string{}
+	}
+	for _, c := range found.Channels {
+		r.flags[c.Channel] = append(r.flags[c.Channel], c.Flags...)
 	}
 	for _, f := range found.Findings {
 		g := Finding{Code: f.Code, Severity: Severity(f.Severity), Message: f.Message(), Channels: f.Channels}
@@ -144,27 +183,4 @@ func (r *run) ofThoseLeft(err error) error {
 		Err:  fmt.Errorf("%s: without its dead microphones: %w", r.take.path(), usage.Err),
 		Hint: "mend the microphones, or --keep-dead steers with all of them",
 	}
-}
-
-// deadChannels are the channels that the inspection found dead.
-func (r *run) deadChannels() (list []int) {
-	if r.checked == nil {
-		return nil
-	}
-	for _, k := range r.checked.Dead {
-		list = append(list, r.checked.Channels[k].Channel)
-	}
-	return list
-}
-
-// flagsOf are what the inspection found on a channel.
-func (r *run) flagsOf(channel int) []string {
-	if r.checked != nil {
-		for _, c := range r.checked.Channels {
-			if c.Channel == channel {
-				return slices.Clone(c.Flags)
-			}
-		}
-	}
-	return nil
 }

@@ -73,9 +73,10 @@ type Options struct {
 	Format        string  `json:"format,omitempty"`     // auto (default), pcm16, pcm24 or float32
 	OverRange     string  `json:"over_range,omitempty"` // fail (default) or float32
 	WithReference bool    `json:"with_reference,omitempty"`
-	Excerpt       string  `json:"excerpt,omitempty"`   // A..B
-	Handles       float64 `json:"handles,omitempty"`   // seconds
-	KeepDead      bool    `json:"keep_dead,omitempty"` // dead microphones stay part of the beam
+	Excerpt       string  `json:"excerpt,omitempty"`      // A..B
+	Handles       float64 `json:"handles,omitempty"`      // seconds
+	KeepDead      bool    `json:"keep_dead,omitempty"`    // dead microphones stay part of the beam
+	AlignClocks   bool    `json:"align_clocks,omitempty"` // measure the clocks of the channels and bring them to one
 	NoVerify      bool    `json:"no_verify,omitempty"`
 	NoMeasure     bool    `json:"no_measure,omitempty"`
 	Reports       string  `json:"reports,omitempty"`    // json,csv,html (default) or none

@@ -17,6 +17,9 @@
 // swapped unseen, and on a line or flat rig a scale error shows only where the
 // sound comes along the rig.
 //
+// A take may be inspected in stretches (Inspector.Gap); Inspector.Clocks says
+// how far the clocks of several recorders run apart.
+//
 // Memory is bounded by the number of channels, not by the length of the take.
 // The findings are the same for blocks of every size.
 //

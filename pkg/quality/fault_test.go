@@ -1,6 +1,7 @@
 package quality
 
 import (
+	"cmp"
 	"testing"
 
 	"alidade/pkg/audio"
@@ -29,6 +30,7 @@ func deg(v float64) *float64 { return &v }
 
 // scene is a take to be inspected.
 type scene struct {
+	rate    int // 48000 if 0
 	mics    []rig.Mic
 	seconds float64
 	seed    uint64
@@ -49,13 +51,14 @@ func (s scene) rendered(t *testing.T) *scenario.Rendering {
 		source.Kind = scenario.KindNoise
 	}
 	source.Name = "source"
+	s.rate = cmp.Or(s.rate, 48000)
 	if source.At == nil && source.Path == nil {
 		source.At = &scenario.Place{AzimuthDeg: deg(35)}
 	}
 	level := -30.0
 	source.LevelDBFS = &level
 	sensor := level - s.snrDB - 10
-	sc := &scenario.Scenario{Name: "take", RateHz: 48000, DurationS: s.seconds, Seed: s.seed,
+	sc := &scenario.Scenario{Name: "take", RateHz: s.rate, DurationS: s.seconds, Seed: s.seed,
 		Sources: []scenario.Source{source}, SensorDBFS: &sensor,
 		Diffuse: []scenario.Diffuse{{LevelDBFS: level - s.snrDB, Spectrum: scenario.SpectrumPink}},
 		Faults:  s.faults, PositionScale: s.scale, Air: s.air,
@@ -81,7 +84,7 @@ func (s scene) rendered(t *testing.T) *scenario.Rendering {
 // inspect returns what an inspector finds in the scene.
 func (s scene) inspect(t *testing.T) *Result {
 	t.Helper()
-	q, err := New(s.mics, 48000, Options{})
+	q, err := New(s.mics, cmp.Or(s.rate, 48000), Options{})
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -105,11 +105,49 @@ func (g *geometry) judge() {
 		base = g.reorder(base)
 	}
 	late := g.late(base)
-	if base = g.misfit(g.order, late...); base > 60e-6 && len(g.result.Findings) == 0 {
-		g.add(CodeMisfit, Warning, nil, fmt.Sprintf("the delays between channels miss every direction by %.0f µs rms", base*1e6),
+	base = g.misfit(g.order, late...)
+	if lasting, se := g.lasting(late); base > 60e-6 && lasting > 60e-6 && lasting > 5*se && len(g.result.Findings) == 0 {
+		g.add(CodeMisfit, Warning, nil, fmt.Sprintf("the delays between channels miss every direction by %.0f µs rms, alike over the take", lasting*1e6),
 			fmt.Sprintf("under %.0f µs", 60.0), "compare positions and channel numbers of the rig file with the rig; strong echoes do it too")
 	}
 	g.scales(base, late)
+}
+
+// lasting is the root mean square over the microphones of what the fits leave
+// at each in the middle of all windows, and its standard error, seconds. A rig
+// that is wrong leaves the same everywhere; echoes of a voice leave something
+// else in every window.
+func (g *geometry) lasting(out []int) (rms, se float64) {
+	rest := make([][]float64, len(g.mics))
+	w, r := make([]float64, len(g.mics)), make([]float64, len(g.mics))
+	for i := range g.list {
+		copy(w, g.weight[i])
+		for _, m := range out {
+			w[m] = 0
+		}
+		if _, _, ok := g.pl.fit(g.times[i], w, g.order, r); !ok {
+			continue
+		}
+		for _, m := range g.alive {
+			if w[m] > 0 {
+				rest[m] = append(rest[m], r[m])
+			}
+		}
+	}
+	n := 0.0
+	for _, v := range rest {
+		if len(v) < 3 { // nothing to tell what lasts from what does not
+			continue
+		}
+		e, s := median(slices.Clone(v)), 1.25*spread(v)/math.Sqrt(float64(len(v)))
+		rms += e * e
+		se += s * s
+		n++
+	}
+	if n == 0 {
+		return 0, 0
+	}
+	return math.Sqrt(rms / n), math.Sqrt(se / n)
 }
 
 // reorder looks for the exchange of channels that makes the delays fit, and for

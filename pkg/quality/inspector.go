@@ -188,18 +188,7 @@ func (q *Inspector) judge() *Result {
 // finish puts what was found in order.
 func (j *judgement) finish() *Result {
 	slices.Sort(j.result.Dead)
-	for i := range j.result.Channels {
-		c := &j.result.Channels[i]
-		c.Flags = []string{}
-		for _, f := range j.result.Findings {
-			if slices.Contains(f.Channels, c.Channel) && !slices.Contains(c.Flags, f.Code) {
-				c.Flags = append(c.Flags, f.Code)
-			}
-		}
-	}
-	rank := map[Severity]int{Error: 0, Warning: 1, Info: 2}
-	slices.SortStableFunc(j.result.Findings, func(a, b Finding) int { return rank[a.Severity] - rank[b.Severity] })
-	j.result.State = stateOf(j.result.Findings)
+	j.result.settle()
 	return j.result
 }
 

@@ -1,6 +1,9 @@
 package quality
 
-import "math"
+import (
+	"math"
+	"slices"
+)
 
 // Severity is how bad a finding is.
 type Severity string
@@ -101,6 +104,46 @@ type Result struct {
 	// geometry, and NotJudged why there are none; empty if there are.
 	Windows   int
 	NotJudged string
+}
+
+// seenInSamples are the codes of what is seen in single samples.
+var seenInSamples = []string{CodeClipped, CodeOvers, CodeDropOut, CodeRepeat}
+
+// WithSamplesOf returns the result of a take that was resampled, with what is
+// seen in single samples as it is in raw, the same take as it was recorded.
+func (r *Result) WithSamplesOf(raw *Result) *Result {
+	out := *r
+	samples := func(code string) bool { return slices.Contains(seenInSamples, code) }
+	out.Findings = slices.DeleteFunc(slices.Clone(r.Findings), func(f Finding) bool { return samples(f.Code) })
+	for _, f := range raw.Findings {
+		if samples(f.Code) {
+			out.Findings = append(out.Findings, f)
+		}
+	}
+	out.Channels = slices.Clone(r.Channels)
+	for m := range out.Channels {
+		c, from := &out.Channels[m], raw.Channels[m]
+		c.PeakDBFS, c.TruePeakDBFS, c.ClippedFrames, c.DropOuts, c.Repeats = from.PeakDBFS, from.TruePeakDBFS, from.ClippedFrames, from.DropOuts, from.Repeats
+	}
+	out.settle()
+	return &out
+}
+
+// settle puts findings in order, the worst first, and derives from them the
+// flags of the channels and the state.
+func (r *Result) settle() {
+	for i := range r.Channels {
+		c := &r.Channels[i]
+		c.Flags = []string{}
+		for _, f := range r.Findings {
+			if slices.Contains(f.Channels, c.Channel) && !slices.Contains(c.Flags, f.Code) {
+				c.Flags = append(c.Flags, f.Code)
+			}
+		}
+	}
+	rank := map[Severity]int{Error: 0, Warning: 1, Info: 2}
+	slices.SortStableFunc(r.Findings, func(a, b Finding) int { return rank[a.Severity] - rank[b.Severity] })
+	r.State = stateOf(r.Findings)
 }
 
 // stateOf returns the state that findings come to.
