@@ -240,7 +240,8 @@ func checksOfTheCommand() (list []check) {
 	// worked example of a textbook companion prints rounded excitations.
 	add("B21", lineOf(8), at(90, "--taper dolph-chebyshev:20.271"), null(0), 90-17.5, 0.01)
 
-	// C1, C3, C4, C7: end-fire superdirective without a floor that binds (Uzkov
+	// C1, C3, C4, C7: end-fire superdirective without a floor that binds, which
+	// tends to N² as the spacing goes to 0, 9.54 dB for three (Uzkov
 	// 1946; Cox, Zeskind & Kooij 1986, 1987). The filters as built.
 	for _, c := range []struct {
 		n            int
@@ -248,7 +249,7 @@ func checksOfTheCommand() (list []check) {
 		factor, gain float64
 	}{
 		{2, 0.05, 3.97371, -10.6447}, {2, 0.1, 3.89514, -4.85231}, {2, 0.25, 3.36295, 1.53266}, {2, 0.4, 2.51603, 2.95265}, {2, 0.5, 2, 3.0103},
-		{3, 0.1, 8.72831, -14.4816}, {3, 0.25, 7.27898, 0.0434356}, {3, 0.4, 4.68232, 4.49676}, {4, 0.25, 12.7704, -3.14857}, {4, 0.5, 4, 6.0206}, {8, 0.4, 27.1505, 4.22644},
+		{3, 0.05, 8.93226, -26.363}, {3, 0.1, 8.72831, -14.4816}, {3, 0.25, 7.27898, 0.0434356}, {3, 0.4, 4.68232, 4.49676}, {4, 0.25, 12.7704, -3.14857}, {4, 0.5, 4, 6.0206}, {8, 0.4, 27.1505, 4.22644},
 	} {
 		line := "--toward 0 --at-hz 1000 --weights superdirective --white-noise-gain-floor-db -60"
 		add("C3", spaced(c.n, c.d), line, factor, c.factor, 0.005*c.factor)
