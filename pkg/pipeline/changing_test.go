@@ -247,11 +247,11 @@ func (s scene) shadow(t *testing.T, o Options, part string) []float32 {
 func TestPostfilterInDiffuseNoise(t *testing.T) {
 	s, noise, target := rendered(t, `scenario: a hall of machines
 rate_hz: 16000
-duration_s: 16
+duration_s: 10
 seed: 11
 rig: {rig: six, line: {count: 6, spacing_mm: 50}}
 sources:
-  - {name: caller, kind: talker, at: {azimuth_deg: 60}, level_dbfs: -30, on_s: [[2, 15]]}
+  - {name: caller, kind: talker, at: {azimuth_deg: 60}, level_dbfs: -30, on_s: [[2, 9.5]]}
 diffuse:
   - {level_dbfs: -35, spectrum: speech}
 sensor_dbfs: -80
