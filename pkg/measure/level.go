@@ -17,11 +17,11 @@ const fullScale = 32767.0 / 32768
 
 // total adds up one channel.
 type total struct {
-	frames      int64
-	sums        kernel.Squares
-	peak        float32
-	run         int64 // samples at full scale just before
-	clipped     int64
+	frames  int64
+	sums    kernel.Squares
+	peak    float32
+	run     int64 // samples at full scale just before
+	clipped int64
 }
 
 // add takes samples and returns -1, or the place of the first one that is not

@@ -28,8 +28,8 @@ type Reader struct {
 	at     int64 // next frame
 	buf    []byte
 	planes [][]float32 // of a tile, see deal
-	bufAt  int64 // frame at buf[0]
-	bufLen int64 // whole frames in buf
+	bufAt  int64       // frame at buf[0]
+	bufLen int64       // whole frames in buf
 	err    error
 	bad    NonFinite
 }
