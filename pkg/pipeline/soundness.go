@@ -10,7 +10,7 @@ import (
 )
 
 // What a steer run inspects of a take: stretches of stretchS seconds in the
-// middle of equal parts of it, a tenth of its length in all, but at least
+// middle of equal parts of it, a twentieth of its length in all, but at least
 // leastInspectedS and at most mostInspectedS. A short take is inspected whole.
 const (
 	stretchS        = 2
@@ -24,7 +24,7 @@ func inspected(frames int64, rate int) [][2]int64 {
 	if frames <= leastInspectedS*second {
 		return [][2]int64{{0, frames}}
 	}
-	total := min(max(frames/10, leastInspectedS*second), mostInspectedS*second)
+	total := min(max(frames/20, leastInspectedS*second), mostInspectedS*second)
 	count := total / (stretchS * second)
 	var list [][2]int64
 	for k := range count {
