@@ -28,7 +28,7 @@ const (
 var drawerNames = []string{"helper", "helpers", "misc", "util", "utils", "common", "types", "models", "shared", "base"}
 
 // goroutineRooms are the packages that may start goroutines outside tests.
-var goroutineRooms = []string{"pkg/spectral", "pkg/beam", "pkg/bearing", "pkg/batch", "pkg/scenario", "cmd/alidade", "pkg/scenario/internal/render"}
+var goroutineRooms = []string{"pkg/audio", "pkg/spectral", "pkg/beam", "pkg/bearing", "pkg/batch", "pkg/scenario", "cmd/alidade", "pkg/scenario/internal/render"}
 
 // unfinished is what a thing left for later is marked with, written so that
 // this line is not one.

@@ -104,6 +104,7 @@ type undertaking struct {
 	plan      *batch.Plan
 	base      string // folder of the plan
 	root, out string
+	oneCore   bool // several takes are on their way: none may use a second core
 }
 
 // undertake reads a plan, or makes one of a job.
@@ -210,7 +211,7 @@ func runBatch(u *ui, c *cli.Context) error {
 	if s.Part, source, err = batch.PartOf(c.String("part"), t.plan.Parts, u.env); err != nil {
 		return &usageError{fmt.Errorf("batch: %w", err), ""}
 	}
-	s.Root, s.Out = t.root, t.out
+	s.Root, s.Out, t.oneCore = t.root, t.out, s.Workers > 1
 	if s.Part >= 0 {
 		u.remark("part %d of %d (%s), plan %.12s", s.Part+1, t.plan.Parts, source, t.plan.PlanID)
 	}
@@ -320,7 +321,7 @@ func (t *undertaking) steer(ctx context.Context, a batch.Assignment) (batch.Repo
 	tidy := func(r *pipeline.Result) *pipeline.Result { return t.tidy(r, a) }
 	folder := strings.Repeat("../", strings.Count(a.Take.Key, "/")+1) + indexFile
 	render := renderers(o, folder, tidy)
-	spec := pipeline.Spec{Take: a.Paths(), RigPath: t.rig(a.Recipe), Options: o, Limits: quality.Limits(recipe.Limits.Limits), Version: version}
+	spec := pipeline.Spec{Take: a.Paths(), RigPath: t.rig(a.Recipe), Options: o, Limits: quality.Limits(recipe.Limits.Limits), Version: version, OneCore: t.oneCore}
 	r, err := pipeline.Run(ctx, spec, render, pipeline.Watch{Progress: a.Step})
 	if err != nil {
 		return batch.Report{}, t.plain(err, a)

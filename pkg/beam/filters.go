@@ -43,18 +43,47 @@ func (f *Filters) Span() (from, to int) {
 func (f *Filters) Response(dst []complex128, hz float64) []complex128 {
 	dst = dst[:0]
 	omega := 2 * math.Pi * hz / float64(f.Rate)
-	for m, h := range f.H {
-		// Horner's rule in e^{-jω} from the last tap down.
-		s, c := math.Sincos(-omega)
-		var re, im float64
-		for t := len(h) - 1; t >= 0; t-- {
-			re, im = re*c-im*s+h[t], re*s+im*c
-		}
-		sum := complex(re, im)
-		s, c = math.Sincos(-omega * float64(f.Start[m]))
-		dst = append(dst, sum*complex(c, s))
+	// Horner's rule in e^{-jω} from the last tap down, four filters side by side:
+	// each step waits for the one before.
+	s, c := math.Sincos(-omega)
+	m := 0
+	for ; m+4 <= len(f.H); m += 4 {
+		dst = horner4(dst, (*[4][]float64)(f.H[m:]), c, s)
+	}
+	for ; m < len(f.H); m++ {
+		dst = append(dst, horner(f.H[m], c, s))
+	}
+	for m, start := range f.Start {
+		s, c := math.Sincos(-omega * float64(start))
+		dst[m] *= complex(c, s)
 	}
 	return dst
+}
+
+// horner returns Σ_t h[t]·(c+js)^t.
+func horner(h []float64, c, s float64) complex128 {
+	var re, im float64
+	for t := len(h) - 1; t >= 0; t-- {
+		re, im = re*c-im*s+h[t], re*s+im*c
+	}
+	return complex(re, im)
+}
+
+// horner4 appends horner of four filters to dst.
+func horner4(dst []complex128, h *[4][]float64, c, s float64) []complex128 {
+	n := len(h[0])
+	if len(h[1]) != n || len(h[2]) != n || len(h[3]) != n {
+		return append(dst, horner(h[0], c, s), horner(h[1], c, s), horner(h[2], c, s), horner(h[3], c, s))
+	}
+	var r0, i0, r1, i1, r2, i2, r3, i3 float64
+	h0, h1, h2, h3 := h[0], h[1][:n], h[2][:n], h[3][:n]
+	for t := n - 1; t >= 0; t-- {
+		r0, i0 = r0*c-i0*s+h0[t], r0*s+i0*c
+		r1, i1 = r1*c-i1*s+h1[t], r1*s+i1*c
+		r2, i2 = r2*c-i2*s+h2[t], r2*s+i2*c
+		r3, i3 = r3*c-i3*s+h3[t], r3*s+i3*c
+	}
+	return append(dst, complex(r0, i0), complex(r1, i1), complex(r2, i2), complex(r3, i3))
 }
 
 // Validate reports filters that cannot be run: no microphones, no taps, or a

@@ -18,10 +18,10 @@ func (l Layout) Bytes() int { return [...]int{2, 3, 4, 4}[l] }
 
 // Deinterleave spreads the first frames of src over the channels of dst, all of
 // the same length n: sample i of channel ch comes from src[i·frame + ch·width:],
-// width the bytes of a sample. It does as many whole groups of eight frames as
-// it can do fast, and returns how many frames those are: the rest is for the
-// caller, and all of it where the plain set is in use, channels are fewer than
-// four, or one of the samples is not finite. It panics if src is shorter than n
+// width the bytes of a sample. It does as many frames as it can do fast, and
+// returns how many those are: the rest is for the caller, and all of it where
+// the plain set is in use, frames are fewer than eight or channels than four, or
+// one of the samples is not finite. It panics if src is shorter than n
 // frames or a frame than the channels.
 func Deinterleave(dst [][]float32, src []byte, frame int, layout Layout) int {
 	channels, width := len(dst), layout.Bytes()
@@ -40,23 +40,27 @@ func Deinterleave(dst [][]float32, src []byte, frame int, layout Layout) int {
 	if !vector || channels < 4 {
 		return 0
 	}
-	n &^= 7
-	if layout == Int24 || layout == Int16 {
+	group := min(8, channels&^3)
+	if (layout == Int24 || layout == Int16) && group == 4 {
 		// Sixteen bytes are read where four samples begin.
 		for n > 0 && len(src) < (n-1)*frame+(channels-4)*width+16 {
-			n -= 8
+			n--
 		}
 	}
-	if n == 0 {
+	whole := n &^ 7
+	if whole == 0 {
 		return 0
 	}
 	// The last group begins such that it ends with the last channel: some
-	// channels are done twice.
-	group := min(8, channels&^3)
+	// channels are done twice. So are some frames, of a last group that ends with
+	// the last frame.
 	bad := uint32(0)
 	for ch := 0; ch < channels; ch += group {
 		ch = min(ch, channels-group)
-		bad |= spread(dst[ch:ch+group], src[ch*width:], frame, n, layout)
+		bad |= spread(dst[ch:ch+group], 0, src[ch*width:], frame, whole, layout)
+		if n > whole {
+			bad |= spread(dst[ch:ch+group], n-8, src[(n-8)*frame+ch*width:], frame, 8, layout)
+		}
 	}
 	if bad != 0 {
 		return 0
@@ -64,11 +68,12 @@ func Deinterleave(dst [][]float32, src []byte, frame int, layout Layout) int {
 	return n
 }
 
-// spread does eight or four channels.
-func spread(dst [][]float32, src []byte, frame, n int, layout Layout) (bad uint32) {
+// spread does n frames, a multiple of 8, of eight or four channels from frame at
+// of dst on.
+func spread(dst [][]float32, at int, src []byte, frame, n int, layout Layout) (bad uint32) {
 	var to [8]*float32
 	for k, x := range dst {
-		to[k] = &x[0]
+		to[k] = &x[at]
 	}
 	eight := len(dst) == 8
 	switch layout {

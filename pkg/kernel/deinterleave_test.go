@@ -78,7 +78,7 @@ func TestDeinterleaveIsTheDefinition(t *testing.T) {
 						if done != 0 {
 							t.Errorf("%s, %d channels: %d frames done", Name(), channels, done)
 						}
-					} else if done < n&^7-8 {
+					} else if n >= 9 && done < n-1 {
 						t.Errorf("%d channels, layout %d: only %d of %d frames done", channels, layout, done, n)
 					}
 					tryDeinterleave(t, r, channels, n, r.IntN(5), r.IntN(20), layout)

@@ -181,6 +181,17 @@ func blockFrames(asked, channels int) int {
 	return min(max(samples/channels, 512), 8192)
 }
 
+// ahead returns what src yields, read side by side with what uses it where the
+// run may have more than one core. The blocks of all channels stay in a core's
+// cache.
+func (r *run) ahead(src audio.Source) audio.Source {
+	if r.spec.OneCore {
+		return src
+	}
+	const samples = 1 << 16
+	return audio.Ahead(src, min(max(samples/src.Format().Channels, 512), 8192))
+}
+
 // watched is a source that stops when ctx is done and tells how far it is.
 type watched struct {
 	audio.Source

@@ -65,7 +65,7 @@ func (r *run) designOverTime(task beam.Task, nulls []acoustics.Wave) error {
 	if err != nil {
 		return err
 	}
-	if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, r.take.header.Channels), l); err != nil {
+	if _, err := audio.Copy(r.ahead(src), blockFrames(r.spec.Options.BlockFrames, r.take.header.Channels), l); err != nil {
 		return err
 	}
 	if len(l.sets) == 0 {

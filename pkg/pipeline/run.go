@@ -276,11 +276,13 @@ func (r *run) drive(src audio.Source, chain chain, sinks ...audio.Sink) (l liste
 	if src, err = r.line.corrected(src); err != nil {
 		return l, err
 	}
+	// Reading, measuring and steering go on side by side.
+	src = r.ahead(src)
 	if !r.set.NoMeasure {
 		if l.in, err = measure.NewMeter(src.Format(), measure.MeterOptions{PerChannel: true}); err != nil {
 			return l, err
 		}
-		src = audio.Tee(src, l.in)
+		src = r.ahead(audio.Tee(src, l.in))
 	}
 	if r.painting != nil {
 		src = audio.Tee(src, r.painting)

@@ -23,6 +23,7 @@ type Spec struct {
 	Version  string         // program version, for the report
 	Command  []string       // command line, for the report; nil under --private
 	NoHashes bool           // leave the hashes of take and tracks out: nobody will see them
+	OneCore  bool           // leave the other cores alone: other takes have them
 	Created  string         // RFC 3339 time for the report; empty when reproducible
 }
 
