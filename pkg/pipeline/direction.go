@@ -88,7 +88,7 @@ func (l *loadedRig) searched(src audio.Source, o bearing.Options, block int) (*b
 	if src, err = l.corrected(src); err != nil {
 		return nil, err
 	}
-	if _, err := audio.Copy(src, blockFrames(block, channels), f); err != nil {
+	if _, err := audio.Copy(audio.Ahead(src, 4096), blockFrames(block, channels), f); err != nil {
 		return nil, err
 	}
 	if err := f.Close(); err != nil {

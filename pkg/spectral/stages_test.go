@@ -436,3 +436,19 @@ func BenchmarkSTFT(b *testing.B) {
 	}
 	b.ReportMetric(float64(b.N)/b.Elapsed().Seconds(), "x-realtime")
 }
+
+// The shapes that scripts/bench and the reference programs run with, and those
+// around the size that no longer fits into the first-level cache.
+func TestOverlapIsTheCheapestShape(t *testing.T) {
+	for span, want := range map[int]Overlap{1: {256, 256}, 128: {1024, 896}, 170: {1024, 848}, 200: {2048, 1840}, 400: {2048, 1648}, 1500: {16384, 14880}} {
+		got, err := NewOverlap(span)
+		if err != nil || got != want {
+			t.Errorf("taps that span %d samples: %v, %v, want %v", span, got, err, want)
+		}
+	}
+	for _, span := range []int{0, largestSpan + 1} {
+		if _, err := NewOverlap(span); err == nil {
+			t.Errorf("taps that span %d samples: taken", span)
+		}
+	}
+}
