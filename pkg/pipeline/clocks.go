@@ -136,8 +136,11 @@ const (
 // the one, sound in the other.
 func (r *run) inspectAll(stretches [][2]int64) (*quality.Result, error) {
 	q, err := r.inspector(stretches, inspectRaw)
-	if err != nil || r.rig.clocks() == nil {
-		return q.Result(), err
+	if err != nil {
+		return nil, err
+	}
+	if r.rig.clocks() == nil {
+		return q.Result(), nil
 	}
 	raw := q.Result()
 	if q, err = r.inspector(stretches, inspectAligned); err != nil {
