@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"io"
 	"slices"
+	"sync"
 
 	"alidade/pkg/acoustics"
 	"alidade/pkg/audio"
@@ -116,6 +117,9 @@ func newBeamline(l *loadedRig, s *settings, rate int) (*beamline, error) {
 	return b, nil
 }
 
+// farrowKernel is the polynomial delay of every beam and clock, designed once.
+var farrowKernel = sync.OnceValues(func() (*delay.Farrow, error) { return delay.NewFarrow(farrowTaps, farrowOrder) })
+
 func (b *beamline) kernel() (delay.Kernel, error) {
 	switch b.set.Method {
 	case MethodSinc:
@@ -123,7 +127,7 @@ func (b *beamline) kernel() (delay.Kernel, error) {
 		return delay.NewSinc(sincTaps)
 	case MethodFarrow:
 		b.errorDB = farrowErrorDB
-		return delay.NewFarrow(farrowTaps, farrowOrder)
+		return farrowKernel()
 	}
 	b.errorDB = spectralErrDB
 	return delay.NewSinc(spectralTaps)

@@ -37,7 +37,7 @@ func (l *loadedRig) onOneClock(src audio.Source, first int64) (audio.Source, err
 	if ppm == nil {
 		return src, nil
 	}
-	kernel, err := delay.NewFarrow(farrowTaps, farrowOrder)
+	kernel, err := farrowKernel()
 	if err != nil {
 		return nil, err
 	}

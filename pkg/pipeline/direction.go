@@ -8,7 +8,6 @@ import (
 	"alidade/pkg/audio"
 	"alidade/pkg/beam"
 	"alidade/pkg/bearing"
-	"alidade/pkg/delay"
 	"alidade/pkg/rig"
 )
 
@@ -423,7 +422,7 @@ const followKnot = 256
 // followed returns the beam that goes with the path over the corrected
 // microphones: a plane wave from the path's direction at each time.
 func (b *beamline) followed(src audio.Source) (audio.Source, error) {
-	kernel, err := delay.NewFarrow(farrowTaps, farrowOrder)
+	kernel, err := farrowKernel()
 	if err != nil {
 		return nil, err
 	}

@@ -90,30 +90,47 @@ func threefold(t *testing.T, x []float32) []float64 {
 }
 
 // convolved returns the len(x) first frames of x through every channel of a
-// response, through one long transform of an outside library.
+// response, piece by piece through transforms of an outside library.
 func convolved(x []float64, response audio.Block) audio.Block {
 	n := 1
-	for n < len(x)+response.Frames() {
+	for n < 2*response.Frames() {
 		n *= 2
 	}
+	piece := n - response.Frames()
 	plan := fourier.NewFFT(n)
-	padded := make([]float64, n)
-	copy(padded, x)
-	spectrum := plan.Coefficients(nil, padded)
-	out := audio.NewBlock(response.Channels(), len(x))
-	product := make([]complex128, len(spectrum))
+	padded, y := make([]float64, n), make([]float64, n)
+	inPlace := func(x []float64) []float64 {
+		clear(padded[copy(padded, x):])
+		return padded
+	}
+	var responses [][]complex128
 	for ch := range response.Channels() {
-		clear(padded)
+		h := make([]float64, response.Frames())
 		for i, v := range response.Channel(ch) {
-			padded[i] = float64(v)
+			h[i] = float64(v)
 		}
-		plan.Coefficients(product, padded)
-		for k := range product {
-			product[k] *= spectrum[k]
+		responses = append(responses, plan.Coefficients(nil, inPlace(h)))
+	}
+	sums := make([][]float64, response.Channels())
+	for ch := range sums {
+		sums[ch] = make([]float64, len(x)+n)
+	}
+	product := make([]complex128, n/2+1)
+	for from := 0; from < len(x); from += piece {
+		spectrum := plan.Coefficients(nil, inPlace(x[from:min(from+piece, len(x))]))
+		for ch, h := range responses {
+			for k := range product {
+				product[k] = spectrum[k] * h[k]
+			}
+			for i, v := range plan.Sequence(y, product) {
+				sums[ch][from+i] += v / float64(n)
+			}
 		}
-		y := plan.Sequence(nil, product)
+	}
+	out := audio.NewBlock(response.Channels(), len(x))
+	for ch := range sums {
 		for i := range out.Channel(ch) {
-			out.Channel(ch)[i] = float32(y[i] / float64(n))
+			out.Channel(ch)[i] = float32(sums[ch][i])
 		}
 	}
 	return out
