@@ -214,8 +214,8 @@ func TestShownOutputMayLeaveOutLinesAndNothingElse(t *testing.T) {
 // Every example of a help text runs, in a folder with the files that the
 // examples speak of.
 func TestHelpExamplesRun(t *testing.T) {
-	if testing.Short() {
-		t.Skip("makes a take")
+	if !long() {
+		t.Skip("every example of every --help: set ALIDADE_LONG=1, as scripts/check does")
 	}
 	dir := t.TempDir()
 	quay := strings.Replace(scenario.Demo(), "duration_s: 12", "duration_s: 6", 1)

@@ -423,6 +423,9 @@ func TestEnginesRefuseWhatDoesNotFit(t *testing.T) {
 // Whatever set of kernels the processor has, the plain one holds everything
 // too.
 func TestEnginesWithPlainKernels(t *testing.T) {
+	if testing.Short() {
+		t.Skip("the contract once more")
+	}
 	if kernel.Name() == kernel.Plain {
 		t.Skip("the plain set is the only one here: the tests above ran with it")
 	}
