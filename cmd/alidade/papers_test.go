@@ -174,7 +174,12 @@ func mustExist(t *testing.T, where, path string) {
 	}
 }
 
-func TestReadmeCommandsRunAndShowWhatTheyPrint(t *testing.T) { runPaper(t, "README.md", nil) }
+func TestReadmeCommandsRunAndShowWhatTheyPrint(t *testing.T) {
+	if !long() {
+		t.Skip("every command of the README: set ALIDADE_LONG=1, as scripts/check does")
+	}
+	runPaper(t, "README.md", nil)
+}
 
 func TestReadmeForDevelopersNamesCommandsThatExist(t *testing.T) {
 	// The README shows the demo, and what it prints.

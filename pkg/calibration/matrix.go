@@ -48,15 +48,6 @@ func (a *matrix) transposed() *matrix {
 	return out
 }
 
-// block returns the n by n part of a that begins at row and column from.
-func (a *matrix) block(from, n int) *matrix {
-	out := newMatrix(n, n)
-	for i := range n {
-		copy(out.v[i*n:(i+1)*n], a.v[(from+i)*a.cols+from:(from+i)*a.cols+from+n])
-	}
-	return out
-}
-
 // eigen returns the eigenvalues of the symmetric matrix a, largest first, and
 // the unit eigenvectors as the columns of a matrix, by cyclic Jacobi rotations
 // [Golub & Van Loan 2013, section 8.5].

@@ -351,7 +351,8 @@ func decodeClip(t *testing.T, data []byte) []float64 {
 // An independent decoder (libFLAC within sox, or ffmpeg) reads the excerpts as
 // they were meant.
 func TestForeignDecoderReadsTheExcerpts(t *testing.T) {
-	tool, args := "", []string{}
+	var tool string
+	var args []string
 	if _, err := exec.LookPath("ffmpeg"); err == nil {
 		tool, args = "ffmpeg", []string{"-v", "error", "-i", "in.flac", "-f", "s16le", "out.raw"}
 	} else if _, err := exec.LookPath("sox"); err == nil {

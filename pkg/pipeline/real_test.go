@@ -313,12 +313,6 @@ func TestBlindGainHoldsIsolatedGainInARealRoom(t *testing.T) {
 // held counts bands whose interval holds the exact gain.
 type held struct{ held, all int }
 
-func audioChannel(b audio.Block, ch int) audio.Block {
-	out := audio.NewBlock(1, b.Frames())
-	copy(out.Channel(0), b.Channel(ch))
-	return out
-}
-
 // checkHolds asks for the exact gain in the blind interval overall, and counts
 // the bands from 125 Hz to 8 kHz that hold it: those whose figures carry no
 // flag on the measurement (sparse, target-unmeasurable), of which there must
