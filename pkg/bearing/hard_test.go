@@ -82,7 +82,7 @@ func TestBadTakesGiveNoConfidentWrongAnswer(t *testing.T) {
 		t.Skip("many takes")
 	}
 	const rate = 16000
-	n := 5
+	n := 10
 	if long() {
 		n = 200
 	}

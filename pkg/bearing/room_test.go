@@ -5,8 +5,6 @@ import (
 	"math/rand/v2"
 
 	"alidade/pkg/rig"
-
-	"gonum.org/v1/gonum/dsp/fourier"
 )
 
 // shoebox is a room by the image-source method [Allen & Berkley 1979, eq. 10],
@@ -96,23 +94,15 @@ func abs(n int) int {
 
 // convolve returns the first len(x) samples of x * h.
 func convolve(x, h []float64) []float64 {
-	n := 1
-	for n < len(x)+len(h) {
-		n *= 2
+	f := planOf(len(x) + len(h))
+	re, im := spectrum(f, x)
+	hr, hi := spectrum(f, h)
+	for k := range re {
+		re[k], im[k] = re[k]*hr[k]-im[k]*hi[k], re[k]*hi[k]+im[k]*hr[k]
 	}
-	f := fourier.NewFFT(n)
-	a, b := make([]float64, n), make([]float64, n)
-	copy(a, x)
-	copy(b, h)
-	fa, fb := f.Coefficients(nil, a), f.Coefficients(nil, b)
-	for k := range fa {
-		fa[k] *= fb[k]
-	}
-	y := f.Sequence(nil, fa)[:len(x)]
-	for i := range y {
-		y[i] /= float64(n)
-	}
-	return y
+	y := make([]float64, f.Len())
+	f.Inverse(y, re, im)
+	return y[:len(x)]
 }
 
 // in adds signal s from a place in the room, the rig's origin at centre.

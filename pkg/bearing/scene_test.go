@@ -4,10 +4,12 @@ import (
 	"math"
 	"math/cmplx"
 	"math/rand/v2"
+	"sync"
 	"testing"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/rig"
+	"alidade/pkg/spectral"
 
 	"gonum.org/v1/gonum/dsp/fourier"
 )
@@ -51,6 +53,60 @@ func white(n int, seed uint64) []float64 {
 		x[i] = r.NormFloat64()
 	}
 	return x
+}
+
+// plans are the transforms that planOf has made, by size.
+var plans sync.Map
+
+// spectrum returns the transform of x with zeros behind.
+func spectrum(t *spectral.FFT[float64], x []float64) (re, im []float64) {
+	padded := make([]float64, t.Len())
+	copy(padded, x)
+	re, im = make([]float64, t.Bins()), make([]float64, t.Bins())
+	t.Forward(re, im, padded)
+	return re, im
+}
+
+// planOf returns a transform of n values or more, a power of two.
+func planOf(n int) *spectral.FFT[float64] {
+	size := spectral.MinSize
+	for size < n {
+		size *= 2
+	}
+	p, ok := plans.Load(size)
+	if !ok {
+		t, err := spectral.NewFFT[float64](size)
+		if err != nil {
+			panic(err)
+		}
+		p, _ = plans.LoadOrStore(size, t)
+	}
+	return p.(*spectral.FFT[float64]).Clone()
+}
+
+// shifted returns x later by each of the delays, exactly, as if it were silent
+// before and after; delayed has x go round.
+func shifted(x []float64, delays []float64, rate float64) [][]float64 {
+	longest := 0.0
+	for _, d := range delays {
+		longest = math.Max(longest, math.Abs(d))
+	}
+	f := planOf(len(x) + int(longest*rate) + 64)
+	n := f.Len()
+	re, im := spectrum(f, x)
+	out := make([][]float64, len(delays))
+	a, b := make([]float64, len(re)), make([]float64, len(re))
+	for m, d := range delays {
+		for k := range re {
+			sin, cos := math.Sincos(-2 * math.Pi * float64(k) * rate / float64(n) * d)
+			a[k], b[k] = re[k]*cos-im[k]*sin, re[k]*sin+im[k]*cos
+		}
+		b[n/2] = 0
+		y := make([]float64, n)
+		f.Inverse(y, a, b)
+		out[m] = y[:len(x)]
+	}
+	return out
 }
 
 // delayed returns x later by each of the delays, exactly, as if x went round
@@ -99,7 +155,7 @@ func (m *mixture) plane(s []float64, from rig.Direction, gain float64) *mixture 
 	for _, p := range m.mics {
 		d = append(d, -p.Dot(u)/testSpeed)
 	}
-	return m.add(delayed(s, d, m.rate), gain)
+	return m.add(shifted(s, d, m.rate), gain)
 }
 
 func (m *mixture) add(y [][]float64, gain float64) *mixture {
