@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"io/fs"
 	"os"
 	"path"
 	"path/filepath"
@@ -33,7 +34,8 @@ printed, ready to be submitted. Nothing is submitted.
 
 Options
   --out FILE        the plan, in the job file's folder; by default the job
-                    file's name with .plan.json in place of its ending
+                    file's name with .plan.json in place of its ending. An
+                    older plan is replaced, nothing else
   --parts N         cut it into so many parts, balanced by bytes (default 1)
   --for ENGINE      print a job file for slurm, kubernetes or parallel
   --workers N       takes at once in each part of it (default 1)
@@ -90,6 +92,9 @@ func runPlan(u *ui, c *cli.Context) error {
 	if same, err := sameFolder(filepath.Dir(name), j.base); err != nil || !same {
 		return &usageError{errors.Join(fmt.Errorf("plan: --out %s: a plan lies in the folder of its job file: its paths are relative to it", name), err), ""}
 	}
+	if err := mayBecomePlan(name); err != nil {
+		return err
+	}
 	engine := c.String("for")
 	file := batch.JobFile{Engine: engine, Plan: filepath.Base(name), Name: strings.TrimSuffix(filepath.Base(j.path), filepath.Ext(j.path)),
 		Workers: workers, Image: c.String("image"), Claim: c.String("claim")}
@@ -143,6 +148,33 @@ func planWords(p *batch.Plan) string {
 		text += fmt.Sprintf(", %d parts", p.Parts)
 	}
 	return text
+}
+
+// mayBecomePlan refuses a name under which something lies that is no plan: the
+// job file, a rig and the takes are in the same folder.
+func mayBecomePlan(name string) error {
+	info, err := os.Lstat(name)
+	if errors.Is(err, fs.ErrNotExist) {
+		return nil
+	}
+	why := "no plan"
+	switch {
+	case err != nil:
+		return &usageError{fmt.Errorf("plan: --out: %w", err), ""}
+	case info.Mode()&fs.ModeSymlink != 0:
+		why = "a link"
+	case info.IsDir():
+		why = "a folder"
+	case info.Mode().IsRegular():
+		planned, err := isPlan(name)
+		if err != nil {
+			return err
+		}
+		if planned {
+			return nil
+		}
+	}
+	return &usageError{fmt.Errorf("plan: --out %s: exists and is %s: only an older plan is replaced", name, why), "give another name, or move it away"}
 }
 
 func sameFolder(a, b string) (bool, error) {
