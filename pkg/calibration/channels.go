@@ -3,6 +3,7 @@ package calibration
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/rig"
@@ -337,14 +338,10 @@ func (r *Relative) direction(heard []int, e *Expected, known []rig.Mic) error {
 
 // median returns the middle of x, the upper one of two.
 func median(x []float64) float64 {
-	s := append([]float64(nil), x...)
-	for i := 1; i < len(s); i++ {
-		for j := i; j > 0 && s[j] < s[j-1]; j-- {
-			s[j], s[j-1] = s[j-1], s[j]
-		}
-	}
-	if len(s) == 0 {
+	if len(x) == 0 {
 		return math.NaN()
 	}
+	s := slices.Clone(x)
+	slices.Sort(s)
 	return s[len(s)/2]
 }

@@ -184,20 +184,20 @@ func stretch(frames [][]toneFrame, ch int, c Calibrator, hop, length float64, al
 		}
 		// As long as it goes on and keeps its level, by the middle of it so far.
 		end := j
-		var levels []float64
+		var levels runningMedian
 		for end < len(frames[ch]) {
 			if ok, _ := good(end); !ok {
 				break
 			}
 			v := float64(frames[ch][end].db)
-			if len(levels) > 2 && math.Abs(v-median(levels)) > toneSteadyDB {
+			if levels.count() > 2 && math.Abs(v-levels.median()) > toneSteadyDB {
 				break
 			}
-			levels = append(levels, v)
+			levels.add(v)
 			end++
 		}
 		if end-j > last-first {
-			first, last, bestDB = j, end, median(levels)
+			first, last, bestDB = j, end, levels.median()
 		}
 		j = max(end, j+1)
 	}

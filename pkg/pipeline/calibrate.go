@@ -159,7 +159,8 @@ func (c *calibrating) explained(err error) error {
 }
 
 // raw returns a way to read a take from the start of its excerpt, time and
-// again: the used microphones in rig order, without corrections.
+// again: the used microphones in rig order, on one clock as in steering, without
+// other corrections.
 func (c *calibrating) raw(t *take, stage string) (func() (audio.Source, error), error) {
 	from, to, err := c.as(t).excerpt()
 	if err != nil {
@@ -169,14 +170,21 @@ func (c *calibrating) raw(t *take, stage string) (func() (audio.Source, error), 
 	for _, m := range c.rig.Used() {
 		order = append(order, c.rig.Mics[m].Channel-1)
 	}
+	low, high := c.rig.clockReach(from, to, t.header.Frames)
 	return func() (audio.Source, error) {
-		if err := t.reader.SeekFrame(from); err != nil {
+		if err := t.reader.SeekFrame(low); err != nil {
 			return nil, fmt.Errorf("%s: %w", t.path(), err)
 		}
-		src := audio.Source(&watched{Source: t.source(), ctx: c.ctx, tell: c.as(t).tell(stage, to-from)})
-		out, err := audio.Map(audio.Section(src, 0, to-from), order, nil)
-		if err != nil || c.set.Responses {
+		src := audio.Source(&watched{Source: t.source(), ctx: c.ctx, tell: c.as(t).tell(stage, high-low)})
+		out, err := audio.Map(audio.Section(src, 0, high-low), order, nil)
+		if err != nil {
 			return out, err
+		}
+		if out, err = c.rig.onOneClock(out, low); err != nil {
+			return nil, err
+		}
+		if out = audio.Section(out, from-low, to-low); c.set.Responses {
+			return out, nil
 		}
 		// Filters that stay are part of the channels.
 		return c.rig.evened(out)
@@ -458,6 +466,9 @@ func (c *calibrating) write(changed *rig.Rig, notes []string) error {
 			return err
 		}
 		c.res.Takes = append(c.res.Takes, finished)
+	}
+	if err := context.Cause(c.ctx); err != nil {
+		return err
 	}
 	text := changed.Annotated(c.head(), func(m int) string { return notes[m] })
 	if _, err := rig.Load(c.out, text, nil); err != nil {

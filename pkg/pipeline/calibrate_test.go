@@ -16,7 +16,10 @@ import (
 
 // yardTake renders noise from 60° on a line of six, colours channel 3, and
 // writes take and rig into a folder.
-func yardTake(t *testing.T, color bool) (take, rigPath string) {
+func yardTake(t *testing.T, color bool) (take, rigPath string) { return madeTake(t, color, nil) }
+
+// madeTake is yardTake of a scenario that change may alter.
+func madeTake(t *testing.T, color bool, change func(*scenario.Scenario)) (take, rigPath string) {
 	t.Helper()
 	dir := t.TempDir()
 	r := &rig.Rig{Name: "yard", Reference: rig.CentreReference}
@@ -27,6 +30,9 @@ func yardTake(t *testing.T, color bool) (take, rigPath string) {
 	s := &scenario.Scenario{Name: "yard", RateHz: 48000, DurationS: 1.5, Seed: 3, Rig: r, SensorDBFS: &sensor,
 		Sources: []scenario.Source{{Name: "horn", Kind: scenario.KindNoise, LevelDBFS: &level, At: &scenario.Place{AzimuthDeg: &az}}},
 		Faults:  []scenario.Fault{{Channels: []int{2}, GainDB: 1.7, DelayUS: 9}},
+	}
+	if change != nil {
+		change(s)
 	}
 	made, err := s.Render(scenario.Options{})
 	if err != nil {
@@ -182,5 +188,34 @@ func TestCalibratedRigMakesChannelsAgree(t *testing.T) {
 	}
 	if text, err := os.ReadFile(again); err != nil || strings.Count(string(text), "response: {rate_hz: 48000, taps: [") != 6 {
 		t.Errorf("the filters are not kept (%v)", err)
+	}
+}
+
+// A microphone whose clock the rig file states (clock_ppm) is late by what its
+// channel is late, in a part of the take that does not begin with it too: 300
+// ppm are 300 µs after one second. The rendered hardware has the opposite of
+// what the rig file corrects, and channel 2 is late by 9 µs in truth.
+func TestCalibrationHeedsClocks(t *testing.T) {
+	take, rigPath := madeTake(t, false, func(s *scenario.Scenario) {
+		s.DurationS = 3
+		for m := 3; m < 6; m++ {
+			s.Rig.Mics[m].ClockPPM = 300
+		}
+	})
+	for _, excerpt := range []string{"", "1.5..2.9"} {
+		res, err := Calibrate(context.Background(), CalibrateSpec{Take: []string{take}, RigPath: rigPath,
+			Options: CalibrateOptions{Toward: "60", Excerpt: excerpt, RelativeTo: "A", Overwrite: true}}, Watch{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		for m, mic := range res.Microphones {
+			want := 0.0
+			if m == 1 {
+				want = -9
+			}
+			if math.Abs(mic.DelayUS-want) > 0.3 {
+				t.Errorf("excerpt %q, microphone %s: delay %.2f µs, want %.2f µs", excerpt, mic.Name, mic.DelayUS, want)
+			}
+		}
 	}
 }

@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"context"
 	"fmt"
 	"math"
 	"slices"
@@ -58,6 +59,9 @@ func (c *calibrating) levels() (*rig.Rig, []string, error) {
 		tones, err := calibration.Tones(src, cal, only)
 		if err != nil {
 			return nil, nil, explainedFor(t, err)
+		}
+		if err := context.Cause(c.ctx); err != nil {
+			return nil, nil, err
 		}
 		for i, tone := range tones {
 			switch {

@@ -2,6 +2,7 @@ package pipeline
 
 import (
 	"fmt"
+	"math"
 	"slices"
 
 	"alidade/pkg/audio"
@@ -46,6 +47,21 @@ func (l *loadedRig) onOneClock(src audio.Source, first int64) (audio.Source, err
 		return nil, &UsageError{Err: fmt.Errorf("rig %s: clock_ppm: %w", l.Name, err)}
 	}
 	return out, nil
+}
+
+// clockReach is the stretch of a take, half-open, that onOneClock needs to make
+// the frames from..to of it: longer by how far the clocks have run apart, and by
+// the ends of the kernel, as far as the take goes.
+func (l *loadedRig) clockReach(from, to, frames int64) (low, high int64) {
+	ppm := l.clocks()
+	if ppm == nil {
+		return from, to
+	}
+	const kernel = 128 // frames: longer than any Farrow kernel that is used
+	slow, fast := min(0, slices.Min(ppm))*1e-6, max(0, slices.Max(ppm))*1e-6
+	low = from + int64(math.Floor(slow*float64(from))) - kernel
+	high = to + int64(math.Ceil(fast*float64(to))) + kernel
+	return max(0, low), max(to, min(frames, high))
 }
 
 // clocked is the rig with so much added to the clocks of its used microphones.
