@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"slices"
 	"strings"
 
 	"github.com/urfave/cli/v2"
@@ -75,13 +76,10 @@ func checkVerb() verb {
 		name: "check", does: "what is wrong with a take, channel by channel",
 		help: checkHelp,
 		flags: func() []cli.Flag {
-			list := []cli.Flag{
-				&cli.StringFlag{Name: "rig"}, &cli.BoolFlag{Name: "chain"}, &cli.BoolFlag{Name: "set"},
-				&cli.BoolFlag{Name: "find-chain"}, &cli.BoolFlag{Name: "find-set"},
-				&cli.Float64Flag{Name: "temperature-c"}, &cli.Float64Flag{Name: "humidity-pct"},
-				&cli.Float64Flag{Name: "pressure-kpa"}, &cli.Float64Flag{Name: "speed-of-sound"},
-				&cli.BoolFlag{Name: "json"}, &cli.StringFlag{Name: "html"}, &cli.BoolFlag{Name: "overwrite"}, &cli.StringFlag{Name: "fail-on", Value: failNever}, &cli.BoolFlag{Name: "quiet"},
-			}
+			list := slices.Concat(takeFlags(), airFlags(), []cli.Flag{
+				&cli.BoolFlag{Name: "json"}, &cli.StringFlag{Name: "html"}, &cli.BoolFlag{Name: "overwrite"},
+				&cli.StringFlag{Name: "fail-on", Value: failNever}, &cli.BoolFlag{Name: "quiet"},
+			})
 			for _, l := range checkLimits {
 				list = append(list, &cli.Float64Flag{Name: l.name})
 			}
@@ -135,24 +133,15 @@ func runCheck(u *ui, c *cli.Context) error {
 		return &v
 	}
 	spec := pipeline.Spec{Take: files, RigPath: c.String("rig"), Version: version, Limits: limits, Options: pipeline.Options{
-		Chain: c.Bool("chain"), FindChain: c.Bool("find-chain"), FindSet: c.Bool("find-set"),
+		Overwrite: c.Bool("overwrite"), Chain: c.Bool("chain"), FindChain: c.Bool("find-chain"), FindSet: c.Bool("find-set"),
 		TemperatureC: number("temperature-c"), HumidityPct: number("humidity-pct"), PressureKPa: number("pressure-kpa"), SpeedOfSound: number("speed-of-sound"),
 	}}
 	progress := u.progress(c.Bool("quiet"))
-	res, err := pipeline.Check(c.Context, spec, pipeline.Watch{Progress: progress.step})
+	res, err := pipeline.Check(c.Context, spec, pipeline.Watch{Progress: progress.step},
+		sheets(c, map[string]func(io.Writer, *pipeline.CheckResult) error{"html": report.CheckHTML})...)
 	progress.finish()
 	if err != nil {
 		return err
-	}
-	if c.IsSet("html") {
-		inputs := []string{c.String("rig")}
-		for _, f := range res.Take.Files {
-			inputs = append(inputs, f.Path)
-		}
-		err := pipeline.WriteWhole(c.String("html"), c.Bool("overwrite"), inputs, func(w io.Writer) error { return report.CheckHTML(w, res) })
-		if err != nil {
-			return err
-		}
 	}
 	if c.Bool("json") {
 		if err := report.WriteJSON(u.stdout, res); err != nil {

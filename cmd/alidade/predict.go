@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"slices"
 	"strings"
 
 	"github.com/urfave/cli/v2"
@@ -86,28 +87,9 @@ func predictVerb() verb {
 	}
 }
 
-// beamFlags are the options that shape a beam.
-func beamFlags() []cli.Flag {
-	return []cli.Flag{
-		&cli.StringFlag{Name: "rig"},
-		&cli.StringFlag{Name: "toward"},
-		&cli.StringFlag{Name: "focus"},
-		&cli.StringFlag{Name: "reference-point"},
-		&cli.StringFlag{Name: "method"},
-		&cli.StringFlag{Name: "taper"},
-		&cli.StringFlag{Name: "weights"},
-		&cli.StringSliceFlag{Name: "null"},
-		&cli.Float64Flag{Name: "white-noise-gain-floor-db"},
-		&cli.BoolFlag{Name: "undo-spreading"},
-		&cli.Float64Flag{Name: "temperature-c"},
-		&cli.Float64Flag{Name: "humidity-pct"},
-		&cli.Float64Flag{Name: "pressure-kpa"},
-		&cli.Float64Flag{Name: "speed-of-sound"},
-	}
-}
-
 func predictFlags() []cli.Flag {
-	return append(beamFlags(),
+	return slices.Concat(beamFlags(), aimFlags(), []cli.Flag{
+		&cli.StringFlag{Name: "rig"},
 		&cli.IntFlag{Name: "rate"},
 		&cli.StringFlag{Name: "at-hz"},
 		&cli.BoolFlag{Name: "pattern"},
@@ -123,7 +105,7 @@ func predictFlags() []cli.Flag {
 		&cli.StringFlag{Name: "pattern-csv"},
 		&cli.StringFlag{Name: "html"},
 		&cli.BoolFlag{Name: "overwrite"},
-	)
+	})
 }
 
 // runPredict is the verb.
@@ -149,9 +131,6 @@ func runPredict(u *ui, c *cli.Context) error {
 			fault("--%s 0: want 1 or more", option)
 		}
 	}
-	if c.IsSet("csv") && c.String("csv") == c.String("pattern-csv") {
-		fault("--csv and --pattern-csv %s: two tables, two files", c.String("csv"))
-	}
 	if err := o.Validate(); err != nil {
 		for _, line := range strings.Split(err.Error(), "\n") {
 			fault("%s", line)
@@ -160,22 +139,10 @@ func runPredict(u *ui, c *cli.Context) error {
 	if len(faults) > 0 {
 		return &usageError{errors.Join(faults...), "alidade predict --help shows its options"}
 	}
-	p, err := pipeline.Predict(c.String("rig"), o, version)
+	p, err := pipeline.Predict(c.String("rig"), o, version, sheets(c, map[string]func(io.Writer, *pipeline.Prediction) error{
+		"csv": report.PredictionCSV, "pattern-csv": report.PatternCSV, "html": report.PredictionHTML})...)
 	if err != nil {
 		return err
-	}
-	for _, file := range []struct {
-		option string
-		write  func(io.Writer, *pipeline.Prediction) error
-	}{{"csv", report.PredictionCSV}, {"pattern-csv", report.PatternCSV}, {"html", report.PredictionHTML}} {
-		if !c.IsSet(file.option) {
-			continue
-		}
-		err := pipeline.WriteWhole(c.String(file.option), c.Bool("overwrite"), []string{c.String("rig")},
-			func(w io.Writer) error { return file.write(w, p) })
-		if err != nil {
-			return err
-		}
 	}
 	if c.Bool("json") {
 		return report.WriteJSON(u.stdout, p)

@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"slices"
 	"strings"
 	"time"
 
@@ -103,13 +104,7 @@ func scanVerb() verb {
 }
 
 func scanFlags() []cli.Flag {
-	return []cli.Flag{
-		&cli.BoolFlag{Name: "chain"},
-		&cli.BoolFlag{Name: "set"},
-		&cli.BoolFlag{Name: "find-chain"},
-		&cli.BoolFlag{Name: "find-set"},
-
-		&cli.StringFlag{Name: "rig"},
+	return slices.Concat(takeFlags(), beamFlags(), trackFlags(), []cli.Flag{
 		&cli.Float64Flag{Name: "from"},
 		&cli.Float64Flag{Name: "to"},
 		&cli.Float64Flag{Name: "step"},
@@ -118,43 +113,11 @@ func scanFlags() []cli.Flag {
 		&cli.Float64Flag{Name: "elevation-to"},
 		&cli.Float64Flag{Name: "elevation-step"},
 		&cli.StringSliceFlag{Name: "toward"},
-		&cli.StringFlag{Name: "reference-point"},
-
-		&cli.StringFlag{Name: "method"},
-		&cli.StringFlag{Name: "taper"},
-		&cli.StringFlag{Name: "weights"},
-		&cli.StringSliceFlag{Name: "null"},
-		&cli.Float64Flag{Name: "white-noise-gain-floor-db"},
-		&cli.Float64Flag{Name: "highpass"},
-		&cli.Float64Flag{Name: "gain-db"},
-		&cli.Float64Flag{Name: "temperature-c"},
-		&cli.Float64Flag{Name: "humidity-pct"},
-		&cli.Float64Flag{Name: "pressure-kpa"},
-		&cli.Float64Flag{Name: "speed-of-sound"},
-
-		&cli.StringSliceFlag{Name: "noise"},
-		&cli.StringSliceFlag{Name: "target"},
-		&cli.StringFlag{Name: "noise-cue"},
-		&cli.StringFlag{Name: "target-cue"},
-		&cli.StringFlag{Name: "isolated-noise"},
-		&cli.StringFlag{Name: "isolated-target"},
-		&cli.BoolFlag{Name: "no-measure"},
 		&cli.BoolFlag{Name: "intervals"},
-		&cli.BoolFlag{Name: "keep-dead"},
-
 		&cli.StringFlag{Name: "csv"},
 		&cli.StringFlag{Name: "html"},
 		&cli.StringFlag{Name: "tracks"},
-		&cli.StringFlag{Name: "format"},
-		&cli.BoolFlag{Name: "overwrite"},
-		&cli.BoolFlag{Name: "verify"},
-		&cli.BoolFlag{Name: "no-verify"},
-		&cli.BoolFlag{Name: "private"},
-		&cli.BoolFlag{Name: "reproducible"},
-
-		&cli.BoolFlag{Name: "json"},
-		&cli.BoolFlag{Name: "quiet"},
-	}
+	})
 }
 
 // scanOptions puts the flags into the options of the pipeline.
@@ -219,23 +182,11 @@ func runScan(u *ui, c *cli.Context) error {
 	}
 	progress := u.progress(c.Bool("quiet"))
 	defer progress.finish()
-	r, err := pipeline.RunScan(c.Context, spec, pipeline.Watch{Progress: progress.step})
+	r, err := pipeline.RunScan(c.Context, spec, pipeline.Watch{Progress: progress.step},
+		sheets(c, map[string]func(io.Writer, *pipeline.ScanResult) error{"csv": report.ScanCSV, "html": report.ScanHTML})...)
 	progress.finish()
 	if err != nil {
 		return err
-	}
-	for _, file := range []struct {
-		option string
-		write  func(io.Writer, *pipeline.ScanResult) error
-	}{{"csv", report.ScanCSV}, {"html", report.ScanHTML}} {
-		if !c.IsSet(file.option) {
-			continue
-		}
-		err := pipeline.WriteWhole(c.String(file.option), c.Bool("overwrite"), append(files, c.String("rig")),
-			func(w io.Writer) error { return file.write(w, r) })
-		if err != nil {
-			return err
-		}
 	}
 	if c.Bool("json") {
 		return report.WriteJSON(u.stdout, r)

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"time"
 
@@ -141,48 +142,14 @@ func steerVerb() verb {
 }
 
 func steerFlags() []cli.Flag {
-	return []cli.Flag{
-		&cli.BoolFlag{Name: "chain"},
-		&cli.BoolFlag{Name: "set"},
-		&cli.BoolFlag{Name: "find-chain"},
-		&cli.BoolFlag{Name: "find-set"},
-
-		&cli.StringFlag{Name: "rig"},
-		&cli.StringFlag{Name: "toward"},
-		&cli.StringFlag{Name: "focus"},
+	return slices.Concat(takeFlags(), beamFlags(), aimFlags(), trackFlags(), []cli.Flag{
 		&cli.IntFlag{Name: "pick"},
-		&cli.StringFlag{Name: "reference-point"},
-
-		&cli.StringFlag{Name: "method"},
-		&cli.StringFlag{Name: "taper"},
-		&cli.StringFlag{Name: "weights"},
-		&cli.StringSliceFlag{Name: "null"},
-		&cli.Float64Flag{Name: "white-noise-gain-floor-db"},
 		&cli.Float64Flag{Name: "reestimate-every"},
 		&cli.StringFlag{Name: "postfilter"},
 		&cli.Float64Flag{Name: "postfilter-floor-db"},
-		&cli.BoolFlag{Name: "undo-spreading"},
-		&cli.Float64Flag{Name: "highpass"},
-		&cli.Float64Flag{Name: "gain-db"},
-
-		&cli.Float64Flag{Name: "temperature-c"},
-		&cli.Float64Flag{Name: "humidity-pct"},
-		&cli.Float64Flag{Name: "pressure-kpa"},
-		&cli.Float64Flag{Name: "speed-of-sound"},
-
-		&cli.StringSliceFlag{Name: "noise"},
-		&cli.StringSliceFlag{Name: "target"},
-		&cli.StringFlag{Name: "noise-cue"},
-		&cli.StringFlag{Name: "target-cue"},
-		&cli.StringFlag{Name: "isolated-noise"},
-		&cli.StringFlag{Name: "isolated-target"},
 		&cli.StringFlag{Name: "compare-to"},
-		&cli.BoolFlag{Name: "no-measure"},
-		&cli.BoolFlag{Name: "keep-dead"},
 		&cli.BoolFlag{Name: "align-clocks"},
-
 		&cli.StringFlag{Name: "out"},
-		&cli.StringFlag{Name: "format"},
 		&cli.StringFlag{Name: "over-range"},
 		&cli.BoolFlag{Name: "with-reference"},
 		&cli.StringFlag{Name: "excerpt"},
@@ -190,16 +157,8 @@ func steerFlags() []cli.Flag {
 		&cli.StringFlag{Name: "reports"},
 		&cli.BoolFlag{Name: "preview"},
 		&cli.StringFlag{Name: "preview-at"},
-		&cli.BoolFlag{Name: "overwrite"},
-		&cli.BoolFlag{Name: "verify"},
-		&cli.BoolFlag{Name: "no-verify"},
-		&cli.BoolFlag{Name: "private"},
-		&cli.BoolFlag{Name: "reproducible"},
-
-		&cli.BoolFlag{Name: "json"},
 		&cli.StringFlag{Name: "fail-on", Value: failNever},
-		&cli.BoolFlag{Name: "quiet"},
-	}
+	})
 }
 
 // steerOptions puts the flags into the options of the pipeline.

@@ -3,6 +3,7 @@ package pipeline
 import (
 	"context"
 	"fmt"
+	"slices"
 
 	"alidade/pkg/quality"
 )
@@ -57,8 +58,9 @@ type CheckFinding struct {
 }
 
 // Check inspects one take against its rig. Of the options it heeds those on
-// files and air. The errors are those of Run.
-func Check(ctx context.Context, spec Spec, watch Watch) (res *CheckResult, err error) {
+// files and air, and Overwrite for the sheets, which are staged before the work
+// and appear with the result. The errors are those of Run.
+func Check(ctx context.Context, spec Spec, watch Watch, show ...Sheet[*CheckResult]) (res *CheckResult, err error) {
 	l, err := loadRig(spec.RigPath, spec.Options)
 	if err != nil {
 		return nil, err
@@ -75,6 +77,11 @@ func Check(ctx context.Context, spec Spec, watch Watch) (res *CheckResult, err e
 	if err := t.sounds(); err != nil {
 		return nil, err
 	}
+	shown, err := stageSheets(show, spec.Options.Overwrite, slices.Concat(t.paths(), l.files), nil)
+	if err != nil {
+		return nil, err
+	}
+	defer shown.abandon()
 	found, err := r.inspectAll([][2]int64{{0, t.header.Frames}})
 	if err != nil {
 		return nil, err
@@ -107,6 +114,9 @@ func Check(ctx context.Context, spec Spec, watch Watch) (res *CheckResult, err e
 		}
 	}
 	res.Verdict = verdict(res)
+	if err := shown.finish(res); err != nil {
+		return nil, err
+	}
 	return res, nil
 }
 

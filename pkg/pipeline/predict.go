@@ -151,9 +151,10 @@ func (o PredictOptions) Validate() error {
 }
 
 // Predict returns what the beam that the options ask for can do on the rig of
-// the file at rigPath. version is the program's, for the document. The errors
-// are *UsageError.
-func Predict(rigPath string, o PredictOptions, version string) (*Prediction, error) {
+// the file at rigPath. version is the program's, for the document. The sheets
+// are staged before the work and appear with the result. The errors are those of
+// the options and the rig (*UsageError) and of the sheets.
+func Predict(rigPath string, o PredictOptions, version string, show ...Sheet[*Prediction]) (*Prediction, error) {
 	s, err := o.resolve()
 	if err != nil {
 		return nil, err
@@ -162,6 +163,11 @@ func Predict(rigPath string, o PredictOptions, version string) (*Prediction, err
 	if err != nil {
 		return nil, err
 	}
+	shown, err := stageSheets(show, o.Overwrite, l.files, nil)
+	if err != nil {
+		return nil, err
+	}
+	defer shown.abandon()
 	line, err := newBeamline(l, s.beam, s.RateHz)
 	if err != nil {
 		return nil, err
@@ -176,7 +182,14 @@ func Predict(rigPath string, o PredictOptions, version string) (*Prediction, err
 	p := &predictor{set: s, line: line, run: r, beam: response.Beam{
 		Transfer: line.model, Mics: line.at, Reference: line.ref, Look: line.look, Speed: l.speed,
 	}}
-	return p.predict(version)
+	out, err := p.predict(version)
+	if err != nil {
+		return nil, err
+	}
+	if err := shown.finish(out); err != nil {
+		return nil, err
+	}
+	return out, nil
 }
 
 // predictor holds what a prediction is made from.

@@ -82,6 +82,7 @@ type Take struct {
 type RigSummary struct {
 	Name            string     `json:"name"`
 	SHA256          string     `json:"sha256"`
+	PositionsSHA256 string     `json:"positions_sha256,omitempty"` // of the CSV file that the rig file names
 	MicrophonesUsed int        `json:"microphones_used"`
 	Reference       string     `json:"reference"`
 	ReferencePointM [3]float64 `json:"reference_point_m"`

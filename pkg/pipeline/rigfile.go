@@ -1,8 +1,11 @@
 package pipeline
 
 import (
+	"crypto/sha256"
+	"encoding/hex"
 	"errors"
 	"fmt"
+	"hash"
 	"io"
 	"os"
 	"path/filepath"
@@ -24,11 +27,14 @@ const rigHint = "alidade schema rig says what a rig file holds"
 // loadedRig is a rig with the files it came from and the air in force.
 type loadedRig struct {
 	*rig.Rig
-	digest string
-	files  []string
-	air    acoustics.Air
-	speed  float64 // m/s
-	rule   string  // where the speed comes from
+	digest string // SHA-256 of the rig file
+	// positions is the SHA-256 of the CSV file that it names for the places of
+	// the microphones, empty without one.
+	positions string
+	files     []string
+	air       acoustics.Air
+	speed     float64 // m/s
+	rule      string  // where the speed comes from
 	// centre is the reference point where microphones were left out on the way,
 	// which does not move it; else nil.
 	centre *rig.Point
@@ -68,6 +74,7 @@ func loadRig(path string, o Options) (*loadedRig, error) {
 		return nil, &UsageError{Err: fmt.Errorf("rig: %w", err), Hint: hint}
 	}
 	l := &loadedRig{digest: digestOf(data), files: []string{path}}
+	var beside hash.Hash // of the files that it names
 	open := func(name string) (io.ReadCloser, error) {
 		if !filepath.IsAbs(name) {
 			name = filepath.Join(filepath.Dir(path), name)
@@ -77,10 +84,19 @@ func loadRig(path string, o Options) (*loadedRig, error) {
 			return nil, err
 		}
 		l.files = append(l.files, name)
-		return in, nil
+		if beside == nil {
+			beside = sha256.New()
+		}
+		return struct {
+			io.Reader
+			io.Closer
+		}{io.TeeReader(in, beside), in}, nil
 	}
 	if l.Rig, err = rig.Load(path, data, open); err != nil {
 		return nil, &UsageError{Err: err, Hint: rigHint}
+	}
+	if beside != nil {
+		l.positions = hex.EncodeToString(beside.Sum(nil))
 	}
 	if o.ReferencePoint != "" {
 		m, found := l.Find(o.ReferencePoint)
@@ -193,7 +209,7 @@ func readSmall(path string, limit int64) ([]byte, error) {
 func (l *loadedRig) summary() RigSummary {
 	ref := l.ReferencePoint()
 	s := RigSummary{
-		Name: l.Name, SHA256: l.digest, MicrophonesUsed: len(l.Used()), Reference: l.Reference,
+		Name: l.Name, SHA256: l.digest, PositionsSHA256: l.positions, MicrophonesUsed: len(l.Used()), Reference: l.Reference,
 		ReferencePointM: [3]float64{ref.X, ref.Y, ref.Z},
 		SpeedOfSoundMS:  l.speed, SpeedRule: l.rule, Air: l.air.String(),
 		Shape: rig.Spread(l.Positions()).Shape.String(),

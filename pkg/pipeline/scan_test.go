@@ -244,3 +244,40 @@ func TestDirectionsOfAScan(t *testing.T) {
 		}
 	}
 }
+
+// The record beside a track of minimum-variance weights says by content what
+// they were found on: other isolated noise under the same name makes another
+// track. Neither its folder nor the label of a cue is told.
+func TestRecordsKnowTheNoiseByContent(t *testing.T) {
+	s := newScene(t, 2, wav.PCM16)
+	noise := filepath.Join(s.dir, "deep", "noise.wav")
+	text, err := os.ReadFile(s.take)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := errors.Join(os.Mkdir(filepath.Dir(noise), 0o777), os.WriteFile(noise, text, 0o666)); err != nil {
+		t.Fatal(err)
+	}
+	o := from(60, 60, 1)
+	o.Weights, o.IsolatedNoise, o.NoMeasure, o.Private, o.Tracks = WeightsMinimumVariance, noise, true, true, filepath.Join(s.dir, "tracks")
+	s.mustScan(t, o)
+	record, err := os.ReadFile(filepath.Join(o.Tracks, "take_az+060.0.track.json"))
+	if err != nil || strings.Contains(string(record), "deep") || !strings.Contains(string(record), digestOf(text)) {
+		t.Errorf("%v, the record names the folder or not the content: %s", err, record)
+	}
+	if r := s.mustScan(t, o); !r.Angles[0].Track.Kept {
+		t.Error("the same noise, and the track was not kept")
+	}
+	text[len(text)-1] ^= 1
+	if err := os.WriteFile(noise, text, 0o666); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := s.scan(o, Watch{}); err == nil || !strings.Contains(err.Error(), "exists already, and was not made") {
+		t.Errorf("got %v for other noise", err)
+	}
+	o.IsolatedNoise, o.Noise, o.Tracks = "", "0..1", filepath.Join(s.dir, "other")
+	s.mustScan(t, o)
+	if record, err = os.ReadFile(filepath.Join(o.Tracks, "take_az+060.0.track.json")); err != nil || !strings.Contains(string(record), "noise_s") {
+		t.Errorf("%v, the record lacks the stretches: %s", err, record)
+	}
+}

@@ -32,9 +32,10 @@ var scanBytes int64 = 256 << 20
 // RunScan measures what a beam hears of a take in many directions: all channels are
 // analysed once a pass, and a pass takes as many directions as memory holds. With
 // Options.Tracks it writes a track of each direction too, and keeps those that an
-// earlier scan of the same take with the same options left there. The errors are
-// those of Run.
-func RunScan(ctx context.Context, spec ScanSpec, watch Watch) (result *ScanResult, err error) {
+// earlier scan of the same take with the same options left there. The sheets are
+// staged before the work and appear with the result. The errors are those of
+// Run.
+func RunScan(ctx context.Context, spec ScanSpec, watch Watch, show ...Sheet[*ScanResult]) (result *ScanResult, err error) {
 	set, directions, err := spec.Options.resolve()
 	if err != nil {
 		return nil, err
@@ -54,11 +55,33 @@ func RunScan(ctx context.Context, spec ScanSpec, watch Watch) (result *ScanResul
 	if err := r.ready(); err != nil {
 		return nil, err
 	}
+	inputs, tracks := s.inputs(), s.trackFiles()
+	var names []string
+	for _, t := range tracks {
+		names = append(names, t.path)
+	}
+	if err := refuseInputs(names, inputs); err != nil {
+		return nil, ofOption(err, "tracks")
+	}
+	if err := s.trackFolder(); err != nil {
+		return nil, err
+	}
+	shown, err := stageSheets(show, set.Overwrite, inputs, tracks)
+	if err != nil {
+		return nil, err
+	}
+	defer shown.abandon()
 	r.from, r.to = 0, r.take.header.Frames
 	if err := r.sound(); err != nil {
 		return nil, err
 	}
-	return s.scan()
+	if result, err = s.scan(); err != nil {
+		return nil, err
+	}
+	if err := shown.finish(result); err != nil {
+		return nil, err
+	}
+	return result, nil
 }
 
 // ready refuses a take that the rig does not fit or that holds nothing.
@@ -86,6 +109,7 @@ type scanner struct {
 
 	noise, target []measure.Stretch // of the take; nil until known
 	known         bool
+	learnt        learnedFrom // for the records of the tracks
 }
 
 func (s *scanner) scan() (*ScanResult, error) {

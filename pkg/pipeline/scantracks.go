@@ -22,12 +22,15 @@ const trackSchema = "alidade-scan-track/1"
 // trackRecord says what a track of a scan was made from. It stands beside the
 // track, and a track is kept if its record says that it would be made again.
 type trackRecord struct {
-	Schema  string  `json:"schema"`
-	Version string  `json:"version"`
-	Kernel  string  `json:"kernel"`
-	Take    []File  `json:"take"` // paths without folders
-	Rig     string  `json:"rig_sha256"`
-	Options Options `json:"options"`
+	Schema  string `json:"schema"`
+	Version string `json:"version"`
+	Kernel  string `json:"kernel"`
+	Take    []File `json:"take"` // paths without folders
+	Rig     string `json:"rig_sha256"`
+	// Positions is of the CSV file that the rig file names.
+	Positions string  `json:"positions_sha256,omitempty"`
+	Options   Options `json:"options"`
+	learnedFrom
 	// Toward is the direction, and Beside those that were steered to in the
 	// same pass, whose filters decide on the size of its transforms.
 	Toward string   `json:"toward"`
@@ -35,18 +38,48 @@ type trackRecord struct {
 	Track  *Output  `json:"track"`
 }
 
+// learnedFrom is the noise that weights of minimum variance were found on: no
+// path and no label, which would say more than that.
+type learnedFrom struct {
+	NoiseS   [][2]float64 `json:"noise_s,omitempty"`        // stretches of the take
+	Isolated []File       `json:"isolated_noise,omitempty"` // paths without folders
+}
+
 // tracksTogether is how many tracks are made in one pass.
 const tracksTogether = 16
 
-// tracks writes the track of each direction into a folder, and keeps those that
-// an earlier scan left there.
-func (s *scanner) tracks() error {
+// trackFolder makes the folder of the tracks.
+func (s *scanner) trackFolder() error {
 	dir := s.spec.Options.Tracks
+	if dir == "" {
+		return nil
+	}
 	if info, err := os.Stat(dir); err == nil && !info.IsDir() {
 		return &HintedError{Err: fmt.Errorf("%s: is %s, not a folder", dir, kindOf(info.Mode())), Hint: "give --tracks a folder"}
 	}
 	if err := os.MkdirAll(dir, 0o777); err != nil {
-		return unwritable(dir, err)
+		return ofOption(unwritable(dir, err), "tracks")
+	}
+	return nil
+}
+
+// trackFiles are the files of all tracks, none without --tracks.
+func (s *scanner) trackFiles() (list []output) {
+	if s.spec.Options.Tracks == "" {
+		return nil
+	}
+	for _, d := range s.directions {
+		track, record := s.files(d)
+		list = append(list, output{"the track of " + angles(d), track}, output{"the record of the track of " + angles(d), record})
+	}
+	return list
+}
+
+// tracks writes the track of each direction into the folder, and keeps those
+// that an earlier scan left there.
+func (s *scanner) tracks() error {
+	if err := s.heardBefore(); err != nil {
+		return err
 	}
 	together := tracksTogether
 	if s.set.Method != MethodSpectral {
@@ -86,7 +119,6 @@ func (s *scanner) someTracks(from, to int) (err error) {
 			d.record.abandon()
 		}
 	}()
-	var outputs []string
 	for i := from; i < to; i++ {
 		about := s.record(i, from, to)
 		track, record := s.files(s.directions[i])
@@ -97,13 +129,9 @@ func (s *scanner) someTracks(from, to int) (err error) {
 			continue
 		}
 		due = append(due, &scanned{about: about, index: i})
-		outputs = append(outputs, track, record)
 	}
 	if len(due) == 0 {
 		return nil
-	}
-	if err := refuseInputs(outputs, s.inputs()); err != nil {
-		return err
 	}
 	lines, err := s.lines(s.directions[from:to])
 	if err != nil {
@@ -124,11 +152,11 @@ func (s *scanner) someTracks(from, to int) (err error) {
 			return &HintedError{Err: fmt.Errorf("%s: exists already, and was not made from this take with these options", track), Hint: "give --tracks another folder, or --overwrite to replace it"}
 		}
 		if d.track, err = newTrack(track, s.set.Overwrite, h.Rate, encoding, 0, meta); err != nil {
-			return err
+			return ofOption(err, "tracks")
 		}
 		// A record without its track is what an interrupted scan left.
 		if d.record, err = stage(record, s.set.Overwrite || isRecord(record)); err != nil {
-			return err
+			return ofOption(err, "tracks")
 		}
 	}
 	if err := checkRoom(due[0].track.file.final, total); err != nil {
@@ -216,16 +244,42 @@ func (s *scanner) finishTrack(d *scanned) error {
 	return nil
 }
 
+// heardBefore settles what the weights were found on, for the records.
+func (s *scanner) heardBefore() error {
+	if s.set.Weights != WeightsMinimumVariance {
+		return nil
+	}
+	stretches, source, err := s.knownNoise()
+	if err != nil {
+		return err
+	}
+	if source != SegmentsNone {
+		s.learnt.NoiseS = spans(stretches)
+		return nil
+	}
+	t, err := openTake([]string{s.set.IsolatedNoise}, s.isolatedJoining(), true)
+	if err != nil {
+		return err
+	}
+	about, err := t.finish()
+	for _, f := range about.Files {
+		s.learnt.Isolated = append(s.learnt.Isolated, File{Path: filepath.Base(f.Path), SHA256: f.SHA256})
+	}
+	return joinErrors(err, t.close())
+}
+
 // record is what the track of direction i is made from.
 func (s *scanner) record(i, from, to int) trackRecord {
 	o := s.spec.Options.Options
 	// What leaves no mark in a track.
 	o.Overwrite, o.NoVerify, o.NoMeasure, o.Out, o.Reports, o.Toward, o.BlockFrames = false, false, false, "", "", "", 0
 	o.CompareTo, o.Target, o.TargetCue, o.IsolatedTarget = "", "", "", ""
-	if o.Weights != WeightsMinimumVariance {
-		o.Noise, o.NoiseCue, o.IsolatedNoise = "", "", ""
+	// What the noise has done stands in learnedFrom.
+	o.Noise, o.NoiseCue, o.IsolatedNoise = "", "", ""
+	r := trackRecord{
+		Schema: trackSchema, Version: s.spec.Version, Kernel: kernel.Name(), Rig: s.rig.digest, Positions: s.rig.positions,
+		Options: o, learnedFrom: s.learnt, Toward: directionText(s.directions[i]),
 	}
-	r := trackRecord{Schema: trackSchema, Version: s.spec.Version, Kernel: kernel.Name(), Rig: s.rig.digest, Options: o, Toward: directionText(s.directions[i])}
 	for _, f := range s.result.Take.Files {
 		r.Take = append(r.Take, File{Path: filepath.Base(f.Path), SHA256: f.SHA256})
 	}

@@ -126,11 +126,11 @@ func (s *staged) commit() error {
 			}
 			return syncFolder(filepath.Dir(s.final))
 		case errors.Is(err, fs.ErrExist):
-			return errors.Join(fmt.Errorf("%s: came into being while its track was written", s.final), os.Remove(tmp))
+			return errors.Join(fmt.Errorf("%s: came into being while it was written", s.final), os.Remove(tmp))
 		}
 		// File systems without hard links: look again, then rename.
 		if _, err := os.Lstat(s.final); err == nil {
-			return errors.Join(fmt.Errorf("%s: came into being while its track was written", s.final), os.Remove(tmp))
+			return errors.Join(fmt.Errorf("%s: came into being while it was written", s.final), os.Remove(tmp))
 		}
 	}
 	if err := os.Rename(tmp, s.final); err != nil {
@@ -183,21 +183,34 @@ func kindOf(mode fs.FileMode) string {
 // refuseInputs reports outputs that are the same file as an input, by name, by
 // link or by a name that differs only in case.
 func refuseInputs(outputs, inputs []string) error {
+	type known struct {
+		info fs.FileInfo // nil where there is no such file
+		abs  string
+	}
+	look := func(path string) (k known, err error) {
+		if info, err := os.Stat(path); err == nil {
+			k.info = info
+		}
+		k.abs, err = filepath.Abs(path)
+		return k, err
+	}
+	read := make([]known, len(inputs))
+	for i, in := range inputs {
+		var err error
+		if read[i], err = look(in); err != nil {
+			return err
+		}
+	}
 	for _, out := range outputs {
-		outInfo, outErr := os.Stat(out)
-		outAbs, err := filepath.Abs(out)
+		o, err := look(out)
 		if err != nil {
 			return err
 		}
-		for _, in := range inputs {
-			if inInfo, err := os.Stat(in); err == nil && outErr == nil && os.SameFile(inInfo, outInfo) {
+		for i, in := range inputs {
+			if o.info != nil && read[i].info != nil && os.SameFile(read[i].info, o.info) {
 				return &UsageError{Err: fmt.Errorf("%s: is the input %s: an input is never written to", out, in), Hint: "give another --out"}
 			}
-			inAbs, err := filepath.Abs(in)
-			if err != nil {
-				return err
-			}
-			if strings.EqualFold(outAbs, inAbs) {
+			if strings.EqualFold(o.abs, read[i].abs) {
 				return &UsageError{Err: fmt.Errorf("%s: differs from the input %s only in case: on many disks that is the same file", out, in), Hint: "give another --out"}
 			}
 		}
