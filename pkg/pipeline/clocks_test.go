@@ -2,6 +2,7 @@ package pipeline
 
 import (
 	"fmt"
+	"io"
 	"math"
 	"os"
 	"path/filepath"
@@ -9,6 +10,7 @@ import (
 
 	"alidade/pkg/audio"
 	"alidade/pkg/delay"
+	"alidade/pkg/quality"
 	"alidade/pkg/rig"
 	"alidade/pkg/scenario"
 	"alidade/pkg/wav"
@@ -184,5 +186,54 @@ func TestClocksWithoutASourceAreNull(t *testing.T) {
 	r := s.must(t, Options{Toward: "90", AlignClocks: true})
 	if f := findingOf(r, "clocks-not-measured"); f == nil || f.Severity != Warning || r.Clocks == nil || r.Clocks.Groups != nil || r.Clocks.StandardErrorPPM != nil {
 		t.Errorf("clocks %+v, findings %+v", r.Clocks, r.Findings)
+	}
+}
+
+// Clocks so far apart that much of a stretch comes from outside it, 0.6 s of 2 s
+// after a minute: nothing but sound is inspected, and levels and noise floors of
+// the channels are alike, as the same sound on all of them is.
+func TestStretchesOnFarClocksAreWhole(t *testing.T) {
+	if testing.Short() {
+		t.Skip("renders takes of 80 s")
+	}
+	const rate = 8000
+	for _, ppm := range []float64{10000, -10000} {
+		text := "microphones:\n"
+		for ch := range 4 {
+			text += fmt.Sprintf("  - {channel: %d, at_mm: [%d, 0]", ch+1, 60*ch-90)
+			if ch >= 2 {
+				text += fmt.Sprintf(", clock_ppm: %g", ppm)
+			}
+			text += "}\n"
+		}
+		dir := t.TempDir()
+		s := scene{dir: dir, rig: writeText(t, filepath.Join(dir, "line.yaml"), text), take: filepath.Join(dir, "take.wav")}
+		sc, err := scenario.Load("far.yaml", []byte(fmt.Sprintf(`scenario: clocks far apart
+rate_hz: %d
+duration_s: 80
+seed: 4
+rig_file: line.yaml
+sources:
+  - {name: engine, kind: noise, at: {azimuth_deg: 60}, level_dbfs: -30}
+sensor_dbfs: -65
+`, rate)), func(name string) (io.ReadCloser, error) { return os.Open(filepath.Join(dir, name)) })
+		if err != nil {
+			t.Fatal(err)
+		}
+		render, err := sc.Render(scenario.Options{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		b, err := audio.ReadAll(render.Mix())
+		if err != nil {
+			t.Fatal(err)
+		}
+		writeWAV(t, s.take, rate, wav.Float32, b)
+		r := s.must(t, Options{Toward: "60"})
+		for _, f := range r.Findings {
+			if f.Severity == Error || f.Code == quality.CodeLevel || f.Code == quality.CodeNoiseFloor {
+				t.Errorf("%+g ppm: %s: %s", ppm, f.Code, f.Message)
+			}
+		}
 	}
 }

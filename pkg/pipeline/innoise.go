@@ -171,10 +171,12 @@ func someNoise(stretches [][2]float64, total, least float64) [][2]float64 {
 
 // listen runs the corrected microphones of a part of a take into p.
 func (r *run) listen(t *take, p *inNoise) error {
-	if err := t.reader.SeekFrame(p.start); err != nil {
+	from, to := r.rig.clockReach(p.start, p.to, t.header.Frames)
+	p.start = from
+	if err := t.reader.SeekFrame(from); err != nil {
 		return fmt.Errorf("%s: %w", t.path(), err)
 	}
-	src, err := r.line.correctedFrom(audio.Section(&watched{Source: t.source(), ctx: r.ctx}, 0, p.to-p.start), p.start)
+	src, err := r.line.correctedFrom(audio.Section(&watched{Source: t.source(), ctx: r.ctx}, 0, to-from), from)
 	if err != nil {
 		return err
 	}

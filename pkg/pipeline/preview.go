@@ -164,6 +164,7 @@ func (r *run) referenceClip(res *Result, from, to int64) ([]float32, error) {
 	}
 	mic := r.line.witness(mics, res.Channels)
 	start := max(0, from-int64(previewWarmupS*float64(r.take.header.Rate)))
+	start, _ = r.rig.clockReach(start, to, r.take.header.Frames)
 	if err := r.take.reader.SeekFrame(start); err != nil {
 		return nil, fmt.Errorf("%s: %w", r.take.path(), err)
 	}

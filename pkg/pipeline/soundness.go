@@ -3,6 +3,7 @@ package pipeline
 import (
 	"errors"
 	"fmt"
+	"slices"
 
 	"alidade/pkg/audio"
 	"alidade/pkg/quality"
@@ -57,33 +58,42 @@ func (r *run) inspector(stretches [][2]int64, how inspection) (*quality.Inspecto
 	if err != nil {
 		return nil, &UsageError{Err: err, Hint: "limits stand in the rig file and in the job file"}
 	}
-	var total, at int64
-	for _, s := range stretches {
-		total += s[1] - s[0]
+	// What is read for each stretch: with several clocks more than the stretch.
+	read := slices.Clone(stretches)
+	var total int64
+	for i, s := range stretches {
+		if how == inspectAligned {
+			read[i][0], read[i][1] = r.rig.clockReach(s[0], s[1], h.Frames)
+		}
+		total += read[i][1] - read[i][0]
 	}
 	stage := "checking"
 	if how == inspectAligned {
 		stage = "comparing clocks"
 	}
 	watch := &watched{Source: r.take.source(), ctx: r.ctx, tell: r.tell(stage, total)}
-	for _, s := range stretches {
-		if s[0] != at {
-			if err := r.take.reader.SeekFrame(s[0]); err != nil {
+	var at, position int64 // of what was inspected, of the reader
+	for i, s := range stretches {
+		from, to := read[i][0], read[i][1]
+		if from != position {
+			if err := r.take.reader.SeekFrame(from); err != nil {
 				return nil, fmt.Errorf("%s: %w", r.take.path(), err)
 			}
-			if err := q.Gap(s[0] - at); err != nil {
-				return nil, err
-			}
+		}
+		position = to
+		if err := q.Gap(s[0] - at); err != nil {
+			return nil, err
 		}
 		at = s[1]
-		src, err := audio.Map(audio.Section(watch, 0, s[1]-s[0]), order, nil)
+		src, err := audio.Map(audio.Section(watch, 0, to-from), order, nil)
 		if err != nil {
 			return nil, err
 		}
 		if how == inspectAligned {
-			if src, err = r.rig.onOneClock(src, s[0]); err != nil {
+			if src, err = r.rig.onOneClock(src, from); err != nil {
 				return nil, err
 			}
+			src = audio.Section(src, s[0]-from, s[1]-from)
 		}
 		if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, h.Channels), q); err != nil {
 			return nil, err
@@ -133,7 +143,9 @@ func (r *run) inspectedFindings(found *quality.Result) error {
 	alive := len(used) - len(found.Dead)
 	silence := alive == 0
 	for _, k := range found.Dead {
-		r.dead = append(r.dead, used[k])
+		if !slices.Contains(r.dead, used[k]) {
+			r.dead = append(r.dead, used[k])
+		}
 	}
 	if !r.set.KeepDead && len(found.Dead) > 0 && !silence {
 		if alive < 2 {
@@ -151,7 +163,11 @@ func (r *run) inspectedFindings(found *quality.Result) error {
 		r.flags = map[int][]string{}
 	}
 	for _, c := range found.Channels {
-		r.flags[c.Channel] = append(r.flags[c.Channel], c.Flags...)
+		for _, flag := range c.Flags {
+			if !slices.Contains(r.flags[c.Channel], flag) {
+				r.flags[c.Channel] = append(r.flags[c.Channel], flag)
+			}
+		}
 	}
 	for _, f := range found.Findings {
 		g := Finding{Code: f.Code, Severity: Severity(f.Severity), Message: f.Message(), Channels: f.Channels}

@@ -123,9 +123,17 @@ func TestASilentTakeIsSteeredWithAWord(t *testing.T) {
 		clear(s.mix.Channel(ch))
 	}
 	writeWAV(t, s.take, sceneRate, wav.PCM24, s.mix)
-	r := s.must(t, Options{Toward: "90"})
-	if f := findingOf(r, "channel-silent"); f == nil || len(f.Channels) != 4 || r.Rig.MicrophonesUsed != 4 || findingOf(r, quality.CodeDead) != nil {
-		t.Errorf("%+v", r.Findings)
+	for _, o := range []Options{{}, {AlignClocks: true}} {
+		o.Toward, o.Overwrite = "90", true
+		r := s.must(t, o)
+		if f := findingOf(r, "channel-silent"); f == nil || len(f.Channels) != 4 || r.Rig.MicrophonesUsed != 4 || findingOf(r, quality.CodeDead) != nil {
+			t.Errorf("%+v: %+v", o, r.Findings)
+		}
+		for _, c := range r.Channels {
+			if slices.Sort(c.Flags); len(slices.Compact(slices.Clone(c.Flags))) != len(c.Flags) {
+				t.Errorf("channel %d: flags twice: %v", c.Channel, c.Flags)
+			}
+		}
 	}
 }
 
