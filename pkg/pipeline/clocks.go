@@ -104,7 +104,14 @@ func (r *run) alignClocks() error {
 		if q, err = r.inspector(list, inspectAligned); err != nil {
 			return err
 		}
-		if rest, why := q.Clocks(); rest != nil && len(rest.Groups) <= len(first.Groups) {
+		rest, why := q.Clocks()
+		if rest != nil && len(rest.Groups) <= len(first.Groups) {
+			// What is left of the groups is small, and may look like one clock.
+			rest, why = q.ClocksOf(first.Groups, first.Moved)
+		} else {
+			rest = nil
+		}
+		if rest != nil {
 			r.rig = r.rig.clocked(rest.PPM)
 			c.ErrorPPM, c.SpanS = rest.ErrorPPM, rest.SpanS
 		} else {

@@ -21,41 +21,46 @@ import (
 // fast. Rate and length keep the short form cheap.
 func twoClocks(t *testing.T, rate int, seconds float64, ppm float64) (clean, drifting scene, clean8 audio.Block) {
 	t.Helper()
-	render := func(ppm float64) scene {
-		text := fmt.Sprintf(`scenario: two recorders
+	on := fmt.Sprintf("[%g, %g]", 0.2*seconds, seconds)
+	clean, drifting = onClocks(t, rate, seconds, 0, -42, on), onClocks(t, rate, seconds, ppm, -42, on)
+	return clean, drifting, clean.mix
+}
+
+// onClocks renders such a take with the clock of four channels fast by ppm,
+// diffuse noise of a level, and the source heard in the stretches on.
+func onClocks(t *testing.T, rate int, seconds, ppm, diffuse float64, on string) scene {
+	t.Helper()
+	text := fmt.Sprintf(`scenario: two recorders
 rate_hz: %d
 duration_s: %g
 seed: 6
 rig:
   ring: {count: 8, radius_mm: 60}
 sources:
-  - {name: engine, kind: noise, at: {azimuth_deg: 60}, level_dbfs: -30, on_s: [[%g, %g]]}
-diffuse: [{level_dbfs: -42, spectrum: pink}]
+  - {name: engine, kind: noise, at: {azimuth_deg: 60}, level_dbfs: -30, on_s: [%s]}
+diffuse: [{level_dbfs: %g, spectrum: pink}]
 sensor_dbfs: -65
-`, rate, seconds, 0.2*seconds, seconds)
-		if ppm != 0 {
-			text += fmt.Sprintf("faults:\n  - {channels: [5, 6, 7, 8], clock_ppm: %g}\n", ppm)
-		}
-		sc, err := scenario.Load("two.yaml", []byte(text), nil)
-		if err != nil {
-			t.Fatal(err)
-		}
-		r, err := sc.Render(scenario.Options{})
-		if err != nil {
-			t.Fatal(err)
-		}
-		b, err := audio.ReadAll(r.Mix())
-		if err != nil {
-			t.Fatal(err)
-		}
-		s := scene{dir: t.TempDir(), mix: b}
-		s.rig = writeText(t, filepath.Join(s.dir, "ring.yaml"), "ring: {count: 8, radius_mm: 60}\n")
-		s.take = filepath.Join(s.dir, "take.wav")
-		writeWAV(t, s.take, rate, wav.Float32, b)
-		return s
+`, rate, seconds, on, diffuse)
+	if ppm != 0 {
+		text += fmt.Sprintf("faults:\n  - {channels: [5, 6, 7, 8], clock_ppm: %g}\n", ppm)
 	}
-	clean, drifting = render(0), render(ppm)
-	return clean, drifting, clean.mix
+	sc, err := scenario.Load("two.yaml", []byte(text), nil)
+	if err != nil {
+		t.Fatal(err)
+	}
+	r, err := sc.Render(scenario.Options{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	b, err := audio.ReadAll(r.Mix())
+	if err != nil {
+		t.Fatal(err)
+	}
+	s := scene{dir: t.TempDir(), mix: b}
+	s.rig = writeText(t, filepath.Join(s.dir, "ring.yaml"), "ring: {count: 8, radius_mm: 60}\n")
+	s.take = filepath.Join(s.dir, "take.wav")
+	writeWAV(t, s.take, rate, wav.Float32, b)
+	return s
 }
 
 // Two recorders 20 ppm apart: measured, undone, aligned within 5 µs throughout,
@@ -150,6 +155,26 @@ func TestClocksAreAligned(t *testing.T) {
 				t.Errorf("clock_ppm in the rig file: %s: %s", f.Code, f.Message)
 			}
 		}
+	}
+}
+
+// A take longer than what is listened to at first, in which only 11 s of the
+// first minute tell: the second listening, over all of it, makes the figure
+// better and says how good it is.
+func TestClocksOfALongTake(t *testing.T) {
+	if os.Getenv("ALIDADE_LONG") == "" {
+		t.Skip("renders a take of 200 s: set ALIDADE_LONG=1")
+	}
+	const seconds, ppm = 200.0, 20.0
+	s := onClocks(t, 8000, seconds, ppm, -75, "[40, 51], [70, 200]")
+	r := s.must(t, Options{Toward: "60", AlignClocks: true, NoMeasure: true})
+	if r.Clocks == nil || len(r.Clocks.Groups) != 2 || r.Clocks.StandardErrorPPM == nil || findingOf(r, "clocks-from-the-start") != nil {
+		t.Fatalf("clocks %+v, findings %+v", r.Clocks, r.Findings)
+	}
+	off, se := r.Clocks.Groups[1].PPM-r.Clocks.Groups[0].PPM-ppm, *r.Clocks.StandardErrorPPM
+	t.Logf("off by %.4f ppm, standard error %.4f, over %.0f s: %.2f µs at the end", off, se, *r.Clocks.SpanS, off*seconds)
+	if !(se > 0) || !(math.Abs(off) <= 4*se) || !(math.Abs(off)*seconds <= 5) || !(*r.Clocks.SpanS > 100) {
+		t.Errorf("off by %.4f ppm, standard error %.4f: want within four of them, and 5 µs at the end", off, se)
 	}
 }
 

@@ -56,17 +56,21 @@ func (j *judgement) tops() {
 		share := float64(c.ClippedFrames) / float64(s.frames)
 		switch {
 		case j.limits.ClippedShare < 0:
-		case share >= j.limits.ClippedShare || s.full > 0:
+		case share >= j.limits.ClippedShare || s.full > 0 && j.limits.ClippedShare <= defaultClippedShare:
 			severity := Warning
 			if share >= 0.01 {
 				severity = Error
+			}
+			expected := fmt.Sprintf("under %.2g %%", 100*j.limits.ClippedShare)
+			if share < j.limits.ClippedShare {
+				expected = "no run of three at full scale (a limit above the default of 0.05 % allows them)"
 			}
 			where := "at full scale"
 			if c.PeakDBFS < -0.1 {
 				where = fmt.Sprintf("at %.1f dBFS, below full scale: the clipping lies before the recorder's converter", c.PeakDBFS)
 			}
 			j.add(CodeClipped, severity, one, fmt.Sprintf("%s: %d frames (%.2g %%) on a flat top %s", j.names(one), c.ClippedFrames, 100*share, where),
-				fmt.Sprintf("under %.2g %%", 100*j.limits.ClippedShare), "record with less gain; a beam spreads the distortion over all directions")
+				expected, "record with less gain; a beam spreads the distortion over all directions")
 		case c.TruePeakDBFS > 0.1 && c.PeakDBFS <= 0:
 			j.add(CodeOvers, Info, one, fmt.Sprintf("%s passes full scale between samples by %.1f dB", j.names(one), c.TruePeakDBFS), "", "no sample is lost; leave headroom before converting the rate")
 		}

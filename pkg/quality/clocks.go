@@ -11,7 +11,7 @@ import (
 type Clocks struct {
 	PPM      []float64 // of each microphone given, parts per million, positive: fast; NaN for a dead one
 	Groups   [][]int   // microphones on one clock each, the reference first
-	ErrorPPM float64   // largest standard error of a group
+	ErrorPPM float64   // largest standard error of a group; of one clock that of a microphone
 	SpanS    float64   // from the first to the last window behind it, seconds
 	Moved    bool      // the source moved, and that was told from the clocks by the geometry
 }
@@ -25,6 +25,49 @@ type Clocks struct {
 // are told from it by the microphones that share one. As many clocks as
 // microphones cannot be.
 func (q *Inspector) Clocks() (*Clocks, string) {
+	g, why := q.timed()
+	if g == nil {
+		return nil, why
+	}
+	return g.clocks()
+}
+
+// ClocksOf measures the clocks of groups of microphones that are known to share
+// one each, the reference first, and whether the source moved, as Clocks found
+// them in another part of the take: however little they are apart, that and its
+// standard error are told.
+func (q *Inspector) ClocksOf(groups [][]int, moved bool) (*Clocks, string) {
+	g, why := q.timed()
+	if g == nil {
+		return nil, why
+	}
+	var living [][]int
+	for _, group := range groups {
+		group = slices.DeleteFunc(slices.Clone(group), func(m int) bool { return !slices.Contains(g.alive, m) })
+		if len(group) == 0 {
+			return nil, "all microphones on one of the clocks are dead"
+		}
+		living = append(living, group)
+	}
+	if len(living) == 0 {
+		return nil, "no microphones on any clock"
+	}
+	c, why := g.told(living, moved)
+	if c == nil {
+		return nil, why
+	}
+	for k, group := range groups {
+		for _, m := range group {
+			c.PPM[m] = c.PPM[living[k][0]]
+		}
+	}
+	c.Groups = groups
+	return c, ""
+}
+
+// timed is the geometry of the windows behind the clocks; nil comes with the
+// reason.
+func (q *Inspector) timed() (*geometry, string) {
 	if q.Close() != nil || q.cross == nil {
 		return nil, "one microphone has no second clock"
 	}
@@ -41,7 +84,7 @@ func (q *Inspector) Clocks() (*Clocks, string) {
 	if g == nil {
 		return nil, "too few microphones with sound, or all in one place"
 	}
-	return g.clocks()
+	return g, ""
 }
 
 // sameClock is how near slopes of one clock lie at least, a part in one.
@@ -50,15 +93,22 @@ const sameClock = 0.05e-6
 // mostPlanes bounds the planes that are tried.
 const mostPlanes = 2000
 
-func (g *geometry) clocks() (*Clocks, string) {
-	slope := make([]float64, len(g.mics))
+// trends are the slopes of the microphones' times, and the middle one of their
+// standard errors.
+func (g *geometry) trends() (slope []float64, doubt float64) {
+	slope = make([]float64, len(g.mics))
 	var doubts []float64
 	for _, m := range g.alive {
 		var se float64
 		slope[m], se = trend(g.list, g.times, m)
 		doubts = append(doubts, se)
 	}
-	reach := math.Max(sameClock, 5*median(doubts))
+	return slope, median(doubts)
+}
+
+func (g *geometry) clocks() (*Clocks, string) {
+	slope, doubt := g.trends()
+	reach := math.Max(sameClock, 5*doubt)
 	groups, moved, twice := g.groups(slope, reach)
 	switch {
 	case groups == nil:
@@ -66,6 +116,12 @@ func (g *geometry) clocks() (*Clocks, string) {
 	case twice:
 		return nil, "the source moves, and on this rig more than one way of sharing clocks explains the delays"
 	}
+	return g.told(groups, moved)
+}
+
+// told is by how much the clocks of groups are apart. Of one clock the error is
+// that of a single microphone's.
+func (g *geometry) told(groups [][]int, moved bool) (*Clocks, string) {
 	c := &Clocks{Groups: groups, Moved: moved, PPM: make([]float64, len(g.mics)), SpanS: g.list[len(g.list)-1].at - g.list[0].at}
 	for m := range c.PPM {
 		c.PPM[m] = math.NaN()
@@ -83,6 +139,10 @@ func (g *geometry) clocks() (*Clocks, string) {
 		for _, m := range group {
 			c.PPM[m] = ppm
 		}
+	}
+	if len(groups) == 1 {
+		_, doubt := g.trends()
+		c.ErrorPPM = 1e6 * doubt
 	}
 	if c.ErrorPPM > 1 {
 		return nil, fmt.Sprintf("the clocks can be told to no better than %.1f ppm", c.ErrorPPM)

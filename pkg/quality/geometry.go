@@ -361,21 +361,34 @@ func (g *geometry) drift() {
 	}
 	limit := g.limits.DriftPPM * 1e-6
 	err := median(all)
-	if most < 0.4*limit || most < 5*err {
-		return
-	}
 	var s []float64
 	for _, m := range g.alive {
 		s = append(s, slope[m])
 	}
 	middle := clustered(s, math.Max(0.25*limit, 3*err))
+	// A channel that grows later has a clock that runs fast: its frames are
+	// numbered faster than time goes on.
+	apart := 0.0
+	for m := range slope {
+		slope[m] -= middle
+	}
+	for _, m := range g.alive {
+		apart = math.Max(apart, math.Abs(slope[m]))
+	}
+	none := most < 0.4*limit || most < 5*err
+	if none && apart > math.Max(limit, 5*err) {
+		return // a source that moves: its share of the slopes hides that of the clocks
+	}
+	for _, m := range g.alive {
+		g.result.Channels[m].DriftPPM = known(slope[m] * 1e6)
+	}
+	if none {
+		return
+	}
 	var off []int
 	text := ""
 	for _, m := range g.alive {
-		// A channel that grows later has a clock that runs fast: its frames are
-		// numbered faster than time goes on.
-		ppm := (slope[m] - middle) * 1e6
-		g.result.Channels[m].DriftPPM = known(ppm)
+		ppm := slope[m] * 1e6
 		if math.Abs(ppm) > g.limits.DriftPPM && math.Abs(ppm) > 5e6*err {
 			off = append(off, m)
 			text += fmt.Sprintf(", channel %d by %+.2f ppm", g.mics[m].Channel, ppm)
@@ -389,7 +402,7 @@ func (g *geometry) drift() {
 	// Delays are judged without it.
 	for i, w := range g.list {
 		for _, m := range g.alive {
-			g.times[i][m] -= (slope[m] - middle) * (w.at - g.list[0].at)
+			g.times[i][m] -= slope[m] * (w.at - g.list[0].at)
 		}
 	}
 }

@@ -3,6 +3,7 @@ package quality
 import (
 	"math"
 	"slices"
+	"strings"
 	"testing"
 
 	"alidade/pkg/audio"
@@ -23,6 +24,52 @@ func TestLevelsAreThoseOfAES17(t *testing.T) {
 	for ch, want := range []float64{0, 3.0103} {
 		if got := r.Channels[ch].RMSDBFS; math.Abs(got-want) > 1e-4 {
 			t.Errorf("channel %d: %.4f dBFS, want %.4f", ch+1, got, want)
+		}
+	}
+}
+
+// Runs at full scale are clipping whatever their share, unless a limit above the
+// default says that they are allowed; what is expected is not what is the case.
+func TestTheLimitOfClippedFramesIsHeeded(t *testing.T) {
+	const rate, frames = 48000, 48000
+	b := audio.NewBlock(2, frames)
+	for i := range frames {
+		b.Channel(0)[i] = float32(0.5 * math.Sin(2*math.Pi*997*float64(i)/rate))
+		b.Channel(1)[i] = b.Channel(0)[i]
+	}
+	for i := 100; i < 104; i++ {
+		b.Channel(1)[i] = 1 // 4 frames of 48000: 0.008 %
+	}
+	for limit, want := range map[float64]string{0: "no run of three at full scale", 0.0001: "no run of three at full scale", 0.00005: "under 0.005 %", 0.01: "", -1: ""} {
+		q, err := New(line8()[:2], rate, Options{Limits: Limits{ClippedShare: limit}})
+		if err != nil {
+			t.Fatal(err)
+		}
+		if err := q.Write(b); err != nil {
+			t.Fatal(err)
+		}
+		r := q.Result()
+		if r.Channels[1].ClippedFrames != 4 || r.found(CodeClipped) != (want != "") {
+			t.Errorf("limit %g: %d frames, %v", limit, r.Channels[1].ClippedFrames, r.codes())
+		}
+		for _, f := range r.Findings {
+			if f.Code == CodeClipped && !strings.HasPrefix(f.Expected, want) {
+				t.Errorf("limit %g: expected %q, want %q", limit, f.Expected, want)
+			}
+		}
+	}
+}
+
+// A share of the moments is found within their bin: a hundred moments of one
+// level each 0.01 dB read it within 0.02 dB, not to the next half.
+func TestMomentLevelsLieWithinTheirBin(t *testing.T) {
+	var bins [momentBins]uint32
+	for i := range 300 {
+		bins[momentBin(math.Pow(10, (-40+0.01*float64(i)+0.005)/10)/2)]++
+	}
+	for _, share := range []float64{0.1, 0.5, 0.77} {
+		if got, want := momentLevel(&bins, share), -40+3*share; math.Abs(got-want) > 0.02 {
+			t.Errorf("%.0f %% lie under %.3f dBFS, want %.3f", 100*share, got, want)
 		}
 	}
 }

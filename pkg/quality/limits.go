@@ -12,9 +12,13 @@ import (
 // negative one turns the check off.
 type Limits rig.Limits
 
+// defaultClippedShare is the default limit of clipped frames. Up to it three
+// frames in a row at full scale are clipping whatever their share.
+const defaultClippedShare = 0.0005
+
 // withDefaults returns the limits with every zero field at its default.
 func (l Limits) withDefaults() Limits {
-	return l.Over(Limits{DeadDB: 35, SilentDBFS: -110, LevelDB: 1, ClippedShare: 0.0005, DC: 0.002, HumDB: 9, WindShare: 0.25,
+	return l.Over(Limits{DeadDB: 35, SilentDBFS: -110, LevelDB: 1, ClippedShare: defaultClippedShare, DC: 0.002, HumDB: 9, WindShare: 0.25,
 		HandlingDB: 20, NoiseFloorDB: 6, DelayUS: 6, DriftPPM: 0.5, ScalePct: 2, CoherenceLoss: 0.25})
 }
 

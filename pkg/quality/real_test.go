@@ -148,12 +148,14 @@ func TestRealRingOfSeven(t *testing.T) {
 		if name != "S000-200" && !wrong.found(CodeSwapped, 3, 4, 5, 6) {
 			t.Errorf("%s: rig with channels 3 and 4 exchanged: %v", name, wrong.codes())
 		}
-		// The capsules lie 4.9 to 8.8 dB below channel 7 (the data set's notes).
+		// The capsules lie 4.9 to 8.8 dB below channel 7 (the data set's notes), of
+		// the direct sound; the room's echoes and the other directions add 1.5 dB.
+		const low, high = -8.8 - 1.5, -4.9 + 1.5
 		for ch := range 6 {
 			db := *right.Channels[ch].LevelDB - *right.Channels[6].LevelDB
 			t.Logf("%s: channel %d: %.2f dB re channel 7", name, ch+1, db)
-			if !(db > -9.3-1 && db < -4.4+1) {
-				t.Errorf("%s: channel %d: %.2f dB re channel 7, want -8.8 to -4.9", name, ch+1, db)
+			if !(db > low && db < high) {
+				t.Errorf("%s: channel %d: %.2f dB re channel 7, want %.1f to %.1f", name, ch+1, db, low, high)
 			}
 		}
 	}

@@ -261,7 +261,7 @@ func momentBin(power float64) int {
 }
 
 // momentLevel is the level, dBFS, under which the given share of the moments of
-// a histogram lies.
+// a histogram lies, those of a bin taken as evenly spread over its 1 dB.
 func momentLevel(bins *[momentBins]uint32, share float64) float64 {
 	total := 0.0
 	for _, n := range bins {
@@ -269,8 +269,8 @@ func momentLevel(bins *[momentBins]uint32, share float64) float64 {
 	}
 	sum := 0.0
 	for b, n := range bins {
-		if sum += float64(n); sum >= share*total {
-			return float64(b) + 0.5 - 200
+		if sum += float64(n); n > 0 && sum >= share*total {
+			return float64(b) + 1 - (sum-share*total)/float64(n) - 200
 		}
 	}
 	return math.NaN()
