@@ -26,17 +26,18 @@ const (
 // Arrivals returns how the claps of a take, or its one steady sound, reached
 // microphones that stand about where at says, metres. known are their
 // corrections, nil for none; margin is how far microphones may lie from at,
-// metres. Claps that fewer than three microphones agree on are left out. The
-// error is a *RefusedError where nothing is left.
-func Arrivals(open func() (audio.Source, error), at []rig.Point, known []rig.Mic, speed, margin float64, o Options) ([]Arrival, error) {
+// metres. Claps that fewer than three microphones agree on are left out, and all
+// after the first 200: left is how many those are. The error is a *RefusedError
+// where nothing is left. Memory does not grow with how many claps there are.
+func Arrivals(open func() (audio.Source, error), at []rig.Point, known []rig.Mic, speed, margin float64, o Options) (list []Arrival, left int, err error) {
 	src, err := open()
 	if err != nil {
-		return nil, err
+		return nil, 0, err
 	}
 	rate := src.Format().Rate
 	across := rig.Spread(at).Extent/speed + 4*margin/speed
 	if o.MaxDelay = across + 100e-6; o.MaxDelay > 0.02 {
-		return nil, &RefusedError{Why: fmt.Sprintf("sound takes %.1f ms across the rig: places are looked for in rigs of at most 6 m", 1000*across)}
+		return nil, 0, &RefusedError{Why: fmt.Sprintf("sound takes %.1f ms across the rig: places are looked for in rigs of at most 6 m", 1000*across)}
 	}
 	o.anywhere = true
 	nowhere := &Expected{At: at, Speed: speed, Delay: make([]float64, len(at)), LevelDB: make([]float64, len(at))}
@@ -64,37 +65,36 @@ func Arrivals(open func() (audio.Source, error), at []rig.Point, known []rig.Mic
 	if !o.Claps {
 		a, err := one(open, 0)
 		if err != nil {
-			return nil, err
+			return nil, 0, err
 		}
-		return []Arrival{a}, nil
+		return []Arrival{a}, 0, nil
 	}
-	found, err := claps(src)
+	found, left, err := claps(src)
 	if err != nil {
-		return nil, err
+		return nil, 0, err
 	}
 	lead := int64((clapLead + across) * float64(rate))
-	cut := &cutter{length: int(lead) + int((across+clapTail)*float64(rate))}
+	var last error
+	cut := &cutter{length: int(lead) + int((across+clapTail)*float64(rate)), emit: func(j int, part audio.Block) error {
+		a, err := one(func() (audio.Source, error) { return audio.FromBlock(rate, part), nil }, float64(found[j])/float64(rate))
+		if err != nil {
+			last = err
+			return nil
+		}
+		list = append(list, a)
+		return nil
+	}}
 	for _, f := range found {
 		cut.first = append(cut.first, f-lead)
 	}
 	if src, err = open(); err != nil {
-		return nil, err
+		return nil, 0, err
 	}
-	if _, err := audio.Copy(src, 4096, cut); err != nil {
-		return nil, err
-	}
-	var list []Arrival
-	var last error
-	for j, part := range cut.parts {
-		a, err := one(func() (audio.Source, error) { return audio.FromBlock(rate, part), nil }, float64(found[j])/float64(rate))
-		if err != nil {
-			last = err
-			continue
-		}
-		list = append(list, a)
+	if err := cut.cut(src); err != nil {
+		return nil, 0, err
 	}
 	if len(list) == 0 {
-		return nil, &RefusedError{Why: fmt.Sprintf("not one of %d claps reaches the microphones alike: %v", len(found), last), Help: "clap louder, in quiet, farther from walls"}
+		return nil, left, &RefusedError{Why: fmt.Sprintf("not one of %d claps reaches the microphones alike: %v", len(found), last), Help: "clap louder, in quiet, farther from walls"}
 	}
-	return list, nil
+	return list, left, nil
 }

@@ -31,6 +31,10 @@ type Options struct {
 	// MaxDelay is the largest error of a delay that is looked for, seconds; 0
 	// means 1 ms.
 	MaxDelay float64
+	// Against is the microphone that the others are compared with, counted from
+	// 1; 0 is the mean of those that were heard, which stands in too where that
+	// one was not.
+	Against  int
 	anywhere bool // the direction is not known
 	// Responses asks for the channels' differences over frequency too.
 	Responses bool
@@ -57,7 +61,8 @@ const (
 )
 
 // Channel is what the take says about one microphone's channel against the
-// mean of those that were heard, after what the geometry explains.
+// mean of those that were heard, or against one of them (Options.Against), after
+// what the geometry explains.
 type Channel struct {
 	Heard bool
 	// LevelDB is how much louder the channel is than the others, dB, and Late
@@ -85,6 +90,7 @@ type Relative struct {
 	Channels      []Channel
 	Heard         int
 	Frames        int     // transforms, or claps
+	LeftOut       int     // claps that were not looked at: there were too many
 	Loud          float64 // share of the take in which the source sounds; 1 for claps
 	LowHz, HighHz float64 // where the middle 90 % of the information lies
 	// Fitted is the plane wave that fits what the rig's own corrections leave of
@@ -140,7 +146,7 @@ func Channels(open func() (audio.Source, error), e *Expected, known []rig.Mic, o
 	for try := range 3 {
 		var c *cross
 		if o.Claps {
-			c, r.Frames, err = l.impulsive(late)
+			c, r.Frames, r.LeftOut, err = l.impulsive(late)
 		} else if c, r.Loud, err = l.steady(late); err == nil {
 			r.Frames = c.frames
 		}
@@ -199,7 +205,7 @@ func (r *Relative) gather(f *factor, e *Expected, late []float64, known []rig.Mi
 	r.Channels, r.Heard = make([]Channel, mics), len(f.heard)
 	errs := f.errors()
 	r.LowHz, r.HighHz = errs[0].lowHz, errs[0].highHz
-	doubtLate, doubtLevel := e.doubts(f.heard)
+	doubtLate, doubtLevel := e.doubts(f.heard, -1)
 	n := float64(len(f.heard))
 	var meanLate, meanLevel, meanPower float64
 	for i, m := range f.heard {
@@ -239,10 +245,57 @@ func (r *Relative) gather(f *factor, e *Expected, late []float64, known []rig.Mi
 		}
 	}
 	if o.Responses {
-		return f.responses(r)
+		if err := f.responses(r); err != nil {
+			return err
+		}
+	}
+	if ref := o.Against - 1; ref >= 0 && r.Channels[ref].Heard {
+		r.against(ref, f.heard, e)
 	}
 	return nil
 }
+
+// against turns what was found against the mean of those heard into what it is
+// against one of them, which then is exact.
+func (r *Relative) against(ref int, heard []int, e *Expected) {
+	doubtLate, doubtLevel := e.doubts(heard, ref)
+	n := float64(len(heard))
+	// The variance against the mean of n is v = t·(1 - 2/n) + T of an own variance
+	// t, with T = Σt/n² = Σv/(n·(n - 1)): that of a difference is t + t of the
+	// other. It is not taken for less than it would be were all alike.
+	difference := func(of func(*Channel) float64) func(m int) float64 {
+		shared := 0.0
+		for _, m := range heard {
+			shared += sqr(of(&r.Channels[m])) / (n * (n - 1))
+		}
+		other := sqr(of(&r.Channels[ref]))
+		return func(m int) float64 {
+			both := sqr(of(&r.Channels[m])) + other
+			v := both * n / (n - 1)
+			if n > 2 {
+				v = math.Max(v, (both-2*shared)/(1-2/n))
+			}
+			return math.Sqrt(v)
+		}
+	}
+	level := difference(func(c *Channel) float64 { return c.LevelNoise })
+	late := difference(func(c *Channel) float64 { return c.LateNoise })
+	base := r.Channels[ref]
+	for _, m := range heard {
+		c := &r.Channels[m]
+		c.Late -= base.Late
+		c.LevelDB -= base.LevelDB
+		c.PowerDB -= base.PowerDB
+		if m == ref {
+			c.LevelNoise, c.LateNoise, c.LevelStd, c.LateStd = 0, 0, 0, 0
+			continue
+		}
+		c.LevelNoise, c.LateNoise = level(m), late(m)
+		c.LevelStd, c.LateStd = math.Hypot(c.LevelNoise, doubtLevel[m]), math.Hypot(c.LateNoise, doubtLate[m])
+	}
+}
+
+func sqr(x float64) float64 { return x * x }
 
 // reliable refuses what is too noisy or too narrow.
 func (r *Relative) reliable(f *factor) error {

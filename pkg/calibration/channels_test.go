@@ -230,3 +230,114 @@ func TestUncertaintyCoversWrongDirectionAndAir(t *testing.T) {
 	}
 }
 func sq(x float64) float64 { return x * x }
+
+// Against one microphone in place of the mean: the stated uncertainties are those
+// of the differences, which a source of noise of its own in either channel
+// makes larger, and the reference itself is exact.
+func TestUncertaintyAgainstOneMicrophone(t *testing.T) {
+	seeds := 2
+	if long() {
+		seeds = 40
+	}
+	const ref = 2
+	covered, count, narrow := 0, 0, 0
+	zg, zd := 0.0, 0.0
+	for seed := range seeds {
+		az := rig.WrapDeg(float64(seed)*37 - 90)
+		// The reference itself is noisy: what is stated against the mean is too little.
+		f := makeFaulty(t, solid8(0.08), uint64(seed+1), wideband(az, 10), -40, 1, nil)
+		rng := rand.New(rand.NewPCG(uint64(seed), 5))
+		for i, x := 0, f.block.Channel(ref); i < len(x); i++ {
+			x[i] += float32(0.03 * rng.NormFloat64())
+		}
+		e, err := Expect(f.rig.Positions(), f.rig.ReferencePoint(), rig.Degrees(az, 10), math.Inf(1), f.speed, Doubt{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		mean, err := Channels(f.open, e, nil, Options{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		r, err := Channels(f.open, e, nil, Options{Against: ref + 1})
+		if err != nil {
+			t.Fatal(err)
+		}
+		for m, c := range r.Channels {
+			if m == ref {
+				if c.LevelDB != 0 || c.Late != 0 || c.LevelStd != 0 || c.LateStd != 0 {
+					t.Errorf("seed %d: the reference itself: %+v", seed, c)
+				}
+				continue
+			}
+			dg := c.LevelDB - (f.gainDB[m] - f.gainDB[ref])
+			dd := c.Late - (f.delay[m] - f.delay[ref])
+			zg, zd = zg+sq(dg/c.LevelStd), zd+sq(dd/c.LateStd)
+			count += 2
+			for _, v := range []bool{math.Abs(dg) <= 2*c.LevelStd, math.Abs(dd) <= 2*c.LateStd} {
+				if v {
+					covered++
+				}
+			}
+			for _, v := range []bool{math.Abs(dg) <= 2*mean.Channels[m].LevelStd, math.Abs(dd) <= 2*mean.Channels[m].LateStd} {
+				if v {
+					narrow++
+				}
+			}
+			if math.Abs(c.LevelDB-(mean.Channels[m].LevelDB-mean.Channels[ref].LevelDB)) > 1e-12 {
+				t.Errorf("seed %d, channel %d: level %g dB", seed, m, c.LevelDB)
+			}
+		}
+	}
+	n := float64(count) / 2
+	t.Logf("%d figures, %d covered (%d by the uncertainties against the mean); errors over standard uncertainties, root mean square: gain %.2f, delay %.2f", count, covered, narrow, math.Sqrt(zg/n), math.Sqrt(zd/n))
+	// Seven of a seed share the reference's error: chance takes more from them.
+	least := 0.95 - 2.6*math.Sqrt(0.95*0.05/float64(2*seeds))
+	if got := float64(covered) / float64(count); got < least || long() && (zg/n > 1.44 || zd/n > 1.44 || zg/n < 0.49 || zd/n < 0.49) {
+		t.Errorf("uncertainties cover %.3f, want %.3f, with errors of their size", got, least)
+	}
+}
+
+// What is not known of direction, distance, air and places, drawn at random
+// 4000 times: the spread of the differences that the geometry makes of it is what
+// is stated, against the mean and against one microphone. The references are
+// the exact arrivals; chance is 1.1 % of a standard deviation.
+func TestDoubtsAreTheSpreadOfWhatIsNotKnown(t *testing.T) {
+	at := solid8(0.08)
+	doubt := Doubt{Direction: 0.5 * deg, Distance: 0.1, Speed: 0.5 / 293.15, Placement: 0.0005}
+	e, err := Expect(at, rig.Point{}, rig.Degrees(40, 20), 3, 343, doubt)
+	if err != nil {
+		t.Fatal(err)
+	}
+	among := []int{0, 1, 2, 4, 5, 6, 7}
+	rng := rand.New(rand.NewPCG(8, 9))
+	const draws = 4000
+	sum := map[int][]float64{-1: make([]float64, len(at)), 4: make([]float64, len(at))}
+	u := rig.Degrees(40, 20).Unit()
+	across := rig.Degrees(130, 0).Unit()
+	for range draws {
+		d := u.Add(across.Scale(doubt.Direction * rng.NormFloat64())).Add(u.Cross(across).Scale(doubt.Direction * rng.NormFloat64()))
+		source := d.Scale((3 + doubt.Distance*rng.NormFloat64()) / d.Norm())
+		speed := 343 * (1 + doubt.Speed*rng.NormFloat64())
+		late := make([]float64, len(at))
+		mean := 0.0
+		for m, p := range at {
+			p = p.Add(rig.Point{X: rng.NormFloat64(), Y: rng.NormFloat64(), Z: rng.NormFloat64()}.Scale(doubt.Placement))
+			late[m] = (p.Distance(source)-source.Norm())/speed - e.Delay[m]
+		}
+		for _, m := range among {
+			mean += late[m] / float64(len(among))
+		}
+		for m := range at {
+			sum[-1][m] += sq(late[m]-mean) / draws
+			sum[4][m] += sq(late[m]-late[4]) / draws
+		}
+	}
+	for _, against := range []int{-1, 4} {
+		stated, _ := e.doubts(among, against)
+		for _, m := range among {
+			if got := math.Sqrt(sum[against][m]); math.Abs(got-stated[m]) > 0.04*got+1e-15 {
+				t.Errorf("against %d, microphone %d: spread %.3f µs, stated %.3f µs", against, m, 1e6*got, 1e6*stated[m])
+			}
+		}
+	}
+}

@@ -111,8 +111,9 @@ func Expect(at []rig.Point, ref rig.Point, d rig.Direction, distance, speed floa
 }
 
 // doubts returns the standard uncertainty of each microphone's delay, seconds,
-// and level, dB, against the mean over the microphones listed in among.
-func (e *Expected) doubts(among []int) (delay, level []float64) {
+// and level, dB, against the mean over the microphones listed in among, or
+// against the microphone against where that is not negative.
+func (e *Expected) doubts(among []int, against int) (delay, level []float64) {
 	delay, level = make([]float64, len(e.At)), make([]float64, len(e.At))
 	n := float64(len(among))
 	for _, mv := range e.Moves {
@@ -121,13 +122,23 @@ func (e *Expected) doubts(among []int) (delay, level []float64) {
 			md += mv.Delay[m] / n
 			ml += mv.LevelDB[m] / n
 		}
+		if against >= 0 {
+			md, ml = mv.Delay[against], mv.LevelDB[against]
+		}
 		for m := range e.At {
 			delay[m] += (mv.Delay[m] - md) * (mv.Delay[m] - md)
 			level[m] += (mv.LevelDB[m] - ml) * (mv.LevelDB[m] - ml)
 		}
 	}
 	for m := range e.At {
-		delay[m] = math.Sqrt(delay[m] + e.placement*e.placement*(1-1/n))
+		share := 1 - 1/n
+		switch {
+		case m == against:
+			share = 0
+		case against >= 0:
+			share = 2 // one place and the other
+		}
+		delay[m] = math.Sqrt(delay[m] + e.placement*e.placement*share)
 		level[m] = math.Sqrt(level[m])
 	}
 	return delay, level

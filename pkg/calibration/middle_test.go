@@ -2,8 +2,11 @@ package calibration
 
 import (
 	"math/rand/v2"
+	"slices"
 	"testing"
 	"time"
+
+	"alidade/pkg/audio"
 )
 
 // The running median is the median of all so far, by sorting them.
@@ -44,5 +47,50 @@ func TestLongToneCostsInProportion(t *testing.T) {
 	t.Logf("40000 frames in %s, 80000 in %s: %.2f times", short, long, long.Seconds()/short.Seconds())
 	if long > 3*short {
 		t.Errorf("twice the length takes %.2f times the time, want at most 3", long.Seconds()/short.Seconds())
+	}
+}
+
+// Stretches come out as they lie in the stream, with silence outside it, and
+// only those that overlap are kept at a time; claps beyond the first 200 are
+// counted.
+func TestCutterHandsOutStretches(t *testing.T) {
+	const frames = 20_000
+	b := audio.NewBlock(2, frames)
+	for i := range frames {
+		b.Channel(0)[i], b.Channel(1)[i] = float32(i+1), -float32(i+1)
+	}
+	firsts := []int64{-30, 10, 60, 5000, 8100, 19_950}
+	next, most := 0, 0
+	c := &cutter{first: firsts, length: 100}
+	c.emit = func(j int, part audio.Block) error {
+		if j != next || part.Frames() != 100 {
+			t.Fatalf("stretch %d of %d frames, want stretch %d", j, part.Frames(), next)
+		}
+		next, most = next+1, max(most, len(c.open)+len(c.spare))
+		for i := range 100 {
+			want := float32(0)
+			if at := firsts[j] + int64(i); at >= 0 && at < frames {
+				want = float32(at + 1)
+			}
+			if part.Channel(0)[i] != want || part.Channel(1)[i] != -want {
+				t.Fatalf("stretch %d, frame %d: %g, want %g", j, i, part.Channel(0)[i], want)
+			}
+		}
+		return nil
+	}
+	if err := c.cut(audio.FromBlock(48000, b)); err != nil {
+		t.Fatal(err)
+	}
+	if next != len(firsts) || most > 4 {
+		t.Errorf("%d stretches, %d kept at a time", next, most)
+	}
+
+	clicks := audio.NewBlock(1, 48000*21)
+	for k := range 205 {
+		clicks.Channel(0)[4800*(k+1)] = 0.5
+	}
+	found, left, err := claps(audio.FromBlock(48000, clicks))
+	if err != nil || len(found) != MaxClaps || left != 5 || !slices.IsSorted(found) {
+		t.Errorf("%d claps, %d left out (%v), want 200 and 5", len(found), left, err)
 	}
 }

@@ -17,13 +17,15 @@ const (
 	directFade   = 0.00075
 )
 
+// MaxClaps is how many short sounds of a take are looked at, the first ones.
+const MaxClaps = 200
+
 const (
 	envelopeStep  = 0.0005 // seconds a step of the envelope
 	maxClapTake   = 3600   // seconds of a take whose claps are looked for
-	maxClaps      = 200
-	clapRise      = 20   // of a clap over the 20 ms before it, a factor of power
-	clapOverFloor = 10   // of a clap over the median of the take
-	clapRange     = 1e-3 // of the strongest clap's power: weaker ones are left out
+	clapRise      = 20     // of a clap over the 20 ms before it, a factor of power
+	clapOverFloor = 10     // of a clap over the median of the take
+	clapRange     = 1e-3   // of the strongest clap's power: weaker ones are left out
 )
 
 // envelope is a sink that keeps the power of the first difference of a stream,
@@ -120,51 +122,97 @@ func (e *envelope) onsets() []int64 {
 	return out
 }
 
-// claps returns where the short sounds of a stream begin, frames.
-func claps(src audio.Source) ([]int64, error) {
+// claps returns where the short sounds of a stream begin, frames, and how many
+// more there are than are looked at.
+func claps(src audio.Source) (found []int64, left int, err error) {
 	rate := float64(src.Format().Rate)
 	e := &envelope{step: max(1, int(envelopeStep*rate+0.5))}
 	limit := int64(maxClapTake * rate)
 	frames, err := audio.Copy(audio.Section(src, 0, limit+1), 4096, e)
 	if err != nil {
-		return nil, err
+		return nil, 0, err
 	}
 	if frames > limit {
-		return nil, &RefusedError{Why: fmt.Sprintf("claps are looked for in takes of at most %d minutes", maxClapTake/60), Help: "give a part of the take with --excerpt A..B"}
+		return nil, 0, &RefusedError{Why: fmt.Sprintf("claps are looked for in takes of at most %d minutes", maxClapTake/60), Help: "give a part of the take with --excerpt A..B"}
 	}
-	found := e.onsets()
+	found = e.onsets()
 	if len(found) == 0 {
-		return nil, &RefusedError{Why: fmt.Sprintf("no clap: nothing rises %.0f dB above what sounds before it", 10*math.Log10(clapRise)), Help: "a clap is a short, loud sound in quiet; a steady sound goes without --sound claps"}
+		return nil, 0, &RefusedError{Why: fmt.Sprintf("no clap: nothing rises %.0f dB above what sounds before it", 10*math.Log10(clapRise)), Help: "a clap is a short, loud sound in quiet; a steady sound goes without --sound claps"}
 	}
-	if len(found) > maxClaps {
-		found = found[:maxClaps]
-	}
-	return found, nil
+	left = max(0, len(found)-MaxClaps)
+	return found[:len(found)-left], left, nil
 }
 
-// cutter is a sink that keeps some stretches of a stream.
+// cutter is a sink that hands out some stretches of a stream, in their order, as
+// soon as they are whole; what lies outside the stream is silence. It keeps
+// those that overlap.
 type cutter struct {
 	first  []int64 // of each stretch, ascending
 	length int
+	emit   func(j int, part audio.Block) error
 	at     int64
-	parts  []audio.Block
+	next   int           // the first that was not handed out
+	open   []audio.Block // of next and those after it
+	spare  []audio.Block
 }
 
 // Write implements audio.Sink.
 func (c *cutter) Write(src audio.Block) error {
 	n := int64(src.Frames())
-	for j, first := range c.first {
-		from, to := max(first, c.at), min(first+int64(c.length), c.at+n)
-		if from >= to {
-			continue
+	for j := c.next; j < len(c.first) && c.first[j] < c.at+n; j++ {
+		first := c.first[j]
+		c.reach(j, src.Channels())
+		if from, to := max(first, c.at), min(first+int64(c.length), c.at+n); from < to {
+			c.open[j-c.next].Slice(int(from-first), int(to-first)).CopyFrom(src.Slice(int(from-c.at), int(to-c.at)))
 		}
-		for len(c.parts) <= j {
-			c.parts = append(c.parts, audio.NewBlock(src.Channels(), c.length))
-		}
-		c.parts[j].Slice(int(from-first), int(to-first)).CopyFrom(src.Slice(int(from-c.at), int(to-c.at)))
 	}
 	c.at += n
+	for c.next < len(c.first) && len(c.open) > 0 && c.first[c.next]+int64(c.length) <= c.at {
+		if err := c.give(); err != nil {
+			return err
+		}
+	}
 	return nil
+}
+
+// reach opens the stretches up to j.
+func (c *cutter) reach(j, channels int) {
+	for len(c.open) <= j-c.next {
+		if k := len(c.spare) - 1; k >= 0 {
+			for ch := range channels {
+				clear(c.spare[k].Channel(ch))
+			}
+			c.open, c.spare = append(c.open, c.spare[k]), c.spare[:k]
+			continue
+		}
+		c.open = append(c.open, audio.NewBlock(channels, c.length))
+	}
+}
+
+// give hands out the next stretch.
+func (c *cutter) give() error {
+	part := c.open[0]
+	err := c.emit(c.next, part)
+	c.next, c.open, c.spare = c.next+1, c.open[1:], append(c.spare, part)
+	return err
+}
+
+// close hands out the stretches that the stream ended in.
+func (c *cutter) close() error {
+	for len(c.open) > 0 {
+		if err := c.give(); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// cut copies src into the cutter.
+func (c *cutter) cut(src audio.Source) error {
+	if _, err := audio.Copy(src, 4096, c); err != nil {
+		return err
+	}
+	return c.close()
 }
 
 // directWindow is the window of the direct sound: n weights, the onset at
@@ -185,8 +233,9 @@ func directWindow(rate float64) (window []float64, before int) {
 }
 
 // impulsive returns the cross-spectra of the direct sound of every clap, with
-// the channels lined up by late, and how many claps there are.
-func (l *listening) impulsive(late []float64) (*cross, int, error) {
+// the channels lined up by late, how many claps there are, and how many more were
+// not looked at.
+func (l *listening) impulsive(late []float64) (c *cross, taken, left int, err error) {
 	rate := float64(l.format.Rate)
 	lined := func() (audio.Source, error) {
 		src, err := l.open()
@@ -197,38 +246,28 @@ func (l *listening) impulsive(late []float64) (*cross, int, error) {
 	}
 	src, err := lined()
 	if err != nil {
-		return nil, 0, err
+		return nil, 0, 0, err
 	}
-	found, err := claps(src)
+	found, left, err := claps(src)
 	if err != nil {
-		return nil, 0, err
+		return nil, 0, 0, err
 	}
 	window, before := directWindow(rate)
 	size := 64
 	for size < 2*len(window) {
 		size *= 2
 	}
-	c, err := newCross(l.format.Channels, size, rate, math.Max(l.fromHz, 1/(directBefore+directAfter)), l.toHz)
+	c, err = newCross(l.format.Channels, size, rate, math.Max(l.fromHz, 1/(directBefore+directAfter)), l.toHz)
 	if err != nil {
-		return nil, 0, err
-	}
-	cut := &cutter{length: len(window)}
-	for _, f := range found {
-		cut.first = append(cut.first, f-int64(before))
-	}
-	if src, err = lined(); err != nil {
-		return nil, 0, err
-	}
-	if _, err := audio.Copy(src, 4096, cut); err != nil {
-		return nil, 0, err
+		return nil, 0, 0, err
 	}
 	fft, err := spectral.NewFFT[float32](size)
 	if err != nil {
-		return nil, 0, err
+		return nil, 0, 0, err
 	}
 	re, im := planes(c.mics, fft.Bins()), planes(c.mics, fft.Bins())
 	x := make([]float32, size)
-	for _, part := range cut.parts {
+	cut := &cutter{length: len(window), emit: func(_ int, part audio.Block) error {
 		for m := range c.mics {
 			clear(x)
 			for i, v := range part.Channel(m) {
@@ -237,6 +276,16 @@ func (l *listening) impulsive(late []float64) (*cross, int, error) {
 			fft.Forward(re[m], im[m], x)
 		}
 		c.add(re, im)
+		return nil
+	}}
+	for _, f := range found {
+		cut.first = append(cut.first, f-int64(before))
+	}
+	if src, err = lined(); err != nil {
+		return nil, 0, 0, err
+	}
+	if err := cut.cut(src); err != nil {
+		return nil, 0, 0, err
 	}
 	sum2, sum4 := 0.0, 0.0
 	for _, w := range window {
@@ -244,7 +293,7 @@ func (l *listening) impulsive(late []float64) (*cross, int, error) {
 		sum4 += w * w * w * w
 	}
 	c.weight = float64(c.frames) * sum2 * sum2 / sum4 / float64(size)
-	return c, len(cut.parts), nil
+	return c, c.frames, left, nil
 }
 
 // planes returns n slices of so many zeros.

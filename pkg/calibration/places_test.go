@@ -283,7 +283,7 @@ func TestArrivalsOfClaps(t *testing.T) {
 				s.Room = &scenario.Room{SizeM: []float64{7.1, 5.7, 3.4}, RigAtM: []float64{3.2, 2.6, 1.5}, RT60S: []float64{0.4}, MaxOrder: func() *int { n := 6; return &n }()}
 			}
 		})
-		found, err := Arrivals(f.open, at, nil, f.speed, 0.02, Options{Claps: true})
+		found, _, err := Arrivals(f.open, at, nil, f.speed, 0.02, Options{Claps: true})
 		if err != nil {
 			t.Fatal(err)
 		}

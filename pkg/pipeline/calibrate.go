@@ -152,7 +152,8 @@ func (c *calibrating) name() error {
 // explained gives the refusal of a take its place and what helps.
 func (c *calibrating) explained(err error) error {
 	var refused *calibration.RefusedError
-	if errors.As(err, &refused) {
+	var placed *HintedError // by the take that it is about
+	if errors.As(err, &refused) && !errors.As(err, &placed) {
 		return &HintedError{Err: fmt.Errorf("%s: carries no calibration: %w", c.takes[len(c.takes)-1].path(), refused), Hint: refused.Help}
 	}
 	return err
@@ -265,14 +266,19 @@ func (c *calibrating) channels(e *calibration.Expected) (*rig.Rig, []string, err
 	if to := c.set.ToHz; to > 0.45*float64(t.header.Rate) {
 		return nil, nil, &UsageError{Err: fmt.Errorf("--to-hz %g: above 0.45 of the take's rate of %d Hz", to, t.header.Rate)}
 	}
+	against := 0
+	if m, ok := c.rig.Find(c.set.RelativeTo); ok && c.set.RelativeTo != RelativeToMean {
+		against = 1 + slices.Index(used, m)
+	}
 	r, err := calibration.Channels(open, e, mics, calibration.Options{
-		Claps: c.set.Sound == SoundClaps, FromHz: c.set.FromHz, ToHz: c.set.ToHz, MaxDelay: c.set.MaxDelayUS / 1e6, Responses: c.set.Responses,
+		Claps: c.set.Sound == SoundClaps, FromHz: c.set.FromHz, ToHz: c.set.ToHz, MaxDelay: c.set.MaxDelayUS / 1e6, Responses: c.set.Responses, Against: against,
 	})
 	if err != nil {
 		return nil, nil, err
 	}
 	c.res.Source.MisfitUS, c.res.Source.ChannelsHeard = number(1e6*r.Misfit), r.Heard
 	c.res.Heard = &Listening{Sound: c.set.Sound, Frames: r.Frames, ShareTaken: r.Loud, LowHz: r.LowHz, HighHz: r.HighHz}
+	c.clapsLeftOut(t, r.LeftOut)
 	changed := c.correct(used, r)
 	if err := c.judge(used, r); err != nil {
 		return nil, nil, err
@@ -367,8 +373,8 @@ func polarityWord(inverted bool) string {
 	return "normal"
 }
 
-// judge adds what a person should know, and refuses where too few channels
-// were heard.
+// judge adds what a person should know of the corrections that were filled in,
+// and refuses where too few channels were heard.
 func (c *calibrating) judge(used []int, r *calibration.Relative) error {
 	var silent, uncertain, large []int
 	for i, m := range used {
@@ -379,7 +385,7 @@ func (c *calibrating) judge(used []int, r *calibration.Relative) error {
 		case v.Opposite >= uncertainPolarity:
 			uncertain = append(uncertain, ch)
 		}
-		if v := r.Channels[i]; v.Heard && math.Abs(v.Late+c.rig.Mics[m].Delay) > math.Max(50e-6, 6*v.LateStd) {
+		if v, e := r.Channels[i], c.res.Microphones[m]; math.Abs(e.DelayUS-e.DelayBeforeUS) > math.Max(50, 6e6*v.LateStd) {
 			large = append(large, ch)
 		}
 	}

@@ -2,9 +2,11 @@ package pipeline
 
 import (
 	"context"
+	"errors"
 	"math"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"testing"
 
@@ -216,6 +218,100 @@ func TestCalibrationHeedsClocks(t *testing.T) {
 			if math.Abs(mic.DelayUS-want) > 0.3 {
 				t.Errorf("excerpt %q, microphone %s: delay %.2f µs, want %.2f µs", excerpt, mic.Name, mic.DelayUS, want)
 			}
+		}
+	}
+}
+
+// delay-large is about the change that is written: of a late channel that the
+// others are compared with, the others change; of delays that are kept, none.
+func TestLargeDelaysAreThoseWritten(t *testing.T) {
+	take, rigPath := madeTake(t, false, func(s *scenario.Scenario) {
+		s.Faults = []scenario.Fault{{Channels: []int{1}, DelayUS: 120}}
+	})
+	for _, c := range []struct {
+		o    CalibrateOptions
+		want []int
+	}{{CalibrateOptions{}, []int{1}}, {CalibrateOptions{RelativeTo: "A"}, []int{2, 3, 4, 5, 6}}, {CalibrateOptions{Keep: KeepDelay}, nil}} {
+		c.o.Toward, c.o.Overwrite = "60", true
+		res, err := Calibrate(context.Background(), CalibrateSpec{Take: []string{take}, RigPath: rigPath, Options: c.o}, Watch{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		var got []int
+		for _, f := range res.Findings {
+			if f.Code == "delay-large" {
+				got = f.Channels
+			}
+		}
+		if !slices.Equal(got, c.want) {
+			t.Errorf("relative to %q, keep %q: large in %v, want %v", c.o.RelativeTo, c.o.Keep, got, c.want)
+		}
+		if a := res.Microphones[0]; c.o.RelativeTo == "A" && (*a.DelayUncertaintyUS != 0 || *a.GainUncertaintyDB != 0) {
+			t.Errorf("the reference itself: ± %g µs, ± %g dB", *a.DelayUncertaintyUS, *a.GainUncertaintyDB)
+		}
+	}
+}
+
+// A calibrator seated three times: the mean of all, its uncertainty by their
+// spread (JCGM 100:2008, 4.2: the experimental standard deviation), in whatever
+// order the takes are named; refused where any two lie too far apart.
+func TestSeatingsOfACalibrator(t *testing.T) {
+	dir := t.TempDir()
+	rigPath := filepath.Join(dir, "pair.yaml")
+	if err := os.WriteFile(rigPath, []byte("rig: pair\nline: {count: 2, spacing_mm: 40}\n"), 0o666); err != nil {
+		t.Fatal(err)
+	}
+	seat := func(name string, dbfs float64) string {
+		b := audio.NewBlock(2, 2*48000)
+		for i := range b.Frames() {
+			b.Channel(0)[i] = float32(math.Pow(10, dbfs/20) * math.Sin(2*math.Pi*1000*float64(i)/48000))
+		}
+		path := filepath.Join(dir, name)
+		f, err := os.Create(path)
+		if err != nil {
+			t.Fatal(err)
+		}
+		w, err := wav.NewWriter(f, wav.Format{Rate: 48000, Channels: 2, Encoding: wav.Float32}, wav.Option{})
+		if err == nil {
+			err = errors.Join(w.Write(b), w.Close(), f.Close())
+		}
+		if err != nil {
+			t.Fatal(err)
+		}
+		return path
+	}
+	calibrate := func(takes ...string) (*Calibration, error) {
+		spec := CalibrateSpec{Take: takes[:1], RigPath: rigPath, Options: CalibrateOptions{CalibratorDB: 94, Overwrite: true}}
+		for _, p := range takes[1:] {
+			spec.More = append(spec.More, []string{p})
+		}
+		return Calibrate(context.Background(), spec, Watch{})
+	}
+	a, b, c, far := seat("a.wav", -26), seat("b.wav", -26.2), seat("c.wav", -25.95), seat("far.wav", -26.27)
+	var first *CalibratedMic
+	for _, takes := range [][]string{{a, b, c}, {c, b, a}, {b, a, c}} {
+		res, err := calibrate(takes...)
+		if err != nil {
+			t.Fatal(err)
+		}
+		m := res.Microphones[0]
+		if math.Abs(*m.SensitivityDBFS+26.05) > 0.001 || len(m.Tones) != 3 {
+			t.Errorf("%.4f dBFS of %d seatings, want -26.05 dBFS of 3", *m.SensitivityDBFS, len(m.Tones))
+		}
+		// The standard deviation of 0, 0.2 and -0.05 dB is 0.1323 dB.
+		if want := 2 * math.Hypot(0.25/math.Sqrt(3), 0.1323); math.Abs(*m.SensitivityUncertaintyDB-want) > 0.001 {
+			t.Errorf("± %.4f dB, want ± %.4f dB", *m.SensitivityUncertaintyDB, want)
+		}
+		if first == nil {
+			first = &m
+		} else if *m.SensitivityDBFS != *first.SensitivityDBFS || *m.SensitivityUncertaintyDB != *first.SensitivityUncertaintyDB {
+			t.Errorf("in another order %g ± %g dBFS, was %g ± %g dBFS", *m.SensitivityDBFS, *m.SensitivityUncertaintyDB, *first.SensitivityDBFS, *first.SensitivityUncertaintyDB)
+		}
+	}
+	// Each lies within 0.3 dB of the first, the outermost two do not.
+	for _, takes := range [][]string{{a, far, c}, {c, far, a}, {far, a, c}} {
+		if _, err := calibrate(takes...); err == nil || !strings.Contains(err.Error(), "c.wav: carries no calibration: channel 1 reads -25.95 dBFS here and -26.27 dBFS in "+far) {
+			t.Errorf("too far apart: %v", err)
 		}
 	}
 }

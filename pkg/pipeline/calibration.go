@@ -84,10 +84,11 @@ type CalibratedMic struct {
 	ResponseTaps int              `json:"response_taps,omitempty"`
 
 	// Of levels: what 94 dB SPL reads before the gain correction.
-	SensitivityBeforeDBFS    Number          `json:"sensitivity_before_dbfs,omitempty"`
-	SensitivityDBFS          Number          `json:"sensitivity_dbfs,omitempty"`
-	SensitivityUncertaintyDB Number          `json:"sensitivity_uncertainty_db,omitempty"`
-	Tone                     *CalibratorTone `json:"tone,omitempty"`
+	SensitivityBeforeDBFS    Number `json:"sensitivity_before_dbfs,omitempty"`
+	SensitivityDBFS          Number `json:"sensitivity_dbfs,omitempty"`
+	SensitivityUncertaintyDB Number `json:"sensitivity_uncertainty_db,omitempty"`
+	// Tones are the seatings of the calibrator, one a take that has one.
+	Tones []CalibratorTone `json:"tones,omitempty"`
 
 	// Of positions: millimetres. The uncertainty is that of the rig's shape,
 	// shift and turn of the whole left out.

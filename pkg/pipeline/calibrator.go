@@ -16,7 +16,7 @@ const (
 	DefaultCalibratorClass = "1"
 )
 
-// maxToneDifference is how far two takes of one channel may lie apart, dB.
+// maxToneDifference is how far the seatings on one channel may lie apart, dB.
 const maxToneDifference = 0.3
 
 // levels finds sensitivities from a calibrator on one microphone after the
@@ -38,11 +38,7 @@ func (c *calibrating) levels() (*rig.Rig, []string, error) {
 			return nil, nil, &UsageError{Err: fmt.Errorf("--channel %d: rig %s has no microphone in use on it", ch, c.rig.Name)}
 		}
 	}
-	type heard struct {
-		tone calibration.Tone
-		take string
-	}
-	best := make([]*heard, len(used))
+	best := make([]seatings, len(used))
 	why := make([]string, len(used))
 	for _, t := range c.takes {
 		open, err := c.raw(t, "listening")
@@ -64,24 +60,21 @@ func (c *calibrating) levels() (*rig.Rig, []string, error) {
 			return nil, nil, err
 		}
 		for i, tone := range tones {
-			switch {
-			case !tone.Found:
+			if !tone.Found {
 				why[i] = tone.Why
-			case best[i] == nil:
-				best[i] = &heard{tone, t.path()}
-			case math.Abs(best[i].tone.DBFS-tone.DBFS) > maxToneDifference:
-				return nil, nil, explainedFor(t, &calibration.RefusedError{
-					Why:  fmt.Sprintf("channel %d reads %.2f dBFS here and %.2f dBFS in %s", c.rig.Mics[used[i]].Channel, tone.DBFS, best[i].tone.DBFS, best[i].take),
-					Help: "seat the calibrator again, and leave the gains of the recorder alone in between",
-				})
-			default:
-				best[i].tone.SensitivityDBFS = (best[i].tone.SensitivityDBFS + tone.SensitivityDBFS) / 2
+				continue
 			}
+			best[i].tones, best[i].takes = append(best[i].tones, tone), append(best[i].takes, t)
+		}
+	}
+	for i := range best {
+		if err := best[i].settle(c.rig.Mics[used[i]].Channel, cal); err != nil {
+			return nil, nil, err
 		}
 	}
 	found := 0
 	for _, b := range best {
-		if b != nil {
+		if len(b.tones) > 0 {
 			found++
 		}
 	}
@@ -96,11 +89,11 @@ func (c *calibrating) levels() (*rig.Rig, []string, error) {
 	changed.Mics = slices.Clone(changed.Mics)
 	var missing []int
 	for i, m := range used {
-		if best[i] == nil {
+		if len(best[i].tones) == 0 {
 			missing = append(missing, changed.Mics[m].Channel)
 			continue
 		}
-		v := rounded(best[i].tone.SensitivityDBFS, 3)
+		v := rounded(best[i].sensitivity, 3)
 		changed.Mics[m].SensitivityDBFS = &v
 	}
 	gains := len(missing) == 0 && !slices.Contains(c.set.keep, KeepGain)
@@ -123,18 +116,20 @@ func (c *calibrating) levels() (*rig.Rig, []string, error) {
 			PolarityBefore: polarityWord(old.Inverted), Polarity: polarityWord(mic.Inverted),
 			SensitivityBeforeDBFS: old.SensitivityDBFS, SensitivityDBFS: mic.SensitivityDBFS,
 		}
-		if i := slices.Index(used, m); i >= 0 && best[i] != nil {
-			tone := best[i].tone
+		if i := slices.Index(used, m); i >= 0 && len(best[i].tones) > 0 {
+			seated := best[i]
 			e.Heard = true
-			e.SensitivityUncertaintyDB = number(2 * tone.Std)
-			e.Tone = &CalibratorTone{Take: best[i].take, FromS: tone.From, ToS: tone.To, DBFS: tone.DBFS, StdDB: tone.StdDB, Hz: tone.Hz}
+			e.SensitivityUncertaintyDB = number(2 * seated.std)
+			for k, tone := range seated.tones {
+				e.Tones = append(e.Tones, CalibratorTone{Take: seated.takes[k].path(), FromS: tone.From, ToS: tone.To, DBFS: tone.DBFS, StdDB: tone.StdDB, Hz: tone.Hz})
+			}
 			was := "none"
 			if old.SensitivityDBFS != nil {
 				was = fmt.Sprintf("%g", *old.SensitivityDBFS)
 			}
-			notes[m] = fmt.Sprintf("was sensitivity_dbfs %s, gain_db %g; sensitivity now ± %.2f dB", was, old.GainDB, 2*tone.Std)
+			notes[m] = fmt.Sprintf("was sensitivity_dbfs %s, gain_db %g; sensitivity now ± %.2f dB", was, old.GainDB, 2*seated.std)
 			if gains {
-				e.GainUncertaintyDB = number(2 * math.Sqrt2 * math.Max(tone.StdDB, 0.02))
+				e.GainUncertaintyDB = number(2 * math.Sqrt2 * math.Max(seated.spread, 0.02))
 			}
 		}
 		c.res.Microphones = append(c.res.Microphones, e)
@@ -151,4 +146,53 @@ func (c *calibrating) levels() (*rig.Rig, []string, error) {
 	}
 	sortFindings(c.res.Findings)
 	return &changed, notes, nil
+}
+
+// seatings are the times that the calibrator sat on one channel, in the order of
+// the takes.
+type seatings struct {
+	tones []calibration.Tone
+	takes []*take
+
+	sensitivity float64 // dBFS: the mean
+	spread, std float64 // between seatings or within one, and the standard uncertainty, dB
+}
+
+// settle takes the mean of the seatings and refuses those that lie too far apart,
+// whatever their order.
+func (s *seatings) settle(channel int, cal calibration.Calibrator) error {
+	if len(s.tones) == 0 {
+		return nil
+	}
+	low, high := 0, 0
+	var values []float64
+	for k, tone := range s.tones {
+		values = append(values, tone.SensitivityDBFS)
+		s.spread = math.Max(s.spread, tone.StdDB)
+		if tone.DBFS < s.tones[low].DBFS {
+			low = k
+		}
+		if tone.DBFS > s.tones[high].DBFS {
+			high = k
+		}
+	}
+	if s.tones[high].DBFS-s.tones[low].DBFS > maxToneDifference {
+		return explainedFor(s.takes[high], &calibration.RefusedError{
+			Why:  fmt.Sprintf("channel %d reads %.2f dBFS here and %.2f dBFS in %s", channel, s.tones[high].DBFS, s.tones[low].DBFS, s.takes[low].path()),
+			Help: "seat the calibrator again, and leave the gains of the recorder alone in between",
+		})
+	}
+	slices.Sort(values) // sums do not depend on the order of the takes
+	n := float64(len(values))
+	for _, v := range values {
+		s.sensitivity += v / n
+	}
+	square := 0.0
+	for _, v := range values {
+		square += (v - s.sensitivity) * (v - s.sensitivity) / math.Max(1, n-1)
+	}
+	s.spread = math.Max(s.spread, math.Sqrt(square))
+	// What the class allows is spread evenly [JCGM 100:2008, 4.3.7].
+	s.std = math.Hypot(cal.Tolerance/math.Sqrt(3), s.spread)
+	return nil
 }

@@ -30,12 +30,13 @@ func (c *calibrating) places() (*rig.Rig, []string, error) {
 		if to := c.set.ToHz; to > 0.45*float64(t.header.Rate) {
 			return nil, nil, &UsageError{Err: fmt.Errorf("--to-hz %g: above 0.45 of the rate of %s, %d Hz", to, t.path(), t.header.Rate)}
 		}
-		found, err := calibration.Arrivals(open, at, mics, c.rig.speed, std, calibration.Options{
+		found, left, err := calibration.Arrivals(open, at, mics, c.rig.speed, std, calibration.Options{
 			Claps: c.set.Sound == SoundClaps, FromHz: c.set.FromHz, ToHz: c.set.ToHz,
 		})
 		if err != nil {
 			return nil, nil, explainedFor(t, err)
 		}
+		c.clapsLeftOut(t, left)
 		start, _, err := c.as(t).excerpt()
 		if err != nil {
 			return nil, nil, err
@@ -86,6 +87,14 @@ func (c *calibrating) places() (*rig.Rig, []string, error) {
 		notes = append(notes, fmt.Sprintf("was at_mm [%g, %g, %g]; now ± [%.1f, %.1f, %.1f]", rounded(b[0], 4), rounded(b[1], 4), rounded(b[2], 4), u[0], u[1], u[2]))
 	}
 	return changed, notes, nil
+}
+
+// clapsLeftOut says how many claps of a take were not looked at.
+func (c *calibrating) clapsLeftOut(t *take, left int) {
+	if left > 0 {
+		c.res.Findings = append(c.res.Findings, Finding{Code: "claps-left-out", Severity: Info,
+			Message: fmt.Sprintf("%s: the last %d claps were not looked at, but the first %d alone: the rest by --excerpt A..B", t.path(), left, calibration.MaxClaps)})
+	}
 }
 
 // explainedFor gives the refusal of a take its place.

@@ -46,7 +46,7 @@ func calibrationBasis(c *pipeline.Calibration) string {
 	if v := c.Calibrator; v != nil {
 		found := 0
 		for _, m := range c.Microphones {
-			if m.Tone != nil {
+			if len(m.Tones) > 0 {
 				found++
 			}
 		}
@@ -116,8 +116,12 @@ func calibrationTable(c *pipeline.Calibration, width int) []string {
 		}
 		for _, m := range c.Microphones {
 			stretch := "no tone"
-			if m.Tone != nil {
-				stretch = fmt.Sprintf("%.1f to %.1f s", m.Tone.FromS, m.Tone.ToS)
+			switch n := len(m.Tones); n {
+			case 0:
+			case 1:
+				stretch = fmt.Sprintf("%.1f to %.1f s", m.Tones[0].FromS, m.Tones[0].ToS)
+			default:
+				stretch = fmt.Sprintf("%d seatings", n)
 			}
 			t.AppendRow(table.Row{m.Channel, cut(clean(m.Name), 12), level(m.SensitivityDBFS), level(m.SensitivityBeforeDBFS),
 				plusMinus(m.SensitivityUncertaintyDB, 2), decimals(m.GainDB, 2), decimals(m.GainBeforeDB, 2), stretch})
