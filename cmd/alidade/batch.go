@@ -224,7 +224,7 @@ func runBatch(u *ui, c *cli.Context) error {
 	}
 	took := u.now().Sub(begun)
 	u.remark("%s", tallyWords(tally, took))
-	if w, err := batch.Throughput(t.out, begun); err == nil && w.Takes > 0 && took > 0 {
+	if w := tally.Work; w.Takes > 0 && took > 0 {
 		u.remark("%s", workWords(w)+fmt.Sprintf(", %.2f workers busy", w.Spent.Seconds()/took.Seconds()))
 	}
 	if s.Part < 0 {

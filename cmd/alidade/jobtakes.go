@@ -11,6 +11,7 @@ import (
 	"regexp"
 	"slices"
 	"strings"
+	"time"
 
 	"alidade/pkg/batch"
 	"alidade/pkg/pipeline"
@@ -214,20 +215,21 @@ func (j *job) checkName(doc *sheet.Document) {
 // undated stands for the date of a take that carries none.
 const undated = "undated"
 
-var datePattern = regexp.MustCompile(`^[0-9]{4}-[0-9]{2}-[0-9]{2}`)
-
-// dateOf is the day a file says it was recorded on: of bext, else of LIST INFO.
-// The time of the file itself is that of the last copy, and does not count.
+// dateOf is the day a file says it was recorded on, as yyyy-mm-dd whatever it has
+// between them: of bext, else of LIST INFO. What is no day of a calendar counts
+// as none. The time of the file itself is that of the last copy, and does not count.
 func dateOf(f *wav.File) string {
 	if f == nil || f.Metadata == nil {
 		return undated
 	}
-	if b := f.Metadata.Bext; b != nil && datePattern.MatchString(b.OriginationDate) && !strings.HasPrefix(b.OriginationDate, "0000") {
-		return b.OriginationDate[:10]
+	if b := f.Metadata.Bext; b != nil {
+		if day, ok := wav.ParseDay(b.OriginationDate); ok {
+			return day.Format(time.DateOnly)
+		}
 	}
 	for _, e := range f.Metadata.Info {
-		if e.ID == "ICRD" && datePattern.MatchString(e.Text) {
-			return e.Text[:10]
+		if day, ok := wav.ParseDay(e.Text); ok && e.ID == "ICRD" {
+			return day.Format(time.DateOnly)
 		}
 	}
 	return undated

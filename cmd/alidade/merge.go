@@ -111,7 +111,7 @@ func runMerge(u *ui, c *cli.Context) error {
 	if err := u.showSummary(s, c.Bool("json")); err != nil {
 		return err
 	}
-	if w, err := batch.Throughput(t.out, time.Time{}); err == nil && w.Takes > 0 {
+	if w, err := batch.Throughput(t.out); err == nil && w.Takes > 0 {
 		u.remark("%s", workWords(w))
 	}
 	if s.Complete() {

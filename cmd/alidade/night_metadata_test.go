@@ -39,11 +39,11 @@ func TestANightChoosesRigsAndNamesByMetadata(t *testing.T) {
 	}
 	info := body{"LIST", -1, append([]byte("INFOICRD\x0b\x00\x00\x00"), "2026-05-03\x00\x00"...)}
 	y.put("takes/a.wav", tagged(4, "north mast", "2026-05-01", "1A"))
-	y.put("takes/b.wav", tagged(4, "south mast", "2026-05-02", "1A"))
+	y.put("takes/b.wav", tagged(4, "south mast", "2026:05:02", "1A"))
 	y.put("takes/c.wav", tagged(6, "north mast", "2026-05-02", "1A"))
 	y.put("takes/d.wav", tagged(4, "", "", "1B"))
 	y.put("takes/e.wav", riff("RIFF", format(1, 4, 48000, 16), info, hiss(4, 9600)))
-	y.put("takes/f.wav", tagged(4, "south mast", "0000-00-00", "2"))
+	y.put("takes/f.wav", tagged(4, "south mast", "2026-13-02", "2"))
 	y.put("takes/broken.wav", []byte("RIFF"))
 	job := `takes: ["takes/*.wav"]
 steer: {toward: "60,10"}

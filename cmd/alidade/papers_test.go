@@ -181,6 +181,25 @@ func TestReadmeCommandsRunAndShowWhatTheyPrint(t *testing.T) {
 	runPaper(t, "README.md", nil)
 }
 
+// The table of commands has every verb, with a line of its own.
+func TestReadmeListsEveryCommand(t *testing.T) {
+	text, err := os.ReadFile(filepath.Join("..", "..", "README.md"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	_, table, _ := strings.Cut(string(text), "## The commands\n")
+	table, _, _ = strings.Cut(table, "\n## ")
+	rows := strings.Count(table, "\n| `alidade ")
+	for _, v := range verbs() {
+		if n := strings.Count(table, "\n| `alidade "+v.name+"`") + strings.Count(table, "\n| `alidade "+v.name+" "); n != 1 {
+			t.Errorf("alidade %s stands %d times in the README's table of commands, want once", v.name, n)
+		}
+	}
+	if rows != len(verbs()) {
+		t.Errorf("%d rows, %d commands", rows, len(verbs()))
+	}
+}
+
 func TestReadmeForDevelopersNamesCommandsThatExist(t *testing.T) {
 	// The README shows the demo, and what it prints.
 	runPaper(t, "DEVELOPERS.md", map[string]bool{"alidade demo": true})

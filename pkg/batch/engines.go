@@ -111,8 +111,9 @@ func (j JobFile) kubernetes() string {
 	return fmt.Sprintf(`# An indexed job of %[1]d parts. The claim must be readable and writable from
 # all nodes (ReadWriteMany) and hold the plan, its rigs and the takes.
 #   kubectl apply -f THIS_FILE
-#   kubectl wait --for=condition=complete --timeout=-1s job/%[2]s
-# then run once, where the claim is mounted: alidade merge %[7]s --wait 60
+# and, with bash 4.3 or later, until all parts are done or some have failed for good:
+#   bash -c 'for c in complete failed; do kubectl wait --for=condition=$c --timeout=-1s job/%[2]s & done; wait -n; kill $(jobs -pr)'
+# Then, in either case, run once, where the claim is mounted: alidade merge %[7]s --wait 60
 apiVersion: batch/v1
 kind: Job
 metadata:

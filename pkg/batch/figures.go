@@ -166,27 +166,29 @@ func (was *Summary) trendTo(s *Summary, angles []string) *Trend {
 	return t
 }
 
-// Work is what lies behind the results of an output folder, over all its runs.
-// It depends on the machines and their load, and so is no part of a Summary.
+// Work is what lies behind committed results, of one run or of all. It depends
+// on the machines and their load, and so is no part of a Summary.
 type Work struct {
 	Takes int           // committed
 	Spent time.Duration // on them, the sum over the workers
 	Bytes int64         // of the files they were made from
 }
 
-// Throughput reads from the ledgers of an output folder how much work was done
-// there since the given time of the clock that wrote them; the zero time is all
-// of it.
-func Throughput(out string, since time.Time) (w Work, err error) {
+func (w *Work) add(took time.Duration, files []File) {
+	w.Takes++
+	w.Spent += took
+	for _, f := range files {
+		w.Bytes += f.Bytes
+	}
+}
+
+// Throughput reads from the ledgers of an output folder how much work all its
+// runs have done.
+func Throughput(out string) (w Work, err error) {
 	lines, _, err := ReadLedgers(out)
 	for _, l := range lines {
-		if at, err := time.Parse(time.RFC3339Nano, l.At); l.Event != EventCommitted || err != nil || at.Before(since) {
-			continue
-		}
-		w.Takes++
-		w.Spent += time.Duration(l.Took * float64(time.Second))
-		for _, f := range l.Files {
-			w.Bytes += f.Bytes
+		if l.Event == EventCommitted {
+			w.add(time.Duration(l.Took*float64(time.Second)), l.Files)
 		}
 	}
 	return w, err

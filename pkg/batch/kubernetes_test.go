@@ -1,9 +1,14 @@
 package batch
 
 import (
+	"context"
+	"os"
+	"os/exec"
+	"path/filepath"
 	"slices"
 	"strings"
 	"testing"
+	"time"
 
 	batchv1 "k8s.io/api/batch/v1"
 	corev1 "k8s.io/api/core/v1"
@@ -65,6 +70,51 @@ func TestTheManifestIsAJobOfKubernetes(t *testing.T) {
 		} {
 			if err := yaml.UnmarshalStrict([]byte(spoilt), &batchv1.Job{}); err == nil || spoilt == text {
 				t.Errorf("accepted:\n%s", spoilt)
+			}
+		}
+	}
+}
+
+// A job ends complete or failed (Kubernetes API reference, JobStatus: "A job is
+// considered finished when it is in a terminal condition, either Complete or
+// Failed"): the wait that is printed returns in both cases, and leaves no
+// process. A stand-in for kubectl waits for one of them for ever.
+func TestTheWaitForAJobEndsWhenItFails(t *testing.T) {
+	if _, err := exec.LookPath("bash"); err != nil {
+		t.Skip("no bash here")
+	}
+	text, err := JobFile{Engine: Kubernetes, Plan: "night.plan.json", Name: "night", Parts: 3, Image: "alidade", Claim: "takes"}.Text()
+	if err != nil {
+		t.Fatal(err)
+	}
+	wait := ""
+	for _, line := range strings.Split(text, "\n") {
+		if strings.HasPrefix(line, "#   bash ") {
+			wait = strings.TrimPrefix(line, "#   ")
+		}
+	}
+	if wait == "" {
+		t.Fatalf("no line to wait with:\n%s", text)
+	}
+	for _, ends := range []string{"complete", "failed"} {
+		dir := t.TempDir()
+		stub := "#!/bin/sh\necho $$ \"$*\" >>" + dir + "/calls\ncase $2 in --for=condition=" + ends + ") while [ $(wc -l <" + dir + "/calls) -lt 2 ]; do sleep 0.02; done; exit;; esac\nexec sleep 60\n"
+		if err := os.WriteFile(filepath.Join(dir, "kubectl"), []byte(stub), 0o777); err != nil {
+			t.Fatal(err)
+		}
+		ctx, cancel := context.WithTimeout(t.Context(), 20*time.Second)
+		cmd := exec.CommandContext(ctx, "sh", "-c", wait)
+		cmd.Env = append(os.Environ(), "PATH="+dir+string(os.PathListSeparator)+os.Getenv("PATH"))
+		cmd.WaitDelay = time.Second
+		out, err := cmd.Output() // returns when no process holds its output
+		cancel()
+		calls, _ := os.ReadFile(filepath.Join(dir, "calls"))
+		if err != nil || len(out) > 0 {
+			t.Errorf("%s: %v\n%s%s", ends, err, out, calls)
+		}
+		for _, c := range []string{"complete", "failed"} {
+			if want := "wait --for=condition=" + c + " --timeout=-1s job/night\n"; !strings.Contains(string(calls), want) {
+				t.Errorf("%s: %q not among\n%s", ends, want, calls)
 			}
 		}
 	}

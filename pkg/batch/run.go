@@ -69,6 +69,8 @@ type Tally struct {
 	Open     int // not committed
 	// BadStanding is how many of Standing and Others are missed or failed.
 	BadStanding int
+	// Work lies behind what this run committed.
+	Work Work
 }
 
 // Bad reports whether a committed take is missed or failed.
@@ -368,6 +370,7 @@ func (r *run) committed(t Take, o *Outcome, size int64, took time.Duration) {
 	r.mu.Lock()
 	defer r.mu.Unlock()
 	r.tally.Open--
+	r.tally.Work.add(took, o.Files)
 	switch o.State {
 	case Done:
 		r.tally.Done++

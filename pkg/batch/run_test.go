@@ -141,7 +141,11 @@ func capitals(ctx context.Context, a Assignment) (Report, error) {
 func TestEveryTakeIsMadeAndBadOnesAreNamed(t *testing.T) {
 	b := newBench(t, map[string]string{"a.wav": "one", "n/b.wav": "two", "c.wav": "bad", "d.wav": "panic", "e.wav": "short"})
 	tally, err := b.run(capitals, b.settings())
-	want := Tally{Takes: 5, Done: 2, Missed: 1, Failed: 2}
+	want := Tally{Takes: 5, Done: 2, Missed: 1, Failed: 2, Work: Work{Takes: 5, Bytes: 3 + 3 + 3 + 5 + 5}}
+	if tally.Work.Spent <= 0 {
+		t.Errorf("%s of work", tally.Work.Spent)
+	}
+	tally.Work.Spent = 0
 	if err != nil || tally != want || !tally.Bad() {
 		t.Fatalf("%+v, %v, want %+v", tally, err, want)
 	}
@@ -457,6 +461,16 @@ func TestTwoRunsOnOneFolderMakeEachTakeOnce(t *testing.T) {
 		}()
 	}
 	wait.Wait()
+	for k, y := range tallies {
+		// Of a folder that two share, each counts its own.
+		if y.Work.Takes != y.Done || y.Work.Spent < time.Duration(y.Done)*2*time.Millisecond || (y.Work.Bytes > 0) != (y.Done > 0) {
+			t.Errorf("run %d: %+v", k, y)
+		}
+	}
+	all, err := Throughput(b.out)
+	if a, c := tallies[0].Work, tallies[1].Work; err != nil || all.Takes != a.Takes+c.Takes || all.Bytes != a.Bytes+c.Bytes || (all.Spent-a.Spent-c.Spent).Abs() > time.Millisecond {
+		t.Errorf("%+v and %+v, the ledgers have %+v (%v)", a, c, all, err)
+	}
 	sum := tallies[0].Done + tallies[1].Done
 	if sum != 40 || tallies[0].Open+tallies[1].Open != 0 {
 		t.Errorf("%+v and %+v: committed %d times, want 40", tallies[0], tallies[1], sum)

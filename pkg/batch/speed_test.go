@@ -4,6 +4,7 @@ import (
 	"context"
 	"fmt"
 	"os"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -12,7 +13,8 @@ import (
 // Two workers have the same night done in little more than half the time: what
 // the batch itself adds to a take is small, and no worker waits for another.
 // Work that waits stands for work that computes, so that the figure is that of
-// the batch and not of the machine's load.
+// the batch and not of the machine's load. The two are compared within a round,
+// and the median is taken of a fixed number of rounds.
 func TestTwoWorkersShareTheWork(t *testing.T) {
 	takes := map[string]string{}
 	for k := range 12 {
@@ -20,12 +22,12 @@ func TestTwoWorkersShareTheWork(t *testing.T) {
 	}
 	b := newBench(t, takes)
 	wait := func(ctx context.Context, a Assignment) (Report, error) {
-		time.Sleep(40 * time.Millisecond)
+		time.Sleep(30 * time.Millisecond)
 		return capitals(ctx, a)
 	}
-	best := map[int]time.Duration{}
-	efficiency := 0.0
-	for round := 0; round < 4 && efficiency < 0.6; round++ { // the machine may be busy with something else
+	var rounds []float64
+	for range 5 {
+		var took [3]time.Duration
 		for _, workers := range []int{1, 2} {
 			if err := os.RemoveAll(b.out); err != nil {
 				t.Fatal(err)
@@ -36,15 +38,14 @@ func TestTwoWorkersShareTheWork(t *testing.T) {
 			if tally, err := b.run(wait, s); err != nil || tally.Done != len(takes) {
 				t.Fatalf("%+v, %v", tally, err)
 			}
-			if took := time.Since(begun); best[workers] == 0 || took < best[workers] {
-				best[workers] = took
-			}
+			took[workers] = time.Since(begun)
 		}
-		efficiency = best[1].Seconds() / (2 * best[2].Seconds())
+		rounds = append(rounds, took[1].Seconds()/(2*took[2].Seconds()))
 	}
-	t.Logf("one worker %s, two %s: efficiency %.2f", best[1].Round(time.Millisecond), best[2].Round(time.Millisecond), efficiency)
-	if efficiency < 0.6 {
-		t.Errorf("efficiency %.2f, want at least 0.6", efficiency)
+	slices.Sort(rounds)
+	t.Logf("efficiency of two workers: %.2f", rounds)
+	if median := rounds[len(rounds)/2]; median < 0.8 {
+		t.Errorf("efficiency %.2f in the middle of %.2f, want at least 0.8", median, rounds)
 	}
 }
 

@@ -4,7 +4,9 @@ import (
 	"bytes"
 	"encoding/binary"
 	"fmt"
+	"regexp"
 	"strings"
+	"time"
 	"unicode/utf8"
 )
 
@@ -23,7 +25,7 @@ type Bext struct {
 	Description         string `json:"description"`
 	Originator          string `json:"originator"`
 	OriginatorReference string `json:"originator_reference"`
-	OriginationDate     string `json:"origination_date"` // yyyy-mm-dd
+	OriginationDate     string `json:"origination_date"` // yyyy-mm-dd, or with another separator: see ParseDay
 	OriginationTime     string `json:"origination_time"` // hh:mm:ss
 	TimeReference       int64  `json:"time_reference"`   // samples since midnight of frame 0
 	Version             int    `json:"version"`
@@ -175,4 +177,20 @@ func cutText(text string, n int) string {
 		text = strings.ToValidUTF8(text[:n], "")
 	}
 	return text
+}
+
+var dayPattern = regexp.MustCompile(`^([0-9]{4})[-_:. ]([0-9]{2})[-_:. ]([0-9]{2})(?:[^0-9]|$)`)
+
+// ParseDay returns the day that a text begins with: year, month and day with a
+// hyphen between them, or with one of the other separators that readers of an
+// OriginationDate are to know, underscore, colon, space and stop [EBU Tech
+// 3285, from memory]. It reports false where there is none, in the year 0 too,
+// which stands for a date that is not known.
+func ParseDay(text string) (day time.Time, ok bool) {
+	m := dayPattern.FindStringSubmatch(text)
+	if m == nil || m[1] == "0000" {
+		return time.Time{}, false
+	}
+	day, err := time.Parse(time.DateOnly, m[1]+"-"+m[2]+"-"+m[3])
+	return day, err == nil
 }

@@ -106,10 +106,10 @@ func (x *Bext) derive(c Change, move, rate int64) *Bext {
 	day := 24 * 3600 * rate
 	moved := x.TimeReference + move
 	if x.TimeReference < day && moved >= day {
-		moved -= day
-		if date, err := time.Parse(time.DateOnly, x.OriginationDate); err == nil {
-			y.OriginationDate = date.AddDate(0, 0, 1).Format(time.DateOnly)
+		if date, ok := ParseDay(x.OriginationDate); ok {
+			y.OriginationDate = date.AddDate(0, 0, int(moved/day)).Format(time.DateOnly)
 		}
+		moved %= day
 	}
 	y.TimeReference = moved
 	if c.Private {

@@ -6,6 +6,7 @@ import (
 	"slices"
 	"strings"
 	"testing"
+	"time"
 )
 
 // K3: the offsets in bext (EBU Tech 3285 v2, 2011, 2.3; confirmed by a second
@@ -318,6 +319,20 @@ func TestAnExcerptMovesTimesAndCues(t *testing.T) {
 	}
 }
 
+func TestDaysAreReadWithTheSeparatorsThatFilesHave(t *testing.T) {
+	for text, want := range map[string]string{
+		"2026-05-17": "2026-05-17", "2026_05_17": "2026-05-17", "2026:05:17": "2026-05-17", "2026.05.17": "2026-05-17", "2026 05 17": "2026-05-17",
+		"2026-05-17T09:59": "2026-05-17", "2024-02-29": "2024-02-29",
+		"2026-02-29": "", "2026-13-01": "", "2026-00-10": "", "2026-05-00": "", "2026-05-32": "", "0000-01-01": "", "0000-00-00": "",
+		"2026-05-171": "", "20260517": "", "2026/05/17": "", "17.05.2026": "", "2026": "", "": "", "2026-05-\u0661\u0667": "",
+	} {
+		day, ok := ParseDay(text)
+		if ok != (want != "") || ok && day.Format(time.DateOnly) != want {
+			t.Errorf("%q: %s, %v, want %q", text, day.Format(time.DateOnly), ok, want)
+		}
+	}
+}
+
 func TestTimeReferencesPassMidnight(t *testing.T) {
 	day := int64(24 * 3600 * 48000)
 	m := carried(t)
@@ -325,6 +340,12 @@ func TestTimeReferencesPassMidnight(t *testing.T) {
 	*m.IXML.Speed.Timestamp = day - 100
 	out, _ := m.Derive(Change{Output: Format{48000, 1, PCM24}, TakeFrames: 5000, FirstFrame: 300, Frames: 4700})
 	if out.Bext.TimeReference != 200 || out.Bext.OriginationDate != "2027-01-01" || *out.IXML.Speed.Timestamp != 200 {
+		t.Errorf("%+v, %d", out.Bext, *out.IXML.Speed.Timestamp)
+	}
+	// An excerpt of a long take from the day after the next, in a leap year.
+	m.Bext.OriginationDate = "2024.02.28"
+	out, _ = m.Derive(Change{Output: Format{48000, 1, PCM24}, TakeFrames: 3 * day, FirstFrame: day + 300, Frames: 4700})
+	if out.Bext.TimeReference != 200 || out.Bext.OriginationDate != "2024-03-01" || *out.IXML.Speed.Timestamp != 200 {
 		t.Errorf("%+v, %d", out.Bext, *out.IXML.Speed.Timestamp)
 	}
 }
