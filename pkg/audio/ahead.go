@@ -1,6 +1,7 @@
 package audio
 
 import (
+	"errors"
 	"fmt"
 	"io"
 	"runtime"
@@ -12,18 +13,22 @@ import (
 // processor it is src itself. The samples are the same either way.
 //
 // Nothing else may use src, or what src passes its frames to, until the source
-// has come to its end or to a failure; a reader that gives up earlier leaves at
-// most one read of src behind, which ends by itself. It panics if frames is not
-// positive.
-func Ahead(src Source, frames int) Source {
+// has come to its end or to a failure, or stop has returned: it waits for the
+// read of src that is under way and begins no other. Every reader calls it when
+// it is done, however it ends (once is enough, from the goroutine that reads);
+// a Read afterwards is an error. It panics if frames is not positive.
+func Ahead(src Source, frames int) (ahead Source, stop func()) {
 	if frames <= 0 {
 		panic(fmt.Sprintf("audio: read ahead by %d frames", frames))
 	}
 	if runtime.GOMAXPROCS(0) == 1 {
-		return src
+		return src, func() {}
 	}
-	return newAhead(src, frames)
+	a := newAhead(src, frames)
+	return a, a.stop
 }
+
+var errStopped = errors.New("audio: read from a source that was stopped")
 
 func newAhead(src Source, frames int) *ahead {
 	channels := src.Format().Channels
@@ -105,6 +110,17 @@ func (a *ahead) Read(dst Block) (int, error) {
 		return n, nil
 	}
 	return n, a.stopped
+}
+
+// stop waits for the block being read and lets it go.
+func (a *ahead) stop() {
+	if a.begun {
+		<-a.ready
+		a.begun = false
+	}
+	if a.stopped == nil {
+		a.stopped = errStopped
+	}
 }
 
 // turn waits for the next block, takes it, and has the one after it read.

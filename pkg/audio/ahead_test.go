@@ -29,7 +29,11 @@ func TestAheadKeepsTheContract(t *testing.T) {
 				in.Channel(ch)[i] = float32(rng.NormFloat64())
 			}
 		}
-		audiotest.TestStage(t, 8000, in, func(up audio.Source) audio.Source { return audio.Ahead(up, 64) }, in,
+		audiotest.TestStage(t, 8000, in, func(up audio.Source) audio.Source {
+			src, stop := audio.Ahead(up, 64)
+			t.Cleanup(stop)
+			return src
+		}, in,
 			audiotest.Options{Sizes: []int{64}, Rate: 8000})
 	}
 }
@@ -42,7 +46,11 @@ func TestAheadTwice(t *testing.T) {
 		in.Channel(0)[i], in.Channel(1)[i] = float32(i), float32(-i)
 	}
 	audiotest.TestStage(t, 8000, in, func(up audio.Source) audio.Source {
-		return audio.Ahead(audio.Tee(audio.Ahead(up, 100), listener{}), 70)
+		inner, stopInner := audio.Ahead(up, 100)
+		t.Cleanup(stopInner)
+		outer, stopOuter := audio.Ahead(audio.Tee(inner, listener{}), 70)
+		t.Cleanup(stopOuter) // before the inner one: clean-up goes backwards
+		return outer
 	}, in, audiotest.Options{Sizes: []int{70, 100}})
 }
 
@@ -50,14 +58,26 @@ type listener struct{}
 
 func (listener) Write(src audio.Block) error { return nil }
 
-// A reader that gives up leaves no goroutine behind.
+// A reader that gives up leaves no read of the source behind once it has
+// stopped it: what the source counts can be read at once, which the race
+// detector watches.
 func TestAheadEndsWhenNobodyReads(t *testing.T) {
 	several(t)
 	before := runtime.NumGoroutine()
 	for range 50 {
-		src := audio.Ahead(audio.FromBlock(8000, audio.NewBlock(2, 10000)), 64)
+		from := &counted{}
+		src, stop := audio.Ahead(from, 64)
 		if n, err := src.Read(audio.NewBlock(2, 10)); n != 10 || err != nil {
 			t.Fatalf("%d frames, %v", n, err)
+		}
+		stop()
+		reads := from.reads
+		stop()
+		if n, err := src.Read(audio.NewBlock(2, 10)); n != 0 || err == nil {
+			t.Fatalf("%d frames, %v after the stop", n, err)
+		}
+		if reads < 1 || from.reads != reads {
+			t.Fatalf("%d reads, then %d", reads, from.reads)
 		}
 	}
 	for i := 0; runtime.NumGoroutine() > before; i++ {
@@ -70,7 +90,8 @@ func TestAheadEndsWhenNobodyReads(t *testing.T) {
 
 func TestAheadAllocatesNothingInRead(t *testing.T) {
 	several(t)
-	src := audio.Ahead(tireless{}, 64)
+	src, stop := audio.Ahead(tireless{}, 64)
+	defer stop()
 	block := audio.NewBlock(2, 100)
 	if a := testing.AllocsPerRun(100, func() {
 		if n, err := src.Read(block); n != 100 || err != nil {
@@ -89,7 +110,9 @@ func (tireless) Read(dst audio.Block) (int, error) { return dst.Frames(), nil }
 // A source that yields neither frames nor an error does not hang it.
 func TestAheadStopsASourceWithoutProgress(t *testing.T) {
 	several(t)
-	if _, err := audio.Ahead(halted{}, 64).Read(audio.NewBlock(2, 10)); !errors.Is(err, io.ErrNoProgress) {
+	src, stop := audio.Ahead(halted{}, 64)
+	defer stop()
+	if _, err := src.Read(audio.NewBlock(2, 10)); !errors.Is(err, io.ErrNoProgress) {
 		t.Errorf("error %v", err)
 	}
 }
@@ -97,3 +120,14 @@ func TestAheadStopsASourceWithoutProgress(t *testing.T) {
 type halted struct{ tireless }
 
 func (halted) Read(audio.Block) (int, error) { return 0, nil }
+
+// counted counts its reads.
+type counted struct {
+	tireless
+	reads int
+}
+
+func (c *counted) Read(dst audio.Block) (int, error) {
+	c.reads++
+	return dst.Frames(), nil
+}

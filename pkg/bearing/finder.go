@@ -98,7 +98,11 @@ func NewFinder(mics []rig.Point, ref rig.Point, rate int, o Options) (*Finder, e
 	f.noiseSection, f.noise, f.noiseMean = fresh(), fresh(), fresh()
 	// While frames go on, windows are looked at on another core. Each is looked
 	// at by itself and they are collected in order: the result is the same.
-	for d := range min(runtime.GOMAXPROCS(0), mostDesks) {
+	cores := runtime.GOMAXPROCS(0)
+	if set.Cores > 0 {
+		cores = min(cores, set.Cores)
+	}
+	for d := range min(cores, mostDesks) {
 		p := &desk{look: f.look, sum: fresh(), noise: fresh(), done: make(chan struct{}, 1)}
 		if d > 0 {
 			if p.look, err = f.look.twin(); err != nil {

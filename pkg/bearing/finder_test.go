@@ -25,9 +25,13 @@ func TestResultDoesNotDependOnBlockSizeOrProcessors(t *testing.T) {
 				continue
 			}
 			old := runtime.GOMAXPROCS(procs)
-			f, err := NewFinder(mics, rig.Point{}, rate, Options{Speed: testSpeed})
+			cores := procs * (size % 2) // 0 in every second case: as many as there are
+			f, err := NewFinder(mics, rig.Point{}, rate, Options{Speed: testSpeed, Cores: cores})
 			if err != nil {
 				t.Fatal(err)
+			}
+			if len(f.desks) != procs {
+				t.Fatalf("%d desks on %d processors", len(f.desks), procs)
 			}
 			if _, err := audio.Copy(audio.FromBlock(rate, b), size, f); err != nil {
 				t.Fatal(err)

@@ -29,6 +29,9 @@ type Options struct {
 	// FarField leaves curved wavefronts out of the search even where the rig is
 	// large enough to measure a distance.
 	FarField bool
+	// Cores is how many cores look at windows at once, at most; 0 means all that
+	// there are. What is found does not depend on it.
+	Cores int
 }
 
 // Limits of the options.

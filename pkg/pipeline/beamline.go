@@ -186,11 +186,11 @@ func blockFrames(asked, channels int) int {
 }
 
 // ahead returns what src yields, read side by side with what uses it where the
-// run may have more than one core. The blocks of all channels stay in a core's
-// cache.
-func (r *run) ahead(src audio.Source) audio.Source {
+// run may have more than one core, and what is to be called when it is done.
+// The blocks of all channels stay in a core's cache.
+func (r *run) ahead(src audio.Source) (side audio.Source, stop func()) {
 	if r.spec.OneCore {
-		return src
+		return src, func() {}
 	}
 	const samples = 1 << 16
 	return audio.Ahead(src, min(max(samples/src.Format().Channels, 512), 8192))

@@ -15,7 +15,8 @@ type CheckResult struct {
 	Rig       RigSummary     `json:"rig"`
 	State     string         `json:"state"` // good, caution or fault
 	Verdict   string         `json:"verdict"`
-	Windows   int            `json:"windows"`              // stretches that could be held against the geometry
+	Windows   int            `json:"windows"`              // stretches that were held against the geometry
+	JudgedS   float64        `json:"judged_s"`             // how long they are together
 	NotJudged string         `json:"not_judged,omitempty"` // why polarity, order and delays were not judged
 	Channels  []CheckChannel `json:"channels"`
 	Findings  []CheckFinding `json:"findings"`
@@ -86,7 +87,7 @@ func Check(ctx context.Context, spec Spec, watch Watch, show ...Sheet[*CheckResu
 	if err != nil {
 		return nil, err
 	}
-	res = &CheckResult{Version: spec.Version, Rig: l.summary(), State: found.State, Windows: found.Windows, NotJudged: found.NotJudged}
+	res = &CheckResult{Version: spec.Version, Rig: l.summary(), State: found.State, Windows: found.Windows, JudgedS: found.JudgedS, NotJudged: found.NotJudged}
 	if res.Take, err = t.finish(); err != nil {
 		return nil, err
 	}
@@ -137,7 +138,7 @@ func verdict(r *CheckResult) string {
 		}
 		return fmt.Sprintf("%d %ss", n, what)
 	}
-	judged := fmt.Sprintf("delays held against the rig over %s", count(r.Windows, "second"))
+	judged := fmt.Sprintf("delays held against the rig over %.1f s", r.JudgedS)
 	if r.NotJudged != "" {
 		judged = "order, polarity and delays not judged: " + r.NotJudged
 	}

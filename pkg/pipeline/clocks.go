@@ -151,6 +151,7 @@ type inspection int
 const (
 	inspectLevels  inspection = iota // the levels alone
 	inspectRaw                       // as it was recorded
+	inspectSamples                   // single samples of that alone
 	inspectAligned                   // as one clock would have recorded it
 )
 
@@ -158,14 +159,19 @@ const (
 // are known also as one would have recorded it: single samples are looked at in
 // the one, sound in the other.
 func (r *run) inspectAll(stretches [][2]int64) (*quality.Result, error) {
-	q, err := r.inspector(stretches, inspectRaw)
+	clocks := r.rig.clocks() != nil
+	how := inspectRaw
+	if clocks {
+		how = inspectSamples
+	}
+	q, err := r.inspector(stretches, how)
 	if err != nil {
 		return nil, err
 	}
-	if r.rig.clocks() == nil {
-		return q.Result(), nil
-	}
 	raw := q.Result()
+	if !clocks {
+		return raw, nil
+	}
 	if q, err = r.inspector(stretches, inspectAligned); err != nil {
 		return nil, err
 	}

@@ -165,7 +165,9 @@ func (r *run) covariance(task beam.Task, t *take, stretches []measure.Stretch) (
 	if err != nil {
 		return nil, &UsageError{Err: err}
 	}
-	if _, err := audio.Copy(r.ahead(src), blockFrames(r.spec.Options.BlockFrames, t.header.Channels), c); err != nil {
+	src, stop := r.ahead(src)
+	defer stop()
+	if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, t.header.Channels), c); err != nil {
 		return nil, err
 	}
 	if c.Frames() < len(task.Mics) {

@@ -73,8 +73,12 @@ func (s *settings) aimName() string {
 
 // searched runs a finder over the used microphones of src, as corrected by the
 // rig. Faults of the options or the rig are a *UsageError.
-func (l *loadedRig) searched(src audio.Source, o bearing.Options, block int) (*bearing.Result, error) {
+func (r *run) searched(src audio.Source, o bearing.Options) (*bearing.Result, error) {
+	l := r.rig
 	o.Speed = l.speed
+	if r.spec.OneCore {
+		o.Cores = 1
+	}
 	for _, m := range l.Used() {
 		o.Corrections = append(o.Corrections, l.Mics[m].Delay)
 	}
@@ -87,7 +91,9 @@ func (l *loadedRig) searched(src audio.Source, o bearing.Options, block int) (*b
 	if src, err = l.corrected(src); err != nil {
 		return nil, err
 	}
-	if _, err := audio.Copy(audio.Ahead(src, 4096), blockFrames(block, channels), f); err != nil {
+	src, stop := r.ahead(src)
+	defer stop()
+	if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, channels), f); err != nil {
 		return nil, err
 	}
 	if err := f.Close(); err != nil {
@@ -141,7 +147,7 @@ func (r *run) noneFound(why string) error {
 // findAim listens to the take and points the beam to what was found in it.
 func (r *run) findAim() error {
 	pick := r.set.pick()
-	heard, err := r.rig.searched(r.toBeHeard("finding the direction"), bearing.Options{Sources: max(3, pick)}, r.spec.Options.BlockFrames)
+	heard, err := r.searched(r.toBeHeard("finding the direction"), bearing.Options{Sources: max(3, pick)})
 	if err != nil {
 		return err
 	}

@@ -170,7 +170,7 @@ func Locate(ctx context.Context, spec Spec, search Search, watch Watch) (res *Lo
 		return nil, err
 	}
 	o := bearing.Options{Window: search.Window, Hop: search.Hop, FromHz: search.FromHz, ToHz: search.ToHz, Sources: search.Sources}
-	heard, err := l.searched(r.toBeHeard("listening"), o, spec.Options.BlockFrames)
+	heard, err := r.searched(r.toBeHeard("listening"), o)
 	if err != nil {
 		return nil, err
 	}

@@ -65,7 +65,9 @@ func (r *run) designOverTime(task beam.Task, nulls []acoustics.Wave) error {
 	if err != nil {
 		return err
 	}
-	if _, err := audio.Copy(r.ahead(src), blockFrames(r.spec.Options.BlockFrames, r.take.header.Channels), l); err != nil {
+	src, stop := r.ahead(src)
+	defer stop()
+	if _, err := audio.Copy(src, blockFrames(r.spec.Options.BlockFrames, r.take.header.Channels), l); err != nil {
 		return err
 	}
 	if len(l.sets) == 0 {

@@ -277,12 +277,15 @@ func (r *run) drive(src audio.Source, chain chain, sinks ...audio.Sink) (l liste
 		return l, err
 	}
 	// Reading, measuring and steering go on side by side.
-	src = r.ahead(src)
+	src, stop := r.ahead(src)
+	defer stop()
 	if !r.set.NoMeasure {
 		if l.in, err = measure.NewMeter(src.Format(), measure.MeterOptions{PerChannel: true}); err != nil {
 			return l, err
 		}
-		src = r.ahead(audio.Tee(src, l.in))
+		var stop func()
+		src, stop = r.ahead(audio.Tee(src, l.in))
+		defer stop()
 	}
 	if r.painting != nil {
 		src = audio.Tee(src, r.painting)

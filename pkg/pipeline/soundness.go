@@ -54,7 +54,7 @@ func (r *run) inspector(stretches [][2]int64, how inspection) (*quality.Inspecto
 		mics = append(mics, mic)
 	}
 	h := r.take.header
-	q, err := quality.New(mics, h.Rate, quality.Options{Speed: r.rig.speed, Limits: r.limits(), LevelsOnly: how == inspectLevels})
+	q, err := quality.New(mics, h.Rate, quality.Options{Speed: r.rig.speed, Limits: r.limits(), LevelsOnly: how == inspectLevels, SamplesOnly: how == inspectSamples})
 	if err != nil {
 		return nil, &UsageError{Err: err, Hint: "limits stand in the rig file and in the job file"}
 	}

@@ -17,6 +17,10 @@ func (j *judgement) between() {
 	alive = j.alive()
 	list := j.windows(alive)
 	j.result.Windows = len(list)
+	for _, w := range list {
+		j.result.JudgedS += w.seconds
+	}
+	j.result.JudgedS = math.Min(j.result.JudgedS, float64(j.frames)/float64(j.rate))
 	j.levels(alive, list)
 	if len(list) == 0 {
 		j.result.NotJudged = "no stretch of the take holds sound from one direction that most channels share"

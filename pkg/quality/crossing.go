@@ -44,6 +44,7 @@ type crossing struct {
 // window is what a stretch of the take says.
 type window struct {
 	at      float64   // its middle, seconds
+	seconds float64   // how long it is
 	time    []float64 // arrival of each microphone, seconds, mean 0; NaN unknown
 	info    []float64 // 1/variance of each
 	gain    []float64 // dB, mean 0; NaN unknown
@@ -161,7 +162,7 @@ func (c *crossing) endWindow() {
 		c.levels(n)
 		if (c.count-1)%c.every == 0 {
 			if w, ok := c.solve(float64(n)); ok {
-				w.at = at
+				w.at, w.seconds = at, float64(n*c.hop)/float64(c.rate)
 				c.windows = append(c.windows, w)
 				if w.quality > 0.45 {
 					c.lead = w.time

@@ -16,6 +16,9 @@ type Options struct {
 	Limits Limits
 	// LevelsOnly looks for dead channels by their level and at nothing else.
 	LevelsOnly bool
+	// SamplesOnly looks for what single samples show (WithSamplesOf takes it), and
+	// neither at spectra nor at the geometry.
+	SamplesOnly bool
 }
 
 // Inspector is a sink that looks at a take: channel m of what is written is
@@ -31,6 +34,7 @@ type Inspector struct {
 	cross  *crossing // nil with fewer than two microphones
 	frames int64
 	only   bool  // the levels
+	single bool  // samples only: lines and cross are nil
 	gaps   int64 // frames left out
 	closed bool
 	err    error
@@ -60,7 +64,8 @@ func New(mics []rig.Mic, rate int, o Options) (*Inspector, error) {
 		q.at = append(q.at, m.At)
 		q.strips = append(q.strips, newStrip(rate))
 	}
-	if q.only = o.LevelsOnly; q.only {
+	q.only, q.single = o.LevelsOnly, o.SamplesOnly && !o.LevelsOnly
+	if q.only || q.single {
 		return q, nil
 	}
 	var err error
@@ -103,7 +108,7 @@ func (q *Inspector) Write(src audio.Block) error {
 		}
 	}
 	q.frames += int64(src.Frames())
-	if q.only {
+	if q.lines == nil {
 		return nil
 	}
 	if q.err = q.lines.stft.Write(src); q.err == nil && q.cross != nil {
@@ -132,6 +137,9 @@ func (q *Inspector) Gap(frames int64) error {
 	}
 	for _, s := range q.strips {
 		s.gap()
+	}
+	if q.lines == nil {
+		return nil
 	}
 	if q.err = q.lines.begin(); q.err == nil && q.cross != nil {
 		q.err = q.cross.begin(q.frames + q.gaps)
@@ -175,6 +183,10 @@ func (q *Inspector) judge() *Result {
 	}
 	j.tops()
 	j.stills()
+	if q.single {
+		j.result.NotJudged = "only single samples were looked at"
+		return j.finish()
+	}
 	j.noises()
 	if q.cross != nil {
 		j.between()

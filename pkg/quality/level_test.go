@@ -1,7 +1,10 @@
 package quality
 
 import (
+	"errors"
 	"math"
+	"math/rand/v2"
+	"reflect"
 	"slices"
 	"strings"
 	"testing"
@@ -92,5 +95,42 @@ func TestRealRingOfSevenLevels(t *testing.T) {
 	t.Logf("below channel 7, dB: %.2f", below)
 	if least, most := slices.Min(below), slices.Max(below); math.Abs(least-4.9) > 0.5 || math.Abs(most-8.8) > 0.5 {
 		t.Errorf("%.2f to %.2f dB below channel 7, want 4.9 to 8.8 within 0.5", least, most)
+	}
+}
+
+// Single samples show the same whether or not anything else is looked at.
+func TestSamplesAloneShowTheSame(t *testing.T) {
+	const rate, frames = 8000, 16000
+	rng := rand.New(rand.NewPCG(3, 9))
+	b := audio.NewBlock(4, frames)
+	for ch := range 4 {
+		for i := range frames {
+			b.Channel(ch)[i] = float32(0.1 * rng.NormFloat64())
+		}
+	}
+	for i := 4000; i < 4100; i++ {
+		b.Channel(0)[i] = 1
+		b.Channel(1)[i] = b.Channel(1)[3999]
+		b.Channel(2)[i] = b.Channel(2)[i-100]
+	}
+	whole := inspected(t, line8()[:4], rate, b)
+	q, err := New(line8()[:4], rate, Options{SamplesOnly: true})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := errors.Join(q.Write(b.Slice(0, 5000)), q.Write(b.Slice(5000, frames))); err != nil {
+		t.Fatal(err)
+	}
+	alone := q.Result()
+	for ch, code := range []string{CodeClipped, CodeDropOut, CodeRepeat} {
+		if !alone.found(code, ch+1) {
+			t.Errorf("%s of channel %d not found: %v", code, ch+1, alone.codes())
+		}
+	}
+	if got, want := whole.WithSamplesOf(alone), whole.WithSamplesOf(whole); !reflect.DeepEqual(got, want) {
+		t.Errorf("with samples looked at alone:\n%+v\nwant\n%+v", got, want)
+	}
+	if alone.NotJudged == "" || alone.Windows != 0 || alone.Channels[0].LevelDB != nil {
+		t.Errorf("more than samples: %+v", alone)
 	}
 }

@@ -169,6 +169,10 @@ func TestFindingsDoNotDependOnBlocks(t *testing.T) {
 		t.Fatal(err)
 	}
 	want := inspected(t, s.mics, 48000, b)
+	// Stretches are shorter than a second, and told in seconds as they are.
+	if want.Windows != 3 || !(want.JudgedS > 2 && want.JudgedS <= 2.2) {
+		t.Errorf("%d windows of %.3f s together in a take of 2.2 s", want.Windows, want.JudgedS)
+	}
 	for _, frames := range []int{1, 1021} {
 		q, err := New(s.mics, 48000, Options{})
 		if err != nil {

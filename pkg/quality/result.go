@@ -100,9 +100,11 @@ type Result struct {
 	Channels []Channel
 	Findings []Finding // errors first
 	Dead     []int     // indices into the microphones given, in order
-	// Windows is how many stretches of the take could be held against the
-	// geometry, and NotJudged why there are none; empty if there are.
+	// Windows is how many stretches of the take were held against the geometry,
+	// JudgedS how long they are together, and NotJudged why there are none; empty
+	// if there are. Of takes beyond 2048 stretches a part stands for all.
 	Windows   int
+	JudgedS   float64
 	NotJudged string
 }
 

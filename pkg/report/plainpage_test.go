@@ -36,7 +36,7 @@ func samplePrediction(hostile bool) *pipeline.Prediction {
 // sampleCheck is an invented inspection, with hostile texts where asked.
 func sampleCheck(hostile bool) *pipeline.CheckResult {
 	r := goodTake()
-	c := &pipeline.CheckResult{Version: "0.1.0", Take: r.Take, Rig: r.Rig, State: "fault", Verdict: "fault: 1 fault and 1 warning; delays held against the rig over 12 seconds",
+	c := &pipeline.CheckResult{Version: "0.1.0", Take: r.Take, Rig: r.Rig, State: "fault", Verdict: "fault: 1 fault and 1 warning; delays held against the rig over 12.0 s",
 		Findings: []pipeline.CheckFinding{
 			{Code: "channel-dead", Severity: pipeline.Error, Message: "m", Channels: []int{2}, Measured: "channel 2 (M2) lies 58 dB below the middle channel", Expected: "within 35 dB", Do: "look at its cable"},
 			{Code: "level-mismatch", Severity: pipeline.Warning, Message: "m", Channels: []int{6}, Measured: "channel 6 (M6) is 8.9 dB softer", Do: "set its gain"},
