@@ -118,6 +118,7 @@ What is written
                          gets them hears the voices in them
   --preview-at A..B      these up to 30 s of the take are heard
   --overwrite            replace tracks and reports that exist
+  --verify               read the written track back, as is done anyway
   --no-verify            do not read the written track back
   --private              leave out of report and track what names places,
                          people and machines: notes, texts, paths; the page's

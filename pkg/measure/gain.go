@@ -127,6 +127,20 @@ func (d *bandData) powers() (ref, out float64) {
 	return d.target.refMean - d.noise.refMean, d.target.outMean - d.noise.outMean
 }
 
+// Powers are the mean powers behind the figures of one band, re a full-scale
+// sine, at the reference and in the output.
+type Powers struct{ NoiseIn, NoiseOut, TargetIn, TargetOut float64 }
+
+// Powers returns what band b is made of. The powers of the target are those of
+// its part less the noise's (or those of the target alone), also where they do
+// not exceed the noise significantly, or fall below zero; what a stretch holds no
+// entry for is NaN.
+func (g *Gains) Powers(b int) Powers {
+	d := &g.data[b]
+	in, out := d.powers()
+	return Powers{d.noise.refMean, d.noise.outMean, in, out}
+}
+
 // part is one band over the entries of one kind of stretch. It shares the
 // powers of its tracks: a long take has them once.
 type part struct {

@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"slices"
@@ -27,7 +28,7 @@ func answer(p *Prediction) []string {
 		list = append(list, fmt.Sprintf("In %s this beam helps in no band: less than %g dB everywhere.", diffuse, response.NoApertureDB))
 	default:
 		first, end := helped[0], helped[len(helped)-1]
-		best := slices.MaxFunc(helped, func(a, b PredictedBand) int { return compare(*a.PredictedDiffuseDB, *b.PredictedDiffuseDB) })
+		best := slices.MaxFunc(helped, func(a, b PredictedBand) int { return cmp.Compare(*a.PredictedDiffuseDB, *b.PredictedDiffuseDB) })
 		text := fmt.Sprintf("In %s this beam helps from the %s band up: %.1f dB there", diffuse, hertz(first.NominalHz), *first.PredictedDiffuseDB)
 		if last != len(p.Bands)-1 {
 			text = fmt.Sprintf("In %s this beam helps from the %s to the %s band: %.1f dB in the first", diffuse, hertz(first.NominalHz), hertz(end.NominalHz), *first.PredictedDiffuseDB)
@@ -93,16 +94,6 @@ func whiteAnswer(bands []PredictedBand) string {
 		text += "; a negative gain makes it louder, at " + strings.Join(louder, " and ")
 	}
 	return text + "."
-}
-
-func compare(a, b float64) int {
-	switch {
-	case a < b:
-		return -1
-	case a > b:
-		return 1
-	}
-	return 0
 }
 
 // threeDigits rounds to three significant digits.

@@ -55,6 +55,7 @@ type beamline struct {
 	// amplitudes are those of the microphones in the beam.
 	amplitudes []float64
 	fit        *beam.Fit // of designed weights
+	nullsFrom  float64   // from where on nulls are exact, Hz; +Inf for nowhere
 	// changes are weights that change with time, of which filters and model are
 	// the first; nil if they do not.
 	changes *changes

@@ -74,17 +74,25 @@ func (r *run) design() error {
 		return &UsageError{Err: fmt.Errorf("--weights %s: %w", r.set.Weights, err)}
 	}
 	b.filters, b.model, b.fit = filters, filters, &fit
-	if from, ok := w.HeldFrom(); len(nulls) > 0 {
-		switch {
-		case !ok:
-			r.report(Finding{Code: "nulls-not-held", Severity: Warning, Message: fmt.Sprintf(
-				"the nulls are exact at no frequency: they would cost more white noise gain than the floor of %g dB allows; lower --white-noise-gain-floor-db or move them away from the steered direction", r.set.floorDB)})
-		case from > 0:
-			r.report(Finding{Code: "nulls-held-from", Severity: Info, Message: fmt.Sprintf(
-				"the nulls are exact from %.0f Hz up: below, they would cost more white noise gain than the floor of %g dB allows", from, r.set.floorDB)})
+	if len(nulls) > 0 {
+		var ok bool
+		if b.nullsFrom, ok = w.HeldFrom(); !ok {
+			b.nullsFrom = math.Inf(1)
 		}
 	}
 	return nil
+}
+
+// nullsHeld says where the nulls of the beam are not exact.
+func (r *run) nullsHeld() {
+	switch from := r.line.nullsFrom; {
+	case math.IsInf(from, 1):
+		r.report(Finding{Code: "nulls-not-held", Severity: Warning, Message: fmt.Sprintf(
+			"the nulls are exact at no frequency: they would cost more white noise gain than the floor of %g dB allows; lower --white-noise-gain-floor-db or move them away from the steered direction", r.set.floorDB)})
+	case from > 0:
+		r.report(Finding{Code: "nulls-held-from", Severity: Info, Message: fmt.Sprintf(
+			"the nulls are exact from %.0f Hz up: below, they would cost more white noise gain than the floor of %g dB allows", from, r.set.floorDB)})
+	}
 }
 
 // noiseCovariance is the covariance of the noise that minimum variance is to

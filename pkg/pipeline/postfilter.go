@@ -141,7 +141,7 @@ func (r *run) unfixed(res *Result, noise, target listened) error {
 		r.report(Finding{Code: "postfilter", Severity: Info, Message: what})
 	case res.Segments.Source == SegmentsIsolated:
 		r.report(Finding{Code: "postfilter", Severity: Info, Message: what + "; they were taken with the gains found on the mix, run through the noise alone and the target alone"})
-		g, err := measure.IsolatedGain(measure.Isolated{Noise: noise.filtered(), Target: target.filtered(), Named: -1})
+		g, err := measure.IsolatedGain(measure.Isolated{Noise: noise.filtered(), Target: target.filtered(), Named: -1, NoIntervals: true})
 		if err != nil {
 			return err
 		}
@@ -154,7 +154,7 @@ func (r *run) unfixed(res *Result, noise, target listened) error {
 		}
 	default:
 		r.report(Finding{Code: "postfilter", Severity: Info, Message: what + "; they are of the noise in the pauses of the target, under which it falls by less, and the target cannot be told apart from it: --isolated-noise and --isolated-target, cut like the take, tell both"})
-		g, err := measure.SNRGain(measure.Scene{Pair: noise.filtered(), Noise: stretchesOf(res.Segments.Noise), Named: -1})
+		g, err := measure.SNRGain(measure.Scene{Pair: noise.filtered(), Noise: stretchesOf(res.Segments.Noise), Named: -1, NoIntervals: true})
 		if err != nil {
 			return err
 		}

@@ -41,6 +41,7 @@ const (
 	predictTrials   = 1000
 	predictSeed     = 1
 	mostFrequencies = 1000
+	mostPattern     = 1000000 // frequencies times angles
 	mostTrials      = 20000
 	leastRate       = 8000
 	mostRate        = 384000
@@ -178,6 +179,7 @@ func Predict(rigPath string, o PredictOptions, version string, show ...Sheet[*Pr
 		if err := r.design(); err != nil {
 			return nil, err
 		}
+		r.nullsHeld()
 	}
 	p := &predictor{set: s, line: line, run: r, beam: response.Beam{
 		Transfer: line.model, Mics: line.at, Reference: line.ref, Look: line.look, Speed: l.speed,
@@ -213,11 +215,9 @@ func (p *predictor) predict(version string) (*Prediction, error) {
 		Rig: p.line.rig.summary(), Steer: p.line.summary(),
 		SpeedOfSoundMS: p.beam.Speed, SampleRateHz: p.set.RateHz,
 		GratingEntries: []GratingEntry{}, Findings: []Finding{},
-		Cut: Cut{Name: p.cut.Name, AtDeg: p.degrees(p.cut.At), LowDeg: p.cut.Low * 180 / math.Pi, HighDeg: p.cut.High * 180 / math.Pi},
+		Cut: Cut{Name: p.cut.Name, AtDeg: p.degrees(p.cut.At)},
 	}
-	if p.cut.Closed {
-		out.Cut.LowDeg, out.Cut.HighDeg = -180, 180
-	}
+	out.Cut.LowDeg, out.Cut.HighDeg = p.span()
 	if d, ok := p.beam.CutDistance(); ok {
 		out.Cut.DistanceM = number(d)
 	}
@@ -233,6 +233,12 @@ func (p *predictor) predict(version string) (*Prediction, error) {
 	out.Aperture = Aperture{ExtentM: a.Extent, EffectiveM: a.Effective, HalfWavelengthHz: a.HalfWavelengthHz}
 	if a.LowerUsefulHz > 0 {
 		out.Aperture.LowerUsefulHz = number(a.LowerUsefulHz)
+	}
+	if n := p.angleCount(); p.set.Pattern && n*len(p.set.hz) > mostPattern {
+		return nil, &UsageError{
+			Err:  fmt.Errorf("--pattern-step %g: %d angles at %d frequencies, %d values of the pattern: want at most %d", p.set.StepDeg, n, len(p.set.hz), n*len(p.set.hz), mostPattern),
+			Hint: "take a larger --pattern-step, or fewer frequencies (--at-hz)",
+		}
 	}
 	figures := p.beam.Predict(p.cut, p.set.hz)
 	for _, f := range figures {
@@ -309,17 +315,27 @@ func (p *predictor) bands() []PredictedBand {
 	return list
 }
 
+// span is the cut from end to end, degrees; a full circle from -180 to 180.
+func (p *predictor) span() (low, high float64) {
+	if p.cut.Closed {
+		return -180, 180
+	}
+	return p.cut.Low * 180 / math.Pi, p.cut.High * 180 / math.Pi
+}
+
+// angleCount is the number of angles of the pattern.
+func (p *predictor) angleCount() int {
+	low, high := p.span()
+	return int(math.Floor((high-low)/p.set.StepDeg+1e-9)) + 1
+}
+
 // pattern is the response along the cut.
 func (p *predictor) pattern() *PredictedResponse {
 	out := &PredictedResponse{Hz: p.set.hz}
 	var waves []acoustics.Wave
-	low, high := p.cut.Low, p.cut.High
-	if p.cut.Closed {
-		low, high = -math.Pi, math.Pi
-	}
-	n := int(math.Floor((high-low)*180/math.Pi/p.set.StepDeg + 1e-9))
-	for i := range n + 1 {
-		deg := low*180/math.Pi + float64(i)*p.set.StepDeg
+	low, _ := p.span()
+	for i := range p.angleCount() {
+		deg := low + float64(i)*p.set.StepDeg
 		out.AnglesDeg = append(out.AnglesDeg, deg)
 		waves = append(waves, p.beam.CutWave(p.cut, deg*math.Pi/180))
 	}

@@ -1,7 +1,11 @@
 package pipeline
 
 import (
+	"errors"
 	"math"
+	"path/filepath"
+	"strconv"
+	"strings"
 	"testing"
 
 	"alidade/pkg/wav"
@@ -35,5 +39,22 @@ microphones:
 			t.Errorf("%g Hz: predicted %.3f and %.3f dB with corrections, %.3f and %.3f without",
 				b.NominalHz, *b.PredictedWhiteDB, *b.PredictedDiffuseDB, *want.PredictedWhiteDB, *want.PredictedDiffuseDB)
 		}
+	}
+}
+
+// The pattern is bounded whatever its two sides are, and the bound is that of
+// the cut: a line has half a circle.
+func TestPatternsAreBounded(t *testing.T) {
+	rig := filepath.Join(t.TempDir(), "rig.yaml")
+	writeText(t, rig, eightRig)
+	var hz []string
+	for i := range 278 {
+		hz = append(hz, strconv.Itoa(1000+i))
+	}
+	o := PredictOptions{Options: Options{Toward: "60"}, Pattern: true, StepDeg: 0.05, AtHz: strings.Join(hz, ",")} // 3601 angles
+	_, err := Predict(rig, o, "test")
+	var usage *UsageError
+	if !errors.As(err, &usage) || !strings.Contains(err.Error(), "3601 angles at 278 frequencies, 1001078 values of the pattern: want at most 1000000") {
+		t.Fatalf("got %v", err)
 	}
 }

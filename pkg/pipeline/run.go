@@ -98,14 +98,8 @@ func (r *run) steer() (result *Result, err error) {
 	}
 	defer func() { err = joinErrors(err, r.take.close()) }()
 	h := r.take.header
-	if err := r.fits(); err != nil {
+	if err := r.ready(); err != nil {
 		return nil, err
-	}
-	if err := r.take.sounds(); err != nil {
-		return nil, err
-	}
-	if r.set.HighpassHz >= float64(h.Rate)/2 {
-		return nil, &UsageError{Err: fmt.Errorf("--highpass %g: at or above half the take's rate of %d Hz", r.set.HighpassHz, h.Rate)}
 	}
 	if r.from, r.to, err = r.excerpt(); err != nil {
 		return nil, err
@@ -125,6 +119,7 @@ func (r *run) steer() (result *Result, err error) {
 		if err := r.design(); err != nil {
 			return nil, err
 		}
+		r.nullsHeld()
 	}
 	if err := r.prepare(); err != nil {
 		return nil, err
@@ -149,6 +144,21 @@ func (r *run) steer() (result *Result, err error) {
 		}
 	}
 	return r.result()
+}
+
+// ready refuses a take that the rig does not fit or that holds nothing.
+func (r *run) ready() error {
+	if err := r.fits(); err != nil {
+		return err
+	}
+	if err := r.take.sounds(); err != nil {
+		return err
+	}
+	h := r.take.header
+	if r.set.HighpassHz >= float64(h.Rate)/2 {
+		return &UsageError{Err: fmt.Errorf("--highpass %g: at or above half the take's rate of %d Hz", r.set.HighpassHz, h.Rate)}
+	}
+	return nil
 }
 
 // excerpt returns the frames of the take that are written.

@@ -3,6 +3,7 @@ package pipeline
 import (
 	"context"
 	"errors"
+	"fmt"
 	"math"
 	"os"
 	"path/filepath"
@@ -11,6 +12,7 @@ import (
 	"testing"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/measure"
 	"alidade/pkg/rig"
 	"alidade/pkg/wav"
 )
@@ -279,5 +281,133 @@ func TestRecordsKnowTheNoiseByContent(t *testing.T) {
 	s.mustScan(t, o)
 	if record, err = os.ReadFile(filepath.Join(o.Tracks, "take_az+060.0.track.json")); err != nil || !strings.Contains(string(record), "noise_s") {
 		t.Errorf("%v, the record lacks the stretches: %s", err, record)
+	}
+}
+
+func findingsOf(list []Finding, code string) (found []Finding) {
+	for _, f := range list {
+		if f.Code == code {
+			found = append(found, f)
+		}
+	}
+	return found
+}
+
+// What holds in some directions only is said once, with the directions: a null
+// near the steered direction costs more white noise gain than one far away. The
+// frequencies are those that steer says of each direction by itself.
+func TestScanSaysWhereNullsAreHeld(t *testing.T) {
+	s := newScene(t, 1, wav.PCM16)
+	floor := 0.0
+	o := ScanOptions{Directions: []string{"20", "60", "85"}}
+	o.Null, o.WhiteNoiseGainFloorDB, o.NoMeasure = []string{"100"}, &floor, true
+	list := findingsOf(s.mustScan(t, o).Findings, "nulls-held-from")
+	var low, high float64
+	var named []string
+	for _, toward := range o.Directions {
+		options := o.Options
+		options.Toward, options.Reports, options.Overwrite = toward, "none", true
+		for _, f := range findingsOf(s.must(t, options).Findings, "nulls-held-from") {
+			var from float64
+			if _, err := fmt.Sscanf(f.Message, "the nulls are exact from %g Hz", &from); err != nil {
+				t.Fatal(err)
+			}
+			if named = append(named, toward); len(named) == 1 || from < low {
+				low = from
+			}
+			high = max(high, from)
+		}
+	}
+	if len(named) < 2 || low == high {
+		t.Fatalf("%v with nulls from %g to %g Hz: the test needs some", named, low, high)
+	}
+	if want := fmt.Sprintf("from %.0f to %.0f Hz up in ", low, high); len(list) != 1 || !strings.Contains(list[0].Message, want) {
+		t.Errorf("%+v, want one that has %q", list, want)
+	}
+
+	by := &scanner{run: &run{set: &settings{}}, nullsFrom: map[rig.Direction]float64{}}
+	for i := range 6 {
+		by.directions = append(by.directions, rig.Degrees(10*float64(i), 0))
+		if i > 0 {
+			by.nullsFrom[by.directions[i]] = 100 * float64(i)
+		}
+	}
+	by.nullsFrom[by.directions[2]] = math.Inf(1)
+	by.nulls()
+	for code, want := range map[string]string{"nulls-not-held": "at no frequency in 1 of 6 directions (20.0°", "nulls-held-from": "from 100 to 500 Hz up in 4 of 6 directions (the first 10.0°, the last 50.0°"} {
+		if list := findingsOf(by.findings, code); len(list) != 1 || !strings.Contains(list[0].Message, want) {
+			t.Errorf("%s: %+v, want %q", code, list, want)
+		}
+	}
+}
+
+// Null gains have their reason, whichever direction they are missing in and
+// however the noise is known.
+func TestScanSaysWhyGainsAreMissing(t *testing.T) {
+	s := newScene(t, 2, wav.PCM16)
+	for name, c := range map[string]struct {
+		options Options
+		code    string
+	}{
+		"short stretches": {Options{Noise: "0..0.1", Target: "1..2"}, "gain-unmeasured-too-short"},
+		"the same sound":  {Options{Noise: "0..0.45", Target: "0.5..0.95"}, "gain-unmeasured-not-above-noise"},
+		"half":            {Options{IsolatedNoise: s.take}, "isolated-half"},
+	} {
+		o := from(60, 120, 30)
+		o.Options = c.options
+		r := s.mustScan(t, o)
+		list := findingsOf(r.Findings, c.code)
+		if len(list) != 1 || c.code != "isolated-half" && (!strings.Contains(list[0].Message, "directions") || len(list[0].Bands) == 0) {
+			t.Errorf("%s: %+v", name, r.Findings)
+		}
+		for _, a := range r.Angles {
+			if a.SNRGainDB != nil && c.code != "gain-unmeasured-not-above-noise" {
+				t.Errorf("%s: gain %g", name, *a.SNRGainDB)
+			}
+		}
+	}
+	// A take too short for the low bands, as noise and as target alone.
+	short := newScene(t, 1, wav.PCM16)
+	o := from(60, 60, 1)
+	o.IsolatedNoise, o.IsolatedTarget = short.take, short.take
+	r := s.mustScan(t, o)
+	null := 0
+	for _, b := range r.Angles[0].Bands {
+		if b.SNRGainDB == nil {
+			null++
+		}
+	}
+	told := 0
+	for _, f := range r.Findings {
+		if strings.HasPrefix(f.Code, "gain-unmeasured-") {
+			told += len(f.Bands)
+		}
+	}
+	if null == 0 || told != null {
+		t.Errorf("%d bands without a gain on isolated takes, %d told of", null, told)
+	}
+}
+
+// The best gain is looked for over the same bands in all directions: one band
+// that is known by luck does not win over all.
+func TestBestGainComparesTheSameBands(t *testing.T) {
+	v := func(x float64) Number { return &x }
+	s := &scanner{run: &run{set: &settings{}}, result: &ScanResult{Angles: []ScanAngle{
+		{SNRGainDB: v(10), Bands: []ScanBand{{NominalHz: 500, SNRGainDB: v(10)}, {NominalHz: 1000}}}, // loses the target at 1 kHz
+		{SNRGainDB: v(6), Bands: []ScanBand{{NominalHz: 500, SNRGainDB: v(6)}, {NominalHz: 1000, SNRGainDB: v(6)}}},
+	}}, powers: [][]measure.Powers{
+		{{NoiseIn: 1, NoiseOut: 0.1, TargetIn: 1, TargetOut: 1}, {NoiseIn: 1, NoiseOut: 0.5, TargetIn: 9, TargetOut: -0.01}},
+		{{NoiseIn: 1, NoiseOut: 0.25, TargetIn: 1, TargetOut: 1}, {NoiseIn: 1, NoiseOut: 0.25, TargetIn: 9, TargetOut: 9}},
+	}}
+	if best := s.bestGain(); best != &s.result.Angles[1] {
+		t.Errorf("best %+v", best)
+	}
+	list := findingsOf(s.findings, "gains-over-different-bands")
+	if len(list) != 1 || !reflect.DeepEqual(list[0].Bands, []float64{500, 1000}) || !strings.Contains(list[0].Message, "1 to 2 of 2") {
+		t.Errorf("%+v", s.findings)
+	}
+	// By hand: 0.99/0.6 of the target over the noise, 10/2 at the microphones.
+	if got, want := gainOver(s.powers[0], []int{0, 1}), 10*math.Log10(0.99/0.6/5); math.Abs(got-want) > 1e-12 {
+		t.Errorf("gain %g dB over both bands, want %g", got, want)
 	}
 }

@@ -4,90 +4,69 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"strings"
 
-	"alidade/pkg/beam"
 	"alidade/pkg/measure"
 	"alidade/pkg/response"
 	"alidade/pkg/scan"
 )
 
-// gains fills in the gains of the directions from..to.
-func (s *scanner) gains(a *scan.Analysis, from, to int) error {
+// gains fills in the gains of the beams, of the directions from on.
+func (s *scanner) gains(a *scan.Analysis, lines []*beamline, from int) error {
 	switch {
 	case s.set.NoMeasure:
 		return nil
 	case s.result.Segments.Source == SegmentsIsolated:
-		return s.isolatedGains(from, to)
+		return s.isolatedGains(lines, from)
 	case len(s.noise) == 0:
 		return nil
 	}
 	reference := a.Reference()
-	for i := from; i < to; i++ {
+	for i := range lines {
 		if err := context.Cause(s.ctx); err != nil {
 			return err
 		}
 		g, err := measure.SNRGain(measure.Scene{
-			Pair:  measure.Pair{Reference: reference, Output: a.Beam(i - from)},
+			Pair:  measure.Pair{Reference: reference, Output: a.Beam(i)},
 			Noise: s.noise, Target: s.target, Named: -1, NoIntervals: !s.spec.Options.Intervals,
 		})
 		if err != nil {
 			return err
 		}
-		s.result.Angles[i].fill(g)
-		if i == from && from == 0 {
-			s.missing(g)
-		}
+		s.fill(from+i, g)
 	}
 	return nil
 }
 
-// missing says why figures of the first direction are null; those of the others
-// are for the same reasons.
-func (s *scanner) missing(g *measure.Gains) {
-	bands := map[measure.Reason][]float64{}
-	for _, b := range g.Bands {
-		if b.TargetReason != "" {
-			bands[b.TargetReason] = append(bands[b.TargetReason], b.Band.NominalHz)
-		}
-	}
-	for _, why := range []measure.Reason{measure.NoNoise, measure.NoTarget, measure.TooShort, measure.Silent, measure.NotAboveNoise} {
-		if list := bands[why]; len(list) > 0 {
-			s.report(Finding{Code: "gain-unmeasured-" + string(why), Severity: Info, Bands: list, Message: fmt.Sprintf(
-				"no SNR gain in %d of %d bands of the first direction: %s", len(list), len(g.Bands), reasonWords[why])})
-		}
-	}
-}
-
 // isolatedGains runs the takes of noise and target alone through the beams.
-func (s *scanner) isolatedGains(from, to int) (err error) {
+func (s *scanner) isolatedGains(lines []*beamline, from int) (err error) {
 	if s.set.IsolatedNoise == "" || s.set.IsolatedTarget == "" {
 		return nil
 	}
-	sets, err := s.beams(from, to, nil)
-	if err != nil {
-		return err
-	}
 	var heard [2]*scan.Analysis
 	for k, path := range []string{s.set.IsolatedNoise, s.set.IsolatedTarget} {
-		if heard[k], err = s.alone(path, sets, k == 0, from == 0); err != nil {
+		if heard[k], err = s.alone(path, lines, k == 0, from == 0); err != nil {
 			return err
 		}
 	}
 	pair := func(a *scan.Analysis, i int) measure.Pair {
 		return measure.Pair{Reference: a.Reference(), Output: a.Beam(i)}
 	}
-	for i := from; i < to; i++ {
-		g, err := measure.IsolatedGain(measure.Isolated{Noise: pair(heard[0], i-from), Target: pair(heard[1], i-from), Named: -1, NoIntervals: !s.spec.Options.Intervals})
+	for i := range lines {
+		if err := context.Cause(s.ctx); err != nil {
+			return err
+		}
+		g, err := measure.IsolatedGain(measure.Isolated{Noise: pair(heard[0], i), Target: pair(heard[1], i), Named: -1, NoIntervals: !s.spec.Options.Intervals})
 		if err != nil {
 			return err
 		}
-		s.result.Angles[i].fill(g)
+		s.fill(from+i, g)
 	}
 	return nil
 }
 
 // alone analyses an isolated take.
-func (s *scanner) alone(path string, sets []*beam.Filters, noise, first bool) (a *scan.Analysis, err error) {
+func (s *scanner) alone(path string, lines []*beamline, noise, first bool) (a *scan.Analysis, err error) {
 	t, err := openTake([]string{path}, s.isolatedJoining(), false)
 	if err != nil {
 		return nil, err
@@ -106,11 +85,26 @@ func (s *scanner) alone(path string, sets []*beam.Filters, noise, first bool) (a
 			s.result.Segments.Target = whole
 		}
 	}
-	return s.analyse(sets, t, "measuring "+path)
+	if a, err = s.analyse(lines, t, "measuring "+path); err != nil {
+		return nil, err
+	}
+	if first {
+		for _, f := range t.findings() {
+			f.Message = strings.TrimSpace(path + ": " + f.Message)
+			s.report(f)
+		}
+	}
+	return a, t.unchanged()
 }
 
-// fill copies measured gains into a direction.
-func (a *ScanAngle) fill(g *measure.Gains) {
+// fill copies measured gains into direction i, and keeps what they are made of.
+func (s *scanner) fill(i int, g *measure.Gains) {
+	a := &s.result.Angles[i]
+	s.powers[i] = make([]measure.Powers, len(g.Bands))
+	for b := range g.Bands {
+		s.powers[i][b] = g.Powers(b)
+	}
+	s.gapsOf(i, g)
 	o := g.Overall(nil)
 	a.NoiseReductionDB, a.TargetChangeDB, a.SNRGainDB, a.SNRGainCI95 = o.NoiseReduction, o.TargetChange, o.SNRGain, o.SNRGainCI
 	for i := range a.Bands {

@@ -47,7 +47,7 @@ func RunScan(ctx context.Context, spec ScanSpec, watch Watch, show ...Sheet[*Sca
 	r := &run{ctx: ctx, set: set, rig: l, watch: watch, spec: Spec{
 		Take: spec.Take, RigPath: spec.RigPath, Options: spec.Options.Options, Version: spec.Version,
 	}}
-	s := &scanner{run: r, spec: spec, directions: directions}
+	s := &scanner{run: r, spec: spec, directions: directions, nullsFrom: map[rig.Direction]float64{}, gaps: map[gap]*gapCount{}, powers: make([][]measure.Powers, len(directions))}
 	if r.take, err = openTake(spec.Take, set.joining(), !spec.NoHashes || spec.Options.Tracks != ""); err != nil {
 		return nil, err
 	}
@@ -84,21 +84,6 @@ func RunScan(ctx context.Context, spec ScanSpec, watch Watch, show ...Sheet[*Sca
 	return result, nil
 }
 
-// ready refuses a take that the rig does not fit or that holds nothing.
-func (r *run) ready() error {
-	if err := r.fits(); err != nil {
-		return err
-	}
-	if err := r.take.sounds(); err != nil {
-		return err
-	}
-	h := r.take.header
-	if r.set.HighpassHz >= float64(h.Rate)/2 {
-		return &UsageError{Err: fmt.Errorf("--highpass %g: at or above half the take's rate of %d Hz", r.set.HighpassHz, h.Rate)}
-	}
-	return nil
-}
-
 // scanner is one take on its way through a scan.
 type scanner struct {
 	*run
@@ -110,6 +95,11 @@ type scanner struct {
 	noise, target []measure.Stretch // of the take; nil until known
 	known         bool
 	learnt        learnedFrom // for the records of the tracks
+
+	// What the directions have to say together.
+	nullsFrom map[rig.Direction]float64 // as of a beamline, of those where nulls are not exact everywhere
+	gaps      map[gap]*gapCount
+	powers    [][]measure.Powers // [direction][band]; nil where nothing was measured
 }
 
 func (s *scanner) scan() (*ScanResult, error) {
@@ -134,6 +124,10 @@ func (s *scanner) scan() (*ScanResult, error) {
 	}
 	format := audio.Format{Rate: s.take.header.Rate, Channels: len(s.line.used)}
 	each := scan.BeamBytes(format, s.line.filters, scan.Options{}, s.take.header.Frames)
+	if s.set.IsolatedNoise != "" && s.set.IsolatedTarget != "" && !s.set.NoMeasure {
+		each *= 3 // the noise and the target alone beside the take
+	}
+	each += s.line.bytes()
 	s.group = int(min(int64(len(s.directions)), max(1, scanBytes/each)))
 	if err := s.segmentsGiven(); err != nil {
 		return nil, err
@@ -141,6 +135,7 @@ func (s *scanner) scan() (*ScanResult, error) {
 	if err := s.passes(lines); err != nil {
 		return nil, err
 	}
+	s.missing()
 	s.standOut()
 	if s.result.Take, err = s.take.finish(); err != nil {
 		return nil, err
@@ -153,7 +148,8 @@ func (s *scanner) scan() (*ScanResult, error) {
 	if err := s.take.unchanged(); err != nil {
 		return nil, err
 	}
-	s.result.Findings = append(s.take.findings(), s.once(s.findings)...)
+	s.nulls()
+	s.result.Findings = append(s.take.findings(), once(s.findings)...)
 	sortFindings(s.result.Findings)
 	if s.set.Private {
 		s.hideScan()
@@ -195,22 +191,23 @@ func (s *scanner) lines(directions []rig.Direction) ([]*beamline, error) {
 			if err := s.design(); err != nil {
 				return nil, fmt.Errorf("toward %s: %w", angles(d), err)
 			}
+			if line.nullsFrom > 0 {
+				s.nullsFrom[d] = line.nullsFrom
+			}
 		}
 		list = append(list, line)
 	}
 	return list, nil
 }
 
-// once leaves out findings that say the same as one before: each direction has
-// its own.
-func (s *scanner) once(list []Finding) []Finding {
-	var out []Finding
-	for _, f := range list {
-		if !slices.ContainsFunc(out, func(g Finding) bool { return g.Code == f.Code }) {
-			out = append(out, f)
+// bytes is about how much memory a beam takes beside the analysis of a scan.
+func (b *beamline) bytes() (n int64) {
+	for _, f := range slices.Compact([]*beam.Filters{b.filters, b.model}) {
+		for _, taps := range f.H {
+			n += 8 * int64(cap(taps))
 		}
 	}
-	return out
+	return n
 }
 
 // segmentsGiven settles the stretches that the options name.
@@ -223,7 +220,7 @@ func (s *scanner) segmentsGiven() (err error) {
 		s.result.Segments.Source, s.known = SegmentsIsolated, true
 		s.passedOver()
 		if s.set.IsolatedNoise == "" || s.set.IsolatedTarget == "" {
-			s.report(Finding{Code: "isolated-half", Severity: Info, Message: "an SNR gain needs both --isolated-noise and --isolated-target"})
+			s.report(Finding{Code: "isolated-half", Severity: Info, Message: "no gains: a scan measures them with both --isolated-noise and --isolated-target"})
 		}
 		return nil
 	}
@@ -251,19 +248,20 @@ func (s *scanner) passes(first []*beamline) error {
 	one := s.group >= len(s.directions)
 	for from := 0; from < len(s.directions); from += s.group {
 		to := min(from+s.group, len(s.directions))
-		a, err := s.pass(from, to, first)
+		a, lines, err := s.pass(from, to, first)
 		if err != nil {
 			return err
 		}
 		first = nil
 		s.levels(a, from, to)
 		if !s.known && one {
-			if err := s.find(a.Reference(), a.Beam(s.loudest())); err != nil {
+			k := s.loudest()
+			if err := s.find(a.Reference(), a.Beam(k), lines[k]); err != nil {
 				return err
 			}
 		}
 		if s.known {
-			if err := s.gains(a, from, to); err != nil {
+			if err := s.gains(a, lines, from); err != nil {
 				return err
 			}
 		}
@@ -272,58 +270,51 @@ func (s *scanner) passes(first []*beamline) error {
 		return nil
 	}
 	k := s.loudest()
-	a, err := s.pass(k, k+1, nil)
+	a, lines, err := s.pass(k, k+1, nil)
 	if err != nil {
 		return err
 	}
-	if err := s.find(a.Reference(), a.Beam(0)); err != nil || len(s.noise) == 0 {
+	if err := s.find(a.Reference(), a.Beam(0), lines[0]); err != nil || len(s.noise) == 0 {
 		return err
 	}
 	for from := 0; from < len(s.directions); from += s.group {
 		to := min(from+s.group, len(s.directions))
-		a, err := s.pass(from, to, nil)
+		a, lines, err := s.pass(from, to, nil)
 		if err != nil {
 			return err
 		}
-		if err := s.gains(a, from, to); err != nil {
+		if err := s.gains(a, lines, from); err != nil {
 			return err
 		}
 	}
 	return nil
 }
 
-// beams designs the filters of the directions from..to; first are those that
-// there are already.
-func (s *scanner) beams(from, to int, first []*beamline) ([]*beam.Filters, error) {
+// pass analyses the take for the directions from..to, and returns their beams
+// too; first are those that there are already.
+func (s *scanner) pass(from, to int, first []*beamline) (*scan.Analysis, []*beamline, error) {
 	rest, err := s.lines(s.directions[from+len(first) : to])
 	if err != nil {
-		return nil, err
+		return nil, nil, err
 	}
-	var sets []*beam.Filters
-	for _, line := range append(first, rest...) {
-		sets = append(sets, line.filters)
-	}
-	return sets, nil
-}
-
-// pass analyses the take for the directions from..to.
-func (s *scanner) pass(from, to int, first []*beamline) (*scan.Analysis, error) {
-	sets, err := s.beams(from, to, first)
-	if err != nil {
-		return nil, err
-	}
+	lines := append(first, rest...)
 	if err := s.take.rewind(); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	stage := "scanning"
 	if len(s.directions) > s.group {
 		stage = fmt.Sprintf("scanning directions %d to %d of %d", from+1, to, len(s.directions))
 	}
-	return s.analyse(sets, s.take, stage)
+	a, err := s.analyse(lines, s.take, stage)
+	return a, lines, err
 }
 
 // analyse runs the analysis over a take.
-func (s *scanner) analyse(sets []*beam.Filters, t *take, stage string) (*scan.Analysis, error) {
+func (s *scanner) analyse(lines []*beamline, t *take, stage string) (*scan.Analysis, error) {
+	sets := make([]*beam.Filters, len(lines))
+	for i, line := range lines {
+		sets[i] = line.filters
+	}
 	src, err := s.line.corrected(&watched{Source: t.source(), ctx: s.ctx, tell: s.tell(stage, t.header.Frames)})
 	if err != nil {
 		return nil, err
@@ -389,15 +380,10 @@ func (s *scanner) loudest() int {
 }
 
 // find finds the stretches by the beam to the loudest direction.
-func (s *scanner) find(reference, output *measure.Series) error {
+func (s *scanner) find(reference, output *measure.Series, loudest *beamline) error {
 	s.known = true
-	k := s.loudest()
-	lines, err := s.lines(s.directions[k : k+1])
-	if err != nil {
-		return err
-	}
 	expected := 0.0
-	if bands := lines[0].expected(); len(bands) > 0 {
+	if bands := loudest.expected(); len(bands) > 0 {
 		for _, v := range bands {
 			expected += v / float64(len(bands))
 		}
@@ -416,31 +402,8 @@ func (s *scanner) find(reference, output *measure.Series) error {
 			"no gain could be measured: %s; give --noise A..B and --target A..B, or takes of the noise and the target alone", found.Explanation)})
 	} else {
 		s.report(Finding{Code: "segments-from-loudest", Severity: Info, Message: fmt.Sprintf(
-			"the stretches of noise and target were found in the loudest direction, %s; where that is not the wanted sound, give --noise A..B and --target A..B", angles(s.directions[k]))})
+			"the stretches of noise and target were found in the loudest direction, %s; where that is not the wanted sound, give --noise A..B and --target A..B", angles(s.directions[s.loudest()]))})
 	}
 	s.segments(source)
 	return nil
-}
-
-// standOut finds the loudest direction and that of the largest gain.
-func (s *scanner) standOut() {
-	place := func(a *ScanAngle) *ScanPlace {
-		return &ScanPlace{a.AzimuthDeg, a.ElevationDeg, a.LevelDBFS, a.SNRGainDB}
-	}
-	var loud, best *ScanAngle
-	for i := range s.result.Angles {
-		a := &s.result.Angles[i]
-		if a.LevelDBFS != nil && (loud == nil || *a.LevelDBFS > *loud.LevelDBFS) {
-			loud = a
-		}
-		if a.SNRGainDB != nil && (best == nil || *a.SNRGainDB > *best.SNRGainDB) {
-			best = a
-		}
-	}
-	if loud != nil {
-		s.result.Loudest = place(loud)
-	}
-	if best != nil {
-		s.result.BestGain = place(best)
-	}
 }

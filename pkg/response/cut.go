@@ -112,9 +112,17 @@ func (b Beam) CutDistance() (metres float64, ok bool) {
 // CutWave returns the wave of a source at an angle of a cut: at CutDistance, or
 // far away.
 func (b Beam) CutWave(cut Cut, angle float64) acoustics.Wave {
-	from := cut.Toward(angle)
-	if metres, ok := b.CutDistance(); ok {
-		return acoustics.Spherical{At: b.Reference.Add(from.Unit().Scale(metres))}
+	return b.cutWaves(cut)(angle)
+}
+
+// cutWaves returns CutWave for many angles of a cut.
+func (b Beam) cutWaves(cut Cut) func(angle float64) acoustics.Wave {
+	metres, near := b.CutDistance()
+	return func(angle float64) acoustics.Wave {
+		from := cut.Toward(angle)
+		if near {
+			return acoustics.Spherical{At: b.Reference.Add(from.Unit().Scale(metres))}
+		}
+		return acoustics.Plane{From: from}
 	}
-	return acoustics.Plane{From: from}
 }

@@ -52,8 +52,8 @@ type Figures struct {
 const nullDepth = 0.01
 
 // Predict returns the figures of the beam along the cut at each of the
-// frequencies, Hz above 0, for sources at CutDistance. The beam must be one that Validate passes.
-// Frequencies at which the beam does not respond to its steered
+// frequencies, Hz above 0, for sources at CutDistance. The beam must be one that
+// Validate passes. Frequencies at which the beam does not respond to its steered
 // direction at all have nothing but gains.
 func (b Beam) Predict(cut Cut, hz []float64) []Figures {
 	out := make([]Figures, 0, len(hz))
@@ -82,6 +82,7 @@ func (b Beam) Predict(cut Cut, hz []float64) []Figures {
 type view struct {
 	beam      Beam
 	cut       Cut
+	wave      func(angle float64) acoustics.Wave // of a source at an angle of the cut
 	hz        float64
 	g         []complex128
 	reference float64 // power in the steered direction
@@ -92,7 +93,7 @@ type view struct {
 
 // along samples the beam along the cut, at least 24 times a lobe.
 func (b Beam) along(cut Cut, hz float64) *view {
-	v := &view{beam: b, cut: cut, hz: hz, g: b.Transfer.Response(nil, hz)}
+	v := &view{beam: b, cut: cut, wave: b.cutWaves(cut), hz: hz, g: b.Transfer.Response(nil, hz)}
 	v.reference = power(b.to(v.g, b.Look, hz))
 	lobe := b.Speed / math.Max(hz, 1) / math.Max(rig.Spread(b.Mics).Extent, 1e-6)
 	n := int(math.Min(40000, math.Max(720, 24*(cut.High-cut.Low)/lobe)))
@@ -120,7 +121,7 @@ func (b Beam) along(cut Cut, hz float64) *view {
 
 // power is the power at an angle of the cut re the steered direction.
 func (v *view) power(angle float64) float64 {
-	return power(v.beam.to(v.g, v.beam.CutWave(v.cut, angle), v.hz)) / v.reference
+	return power(v.beam.to(v.g, v.wave(angle), v.hz)) / v.reference
 }
 
 // at returns the power of sample k, counted on beyond the ends of a closed cut,
