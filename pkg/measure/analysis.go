@@ -96,7 +96,7 @@ func newLayout(rate int) (*layout, error) {
 		if g.decimated {
 			r = lowRate
 		}
-		first, weights := weigh(band, r/float64(g.size))
+		first, weights := band.Cells(r / float64(g.size))
 		g.bands = append(g.bands, b)
 		g.first = append(g.first, first)
 		g.weights = append(g.weights, weights)
@@ -118,11 +118,11 @@ func (l *layout) gridOf(band Band) int {
 	return 1
 }
 
-// weigh returns the weight of every bin for a band: the part of the bin's
-// cell, k-1/2 to k+1/2, that lies inside the band. spacing is the distance of
-// bins, hertz. The weights add up to the width of the band over the spacing,
-// so the effective bandwidth is exact.
-func weigh(b Band, spacing float64) (first int, weights []float32) {
+// Cells returns the first bin that the band has a part in, and of that and each
+// of the following ones the part of the bin's cell, k-1/2 to k+1/2, that lies
+// inside the band. spacing is the distance of bins, hertz. The parts add up to
+// the width of the band over the spacing, so the effective bandwidth is exact.
+func (b Band) Cells(spacing float64) (first int, weights []float32) {
 	low, high := b.LowHz/spacing, b.HighHz/spacing
 	first = int(math.Floor(low + 0.5))
 	for k := first; float64(k)-0.5 < high; k++ {

@@ -41,13 +41,13 @@ type Meter struct {
 	x       []float32
 	re, im  []float32
 	p       []float32
-	power   []float64   // power[band], of one channel
-	mean    [][]float64 // mean[grid][i]
-	byGrid  [][]float64 // scratch of one channel's powers in the order of the grid
-	sums    [][]float64 // sums[ch][band] over all windows
-	counts  []int       // windows of each grid
-	stores  []*store    // one a grid
-	perChan [][]*store  // perChan[slot][grid]
+	power   []float64    // power[band], of one channel
+	mean    [][]float64  // mean[grid][i]
+	byGrid  [][]float64  // scratch of one channel's powers in the order of the grid
+	sums    [][]float64  // sums[ch][band] over all windows
+	counts  []int        // windows of each grid
+	stores  []*History   // one a grid
+	perChan [][]*History // perChan[slot][grid]
 	closed  bool
 	failed  error
 }
@@ -130,25 +130,27 @@ func (m *Meter) allocate(o MeterOptions) {
 	for _, g := range l.grids {
 		rate += float64(len(g.bands)) / g.seconds
 	}
-	share := func(bytes int, g grid) int {
-		return int(float64(bytes) * float64(len(g.bands)) / g.seconds / rate)
+	// What g gets of so many bytes.
+	history := func(g grid, frames, bytes int) *History {
+		share := float64(bytes) * float64(len(g.bands)) / g.seconds / rate
+		return NewHistory(len(g.bands), frames, int(share)/(4*max(1, len(g.bands))))
 	}
 	for _, g := range l.grids {
-		m.stores = append(m.stores, newStore(len(g.bands), 1, share(o.SeriesBytes, g)))
+		m.stores = append(m.stores, history(g, 1, o.SeriesBytes))
 		m.mean = append(m.mean, make([]float64, len(g.bands)))
 		m.byGrid = append(m.byGrid, make([]float64, len(g.bands)))
 	}
 	if !o.PerChannel {
 		return
 	}
-	m.perChan = make([][]*store, len(m.used))
+	m.perChan = make([][]*History, len(m.used))
 	for i := range m.perChan {
 		for _, g := range l.grids {
 			frames := 1
 			for float64(frames)*g.seconds < shortChannelS {
 				frames *= 2
 			}
-			m.perChan[i] = append(m.perChan[i], newStore(len(g.bands), frames, share(o.ChannelBytes/len(m.used), g)))
+			m.perChan[i] = append(m.perChan[i], history(g, frames, o.ChannelBytes/len(m.used)))
 		}
 	}
 }
@@ -229,7 +231,7 @@ func (m *Meter) analyse(g, i int, x []float32) {
 		m.mean[g][j] += p
 	}
 	if m.perChan != nil {
-		m.perChan[i][g].add(own)
+		m.perChan[i][g].Add(own)
 	}
 }
 
@@ -239,7 +241,7 @@ func (m *Meter) finish(g int) {
 	for j := range m.mean[g] {
 		m.mean[g][j] *= scale
 	}
-	m.stores[g].add(m.mean[g])
+	m.stores[g].Add(m.mean[g])
 	clear(m.mean[g])
 	m.counts[g]++
 }
@@ -313,7 +315,7 @@ func (m *Meter) channels(from, to int) []*Series {
 	return list
 }
 
-func (m *Meter) series(stores []*store, from, to int) *Series {
+func (m *Meter) series(stores []*History, from, to int) *Series {
 	s := &Series{Tracks: make([]Track, to-from)}
 	for g := range m.layout.grids {
 		l := &m.layout.grids[g]
@@ -321,12 +323,12 @@ func (m *Meter) series(stores []*store, from, to int) *Series {
 			if b < from || b >= to {
 				continue
 			}
-			frames := float64(stores[g].frames)
+			frames := float64(stores[g].Windows())
 			s.Tracks[b-from] = Track{
 				Band:    m.layout.bands[b],
 				HopS:    frames * l.seconds,
 				LengthS: (frames + 1) * l.seconds,
-				Power:   stores[g].power[j],
+				Power:   stores[g].Power(j),
 			}
 		}
 	}

@@ -106,7 +106,7 @@ func newGrid(format audio.Format, size int, all []measure.Band, from, to int, se
 	spacing := float64(format.Rate) / float64(size)
 	g.low = int(math.Floor(all[from].LowHz/spacing + 0.5))
 	for b := from; b < to; b++ {
-		first, parts := cells(all[b], spacing)
+		first, parts := all[b].Cells(spacing)
 		g.bands = append(g.bands, b)
 		for at := first - g.low; len(parts) > 0; {
 			for at/chunk >= len(g.pieces) {
@@ -143,17 +143,6 @@ func newGrid(format audio.Format, size int, all []measure.Band, from, to int, se
 // imaginary part lies kernel.Line further.
 func (g *grid) at(m, k int) int {
 	return (k/kernel.Line*g.mics+m)*2*kernel.Line + k%kernel.Line
-}
-
-// cells returns the first bin of a band, and of each of its bins the part of
-// the cell k-1/2 to k+1/2 that lies in the band.
-func cells(b measure.Band, spacing float64) (first int, parts []float32) {
-	low, high := b.LowHz/spacing, b.HighHz/spacing
-	first = int(math.Floor(low + 0.5))
-	for k := first; float64(k)-0.5 < high; k++ {
-		parts = append(parts, float32(math.Min(high, float64(k)+0.5)-math.Max(low, float64(k)-0.5)))
-	}
-	return first, parts
 }
 
 // responses are those of the filters at the bins. Taps wrapped around the
@@ -207,7 +196,7 @@ func (g *grid) take(_ int64, s *spectral.Spectra) error {
 		clear(g.own)
 		for c, list := range g.pieces {
 			p := g.p[:min(chunk, top-c*chunk)]
-			squares(p, re[c*chunk:], im[c*chunk:])
+			kernel.Powers(p, re[c*chunk:][:len(p)], im[c*chunk:][:len(p)])
 			inBands(g.own, p, list)
 		}
 		for i, p := range g.own {
@@ -248,14 +237,6 @@ func (g *grid) beamsOf() {
 		}
 	}
 	g.filled = 0
-}
-
-// squares sets p to re² + im².
-func squares(p, re, im []float32) {
-	re, im = re[:len(p)], im[:len(p)]
-	for k := range p {
-		p[k] = re[k]*re[k] + im[k]*im[k]
-	}
 }
 
 // inBands adds the powers of a chunk of bins to those of its bands.

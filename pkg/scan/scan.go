@@ -160,8 +160,8 @@ func (a *Analysis) series(of func(*grid) *store) *measure.Series {
 	for b, at := range a.place {
 		g := a.grids[at[0]]
 		st := of(g)
-		n := float64(st.windows)
-		s.Tracks[b] = measure.Track{Band: a.bands[b], HopS: n * g.seconds, LengthS: (n + 1) * g.seconds, Power: st.power[at[1]]}
+		n := float64(st.Windows())
+		s.Tracks[b] = measure.Track{Band: a.bands[b], HopS: n * g.seconds, LengthS: (n + 1) * g.seconds, Power: st.Power(at[1])}
 	}
 	return s
 }
