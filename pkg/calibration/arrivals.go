@@ -37,7 +37,7 @@ func Arrivals(open func() (audio.Source, error), at []rig.Point, known []rig.Mic
 	rate := src.Format().Rate
 	across := rig.Spread(at).Extent/speed + 4*margin/speed
 	if o.MaxDelay = across + 100e-6; o.MaxDelay > 0.02 {
-		return nil, 0, &RefusedError{Why: fmt.Sprintf("sound takes %.1f ms across the rig: places are looked for in rigs of at most 6 m", 1000*across)}
+		return nil, 0, &RefusedError{Why: fmt.Sprintf("sound takes %.1f ms across the rig: places are looked for in rigs of at most 6 m", 1000*across), Help: "give a rig file with a part of the microphones, and put the parts together by those that they share"}
 	}
 	o.anywhere = true
 	nowhere := &Expected{At: at, Speed: speed, Delay: make([]float64, len(at)), LevelDB: make([]float64, len(at))}
