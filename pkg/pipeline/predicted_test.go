@@ -20,15 +20,20 @@ const enoughTB = 700
 // SNR gain, from the target and the noise alone, lies within 0.5 dB of what was
 // predicted in at least 99 % of the bands with a product of time and bandwidth of
 // 700 (the accuracy that the design states), and its mean over seeds differs by at
-// most 0.05 dB in every band, three standard errors of that mean aside; so does
-// what is predicted from the covariance of the noise.
+// most 0.05 dB in every band, one standard error of that mean aside, which must
+// itself be smaller than that. What is predicted from the covariance of the noise
+// rests on 8 s of it and has twice the spread: 0.1 dB, in the same manner. Means
+// of fewer than eight seeds tell nothing of the kind and are not looked at.
 func TestMeasuredGainIsThePredictedOne(t *testing.T) {
-	const tolerance = 0.05
+	const (
+		tolerance, inTolerance = 0.05, 0.1
+		enoughSeeds            = 8
+	)
 	seeds, seconds, most, method := 1, 8, 1, "mixing"
 	if os.Getenv("ALIDADE_LONG") == "1" {
-		seeds, seconds, most, method = 8, 30, 3, "waves, waves: 512"
+		seeds, seconds, most, method = 16, 30, 3, "waves, waves: 512"
 	} else {
-		t.Log("8 s of 1 seed with the first weights, noise mixed to the coherence; ALIDADE_LONG=1 runs 30 s of 8 seeds with all, noise of 512 waves")
+		t.Log("8 s of 1 seed with the first weights, noise mixed to the coherence, bands by themselves; ALIDADE_LONG=1 runs 30 s of 16 seeds with all, noise of 512 waves, and looks at the means over the seeds")
 	}
 	floor := -6.0
 	for _, field := range []struct {
@@ -90,7 +95,14 @@ sources:
 				}
 			}
 		}
-		worstMean, worstIn, largest := 0.0, 0.0, 0.0
+		t.Logf("%s: %d of %d bands within 0.5 dB, worst %.2f dB", field.name, within, all, worst)
+		if float64(within) < 0.99*float64(all) {
+			t.Errorf("%s: %d of %d bands within 0.5 dB of the prediction, want 99 %%", field.name, within, all)
+		}
+		if seeds < enoughSeeds {
+			continue
+		}
+		worstMean, worstIn, largest, largestIn := 0.0, 0.0, 0.0, 0.0
 		for i := range tallies {
 			// The error of a mean is known from few seeds only: that of all bands
 			// together stands in where a band's own is smaller.
@@ -104,28 +116,25 @@ sources:
 				mean, se := meanOf(y.off)
 				in, seIn := meanOf(y.inNoise)
 				se, seIn = math.Max(se, math.Sqrt(all)), math.Max(seIn, math.Sqrt(allIn))
-				worstMean, worstIn, largest = math.Max(worstMean, math.Abs(mean)), math.Max(worstIn, math.Abs(in)), math.Max(largest, se)
-				if math.Abs(mean) > tolerance+3*se || math.Abs(in) > tolerance+3*seIn {
-					t.Errorf("%s, option %d: %g Hz: measured differs from predicted by %.3f ± %.3f dB on the mean over %d seeds, what is predicted in the measured noise by %.3f ± %.3f, want %g",
-						field.name, i, hz, mean, se, seeds, in, seIn, tolerance)
+				worstMean, worstIn = math.Max(worstMean, math.Abs(mean)), math.Max(worstIn, math.Abs(in))
+				largest, largestIn = math.Max(largest, se), math.Max(largestIn, seIn)
+				if math.Abs(mean) > tolerance+se || math.Abs(in) > inTolerance+seIn {
+					t.Errorf("%s, option %d: %g Hz: measured differs from predicted by %.3f ± %.3f dB on the mean over %d seeds, want %g; what is predicted in the measured noise by %.3f ± %.3f, want %g",
+						field.name, i, hz, mean, se, seeds, tolerance, in, seIn, inTolerance)
 				}
 			}
 		}
-		t.Logf("%s: %d of %d bands within 0.5 dB, worst %.2f dB; mean over %d seeds at most %.3f dB (largest standard error %.3f), in the measured noise %.3f dB", field.name, within, all, worst, seeds, worstMean, largest, worstIn)
-		if float64(within) < 0.99*float64(all) {
-			t.Errorf("%s: %d of %d bands within 0.5 dB of the prediction, want 99 %%", field.name, within, all)
+		t.Logf("%s: mean over %d seeds at most %.3f dB (largest standard error %.3f), in the measured noise %.3f dB (%.3f)", field.name, seeds, worstMean, largest, worstIn, largestIn)
+		if largest > tolerance || largestIn > inTolerance {
+			t.Errorf("%s: standard errors of the means up to %.3f and %.3f dB are too large to tell %g and %g dB: more seeds", field.name, largest, largestIn, tolerance, inTolerance)
 		}
 	}
 }
 
-// meanOf returns the mean and its standard error; of one value, the error is
-// taken for 0.25 dB, two standard deviations of such a figure.
+// meanOf returns the mean of two values or more and its standard error.
 func meanOf(v []float64) (mean, se float64) {
 	for _, x := range v {
 		mean += x / float64(len(v))
-	}
-	if len(v) < 2 {
-		return mean, 0.25
 	}
 	for _, x := range v {
 		se += (x - mean) * (x - mean)
