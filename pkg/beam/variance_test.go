@@ -24,6 +24,7 @@ type field struct {
 	diffuse    float64 // power re target
 	sensor     float64
 	fault      []complex128 // of each microphone
+	limit      float64      // Hz from which on a grating lobe is there: c/(d(1+|cos|)), as in check A13
 }
 
 // noise returns the covariance of the noise at hz.
@@ -136,19 +137,29 @@ func (f field) overall(filters *Filters) float64 {
 	return db(noise * target)
 }
 
+// The rigs of the drawn fields: a ring of eight 16 cm across and a line of eight
+// 35 cm long.
+const (
+	ringRadius  = 0.08
+	lineSpacing = 0.05
+)
+
 // draw makes a field: an eight-microphone ring with the interferer at least 45
-// degrees from the target, or a line with it at least 30.
+// degrees from the target, or a line with it at least 30, both then within 60
+// degrees of broadside: a line hears the cosine of the angle alone, and 30
+// degrees from its end are a quarter of the cosine that they are at broadside.
 func draw(r *rand.Rand, onLine bool, diffuseDB float64) field {
-	f := field{diffuse: math.Pow(10, diffuseDB/10), sensor: 1e-4, fault: []complex128{1, 1, 1, 1, 1, 1, 1, 1}}
-	f.task = Task{Mics: ring(8, 0.06), Speed: 343, Rate: 32000, FFTSize: 2048}
+	f := field{diffuse: math.Pow(10, diffuseDB/10), sensor: 1e-4, fault: []complex128{1, 1, 1, 1, 1, 1, 1, 1}, limit: math.Inf(1)}
+	f.task = Task{Mics: ring(8, ringRadius), Speed: 343, Rate: 32000, FFTSize: 2048}
 	target := 360 * r.Float64()
 	other := target + 45 + 270*r.Float64()
 	if onLine {
-		f.task.Mics = line(8, 0.04)
-		target = 20 + 140*r.Float64()
+		f.task.Mics = line(8, lineSpacing)
+		target = 30 + 120*r.Float64()
 		for other = target; math.Abs(other-target) < 30; {
-			other = 180 * r.Float64()
+			other = 30 + 120*r.Float64()
 		}
+		f.limit = f.task.Speed / (lineSpacing * (1 + math.Abs(math.Cos(target*math.Pi/180))))
 	}
 	f.task.Look, f.target, f.interferer = wave(target), wave(target), wave(other)
 	return f
@@ -160,8 +171,8 @@ func seeds(t *testing.T) uint64 {
 	if os.Getenv("ALIDADE_LONG") == "1" {
 		return 50
 	}
-	t.Log("2 of 50 seeds; ALIDADE_LONG=1 runs them all")
-	return 2
+	t.Log("1 of 50 seeds, the line alone; ALIDADE_LONG=1 runs them all, and the ring")
+	return 1
 }
 
 // noiseFrames is what the weights are found from: four seconds.
@@ -170,21 +181,31 @@ const noiseFrames = 1 << 17
 // spectra are the power of target and noise alike over a logarithmic axis of
 // frequency from 100 Hz to 8 kHz: what "overall" means depends on it. That of
 // speech is flat up to 500 Hz and falls by 9 dB an octave of density above,
-// roughly the long-term average (common practice).
+// roughly the long-term average (common practice). White noise has nine tenths of
+// its power above 0.9 kHz, and on a line most of it above the grating limit, where
+// the interferer may stand in a grating lobe and nothing tells it from the target:
+// such bands carry the flag grating, and white is taken both without them and with.
 var spectra = []struct {
 	name  string
-	power func(hz float64) float64
+	power func(hz, limit float64) float64
+	held  bool // to the goal in every case
 }{
-	{"pink", func(hz float64) float64 { return 1 }},
-	{"white", func(hz float64) float64 { return hz }},
-	{"speech", func(hz float64) float64 { return hz / (1 + math.Pow(hz/500, 3)) }},
+	{"pink", func(hz, _ float64) float64 { return 1 }, true},
+	{"speech", func(hz, _ float64) float64 { return hz / (1 + math.Pow(hz/500, 3)) }, true},
+	{"white unflagged", func(hz, limit float64) float64 {
+		if hz >= limit {
+			return 0
+		}
+		return hz
+	}, true},
+	{"white to 8 kHz", func(hz, _ float64) float64 { return hz }, false},
 }
 
 // gains are the overall SNR gains, dB, of responses in every spectrum.
-func (f field) gains(response func(hz float64) []complex128) (overall [3]float64) {
+func (f field) gains(response func(hz float64) []complex128) (overall [4]float64) {
 	const points = 160
 	n := len(f.task.Mics)
-	var in, out, target, all [3]float64
+	var in, out, target, all [4]float64
 	for i := range points {
 		hz := 100 * math.Pow(80, (float64(i)+0.5)/points)
 		g := response(hz)
@@ -200,7 +221,7 @@ func (f field) gains(response func(hz float64) []complex128) (overall [3]float64
 			}
 		}
 		for s, spectrum := range spectra {
-			p := spectrum.power(hz)
+			p := spectrum.power(hz, f.limit)
 			in[s] += p * mean
 			out[s] += p * real(power)
 			target[s] += p * abs2(y)
@@ -215,7 +236,7 @@ func (f field) gains(response func(hz float64) []complex128) (overall [3]float64
 
 // best are the gains that no weights with the floor can exceed: the optimum for
 // the exact covariance, frequency by frequency, with no filter to be built.
-func (f field) best(t *testing.T, floorDB float64) [3]float64 {
+func (f field) best(t *testing.T, floorDB float64) [4]float64 {
 	t.Helper()
 	n := len(f.task.Mics)
 	job := newBinJob(n, 1)
@@ -236,20 +257,23 @@ func (f field) best(t *testing.T, floorDB float64) [3]float64 {
 
 // Minimum variance against delay-and-sum, one interferer as loud as the target,
 // weights from 4 s of noise, gains in the expected noise, floor -6 dB; ring (45°
-// apart or more) and line (30°). Wanted are 6 dB more than delay-and-sum with
-// diffuse noise at -10 dB and 12 dB with it at -20 dB. Over 50 seeds, with pink
-// spectra, the ring reaches it in 50 and 45 of 50 and the line in 48 and 46: as
-// many as the optimum for the exact covariance does, which no weights that keep
-// the floor can exceed. Without a floor that optimum reaches it in all 50 of
-// each, so that the floor is what the rest stand at: their interferer lies near
-// the target, and to turn from the one to the other within the lowest octaves
-// takes more white noise gain than 6 dB. With the spectra of speech the numbers
-// are 50, 48, 48 and 47, of the optimum the same; with white ones 50, 50, 43 and
-// 41 where the optimum has 50, 50, 45 and 42, and for the line 45 and 44 even
-// without a floor: diffuse noise and its grating lobe above 4.3 kHz fill the rest.
+// apart or more) and line (30°). It is 6 dB better than delay-and-sum with
+// diffuse noise at -10 dB and 12 dB with it at -20 dB, in every one of 50 cases
+// each, with pink spectra, those of speech, and white ones in the bands without a
+// grating lobe: least for the ring 9.0 and 13.0, for the line 6.0 and 13.1. No
+// case is more than 0.5 dB below the optimum for the exact covariance, which no
+// weights that keep the floor can exceed. The target is kept within 0.5 dB in
+// every band.
 //
-// So the test is against that optimum: at most 0.5 dB below it in every case and
-// spectrum. The target is kept within 0.5 dB in every band.
+// What the rigs and angles have to be, by that optimum: a ring of 60 mm misses the
+// 12 dB in one case of 14 (pink), since to turn from the target to an interferer
+// 45° away within the lowest octaves takes more white noise gain than 6 dB; 80 mm
+// and more miss none of 200. A line does so where both stand near its end (0° and
+// 30° are 0.13 apart in the cosine, 60° and 90° are 0.5): 40 mm with angles down to
+// the end miss 6 dB in 4 and 12 dB in 8 of 100, 30 to 60 mm within 60° of broadside
+// in 0 to 2, 50 mm in none. With white spectra to 8 kHz any line of 40 mm and more
+// misses them in 10 to 40 of 100, with a floor or without: most of the power then
+// lies above the grating limit, where the interferer may stand in a grating lobe.
 func TestMinimumVarianceGainOverDelayAndSum(t *testing.T) {
 	n := seeds(t)
 	for _, v := range []struct {
@@ -260,7 +284,10 @@ func TestMinimumVarianceGainOverDelayAndSum(t *testing.T) {
 		{"ring, diffuse -10 dB", false, -10, 6}, {"line, diffuse -10 dB", true, -10, 6},
 		{"ring, diffuse -20 dB", false, -20, 12}, {"line, diffuse -20 dB", true, -20, 12},
 	} {
-		rows := map[string]*[3][]float64{}
+		if n == 1 && (!v.onLine || v.diffuse != -10) {
+			continue
+		}
+		rows := map[string]*[4][]float64{}
 		worstTarget, worstLoss := 0.0, 0.0
 		for seed := uint64(1); seed <= n; seed++ {
 			r := rand.New(rand.NewPCG(seed, 77))
@@ -271,9 +298,9 @@ func TestMinimumVarianceGainOverDelayAndSum(t *testing.T) {
 			_, filters, _ := built(t, MVDR{Noise: noise, FloorDB: -6}, f.task, 0)
 			learned := f.gains(func(hz float64) []complex128 { return filters.Response(nil, hz) })
 			best := f.best(t, -6)
-			for name, gains := range map[string][3]float64{"as built": learned, "optimum": best, "without a floor": f.best(t, math.Inf(-1))} {
+			for name, gains := range map[string][4]float64{"as built": learned, "optimum": best, "without a floor": f.best(t, math.Inf(-1))} {
 				if rows[name] == nil {
-					rows[name] = &[3][]float64{}
+					rows[name] = &[4][]float64{}
 				}
 				for s := range gains {
 					rows[name][s] = append(rows[name][s], gains[s]-base[s])
@@ -282,6 +309,9 @@ func TestMinimumVarianceGainOverDelayAndSum(t *testing.T) {
 			for s := range best {
 				loss := best[s] - learned[s]
 				worstLoss = math.Max(worstLoss, loss)
+				if spectra[s].held && learned[s]-base[s] < v.goal {
+					t.Errorf("%s, seed %d, %s: %.2f dB better than delay-and-sum, want %g", v.name, seed, spectra[s].name, learned[s]-base[s], v.goal)
+				}
 				if loss > 0.5 {
 					t.Errorf("%s, seed %d, %s: %.2f dB better than delay-and-sum, want at most 0.5 dB below the optimum of %.2f", v.name, seed, spectra[s].name, learned[s]-base[s], best[s]-base[s])
 				}
@@ -311,12 +341,15 @@ func TestMinimumVarianceGainOverDelayAndSum(t *testing.T) {
 // The same with a steering error of 5 degrees and channel errors of up to 0.5 dB
 // and 5 degrees, evenly distributed: still 3 dB better at floor -6 dB, and at
 // floor 0 dB no band below the grating limit loses 3 dB of the target. (With
-// normally distributed errors of 0.5 dB and 5 degrees rms the line loses more
-// than that in some bands in 11 of 50 cases, 5.4 dB at worst: measured noise
+// normally distributed errors of 0.5 dB and 5 degrees rms a line of 40 mm with
+// angles down to its end loses more than that in some bands in 11 of 50 cases, 5.4 dB at worst: measured noise
 // carries the channel errors, and weights may meet the constraint through them.)
 func TestMinimumVarianceWithErrors(t *testing.T) {
 	n := seeds(t)
 	for name, onLine := range map[string]bool{"ring": false, "line": true} {
+		if n == 1 && !onLine {
+			continue
+		}
 		least, worst := math.Inf(1), 0.0
 		for seed := uint64(1); seed <= n; seed++ {
 			r := rand.New(rand.NewPCG(seed, 78))
@@ -334,7 +367,7 @@ func TestMinimumVarianceWithErrors(t *testing.T) {
 				t.Errorf("%s, seed %d: %.2f dB better than delay-and-sum, want 3", name, seed, better)
 			}
 			_, safe, _ := built(t, MVDR{Noise: noise, FloorDB: 0}, f.task, 0)
-			for x := -9; x <= 6; x++ { // up to 4 kHz: a 40 mm line aliases from 4.3 kHz on
+			for x := -9; x <= 6; x++ { // up to 4 kHz: the line has grating lobes from 3.5 to 6.9 kHz on
 				mid := 1000 * math.Pow(10, float64(x)/10)
 				_, target := f.gain(safe, mid*math.Pow(10, -0.05), mid*math.Pow(10, 0.05), 8)
 				worst = math.Min(worst, db(target))
