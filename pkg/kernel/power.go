@@ -49,3 +49,19 @@ func powerOfSums(p, x, w []float32, sources int) {
 		}
 	}
 }
+
+// WeightedSums sets dst[t] = Σ_k p[t·stride + k]·w[k] for four rows t and the
+// values of w, a multiple of Line. It panics if a slice is too short for that.
+func WeightedSums(dst *[4]float32, p []float32, stride int, w []float32) {
+	n := len(w)
+	if n%Line != 0 || stride < n || len(p) < 3*stride+n {
+		panic(fmt.Sprintf("kernel: weighted sums of %d values: rows of %d in %d", n, stride, len(p)))
+	}
+	if vector && n > 0 {
+		weightedSumsAVX2(&dst[0], &p[0], 4*stride, &w[0], n/Line)
+		return
+	}
+	for t := range dst {
+		dst[t] = dot(p[t*stride:][:n], w)
+	}
+}

@@ -67,6 +67,47 @@ func TestPowerOfSumsRefusesShortSlices(t *testing.T) {
 	}
 }
 
+// Every number of lines, at any alignment, against double precision.
+func TestWeightedSumsAgainstDoublePrecision(t *testing.T) {
+	bothSets(t, func(t *testing.T) {
+		r := rand.New(rand.NewPCG(5, 1))
+		for _, n := range []int{0, 8, 16, 72} {
+			stride := n + 3
+			p, pOK := guarded(r, 3*stride+n)
+			w, wOK := guarded(r, n)
+			var got [4]float32
+			WeightedSums(&got, p, stride, w)
+			if !pOK() || !wOK() {
+				t.Fatalf("%d values: written outside", n)
+			}
+			for row, v := range got {
+				want, size := 0.0, 0.0
+				for k, x := range w {
+					d := float64(x) * float64(p[row*stride+k])
+					want += d
+					size += math.Abs(d)
+				}
+				if math.Abs(float64(v)-want) > 1e-6*size {
+					t.Errorf("%d values, row %d: %g, want %g", n, row, v, want)
+				}
+			}
+		}
+	})
+	for name, call := range map[string]func(){
+		"rows": func() { WeightedSums(new([4]float32), make([]float32, 31), 8, make([]float32, 8)) }, "values": func() { WeightedSums(new([4]float32), make([]float32, 64), 9, make([]float32, 9)) },
+		"stride": func() { WeightedSums(new([4]float32), make([]float32, 64), 7, make([]float32, 8)) },
+	} {
+		func() {
+			defer func() {
+				if recover() == nil {
+					t.Errorf("%s: no panic", name)
+				}
+			}()
+			call()
+		}()
+	}
+}
+
 func BenchmarkPowerOfSums(b *testing.B) {
 	for _, set := range []string{Plain, AVX2} {
 		b.Run(set, func(b *testing.B) {

@@ -19,6 +19,11 @@ func addProductAVX2(sr *float32, si *float32, ar *float32, ai *float32, br *floa
 //go:noescape
 func powerOfSumsAVX2(p *float32, pStride int, x *float32, xStride int, w *float32, sources int, lines int)
 
+// weightedSumsAVX2 sets four sums of 8·lines products; the stride is in bytes, lines at least 1.
+//
+//go:noescape
+func weightedSumsAVX2(dst *float32, p *float32, stride int, w *float32, lines int)
+
 // firstStepFloat32AVX2 is the first step; count is a multiple of 8.
 //
 //go:noescape

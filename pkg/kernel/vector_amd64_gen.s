@@ -236,6 +236,47 @@ source:
 	VZEROUPPER
 	RET
 
+// func weightedSumsAVX2(dst *float32, p *float32, stride int, w *float32, lines int)
+// Requires: AVX, FMA3
+TEXT ·weightedSumsAVX2(SB), NOSPLIT, $0-40
+	MOVQ   dst+0(FP), AX
+	MOVQ   p+8(FP), CX
+	MOVQ   stride+16(FP), DX
+	MOVQ   w+24(FP), BX
+	MOVQ   lines+32(FP), SI
+	VXORPS Y0, Y0, Y0
+	MOVQ   CX, DI
+	ADDQ   DX, DI
+	VXORPS Y1, Y1, Y1
+	MOVQ   DI, R8
+	ADDQ   DX, R8
+	VXORPS Y2, Y2, Y2
+	MOVQ   R8, R9
+	ADDQ   DX, R9
+	VXORPS Y3, Y3, Y3
+
+line:
+	VMOVUPS      (BX), Y4
+	ADDQ         $0x20, BX
+	VFMADD231PS  (CX), Y4, Y0
+	ADDQ         $0x20, CX
+	VFMADD231PS  (DI), Y4, Y1
+	ADDQ         $0x20, DI
+	VFMADD231PS  (R8), Y4, Y2
+	ADDQ         $0x20, R8
+	VFMADD231PS  (R9), Y4, Y3
+	ADDQ         $0x20, R9
+	DECQ         SI
+	JNE          line
+	VHADDPS      Y1, Y0, Y0
+	VHADDPS      Y3, Y2, Y2
+	VHADDPS      Y2, Y0, Y0
+	VEXTRACTF128 $0x01, Y0, X1
+	VADDPS       X1, X0, X1
+	VMOVUPS      X1, (AX)
+	VZEROUPPER
+	RET
+
 // func firstStepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int)
 // Requires: AVX, FMA3
 TEXT ·firstStepFloat32AVX2(SB), NOSPLIT, $0-48

@@ -20,11 +20,16 @@ const (
 )
 
 // batch is how many windows are taken through all beams at once, a multiple of
-// four, so that the weights of a beam are fetched once for all of them, and
-// chunk how many bins: what caches hold of the weights of a beam and of a batch.
+// four, so that the weights of a beam come from memory once for all of them. Bins
+// are taken in chunks such that rowBytes hold the microphones of one window, four
+// of which stay in the first-level cache while beams pass them; and beams in
+// groups whose weights, groupBytes, stay in the second-level cache while the
+// windows pass them.
 const (
-	batch = 16
-	chunk = 16 * kernel.Line
+	batch      = 32
+	rowBytes   = 4 << 10
+	groupBytes = 192 << 10
+	lineBytes  = 2 * kernel.Line * 4 // of one microphone
 )
 
 // grid is one window length with the bands that are taken from it.
@@ -36,24 +41,26 @@ type grid struct {
 	pieces    [][]piece // pieces[chunk]: the parts of the bands in it
 	low, bins int       // the bins low..low+bins are needed, whole lines of them
 	mics      int
+	chunk     int // bins, a multiple of kernel.Line
+	group     int // beams
 	stft      *spectral.STFT
 
 	weights [][]float32 // [beam], in lines as kernel.PowerOfSums takes them
 	x       []float32   // the windows of a batch, in such lines
 	filled  int
-	p       []float32 // [window][bin of a chunk]
-	powers  []float64 // [beam][window][band] of a batch
-	own     []float64 // [band] of a microphone or of the reference
-	mean    []float64
+	p       []float32 // [one of four windows][bin of a chunk]
+	all     []float32 // power of all microphones in each bin of a window
+	powers  []float64 // [beam][band][window] of a batch
+	one     []float64 // [band] of one window
 	beams   []*store
 	ref     *store
 }
 
-// piece is what a chunk of bins holds of a band.
+// piece is what a chunk of bins holds of a band, in whole lines.
 type piece struct {
 	band  int
-	first int // bin of the chunk
-	parts []float32
+	first int       // bin of the chunk
+	parts []float32 // of each bin that lies in the band
 }
 
 // sizes returns the window lengths, frames: the short ones and, where bands
@@ -105,15 +112,20 @@ func newGrid(format audio.Format, size int, all []measure.Band, from, to int, se
 	g.scale = 4 / (float64(size) * energy)
 	spacing := float64(format.Rate) / float64(size)
 	g.low = int(math.Floor(all[from].LowHz/spacing + 0.5))
+	g.chunk = max(1, min(16, rowBytes/(lineBytes*g.mics))) * kernel.Line
+	g.group = max(1, groupBytes/(g.chunk/kernel.Line*lineBytes*g.mics))
 	for b := from; b < to; b++ {
 		first, parts := all[b].Cells(spacing)
 		g.bands = append(g.bands, b)
 		for at := first - g.low; len(parts) > 0; {
-			for at/chunk >= len(g.pieces) {
+			for at/g.chunk >= len(g.pieces) {
 				g.pieces = append(g.pieces, nil)
 			}
-			n := min(len(parts), chunk-at%chunk)
-			g.pieces[at/chunk] = append(g.pieces[at/chunk], piece{b - from, at % chunk, parts[:n]})
+			n := min(len(parts), g.chunk-at%g.chunk)
+			begin := at % g.chunk / kernel.Line * kernel.Line
+			lines := make([]float32, (at%g.chunk+n-begin+kernel.Line-1)/kernel.Line*kernel.Line)
+			copy(lines[at%g.chunk-begin:], parts[:n])
+			g.pieces[at/g.chunk] = append(g.pieces[at/g.chunk], piece{b - from, begin, lines})
 			parts, at = parts[n:], at+n
 			g.bins = at
 		}
@@ -124,9 +136,10 @@ func newGrid(format audio.Format, size int, all []measure.Band, from, to int, se
 		return nil, err
 	}
 	g.x = make([]float32, batch*2*g.mics*g.bins)
-	g.p = make([]float32, 4*chunk)
+	g.p = make([]float32, 4*g.chunk)
+	g.all = make([]float32, g.bins)
 	g.powers = make([]float64, len(sets)*batch*len(g.bands))
-	g.own, g.mean = make([]float64, len(g.bands)), make([]float64, len(g.bands))
+	g.one = make([]float64, len(g.bands))
 	g.ref = newStore(len(g.bands), o.Entries)
 	plan, err := spectral.NewFFT[float64](size)
 	if err != nil {
@@ -184,8 +197,9 @@ func (g *grid) responses(f *beam.Filters, plan *spectral.FFT[float64]) []float32
 // take is given each window by the transform.
 func (g *grid) take(_ int64, s *spectral.Spectra) error {
 	x := g.x[g.filled*2*g.mics*g.bins:]
-	clear(g.mean)
 	top := min(g.bins, s.Bins()-g.low)
+	all := g.all[:top]
+	clear(all)
 	for m := range g.mics {
 		re, im := s.Re[m][g.low:g.low+top], s.Im[m][g.low:g.low+top]
 		for k := 0; k < top; k += kernel.Line {
@@ -193,17 +207,18 @@ func (g *grid) take(_ int64, s *spectral.Spectra) error {
 			copy(x[i:i+kernel.Line], re[k:min(k+kernel.Line, top)])
 			copy(x[i+kernel.Line:i+2*kernel.Line], im[k:min(k+kernel.Line, top)])
 		}
-		clear(g.own)
-		for c, list := range g.pieces {
-			p := g.p[:min(chunk, top-c*chunk)]
-			kernel.Powers(p, re[c*chunk:][:len(p)], im[c*chunk:][:len(p)])
-			inBands(g.own, p, list)
-		}
-		for i, p := range g.own {
-			g.mean[i] += g.scale * p / float64(g.mics)
+		for k, r := range re {
+			all[k] += r*r + im[k]*im[k]
 		}
 	}
-	g.ref.add(g.mean)
+	clear(g.one)
+	for c, list := range g.pieces {
+		for _, part := range list {
+			sum := kernel.Dot(g.all[c*g.chunk+part.first:][:len(part.parts)], part.parts)
+			g.one[part.band] += g.scale * float64(sum) / float64(g.mics)
+		}
+	}
+	g.ref.add(g.one)
 	if g.filled++; g.filled == batch {
 		g.beamsOf()
 	}
@@ -212,49 +227,43 @@ func (g *grid) take(_ int64, s *spectral.Spectra) error {
 
 // beamsOf takes the windows of the batch through all beams, chunk by chunk.
 func (g *grid) beamsOf() {
-	bands := len(g.bands)
 	clear(g.powers)
 	for c, list := range g.pieces {
-		from := c * chunk
-		n := min(chunk, g.bins-from)
-		for i, w := range g.weights {
-			for t := 0; t < g.filled; t += 4 { // windows beyond those filled are of no use and do no harm
-				row := 2 * g.mics * g.bins
-				kernel.PowerOfSums(g.p, chunk, g.x[t*row+g.at(0, from):], row, w[g.at(0, from):], g.mics, n)
-				for u := t; u < min(t+4, g.filled); u++ {
-					inBands(g.powers[(i*batch+u)*bands:][:bands], g.p[(u-t)*chunk:][:n], list)
-				}
-			}
+		for i := 0; i < len(g.weights); i += g.group {
+			g.beamsIn(c, list, i, min(i+g.group, len(g.weights)))
 		}
 	}
 	for i, s := range g.beams {
+		powers := g.powers[i*len(g.bands)*batch:]
 		for t := range g.filled {
-			powers := g.powers[(i*batch+t)*bands:][:bands]
-			for b := range powers {
-				powers[b] *= g.scale
+			for b := range g.one {
+				g.one[b] = g.scale * powers[b*batch+t]
 			}
-			s.add(powers)
+			s.add(g.one)
 		}
 	}
 	g.filled = 0
 }
 
-// inBands adds the powers of a chunk of bins to those of its bands.
-func inBands(dst []float64, p []float32, list []piece) {
-	for _, part := range list {
-		w := part.parts
-		x := p[part.first : part.first+len(w)]
-		var s0, s1, s2, s3 float32
-		for len(w) >= 4 && len(x) >= 4 {
-			s0 += w[0] * x[0]
-			s1 += w[1] * x[1]
-			s2 += w[2] * x[2]
-			s3 += w[3] * x[3]
-			w, x = w[4:], x[4:]
+// beamsIn adds what a chunk of bins holds of the bands to the powers of the beams
+// from..to. Windows beyond those filled are of no use and do no harm.
+func (g *grid) beamsIn(c int, list []piece, from, to int) {
+	at, n := g.at(0, c*g.chunk), min(g.chunk, g.bins-c*g.chunk)
+	row := 2 * g.mics * g.bins
+	var sums [4]float32
+	for t := 0; t < g.filled; t += 4 {
+		x := g.x[t*row+at:]
+		for i := from; i < to; i++ {
+			kernel.PowerOfSums(g.p, g.chunk, x, row, g.weights[i][at:], g.mics, n)
+			powers := g.powers[i*len(g.bands)*batch+t:]
+			for _, part := range list {
+				kernel.WeightedSums(&sums, g.p[part.first:], g.chunk, part.parts)
+				p := powers[part.band*batch:][:4]
+				p[0] += float64(sums[0])
+				p[1] += float64(sums[1])
+				p[2] += float64(sums[2])
+				p[3] += float64(sums[3])
+			}
 		}
-		for k, v := range w {
-			s0 += v * x[k]
-		}
-		dst[part.band] += float64(s0+s1) + float64(s2+s3)
 	}
 }

@@ -20,6 +20,7 @@ func main() {
 	addFIR()
 	addProduct()
 	powerOfSums()
+	weightedSums()
 	for _, b := range []int{4, 8} {
 		precision(b)
 		transforms()

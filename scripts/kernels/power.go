@@ -58,3 +58,40 @@ func powerOfSums() {
 	JNE(LabelRef("line"))
 	end()
 }
+
+// weightedSums is dst[t] = Σ_k p[t][k]·w[k] for four rows t: a sum in a register
+// of its own each, and one fold of all four at the end.
+func weightedSums() {
+	function("weightedSumsAVX2", "func(dst *float32, p *float32, stride int, w *float32, lines int)",
+		"weightedSumsAVX2 sets four sums of 8·lines products; the stride is in bytes, lines at least 1.")
+	at := params("dst", "p", "stride", "w", "lines")
+	dst, p, stride, w, lines := at[0], at[1], at[2], at[3], at[4]
+	rows := []Register{p, GP64(), GP64(), GP64()}
+	var s [4]VecVirtual
+	for t := range s {
+		if t > 0 {
+			MOVQ(rows[t-1], rows[t])
+			ADDQ(stride, rows[t])
+		}
+		s[t] = YMM()
+		VXORPS(s[t], s[t], s[t])
+	}
+	Label("line")
+	v := YMM()
+	VMOVUPS(Mem{Base: w}, v)
+	ADDQ(Imm(32), w)
+	for t, row := range rows {
+		VFMADD231PS(Mem{Base: row}, v, s[t])
+		ADDQ(Imm(32), row)
+	}
+	DECQ(lines)
+	JNE(LabelRef("line"))
+	VHADDPS(s[1], s[0], s[0])
+	VHADDPS(s[3], s[2], s[2])
+	VHADDPS(s[2], s[0], s[0])
+	half := XMM()
+	VEXTRACTF128(Imm(1), s[0], half)
+	VADDPS(half, s[0].AsX(), half)
+	VMOVUPS(half, Mem{Base: dst})
+	end()
+}
