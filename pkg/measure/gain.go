@@ -2,6 +2,8 @@ package measure
 
 import (
 	"math"
+	"slices"
+	"sync"
 
 	"alidade/pkg/audio"
 )
@@ -177,24 +179,36 @@ func newPart(ref, out Track, at []int) part {
 
 func (p *part) short() bool { return p.count < LeastEntries || p.seconds < LeastSeconds }
 
-// residuals is a·ref + b·out of every entry, less the mean, and where the
-// entries stand.
-func (p *part) residuals(a, b float64) (z []float64, at []int) {
-	z, at = make([]float64, 0, p.count), make([]int, 0, p.count)
+// residuals appends a·ref + b·out of every entry, less the mean, to z and where
+// the entries stand to at.
+func (p *part) residuals(z []float64, at []int, a, b float64) ([]float64, []int) {
+	z, at = slices.Grow(z, p.count), slices.Grow(at, p.count)
 	for _, r := range p.runs {
-		for j := r.from; j < r.to; j++ {
-			z = append(z, a*(float64(p.ref[j])-p.refMean)+b*(float64(p.out[j])-p.outMean))
-			at = append(at, j)
+		out := p.out[r.from:r.to]
+		for i, v := range p.ref[r.from:r.to] {
+			z = append(z, a*(float64(v)-p.refMean)+b*(float64(out[i])-p.outMean))
+			at = append(at, r.from+i)
 		}
 	}
 	return z, at
 }
 
+// values are residuals and their places. A scan asks for hundreds of thousands
+// of them: they are used again.
+type values struct {
+	z  []float64
+	at []int
+}
+
+var workspace = sync.Pool{New: func() any { return new(values) }}
+
 // spread is the spread of the mean of a·ref + b·out, with blocks of at least
 // slowS seconds.
 func (p *part) spread(a, b, slowS float64) spread {
-	z, at := p.residuals(a, b)
-	return meanSpread(z, at, int(math.Round(slowS/p.hopS)))
+	w := workspace.Get().(*values)
+	defer workspace.Put(w)
+	w.z, w.at = p.residuals(w.z[:0], w.at[:0], a, b)
+	return meanSpread(w.z, w.at, int(math.Round(slowS/p.hopS)))
 }
 
 func number(v float64) *float64 { return &v }

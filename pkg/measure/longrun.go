@@ -2,6 +2,7 @@ package measure
 
 import (
 	"math"
+	"sync"
 
 	"gonum.org/v1/gonum/stat/distuv"
 )
@@ -100,37 +101,114 @@ const mostUnits = 3000
 func unitSpread(z []float64, at []int, least int) spread {
 	n := float64(len(z))
 	block := blockLength(z, at, least)
-	q, sum, square, rows2 := 0.0, 0.0, 0.0, 0.0
-	row := make([]float64, len(z))
-	fourth, second := 0.0, 0.0
-	for i := range z {
-		row[i]++
-		sum++
-		square++
-		q += z[i] * z[i]
-		second += z[i] * z[i]
-		fourth += z[i] * z[i] * z[i] * z[i]
-		for j := i + 1; j < len(z) && at[j]-at[i] < block; j++ {
-			k := 1 - float64(at[j]-at[i])/float64(block)
-			q += 2 * k * z[i] * z[j]
-			sum += 2 * k
-			square += 2 * k * k
-			row[i] += k
-			row[j] += k
+	second, fourth := 0.0, 0.0
+	for _, v := range z {
+		second += v * v
+		fourth += v * v * v * v
+	}
+	// Values further apart than a block have nothing to do with each other.
+	f := form{block: block}
+	for from := 0; from < len(z); {
+		to := from + 1
+		for to < len(z) && at[to]-at[to-1] < block {
+			to++
 		}
+		if at[to-1]-at[from] == to-1-from {
+			f.row(z[from:to])
+		} else {
+			f.scattered(z[from:to], at[from:to])
+		}
+		from = to
 	}
-	for _, r := range row {
-		rows2 += r * r
-	}
-	trace := n - sum/n
+	trace := n - f.sum/n
 	if trace < 0.5 || !(second > 0) {
 		return spread{0, math.Max(1, n-1), block}
 	}
-	dof := trace * trace / (square - 2*rows2/n + sum*sum/(n*n))
+	dof := trace * trace / (f.square - 2*f.rows/n + f.sum*f.sum/(n*n))
 	if kurtosis := n * fourth / (second * second); kurtosis > 3 {
 		dof *= 2 / (kurtosis - 1)
 	}
-	return spread{q / (n * trace), math.Max(dof, 1), block}
+	return spread{f.q / (n * trace), math.Max(dof, 1), block}
+}
+
+// form is the quadratic form Q of values and what its spread needs of κ.
+type form struct {
+	block  int
+	q      float64 // Σ κ_ij z_i z_j
+	sum    float64 // Σ κ_ij
+	square float64 // Σ κ_ij²
+	rows   float64 // Σ_i (Σ_j κ_ij)²
+}
+
+// row adds values that stand in a row: sums distance by distance.
+func (f *form) row(z []float64) {
+	n := len(z)
+	reach := min(f.block, n) - 1 // the largest distance that counts
+	for d := range reach + 1 {
+		k := 1 - float64(d)/float64(f.block)
+		pairs := float64(n - d)
+		if d > 0 {
+			pairs *= 2
+			f.q += 2 * k * product(z[:n-d], z[d:])
+		} else {
+			f.q += product(z, z)
+		}
+		f.sum += k * pairs
+		f.square += k * k * pairs
+	}
+	// The sum of a row is that of all distances to both sides, as far as they go.
+	side := func(m int) float64 {
+		m = min(m, reach)
+		return float64(m) - float64(m)*float64(m+1)/(2*float64(f.block))
+	}
+	edge := min(reach, n/2)
+	for i := range edge {
+		r := 1 + side(i) + side(n-1-i)
+		f.rows += 2 * r * r
+	}
+	if inside := n - 2*edge; inside > 0 {
+		r := 1 + side(edge) + side(n-1-edge)
+		f.rows += float64(inside) * r * r
+	}
+}
+
+// product is Σ a_i·b_i.
+func product(a, b []float64) float64 {
+	b = b[:len(a)]
+	var s0, s1, s2, s3 float64
+	for len(a) >= 4 && len(b) >= 4 {
+		s0 += a[0] * b[0]
+		s1 += a[1] * b[1]
+		s2 += a[2] * b[2]
+		s3 += a[3] * b[3]
+		a, b = a[4:], b[4:]
+	}
+	for i, v := range a {
+		s0 += v * b[i]
+	}
+	return (s0 + s1) + (s2 + s3)
+}
+
+// scattered adds values with gaps: pair by pair.
+func (f *form) scattered(z []float64, at []int) {
+	rows := make([]float64, len(z))
+	for i := range z {
+		rows[i]++
+		f.sum++
+		f.square++
+		f.q += z[i] * z[i]
+		for j := i + 1; j < len(z) && at[j]-at[i] < f.block; j++ {
+			k := 1 - float64(at[j]-at[i])/float64(f.block)
+			f.q += 2 * k * z[i] * z[j]
+			f.sum += 2 * k
+			f.square += 2 * k * k
+			rows[i] += k
+			rows[j] += k
+		}
+	}
+	for _, r := range rows {
+		f.rows += r * r
+	}
 }
 
 // blockLength is the length of Bartlett's kernel for z: that of Andrews for the
@@ -188,13 +266,36 @@ func (s spread) half() float64 {
 	return studentT(s.dof) * math.Sqrt(s.variance)
 }
 
-// studentT is the 97.5 % point of Student's distribution.
+// studentT is the 97.5 % point of Student's distribution, to 1e-8 of it.
 func studentT(dof float64) float64 {
 	if !(dof >= 1) {
 		dof = 1
 	}
-	return distuv.StudentsT{Mu: 0, Sigma: 1, Nu: dof}.Quantile(0.975)
+	x := 4/dof - 2
+	c := student()
+	var b0, b1 float64 // Clenshaw's recurrence
+	for k := len(c) - 1; k > 0; k-- {
+		b0, b1 = c[k]+x*b0-b1, b0
+	}
+	return math.Exp(c[0] + x/2*b0 - b1)
 }
+
+// student is a Chebyshev series of the logarithm of that point over the inverse
+// degrees of freedom, 0 to 1, where it is smooth: a scan with intervals asks for
+// a hundred thousand of them, and each takes the inverse of an incomplete beta
+// function.
+var student = sync.OnceValue(func() (c [17]float64) {
+	const n = len(c)
+	for i := range n {
+		angle := math.Pi * (float64(i) + 0.5) / float64(n)
+		v := math.Log(distuv.StudentsT{Mu: 0, Sigma: 1, Nu: 2 / (1 + math.Cos(angle))}.Quantile(0.975))
+		for k := range c {
+			c[k] += 2 / float64(n) * v * math.Cos(float64(k)*angle)
+		}
+	}
+	c[0] /= 2
+	return c
+})
 
 // overshoot is how much further than a plain 95 % interval the interval about
 // an estimate has to reach towards zero because the estimate was reported only

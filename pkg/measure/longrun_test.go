@@ -4,6 +4,8 @@ import (
 	"math"
 	"math/rand/v2"
 	"testing"
+
+	"gonum.org/v1/gonum/stat/distuv"
 )
 
 // residuals takes the mean out of z and counts the places.
@@ -72,6 +74,60 @@ func TestSpreadOfAutoregressiveValues(t *testing.T) {
 		if got := sum / trials * n * (1 - a) * (1 - a); got < 0.8 || got > 1.05 {
 			t.Errorf("AR(1) with %g: variance %.3f of the true one", a, got)
 		}
+	}
+}
+
+// The sums distance by distance against the definition pair by pair, for values
+// in a row, with gaps within a block and with gaps beyond it.
+func TestQuadraticFormTwoWays(t *testing.T) {
+	r := rand.New(rand.NewPCG(8, 31))
+	for _, n := range []int{2, 3, 4, 7, 24, 60, 61, 350} {
+		for name, gap := range map[string]func(int) int{
+			"in a row": func(int) int { return 0 },
+			"close":    func(i int) int { return i / 5 },
+			"far":      func(i int) int { return 90 * (i / 9) },
+			"mixed":    func(i int) int { return 3*(i/11) + 70*(i/30) },
+		} {
+			for _, least := range []int{0, 1, 5, 40} {
+				z := make([]float64, n)
+				for i := range z {
+					z[i] = r.NormFloat64()
+				}
+				at := residuals(z, gap)
+				plain := form{block: blockLength(z, at, least)}
+				plain.scattered(z, at)
+				trace, second, fourth := float64(n)-plain.sum/float64(n), 0.0, 0.0
+				for _, v := range z {
+					second, fourth = second+v*v, fourth+v*v*v*v
+				}
+				want := spread{plain.q / (float64(n) * trace), 0, plain.block}
+				want.dof = trace * trace / (plain.square - 2*plain.rows/float64(n) + plain.sum*plain.sum/float64(n*n))
+				if k := float64(n) * fourth / (second * second); k > 3 {
+					want.dof *= 2 / (k - 1)
+				}
+				want.dof = math.Max(want.dof, 1)
+				if trace < 0.5 {
+					want = spread{0, math.Max(1, float64(n)-1), plain.block}
+				}
+				got := unitSpread(z, at, least)
+				if got.block != want.block || math.Abs(got.variance-want.variance) > 1e-9*(second/float64(n*n)) || math.Abs(got.dof/want.dof-1) > 1e-9 {
+					t.Errorf("%d values %s, least block %d: %+v, want %+v", n, name, least, got, want)
+				}
+			}
+		}
+	}
+}
+
+// The series against the distribution of gonum, which stands for tables.
+func TestStudentSeries(t *testing.T) {
+	for dof := 1.0; dof < 1e5; dof *= 1.037 {
+		want := distuv.StudentsT{Mu: 0, Sigma: 1, Nu: dof}.Quantile(0.975)
+		if got := studentT(dof); math.Abs(got/want-1) > 1e-8 {
+			t.Errorf("%g degrees of freedom: %.12g, want %.12g", dof, got, want)
+		}
+	}
+	if got := studentT(math.Inf(1)); math.Abs(got-1.959963985) > 1e-7 {
+		t.Errorf("normal distribution: %.10g", got)
 	}
 }
 

@@ -181,14 +181,15 @@ func (g *Gains) cells(bands []int, target bool, a, c, slowS float64) (spread, bo
 	sum := make([]float64, count)
 	seen := make([]int, count)
 	own, n := make([]float64, count), make([]int, count)
+	var w values
 	for _, b := range bands {
 		p := pick(b)
 		clear(own)
 		clear(n)
-		z, at := p.residuals(a, c)
-		for i, j := range at {
+		w.z, w.at = p.residuals(w.z[:0], w.at[:0], a, c)
+		for i, j := range w.at {
 			cell := int((p.startS+float64(j)*p.hopS)/width + 1e-6)
-			own[cell] += z[i]
+			own[cell] += w.z[i]
 			n[cell]++
 		}
 		for i := range sum {

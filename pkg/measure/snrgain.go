@@ -223,7 +223,7 @@ func slowBlock(parts []*part) float64 {
 		if p.hopS > hop*(1+1e-9) || !(p.refMean > 0) {
 			continue
 		}
-		own, places := p.residuals(1/p.refMean, 0)
+		own, places := p.residuals(nil, nil, 1/p.refMean, 0)
 		if z == nil {
 			z, at = own, places
 			continue
