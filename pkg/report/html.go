@@ -160,9 +160,11 @@ func viewTake(r *pipeline.Result, assets Assets) (*takeView, error) {
 		Totals: totalsOf(r), Made: made(r), Definitions: definitions, Channels: channelViews(r), Player: playerOf(r),
 	}
 	list := findingViews(r)
-	// Remarks wait behind a fold once there are many findings; warnings never.
+	// Remarks wait behind a fold once there are more findings than stand beside
+	// the summary; warnings never.
+	const shownRemarks = 4
 	for i, f := range list {
-		if i >= 6 && f.Severity == string(pipeline.Info) {
+		if i >= shownRemarks && f.Severity == string(pipeline.Info) {
 			v.MoreFindings = append(v.MoreFindings, f)
 		} else {
 			v.Findings = append(v.Findings, f)

@@ -137,7 +137,7 @@ var flagNotes = []struct{ flag, short, long string }{
 	{"grating", "grating lobes", "another direction is heard as loud as the steered one: the microphones stand too far apart for so high a sound"},
 	{"no-aperture", "a rig too small for the wavelength", "less than 1 dB of noise from everywhere can go away: the rig is too small for so low a sound"},
 	{"sparse", "too little sound behind the figure", "fewer than 30 independent samples stand behind the figure: a longer stretch helps"},
-	{"target-unmeasurable", "a target that does not stand out of the noise", "the level with the target does not exceed the noise significantly: only the noise reduction is given"},
+	{"target-unmeasurable", "a target that does not stand out of the noise", "the target has no figure: its level does not exceed the noise significantly, or no stretch with it, or with noise alone, is known"},
 }
 
 // distrust lists the flagged bands with what is the matter with them, in plain
