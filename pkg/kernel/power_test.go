@@ -2,6 +2,7 @@ package kernel
 
 import (
 	"math"
+	"math/cmplx"
 	"math/rand/v2"
 	"testing"
 )
@@ -65,6 +66,89 @@ func TestPowerOfSumsRefusesShortSlices(t *testing.T) {
 			call()
 		}()
 	}
+}
+
+// A pair is two sources of PowerOfSums with conjugate weights.
+func TestPowerOfPairsAgainstDoublePrecision(t *testing.T) {
+	bothSets(t, func(t *testing.T) {
+		r := rand.New(rand.NewPCG(4, 2))
+		for _, pairs := range []int{1, 2, 7, 33} {
+			for _, bins := range []int{0, 8, 16, 72} {
+				pStride, xStride := bins+5, 4*pairs*bins+3
+				p, pOK := guarded(r, 3*pStride+bins)
+				x, xOK := guarded(r, 3*xStride+4*pairs*bins)
+				w, wOK := guarded(r, 2*pairs*bins)
+				PowerOfPairs(p, pStride, x, xStride, w, pairs, bins)
+				if !pOK() || !xOK() || !wOK() {
+					t.Fatalf("%d pairs, %d bins: written outside", pairs, bins)
+				}
+				for row := range 4 {
+					for k := range bins {
+						var sum complex128
+						size := 0.0
+						for q := range pairs {
+							at := k/Line*pairs + q
+							y := x[row*xStride+4*Line*at+k%Line:]
+							v := w[2*Line*at+k%Line:]
+							s, d := complex(float64(y[0]), float64(y[Line])), complex(float64(y[2*Line]), float64(y[3*Line]))
+							a := complex(float64(v[0]), float64(v[Line]))
+							sum += a*(s+d)/2 + cmplx.Conj(a)*(s-d)/2
+							size += real(s*cmplx.Conj(s)+d*cmplx.Conj(d)+a*cmplx.Conj(a)) / 2
+						}
+						want := real(sum)*real(sum) + imag(sum)*imag(sum)
+						if v := p[row*pStride+k]; math.Abs(float64(v)-want) > 1e-6*(want+size*size) {
+							t.Errorf("%d pairs, row %d, bin %d: %g, want %g", pairs, row, k, v, want)
+						}
+					}
+				}
+			}
+		}
+	})
+	f := func(n int) []float32 { return make([]float32, n) }
+	for name, call := range map[string]func(){
+		"p": func() { PowerOfPairs(f(31), 8, f(256), 64, f(32), 2, 8) }, "x": func() { PowerOfPairs(f(32), 8, f(255), 64, f(32), 2, 8) },
+		"w": func() { PowerOfPairs(f(32), 8, f(256), 64, f(31), 2, 8) }, "bins": func() { PowerOfPairs(f(32), 8, f(256), 64, f(32), 2, 7) },
+		"stride": func() { PowerOfPairs(f(32), 8, f(256), 63, f(32), 2, 8) }, "pairs": func() { PowerOfPairs(f(32), 8, f(256), 64, f(32), 0, 8) },
+	} {
+		func() {
+			defer func() {
+				if recover() == nil {
+					t.Errorf("%s: no panic", name)
+				}
+			}()
+			call()
+		}()
+	}
+}
+
+// The pairs that FoldPair makes are what PowerOfPairs takes: with weights w and
+// their conjugates, a and k·b add up to what double precision says.
+func TestFoldPairAgainstDoublePrecision(t *testing.T) {
+	bothSets(t, func(t *testing.T) {
+		r := rand.New(rand.NewPCG(4, 3))
+		for _, n := range []int{0, 8, 40} {
+			const stride = 4*Line + 5
+			y, ok := guarded(r, max(0, (n/Line-1)*stride+4*Line))
+			var v [6][]float32
+			for i := range v {
+				v[i], _ = guarded(r, n)
+			}
+			FoldPair(y, stride, v[0], v[1], v[2], v[3], v[4], v[5])
+			if !ok() {
+				t.Fatalf("%d bins: written outside", n)
+			}
+			for k := range n {
+				c := func(i int) complex128 { return complex(float64(v[i][k]), float64(v[i+1][k])) }
+				at := y[k/Line*stride+k%Line:]
+				for i, want := range []complex128{c(0) + c(2)*c(4), c(0) - c(2)*c(4)} {
+					got := complex(float64(at[2*i*Line]), float64(at[(2*i+1)*Line]))
+					if cmplx.Abs(got-want) > 1e-6*(cmplx.Abs(c(0))+cmplx.Abs(c(2)*c(4))) {
+						t.Errorf("%d bins, bin %d: %v, want %v", n, k, got, want)
+					}
+				}
+			}
+		}
+	})
 }
 
 // Every number of lines, at any alignment, against double precision.

@@ -18,6 +18,14 @@ func powerOfSumsAVX2(p *float32, pStride int, x *float32, xStride int, w *float3
 	none()
 }
 
+func powerOfPairsAVX2(p *float32, pStride int, x *float32, xStride int, w *float32, pairs int, lines int) {
+	none()
+}
+
+func foldPairAVX2(y *float32, stride int, ar *float32, ai *float32, br *float32, bi *float32, kr *float32, ki *float32, lines int) {
+	none()
+}
+
 func weightedSumsAVX2(dst *float32, p *float32, stride int, w *float32, lines int) { none() }
 
 func firstStepFloat32AVX2(yr *float32, yi *float32, xr *float32, xi *float32, wide *float32, count int) {

@@ -19,10 +19,20 @@ func addProductAVX2(sr *float32, si *float32, ar *float32, ai *float32, br *floa
 //go:noescape
 func powerOfSumsAVX2(p *float32, pStride int, x *float32, xStride int, w *float32, sources int, lines int)
 
+// powerOfPairsAVX2 sets four rows of 8·lines powers; strides are in bytes, pairs and lines at least 1.
+//
+//go:noescape
+func powerOfPairsAVX2(p *float32, pStride int, x *float32, xStride int, w *float32, pairs int, lines int)
+
 // weightedSumsAVX2 sets four sums of 8·lines products; the stride is in bytes, lines at least 1.
 //
 //go:noescape
 func weightedSumsAVX2(dst *float32, p *float32, stride int, w *float32, lines int)
+
+// foldPairAVX2 writes 8·lines bins of a pair; the stride is in bytes, lines at least 1.
+//
+//go:noescape
+func foldPairAVX2(y *float32, stride int, ar *float32, ai *float32, br *float32, bi *float32, kr *float32, ki *float32, lines int)
 
 // firstStepFloat32AVX2 is the first step; count is a multiple of 8.
 //

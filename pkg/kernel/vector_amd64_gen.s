@@ -236,6 +236,87 @@ source:
 	VZEROUPPER
 	RET
 
+// func powerOfPairsAVX2(p *float32, pStride int, x *float32, xStride int, w *float32, pairs int, lines int)
+// Requires: AVX, FMA3
+TEXT ·powerOfPairsAVX2(SB), NOSPLIT, $0-56
+	MOVQ p+0(FP), AX
+	MOVQ pStride+8(FP), CX
+	MOVQ x+16(FP), DX
+	MOVQ xStride+24(FP), BX
+	MOVQ w+32(FP), SI
+	MOVQ pairs+40(FP), DI
+	MOVQ lines+48(FP), R8
+	MOVQ DX, R9
+	ADDQ BX, R9
+	MOVQ AX, R12
+	ADDQ CX, R12
+	MOVQ R9, R10
+	ADDQ BX, R10
+	MOVQ R12, R13
+	ADDQ CX, R13
+	MOVQ R10, R11
+	ADDQ BX, R11
+	MOVQ R13, BX
+	ADDQ CX, BX
+
+line:
+	VXORPS Y0, Y0, Y0
+	VXORPS Y1, Y1, Y1
+	VXORPS Y2, Y2, Y2
+	VXORPS Y3, Y3, Y3
+	VXORPS Y4, Y4, Y4
+	VXORPS Y5, Y5, Y5
+	VXORPS Y6, Y6, Y6
+	VXORPS Y7, Y7, Y7
+	MOVQ   DI, CX
+
+source:
+	VMOVUPS      (SI), Y8
+	VMOVUPS      32(SI), Y9
+	ADDQ         $0x40, SI
+	VFMADD231PS  (DX), Y8, Y0
+	VFMADD231PS  32(DX), Y8, Y1
+	VFMADD231PS  64(DX), Y9, Y1
+	VFNMADD231PS 96(DX), Y9, Y0
+	ADDQ         $0x00000080, DX
+	VFMADD231PS  (R9), Y8, Y2
+	VFMADD231PS  32(R9), Y8, Y3
+	VFMADD231PS  64(R9), Y9, Y3
+	VFNMADD231PS 96(R9), Y9, Y2
+	ADDQ         $0x00000080, R9
+	VFMADD231PS  (R10), Y8, Y4
+	VFMADD231PS  32(R10), Y8, Y5
+	VFMADD231PS  64(R10), Y9, Y5
+	VFNMADD231PS 96(R10), Y9, Y4
+	ADDQ         $0x00000080, R10
+	VFMADD231PS  (R11), Y8, Y6
+	VFMADD231PS  32(R11), Y8, Y7
+	VFMADD231PS  64(R11), Y9, Y7
+	VFNMADD231PS 96(R11), Y9, Y6
+	ADDQ         $0x00000080, R11
+	DECQ         CX
+	JNE          source
+	VMULPS       Y0, Y0, Y0
+	VFMADD231PS  Y1, Y1, Y0
+	VMOVUPS      Y0, (AX)
+	ADDQ         $0x20, AX
+	VMULPS       Y2, Y2, Y2
+	VFMADD231PS  Y3, Y3, Y2
+	VMOVUPS      Y2, (R12)
+	ADDQ         $0x20, R12
+	VMULPS       Y4, Y4, Y4
+	VFMADD231PS  Y5, Y5, Y4
+	VMOVUPS      Y4, (R13)
+	ADDQ         $0x20, R13
+	VMULPS       Y6, Y6, Y6
+	VFMADD231PS  Y7, Y7, Y6
+	VMOVUPS      Y6, (BX)
+	ADDQ         $0x20, BX
+	DECQ         R8
+	JNE          line
+	VZEROUPPER
+	RET
+
 // func weightedSumsAVX2(dst *float32, p *float32, stride int, w *float32, lines int)
 // Requires: AVX, FMA3
 TEXT ·weightedSumsAVX2(SB), NOSPLIT, $0-40
@@ -274,6 +355,50 @@ line:
 	VEXTRACTF128 $0x01, Y0, X1
 	VADDPS       X1, X0, X1
 	VMOVUPS      X1, (AX)
+	VZEROUPPER
+	RET
+
+// func foldPairAVX2(y *float32, stride int, ar *float32, ai *float32, br *float32, bi *float32, kr *float32, ki *float32, lines int)
+// Requires: AVX, FMA3
+TEXT ·foldPairAVX2(SB), NOSPLIT, $0-72
+	MOVQ y+0(FP), AX
+	MOVQ stride+8(FP), CX
+	MOVQ ar+16(FP), DX
+	MOVQ ai+24(FP), BX
+	MOVQ br+32(FP), SI
+	MOVQ bi+40(FP), DI
+	MOVQ kr+48(FP), R8
+	MOVQ ki+56(FP), R9
+	MOVQ lines+64(FP), R10
+
+line:
+	VMOVUPS     (DX), Y0
+	ADDQ        $0x20, DX
+	VMOVUPS     (BX), Y1
+	ADDQ        $0x20, BX
+	VMOVUPS     (SI), Y2
+	ADDQ        $0x20, SI
+	VMOVUPS     (DI), Y3
+	ADDQ        $0x20, DI
+	VMOVUPS     (R8), Y4
+	ADDQ        $0x20, R8
+	VMOVUPS     (R9), Y5
+	ADDQ        $0x20, R9
+	VMULPS      Y3, Y5, Y6
+	VFMSUB231PS Y2, Y4, Y6
+	VMULPS      Y2, Y5, Y2
+	VFMADD231PS Y3, Y4, Y2
+	VADDPS      Y6, Y0, Y3
+	VMOVUPS     Y3, (AX)
+	VADDPS      Y2, Y1, Y3
+	VMOVUPS     Y3, 32(AX)
+	VSUBPS      Y6, Y0, Y3
+	VMOVUPS     Y3, 64(AX)
+	VSUBPS      Y2, Y1, Y3
+	VMOVUPS     Y3, 96(AX)
+	ADDQ        CX, AX
+	DECQ        R10
+	JNE         line
 	VZEROUPPER
 	RET
 

@@ -28,7 +28,10 @@
 // # Cost
 //
 // A beam costs one complex product a microphone, bin and window, and no
-// transform. Covariances of the microphones (which cost microphones squared once,
+// transform; half of that for microphones whose responses mirror one another in
+// all beams to -60 dB, as those of every rig do that is the same seen from the
+// other side, whatever the corrections of its channels, with its centre as the
+// reference point and with weights that do not come from measured noise. Covariances of the microphones (which cost microphones squared once,
 // and then nothing a second for each beam) were not taken: the spread of a gain
 // needs the powers over time, and those would cost a covariance a window.
 //

@@ -28,7 +28,7 @@ const (
 const (
 	batch      = 32
 	rowBytes   = 4 << 10
-	groupBytes = 192 << 10
+	groupBytes = 128 << 10
 	lineBytes  = 2 * kernel.Line * 4 // of one microphone
 )
 
@@ -45,7 +45,9 @@ type grid struct {
 	group     int // beams
 	stft      *spectral.STFT
 
-	weights [][]float32 // [beam], in lines as kernel.PowerOfSums takes them
+	pairs   *pairs      // nil where microphones are taken one by one
+	weights [][]float32 // [beam], in lines as kernel.PowerOfSums takes them, or PowerOfPairs
+	row     int         // values of a window in x
 	x       []float32   // the windows of a batch, in such lines
 	filled  int
 	p       []float32 // [one of four windows][bin of a chunk]
@@ -135,7 +137,6 @@ func newGrid(format audio.Format, size int, all []measure.Band, from, to int, se
 	if g.stft, err = spectral.NewSTFT(format.Channels, size, g.hop, window, g.take); err != nil {
 		return nil, err
 	}
-	g.x = make([]float32, batch*2*g.mics*g.bins)
 	g.p = make([]float32, 4*g.chunk)
 	g.all = make([]float32, g.bins)
 	g.powers = make([]float64, len(sets)*batch*len(g.bands))
@@ -145,8 +146,17 @@ func newGrid(format audio.Format, size int, all []measure.Band, from, to int, se
 	if err != nil {
 		return nil, err
 	}
-	for _, f := range sets {
-		g.weights = append(g.weights, g.responses(f, plan))
+	g.row = 2 * g.mics * g.bins
+	if g.pairs = g.pairsOf(sets, plan); g.pairs != nil {
+		g.row = 4 * len(g.pairs.a) * g.bins
+	} else {
+		g.weights = g.weights[:0]
+		for _, f := range sets {
+			g.weights = append(g.weights, g.responses(nil, f, plan))
+		}
+	}
+	g.x = make([]float32, batch*g.row)
+	for range sets {
 		g.beams = append(g.beams, newStore(len(g.bands), o.Entries))
 	}
 	return g, nil
@@ -158,10 +168,13 @@ func (g *grid) at(m, k int) int {
 	return (k/kernel.Line*g.mics+m)*2*kernel.Line + k%kernel.Line
 }
 
-// responses are those of the filters at the bins. Taps wrapped around the
+// responses are those of the filters at the bins, in lines as kernel.PowerOfSums
+// takes them and in the room of w if that is not nil. Taps wrapped around the
 // transform keep their phase at its bins exactly.
-func (g *grid) responses(f *beam.Filters, plan *spectral.FFT[float64]) []float32 {
-	w := make([]float32, 2*g.mics*g.bins)
+func (g *grid) responses(w []float32, f *beam.Filters, plan *spectral.FFT[float64]) []float32 {
+	if w == nil {
+		w = make([]float32, 2*g.mics*g.bins)
+	}
 	top := min(g.bins, g.size/2+1-g.low)
 	if 32*g.bins < g.size {
 		var at []complex128
@@ -196,13 +209,13 @@ func (g *grid) responses(f *beam.Filters, plan *spectral.FFT[float64]) []float32
 
 // take is given each window by the transform.
 func (g *grid) take(_ int64, s *spectral.Spectra) error {
-	x := g.x[g.filled*2*g.mics*g.bins:]
+	x := g.x[g.filled*g.row:]
 	top := min(g.bins, s.Bins()-g.low)
 	all := g.all[:top]
 	clear(all)
 	for m := range g.mics {
 		re, im := s.Re[m][g.low:g.low+top], s.Im[m][g.low:g.low+top]
-		for k := 0; k < top; k += kernel.Line {
+		for k := 0; k < top && g.pairs == nil; k += kernel.Line {
 			i := g.at(m, k)
 			copy(x[i:i+kernel.Line], re[k:min(k+kernel.Line, top)])
 			copy(x[i+kernel.Line:i+2*kernel.Line], im[k:min(k+kernel.Line, top)])
@@ -210,6 +223,9 @@ func (g *grid) take(_ int64, s *spectral.Spectra) error {
 		for k, r := range re {
 			all[k] += r*r + im[k]*im[k]
 		}
+	}
+	if g.pairs != nil {
+		g.pairs.fold(x, s.Re, s.Im, g.low, top)
 	}
 	clear(g.one)
 	for c, list := range g.pieces {
@@ -248,13 +264,18 @@ func (g *grid) beamsOf() {
 // beamsIn adds what a chunk of bins holds of the bands to the powers of the beams
 // from..to. Windows beyond those filled are of no use and do no harm.
 func (g *grid) beamsIn(c int, list []piece, from, to int) {
-	at, n := g.at(0, c*g.chunk), min(g.chunk, g.bins-c*g.chunk)
-	row := 2 * g.mics * g.bins
+	line, n := c*g.chunk/kernel.Line, min(g.chunk, g.bins-c*g.chunk)
 	var sums [4]float32
 	for t := 0; t < g.filled; t += 4 {
-		x := g.x[t*row+at:]
+		x := g.x[t*g.row:]
 		for i := from; i < to; i++ {
-			kernel.PowerOfSums(g.p, g.chunk, x, row, g.weights[i][at:], g.mics, n)
+			if g.pairs != nil {
+				at := line * len(g.pairs.a) * 2 * kernel.Line
+				kernel.PowerOfPairs(g.p, g.chunk, x[2*at:], g.row, g.weights[i][at:], len(g.pairs.a), n)
+			} else {
+				at := g.at(0, c*g.chunk)
+				kernel.PowerOfSums(g.p, g.chunk, x[at:], g.row, g.weights[i][at:], g.mics, n)
+			}
 			powers := g.powers[i*len(g.bands)*batch+t:]
 			for _, part := range list {
 				kernel.WeightedSums(&sums, g.p[part.first:], g.chunk, part.parts)

@@ -19,8 +19,9 @@ func main() {
 	ConstraintExpr("amd64")
 	addFIR()
 	addProduct()
-	powerOfSums()
+	powersOfSums()
 	weightedSums()
+	foldPair()
 	for _, b := range []int{4, 8} {
 		precision(b)
 		transforms()

@@ -6,13 +6,23 @@ import (
 	. "github.com/mmcloughlin/avo/reg"
 )
 
-// powerOfSums is p[t][k] = |Σ_m x[t][m][k]·w[m][k]|² for four rows t of x, which
+// powersOfSums are p[t][k] = |Σ_m x[t][m][k]·w[m][k]|² for four rows t of x, which
 // share the load of a weight: eight sums in eight registers, and nothing stored
-// but the powers. Values lie in lines of eight real and eight imaginary parts.
-func powerOfSums() {
+// but the powers. Values lie in lines of eight real and eight imaginary parts; of
+// pairs there are those of their sums, for the real parts of the weights, and
+// those of their differences, for the imaginary ones.
+func powersOfSums() {
 	function("powerOfSumsAVX2", "func(p *float32, pStride int, x *float32, xStride int, w *float32, sources, lines int)",
 		"powerOfSumsAVX2 sets four rows of 8·lines powers; strides are in bytes, sources and lines at least 1.")
-	at := params("p", "pStride", "x", "xStride", "w", "sources", "lines")
+	powerOf(params("p", "pStride", "x", "xStride", "w", "sources", "lines"), 0)
+	function("powerOfPairsAVX2", "func(p *float32, pStride int, x *float32, xStride int, w *float32, pairs, lines int)",
+		"powerOfPairsAVX2 sets four rows of 8·lines powers; strides are in bytes, pairs and lines at least 1.")
+	powerOf(params("p", "pStride", "x", "xStride", "w", "pairs", "lines"), 64)
+}
+
+// powerOf is the body of both: across is how many bytes further than its factor
+// for a real part lies that for an imaginary one.
+func powerOf(at []Register, across int) {
 	p, pStride, x, xStride, w, sources, lines := at[0], at[1], at[2], at[3], at[4], at[5], at[6]
 	rows := []Register{x, GP64(), GP64(), GP64()}
 	to := []Register{p, GP64(), GP64(), GP64()}
@@ -37,14 +47,22 @@ func powerOfSums() {
 	VMOVUPS(Mem{Base: w, Disp: 32}, wi)
 	ADDQ(Imm(64), w)
 	for t, row := range rows {
-		xr, xi := YMM(), YMM()
-		VMOVUPS(Mem{Base: row}, xr)
-		VMOVUPS(Mem{Base: row, Disp: 32}, xi)
-		ADDQ(Imm(64), row)
-		VFMADD231PS(xr, wr, re[t])
-		VFMADD231PS(xr, wi, im[t])
-		VFNMADD231PS(xi, wi, re[t])
-		VFMADD231PS(xi, wr, im[t])
+		if across == 0 {
+			xr, xi := YMM(), YMM()
+			VMOVUPS(Mem{Base: row}, xr)
+			VMOVUPS(Mem{Base: row, Disp: 32}, xi)
+			ADDQ(Imm(64), row)
+			VFMADD231PS(xr, wr, re[t])
+			VFMADD231PS(xr, wi, im[t])
+			VFNMADD231PS(xi, wi, re[t])
+			VFMADD231PS(xi, wr, im[t])
+			continue
+		}
+		VFMADD231PS(Mem{Base: row}, wr, re[t])
+		VFMADD231PS(Mem{Base: row, Disp: 32}, wr, im[t])
+		VFMADD231PS(Mem{Base: row, Disp: across}, wi, im[t])
+		VFNMADD231PS(Mem{Base: row, Disp: across + 32}, wi, re[t])
+		ADDQ(U32(128), row)
 	}
 	DECQ(m)
 	JNE(LabelRef("source"))
@@ -93,5 +111,38 @@ func weightedSums() {
 	VEXTRACTF128(Imm(1), s[0], half)
 	VADDPS(half, s[0].AsX(), half)
 	VMOVUPS(half, Mem{Base: dst})
+	end()
+}
+
+// foldPair writes sums and differences of a and k·b, line by line.
+func foldPair() {
+	function("foldPairAVX2", "func(y *float32, stride int, ar, ai, br, bi, kr, ki *float32, lines int)",
+		"foldPairAVX2 writes 8·lines bins of a pair; the stride is in bytes, lines at least 1.")
+	at := params("y", "stride", "ar", "ai", "br", "bi", "kr", "ki", "lines")
+	y, stride, lines := at[0], at[1], at[8]
+	Label("line")
+	var v [6]VecVirtual
+	for i := range v {
+		v[i] = YMM()
+		VMOVUPS(Mem{Base: at[2+i]}, v[i])
+		ADDQ(Imm(32), at[2+i])
+	}
+	ar, ai, br, bi, kr, ki := v[0], v[1], v[2], v[3], v[4], v[5]
+	re, im, out := YMM(), YMM(), YMM()
+	VMULPS(bi, ki, re)
+	VFMSUB231PS(br, kr, re)
+	VMULPS(br, ki, im)
+	VFMADD231PS(bi, kr, im)
+	VADDPS(re, ar, out)
+	VMOVUPS(out, Mem{Base: y})
+	VADDPS(im, ai, out)
+	VMOVUPS(out, Mem{Base: y, Disp: 32})
+	VSUBPS(re, ar, out)
+	VMOVUPS(out, Mem{Base: y, Disp: 64})
+	VSUBPS(im, ai, out)
+	VMOVUPS(out, Mem{Base: y, Disp: 96})
+	ADDQ(stride, y)
+	DECQ(lines)
+	JNE(LabelRef("line"))
 	end()
 }
