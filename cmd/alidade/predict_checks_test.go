@@ -351,6 +351,48 @@ func TestPredictAnswersTheCatalogueOfChecks(t *testing.T) {
 	}
 }
 
+// B18: F. J. Harris 1978, Table I (rows from memory, recomputed with numpy; its
+// tolerances), of the tapers that are windows: a line of 256 is long enough to
+// have the figures of a continuous window. A bin is λ/(Nd) in the cosine, so half
+// of one lies at 89.5°; noise bandwidth is N over the white noise gain. Coherent
+// gain, 6 dB width and overlap are no figures of a beam (package spectral has
+// them).
+func TestPredictAnswersHarrisForLongLines(t *testing.T) {
+	const n, hz = 256, 6000
+	bin := 2 * math.Cos(89.5*math.Pi/180) // in the cosine
+	rig := fmt.Sprintf("line: {count: %d, spacing_mm: %.9g}", n, 343e3/hz/(n*bin))
+	for _, c := range []struct {
+		taper                             string
+		lobe, noise, width, scallop, loss float64
+		loose                             float64 // bins, and 1.75 times that in dB
+	}{
+		{"hamming", -43, 1.36, 1.3, 1.7514, 3.1, 0.013}, // scalloping: B18x
+		{"uniform", -13, 1, 0.89, 3.92, 3.92, 0.013}, {"hann", -32, 1.5, 1.44, 1.42, 3.18, 0.013},
+		{fmt.Sprintf("kaiser:%.9g", 2*math.Pi), -46, 1.5, 1.43, 1.46, 3.2, 0.013}, {fmt.Sprintf("kaiser:%.9g", 2.5*math.Pi), -57, 1.65, 1.57, 1.2, 3.38, 0.013},
+		{fmt.Sprintf("kaiser:%.9g", 3*math.Pi), -69, 1.8, 1.71, 1.02, 3.56, 0.013}, {fmt.Sprintf("kaiser:%.9g", 3.5*math.Pi), -82, 1.93, 1.83, 0.89, 3.74, 0.013},
+		{"dolph-chebyshev:50", -50, 1.39, 1.33, 1.7, 3.12, 0.02}, {"dolph-chebyshev:60", -60, 1.51, 1.44, 1.44, 3.23, 0.02},
+		{"dolph-chebyshev:70", -70, 1.63, 1.55, 1.25, 3.35, 0.02}, {"dolph-chebyshev:80", -80, 1.73, 1.65, 1.1, 3.48, 0.02},
+	}[:map[bool]int{true: 11, false: 1}[os.Getenv("ALIDADE_LONG") == "1"]] {
+		p := predicted(t, rig, fmt.Sprintf("--toward 90 --at-hz %d --pattern --pattern-step 0.5 --taper %s", hz, c.taper))
+		enbw := n * math.Pow(10, -white(p)/10)
+		half := -patternAt(p, 89.5)
+		for _, v := range []struct {
+			name              string
+			got, want, within float64
+		}{
+			{"side lobe", side(p), c.lobe, 1.2},
+			{"noise bandwidth", enbw, c.noise, c.loose},
+			{"3 dB width", 2 * math.Sin(width(p)/2*math.Pi/180) / bin, c.width, c.loose},
+			{"scalloping", half, c.scallop, 1.75 * c.loose},
+			{"worst loss", half + 10*math.Log10(enbw), c.loss, 1.75 * c.loose},
+		} {
+			if !(math.Abs(v.got-v.want) <= v.within) {
+				t.Errorf("%s: %s %.4f, want %g within %g", c.taper, v.name, v.got, v.want, v.within)
+			}
+		}
+	}
+}
+
 // A13, A14, A15: phase-ambiguity condition (Balanis; Van Trees 2002): 24
 // microphones 42 mm apart steered to 52°: one grating lobe at 155° at 5,366 Hz,
 // two at 12 kHz, none at 5 kHz.
