@@ -95,7 +95,7 @@ func (o *optimum) weights(floorDB float64) (*Weights, error) {
 	}
 	o.floor = floorOf(floorDB)
 	if most := math.Pow(10, floorMarginDB/10) * power; o.floor > most {
-		return nil, fmt.Errorf("beam: %s: white noise gain floor of %g dB: %d microphones reach %.2f dB at most", o.name, floorDB, mics, 10*math.Log10(power))
+		return nil, refuse(ErrFloorOutOfReach, "beam: %s: white noise gain floor of %g dB: %d microphones reach %.2f dB at most", o.name, floorDB, mics, 10*math.Log10(power))
 	}
 	o.floor = math.Min(o.floor, power*(1-1e-9))
 	type arrival struct{ delays, spreading []float64 }
@@ -130,6 +130,27 @@ func (o *optimum) weights(floorDB float64) (*Weights, error) {
 	return w, o.checkHeld(w, floorDB)
 }
 
+// What a design refuses and other options may allow; match with errors.Is.
+var (
+	ErrFloorOutOfReach    = errors.New("floor on white noise gain out of reach")
+	ErrTooManyConstraints = errors.New("more constraints than microphones")
+	ErrNullsNotHeld       = errors.New("nulls that no frequency can hold")
+)
+
+// refusal is an error of a cause with the numbers of the case.
+type refusal struct {
+	cause error
+	text  string
+}
+
+func (r *refusal) Error() string { return r.text }
+
+func (r *refusal) Unwrap() error { return r.cause }
+
+func refuse(cause error, format string, args ...any) error {
+	return &refusal{cause, fmt.Sprintf(format, args...)}
+}
+
 // check refuses what cannot be designed at any frequency.
 func (o *optimum) check(floorDB float64) error {
 	mics := len(o.task.Mics)
@@ -139,7 +160,7 @@ func (o *optimum) check(floorDB float64) error {
 	case mics < 2:
 		return fmt.Errorf("beam: %s: %d live microphone: want at least 2", o.name, mics)
 	case 1+len(o.nulls) > mics:
-		return fmt.Errorf("beam: %s: %d nulls and the steered direction are %d constraints, more than the %d microphones", o.name, len(o.nulls), 1+len(o.nulls), mics)
+		return refuse(ErrTooManyConstraints, "beam: %s: %d nulls and the steered direction are %d constraints, more than the %d microphones", o.name, len(o.nulls), 1+len(o.nulls), mics)
 	}
 	var faults []error
 	t := o.task
@@ -175,7 +196,7 @@ func (o *optimum) checkHeld(w *Weights, floorDB float64) error {
 		text += fmt.Sprintf(" azimuth %.1f° elevation %.1f°,", d.AzimuthDeg(), d.ElevationDeg())
 	}
 	look := o.task.Look.Direction(o.task.Reference)
-	return fmt.Errorf("beam: %s: nulls at%s steered to azimuth %.1f° elevation %.1f°: to these microphones a null lies in the steered direction or on another null, and no frequency can hold them with a white noise gain of %g dB",
+	return refuse(ErrNullsNotHeld, "beam: %s: nulls at%s steered to azimuth %.1f° elevation %.1f°: to these microphones a null lies in the steered direction or on another null, and no frequency can hold them with a white noise gain of %g dB",
 		o.name, text, look.AzimuthDeg(), look.ElevationDeg(), floorDB)
 }
 

@@ -459,6 +459,15 @@ func TestDesignRefusals(t *testing.T) {
 			t.Errorf("%s: weights %v, error %v, want one with %q", v.name, w != nil, err, v.want)
 		}
 	}
+	for want, design := range map[error]Design{
+		ErrFloorOutOfReach:    Superdirective{FloorDB: 6},
+		ErrTooManyConstraints: LCMV{Nulls: []acoustics.Wave{wave(0), wave(90), wave(150)}},
+		ErrNullsNotHeld:       Superdirective{Nulls: []acoustics.Wave{wave(-60)}},
+	} {
+		if _, err := design.Weights(task); !errors.Is(err, want) {
+			t.Errorf("%v: want %v", err, want)
+		}
+	}
 	var joined interface{ Unwrap() []error }
 	if _, err := (Tapered{}).Weights(Task{}); !errors.As(err, &joined) || len(joined.Unwrap()) < 4 {
 		t.Errorf("an empty task: %v, want every fault", err)

@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"errors"
 	"fmt"
 	"math"
 
@@ -67,7 +68,7 @@ func (r *run) design() error {
 	}
 	w, err := d.Weights(task)
 	if err != nil {
-		return &UsageError{Err: fmt.Errorf("--weights %s: %w", r.set.Weights, err)}
+		return refusedWeights(r.set.Weights, err)
 	}
 	filters, fit, err := w.Filters(0)
 	if err != nil {
@@ -206,6 +207,20 @@ func (b *beamline) live(c *beam.Covariance) error {
 			WeightsMinimumVariance, plural(silent, "channel %s is", "channels %s are"), silentBelowDB),
 		Hint: "leave out dead channels with use: false in the rig file",
 	}
+}
+
+// refusedWeights says what helps where a design cannot be.
+func refusedWeights(weights string, err error) error {
+	hint := ""
+	switch {
+	case errors.Is(err, beam.ErrFloorOutOfReach):
+		hint = "lower --white-noise-gain-floor-db, or use more microphones"
+	case errors.Is(err, beam.ErrTooManyConstraints):
+		hint = "leave out nulls, or use more microphones"
+	case errors.Is(err, beam.ErrNullsNotHeld):
+		hint = "move the nulls away from the steered direction and from one another (a line hears the whole cone around itself alike), or lower --white-noise-gain-floor-db"
+	}
+	return &UsageError{Err: fmt.Errorf("--weights %s: %w", weights, err), Hint: hint}
 }
 
 // tooLittleNoise says that noise is too short for weights.

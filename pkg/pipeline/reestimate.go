@@ -171,7 +171,7 @@ func (l *learner) learn() error {
 	l.design.Noise = l.noise
 	w, err := l.design.Weights(l.task)
 	if err != nil {
-		return &UsageError{Err: fmt.Errorf("--weights %s: %w", WeightsMinimumVariance, err)}
+		return refusedWeights(WeightsMinimumVariance, err)
 	}
 	filters, fit, err := w.Filters(0)
 	if err != nil {
