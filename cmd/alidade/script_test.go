@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"io/fs"
 	"math"
+	"math/cmplx"
 	"math/rand/v2"
 	"os"
 	"os/exec"
@@ -164,18 +165,27 @@ func makeTake(ts *testscript.TestScript, neg bool, args []string) {
 	for k := range phase {
 		phase[k] = 2 * math.Pi * rng.Float64()
 	}
+	sum := make([]float64, frames)
 	for ch := range channels {
-		x := b.Channel(ch)
+		for i := range sum {
+			sum[i] = 0.02 * rng.NormFloat64()
+		}
 		// Arrival at a microphone (ch - (channels-1)/2)·40 mm along x.
 		late := -(float64(ch) - float64(channels-1)/2) * 0.04 * math.Cos(math.Pi/3) / 343.2
-		for i := range x {
-			v := 0.02 * rng.NormFloat64()
-			if i > frames/3 {
-				for k, p := range phase {
-					v += 0.01 * math.Sin(2*math.Pi*150*math.Pow(1.2, float64(k))*(float64(i)/48000-late)+p)
-				}
+		begin := frames/3 + 1
+		for k, p := range phase {
+			w := 2 * math.Pi * 150 * math.Pow(1.2, float64(k))
+			// The tone as a number of the complex plane that turns by one
+			// angle a frame.
+			turn := cmplx.Rect(1, w/48000)
+			z := cmplx.Rect(0.01, w*(float64(begin)/48000-late)+p)
+			for i := begin; i < frames; i++ {
+				sum[i] += imag(z)
+				z *= turn
 			}
-			x[i] = float32(v)
+		}
+		for i, v := range sum {
+			b.Channel(ch)[i] = float32(v)
 		}
 	}
 	ts.Check(w.Write(b))

@@ -13,6 +13,7 @@ import (
 
 	"alidade/pkg/audio"
 	"alidade/pkg/delay"
+	"alidade/pkg/spectral"
 	"alidade/pkg/wav"
 )
 
@@ -90,40 +91,47 @@ func threefold(t *testing.T, x []float32) []float64 {
 }
 
 // convolved returns the len(x) first frames of x through every channel of a
-// response, piece by piece through transforms of an outside library.
+// response, piece by piece through transforms of the project, which its own tests hold
+// against an outside library.
 func convolved(x []float64, response audio.Block) audio.Block {
-	n := 1
+	n := spectral.MinSize
 	for n < 2*response.Frames() {
 		n *= 2
 	}
 	piece := n - response.Frames()
-	plan := fourier.NewFFT(n)
-	padded, y := make([]float64, n), make([]float64, n)
-	inPlace := func(x []float64) []float64 {
-		clear(padded[copy(padded, x):])
-		return padded
+	plan, err := spectral.NewFFT[float64](n)
+	if err != nil {
+		panic(err)
 	}
-	var responses [][]complex128
+	type bins struct{ re, im []float64 }
+	newBins := func() bins { return bins{make([]float64, plan.Bins()), make([]float64, plan.Bins())} }
+	padded := make([]float64, n)
+	var responses []bins
 	for ch := range response.Channels() {
-		h := make([]float64, response.Frames())
+		clear(padded)
 		for i, v := range response.Channel(ch) {
-			h[i] = float64(v)
+			padded[i] = float64(v)
 		}
-		responses = append(responses, plan.Coefficients(nil, inPlace(h)))
+		h := newBins()
+		plan.Forward(h.re, h.im, padded)
+		responses = append(responses, h)
 	}
 	sums := make([][]float64, response.Channels())
 	for ch := range sums {
 		sums[ch] = make([]float64, len(x)+n)
 	}
-	product := make([]complex128, n/2+1)
+	spectrum, product := newBins(), newBins()
 	for from := 0; from < len(x); from += piece {
-		spectrum := plan.Coefficients(nil, inPlace(x[from:min(from+piece, len(x))]))
+		clear(padded[copy(padded, x[from:min(from+piece, len(x))]):])
+		plan.Forward(spectrum.re, spectrum.im, padded)
 		for ch, h := range responses {
-			for k := range product {
-				product[k] = spectrum[k] * h[k]
+			for k, re := range spectrum.re {
+				im := spectrum.im[k]
+				product.re[k], product.im[k] = re*h.re[k]-im*h.im[k], re*h.im[k]+im*h.re[k]
 			}
-			for i, v := range plan.Sequence(y, product) {
-				sums[ch][from+i] += v / float64(n)
+			plan.Inverse(padded, product.re, product.im)
+			for i, v := range padded {
+				sums[ch][from+i] += v
 			}
 		}
 	}
