@@ -7,6 +7,7 @@ import (
 	"slices"
 
 	"alidade/pkg/audio"
+	"alidade/pkg/kernel"
 	"alidade/pkg/rig"
 )
 
@@ -95,11 +96,10 @@ func (q *Inspector) Write(src audio.Block) error {
 	}
 	for m, s := range q.strips {
 		x := src.Channel(m)
-		for i, v := range x {
-			if v-v != 0 {
-				q.err = fmt.Errorf("quality: channel %d: frame %d: sample is %g", q.mics[m].Channel, q.frames+int64(i), v)
-				return q.err
-			}
+		if !(kernel.Peak(x) <= math.MaxFloat32) {
+			i := slices.IndexFunc(x, func(v float32) bool { return v-v != 0 })
+			q.err = fmt.Errorf("quality: channel %d: frame %d: sample is %g", q.mics[m].Channel, q.frames+int64(i), x[i])
+			return q.err
 		}
 		if q.only {
 			s.addLevel(x)
@@ -262,8 +262,8 @@ func (j *judgement) channels() {
 	for m, s := range j.strips {
 		c := Channel{Channel: j.mics[m].Channel, Name: j.mics[m].Name, RMSDBFS: math.Inf(-1), DropOuts: 0}
 		if s.frames > 0 {
-			c.DC = s.sum / float64(s.frames)
-			c.RMSDBFS = audio.PowerDB(2 * s.square / float64(s.frames))
+			c.DC = s.sums.Sum() / float64(s.frames)
+			c.RMSDBFS = audio.PowerDB(2 * s.sums.Square() / float64(s.frames))
 		}
 		c.PeakDBFS = audio.AmplitudeDB(float64(s.peak))
 		c.TruePeakDBFS = audio.AmplitudeDB(math.Max(float64(s.peak), s.true4))

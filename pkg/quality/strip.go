@@ -2,6 +2,8 @@ package quality
 
 import (
 	"math"
+
+	"alidade/pkg/kernel"
 )
 
 // The histogram of magnitudes has a bin for every value of the exponent and
@@ -28,8 +30,7 @@ const (
 type strip struct {
 	rate   float64
 	frames int64
-	sum    float64
-	square float64
+	sums   kernel.Squares
 	peak   float32
 	true4  float64 // largest magnitude between samples, 0 where none is near full scale
 	tops   [2][topBins]uint32
@@ -100,16 +101,15 @@ func newStrip(rate int) *strip {
 // add takes samples, all finite.
 func (s *strip) add(x []float32) {
 	least := s.leastStill()
+	s.sums.Add(x)
+	s.peak = max(s.peak, kernel.Peak(x))
 	for _, v := range x {
 		f := s.frames
 		w := float64(v)
-		s.sum += w
-		s.square += w * w
 		side, mag := 0, v
 		if v < 0 {
 			side, mag = 1, -v
 		}
-		s.peak = max(s.peak, mag)
 		if b := int(math.Float32bits(mag)>>topShift) - topLow; b >= 0 {
 			s.tops[side][min(b, topBins-1)]++
 		}
@@ -155,12 +155,8 @@ func (s *strip) add(x []float32) {
 
 // addLevel takes samples, all finite, for the level alone.
 func (s *strip) addLevel(x []float32) {
-	for _, v := range x {
-		w := float64(v)
-		s.sum += w
-		s.square += w * w
-		s.peak = max(s.peak, v, -v)
-	}
+	s.sums.Add(x)
+	s.peak = max(s.peak, kernel.Peak(x))
 	s.frames += int64(len(x))
 }
 
@@ -291,8 +287,8 @@ func (s *strip) rms() float64 {
 	if s.frames == 0 {
 		return 0
 	}
-	mean := s.sum / float64(s.frames)
-	return math.Sqrt(math.Max(0, s.square/float64(s.frames)-mean*mean))
+	mean := s.sums.Sum() / float64(s.frames)
+	return math.Sqrt(math.Max(0, s.sums.Square()/float64(s.frames)-mean*mean))
 }
 
 // wide reports that the signal spans enough steps of its number format for
