@@ -2,6 +2,7 @@ package beam
 
 import (
 	"errors"
+	"fmt"
 	"io"
 	"math/rand/v2"
 	"testing"
@@ -41,9 +42,31 @@ func even(mics int) []float64 {
 	return a
 }
 
+// BenchmarkChoice compares the two engines that New chooses from.
+func BenchmarkChoice(b *testing.B) {
+	for _, mics := range []int{2, 4, 8, 16, 64} {
+		delays := lineDelays(mics, 0.0009)
+		for _, taps := range []int{16, 32, 64, 128} {
+			kernel, _ := delay.NewSinc(taps)
+			f, _ := DelayAndSum(kernel, 48000, delays, even(mics))
+			name := fmt.Sprintf("%dmics%dtaps", mics, taps)
+			b.Run("convolver"+name, func(b *testing.B) {
+				benchmarkEngineOf(b, mics, func(s audio.Source) (audio.Source, error) { return NewConvolver(s, f) })
+			})
+			b.Run("overlapsave"+name, func(b *testing.B) {
+				benchmarkEngineOf(b, mics, func(s audio.Source) (audio.Source, error) { return NewOverlapSave(s, f) })
+			})
+		}
+	}
+}
+
 func benchmarkEngine(b *testing.B, open func(src audio.Source) (audio.Source, error)) {
+	benchmarkEngineOf(b, 16, open)
+}
+
+func benchmarkEngineOf(b *testing.B, mics int, open func(src audio.Source) (audio.Source, error)) {
 	const rate, seconds = 48000, 4
-	take := audio.FromBlock(rate, noiseBlock(16, rate*seconds, 1))
+	take := audio.FromBlock(rate, noiseBlock(mics, rate*seconds, 1))
 	src, err := open(take)
 	if err != nil {
 		b.Fatal(err)
@@ -61,7 +84,7 @@ func benchmarkEngine(b *testing.B, open func(src audio.Source) (audio.Source, er
 	}
 	perRun := b.Elapsed().Seconds() / float64(b.N)
 	b.ReportMetric(seconds/perRun, "x-realtime")
-	b.ReportMetric(perRun*1e9/(16*rate*seconds), "ns/sample")
+	b.ReportMetric(perRun*1e9/float64(mics*rate*seconds), "ns/sample")
 }
 
 func BenchmarkEngine(b *testing.B) {

@@ -57,10 +57,7 @@ func leastSquares(rows [][]float64, want, weight []float64) []float64 {
 	diagonal := make([]float64, n)
 	for j := range n {
 		v := q[j][j:]
-		norm := 0.0
-		for _, x := range v {
-			norm = math.Hypot(norm, x)
-		}
+		norm := math.Sqrt(dot(v, v))
 		if norm == 0 {
 			continue
 		}
@@ -72,13 +69,9 @@ func leastSquares(rows [][]float64, want, weight []float64) []float64 {
 		scale := 1 / (-norm * v[0]) // 2/|v|²
 		for _, w := range q[j+1:] {
 			w = w[j:]
-			dot := 0.0
+			back := scale * dot(v, w)
 			for i, x := range v {
-				dot += x * w[i]
-			}
-			dot *= scale
-			for i, x := range v {
-				w[i] -= dot * x
+				w[i] -= back * x
 			}
 		}
 	}
@@ -94,4 +87,21 @@ func leastSquares(rows [][]float64, want, weight []float64) []float64 {
 		a[j] = v / diagonal[j]
 	}
 	return a
+}
+
+// dot is the sum of the products, in four sums that do not wait for each other.
+func dot(a, b []float64) float64 {
+	var s0, s1, s2, s3 float64
+	b = b[:len(a)]
+	for len(a) >= 4 {
+		s0 += a[0] * b[0]
+		s1 += a[1] * b[1]
+		s2 += a[2] * b[2]
+		s3 += a[3] * b[3]
+		a, b = a[4:], b[4:]
+	}
+	for i, v := range a {
+		s0 += v * b[i]
+	}
+	return (s0 + s1) + (s2 + s3)
 }

@@ -174,7 +174,7 @@ func (b *beamline) steered(src audio.Source) (audio.Source, error) {
 	if b.set.Method == MethodSpectral {
 		return beam.NewOverlapSave(src, b.filters)
 	}
-	return beam.NewConvolver(src, b.filters)
+	return beam.New(src, b.filters)
 }
 
 // blockFrames is how many frames are read at once: what a core's cache holds.

@@ -192,7 +192,7 @@ func (s *scanner) steerTracks(lines []*beamline, due []*scanned, from int) error
 		}
 		y, err = beam.NewOverlapSaveMany(src, sets)
 	} else {
-		y, err = beam.NewConvolver(src, lines[0].filters)
+		y, err = beam.New(src, lines[0].filters)
 	}
 	if err != nil {
 		return err
