@@ -20,10 +20,16 @@ const enoughTB = 700
 // SNR gain, from the target and the noise alone, lies within 0.5 dB of what was
 // predicted in at least 99 % of the bands with a product of time and bandwidth of
 // 700 (the accuracy that the design states), and its mean over seeds differs by at
-// most 0.05 dB in every band, one standard error of that mean aside, which must
-// itself be smaller than that. What is predicted from the covariance of the noise
-// rests on 8 s of it and has twice the spread: 0.1 dB, in the same manner. Means
-// of fewer than eight seeds tell nothing of the kind and are not looked at.
+// most 0.05 dB in every band, the standard error of which is smaller than that.
+// What is predicted from the covariance of the noise rests on 8 s of it and has
+// twice the spread: 0.1 dB, in the same manner. Means of fewer than eight seeds
+// tell nothing of the kind and are not looked at.
+//
+// Of 30 s each, in diffuse noise all 816 bands of 16 seeds and three sets of
+// weights lie within 0.25 dB and the means of a band within 0.043 dB (0.025 of
+// standard error there); over all bands the mean is 0.003 dB and less. In the noise
+// of the microphones, 48 seeds and two sets of weights, the means of a band lie
+// within 0.013 dB (0.011), that of all bands at 0.001: there is no bias.
 func TestMeasuredGainIsThePredictedOne(t *testing.T) {
 	const (
 		tolerance, inTolerance = 0.05, 0.1
@@ -123,7 +129,7 @@ sources:
 				}
 				worstMean, worstIn = math.Max(worstMean, math.Abs(mean)), math.Max(worstIn, math.Abs(in))
 				largest, largestIn = math.Max(largest, se), math.Max(largestIn, seIn)
-				if math.Abs(mean) > tolerance+se || math.Abs(in) > inTolerance+seIn {
+				if math.Abs(mean) > tolerance || math.Abs(in) > inTolerance {
 					t.Errorf("%s, option %d: %g Hz: measured differs from predicted by %.3f ± %.3f dB on the mean over %d seeds, want %g; what is predicted in the measured noise by %.3f ± %.3f, want %g",
 						field.name, i, hz, mean, se, seeds, tolerance, in, seIn, inTolerance)
 				}
