@@ -239,6 +239,9 @@ func checkSteer(c *cli.Context, o pipeline.Options) error {
 			fault("%s", line)
 		}
 	}
+	if c.IsSet("pick") && o.Pick == 0 {
+		fault("--pick 0: sources are counted from 1, the dominant one")
+	}
 	switch c.String("fail-on") {
 	case failNever, failWarning, failError:
 	default:

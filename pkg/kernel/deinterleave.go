@@ -10,8 +10,13 @@ const (
 	Int16   Layout = iota // two's complement, divided by 2^15
 	Int24                 // by 2^23
 	Int32                 // by 2^31, rounded to float32
-	Float32               // as they are, but 0 for those that are not finite
+	Float32               // as they are, which are all to be below LargestSample
 )
+
+// LargestSample is what the size of a sample of Float32 stays below: no sound is
+// 193 dB above full scale, floats of integer scale reach 2^31, and powers of
+// larger ones would leave the range of float32 in a transform.
+const LargestSample = 1 << 32
 
 // Bytes is the size of a sample.
 func (l Layout) Bytes() int { return [...]int{2, 3, 4, 4}[l] }
@@ -21,8 +26,8 @@ func (l Layout) Bytes() int { return [...]int{2, 3, 4, 4}[l] }
 // width the bytes of a sample. It does as many frames as it can do fast, and
 // returns how many those are: the rest is for the caller, and all of it where
 // the plain set is in use, frames are fewer than eight or channels than four, or
-// one of the samples is not finite. It panics if src is shorter than n
-// frames or a frame than the channels.
+// one of the samples is not finite or not below LargestSample. It panics if src
+// is shorter than n frames or a frame than the channels.
 func Deinterleave(dst [][]float32, src []byte, frame int, layout Layout) int {
 	channels, width := len(dst), layout.Bytes()
 	if channels == 0 {

@@ -88,11 +88,11 @@ func TestDeinterleaveIsTheDefinition(t *testing.T) {
 	})
 }
 
-// Nothing is done where a sample is not finite, wherever it stands.
+// Nothing is done where a sample is not finite or none of sound, wherever it stands.
 func TestDeinterleaveLeavesWhatIsNotFinite(t *testing.T) {
 	best := bestSet(t)
 	under(t, best, func() {
-		for _, bad := range []float32{float32(math.NaN()), float32(math.Inf(1)), float32(math.Inf(-1))} {
+		for _, bad := range []float32{float32(math.NaN()), float32(math.Inf(1)), float32(math.Inf(-1)), LargestSample, -LargestSample, 1e38} {
 			for _, channels := range []int{4, 8, 13} {
 				const n = 16
 				for place := range n * channels {

@@ -159,12 +159,12 @@ func eightFrom32AVX2(dst **float32, src *byte, frame int, n int)
 //go:noescape
 func fourFrom32AVX2(dst **float32, src *byte, frame int, n int)
 
-// eightFromFloat32AVX2 spreads n frames, n a multiple of 8, over the channels at dst. It returns a value other than 0 if one was not finite.
+// eightFromFloat32AVX2 spreads n frames, n a multiple of 8, over the channels at dst. It returns a value other than 0 if one was not a sample (see LargestSample).
 //
 //go:noescape
 func eightFromFloat32AVX2(dst **float32, src *byte, frame int, n int) uint32
 
-// fourFromFloat32AVX2 spreads n frames, n a multiple of 8, over the channels at dst. It returns a value other than 0 if one was not finite.
+// fourFromFloat32AVX2 spreads n frames, n a multiple of 8, over the channels at dst. It returns a value other than 0 if one was not a sample (see LargestSample).
 //
 //go:noescape
 func fourFromFloat32AVX2(dst **float32, src *byte, frame int, n int) uint32

@@ -1880,6 +1880,9 @@ GLOBL fullScale<>(SB), RODATA|NOPTR, $4
 DATA exponent<>+0(SB)/4, $0x7f800000
 GLOBL exponent<>(SB), RODATA|NOPTR, $4
 
+DATA largestExponent<>+0(SB)/4, $0x4f000000
+GLOBL largestExponent<>(SB), RODATA|NOPTR, $4
+
 // func eightFrom16AVX2(dst **float32, src *byte, frame int, n int)
 // Requires: AVX, AVX2
 TEXT ·eightFrom16AVX2(SB), NOSPLIT, $0-32
@@ -2329,81 +2332,82 @@ TEXT ·eightFromFloat32AVX2(SB), NOSPLIT, $0-36
 	XORQ         R8, R8
 	VXORPS       Y0, Y0, Y0
 	VBROADCASTSS exponent<>+0(SB), Y1
+	VBROADCASTSS largestExponent<>+0(SB), Y2
 
 frames:
 	LEAQ           (CX)(DX*4), DI
-	VBROADCASTI128 (CX), Y2
-	VINSERTI128    $0x01, (DI), Y2, Y2
-	VANDPS         Y1, Y2, Y3
-	VPCMPEQD       Y1, Y3, Y3
-	VORPS          Y3, Y0, Y0
-	VBROADCASTI128 (CX)(DX*1), Y3
-	VINSERTI128    $0x01, (DI)(DX*1), Y3, Y3
+	VBROADCASTI128 (CX), Y3
+	VINSERTI128    $0x01, (DI), Y3, Y3
 	VANDPS         Y1, Y3, Y4
-	VPCMPEQD       Y1, Y4, Y4
+	VPCMPGTD       Y2, Y4, Y4
 	VORPS          Y4, Y0, Y0
-	VBROADCASTI128 (CX)(DX*2), Y4
-	VINSERTI128    $0x01, (DI)(DX*2), Y4, Y4
+	VBROADCASTI128 (CX)(DX*1), Y4
+	VINSERTI128    $0x01, (DI)(DX*1), Y4, Y4
 	VANDPS         Y1, Y4, Y5
-	VPCMPEQD       Y1, Y5, Y5
+	VPCMPGTD       Y2, Y5, Y5
 	VORPS          Y5, Y0, Y0
-	VBROADCASTI128 (CX)(SI*1), Y5
-	VINSERTI128    $0x01, (DI)(SI*1), Y5, Y5
+	VBROADCASTI128 (CX)(DX*2), Y5
+	VINSERTI128    $0x01, (DI)(DX*2), Y5, Y5
 	VANDPS         Y1, Y5, Y6
-	VPCMPEQD       Y1, Y6, Y6
+	VPCMPGTD       Y2, Y6, Y6
 	VORPS          Y6, Y0, Y0
-	VUNPCKLPS      Y3, Y2, Y6
-	VUNPCKLPS      Y5, Y4, Y7
-	VUNPCKHPS      Y3, Y2, Y8
-	VUNPCKHPS      Y5, Y4, Y5
-	VUNPCKLPD      Y7, Y6, Y2
+	VBROADCASTI128 (CX)(SI*1), Y6
+	VINSERTI128    $0x01, (DI)(SI*1), Y6, Y6
+	VANDPS         Y1, Y6, Y7
+	VPCMPGTD       Y2, Y7, Y7
+	VORPS          Y7, Y0, Y0
+	VUNPCKLPS      Y4, Y3, Y7
+	VUNPCKLPS      Y6, Y5, Y8
+	VUNPCKHPS      Y4, Y3, Y9
+	VUNPCKHPS      Y6, Y5, Y6
+	VUNPCKLPD      Y8, Y7, Y3
 	MOVQ           (AX), R9
-	VMOVUPS        Y2, (R9)(R8*4)
-	VUNPCKHPD      Y7, Y6, Y3
+	VMOVUPS        Y3, (R9)(R8*4)
+	VUNPCKHPD      Y8, Y7, Y4
 	MOVQ           8(AX), R9
-	VMOVUPS        Y3, (R9)(R8*4)
-	VUNPCKLPD      Y5, Y8, Y4
+	VMOVUPS        Y4, (R9)(R8*4)
+	VUNPCKLPD      Y6, Y9, Y5
 	MOVQ           16(AX), R9
-	VMOVUPS        Y4, (R9)(R8*4)
-	VUNPCKHPD      Y5, Y8, Y5
+	VMOVUPS        Y5, (R9)(R8*4)
+	VUNPCKHPD      Y6, Y9, Y6
 	MOVQ           24(AX), R9
-	VMOVUPS        Y5, (R9)(R8*4)
-	VBROADCASTI128 16(CX), Y2
-	VINSERTI128    $0x01, 16(DI), Y2, Y2
-	VANDPS         Y1, Y2, Y3
-	VPCMPEQD       Y1, Y3, Y3
-	VORPS          Y3, Y0, Y0
-	VBROADCASTI128 16(CX)(DX*1), Y3
-	VINSERTI128    $0x01, 16(DI)(DX*1), Y3, Y3
+	VMOVUPS        Y6, (R9)(R8*4)
+	VBROADCASTI128 16(CX), Y3
+	VINSERTI128    $0x01, 16(DI), Y3, Y3
 	VANDPS         Y1, Y3, Y4
-	VPCMPEQD       Y1, Y4, Y4
+	VPCMPGTD       Y2, Y4, Y4
 	VORPS          Y4, Y0, Y0
-	VBROADCASTI128 16(CX)(DX*2), Y4
-	VINSERTI128    $0x01, 16(DI)(DX*2), Y4, Y4
+	VBROADCASTI128 16(CX)(DX*1), Y4
+	VINSERTI128    $0x01, 16(DI)(DX*1), Y4, Y4
 	VANDPS         Y1, Y4, Y5
-	VPCMPEQD       Y1, Y5, Y5
+	VPCMPGTD       Y2, Y5, Y5
 	VORPS          Y5, Y0, Y0
-	VBROADCASTI128 16(CX)(SI*1), Y5
-	VINSERTI128    $0x01, 16(DI)(SI*1), Y5, Y5
+	VBROADCASTI128 16(CX)(DX*2), Y5
+	VINSERTI128    $0x01, 16(DI)(DX*2), Y5, Y5
 	VANDPS         Y1, Y5, Y6
-	VPCMPEQD       Y1, Y6, Y6
+	VPCMPGTD       Y2, Y6, Y6
 	VORPS          Y6, Y0, Y0
-	VUNPCKLPS      Y3, Y2, Y6
-	VUNPCKLPS      Y5, Y4, Y7
-	VUNPCKHPS      Y3, Y2, Y8
-	VUNPCKHPS      Y5, Y4, Y5
-	VUNPCKLPD      Y7, Y6, Y2
+	VBROADCASTI128 16(CX)(SI*1), Y6
+	VINSERTI128    $0x01, 16(DI)(SI*1), Y6, Y6
+	VANDPS         Y1, Y6, Y7
+	VPCMPGTD       Y2, Y7, Y7
+	VORPS          Y7, Y0, Y0
+	VUNPCKLPS      Y4, Y3, Y7
+	VUNPCKLPS      Y6, Y5, Y8
+	VUNPCKHPS      Y4, Y3, Y9
+	VUNPCKHPS      Y6, Y5, Y6
+	VUNPCKLPD      Y8, Y7, Y3
 	MOVQ           32(AX), R9
-	VMOVUPS        Y2, (R9)(R8*4)
-	VUNPCKHPD      Y7, Y6, Y3
-	MOVQ           40(AX), R9
 	VMOVUPS        Y3, (R9)(R8*4)
-	VUNPCKLPD      Y5, Y8, Y4
-	MOVQ           48(AX), R9
+	VUNPCKHPD      Y8, Y7, Y4
+	MOVQ           40(AX), R9
 	VMOVUPS        Y4, (R9)(R8*4)
-	VUNPCKHPD      Y5, Y8, Y5
-	MOVQ           56(AX), R9
+	VUNPCKLPD      Y6, Y9, Y5
+	MOVQ           48(AX), R9
 	VMOVUPS        Y5, (R9)(R8*4)
+	VUNPCKHPD      Y6, Y9, Y6
+	MOVQ           56(AX), R9
+	VMOVUPS        Y6, (R9)(R8*4)
 	LEAQ           (CX)(DX*8), CX
 	ADDQ           $0x08, R8
 	CMPQ           R8, BX
@@ -2424,45 +2428,46 @@ TEXT ·fourFromFloat32AVX2(SB), NOSPLIT, $0-36
 	XORQ         R8, R8
 	VXORPS       Y0, Y0, Y0
 	VBROADCASTSS exponent<>+0(SB), Y1
+	VBROADCASTSS largestExponent<>+0(SB), Y2
 
 frames:
 	LEAQ           (CX)(DX*4), DI
-	VBROADCASTI128 (CX), Y2
-	VINSERTI128    $0x01, (DI), Y2, Y2
-	VANDPS         Y1, Y2, Y3
-	VPCMPEQD       Y1, Y3, Y3
-	VORPS          Y3, Y0, Y0
-	VBROADCASTI128 (CX)(DX*1), Y3
-	VINSERTI128    $0x01, (DI)(DX*1), Y3, Y3
+	VBROADCASTI128 (CX), Y3
+	VINSERTI128    $0x01, (DI), Y3, Y3
 	VANDPS         Y1, Y3, Y4
-	VPCMPEQD       Y1, Y4, Y4
+	VPCMPGTD       Y2, Y4, Y4
 	VORPS          Y4, Y0, Y0
-	VBROADCASTI128 (CX)(DX*2), Y4
-	VINSERTI128    $0x01, (DI)(DX*2), Y4, Y4
+	VBROADCASTI128 (CX)(DX*1), Y4
+	VINSERTI128    $0x01, (DI)(DX*1), Y4, Y4
 	VANDPS         Y1, Y4, Y5
-	VPCMPEQD       Y1, Y5, Y5
+	VPCMPGTD       Y2, Y5, Y5
 	VORPS          Y5, Y0, Y0
-	VBROADCASTI128 (CX)(SI*1), Y5
-	VINSERTI128    $0x01, (DI)(SI*1), Y5, Y5
+	VBROADCASTI128 (CX)(DX*2), Y5
+	VINSERTI128    $0x01, (DI)(DX*2), Y5, Y5
 	VANDPS         Y1, Y5, Y6
-	VPCMPEQD       Y1, Y6, Y6
+	VPCMPGTD       Y2, Y6, Y6
 	VORPS          Y6, Y0, Y0
-	VUNPCKLPS      Y3, Y2, Y6
-	VUNPCKLPS      Y5, Y4, Y7
-	VUNPCKHPS      Y3, Y2, Y8
-	VUNPCKHPS      Y5, Y4, Y5
-	VUNPCKLPD      Y7, Y6, Y2
+	VBROADCASTI128 (CX)(SI*1), Y6
+	VINSERTI128    $0x01, (DI)(SI*1), Y6, Y6
+	VANDPS         Y1, Y6, Y7
+	VPCMPGTD       Y2, Y7, Y7
+	VORPS          Y7, Y0, Y0
+	VUNPCKLPS      Y4, Y3, Y7
+	VUNPCKLPS      Y6, Y5, Y8
+	VUNPCKHPS      Y4, Y3, Y9
+	VUNPCKHPS      Y6, Y5, Y6
+	VUNPCKLPD      Y8, Y7, Y3
 	MOVQ           (AX), DI
-	VMOVUPS        Y2, (DI)(R8*4)
-	VUNPCKHPD      Y7, Y6, Y3
-	MOVQ           8(AX), DI
 	VMOVUPS        Y3, (DI)(R8*4)
-	VUNPCKLPD      Y5, Y8, Y4
-	MOVQ           16(AX), DI
+	VUNPCKHPD      Y8, Y7, Y4
+	MOVQ           8(AX), DI
 	VMOVUPS        Y4, (DI)(R8*4)
-	VUNPCKHPD      Y5, Y8, Y5
-	MOVQ           24(AX), DI
+	VUNPCKLPD      Y6, Y9, Y5
+	MOVQ           16(AX), DI
 	VMOVUPS        Y5, (DI)(R8*4)
+	VUNPCKHPD      Y6, Y9, Y6
+	MOVQ           24(AX), DI
+	VMOVUPS        Y6, (DI)(R8*4)
 	LEAQ           (CX)(DX*8), CX
 	ADDQ           $0x08, R8
 	CMPQ           R8, BX

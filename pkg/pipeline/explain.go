@@ -111,6 +111,23 @@ func (r *run) flagged(res *Result) {
 	}
 }
 
+// taperTells says where a taper that was asked for weights nothing: on a ring,
+// whose microphones stand equally far from their centre, or on two.
+func (r *run) taperTells() {
+	if r.set.taper.Uniform() {
+		return
+	}
+	a, err := r.set.taper.Amplitudes(r.line.at)
+	if err != nil {
+		return // newBeamline would have refused it
+	}
+	const same = 1e-6 // of an amplitude: places in files are rounded
+	if low, high := slices.Min(a), slices.Max(a); high-low <= same*high {
+		r.report(Finding{Code: "taper-without-effect", Severity: Info, Message: fmt.Sprintf(
+			"the taper %s weights all microphones alike, as uniform does: they stand equally far from the middle of the rig", r.set.taper)})
+	}
+}
+
 // bandCount puts a number of bands into words.
 func bandCount(n int) string {
 	if n == 1 {

@@ -31,17 +31,14 @@ func (r *run) gains(res *Result) error {
 	if r.set.NoMeasure {
 		return r.unfixed(res, listened{}, listened{})
 	}
-	named := -1
-	if name := r.set.CompareTo; name != "" {
-		m, found := r.rig.Find(name)
-		if named = slices.Index(r.line.used, m); found && slices.Contains(r.left, m) {
-			r.report(Finding{Code: "compared-left-out", Severity: Warning, Message: fmt.Sprintf("no gain over %s (--compare-to): it was left out as dead", name)})
-		} else if !found || named < 0 {
-			return &UsageError{Err: fmt.Errorf("--compare-to %q: no used microphone of rig %s has that name", name, r.rig.Name), Hint: r.rig.namesHint()}
-		}
+	named, err := r.comparedTo()
+	if err != nil {
+		return err
+	}
+	if r.set.CompareTo != "" && named < 0 {
+		r.report(Finding{Code: "compared-left-out", Severity: Warning, Message: fmt.Sprintf("no gain over %s (--compare-to): it was left out as dead", r.set.CompareTo)})
 	}
 	var third, octave *measure.Gains
-	var err error
 	noise, target := r.heard, r.heard
 	if r.set.IsolatedNoise != "" || r.set.IsolatedTarget != "" {
 		third, octave, err = r.isolated(res, named, &noise, &target)
@@ -333,17 +330,11 @@ func (r *run) through(path string) (l listened, err error) {
 		return l, err
 	}
 	defer func() { err = joinErrors(err, t.close()) }()
-	mix := r.take.header
-	if t.header.Rate != mix.Rate || t.header.Channels != mix.Channels {
-		return l, &UsageError{Err: fmt.Errorf("%s: %d channels at %d Hz, but %s has %d at %d Hz: isolated takes are recorded with the same rig and settings",
-			path, t.header.Channels, t.header.Rate, r.take.path(), mix.Channels, mix.Rate), Hint: "give a take that fits, or leave the option out"}
+	if err := r.fitsTake(path, t); err != nil {
+		return l, err
 	}
 	src := audio.Source(&watched{Source: t.source(), ctx: r.ctx, tell: r.tell("measuring "+path, t.header.Frames)})
 	var along audio.Source
-	if r.set.followsSound() && t.header.Frames != mix.Frames {
-		return l, &UsageError{Err: fmt.Errorf("%s: %d frames, but %s has %d: what follows the sound of the take (--postfilter, --reestimate-every, --toward follow) can only be measured on takes that lie frame by frame on it",
-			path, t.header.Frames, r.take.path(), mix.Frames), Hint: "give takes cut like this one, or leave the option out"}
-	}
 	if r.set.Postfilter != PostfilterNone {
 		var done func() error
 		if along, done, err = r.alongside(); err != nil {

@@ -27,6 +27,7 @@ func (r *run) result() (*Result, error) {
 		return nil, err
 	}
 	r.channels(res)
+	r.taperTells()
 	r.soundLevels(res)
 	err := r.pictures(res)
 	if err != nil {

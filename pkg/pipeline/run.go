@@ -104,6 +104,9 @@ func (r *run) steer() (result *Result, err error) {
 	if r.from, r.to, err = r.excerpt(); err != nil {
 		return nil, err
 	}
+	if err := r.foretold(); err != nil {
+		return nil, err
+	}
 	if err := r.sound(); err != nil {
 		return nil, err
 	}

@@ -12,6 +12,7 @@ import (
 	"os"
 	"path/filepath"
 	"runtime"
+	"slices"
 	"strings"
 	"testing"
 
@@ -301,9 +302,14 @@ func TestRefusals(t *testing.T) {
 			if c.rig != "" {
 				q.rig = c.rig
 			}
-			r, err := q.run(c.o)
+			begun := "" // what the header and the rig tell is said before the work
+			watch := Watch{Progress: func(stage string, _, _ int64) { begun = stage }}
+			r, err := Run(context.Background(), Spec{Take: []string{q.take}, RigPath: q.rig, Options: c.o, Version: "test"}, jsonRenderers, watch)
 			if err == nil || r != nil {
 				t.Fatalf("accepted, want an error with %q", c.want)
+			}
+			if begun == "steering" || strings.HasPrefix(begun, "measuring") {
+				t.Errorf("refused only in the stage %q: %v", begun, err)
 			}
 			if !strings.Contains(err.Error(), c.want) {
 				t.Errorf("error %q, want %q in it", err, c.want)
@@ -314,6 +320,23 @@ func TestRefusals(t *testing.T) {
 }
 
 func ptr(v float64) *float64 { return &v }
+
+// A taper by distance from the centre weights a ring uniformly (Taper): who asks
+// for one is told so.
+func TestATaperWithoutEffectIsSaid(t *testing.T) {
+	s := newScene(t, 1, wav.PCM16)
+	said := func(o Options) bool {
+		o.Toward, o.Overwrite = "90", true
+		return slices.ContainsFunc(s.must(t, o).Findings, func(f Finding) bool { return f.Code == "taper-without-effect" })
+	}
+	if said(Options{Taper: "hamming"}) || said(Options{}) {
+		t.Error("said of a line of four, or of no taper")
+	}
+	writeText(t, s.rig, "ring: {count: 4, radius_mm: 40}\n")
+	if !said(Options{Taper: "hamming"}) || said(Options{}) {
+		t.Error("not said of a ring, or said of no taper")
+	}
+}
 
 func TestExistingOutputsAreKept(t *testing.T) {
 	s := newScene(t, 1, wav.PCM16)

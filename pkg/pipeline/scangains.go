@@ -3,7 +3,6 @@ package pipeline
 import (
 	"context"
 	"errors"
-	"fmt"
 	"strings"
 
 	"alidade/pkg/measure"
@@ -72,10 +71,8 @@ func (s *scanner) alone(path string, lines []*beamline, noise, first bool) (a *s
 		return nil, err
 	}
 	defer func() { err = errors.Join(err, t.close()) }()
-	mix := s.take.header
-	if t.header.Rate != mix.Rate || t.header.Channels != mix.Channels {
-		return nil, &UsageError{Err: fmt.Errorf("%s: %d channels at %d Hz, but %s has %d at %d Hz: isolated takes are recorded with the same rig and settings",
-			path, t.header.Channels, t.header.Rate, s.take.path(), mix.Channels, mix.Rate), Hint: "give a take that fits, or leave the option out"}
+	if err := s.fitsTake(path, t); err != nil {
+		return nil, err
 	}
 	if first {
 		whole := [][2]float64{{0, t.duration()}}

@@ -71,6 +71,9 @@ func RunScan(ctx context.Context, spec ScanSpec, watch Watch, show ...Sheet[*Sca
 		return nil, err
 	}
 	defer shown.abandon()
+	if err := r.foretold(); err != nil {
+		return nil, err
+	}
 	r.from, r.to = 0, r.take.header.Frames
 	if err := r.sound(); err != nil {
 		return nil, err
@@ -129,6 +132,7 @@ func (s *scanner) scan() (*ScanResult, error) {
 	}
 	each += s.line.bytes()
 	s.group = int(min(int64(len(s.directions)), max(1, scanBytes/each)))
+	s.taperTells()
 	if err := s.segmentsGiven(); err != nil {
 		return nil, err
 	}

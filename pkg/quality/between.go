@@ -82,7 +82,7 @@ func (j *judgement) coherences(alive []int) {
 	}
 	level := median(spectra)
 	for _, m := range alive {
-		v := *j.result.Channels[m].Coherence
+		v := c.coherence[m] / float64(c.measured)
 		below := level - (c.logAuto[m]/float64(c.measured) + j.mics[m].GainDB)
 		loss := j.limits.CoherenceLoss
 		if below > 20 { // half of it is noise of its own, and little is left of the sound

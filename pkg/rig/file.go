@@ -100,27 +100,27 @@ type responseFile struct {
 type lineFile struct {
 	Count        int   `json:"count" jsonschema:"minimum=2,maximum=256" jsonschema_description:"Number of microphones."`
 	SpacingMM    milli `json:"spacing_mm" jsonschema:"minimum=1,maximum=100000" jsonschema_description:"Distance of neighbours, mm."`
-	FirstChannel int   `json:"first_channel,omitempty" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the first microphone; 1 if absent."`
+	FirstChannel int   `json:"first_channel,omitempty" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the first microphone; 1 if absent. Microphones are named M and their channel."`
 }
 
 type ringFile struct {
 	Count        int   `json:"count" jsonschema:"minimum=2,maximum=256" jsonschema_description:"Number of microphones."`
 	RadiusMM     milli `json:"radius_mm" jsonschema:"minimum=1,maximum=50000" jsonschema_description:"Radius of the circle, mm."`
-	FirstChannel int   `json:"first_channel,omitempty" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the first microphone; 1 if absent."`
+	FirstChannel int   `json:"first_channel,omitempty" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the first microphone; 1 if absent. Microphones are named M and their channel."`
 }
 
 type gridFile struct {
 	Columns      int   `json:"columns" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Number of microphones along x."`
 	Rows         int   `json:"rows" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Number of microphones along y."`
 	SpacingMM    milli `json:"spacing_mm" jsonschema:"minimum=1,maximum=100000" jsonschema_description:"Distance of neighbours, mm."`
-	FirstChannel int   `json:"first_channel,omitempty" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the first microphone; 1 if absent."`
+	FirstChannel int   `json:"first_channel,omitempty" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the first microphone; 1 if absent. Microphones are named M and their channel."`
 }
 
 type spiralFile struct {
 	Count        int     `json:"count" jsonschema:"minimum=2,maximum=256" jsonschema_description:"Number of microphones."`
 	RadiusMM     milli   `json:"radius_mm" jsonschema:"minimum=1,maximum=50000" jsonschema_description:"Distance of the last microphone from the origin, mm."`
 	Turns        float64 `json:"turns" jsonschema:"exclusiveMinimum=0,maximum=100" jsonschema_description:"Number of turns from the first microphone to the last."`
-	FirstChannel int     `json:"first_channel,omitempty" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the first microphone; 1 if absent."`
+	FirstChannel int     `json:"first_channel,omitempty" jsonschema:"minimum=1,maximum=256" jsonschema_description:"Channel of the first microphone; 1 if absent. Microphones are named M and their channel."`
 }
 
 // Schema returns the JSON Schema of a rig file.
@@ -251,7 +251,7 @@ func (l *loader) shape(r *Rig, key string, at []Point, first int) {
 		return
 	}
 	for i, p := range at {
-		r.Mics = append(r.Mics, Mic{Name: "M" + strconv.Itoa(i+1), Channel: first + i, At: p, Use: true})
+		r.Mics = append(r.Mics, Mic{Name: "M" + strconv.Itoa(first+i), Channel: first + i, At: p, Use: true})
 	}
 	l.together(r, func(int) place {
 		return place{doc: l.doc, path: key, nameSound: true, channelSound: true, atSound: true}

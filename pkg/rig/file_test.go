@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"encoding/json"
 	"errors"
+	"fmt"
 	"io"
 	"io/fs"
 	"math"
@@ -96,6 +97,9 @@ func TestShorthandsPlaceTheirMicrophones(t *testing.T) {
 			}
 			if mic.Channel != c.first+m {
 				t.Errorf("%s: microphone %d has channel %d, want %d", c.text, m+1, mic.Channel, c.first+m)
+			}
+			if want := fmt.Sprintf("M%d", mic.Channel); mic.Name != want {
+				t.Errorf("%s: microphone %d is named %s, want %s after its channel, as in a list", c.text, m+1, mic.Name, want)
 			}
 		}
 	}

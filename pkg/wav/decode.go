@@ -3,6 +3,8 @@ package wav
 import (
 	"encoding/binary"
 	"math"
+
+	"alidade/pkg/kernel"
 )
 
 // decoder turns one channel of interleaved frames into float32: sample i of
@@ -65,10 +67,11 @@ func decode32(dst []float32, src []byte, stride int) (bad, first int) {
 
 func decodeFloat32(dst []float32, src []byte, stride int) (bad, first int) {
 	const exponent = 0x7f800000
+	const largest = (127 + 31) << 23 // of samples below kernel.LargestSample
 	p := 0
 	for i := range dst {
 		u := binary.LittleEndian.Uint32(src[p:])
-		if u&exponent == exponent {
+		if u&exponent > largest {
 			if bad == 0 {
 				first = i
 			}
@@ -85,7 +88,7 @@ func decodeFloat64(dst []float32, src []byte, stride int) (bad, first int) {
 	p := 0
 	for i := range dst {
 		x := float32(math.Float64frombits(binary.LittleEndian.Uint64(src[p:])))
-		if x-x != 0 { // not finite, or beyond float32
+		if !(x > -kernel.LargestSample && x < kernel.LargestSample) {
 			if bad == 0 {
 				first = i
 			}

@@ -35,7 +35,7 @@ type Reader struct {
 }
 
 // NonFinite tells of samples of a float file that are not finite numbers, or
-// are beyond the range of float32.
+// not below kernel.LargestSample, beyond which no sound reaches.
 type NonFinite struct {
 	Samples int64 // how many
 	Frame   int64 // of the first of them
@@ -92,7 +92,7 @@ func (r *Reader) Warnings() []Warning {
 	list := slices.Clone(r.warnings)
 	if r.bad.Samples > 0 {
 		list = append(list, Warning{Code: WarnNonFinite, Offset: r.head.DataOffset + r.bad.Frame*int64(r.head.FrameBytes()),
-			Message: fmt.Sprintf("%d samples are not finite numbers and were read as 0, the first in channel %d at frame %d", r.bad.Samples, r.bad.Channel+1, r.bad.Frame)})
+			Message: fmt.Sprintf("%d samples are not finite numbers, or 2^32 times full scale and more, and were read as 0, the first in channel %d at frame %d", r.bad.Samples, r.bad.Channel+1, r.bad.Frame)})
 	}
 	return list
 }

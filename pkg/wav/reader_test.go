@@ -169,12 +169,12 @@ func TestAFileThatShrinksWhileItIsReadIsAnError(t *testing.T) {
 }
 
 func TestSamplesThatAreNotNumbersAreZeroAndTold(t *testing.T) {
-	for _, r := range []recipe{{tag: tagFloat, bits: 32, channels: 3, frames: 20000}, {tag: tagFloat, bits: 64, channels: 3, frames: 20000}} {
+	for _, r := range []recipe{{tag: tagFloat, bits: 32, channels: 3, frames: 20000}, {tag: tagFloat, bits: 64, channels: 3, frames: 20000}, {tag: tagFloat, bits: 32, channels: 4, frames: 20000}} {
 		x := r.make()
 		bad := []struct {
 			frame, ch int
 			v         float64
-		}{{15000, 0, math.NaN()}, {12345, 2, math.Inf(1)}, {12346, 1, math.Inf(-1)}, {19999, 2, math.NaN()}}
+		}{{15000, 0, math.NaN()}, {12345, 2, math.Inf(1)}, {12346, 1, math.Inf(-1)}, {12347, 1, 1 << 32}, {12348, 0, -1e37}, {19999, 2, math.NaN()}}
 		if r.bits == 64 {
 			bad = append(bad, struct {
 				frame, ch int
@@ -182,7 +182,7 @@ func TestSamplesThatAreNotNumbersAreZeroAndTold(t *testing.T) {
 			}{17000, 1, 1e300})
 		}
 		for _, k := range bad {
-			at := 44 + (k.frame*3+k.ch)*r.bits/8
+			at := 44 + (k.frame*r.channels+k.ch)*r.bits/8
 			if r.bits == 32 {
 				le.PutUint32(x.file[at:], math.Float32bits(float32(k.v)))
 			} else {
@@ -190,6 +190,14 @@ func TestSamplesThatAreNotNumbersAreZeroAndTold(t *testing.T) {
 			}
 			x.want.Channel(k.ch)[k.frame] = 0
 		}
+		// Samples of integer scale are samples.
+		at := 44 + (12400*r.channels+1)*r.bits/8
+		if r.bits == 32 {
+			le.PutUint32(x.file[at:], math.Float32bits(-(1 << 31)))
+		} else {
+			le.PutUint64(x.file[at:], math.Float64bits(-(1 << 31)))
+		}
+		x.want.Channel(1)[12400] = -(1 << 31)
 		rd := open(t, x.file)
 		if got := rd.NonFinite(); got != (NonFinite{}) {
 			t.Errorf("before reading: %+v", got)
@@ -199,8 +207,8 @@ func TestSamplesThatAreNotNumbersAreZeroAndTold(t *testing.T) {
 			t.Errorf("%+v, want %+v", got, want)
 		}
 		w := rd.Warnings()
-		text := fmt.Sprintf("%d samples are not finite numbers and were read as 0, the first in channel 3 at frame 12345", len(bad))
-		if codes(w) != WarnNonFinite || w[0].Message != text || w[0].Offset != int64(44+12345*3*r.bits/8) {
+		text := fmt.Sprintf("%d samples are not finite numbers, or 2^32 times full scale and more, and were read as 0, the first in channel 3 at frame 12345", len(bad))
+		if codes(w) != WarnNonFinite || w[0].Message != text || w[0].Offset != int64(44+12345*r.channels*r.bits/8) {
 			t.Errorf("warnings %v, want %q", w, text)
 		}
 		if err := rd.SeekFrame(19000); err != nil {

@@ -37,6 +37,8 @@ func deinterleave() {
 	DATA(0, F32(1.0/(1<<31)))
 	exponent := GLOBL("exponent", RODATA|NOPTR)
 	DATA(0, U32(0x7f800000))
+	largest := GLOBL("largestExponent", RODATA|NOPTR)
+	DATA(0, U32((127+31)<<23))
 
 	for _, kind := range []struct {
 		name        string
@@ -55,7 +57,7 @@ func deinterleave() {
 			doc := name + " spreads n frames, n a multiple of 8, over the channels at dst."
 			if !kind.ints {
 				signature = "func(dst **float32, src *byte, frame, n int) uint32"
-				doc += " It returns a value other than 0 if one was not finite."
+				doc += " It returns a value other than 0 if one was not a sample (see LargestSample)."
 			}
 			function(name, signature, doc)
 			p := params("dst", "src", "frame", "n")
@@ -63,15 +65,16 @@ func deinterleave() {
 			three, fourth := tripled(frame), GP64()
 			i := GP64()
 			XORQ(i, i)
-			var factor, odd, mask VecVirtual
+			var factor, odd, mask, limit VecVirtual
 			takes := []VecVirtual{nil, nil}
 			if kind.ints {
 				factor = YMM()
 				VBROADCASTSS(scale, factor)
 			} else {
-				odd, mask = YMM(), YMM()
+				odd, mask, limit = YMM(), YMM(), YMM()
 				VXORPS(odd, odd, odd)
 				VBROADCASTSS(exponent, mask)
+				VBROADCASTSS(largest, limit)
 			}
 			if !kind.whole {
 				for k, m := range []Mem{kind.low, kind.high}[:channels/4] {
@@ -99,7 +102,7 @@ func deinterleave() {
 					}
 					e := YMM()
 					VANDPS(mask, rows[k], e)
-					VPCMPEQD(mask, e, e)
+					VPCMPGTD(limit, e, e)
 					VORPS(e, odd, odd)
 				}
 				u := [4]VecVirtual{YMM(), YMM(), YMM(), YMM()}
