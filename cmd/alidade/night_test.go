@@ -157,7 +157,11 @@ func TestANightWithBadTakesIsTheSameByAnyWorkersAndParts(t *testing.T) {
 		t.Fatalf("exit code %d\n%s", code, errs)
 	}
 	y.same("out", "one")
-	for _, parts := range []int{3, 8} {
+	counts := []int{3}
+	if long() {
+		counts = append(counts, 8)
+	}
+	for _, parts := range counts {
 		out := fmt.Sprintf("parts%d", parts)
 		plan := exec.Command("alidade", "plan", "night.yaml", "--parts", fmt.Sprint(parts))
 		plan.Dir = y.dir
@@ -177,7 +181,7 @@ func TestANightWithBadTakesIsTheSameByAnyWorkersAndParts(t *testing.T) {
 // The process group of a batch is killed at random moments. ALIDADE_LONG=1
 // kills a hundred times over sixty takes.
 func TestABatchKilledAtRandomMomentsEndsAsAnUndisturbedOne(t *testing.T) {
-	n, kills := 16, 5
+	n, kills := 10, 4
 	if long() {
 		n, kills = 60, 100
 	}
@@ -211,7 +215,8 @@ func TestABatchKilledAtRandomMomentsEndsAsAnUndisturbedOne(t *testing.T) {
 }
 
 func TestTwoBatchesAtOnceShareTheNight(t *testing.T) {
-	y := newNight(t, 16, 36000)
+	const n = 10
+	y := newNight(t, n, 30000)
 	type end struct {
 		code      int
 		out, errs string
@@ -226,13 +231,13 @@ func TestTwoBatchesAtOnceShareTheNight(t *testing.T) {
 	committed := 0
 	for range 2 {
 		e := <-ends
-		if e.code != 0 || !strings.Contains(e.out, "16 takes, 16 done") {
+		if e.code != 0 || !strings.Contains(e.out, fmt.Sprintf("%d takes, %d done", n, n)) {
 			t.Errorf("exit code %d\n%s%s", e.code, e.out, e.errs)
 		}
 		committed += strings.Count(e.errs, `"state":"done"`)
 	}
-	if committed != 16 {
-		t.Errorf("16 takes were committed %d times", committed)
+	if committed != n {
+		t.Errorf("%d takes were committed %d times", n, committed)
 	}
 	if code, _, errs := y.batch("night.yaml", "--out", "alone", "--quiet"); code != 0 {
 		t.Fatalf("exit code %d\n%s", code, errs)

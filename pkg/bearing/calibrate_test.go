@@ -228,7 +228,7 @@ func TestDirectionInRooms(t *testing.T) {
 			{0.4, 1, 1.5, false}, {0.4, 1.5, 1.5, false}, {0.4, 2, 2.5, false},
 			{0.4, 1.5, 1.5, true}, {0.4, 2, 2.5, true}, {0.2, 2, 2.5, false},
 		} {
-			if !long() && (c.steady || c.rt60 != 0.4) {
+			if !long() && (c.steady || c.rt60 != 0.4 || c.distance == 1) {
 				continue
 			}
 			all := roomTrials(t, g.mics, c.rt60, c.distance, c.steady, n, 7000000)

@@ -56,11 +56,10 @@ func badTake(i int, mics []rig.Point, rate, frames int) (b audio.Block, az float
 		return m.noise(1, uint64(i)).block(), math.NaN(), "noise alone"
 	case 2:
 		// Diffuse: 200 waves from all sides.
-		for w := range 200 {
+		m.planes(200, func(w int) ([]float64, rig.Direction) {
 			z := -1 + 2*(float64(w)+0.5)/200
-			d := rig.Direction{Azimuth: 2.399963 * float64(w), Elevation: math.Asin(z)}
-			m.plane(white(frames, uint64(i*1000+w)), d, 0.07)
-		}
+			return white(frames, uint64(i*1000+w)), rig.Direction{Azimuth: 2.399963 * float64(w), Elevation: math.Asin(z)}
+		}, 0.07)
 		return m.noise(0.1, uint64(i)).block(), math.NaN(), "diffuse noise"
 	case 3:
 		m.plane(voice, from, 1).noise(0.1, uint64(i))

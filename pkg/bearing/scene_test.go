@@ -97,16 +97,29 @@ func shifted(x []float64, delays []float64, rate float64) [][]float64 {
 	out := make([][]float64, len(delays))
 	a, b := make([]float64, len(re)), make([]float64, len(re))
 	for m, d := range delays {
-		for k := range re {
-			sin, cos := math.Sincos(-2 * math.Pi * float64(k) * rate / float64(n) * d)
-			a[k], b[k] = re[k]*cos-im[k]*sin, re[k]*sin+im[k]*cos
-		}
+		clear(a)
+		clear(b)
+		addTurned(a, b, re, im, -2*math.Pi*rate/float64(n)*d)
 		b[n/2] = 0
 		y := make([]float64, n)
 		f.Inverse(y, a, b)
 		out[m] = y[:len(x)]
 	}
 	return out
+}
+
+// addTurned adds re, im, bin k of them turned by k·step rad, to a, b.
+func addTurned(a, b, re, im []float64, step float64) {
+	stepSin, stepCos := math.Sincos(step)
+	var sin, cos float64
+	for k := range re {
+		if k%64 == 0 { // anew, so that rounding does not add up
+			sin, cos = math.Sincos(float64(k) * step)
+		}
+		a[k] += re[k]*cos - im[k]*sin
+		b[k] += re[k]*sin + im[k]*cos
+		sin, cos = sin*stepCos+cos*stepSin, cos*stepCos-sin*stepSin
+	}
 }
 
 // delayed returns x later by each of the delays, exactly, as if x went round
@@ -118,8 +131,14 @@ func delayed(x []float64, delays []float64, rate float64) [][]float64 {
 	out := make([][]float64, len(delays))
 	turned := make([]complex128, len(spec))
 	for m, d := range delays {
+		step := -2 * math.Pi * rate / float64(n) * d
+		by, turn := cmplx.Rect(1, step), complex128(0)
 		for k, c := range spec {
-			turned[k] = c * cmplx.Rect(1, -2*math.Pi*float64(k)*rate/float64(n)*d)
+			if k%64 == 0 { // anew, so that rounding does not add up
+				turn = cmplx.Rect(1, float64(k)*step)
+			}
+			turned[k] = c * turn
+			turn *= by
 		}
 		if n%2 == 0 {
 			turned[n/2] = complex(real(turned[n/2]), 0)
@@ -156,6 +175,35 @@ func (m *mixture) plane(s []float64, from rig.Direction, gain float64) *mixture 
 		d = append(d, -p.Dot(u)/testSpeed)
 	}
 	return m.add(shifted(s, d, m.rate), gain)
+}
+
+// planes adds as many signals from far directions at once as wave gives.
+func (m *mixture) planes(waves int, wave func(w int) ([]float64, rig.Direction), gain float64) *mixture {
+	frames, longest := len(m.x[0]), 0.0
+	for _, p := range m.mics {
+		longest = math.Max(longest, math.Sqrt(p.Dot(p))/testSpeed)
+	}
+	f := planOf(frames + int(longest*m.rate) + 64)
+	n := f.Len()
+	re, im := make([][]float64, len(m.mics)), make([][]float64, len(m.mics))
+	for c := range m.mics {
+		re[c], im[c] = make([]float64, f.Bins()), make([]float64, f.Bins())
+	}
+	for w := range waves {
+		s, from := wave(w)
+		a, b := spectrum(f, s)
+		for c, p := range m.mics {
+			addTurned(re[c], im[c], a, b, 2*math.Pi*m.rate/float64(n)*p.Dot(from.Unit())/testSpeed)
+		}
+	}
+	var y [][]float64
+	for c := range m.mics {
+		im[c][n/2] = 0
+		sum := make([]float64, n)
+		f.Inverse(sum, re[c], im[c])
+		y = append(y, sum[:frames])
+	}
+	return m.add(y, gain)
 }
 
 func (m *mixture) add(y [][]float64, gain float64) *mixture {

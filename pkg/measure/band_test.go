@@ -176,21 +176,22 @@ func (l *layout) response(g *grid, i int, hz float64) float64 {
 }
 
 // hann is |W|² of the periodic Hann window of n samples at frequency f re the
-// rate, from the geometric series.
+// rate, from the geometric series: with D(f) = sin(πnf)/sin(πf) and without the
+// phase of the middle, W = ½·D(f) - ¼·(D(f-1/n)·e^(jπ(n-1)/n) + D(f+1/n)·e^(-jπ(n-1)/n)).
 func hann(n int, f float64) float64 {
-	d := func(f float64) complex128 {
-		x := math.Pi * f
-		s := math.Sin(x)
-		if math.Abs(s) < 1e-12 {
-			return complex(float64(n), 0)
-		}
-		mag := math.Sin(float64(n)*x) / s
-		sn, cs := math.Sincos(-x * float64(n-1))
-		return complex(mag*cs, mag*sn)
+	sn, cn := math.Sincos(math.Pi / float64(n))
+	s, c := math.Sincos(math.Pi * f)
+	before, after := s*cn-c*sn, s*cn+c*sn // sin(π(f∓1/n))
+	if math.Min(math.Abs(s), math.Min(math.Abs(before), math.Abs(after))) < 1e-9 {
+		f += 1e-8 / float64(n) // 0/0 here; the window changes by less than 1e-7 on the way
+		s, c = math.Sincos(math.Pi * f)
+		before, after = s*cn-c*sn, s*cn+c*sn
 	}
-	step := 1 / float64(n)
-	v := 0.5*d(f) - 0.25*d(f-step) - 0.25*d(f+step)
-	return real(v)*real(v) + imag(v)*imag(v)
+	// D(f∓1/n) has -sin(πnf) above; e^(±jπ(n-1)/n) = -cos(π/n) ± j·sin(π/n).
+	top := math.Sin(math.Pi * float64(n) * f)
+	re := top * (0.5/s - 0.25*cn*(1/before+1/after))
+	im := top * 0.25 * sn * (1/before - 1/after)
+	return re*re + im*im
 }
 
 func filterPower(taps []float32, f float64) float64 {

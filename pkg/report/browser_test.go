@@ -22,7 +22,44 @@ import (
 	"alidade/pkg/pipeline"
 )
 
-// browser starts a browser for the test, or skips it.
+// shared is the one browser of all tests, and what ends it.
+var shared struct {
+	sync.Once
+	ctx    context.Context
+	cancel func()
+	err    error
+}
+
+func TestMain(m *testing.M) {
+	code := m.Run()
+	if shared.cancel != nil {
+		shared.cancel()
+	}
+	os.Exit(code)
+}
+
+// start starts the browser at path, its profile in a folder of its own.
+func start(path string) {
+	dir, err := os.MkdirTemp("", "browser")
+	if err != nil {
+		shared.err = err
+		return
+	}
+	options := append(chromedp.DefaultExecAllocatorOptions[:], chromedp.ExecPath(path), chromedp.NoSandbox, chromedp.DisableGPU,
+		chromedp.Flag("disable-quic", true), chromedp.Flag("disable-background-networking", true), chromedp.Flag("disable-component-update", true),
+		chromedp.Flag("disable-sync", true), chromedp.Flag("autoplay-policy", "no-user-gesture-required"), chromedp.UserDataDir(dir))
+	allocated, end := chromedp.NewExecAllocator(context.Background(), options...)
+	ctx, close := chromedp.NewContext(allocated)
+	shared.ctx, shared.cancel = ctx, func() {
+		close()
+		end()
+		os.RemoveAll(dir)
+	}
+	shared.err = chromedp.Do(ctx)
+}
+
+// browser opens a tab for the test in the browser that all tests share, or
+// skips it.
 func browser(t *testing.T) context.Context {
 	t.Helper()
 	if testing.Short() {
@@ -38,17 +75,16 @@ func browser(t *testing.T) context.Context {
 	if path == "" {
 		t.Skip("no Chromium here: apt-get install chromium")
 	}
-	options := append(chromedp.DefaultExecAllocatorOptions[:], chromedp.ExecPath(path), chromedp.NoSandbox, chromedp.DisableGPU,
-		chromedp.Flag("disable-quic", true), chromedp.Flag("disable-background-networking", true), chromedp.Flag("disable-component-update", true),
-		chromedp.Flag("disable-sync", true), chromedp.Flag("autoplay-policy", "no-user-gesture-required"), chromedp.UserDataDir(t.TempDir()))
-	ctx, cancel := chromedp.NewExecAllocator(context.Background(), options...)
-	t.Cleanup(cancel)
-	ctx, cancel = context.WithTimeout(ctx, 90*time.Second)
+	shared.Do(func() { start(path) })
+	if shared.err != nil {
+		t.Fatalf("the browser does not start: %v", shared.err)
+	}
+	ctx, cancel := context.WithTimeout(shared.ctx, 90*time.Second)
 	t.Cleanup(cancel)
 	ctx, cancel = chromedp.NewContext(ctx)
 	t.Cleanup(cancel)
 	if err := chromedp.Do(ctx); err != nil {
-		t.Fatalf("the browser does not start: %v", err)
+		t.Fatalf("the browser opens no tab: %v", err)
 	}
 	return ctx
 }

@@ -5,6 +5,7 @@ import (
 	"math"
 	"runtime"
 	"strings"
+	"sync"
 	"testing"
 
 	"alidade/pkg/audio"
@@ -71,6 +72,29 @@ func rendered(t testing.TB, s *Scenario) *Rendering {
 	return r
 }
 
+// known returns the renderings of busy and roomy, made once: nothing changes one.
+var known = sync.OnceValues(func() ([]*Rendering, error) {
+	var all []*Rendering
+	for _, sc := range []*Scenario{busy(), roomy()} {
+		r, err := sc.Render(Options{})
+		if err != nil {
+			return nil, err
+		}
+		all = append(all, r)
+	}
+	return all, nil
+})
+
+// both returns the renderings of busy and roomy.
+func both(t testing.TB) map[string]*Rendering {
+	t.Helper()
+	all, err := known()
+	if err != nil {
+		t.Fatal(err)
+	}
+	return map[string]*Rendering{"busy": all[0], "roomy": all[1]}
+}
+
 func whole(t testing.TB, src audio.Source) audio.Block {
 	t.Helper()
 	b, err := audio.ReadAll(src)
@@ -105,16 +129,15 @@ func level(b audio.Block, ch, from, to int) float64 {
 }
 
 func TestTakesKeepTheContractOfASource(t *testing.T) {
-	for _, sc := range []*Scenario{busy(), roomy()} {
-		r := rendered(t, sc)
+	for name, r := range both(t) {
 		want := whole(t, r.Mix())
 		if int64(want.Frames()) != r.Frames() {
-			t.Errorf("%s: %d frames, want %d", sc.Name, want.Frames(), r.Frames())
+			t.Errorf("%s: %d frames, want %d", name, want.Frames(), r.Frames())
 		}
-		if sc.Name == "busy" {
+		if name == "busy" {
 			audiotest.TestSource(t, r.Mix, want, audiotest.Options{Rate: 16000, Sizes: []int{2048}})
 		} else if again := whole(t, r.Mix()); !same(again, want) {
-			t.Errorf("%s: other samples the second time", sc.Name)
+			t.Errorf("%s: other samples the second time", name)
 		}
 	}
 }
@@ -140,8 +163,7 @@ func TestAnotherSeedGivesOtherNoise(t *testing.T) {
 }
 
 func TestEachRendersWhatTheSourcesDo(t *testing.T) {
-	for _, sc := range []*Scenario{busy(), roomy()} {
-		r := rendered(t, sc)
+	for scenario, r := range both(t) {
 		var mix, target, noise audio.Collect
 		err := r.Each(func(m, s, n audio.Block) error {
 			return errors.Join(mix.Write(m), target.Write(s), noise.Write(n))
@@ -155,12 +177,12 @@ func TestEachRendersWhatTheSourcesDo(t *testing.T) {
 			"noise":  {noise.Block(), whole(t, r.Noise())},
 		} {
 			if !same(v[0], v[1]) {
-				t.Errorf("%s: %s of Each is not that of its source", sc.Name, name)
+				t.Errorf("%s: %s of Each is not that of its source", scenario, name)
 			}
 		}
 	}
 	stop := errors.New("enough")
-	if err := rendered(t, roomy()).Each(func(_, _, _ audio.Block) error { return stop }); !errors.Is(err, stop) {
+	if err := both(t)["roomy"].Each(func(_, _, _ audio.Block) error { return stop }); !errors.Is(err, stop) {
 		t.Errorf("Each returned %v, want the error of fn", err)
 	}
 }
@@ -187,15 +209,14 @@ func TestTargetAndNoiseAddUpToTheMix(t *testing.T) {
 // signal: taking the direct sound away leaves what the responses without it
 // predict, and outdoors nothing.
 func TestDirectSoundIsPartOfTheTarget(t *testing.T) {
-	sc := roomy()
 	outdoors := roomy()
 	outdoors.Room = nil
-	direct := whole(t, rendered(t, sc).Direct())
+	direct := whole(t, both(t)["roomy"].Direct())
 	open := rendered(t, outdoors)
 	if !same(whole(t, open.Direct()), whole(t, open.Target())) {
 		t.Error("outdoors the direct sound is not the whole target")
 	}
-	target := whole(t, rendered(t, sc).Target())
+	target := whole(t, both(t)["roomy"].Target())
 	n := target.Frames()
 	for ch := range target.Channels() {
 		if d := level(target, ch, 0, n) - level(direct, ch, 0, n); d < 0.5 || d > 20 {
@@ -365,7 +386,7 @@ func TestFilesSoundAtTheirPlace(t *testing.T) {
 
 func TestTakesDoNotAllocateOnceWarm(t *testing.T) {
 	sc := busy()
-	sc.DurationS = 20
+	sc.DurationS = 5
 	src := rendered(t, sc).Mix()
 	b := audio.NewBlock(4, 512)
 	read := func() {

@@ -253,7 +253,7 @@ func TestDirectToReverberantRatioIsNearTheory(t *testing.T) {
 }
 
 func TestTruthIsPlainData(t *testing.T) {
-	r := rendered(t, busy())
+	r := both(t)["busy"]
 	m := r.NewMeter()
 	if err := r.Each(func(mix, target, noise audio.Block) error { m.Add(mix, target, noise); return nil }); err != nil {
 		t.Fatal(err)

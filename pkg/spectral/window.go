@@ -75,8 +75,9 @@ func Kaiser(beta float64) Shape {
 // Σ ((x/2)^k/k!)², to 15 digits for |x| up to 700.
 func BesselI0(x float64) float64 {
 	sum, term := 1.0, 1.0
+	square := x * x / 4
 	for k := 1.0; term > sum*1e-17; k++ {
-		term *= x / (2 * k) * (x / (2 * k))
+		term *= square / (k * k)
 		sum += term
 	}
 	return sum

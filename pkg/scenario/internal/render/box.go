@@ -195,7 +195,7 @@ func (c *Chamber) Prepare() error {
 			c.air[b] = append(c.air[b], math.Pow(10, -db*airStep*float64(i)/20))
 		}
 	}
-	c.kernel = NewTable(reflectionTaps, 512, reflectionBeta)
+	c.kernel = reflectionTable()
 	return nil
 }
 

@@ -2,6 +2,7 @@ package render
 
 import (
 	"math"
+	"sync"
 
 	"alidade/pkg/spectral"
 )
@@ -69,16 +70,21 @@ type Table struct {
 // parameter at a number of fractions.
 func NewTable(taps, phases int, beta float64) *Table {
 	k := &Table{Taps: taps, phases: phases, rows: make([]float64, (phases+1)*taps)}
-	for p := range phases {
-		sincTaps(k.rows[p*taps:(p+1)*taps], float64(p)/float64(phases), beta)
+	for p := range phases/2 + 1 {
+		row := k.rows[p*taps : (p+1)*taps]
+		sincTaps(row, float64(p)/float64(phases), beta)
+		// The kernel is even: fraction 1-f is fraction f backwards.
+		for t, v := range row {
+			k.rows[(phases-p)*taps+taps-1-t] = v
+		}
 	}
-	// Fraction 1 is fraction 0, one tap later.
-	copy(k.rows[phases*taps+1:], k.rows[:taps-1])
 	return k
 }
 
-// DirectTable returns the table of the kernel of direct sound.
-func DirectTable() *Table { return NewTable(KernelTaps, 2048, kernelBeta) }
+// DirectTable returns the table of the kernel of direct sound, reflectionTable
+// that of reflections: all share them.
+var DirectTable = sync.OnceValue(func() *Table { return NewTable(KernelTaps, 2048, kernelBeta) })
+var reflectionTable = sync.OnceValue(func() *Table { return NewTable(reflectionTaps, 512, reflectionBeta) })
 
 // pair returns the rows around a fraction and the weight of the second.
 func (k *Table) pair(frac float64) (a, b []float64, w float64) {
@@ -93,13 +99,13 @@ func (k *Table) At(x []float64, frac float64) float64 {
 	a, b, w := k.pair(frac)
 	// The weight of x[i] is the kernel at i - (taps/2 - 1) - frac from its
 	// centre, which is even: the row of a delay by frac, read forwards.
-	var sa, sb float64
-	x = x[:len(a)]
-	for t, v := range x {
-		sa += v * a[t]
-		sb += v * b[t]
+	var a0, a1, b0, b1 float64 // two sums a row, so that none waits for the one before
+	for len(x) >= 2 && len(a) >= 2 && len(b) >= 2 {
+		a0, a1 = a0+x[0]*a[0], a1+x[1]*a[1]
+		b0, b1 = b0+x[0]*b[0], b1+x[1]*b[1]
+		x, a, b = x[2:], a[2:], b[2:]
 	}
-	return sa + w*(sb-sa)
+	return a0 + a1 + w*((b0+b1)-(a0+a1))
 }
 
 // add adds the kernel of a delay, times amplitude[b], to each h[b], h[b][0] being
