@@ -6,6 +6,7 @@ import (
 	"math"
 	"math/cmplx"
 	"math/rand/v2"
+	"os"
 	"runtime"
 	"slices"
 	"testing"
@@ -423,8 +424,8 @@ func TestEnginesRefuseWhatDoesNotFit(t *testing.T) {
 // Whatever set of kernels the processor has, the plain one holds everything
 // too.
 func TestEnginesWithPlainKernels(t *testing.T) {
-	if testing.Short() {
-		t.Skip("the contract once more")
+	if os.Getenv("ALIDADE_LONG") != "1" {
+		t.Skip("the contract once more; TestSetsOfKernelsAgree holds the sets together: set ALIDADE_LONG=1")
 	}
 	if kernel.Name() == kernel.Plain {
 		t.Skip("the plain set is the only one here: the tests above ran with it")

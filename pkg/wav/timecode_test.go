@@ -3,6 +3,7 @@ package wav
 import (
 	"fmt"
 	"math/rand/v2"
+	"os"
 	"strings"
 	"testing"
 )
@@ -56,9 +57,9 @@ func TestDropFrameLabelsAreThoseOfTheStandard(t *testing.T) {
 func TestLabelsCountOn(t *testing.T) {
 	for _, f := range []FrameRate{{30000, 1001, true}, {60000, 1001, true}, {30, 1, true}, {25, 1, false}, {24000, 1001, false}, {30000, 1001, false}} {
 		h, m, s, ff := int64(0), int64(0), int64(0), int64(0)
-		hours := int64(24)
-		if testing.Short() {
-			hours = 1
+		hours := int64(2)
+		if os.Getenv("ALIDADE_LONG") == "1" {
+			hours = 24
 		}
 		days := f.day() * hours / 24
 		step := int64(0)
@@ -133,7 +134,11 @@ func TestTimesOfDay(t *testing.T) {
 func TestTimesOfDayAndFramesAreInverse(t *testing.T) {
 	rng := rand.New(rand.NewPCG(1, 2))
 	rates := []*FrameRate{rate(t, "25", ""), rate(t, "29.97", "DF"), rate(t, "29.97", ""), rate(t, "23.976", ""), rate(t, "59.94", "DF"), rate(t, "24", "")}
-	for k := range 5000 {
+	n := 1000
+	if os.Getenv("ALIDADE_LONG") == "1" {
+		n = 5000
+	}
+	for k := range n {
 		hz := []int{44100, 48000, 48048, 47952, 96000, 192000, 44056}[rng.IntN(7)]
 		b := TimeBase{Reference: rng.Int64N(int64(hz) * 24 * 3600), ReferenceRate: hz, AdvanceRate: hz, FrameRate: rates[k%len(rates)]}
 		if k%5 == 0 {
