@@ -79,10 +79,13 @@ type Channel struct {
 	// the noise of the take, the spread over frequency, and the doubt about
 	// direction, distance, speed of sound and places.
 	LevelStd, LateStd float64
-	// LevelNoise and LateNoise are the parts of the take itself.
+	// LevelNoise and LateNoise are the standard errors of the take itself.
 	LevelNoise, LateNoise float64
-	SNRDB                 float64
-	Response              *Response // nil where none was asked for or the take does not carry one
+	// LevelBands is by how much the level differs from octave to octave, dB, one
+	// standard deviation beyond what noise explains; 0 where noise explains it.
+	LevelBands float64
+	SNRDB      float64
+	Response   *Response // nil where none was asked for or the take does not carry one
 }
 
 // Relative is a calibration of channels against each other.
@@ -203,7 +206,7 @@ func (o Options) band(rate float64) (from, to float64, err error) {
 func (r *Relative) gather(f *factor, e *Expected, late []float64, known []rig.Mic, o Options) error {
 	mics := len(e.At)
 	r.Channels, r.Heard = make([]Channel, mics), len(f.heard)
-	errs := f.errors()
+	errs, bands := f.errors(), f.overBands()
 	r.LowHz, r.HighHz = errs[0].lowHz, errs[0].highHz
 	doubtLate, doubtLevel := e.doubts(f.heard, -1)
 	n := float64(len(f.heard))
@@ -216,7 +219,8 @@ func (r *Relative) gather(f *factor, e *Expected, late []float64, known []rig.Mi
 		c.PowerDB = -20*math.Log10(f.scale[m]) - e.LevelDB[m]
 		c.Opposite = math.Min(1, f.rival[m]/f.peak[m])
 		c.LevelNoise, c.LateNoise = errs[i].gain*20/math.Ln10, errs[i].delay
-		c.LevelStd, c.LateStd = math.Hypot(c.LevelNoise, doubtLevel[m]), math.Hypot(c.LateNoise, doubtLate[m])
+		c.LevelBands = bands[i] * 20 / math.Ln10
+		c.doubted(doubtLevel[m], doubtLate[m])
 		c.SNRDB = 10 * math.Log10(math.Max(errs[i].snr, 1e-12))
 		meanLate += c.Late / n
 		meanLevel += c.LevelDB / n
@@ -279,6 +283,7 @@ func (r *Relative) against(ref int, heard []int, e *Expected) {
 		}
 	}
 	level := difference(func(c *Channel) float64 { return c.LevelNoise })
+	between := difference(func(c *Channel) float64 { return c.LevelBands })
 	late := difference(func(c *Channel) float64 { return c.LateNoise })
 	base := r.Channels[ref]
 	for _, m := range heard {
@@ -287,12 +292,20 @@ func (r *Relative) against(ref int, heard []int, e *Expected) {
 		c.LevelDB -= base.LevelDB
 		c.PowerDB -= base.PowerDB
 		if m == ref {
-			c.LevelNoise, c.LateNoise, c.LevelStd, c.LateStd = 0, 0, 0, 0
 			continue
 		}
-		c.LevelNoise, c.LateNoise = level(m), late(m)
-		c.LevelStd, c.LateStd = math.Hypot(c.LevelNoise, doubtLevel[m]), math.Hypot(c.LateNoise, doubtLate[m])
+		c.LevelNoise, c.LevelBands, c.LateNoise = level(m), between(m), late(m)
+		c.doubted(doubtLevel[m], doubtLate[m])
 	}
+	own := &r.Channels[ref]
+	own.LevelNoise, own.LevelBands, own.LateNoise, own.LevelStd, own.LateStd = 0, 0, 0, 0, 0
+}
+
+// doubted combines what the take says with the doubt about what was expected,
+// standard uncertainties in dB and seconds.
+func (c *Channel) doubted(level, late float64) {
+	c.LevelStd = math.Hypot(math.Hypot(c.LevelNoise, c.LevelBands), level)
+	c.LateStd = math.Hypot(c.LateNoise, late)
 }
 
 func sqr(x float64) float64 { return x * x }

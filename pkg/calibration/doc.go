@@ -26,11 +26,13 @@
 // by Newton's method. Channels that lie more than a quarter of a sample apart
 // are lined up and listened to again.
 //
-// The standard uncertainty of a figure joins three parts: what the noise
-// explains, or where it is larger the spread over 16 groups of frequencies,
-// which shows reflections and microphones that differ; what the doubt about
-// direction, distance and speed of sound makes of the expected arrivals; and
-// the doubt about each microphone's place.
+// The standard uncertainty of a figure joins what the noise explains, or where
+// it is larger the spread over 16 groups of frequencies, which shows
+// reflections; what the doubt about direction, distance and speed of sound
+// makes of the expected arrivals; and the doubt about each microphone's place.
+// That of a gain takes in by how much the gains in its octaves differ beyond
+// what noise and the spread within an octave explain [DerSimonian & Laird
+// 1986]: a channel whose gain depends on frequency has none that is known better.
 //
 // Places are found together with the directions of the sounds: maximum a
 // posteriori, Gauss and Newton's method with the rig file's places as prior,
@@ -105,6 +107,13 @@
 //
 // [Schönemann 1966] P. H. Schönemann, A generalized solution of the orthogonal
 // Procrustes problem, Psychometrika 31, p. 1.
+//
+// [DerSimonian & Laird 1986] R. DerSimonian, N. Laird, Meta-analysis in clinical
+// trials, Controlled Clinical Trials 7, p. 177, equation 8: the variance between
+// groups from that of each.
+//
+// [Wilson & Hilferty 1931] E. B. Wilson, M. M. Hilferty, The distribution of
+// chi-square, Proc. Nat. Acad. Sci. 17, p. 684.
 //
 // [Huber 1964] P. J. Huber, Robust estimation of a location parameter, Ann. Math.
 // Statist. 35, p. 73.

@@ -11,7 +11,6 @@ import (
 	"strconv"
 	"strings"
 
-	"alidade/pkg/acoustics"
 	"alidade/pkg/audio"
 	"alidade/pkg/calibration"
 	"alidade/pkg/rig"
@@ -339,7 +338,7 @@ func (c *calibrating) correct(used []int, r *calibration.Relative) *rig.Rig {
 			entry.Heard = true
 			entry.GainUncertaintyDB, entry.DelayUncertaintyUS = number(2*ch.LevelStd), number(2e6*ch.LateStd)
 			entry.GainNoiseDB, entry.DelayNoiseUS = number(ch.LevelNoise), number(1e6*ch.LateNoise)
-			entry.SNRDB = number(ch.SNRDB)
+			entry.GainBandsDB, entry.SNRDB = number(ch.LevelBands), number(ch.SNRDB)
 			if v := ch.Response; v != nil {
 				entry.ResponseTaps = len(v.Taps)
 				for _, b := range v.Bands {
@@ -362,6 +361,9 @@ func nanoseconds(seconds float64) float64 {
 	return v + 0 // never a negative zero
 }
 
+// unevenDB is the standard deviation of a gain over octaves that is spoken of.
+const unevenDB = 0.3
+
 // uncertainPolarity is how high the correlation of the other polarity may be
 // against that of the one found before the old one is kept.
 const uncertainPolarity = 0.92
@@ -376,7 +378,7 @@ func polarityWord(inverted bool) string {
 // judge adds what a person should know of the corrections that were filled in,
 // and refuses where too few channels were heard.
 func (c *calibrating) judge(used []int, r *calibration.Relative) error {
-	var silent, uncertain, large []int
+	var silent, uncertain, large, uneven []int
 	for i, m := range used {
 		ch := c.rig.Mics[m].Channel
 		switch v := r.Channels[i]; {
@@ -387,6 +389,9 @@ func (c *calibrating) judge(used []int, r *calibration.Relative) error {
 		}
 		if v, e := r.Channels[i], c.res.Microphones[m]; math.Abs(e.DelayUS-e.DelayBeforeUS) > math.Max(50, 6e6*v.LateStd) {
 			large = append(large, ch)
+		}
+		if v := r.Channels[i]; v.LevelBands > unevenDB && v.Response == nil {
+			uneven = append(uneven, ch)
 		}
 	}
 	if len(used) > 2 && r.Heard < 3 || 2*r.Heard <= len(used) {
@@ -410,6 +415,9 @@ func (c *calibrating) judge(used []int, r *calibration.Relative) error {
 	if len(large) > 0 {
 		add("delay-large", Warning, large, "the delay of %s changes by more than 50 µs: a channel that is late, or a microphone that is not where the rig file has it (17 mm are 50 µs)", plural(large, "channel %s", "channels %s"))
 	}
+	if len(uneven) > 0 {
+		add("gain-over-frequency", Info, uneven, "the gain of %s differs from octave to octave by more than noise explains: its uncertainty says so; --responses corrects what the channels do over frequency, claps what is a room's", plural(uneven, "channel %s", "channels %s"))
+	}
 	if r.Heard == 2 {
 		add("two-microphones", Warning, nil, "with two microphones there is no third that would tell noise from level: gains hold if both channels have the same signal-to-noise ratio")
 	}
@@ -423,74 +431,5 @@ func (c *calibrating) judge(used []int, r *calibration.Relative) error {
 		c.res.Findings = append(c.res.Findings, t.findings()...)
 	}
 	sortFindings(c.res.Findings)
-	return nil
-}
-
-// channelNotes are the comments of the new rig file, one a microphone.
-func (c *calibrating) channelNotes(used []int, r *calibration.Relative) []string {
-	notes := make([]string, len(c.rig.Mics))
-	for m, e := range c.res.Microphones {
-		if !e.Heard {
-			continue
-		}
-		notes[m] = fmt.Sprintf("was gain_db %g, delay_us %g, %s; now ± %.3f dB, ± %.2f µs", e.GainBeforeDB, rounded(e.DelayBeforeUS, 3), e.PolarityBefore, *e.GainUncertaintyDB, *e.DelayUncertaintyUS)
-	}
-	return notes
-}
-
-// head are the first lines of the new rig file.
-func (c *calibrating) head() []string {
-	lines := []string{fmt.Sprintf("Calibrated by alidade %s from the rig file %s (SHA-256 %s)", c.spec.Version, filepath.Base(c.spec.RigPath), c.rig.digest)}
-	for _, t := range c.res.Takes {
-		for _, f := range t.Files {
-			lines = append(lines, fmt.Sprintf("by the take %s (SHA-256 %s).", filepath.Base(f.Path), f.SHA256))
-		}
-	}
-	if s := c.res.Source; s != nil {
-		where := fmt.Sprintf("azimuth %.2f°, elevation %.2f°", s.AzimuthDeg, s.ElevationDeg)
-		if s.DistanceM != nil {
-			where += fmt.Sprintf(", %.3f m away", *s.DistanceM)
-		}
-		lines = append(lines, fmt.Sprintf("Sound from %s (standard uncertainty %.2f°), air %s (%.1f °C), microphones within %.2f mm.",
-			where, s.DirectionStdDeg, acoustics.Air.String(c.rig.air), s.TemperatureStdC, s.PlacementStdMM))
-	}
-	if s := c.res.Survey; s != nil {
-		lines = append(lines, fmt.Sprintf("Places from %d sounds, arrivals within %.2f µs (%.2f µs before); not observable: %s.",
-			len(s.Sounds), s.ResidualUS, s.ResidualBeforeUS, strings.Join(s.Unobservable, ", ")))
-	}
-	if s := c.res.Calibrator; s != nil {
-		lines = append(lines, fmt.Sprintf("Sensitivities by a calibrator of %g dB SPL at %g Hz, class %s (± %g dB).", s.LevelDBSPL, s.Hz, s.Class, s.ToleranceDB))
-	}
-	return append(lines, "Old values stand behind each microphone; ± is twice the standard uncertainty.")
-}
-
-// write writes the new rig file, having read it back, and finishes the result.
-func (c *calibrating) write(changed *rig.Rig, notes []string) error {
-	for _, t := range c.takes {
-		finished, err := t.finish()
-		if err != nil {
-			return err
-		}
-		c.res.Takes = append(c.res.Takes, finished)
-	}
-	if err := context.Cause(c.ctx); err != nil {
-		return err
-	}
-	text := changed.Annotated(c.head(), func(m int) string { return notes[m] })
-	if _, err := rig.Load(c.out, text, nil); err != nil {
-		return fmt.Errorf("the calibrated rig would not be read back: %w", err)
-	}
-	s, err := stage(c.out, c.set.Overwrite)
-	if err != nil {
-		return err
-	}
-	defer s.abandon()
-	if _, err := s.Write(text); err != nil {
-		return fmt.Errorf("%s: %w", c.out, err)
-	}
-	if err := s.commit(); err != nil {
-		return err
-	}
-	c.res.Output = CalibrationOutput{Path: c.out, SHA256: digestOf(text)}
 	return nil
 }

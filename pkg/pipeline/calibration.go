@@ -68,6 +68,7 @@ type CalibratedMic struct {
 	GainDB            float64 `json:"gain_db"`
 	GainUncertaintyDB Number  `json:"gain_uncertainty_db"`
 	GainNoiseDB       Number  `json:"gain_noise_db,omitempty"` // standard error of the take's own
+	GainBandsDB       Number  `json:"gain_bands_db,omitempty"` // standard deviation from octave to octave beyond it
 
 	DelayBeforeUS      float64 `json:"delay_before_us"`
 	DelayUS            float64 `json:"delay_us"`
