@@ -220,6 +220,9 @@ func (r *Relative) gather(f *factor, e *Expected, late []float64, known []rig.Mi
 		c.Opposite = math.Min(1, f.rival[m]/f.peak[m])
 		c.LevelNoise, c.LateNoise = errs[i].gain*20/math.Ln10, errs[i].delay
 		c.LevelBands = bands[i] * 20 / math.Ln10
+		if len(f.heard) == 2 {
+			doubtLevel[m] = math.Hypot(doubtLevel[m], splitDoubt(errs[i].snr))
+		}
 		c.doubted(doubtLevel[m], doubtLate[m])
 		c.SNRDB = 10 * math.Log10(math.Max(errs[i].snr, 1e-12))
 		meanLate += c.Late / n
@@ -295,10 +298,20 @@ func (r *Relative) against(ref int, heard []int, e *Expected) {
 			continue
 		}
 		c.LevelNoise, c.LevelBands, c.LateNoise = level(m), between(m), late(m)
+		if len(heard) == 2 {
+			doubtLevel[m] = math.Hypot(doubtLevel[m], 2*splitDoubt(math.Pow(10, c.SNRDB/10)))
+		}
 		c.doubted(doubtLevel[m], doubtLate[m])
 	}
 	own := &r.Channels[ref]
 	own.LevelNoise, own.LevelBands, own.LateNoise, own.LevelStd, own.LateStd = 0, 0, 0, 0, 0
+}
+
+// splitDoubt is the standard uncertainty, dB, of the level of one of two channels
+// against their mean because the noise in both, known together, may lie in
+// either: uniform between all in one and all in the other [JCGM 100:2008, 4.3.7].
+func splitDoubt(snr float64) float64 {
+	return 10 / math.Ln10 / math.Max(snr, 1e-3) / math.Sqrt(3)
 }
 
 // doubted combines what the take says with the doubt about what was expected,

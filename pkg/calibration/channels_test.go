@@ -341,3 +341,44 @@ func TestDoubtsAreTheSpreadOfWhatIsNotKnown(t *testing.T) {
 		}
 	}
 }
+
+// Two channels have one cross-spectrum, which knows the product of their gains
+// alone: their ratio is that of the powers, at whatever delays the channels
+// start, with a variance of N/S over four times the number of observations where
+// the noise is alike in both. Where it is not, the stated uncertainty covers what
+// that makes of the ratio.
+func TestTwoChannels(t *testing.T) {
+	at := []rig.Point{{X: -0.06}, {X: 0.06}}
+	for seed := range 6 {
+		az, alike := 40+20*float64(seed), seed%2 == 0
+		f := makeFaulty(t, at, uint64(seed+1), wideband(az, 0), -40, 1, func(s *scenario.Scenario) {
+			for k := range s.Faults { // polarities of two cannot be told from one side
+				s.Faults[k].Polarity = ""
+				if alike { // microphones' noise does not follow the gain
+					s.Faults[k].GainDB = 0
+				}
+			}
+		})
+		if alike {
+			clear(f.gainDB)
+		}
+		e, err := Expect(f.rig.Positions(), f.rig.ReferencePoint(), rig.Degrees(az, 0), math.Inf(1), f.speed, Doubt{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		r, err := Channels(f.open, e, nil, Options{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		gain, late, gainU, _ := f.errors(r)
+		// One second from 0.3 to 16 kHz holds 15,700 observations at 20 dB.
+		sd := 20 / math.Ln10 * math.Sqrt(0.01/(4*15700))
+		c := r.Channels[0]
+		if alike && (math.Abs(gain[0]) > 3.5*sd || c.LevelNoise < 0.8*sd || c.LevelNoise > 1.4*sd || math.Abs(c.SNRDB-20) > 0.5) {
+			t.Errorf("azimuth %g°: gain off by %.4f dB, noise stated %.4f dB, at %.1f dB: want standard deviation %.4f dB and 20 dB", az, gain[0], c.LevelNoise, c.SNRDB, sd)
+		}
+		if math.Abs(gain[0]) > gainU[0] || gainU[0] > 0.1 || math.Abs(late[0]) > 0.1e-6 {
+			t.Errorf("azimuth %g°: gain off by %.4f dB, stated ± %.4f dB; delay off by %.3f µs", az, gain[0], gainU[0], 1e6*late[0])
+		}
+	}
+}

@@ -68,7 +68,8 @@
 // from 333 Hz up: 0.01 dB and 0.2 µs in such a room.
 // A microphone that is not where the rig has it looks like a delay, and all
 // channels turned over alike look like none. With two microphones gains rest on
-// the same signal-to-noise ratio in both.
+// the same signal-to-noise ratio in both; their uncertainty allows for all of the
+// noise in one of them.
 //
 // # Use
 //

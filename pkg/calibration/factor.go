@@ -321,6 +321,11 @@ func (f *factor) noise() {
 			}
 			rest /= 1 - 1/math.Max(few, 2)
 			rest -= f.g[m] * f.g[m] * f.smooth[j] / (1 + f.smooth[j]*f.b[j])
+			if len(f.heard) == 2 {
+				// The other channel's noise is taken to be like this one's: an estimate
+				// too low by as much as the last was too high.
+				rest = (rest + 1/f.v[m][j]) / 2
+			}
 			f.rest[m] += math.Max(rest, 0)
 			f.noisy[m][j] = math.Max(rest, math.Max(noiseFloor*all[j], 1e-12))
 		}
@@ -382,6 +387,11 @@ func (f *factor) centre() {
 	for _, m := range f.heard {
 		f.d[m] -= delay
 		f.g[m] /= math.Exp(level)
+		if n == 2 {
+			// The one cross-spectrum knows the product of two gains alone: their
+			// ratio is that of the powers.
+			f.g[m] = math.Copysign(1, f.g[m])
+		}
 		f.turn(m)
 	}
 }

@@ -53,11 +53,52 @@ func (j *judgement) windows(alive []int) []window {
 				known++
 			}
 		}
-		if known == len(alive) && w.quality >= math.Max(0.45, 0.7*best) {
+		if known == len(alive) && !j.twofold(w, alive) && w.quality >= math.Max(0.45, 0.7*best) {
 			list = append(list, w)
 		}
 	}
 	return list
+}
+
+// turnedOver is the least share of the middle certainty of the polarities with
+// which a channel is said to be turned over. A channel that is has the
+// certainty of the others; where two sources sound together, the phase at some
+// microphones stands upside down for a part of the band, and theirs is low.
+const turnedOver = 0.6
+
+// oriented returns the polarities of the living microphones as window w has
+// them, the rig file's taken out, positive for most of them, and their middle
+// certainty.
+func (j *judgement) oriented(w window, alive []int) (sign []float64, middle float64) {
+	sign = make([]float64, len(j.mics))
+	sum := 0.0
+	var size []float64
+	for _, m := range alive {
+		sign[m] = w.sign[m]
+		if j.mics[m].Inverted {
+			sign[m] = -sign[m]
+		}
+		sum += math.Copysign(1, sign[m])
+		size = append(size, math.Abs(sign[m]))
+	}
+	if sum < 0 {
+		for _, m := range alive {
+			sign[m] = -sign[m]
+		}
+	}
+	return sign, median(size)
+}
+
+// twofold reports whether a microphone hears the sound of window w neither
+// upright nor turned over: more than one source is at work.
+func (j *judgement) twofold(w window, alive []int) bool {
+	sign, middle := j.oriented(w, alive)
+	for _, m := range alive {
+		if sign[m] < 0 && sign[m] > -turnedOver*middle {
+			return true
+		}
+	}
+	return false
 }
 
 // coherences finds channels that have nothing in common with the others.
@@ -316,30 +357,17 @@ func (j *judgement) spreading(alive []int, list []window, db []float64) []float6
 
 // polarities finds channels that are turned over.
 func (j *judgement) polarities(alive []int, list []window) {
-	sign := make([]float64, len(j.mics))
+	sign, certain := make([]float64, len(j.mics)), 0.0
 	for _, w := range list {
-		turn, sum := 1.0, 0.0
+		one, middle := j.oriented(w, alive)
+		certain += middle / float64(len(list))
 		for _, m := range alive {
-			s := w.sign[m]
-			if j.mics[m].Inverted {
-				s = -s
-			}
-			sum += math.Copysign(1, s)
-		}
-		if sum < 0 {
-			turn = -1
-		}
-		for _, m := range alive {
-			s := turn * w.sign[m]
-			if j.mics[m].Inverted {
-				s = -s
-			}
-			sign[m] += s / float64(len(list))
+			sign[m] += one[m] / float64(len(list))
 		}
 	}
 	var flipped []int
 	for _, m := range alive {
-		if sign[m] < -0.3 {
+		if sign[m] < -math.Max(0.3, turnedOver*certain) {
 			flipped = append(flipped, m)
 		}
 	}

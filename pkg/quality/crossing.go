@@ -61,6 +61,10 @@ const crossPairs = 496
 // levelBands is into how many parts levels are split, for their doubt.
 const levelBands = 12
 
+// leastLines is the fewest bins in which a pair is coherent, and with one pair
+// alone, of like weight.
+const leastLines = 8
+
 // oversampling of the correlations.
 const finer = 8
 
@@ -252,7 +256,7 @@ func (c *crossing) correlate(p int, n float64) pairDelay {
 	d := pairDelay{i: ij[0], j: ij[1]}
 	clear(c.zr)
 	clear(c.zi)
-	total, bend, bins := 0.0, 0.0, 0
+	total, squares, bend, bins := 0.0, 0.0, 0.0, 0
 	for k := c.low[p]; k < c.bins; k++ {
 		msc := c.msc(p, ij, k, n)
 		// Below four times the bias, chance is most of it.
@@ -265,10 +269,16 @@ func (c *crossing) correlate(p int, n float64) pairDelay {
 		c.zr[k+c.from], c.zi[k+c.from] = w*c.re[p][k]/g, w*c.im[p][k]/g
 		omega := 2 * math.Pi * float64(k+c.from) * float64(c.rate) / float64(c.size)
 		total += w
-		bend += w * omega * omega
+		squares += w * w
 		bins++
+		bend += w * omega * omega
 	}
-	if bins < 8 || total <= 0 {
+	if bins < leastLines {
+		return d
+	}
+	// A few tones of two sources stand in a field of nulls and turned phases. More
+	// than two microphones contradict one another there; one pair cannot.
+	if len(c.at) == 2 && total*total < leastLines*squares {
 		return d
 	}
 	c.inverse.Inverse(c.z, c.zr, c.zi)

@@ -65,6 +65,7 @@ type strip struct {
 	mean        float64            // sum of the moment's samples
 	meanSquare  float64            // sum of the squares of the moments' means
 	before      [2]float64         // low and high of the moment before
+	rise        float64            // of high, in the moment before
 	levels      [momentBins]uint32 // of moments, 1 dB a bin
 	lows        [momentBins]uint32 // of their energy below 80 Hz
 	onsets      [momentBins]uint32 // of sudden low moments
@@ -238,12 +239,14 @@ func (s *strip) endMoment() {
 	if s.settling == 0 {
 		s.lows[momentBin(low)]++
 	}
-	// A thump rises below 80 Hz and leaves the sound above 500 Hz as it was.
+	// A thump rises below 80 Hz and leaves the sound above 500 Hz as it was. The
+	// low part of a clap, late through its filter, may rise in the moment after.
 	if s.settling > 0 {
 		s.settling--
-	} else if s.moments > 0 && low > 10*s.before[0] && low > s.before[0]+3*math.Max(0, high-s.before[1]) {
+	} else if rise := math.Max(0, math.Max(high-s.before[1], s.rise)); s.moments > 0 && low > 10*s.before[0] && low > s.before[0]+3*rise {
 		s.onsets[momentBin(low)]++
 	}
+	s.rise = high - s.before[1]
 	s.before = [2]float64{low, high}
 	s.moments++
 	s.meanSquare += s.mean * s.mean / (n * n)
