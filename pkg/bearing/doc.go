@@ -20,7 +20,9 @@
 // they rise above floor and reverberation, and the floor's own cross-spectra
 // are taken out; a steady sound is taken as it is. The steered response with
 // phase transform over a grid gives the peaks, each line weighted by the
-// coherence of the channels. Each peak is refined by maximum likelihood of one
+// coherence of the channels;
+// lines that hold no more than the window's side lobes of stronger ones do not
+// count. Each peak is refined by maximum likelihood of one
 // source in uncorrelated noise and taken out before the next is looked for.
 // The windows' likelihoods, quadratic about their maxima, are added for a
 // source that keeps its place, and joined into tracks by a Kalman smoother.
@@ -87,6 +89,9 @@
 //
 // [Singer 1970] R. A. Singer, Estimating optimal tracking filter performance
 // for manned maneuvering targets, IEEE Trans. AES 6, p. 473.
+//
+// [Harris 1978] F. J. Harris, On the use of windows for harmonic analysis with
+// the discrete Fourier transform, Proc. IEEE 66, p. 51.
 //
 // [Huber 1964] P. J. Huber, Robust estimation of a location parameter, Ann.
 // Math. Statist. 35, p. 73.

@@ -78,6 +78,7 @@ type looker struct {
 	field      []float64 // coherent part of diffuse sound, [k]
 	fieldNorm  []float64 // mean over the living pairs of Gamma²
 	fieldPart  []float64 // mean over the living pairs of Gamma·Re gamma
+	leaked     []bool    // lines that hold no more than side lobes of others
 	places     []place   // of the last look
 	leads      []lead    // between its sightings
 	firstMap   []float64 // steered response before any source was taken out
@@ -115,6 +116,7 @@ func newLookerOn(s *space, set *settings, pairs []pairIndex, g *grid) *looker {
 	l.radius = math.Min(math.Max(0.7*middle/s.geo.Extent, 0.12), 0.5)
 	n := len(pairs) * K
 	l.alive = make([]bool, len(s.at))
+	l.leaked = make([]bool, K)
 	for _, p := range []*[]float64{&l.gr, &l.gi, &l.rr, &l.ri, &l.mag, &l.phat, &l.diffuse} {
 		*p = make([]float64, n)
 	}
@@ -274,10 +276,11 @@ func (l *looker) load(sum, noise *crossSum) string {
 		l.coh[k] = l.coh[k]/float64(l.alivePairs) - 1/math.Max(l.snap[k], 1)
 	}
 	boxSmooth(l.smooth, l.coh, 4)
+	l.leaks(sum)
 	sum1, sum2 := 0.0, 0.0
 	for k, c := range l.smooth {
 		c = math.Min(math.Max(c, 0), 1)
-		if l.snap[k] == 0 {
+		if l.snap[k] == 0 || l.leaked[k] {
 			c = 0
 		}
 		l.coh[k] = c
