@@ -130,7 +130,11 @@ func checkValue(f cli.Flag, value string) error {
 		if x, err := strconv.ParseFloat(value, 64); err != nil || math.IsNaN(x) || math.IsInf(x, 0) {
 			return fmt.Errorf("%s %q: not a number", name, value)
 		}
-	case *cli.IntFlag, *cli.Uint64Flag:
+	case *cli.Uint64Flag:
+		if _, err := strconv.ParseUint(value, 10, 64); err != nil {
+			return fmt.Errorf("%s %q: not a whole number from 0 up", name, value)
+		}
+	case *cli.IntFlag:
 		if _, err := strconv.ParseInt(value, 10, 63); err != nil {
 			return fmt.Errorf("%s %q: not a whole number", name, value)
 		}

@@ -131,6 +131,9 @@ func runPredict(u *ui, c *cli.Context) error {
 			fault("--%s 0: want 1 or more", option)
 		}
 	}
+	if c.IsSet("pattern-step") && o.StepDeg == 0 {
+		fault("--pattern-step 0: want more than 0°; leave it out for the default")
+	}
 	if err := o.Validate(); err != nil {
 		for _, line := range strings.Split(err.Error(), "\n") {
 			fault("%s", line)

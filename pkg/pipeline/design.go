@@ -220,6 +220,9 @@ func refusedWeights(weights string, err error) error {
 	case errors.Is(err, beam.ErrNullsNotHeld):
 		hint = "move the nulls away from the steered direction and from one another (a line hears the whole cone around itself alike), or lower --white-noise-gain-floor-db"
 	}
+	if weights == WeightsDelayAndSum { // given by default: the nulls are what was asked for
+		return &UsageError{Err: fmt.Errorf("--null: %w", err), Hint: hint}
+	}
 	return &UsageError{Err: fmt.Errorf("--weights %s: %w", weights, err), Hint: hint}
 }
 

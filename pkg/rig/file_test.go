@@ -177,7 +177,7 @@ p.csv:3:12: z_mm: an empty cell, want a value
 p.csv:4:3: channel: channel 2 is given twice, first to "A"
 p.csv:4:5: x_mm: got 200000, want -100000 to 100000
 p.csv:5:3: channel: got "x", want a whole number from 1 to 256
-p.csv:6:1: at_mm: 0.5 mm from "D", want at least 1 mm (or use: false)`
+p.csv:6:1: at_mm: 0.5 mm from "D", want at least 1 mm: places are in millimetres (or use: false)`
 	if err == nil || err.Error() != want {
 		t.Errorf("got\n%v\nwant\n%s", err, want)
 	}
@@ -235,7 +235,7 @@ func TestRefusalsOfARigFile(t *testing.T) {
 		{"one microphone", mics("  - {channel: 1, at_mm: [0, 0, 0]}\n"), "r.yaml:1:1: 1 microphone in use, a beam needs two or more"},
 		{"one live microphone", mics("  - {channel: 1, at_mm: [0, 0, 0]}\n  - {channel: 2, at_mm: [9, 0, 0], use: false}\n"), "r.yaml:1:1: 1 microphone in use, a beam needs two or more"},
 		{"none in use", mics("  - {channel: 1, at_mm: [0, 0, 0], use: false}\n"), "r.yaml:1:1: no microphone in use, a beam needs two or more"},
-		{"two in one place", mics("  - {channel: 1, at_mm: [5, 0, 0]}\n  - {channel: 2, at_mm: [5, 0.5, 0]}\n"), `r.yaml:3:25: microphones[1].at_mm: 0.5 mm from "M1", want at least 1 mm (or use: false)`},
+		{"two in one place", mics("  - {channel: 1, at_mm: [5, 0, 0]}\n  - {channel: 2, at_mm: [5, 0.5, 0]}\n"), `r.yaml:3:25: microphones[1].at_mm: 0.5 mm from "M1", want at least 1 mm: places are in millimetres (or use: false)`},
 		{"far apart", mics("  - {channel: 1, at_mm: [-60000, 0, 0]}\n  - {channel: 2, at_mm: [60000, 0]}\n"), `r.yaml:3:25: microphones[1].at_mm: 120 m from "M1", want at most 100 m`},
 		{"far out", mics("  - {channel: 1, at_mm: [0, 100001, 0]}\n  - {channel: 2, at_mm: [0, 0]}\n"), `r.yaml:2:29: microphones[0].at_mm[1]: 100.001 m from the origin, want at most 100 m`},
 		{"channel twice", mics("  - {channel: 1, at_mm: [0, 0]}\n  - {name: Q, channel: 1, at_mm: [5, 0]}\n"), `r.yaml:3:24: microphones[1].channel: channel 1 is given twice, first to "M1"`},
@@ -298,7 +298,7 @@ microphones:
 r.yaml:2:1: colour: unknown key, known are air, grid, heading_deg, limits, line, microphones, positions, reference, rig, ring, spiral
 r.yaml:5:12: microphones[1].name: the name "A" is given twice, first in channel 1
 r.yaml:5:24: microphones[1].channel: channel 1 is given twice, first to "A"
-r.yaml:5:34: microphones[1].at_mm: 0 mm from "A", want at least 1 mm (or use: false)
+r.yaml:5:34: microphones[1].at_mm: 0 mm from "A", want at least 1 mm: places are in millimetres (or use: false)
 r.yaml:5:55: microphones[1].polarity: got "upside", want one of normal, inverted
 r.yaml:6:5: microphones[2]: missing key "channel"
 r.yaml:6:15: microphones[2].chanel: unknown key, did you mean "channel"?

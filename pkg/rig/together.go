@@ -118,7 +118,7 @@ func (l *loader) distances(r *Rig, at func(m int) place) {
 			d := r.Mics[m].At.Distance(r.Mics[q].At)
 			switch {
 			case d < minApart:
-				p.fault(".at_mm", "%.3g mm from %s, want at least %g mm (or use: false)", 1000*d, at(q).name(r.Mics[q]), 1000*minApart)
+				p.fault(".at_mm", "%.3g mm from %s, want at least %g mm: places are in millimetres (or use: false)", 1000*d, at(q).name(r.Mics[q]), 1000*minApart)
 			case d > maxExtent:
 				p.fault(".at_mm", "%.4g m from %s, want at most %g m", d, at(q).name(r.Mics[q]), maxExtent)
 			default:
