@@ -54,7 +54,7 @@ func answer(p *Prediction) []string {
 		list = append(list, text)
 	}
 	if hz := p.GratingFreeBelowHz; hz != nil {
-		list = append(list, fmt.Sprintf("From %s up another direction is heard as loud as the steered one (grating lobe): noise from there stays.", hertz(threeDigits(*hz))))
+		list = append(list, fmt.Sprintf("From %s up another direction is heard as loud as the steered one or within 3 dB of it (grating lobe): noise from there stays.", hertz(threeDigits(*hz))))
 	}
 	return list
 }

@@ -95,7 +95,7 @@ func (r *run) reasons(res *Result, g *measure.Gains) {
 // flagged adds a finding for each flag on bands.
 func (r *run) flagged(res *Result) {
 	for _, f := range []struct{ flag, code, message string }{
-		{"grating", "grating-lobe", "in %s another direction is heard as loud as the steered one (grating lobe): the microphones stand too far apart there"},
+		{"grating", "grating-lobe", "in %s another direction is heard as loud as the steered one or within 3 dB of it (grating lobe): the microphones stand too far apart there"},
 		{"no-aperture", "no-aperture", "in %s the rig is too small for the wavelength: less than 1 dB of diffuse noise can go away there"},
 		{measure.Sparse, "sparse-bands", "in %s too little sound stands behind the figures for a good interval: longer stretches help"},
 	} {

@@ -134,7 +134,7 @@ func surest(bands []pipeline.Band) (low, high float64, ok bool) {
 
 // flagNotes says what a flag on a band means.
 var flagNotes = []struct{ flag, short, long string }{
-	{"grating", "grating lobes", "another direction is heard as loud as the steered one: the microphones stand too far apart for so high a sound"},
+	{"grating", "grating lobes", "another direction is heard as loud as the steered one or within 3 dB of it: the microphones stand too far apart for so high a sound"},
 	{"no-aperture", "a rig too small for the wavelength", "less than 1 dB of noise from everywhere can go away: the rig is too small for so low a sound"},
 	{"sparse", "too little sound behind the figure", "fewer than 30 independent samples stand behind the figure: a longer stretch helps"},
 	{"target-unmeasurable", "a target that does not stand out of the noise", "the target has no figure: its level does not exceed the noise significantly, or no stretch with it, or with noise alone, is known"},
