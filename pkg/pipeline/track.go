@@ -65,9 +65,13 @@ func (t *track) over() bool { return !t.format.Encoding.Float() && t.writer.Writ
 func (t *track) overError(gainDB float64) error {
 	w := t.writer.Written()
 	peak := audio.AmplitudeDB(w.Peak)
+	many := fmt.Sprintf("%d frames", w.Over)
+	if w.Over == 1 {
+		many = "1 frame"
+	}
 	return &HintedError{
-		Err: fmt.Errorf("%s: %d frames beyond full scale, the largest %+.2f dBFS at frame %d: %s would clip",
-			t.file.final, w.Over, peak, t.first+w.PeakFrame, t.format.Encoding),
+		Err: fmt.Errorf("%s: %s beyond full scale, the largest %+.2f dBFS at frame %d: %s would clip",
+			t.file.final, many, peak, t.first+w.PeakFrame, t.format.Encoding),
 		Hint: fmt.Sprintf("--gain-db %.1f brings the peak below full scale, --over-range float32 or --format float32 keeps it", math.Floor(10*(gainDB-peak-0.05))/10),
 	}
 }
