@@ -319,8 +319,7 @@ func (t *undertaking) steer(ctx context.Context, a batch.Assignment) (batch.Repo
 	}
 	// Reports say the same wherever they are made: paths are those of the plan.
 	tidy := func(r *pipeline.Result) *pipeline.Result { return t.tidy(r, a) }
-	folder := strings.Repeat("../", strings.Count(a.Take.Key, "/")+1) + indexFile
-	render := renderers(o, folder, tidy)
+	render := renderers(o, folderPage(a.Take.Key), tidy)
 	spec := pipeline.Spec{Take: a.Paths(), RigPath: t.rig(a.Recipe), Options: o, Limits: quality.Limits(recipe.Limits.Limits), Version: version, OneCore: t.oneCore}
 	r, err := pipeline.Run(ctx, spec, render, pipeline.Watch{Progress: a.Step})
 	if err != nil {

@@ -139,6 +139,9 @@ func readJob(name string) (*job, error) {
 		return nil, err
 	}
 	doc := sheet.Parse(name, data, schema)
+	if err := doc.Err(); err != nil && !doc.Readable() {
+		return nil, err
+	}
 	j := &job{path: name, base: filepath.Dir(name)}
 	doc.Fill(&j.jobFile)
 	j.Steer.settle()

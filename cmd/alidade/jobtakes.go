@@ -253,7 +253,7 @@ func (j *job) keyOf(g group, rigName string, o pipeline.Options) string {
 	}
 	name = strings.NewReplacer("{take}", take, "{folder}", folder, "{file}", path.Base(take),
 		"{rig}", strings.TrimSuffix(rigBase, path.Ext(rigBase)), "{date}", dateOf(g.head), "{direction}", direction).Replace(name)
-	return strings.TrimPrefix(path.Clean(name), "/")
+	return strings.TrimPrefix(path.Clean(strings.ReplaceAll(name, `\`, "_")), "/")
 }
 
 // sidecarEnding ends the name of a file of settings beside a take: roof_07.wav

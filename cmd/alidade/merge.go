@@ -9,6 +9,7 @@ import (
 	"strconv"
 	"strings"
 	"time"
+	"unicode"
 
 	"github.com/urfave/cli/v2"
 
@@ -214,6 +215,21 @@ func (u *ui) showSummary(s *batch.Summary, asJSON bool) error {
 // mostListed bounds the lists of the summary's text.
 const mostListed = 10
 
+// visible is a line with the control characters written out that a file's name
+// may hold: they would break the line, or steer the terminal.
+func visible(line string) string {
+	var b strings.Builder
+	for _, r := range line {
+		if unicode.IsControl(r) {
+			q := strconv.QuoteRune(r)
+			b.WriteString(q[1 : len(q)-1])
+		} else {
+			b.WriteRune(r)
+		}
+	}
+	return b.String()
+}
+
 // summaryWords is a summary for a person.
 func summaryWords(s *batch.Summary) string {
 	var b strings.Builder
@@ -240,7 +256,7 @@ func summaryWords(s *batch.Summary) string {
 				fmt.Fprintf(&b, "  and %d more\n", len(lines)-k)
 				break
 			}
-			fmt.Fprintf(&b, "  %s\n", l)
+			fmt.Fprintf(&b, "  %s\n", visible(l))
 		}
 	}
 	for _, c := range s.Causes {

@@ -14,6 +14,7 @@ import (
 
 	"github.com/urfave/cli/v2"
 
+	"alidade/pkg/batch"
 	"alidade/pkg/pipeline"
 	"alidade/pkg/report"
 )
@@ -86,6 +87,11 @@ func renderers(o pipeline.Options, folder string, tidy func(*pipeline.Result) *p
 		list[kind] = func(w io.Writer, r *pipeline.Result) error { return f(w, tidy(r)) }
 	}
 	return list
+}
+
+// folderPage is the page of a batch as seen from the folder of a take of it.
+func folderPage(key string) string {
+	return strings.Repeat("../", strings.Count(key, "/")+1) + indexFile
 }
 
 // link is a file beside a page as its address.
@@ -165,6 +171,9 @@ func (u *ui) reportTake(name, out string, overwrite bool) (string, error) {
 	var a report.Assets
 	if filepath.Dir(page) == filepath.Dir(name) {
 		a.Report = link(filepath.Base(name))
+		if key := batch.TakeIn(filepath.Dir(name)); key != "" {
+			a.Folder = folderPage(key)
+		}
 		for path, into := range map[string]*string{stem + reportEndings[pipeline.ReportCSV]: &a.Bands, filepath.Join(filepath.Dir(name), filepath.Base(filepath.FromSlash(r.Output.Path))): &a.Track} {
 			if info, err := os.Stat(path); err == nil && info.Mode().IsRegular() {
 				*into = link(filepath.Base(path))

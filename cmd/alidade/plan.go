@@ -12,6 +12,7 @@ import (
 	"regexp"
 	"slices"
 	"strings"
+	"unicode/utf8"
 
 	"github.com/urfave/cli/v2"
 
@@ -230,6 +231,11 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 		return nil, err
 	}
 	found = slices.DeleteFunc(found, func(f batch.File) bool {
+		if !utf8.ValidString(f.Path) {
+			u.remark("alidade: %q: left out: its name is not UTF-8, which plans and reports are: rename it", f.Path)
+			left = append(left, batch.LeftOut{Path: strings.ToValidUTF8(f.Path, "\uFFFD"), Reason: "a name that is not UTF-8"})
+			return true
+		}
 		beside := strings.HasSuffix(f.Path, sidecarEnding)
 		if beside {
 			left = append(left, batch.LeftOut{Path: f.Path, Reason: "settings of a take"})
@@ -254,6 +260,7 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 	recipes := map[string]int{}
 	rigs := map[string]batch.Recipe{}
 	microphones := map[string]int{}
+	unsound := map[string]bool{} // rigs that were complained about
 	var faults []error
 	for _, g := range groups {
 		key := strings.TrimSuffix(g.name, path.Ext(g.name))
@@ -271,6 +278,9 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 			break
 		}
 		r, ok := rigs[rigName]
+		if unsound[rigName] {
+			continue
+		}
 		if !ok {
 			at := rigName
 			if !filepath.IsAbs(at) {
@@ -279,6 +289,7 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 			sum, loaded, err := rigState(at)
 			if err != nil {
 				faults = append(faults, &usageError{err: err})
+				unsound[rigName] = true
 				continue
 			}
 			r = batch.Recipe{Rig: filepath.ToSlash(rigName), RigSHA256: sum}

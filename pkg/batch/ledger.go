@@ -36,6 +36,7 @@ type Line struct {
 	Error  string  `json:"error,omitempty"`
 	Files  []File  `json:"files,omitempty"`
 	Size   int64   `json:"outcome_bytes,omitempty"`
+	Things int     `json:"folder_entries,omitempty"` // in the take's folder
 	Took   float64 `json:"took_s,omitempty"`
 }
 

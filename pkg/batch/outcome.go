@@ -88,7 +88,30 @@ func folderOf(out, key string) string { return filepath.Join(out, filepath.FromS
 // ReadOutcome reads what came of a take. The error is fs.ErrNotExist where
 // nothing was committed.
 func ReadOutcome(out, key string) (*Outcome, error) {
-	name := filepath.Join(folderOf(out, key), outcomeName)
+	o, err := readOutcome(folderOf(out, key))
+	if err == nil && o.Take != key {
+		return nil, &DamagedError{fmt.Errorf("%s: belongs to take %s", filepath.Join(folderOf(out, key), outcomeName), o.Take)}
+	}
+	return o, err
+}
+
+// TakeIn returns the key of the take whose result lies in a folder, which is
+// that many folders below the output folder; empty where none lies there.
+func TakeIn(dir string) string {
+	dir, err := filepath.Abs(dir)
+	if err != nil {
+		return ""
+	}
+	o, err := readOutcome(dir)
+	if err != nil || CheckKey(o.Take) != nil || !strings.HasSuffix(filepath.ToSlash(dir), "/"+o.Take) {
+		return ""
+	}
+	return o.Take
+}
+
+// readOutcome reads the outcome in a folder.
+func readOutcome(dir string) (*Outcome, error) {
+	name := filepath.Join(dir, outcomeName)
 	file, err := os.Open(name)
 	if err != nil {
 		return nil, err
@@ -110,8 +133,6 @@ func ReadOutcome(out, key string) (*Outcome, error) {
 		return nil, &DamagedError{fmt.Errorf("%s: form %q, want %q", name, o.Schema, OutcomeSchema)}
 	case sum != o.Sum:
 		return nil, &DamagedError{fmt.Errorf("%s: its checksum does not fit", name)}
-	case o.Take != key:
-		return nil, &DamagedError{fmt.Errorf("%s: belongs to take %s", name, o.Take)}
 	}
 	return o, nil
 }
@@ -156,6 +177,25 @@ func (o *Outcome) Verify(out string) error {
 		}
 	}
 	return &DamagedError{fmt.Errorf("%s: %s", dir, strings.Join(faults, ", "))}
+}
+
+// entries is how many entries the folder of the take has.
+func (o *Outcome) entries() int {
+	top := map[string]bool{outcomeName: true}
+	for _, f := range o.Outputs {
+		first, _, _ := strings.Cut(f.Path, "/")
+		top[first] = true
+	}
+	return len(top)
+}
+
+// present reports whether all outputs are there in their sizes.
+func (o *Outcome) present(out string) bool {
+	dir := folderOf(out, o.Take)
+	return !slices.ContainsFunc(o.Outputs, func(f File) bool {
+		info, err := os.Lstat(filepath.Join(dir, filepath.FromSlash(f.Path)))
+		return err != nil || info.Size() != f.Bytes
+	})
 }
 
 // outputsOf lists the files below dir but the outcome, sorted, with hashes.

@@ -40,7 +40,7 @@ func (r *resume) look(t Take) (standing, error) {
 	recipe := r.plan.Recipes[t.Recipe].ID
 	if l, ok := r.ledger[t.Key]; ok && l.State != Failed && l.Recipe == recipe {
 		info, err := os.Lstat(filepath.Join(folderOf(r.s.Out, t.Key), outcomeName))
-		if err == nil && info.Size() == l.Size && r.atAGlance(t, l.Files) {
+		if err == nil && info.Size() == l.Size && r.atAGlance(t, l.Files) && r.complete(t, l.Things) {
 			return standing{state: l.State}, nil
 		}
 	}
@@ -71,7 +71,7 @@ func (r *resume) holds(t Take, o *Outcome) bool {
 	switch {
 	case o.Recipe != r.plan.Recipes[t.Recipe].ID:
 		return false
-	case o.State == Failed && r.s.RetryFailed:
+	case o.State == Failed && r.s.RetryFailed, !o.present(r.s.Out):
 		return false
 	case o.Cause == CauseVanished || o.Cause == CauseChanged:
 		// Worth another look only if all files are there as planned.
@@ -79,6 +79,13 @@ func (r *resume) holds(t Take, o *Outcome) bool {
 		return err != nil || !sameSizes(now, t.Files)
 	}
 	return r.atAGlance(t, o.Files) || r.byContent(t, o.Files)
+}
+
+// complete reports whether the folder of a take has as many entries as it was
+// committed with: a file that somebody took away shows, at one look a take.
+func (r *resume) complete(t Take, entries int) bool {
+	list, err := os.ReadDir(folderOf(r.s.Out, t.Key))
+	return err == nil && len(list) >= entries && entries > 0
 }
 
 // atAGlance compares paths, sizes and times of change.

@@ -43,6 +43,10 @@ func Decode(name string, data []byte, schema *Schema, into any) error {
 // order, or nil.
 func (d *Document) Err() error { return d.faults.err(d.name, d.text) }
 
+// Readable reports whether the text could be read as YAML at all: if not, what
+// it lacks is nobody's fault.
+func (d *Document) Readable() bool { return d.root != nil }
+
 // Has reports whether the value at path is in the file and sound in itself.
 // The empty path is the file as a whole.
 func (d *Document) Has(path string) bool {
