@@ -20,9 +20,8 @@
 // they rise above floor and reverberation, and the floor's own cross-spectra
 // are taken out; a steady sound is taken as it is. The steered response with
 // phase transform over a grid gives the peaks, each line weighted by the
-// coherence of the channels;
-// lines that hold no more than the window's side lobes of stronger ones do not
-// count. Each peak is refined by maximum likelihood of one
+// coherence of the channels; lines that hold no more than side lobes of
+// stronger ones do not count. Each peak is refined by maximum likelihood of one
 // source in uncorrelated noise and taken out before the next is looked for.
 // The windows' likelihoods, quadratic about their maxima, are added for a
 // source that keeps its place, and joined into tracks by a Kalman smoother.
@@ -37,6 +36,9 @@
 // which would otherwise have to be exported.
 //
 // # Limits
+//
+// Four microphones that lie in no plane are taken to hear far sources: two places
+// explain their three delays alike.
 //
 // Microphones are omnidirectional and the field is free: bodies and baffles are
 // not modelled. A line in a room cannot tell a source near abeam from its
@@ -89,6 +91,9 @@
 //
 // [Singer 1970] R. A. Singer, Estimating optimal tracking filter performance
 // for manned maneuvering targets, IEEE Trans. AES 6, p. 473.
+//
+// [Schmidt 1972] R. O. Schmidt, A new approach to geometry of range difference
+// location, IEEE Trans. AES 8, p. 821 (from memory).
 //
 // [Harris 1978] F. J. Harris, On the use of windows for harmonic analysis with
 // the discrete Fourier transform, Proc. IEEE 66, p. 51.

@@ -63,3 +63,22 @@ func TestCleanHarmonicsAreHeardWhereTheyStand(t *testing.T) {
 		}
 	}
 }
+
+// Four microphones in no plane, one of them a few centimetres out of that of the
+// others: a point 0.3 m away explains the delays of this far source exactly
+// (Schmidt 1972: range differences of four receivers meet in two points).
+func TestFourMicrophonesInNoPlaneTakeAFarSourceAsFar(t *testing.T) {
+	const rate, frames = 44100, 44100
+	mics := []rig.Point{
+		{X: 0.727843, Y: -0.132359, Z: 0.279876}, {X: 0.748236, Y: -0.144444, Z: 0.310422},
+		{X: 0.839729, Y: -0.296176, Z: 0.451321}, {X: 0.885324, Y: -0.173920, Z: 0.350911},
+	}
+	m := newMixture(mics, rate, frames).plane(white(frames, 3), rig.Degrees(46.5, 0), 1).noise(0.1, 4)
+	r := find(t, mics, rate, m.block(), Options{})
+	if len(r.Sources) != 1 {
+		t.Fatalf("%d sources, want 1", len(r.Sources))
+	}
+	if d := r.Sources[0].Direction; math.Abs(d.AzimuthDeg()-46.5) > 1 || math.Abs(d.ElevationDeg()) > 1 {
+		t.Errorf("%.1f°, %.1f°, want 46.5°, 0°", d.AzimuthDeg(), d.ElevationDeg())
+	}
+}

@@ -170,5 +170,10 @@ func settle(o Options, mics []rig.Point, geo rig.Geometry, rate int) (settings, 
 	s.dKappa = 2 * s.Speed / s.ToHz / (geo.Extent * geo.Extent)
 	s.maxKappa = 1 / math.Max(0.6*geo.Extent, 0.1)
 	s.near = !o.FarField && s.maxKappa > 2*s.dKappa && geo.Extent > 0.25 && len(mics) >= 4
+	if geo.Shape == rig.ShapeSolid && len(mics) == 4 {
+		// Three delays and three unknowns: the spheres meet in two points, and
+		// a near one explains a far source to the last microsecond [Schmidt 1972].
+		s.near = false
+	}
 	return s, nil
 }
