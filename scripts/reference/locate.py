@@ -27,6 +27,19 @@ sys.path.insert(0, os.path.dirname(os.path.abspath(__file__)))
 import wav24
 
 
+def leaked(sums):
+    """Lines that hold no more than four times the side lobes of stronger ones."""
+    power = sums.auto.sum(axis=0)
+    power = np.where(sums.weight > 0, power / np.maximum(sums.weight, 1e-300), 0)
+    side = np.zeros(len(power))
+    for d in range(3, min(161, len(power))):
+        x = d - 0.5
+        leak = (1 / (np.pi * x * (x * x - 1))) ** 2 * 10**0.142
+        side[d:] = np.maximum(side[d:], power[:-d] * leak)
+        side[:-d] = np.maximum(side[:-d], power[d:] * leak)
+    return power < 4 * side
+
+
 def smooth(x, half):
     """The mean over up to half entries to each side, along the last axis."""
     c = np.cumsum(np.concatenate([np.zeros(x.shape[:-1] + (1,)), x], axis=-1), axis=-1)
@@ -160,6 +173,7 @@ class Finder:
         field = np.mean(self.gamma * g.real, axis=0) / np.maximum(np.mean(self.gamma**2, axis=0), 1e-9)
         rest = g - field * self.gamma
         coherence = np.clip(smooth(np.mean(np.abs(rest) ** 2, axis=0) - 1 / self.n, 4), 0, 1)
+        coherence[leaked(sums)] = 0
         phat = coherence / np.maximum(np.abs(g), 1e-300)
         total = coherence.sum() * len(self.chosen)
         value = self.search(rest * phat) / total

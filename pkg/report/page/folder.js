@@ -16,14 +16,17 @@
       gain: d.gain === "" ? null : +d.gain, direction: d.direction === "" ? null : +d.direction,
       channels: d.channels === "" ? null : +d.channels, text: tr.textContent.toLowerCase() };
   });
+  // Names are compared once; a sort then goes by their places.
   var collator = new Intl.Collator(undefined, { numeric: true });
+  rows.slice().sort(function (a, b) { return collator.compare(a.name, b.name) || a.order - b.order; })
+    .forEach(function (r, i) { r.name = i; });
   var sort = function (key, up) {
     var sign = up ? 1 : -1;
     rows.sort(function (a, b) {
       var x = a[key], y = b[key];
       // What has no figure stays at the end either way.
       if (x === null || y === null) return (x === null) - (y === null) || a.order - b.order;
-      return sign * (key === "name" ? collator.compare(x, y) : x - y) || a.order - b.order;
+      return sign * (x - y) || a.order - b.order;
     });
     var part = document.createDocumentFragment();
     rows.forEach(function (r) { part.appendChild(r.tr); });
