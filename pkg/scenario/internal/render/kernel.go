@@ -99,13 +99,19 @@ func (k *Table) At(x []float64, frac float64) float64 {
 	a, b, w := k.pair(frac)
 	// The weight of x[i] is the kernel at i - (taps/2 - 1) - frac from its
 	// centre, which is even: the row of a delay by frac, read forwards.
-	var a0, a1, b0, b1 float64 // two sums a row, so that none waits for the one before
-	for len(x) >= 2 && len(a) >= 2 && len(b) >= 2 {
-		a0, a1 = a0+x[0]*a[0], a1+x[1]*a[1]
-		b0, b1 = b0+x[0]*b[0], b1+x[1]*b[1]
-		x, a, b = x[2:], a[2:], b[2:]
+	// Four sums a row, so that none waits for the one before.
+	var a0, a1, a2, a3, b0, b1, b2, b3 float64
+	t := 0
+	for ; t+4 <= len(a); t += 4 {
+		u, p, q := (*[4]float64)(x[t:]), (*[4]float64)(a[t:]), (*[4]float64)(b[t:])
+		a0, a1, a2, a3 = a0+u[0]*p[0], a1+u[1]*p[1], a2+u[2]*p[2], a3+u[3]*p[3]
+		b0, b1, b2, b3 = b0+u[0]*q[0], b1+u[1]*q[1], b2+u[2]*q[2], b3+u[3]*q[3]
 	}
-	return a0 + a1 + w*((b0+b1)-(a0+a1))
+	for ; t < len(a); t++ {
+		a0, b0 = a0+x[t]*a[t], b0+x[t]*b[t]
+	}
+	first := (a0 + a1) + (a2 + a3)
+	return first + w*((b0+b1)+(b2+b3)-first)
 }
 
 // add adds the kernel of a delay, times amplitude[b], to each h[b], h[b][0] being
