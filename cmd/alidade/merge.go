@@ -215,12 +215,12 @@ func (u *ui) showSummary(s *batch.Summary, asJSON bool) error {
 // mostListed bounds the lists of the summary's text.
 const mostListed = 10
 
-// visible is a line with the control characters written out that a file's name
-// may hold: they would break the line, or steer the terminal.
+// visible is a line with the characters written out that a file's name may hold
+// and that would break the line, steer the terminal or turn its letters round.
 func visible(line string) string {
 	var b strings.Builder
 	for _, r := range line {
-		if unicode.IsControl(r) {
+		if !unicode.IsPrint(r) {
 			q := strconv.QuoteRune(r)
 			b.WriteString(q[1 : len(q)-1])
 		} else {

@@ -20,22 +20,30 @@ func TestOddNamesOfTakes(t *testing.T) {
 		}
 	}
 	put("rig.yaml", "rig: line of eight\nline: {count: 8, spacing_mm: 40}\n")
-	put("job.yaml", "rig: rig.yaml\ntakes: [\"*.wav\"]\nsteer: {toward: 60}\n")
-	for _, name := range []string{"new\nline.wav", "esc\x1b[31m.wav", "lat\xe9in.wav", "-dash.wav", "back\\slash.wav"} {
+	put("job.yaml", "rig: rig.yaml\ntakes: [\"*.wav\"]\nexclude: [\"*_old.wav\"]\nsteer: {toward: 60}\n")
+	for _, name := range []string{"new\nline.wav", "esc\x1b[31m.wav", "lat\xe9in.wav", "lat\xe9_old.wav", "turn\u202eed.wav", "-dash.wav", "back\\slash.wav"} {
 		put(name, "no take")
 	}
 	var out, errs bytes.Buffer
 	code := run(context.Background(), []string{"batch", filepath.Join(dir, "job.yaml"), "--quiet"}, nil, &out, &errs, func(string) string { return "" })
-	if code != exitSome || !strings.Contains(out.String(), "4 takes, 0 done, 0 missed a limit, 4 failed") {
-		t.Errorf("exit code %d, want %d and four takes that failed:\n%s%s", code, exitSome, out.String(), errs.String())
+	if code != exitSome || !strings.Contains(out.String(), "5 takes, 0 done, 0 missed a limit, 5 failed") {
+		t.Errorf("exit code %d, want %d and five takes that failed:\n%s%s", code, exitSome, out.String(), errs.String())
 	}
-	for _, want := range []string{`new\nline: new`, `esc\x1b[31m: `, `back_slash: `} {
+	for _, want := range []string{`new\nline: new`, `esc\x1b[31m: `, `turn\u202eed: `, `back_slash: `} {
 		if !strings.Contains(out.String(), want) {
 			t.Errorf("%q is not in %q", want, out.String())
 		}
 	}
 	if strings.ContainsAny(out.String(), "\x1b") || !strings.Contains(errs.String(), `"lat\xe9in.wav": left out`) {
 		t.Errorf("standard output %q, standard error %q", out.String(), errs.String())
+	}
+	// A saved plan is read again, with what was left out by any name.
+	for _, args := range [][]string{{"plan", filepath.Join(dir, "job.yaml"), "--out", filepath.Join(dir, "night.plan")}, {"batch", filepath.Join(dir, "night.plan"), "--quiet"}} {
+		out.Reset()
+		errs.Reset()
+		if code := run(context.Background(), args, nil, &out, &errs, func(string) string { return "" }); code != 0 && code != exitSome {
+			t.Errorf("%s: exit code %d: %s", args[0], code, errs.String())
+		}
 	}
 }
 

@@ -233,7 +233,7 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 	found = slices.DeleteFunc(found, func(f batch.File) bool {
 		if !utf8.ValidString(f.Path) {
 			u.remark("alidade: %q: left out: its name is not UTF-8, which plans and reports are: rename it", f.Path)
-			left = append(left, batch.LeftOut{Path: strings.ToValidUTF8(f.Path, "\uFFFD"), Reason: "a name that is not UTF-8"})
+			left = append(left, batch.LeftOut{Path: f.Path, Reason: "a name that is not UTF-8"})
 			return true
 		}
 		beside := strings.HasSuffix(f.Path, sidecarEnding)
@@ -242,6 +242,9 @@ func (u *ui) plan(j *job, parts int) (*batch.Plan, error) {
 		}
 		return beside
 	})
+	for i, l := range left {
+		left[i].Path = strings.ToValidUTF8(l.Path, "\uFFFD")
+	}
 	slices.SortFunc(left, func(a, b batch.LeftOut) int { return strings.Compare(a.Path, b.Path) })
 	groups, err := groupTakes(j.root(), found, sets, j.Steer.FindChain)
 	if err != nil {

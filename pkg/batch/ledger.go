@@ -37,6 +37,7 @@ type Line struct {
 	Files  []File  `json:"files,omitempty"`
 	Size   int64   `json:"outcome_bytes,omitempty"`
 	Things int     `json:"folder_entries,omitempty"` // in the take's folder
+	Bytes  int64   `json:"folder_bytes,omitempty"`   // of the outputs that lie in it
 	Took   float64 `json:"took_s,omitempty"`
 }
 

@@ -95,8 +95,8 @@ func ReadOutcome(out, key string) (*Outcome, error) {
 	return o, err
 }
 
-// TakeIn returns the key of the take whose result lies in a folder, which is
-// that many folders below the output folder; empty where none lies there.
+// TakeIn returns the key of the take whose result lies in a folder that is named
+// after it, empty where none lies there.
 func TakeIn(dir string) string {
 	dir, err := filepath.Abs(dir)
 	if err != nil {
@@ -187,6 +187,18 @@ func (o *Outcome) entries() int {
 		top[first] = true
 	}
 	return len(top)
+}
+
+// bytes is how long the outputs are together that lie in the take's folder
+// itself.
+func (o *Outcome) bytes() int64 {
+	n := int64(0)
+	for _, f := range o.Outputs {
+		if !strings.Contains(f.Path, "/") {
+			n += f.Bytes
+		}
+	}
+	return n
 }
 
 // present reports whether all outputs are there in their sizes.

@@ -40,7 +40,7 @@ func (r *resume) look(t Take) (standing, error) {
 	recipe := r.plan.Recipes[t.Recipe].ID
 	if l, ok := r.ledger[t.Key]; ok && l.State != Failed && l.Recipe == recipe {
 		info, err := os.Lstat(filepath.Join(folderOf(r.s.Out, t.Key), outcomeName))
-		if err == nil && info.Size() == l.Size && r.atAGlance(t, l.Files) && r.complete(t, l.Things) {
+		if err == nil && info.Size() == l.Size && r.atAGlance(t, l.Files) && r.complete(t, l.Things, l.Bytes) {
 			return standing{state: l.State}, nil
 		}
 	}
@@ -82,10 +82,24 @@ func (r *resume) holds(t Take, o *Outcome) bool {
 }
 
 // complete reports whether the folder of a take has as many entries as it was
-// committed with: a file that somebody took away shows, at one look a take.
-func (r *resume) complete(t Take, entries int) bool {
+// committed with, and as many bytes in its outputs: a file that somebody took
+// away or cut shows at one look a take. Where more lies there, the outcome is
+// asked for each output.
+func (r *resume) complete(t Take, entries int, bytes int64) bool {
 	list, err := os.ReadDir(folderOf(r.s.Out, t.Key))
-	return err == nil && len(list) >= entries && entries > 0
+	if err != nil || len(list) != entries || entries == 0 {
+		return false
+	}
+	for _, e := range list {
+		info, err := e.Info()
+		if err != nil {
+			return false
+		}
+		if e.Name() != outcomeName && info.Mode().IsRegular() {
+			bytes -= info.Size()
+		}
+	}
+	return bytes == 0
 }
 
 // atAGlance compares paths, sizes and times of change.

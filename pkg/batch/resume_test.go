@@ -35,6 +35,10 @@ func TestATakeWithoutItsOutputsIsMadeAgain(t *testing.T) {
 	if got := b.all()["a/track"]; got != "ONE" {
 		t.Errorf("track %q, want ONE", got)
 	}
+	if err := os.Truncate(track("b"), 1); err != nil {
+		t.Fatal(err)
+	}
+	again("an output is cut", "b")
 	if err := os.RemoveAll(filepath.Join(b.out, ledgerFolder)); err != nil {
 		t.Fatal(err)
 	}

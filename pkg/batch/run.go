@@ -380,7 +380,7 @@ func (r *run) committed(t Take, o *Outcome, size int64, took time.Duration) {
 		r.tally.Failed++
 	}
 	err := r.note(Line{Event: EventCommitted, Take: t.Key, Recipe: o.Recipe, State: o.State, Cause: o.Cause, Error: o.Error,
-		Files: o.Files, Size: size, Things: o.entries(), Took: took.Seconds()})
+		Files: o.Files, Size: size, Things: o.entries(), Bytes: o.bytes(), Took: took.Seconds()})
 	if err != nil {
 		// The take is committed all the same: its folder says so.
 		r.stop(trouble(fmt.Errorf("ledger: %w", err)))

@@ -56,15 +56,14 @@
 // carries a pure tone of its frequency, steady within 0.15 dB and 10 dB above
 // the other channels. Sensitivities are in dBFS at 94 dB (AES17: a full-scale
 // sine reads 0), and their uncertainty is what the class of the calibrator
-// allows; corrections for air pressure and coupler are not made.
+// allows, with the spread where it was seated several times; corrections for air pressure and coupler are not made.
 //
 // # Limits
 //
 // Microphones are omnidirectional in a free field. In a room a steady sound's
 // reflections bias gains by up to 0.8 dB and delays by up to 2 µs (reverberation
 // time 0.3 and 0.6 s, 1 and 2 m away, a solid rig of 160 mm), and the stated
-// uncertainty covers six of seven figures there instead of nineteen of twenty;
-// take claps or measured responses there, of which only the first 2 ms are used,
+// uncertainty covers fewer than nineteen of twenty figures there; take claps or measured responses there, of which only the first 2 ms are used,
 // from 333 Hz up: 0.01 dB and 0.2 µs in such a room.
 // A microphone that is not where the rig has it looks like a delay, and all
 // channels turned over alike look like none. With two microphones gains rest on

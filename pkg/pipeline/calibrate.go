@@ -339,6 +339,9 @@ func (c *calibrating) correct(used []int, r *calibration.Relative) *rig.Rig {
 			entry.GainUncertaintyDB, entry.DelayUncertaintyUS = number(2*ch.LevelStd), number(2e6*ch.LateStd)
 			entry.GainNoiseDB, entry.DelayNoiseUS = number(ch.LevelNoise), number(1e6*ch.LateNoise)
 			entry.GainBandsDB, entry.SNRDB = number(ch.LevelBands), number(ch.SNRDB)
+			if r.Heard == 2 {
+				entry.GainBandsDB = number(math.NaN()) // one cross-spectrum does not show it
+			}
 			if v := ch.Response; v != nil {
 				entry.ResponseTaps = len(v.Taps)
 				for _, b := range v.Bands {
@@ -419,7 +422,7 @@ func (c *calibrating) judge(used []int, r *calibration.Relative) error {
 		add("gain-over-frequency", Info, uneven, "the gain of %s differs from octave to octave by more than noise explains: its uncertainty says so; --responses corrects what the channels do over frequency, claps what is a room's", plural(uneven, "channel %s", "channels %s"))
 	}
 	if r.Heard == 2 {
-		add("two-microphones", Warning, nil, "with two microphones there is no third that would tell noise from level: gains hold if both channels have the same signal-to-noise ratio, and their uncertainty allows for noise in one alone")
+		add("two-microphones", Warning, nil, "with two microphones there is no third that would tell noise from level: gains hold if both channels have the same signal-to-noise ratio, and their uncertainty allows for noise in one alone, not for gains that differ over frequency")
 	}
 	if r.Fitted != nil {
 		add("direction-differs", Info, nil, "the arrivals would fit a direction %.1f° away better: by %.1f µs instead of %.1f µs", r.Turned*180/math.Pi, 1e6*r.Fitted.Residual, 1e6*r.Misfit)

@@ -111,8 +111,8 @@ func (r *run) flagged(res *Result) {
 	}
 }
 
-// taperTells says where a taper that was asked for weights nothing: on a ring,
-// whose microphones stand equally far from their centre, or on two.
+// taperTells says where a taper that was asked for weights nothing, as on a ring,
+// whose microphones stand equally far from their centre.
 func (r *run) taperTells() {
 	if r.set.taper.Uniform() {
 		return
@@ -124,7 +124,7 @@ func (r *run) taperTells() {
 	const same = 1e-6 // of an amplitude: places in files are rounded
 	if low, high := slices.Min(a), slices.Max(a); high-low <= same*high {
 		r.report(Finding{Code: "taper-without-effect", Severity: Info, Message: fmt.Sprintf(
-			"the taper %s weights all microphones alike, as uniform does: they stand equally far from the middle of the rig", r.set.taper)})
+			"the taper %s weights all microphones of this rig alike, as uniform does", r.set.taper)})
 	}
 }
 

@@ -101,8 +101,8 @@ type Result struct {
 	Findings []Finding // errors first
 	Dead     []int     // indices into the microphones given, in order
 	// Windows is how many stretches of the take were held against the geometry,
-	// JudgedS how long they are together, and NotJudged why there are none; empty
-	// if there are. Of takes beyond 2048 stretches a part stands for all.
+	// JudgedS how long they are together, and NotJudged why polarity, order and
+	// delays were not judged by them; empty if they were. Of takes beyond 2048 stretches a part stands for all.
 	Windows   int
 	JudgedS   float64
 	NotJudged string

@@ -66,7 +66,7 @@ type Table struct {
 	rows         []float64 // rows[p·taps+t], p = 0..phases
 }
 
-// NewTable returns a table of the kernel of taps (an even number) and a Kaiser
+// NewTable returns a table of the kernel of taps (a multiple of 4) and a Kaiser
 // parameter at a number of fractions.
 func NewTable(taps, phases int, beta float64) *Table {
 	k := &Table{Taps: taps, phases: phases, rows: make([]float64, (phases+1)*taps)}
@@ -97,21 +97,15 @@ func (k *Table) pair(frac float64) (a, b []float64, w float64) {
 // sample whole - taps/2 + 1 and x holds taps samples.
 func (k *Table) At(x []float64, frac float64) float64 {
 	a, b, w := k.pair(frac)
-	// The weight of x[i] is the kernel at i - (taps/2 - 1) - frac from its
-	// centre, which is even: the row of a delay by frac, read forwards.
-	// Four sums a row, so that none waits for the one before.
+	// The kernel is even: the row of a delay by frac, read forwards. Four sums a
+	// row, none of which waits for the one before; taps come in fours.
 	var a0, a1, a2, a3, b0, b1, b2, b3 float64
-	t := 0
-	for ; t+4 <= len(a); t += 4 {
+	for t := 0; t < len(a); t += 4 {
 		u, p, q := (*[4]float64)(x[t:]), (*[4]float64)(a[t:]), (*[4]float64)(b[t:])
 		a0, a1, a2, a3 = a0+u[0]*p[0], a1+u[1]*p[1], a2+u[2]*p[2], a3+u[3]*p[3]
 		b0, b1, b2, b3 = b0+u[0]*q[0], b1+u[1]*q[1], b2+u[2]*q[2], b3+u[3]*q[3]
 	}
-	for ; t < len(a); t++ {
-		a0, b0 = a0+x[t]*a[t], b0+x[t]*b[t]
-	}
-	first := (a0 + a1) + (a2 + a3)
-	return first + w*((b0+b1)+(b2+b3)-first)
+	return (1-w)*((a0+a1)+(a2+a3)) + w*((b0+b1)+(b2+b3))
 }
 
 // add adds the kernel of a delay, times amplitude[b], to each h[b], h[b][0] being
