@@ -1,6 +1,10 @@
 package delay
 
-import "math"
+import (
+	"math"
+
+	"alidade/pkg/kernel"
+)
 
 // leastMaximum returns the a for which the largest |rows·a - want| is least, to
 // the accuracy of the given rounds of reweighting [Lawson 1961]: a weighted
@@ -57,7 +61,7 @@ func leastSquares(rows [][]float64, want, weight []float64) []float64 {
 	diagonal := make([]float64, n)
 	for j := range n {
 		v := q[j][j:]
-		norm := math.Sqrt(dot(v, v))
+		norm := math.Sqrt(kernel.Dot64(v, v))
 		if norm == 0 {
 			continue
 		}
@@ -69,7 +73,7 @@ func leastSquares(rows [][]float64, want, weight []float64) []float64 {
 		scale := 1 / (-norm * v[0]) // 2/|v|²
 		for _, w := range q[j+1:] {
 			w = w[j:]
-			back := scale * dot(v, w)
+			back := scale * kernel.Dot64(v, w)
 			for i, x := range v {
 				w[i] -= back * x
 			}
@@ -87,21 +91,4 @@ func leastSquares(rows [][]float64, want, weight []float64) []float64 {
 		a[j] = v / diagonal[j]
 	}
 	return a
-}
-
-// dot is the sum of the products, in four sums that do not wait for each other.
-func dot(a, b []float64) float64 {
-	var s0, s1, s2, s3 float64
-	b = b[:len(a)]
-	for len(a) >= 4 {
-		s0 += a[0] * b[0]
-		s1 += a[1] * b[1]
-		s2 += a[2] * b[2]
-		s3 += a[3] * b[3]
-		a, b = a[4:], b[4:]
-	}
-	for i, v := range a {
-		s0 += v * b[i]
-	}
-	return (s0 + s1) + (s2 + s3)
 }

@@ -45,6 +45,24 @@ func dot(a, b []float32) float32 {
 	return ((s0 + s1) + (s2 + s3)) + ((s4 + s5) + (s6 + s7))
 }
 
+// Dot64 returns Σ a[i]·b[i] by four sums that are added at the end: the same bits
+// with either set. It panics if the lengths differ.
+func Dot64(a, b []float64) float64 {
+	equal("scalar product", len(a), len(b))
+	var s0, s1, s2, s3 float64
+	for len(a) >= 4 && len(b) >= 4 {
+		s0 += a[0] * b[0]
+		s1 += a[1] * b[1]
+		s2 += a[2] * b[2]
+		s3 += a[3] * b[3]
+		a, b = a[4:], b[4:]
+	}
+	for i, v := range a {
+		s0 += v * b[i]
+	}
+	return (s0 + s1) + (s2 + s3)
+}
+
 // Peak returns the largest magnitude of x, 0 for none. What is not a number
 // counts as more than infinity.
 func Peak(x []float32) float32 {

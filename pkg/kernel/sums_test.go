@@ -336,3 +336,23 @@ func FuzzSums(f *testing.F) {
 		})
 	})
 }
+
+// Sums of products of small whole numbers are exact in any order.
+func TestDot64(t *testing.T) {
+	for n := range 14 {
+		a, b, want := make([]float64, n), make([]float64, n), 0.0
+		for i := range n {
+			a[i], b[i] = float64(3*i-7), float64(i*i+1)
+			want += a[i] * b[i]
+		}
+		if got := Dot64(a, b); got != want {
+			t.Errorf("%d values: %g, want %g", n, got, want)
+		}
+	}
+	defer func() {
+		if recover() == nil {
+			t.Error("lengths that differ do not panic")
+		}
+	}()
+	Dot64(make([]float64, 3), make([]float64, 4))
+}

@@ -5,6 +5,8 @@ import (
 	"sync"
 
 	"gonum.org/v1/gonum/stat/distuv"
+
+	"alidade/pkg/kernel"
 )
 
 // spread is how sure a mean is.
@@ -149,9 +151,9 @@ func (f *form) row(z []float64) {
 		pairs := float64(n - d)
 		if d > 0 {
 			pairs *= 2
-			f.q += 2 * k * product(z[:n-d], z[d:])
+			f.q += 2 * k * kernel.Dot64(z[:n-d], z[d:])
 		} else {
-			f.q += product(z, z)
+			f.q += kernel.Dot64(z, z)
 		}
 		f.sum += k * pairs
 		f.square += k * k * pairs
@@ -170,23 +172,6 @@ func (f *form) row(z []float64) {
 		r := 1 + side(edge) + side(n-1-edge)
 		f.rows += float64(inside) * r * r
 	}
-}
-
-// product is Σ a_i·b_i.
-func product(a, b []float64) float64 {
-	b = b[:len(a)]
-	var s0, s1, s2, s3 float64
-	for len(a) >= 4 && len(b) >= 4 {
-		s0 += a[0] * b[0]
-		s1 += a[1] * b[1]
-		s2 += a[2] * b[2]
-		s3 += a[3] * b[3]
-		a, b = a[4:], b[4:]
-	}
-	for i, v := range a {
-		s0 += v * b[i]
-	}
-	return (s0 + s1) + (s2 + s3)
 }
 
 // scattered adds values with gaps: pair by pair.
